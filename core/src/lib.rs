@@ -1,0 +1,18 @@
+//! The part of tarecup that only thinks: masses, soil limits, senses and the
+//! laboratory's state. No file, clock, thread or network can be reached from
+//! here; time and input come in as values, facts come out.
+#![no_std]
+#![forbid(unsafe_code)]
+
+extern crate alloc;
+#[cfg(test)]
+extern crate std;
+
+pub mod limits;
+pub mod method;
+pub mod names;
+pub mod quantity;
+pub mod sense;
+pub mod sheet;
+pub mod signal;
+pub mod stamp;

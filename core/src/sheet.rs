@@ -1,0 +1,130 @@
+//! What is known of one specimen, ready to be computed: the common form of a
+//! running test, a scenario file and an old paper sheet.
+
+use crate::names::{ContainerId, InstrumentName, Operator, SpecimenId};
+use crate::quantity::Mass;
+use crate::stamp;
+use alloc::string::String;
+use alloc::vec::Vec;
+
+/// Number of a fact in the ledger.
+pub type Seq = u64;
+
+/// One specimen's determinations in the order they were begun.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Sheet {
+    /// The specimen.
+    pub specimen: SpecimenId,
+    /// Every determination, set aside or not.
+    pub trials: Vec<Trial>,
+    /// A person stated that the liquid limit cannot be obtained, because …
+    pub liquid_not_obtainable: Option<String>,
+    /// A person stated that the plastic limit cannot be obtained, because …
+    pub plastic_not_obtainable: Option<String>,
+    /// Share passing 0.075 mm, percent of dry mass.
+    pub passing_75um_percent: Option<f64>,
+    /// Share finer than clay size, percent of dry mass.
+    pub clay_percent: Option<f64>,
+    /// Checks a person has answered: check name, what it was about, the words.
+    pub answers: Vec<Answer>,
+    /// A second person has reviewed the result as it stands.
+    pub reviewed: bool,
+}
+
+/// A person's answer to a check.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Answer {
+    /// Which check.
+    pub check: String,
+    /// What it was about, as the check named it.
+    pub about: String,
+    /// What the person said.
+    pub says: String,
+    /// Who.
+    pub by: Option<Operator>,
+}
+
+/// What a determination is for.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, serde::Serialize, serde::Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Kind {
+    /// A slice from the cup.
+    Liquid,
+    /// Threads for the plastic limit.
+    Thread,
+    /// Natural water content.
+    Natural,
+    /// A fall-cone determination.
+    Cone,
+}
+
+/// One determination: a container with its masses and, for a liquid trial, its closures.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Trial {
+    /// What it is for.
+    pub kind: Kind,
+    /// Number within its kind, from 1.
+    pub no: u32,
+    /// Closures of the paste, in order. Empty for threads and natural water.
+    pub closures: Vec<Closure>,
+    /// The container.
+    pub container: Option<ContainerId>,
+    /// Mass of the empty container in force at the wet weighing; `None` while it is owed.
+    pub tare: Option<Mass>,
+    /// Container with wet soil.
+    pub wet: Option<Mass>,
+    /// Container with dried soil, in the order weighed.
+    pub dry: Vec<DryWeighing>,
+    /// A water content given in place of the masses (paper sheets), percent of dry mass.
+    pub water_percent: Option<f64>,
+    /// A person set the determination aside, because …
+    pub set_aside: Option<String>,
+    /// Some value was typed by a person rather than read from an instrument.
+    pub typed: bool,
+    /// Who was signed in at the wet weighing.
+    pub by: Option<Operator>,
+    /// Balance of the wet weighing.
+    pub balance: Option<InstrumentName>,
+    /// Cup counter of the closures.
+    pub cup: Option<InstrumentName>,
+    /// When the wet weighing was taken, UTC µs.
+    pub at_utc_us: Option<i64>,
+    /// Facts the determination rests on.
+    pub facts: Vec<Seq>,
+}
+
+/// One closure of the groove.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Closure {
+    /// Drops counted.
+    pub drops: u32,
+    /// Drops per second.
+    pub rate_per_s: Option<f64>,
+    /// Gaps noticed in the drops.
+    pub gaps: u32,
+    /// Doubled drops noticed.
+    pub doubles: u32,
+    /// Why part of the count may be missing.
+    pub interrupted: Option<String>,
+    /// Typed by a person.
+    pub typed: bool,
+    /// The fact, when there is a ledger.
+    pub fact: Option<Seq>,
+}
+
+/// One weighing of a dried container.
+#[derive(Clone, Debug, PartialEq)]
+pub struct DryWeighing {
+    /// The mass.
+    pub mass: Mass,
+    /// Hours in the oven before it, as far as they are known.
+    pub oven_hours: Option<f64>,
+    /// Hours back in the oven since the previous dry weighing.
+    pub since_previous_hours: Option<f64>,
+    /// False when the hours are counted from the wet weighing for want of an oven record.
+    pub oven_recorded: bool,
+    /// Clock that the hours rest on.
+    pub basis: Option<stamp::Basis>,
+    /// The fact, when there is a ledger.
+    pub fact: Option<Seq>,
+}
