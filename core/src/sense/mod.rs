@@ -1,5 +1,10 @@
 //! From a stream of signals to what happened: a mass was taken, a count ended.
 
+pub mod count;
+mod intervals;
+pub mod settle;
+mod time;
+
 use crate::quantity::Mass;
 use crate::signal::Basis;
 use crate::stamp::Stamp;
