@@ -193,7 +193,7 @@ fn without_a_mark_time_counts_too() {
 fn lines_that_only_look_alike_break_the_run() {
     let net = Reading { basis: Basis::Net, ..steady(23_457) };
     let gross = Reading { basis: Basis::Gross, ..steady(23_457) };
-    let torn = Reading { step: Mass::from_ug(STEP * 10), ..steady(23_457) };
+    let torn = Reading { step: Mass::from_ug(STEP * 10), ..gross };
     for (name, odd) in [("basis", net), ("step", torn)] {
         let lines = [times(7, gross), vec![odd], times(8, gross)].concat();
         assert_eq!(short(&feed(SettleLimits::default(), &lines)), ["T 23457@16"], "{name}");
