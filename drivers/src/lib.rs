@@ -1,5 +1,8 @@
 //! From bytes to signals: frames, instrument profiles, ports.
 #![forbid(unsafe_code)]
 
+pub mod frame;
 pub mod heard;
+pub mod intake;
 pub mod port;
+pub mod profile;
