@@ -14,6 +14,8 @@ pub const EMPTY_LINES: usize = 3;
 const SWING: [i64; 5] = [620, 240, -70, 25, -9];
 /// A swinging pan is shown at least this many digits away from rest, so that no swinging line agrees with a resting one.
 const SWING_DIGITS: i64 = 20;
+/// Below this part of its capacity under zero a balance shows nothing any more.
+const UNDERLOAD_PART: i64 = 20;
 /// From loading the pan to the press of the print key, µs.
 const KEY_US: u64 = 4_000_000;
 
@@ -68,17 +70,28 @@ pub enum Value {
     Mass(i64),
     /// More than the balance can weigh.
     Overload,
+    /// Less than it can show: the pan itself is missing.
+    Underload,
+    /// It cannot measure now.
+    NotReady,
 }
 
 /// One state of the display.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Shown {
-    /// The value.
+    /// The value, without what was tared away.
     pub value: Value,
     /// At rest.
     pub steady: bool,
-    /// Less what was tared away.
-    pub net: bool,
+    /// What was tared away, µg.
+    pub tared_ug: i64,
+}
+
+impl Shown {
+    /// Something was tared away.
+    pub fn net(&self) -> bool {
+        self.tared_ug != 0
+    }
 }
 
 /// One balance.
@@ -93,6 +106,8 @@ pub struct Balance {
     lines: u32,
     tared_ug: i64,
     drift_ug_per_line: i64,
+    /// Lines for which it cannot measure.
+    not_ready: u32,
 }
 
 impl Balance {
@@ -107,6 +122,7 @@ impl Balance {
             lines: u32::MAX,
             tared_ug: 0,
             drift_ug_per_line: 0,
+            not_ready: 0,
         }
     }
 
@@ -138,6 +154,11 @@ impl Balance {
         self.drift_ug_per_line = ug_per_line;
     }
 
+    /// For the next lines the balance cannot measure: it was just switched on, or is adjusting itself.
+    pub fn not_ready(&mut self, lines: u32) {
+        self.not_ready = lines;
+    }
+
     /// What the display shows at the next line.
     pub fn next_shown(&mut self) -> Shown {
         let n = self.lines;
@@ -147,15 +168,20 @@ impl Balance {
         } else {
             self.drift_ug_per_line = 0;
         }
-        let net = self.tared_ug != 0;
         let steady = n as usize >= SWING.len();
-        if self.load_ug > self.settings.capacity_ug {
-            return Shown { value: Value::Overload, steady, net };
-        }
         let off = if steady { self.resting(n) } else { self.swinging(n as usize) };
         let step = self.settings.step_ug();
-        let value = Value::Mass(rounded(self.load_ug.saturating_sub(self.tared_ug).saturating_add(off), step));
-        Shown { value, steady, net }
+        let value = if self.not_ready > 0 {
+            self.not_ready -= 1;
+            Value::NotReady
+        } else if self.load_ug > self.settings.capacity_ug {
+            Value::Overload
+        } else if self.load_ug < self.settings.capacity_ug / -UNDERLOAD_PART {
+            Value::Underload
+        } else {
+            Value::Mass(rounded(self.load_ug.saturating_sub(self.tared_ug).saturating_add(off), step))
+        };
+        Shown { value, steady, tared_ug: self.tared_ug }
     }
 
     /// The next line.
