@@ -7,7 +7,7 @@
 use super::chain::LedgerId;
 use super::error::LedgerError;
 use rusqlite::config::DbConfig;
-use rusqlite::{Connection, OpenFlags, Transaction, TransactionBehavior};
+use rusqlite::{Connection, OpenFlags, TransactionBehavior};
 use std::ffi::{OsStr, OsString};
 use std::os::unix::ffi::OsStrExt;
 use std::path::{Path, PathBuf};
@@ -266,25 +266,76 @@ pub(crate) struct Birth {
 /// Brings the file to the newest layout, or leaves it wholly as it was.
 pub(crate) fn migrate(conn: &mut Connection, path: &Path, birth: &Birth) -> Result<(), LedgerError> {
     let version = check_made_by_us(conn, path)?;
-    if version == NEWEST {
-        return Ok(());
-    }
-    let sql = |e| LedgerError::sql(path, "bringing its layout up to date", &e);
-    let tx = conn.transaction_with_behavior(TransactionBehavior::Immediate).map_err(sql)?;
-    run_steps(&tx, version, birth).map_err(sql)?;
-    tx.commit().map_err(sql)
+    migrate_by(STEPS, version, conn, birth).map_err(|e| LedgerError::sql(path, "bringing its layout up to date", &e))
 }
 
-fn run_steps(tx: &Transaction<'_>, version: i32, birth: &Birth) -> rusqlite::Result<()> {
-    for step in STEPS.iter().skip(usize::try_from(version).unwrap_or(0)) {
+fn migrate_by(steps: &[&str], version: i32, conn: &mut Connection, birth: &Birth) -> rusqlite::Result<()> {
+    let missing = steps.get(usize::try_from(version).unwrap_or(0)..).unwrap_or_default();
+    if missing.is_empty() {
+        return Ok(());
+    }
+    let tx = conn.transaction_with_behavior(TransactionBehavior::Immediate)?;
+    for step in missing {
         tx.execute_batch(step)?;
     }
     if version == 0 {
-        tx.execute(
-            "INSERT INTO ledger (one, id, epoch, created_utc_us) VALUES (1, ?1, 1, ?2)",
-            (birth.id.to_string(), birth.utc_us),
-        )?;
+        let row = (birth.id.to_string(), birth.utc_us);
+        tx.execute("INSERT INTO ledger (one, id, epoch, created_utc_us) VALUES (1, ?1, 1, ?2)", row)?;
         tx.pragma_update(None, "application_id", APPLICATION_ID)?;
     }
-    tx.pragma_update(None, "user_version", NEWEST)
+    tx.pragma_update(None, "user_version", steps.len() as i32)?;
+    tx.commit()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    const BIRTH: Birth = Birth { id: LedgerId([1; 16]), utc_us: 5 };
+
+    fn state(conn: &Connection) -> (i32, i32, i64) {
+        let number = |name: &str| conn.pragma_query_value(None, name, |r| r.get(0)).expect("a number");
+        let tables = conn.query_row("SELECT count(*) FROM sqlite_schema", [], |r| r.get(0)).expect("a count");
+        (number("application_id"), number("user_version"), tables)
+    }
+
+    /// A step that fails takes those before it back as well.
+    #[test]
+    fn a_migration_happens_wholly_or_not_at_all() {
+        let mut conn = Connection::open_in_memory().expect("memory");
+        let broken = [LAYOUT_1, "CREATE TABLE later (x INTEGER) STRICT; CREATE TABLE later (x INTEGER) STRICT;"];
+        migrate_by(&broken, 0, &mut conn, &BIRTH).expect_err("the second step is broken");
+        assert_eq!(state(&conn), (0, 0, 0));
+
+        migrate_by(STEPS, 0, &mut conn, &BIRTH).expect("the first layout");
+        let first = state(&conn);
+        assert_eq!((first.0, first.1), (APPLICATION_ID, 1));
+        migrate_by(&broken, 1, &mut conn, &BIRTH).expect_err("the second step is broken");
+        assert_eq!(state(&conn), first);
+
+        let whole = [LAYOUT_1, "CREATE TABLE later (x INTEGER) STRICT;"];
+        migrate_by(&whole, 1, &mut conn, &BIRTH).expect("the second layout");
+        assert_eq!(state(&conn), (APPLICATION_ID, 2, first.2 + 1));
+        let (id, rows): (String, i64) = conn
+            .query_row("SELECT id, (SELECT count(*) FROM ledger) FROM ledger", [], |r| Ok((r.get(0)?, r.get(1)?)))
+            .expect("row");
+        assert_eq!((id, rows), (BIRTH.id.to_string(), 1));
+        assert!(matches!(check_made_by_us(&conn, Path::new("x")), Err(LedgerError::Newer { found: 2, known: 1, .. })));
+    }
+
+    /// A misspelt column must be an error, not a text.
+    #[test]
+    fn double_quotes_never_make_a_text() {
+        let folder = tempfile::tempdir().expect("a folder");
+        let flags = OpenFlags::SQLITE_OPEN_READ_WRITE | OpenFlags::SQLITE_OPEN_CREATE;
+        let conn = connect(&folder.path().join("x"), flags).expect("opens");
+        conn.query_row("SELECT \"misspelt\"", [], |r| r.get::<_, String>(0)).expect_err("refused");
+        let text: String = conn.query_row("SELECT 'spelt'", [], |r| r.get(0)).expect("a text");
+        assert_eq!(text, "spelt");
+    }
+
+    #[test]
+    fn odd_names_of_files_are_escaped() {
+        assert_eq!(immutable_uri(Path::new("/a b/ü?x#1%.db")), "file:/a%20b/%C3%BC%3Fx%231%25.db?immutable=1");
+    }
 }
