@@ -67,7 +67,9 @@ impl BrokerSettings {
 #[derive(Debug, thiserror::Error)]
 pub enum BrokerFault {
     /// The address reaches beyond this machine and nobody would have to log in.
-    #[error("{0} can be reached from the network: name a password file, or use 127.0.0.1, or a broker of its own (see mosquitto.conf)")]
+    #[error(
+        "{0} can be reached from the network: name a password file, or use 127.0.0.1, or a broker of its own (see mosquitto.conf)"
+    )]
     Open(SocketAddr),
     /// Somebody else listens there.
     #[error("{address} is in use by {holder}: stop it, or choose another address for the built-in broker")]

@@ -250,7 +250,9 @@ impl Task {
     }
 
     fn tell_lost(&mut self, session: &Session, lost: Lost) {
-        if lost.too_large && let Some(longest) = session.longest() {
+        if lost.too_large
+            && let Some(longest) = session.longest()
+        {
             self.learned_max = self.learned_max.min(longest.saturating_sub(1));
         }
         self.shared.lock().disconnected();
@@ -549,7 +551,9 @@ impl Task {
                         (self.on_event)(CourierEvent::Missing { after, found });
                         None
                     }
-                    Paged::Short { after, head } => Some(format!("the ledger gives no fact after {after}, though {head} is known")),
+                    Paged::Short { after, head } => {
+                        Some(format!("the ledger gives no fact after {after}, though {head} is known"))
+                    }
                 }
             }
             Err(why) => Some(why),

@@ -44,15 +44,7 @@ pub(super) struct RetainedBoard {
 
 impl RetainedBoard {
     pub(super) fn new(prefix: String, max: usize) -> Self {
-        Self {
-            prefix,
-            entries: HashMap::new(),
-            ready: Default::default(),
-            cleared: VecDeque::new(),
-            order: 0,
-            flying: 0,
-            max,
-        }
+        Self { prefix, entries: HashMap::new(), ready: Default::default(), cleared: VecDeque::new(), order: 0, flying: 0, max }
     }
 
     fn class_of(&self, topic: &str) -> usize {

@@ -149,7 +149,11 @@ impl CourierSettings {
     /// The setting, what is wrong with it, and what to try.
     pub fn check(&self) -> Result<(), SettingsFault> {
         if self.host.is_empty() || self.host.len() > 253 || self.host.chars().any(|c| c.is_whitespace() || c.is_control()) {
-            return Err(fault("host", format!("“{}” is not a host name", self.host), "Give a name or an address, such as broker.example"));
+            return Err(fault(
+                "host",
+                format!("“{}” is not a host name", self.host),
+                "Give a name or an address, such as broker.example",
+            ));
         }
         if self.port == 0 {
             return Err(fault("port", "0 is not a port to connect to", "Usual are 1883, and 8883 with encryption"));
@@ -175,7 +179,11 @@ pub(super) fn check_prefix(root: &str, station: &str) -> Result<(), SettingsFaul
         return Err(fault("root", format!("“{root}” is not a topic root"), "Use levels without + or #, such as tarecup/v1"));
     }
     if station.len() > 64 || station.contains('/') || bad(station) {
-        return Err(fault("station", format!("“{station}” is not one topic level"), "Use letters, digits, dot, dash or underline"));
+        return Err(fault(
+            "station",
+            format!("“{station}” is not one topic level"),
+            "Use letters, digits, dot, dash or underline",
+        ));
     }
     Ok(())
 }

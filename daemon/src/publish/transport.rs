@@ -11,8 +11,8 @@ use std::time::Duration;
 use bytes::Bytes;
 use rumqttc::v5::mqttbytes::QoS;
 use rumqttc::v5::mqttbytes::v5::{
-    ConnectReturnCode, DisconnectReasonCode, Filter, LastWill, Packet, PubAckReason, Publish, PublishProperties, RetainForwardRule,
-    SubscribeReasonCode,
+    ConnectReturnCode, DisconnectReasonCode, Filter, LastWill, Packet, PubAckReason, Publish, PublishProperties,
+    RetainForwardRule, SubscribeReasonCode,
 };
 use rumqttc::v5::{AsyncClient, ConnectionError, Event, EventLoop, MqttOptions, StateError};
 use rumqttc::{NetworkOptions, Outgoing, TlsConfiguration};
@@ -243,8 +243,7 @@ fn translate(event: Event) -> Result<Happening, Lost> {
 }
 
 fn heard(publish: Publish) -> Happening {
-    let (response_topic, correlation) =
-        publish.properties.map_or((None, None), |p| (p.response_topic, p.correlation_data));
+    let (response_topic, correlation) = publish.properties.map_or((None, None), |p| (p.response_topic, p.correlation_data));
     Happening::Heard { payload: publish.payload, retained: publish.retain, response_topic, correlation }
 }
 
