@@ -1,4 +1,5 @@
-//! The tarecup service, as a library for its binary and its tests.
+//! The inside of the `tarecup` program.
 #![forbid(unsafe_code)]
 
 pub mod ledger;
+pub mod publish;
