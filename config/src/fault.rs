@@ -1,0 +1,166 @@
+//! What is wrong in a file, where, and what to try.
+
+use std::fmt;
+
+/// Faults kept of one file; beyond this they are only counted.
+pub const MOST_FAULTS: usize = 100;
+
+/// A place in a text file, counted from 1; columns are characters.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, PartialOrd, Ord, Hash)]
+pub struct Place {
+    /// Line, from 1.
+    pub line: u32,
+    /// Column in characters, from 1.
+    pub column: u32,
+}
+
+/// A value that remembers where it was written.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Placed<T> {
+    /// The value.
+    pub value: T,
+    /// Where it stands.
+    pub at: Place,
+}
+
+/// One thing that is wrong in a file.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Fault {
+    /// The file, as it was named by the caller.
+    pub file: String,
+    /// Line, from 1.
+    pub line: u32,
+    /// Column in characters, from 1.
+    pub column: u32,
+    /// Which key, such as `specimen 2, liquid 1: wet_g`; empty for the file as a whole.
+    pub path: String,
+    /// What is wrong, to be read after the path.
+    pub says: String,
+    /// What would be right.
+    pub expected: String,
+    /// What to try.
+    pub try_this: String,
+}
+
+impl fmt::Display for Fault {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        write!(f, "{}:{}:{}: ", self.file, self.line, self.column)?;
+        if !self.path.is_empty() {
+            write!(f, "{} ", self.path)?;
+        }
+        write!(f, "{} — expected {}; try {}", self.says, self.expected, self.try_this)
+    }
+}
+
+/// Everything found wrong in one pass, in the order of the file.
+#[derive(Clone, Debug, Default, PartialEq, Eq)]
+pub struct Faults {
+    /// The first [`MOST_FAULTS`] faults.
+    pub list: Vec<Fault>,
+    /// How many more there were.
+    pub more: usize,
+}
+
+impl fmt::Display for Faults {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        for (i, fault) in self.list.iter().enumerate() {
+            if i > 0 {
+                writeln!(f)?;
+            }
+            write!(f, "{fault}")?;
+        }
+        if self.more > 0 {
+            write!(f, "\nand {} more; correct these first", self.more)?;
+        }
+        Ok(())
+    }
+}
+
+impl std::error::Error for Faults {}
+
+impl From<Fault> for Faults {
+    fn from(fault: Fault) -> Self {
+        Self { list: vec![fault], more: 0 }
+    }
+}
+
+/// A text from a file, fit to stand in a message: in quotes, control
+/// characters escaped, cut when long.
+pub(crate) fn quote(text: &str) -> String {
+    const LONGEST: usize = 48;
+    let shown: String = text.chars().take(LONGEST).flat_map(char::escape_debug).collect();
+    if text.chars().nth(LONGEST).is_some() { format!("\"{shown}…\"") } else { format!("\"{shown}\"") }
+}
+
+/// The candidate that `word` was probably meant to be.
+pub fn did_you_mean<'c>(word: &str, candidates: impl IntoIterator<Item = &'c str>) -> Option<&'c str> {
+    if word.len() > 64 {
+        return None;
+    }
+    let word = word.to_lowercase();
+    let close = (word.chars().count() / 3).max(1);
+    let scored = candidates.into_iter().map(|c| (distance(&word, &c.to_lowercase()), c));
+    scored.filter(|(d, _)| *d <= close).min_by_key(|(d, _)| *d).map(|(_, c)| c)
+}
+
+/// Insertions, deletions, replacements and exchanges of neighbours between two words.
+fn distance(a: &str, b: &str) -> usize {
+    let (a, b): (Vec<char>, Vec<char>) = (a.chars().collect(), b.chars().collect());
+    let mut before: Vec<usize> = Vec::new();
+    let mut last: Vec<usize> = (0..=b.len()).collect();
+    for i in 1..=a.len() {
+        let mut row = vec![i];
+        for j in 1..=b.len() {
+            let same = usize::from(a[i - 1] != b[j - 1]);
+            let mut best = (last[j - 1] + same).min(last[j] + 1).min(row[j - 1] + 1);
+            if i > 1 && j > 1 && a[i - 1] == b[j - 2] && a[i - 2] == b[j - 1] {
+                best = best.min(before[j - 2] + 1);
+            }
+            row.push(best);
+        }
+        before = std::mem::replace(&mut last, row);
+    }
+    last[b.len()]
+}
+
+/// The remedy for a name that is not known: the nearest one, or the list.
+pub(crate) fn remedy_for_name(word: &str, known: &[&str]) -> String {
+    match did_you_mean(word, known.iter().copied()) {
+        Some(near) => format!("{}: did you mean that?", quote(near)),
+        None if known.is_empty() => "leaving it out".to_string(),
+        None => format!("one of {}", known.join(", ")),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn near_words_are_found_and_far_ones_are_not() {
+        let known = ["baud", "bench", "frame", "steady_readings"];
+        for (word, meant) in [
+            ("buad", Some("baud")),
+            ("Baud", Some("baud")),
+            ("steady_reading", Some("steady_readings")),
+            ("colour", None),
+            ("", None),
+        ] {
+            assert_eq!(did_you_mean(word, known), meant, "{word}");
+        }
+        assert_eq!(did_you_mean(&"x".repeat(1_000_000), known), None);
+    }
+
+    #[test]
+    fn distance_counts_each_kind_of_slip_once() {
+        for (a, b, d) in [("", "", 0), ("abc", "", 3), ("ab", "ba", 1), ("kitten", "sitting", 3), ("wet_g", "wetg", 1)] {
+            assert_eq!(distance(a, b), d, "{a} {b}");
+        }
+    }
+
+    #[test]
+    fn hostile_text_is_shown_harmlessly() {
+        assert_eq!(quote("a\u{1b}[31m\n"), "\"a\\u{1b}[31m\\n\"");
+        assert!(quote(&"y".repeat(500)).len() < 60);
+    }
+}

@@ -1,0 +1,336 @@
+//! The configuration file of a station.
+
+mod address;
+mod instrument;
+mod tables;
+
+use crate::fault::{Faults, quote, remedy_for_name};
+use crate::methods::{self, Methods};
+use crate::profiles::{self, Profiles};
+use crate::reader::{Entry, Table, read};
+use crate::{defaults, keys, text};
+use std::collections::BTreeSet;
+use std::net::SocketAddr;
+use std::path::{Path, PathBuf};
+use tarecup_core::names::{BenchName, InstrumentName, MethodName, ProfileName, StationName};
+use tarecup_core::quantity::Mass;
+use tarecup_core::sense::{CountLimits, SettleLimits};
+use tarecup_drivers::port::PortSettings;
+
+pub use address::{BrokerUrl, Scheme};
+
+/// Everything a station is told. An empty file gives the defaults.
+///
+/// Paths are as written; relative ones mean the folder of the file.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Station {
+    /// The laboratory.
+    pub lab: Lab,
+    /// The connection to a broker, or what the built-in one publishes.
+    pub mqtt: Mqtt,
+    /// The built-in broker; it serves when `mqtt.url` is not given.
+    pub broker: Broker,
+    /// Where the ledger lies; without it, where the service manager says.
+    pub state_dir: Option<PathBuf>,
+    /// The benches; at least one.
+    pub benches: Vec<Bench>,
+    /// Balances, cup counters, scanners; may be none.
+    pub instruments: Vec<Instrument>,
+    /// How weighings find their container.
+    pub linking: Linking,
+    /// What is kept.
+    pub keep: Keep,
+    /// What the program says about itself.
+    pub log: Log,
+    /// Shipped methods and the laboratory's own, by name.
+    pub methods: Methods,
+    /// Shipped profiles and the laboratory's own, by name.
+    pub profiles: Profiles,
+    /// The method where nobody names one.
+    pub default_method: MethodName,
+}
+
+/// The laboratory.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Lab {
+    /// Its name, for people.
+    pub name: String,
+    /// Name of this station.
+    pub station: StationName,
+}
+
+/// MQTT.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Mqtt {
+    /// The broker; `None`: the built-in one.
+    pub url: Option<BrokerUrl>,
+    /// User name at the broker.
+    pub user: Option<String>,
+    /// File whose first line is the password.
+    pub password_file: Option<PathBuf>,
+    /// File with the certificates that are trusted in place of the system's.
+    pub ca_file: Option<PathBuf>,
+    /// Topic root, without slash at either end.
+    pub root: String,
+    /// Days that a finished specimen stays among the retained topics.
+    pub retain_days: u32,
+}
+
+/// The built-in broker.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Broker {
+    /// Where it listens.
+    pub listen: SocketAddr,
+    /// File with users and passwords; beyond loopback it is required.
+    pub password_file: Option<PathBuf>,
+}
+
+/// One place with a balance and a cup counter.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Bench {
+    /// Its name.
+    pub name: BenchName,
+}
+
+/// What an instrument is.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Hash)]
+pub enum InstrumentKind {
+    /// A balance.
+    Balance,
+    /// A motorised cup's counter.
+    Counter,
+    /// A scanner of container and specimen codes.
+    Scanner,
+}
+
+impl InstrumentKind {
+    /// All kinds with their words.
+    pub(crate) const WORDS: [(&str, Self); 3] =
+        [("balance", Self::Balance), ("counter", Self::Counter), ("scanner", Self::Scanner)];
+
+    /// The word of the configuration file.
+    pub const fn word(self) -> &'static str {
+        match self {
+            Self::Balance => "balance",
+            Self::Counter => "counter",
+            Self::Scanner => "scanner",
+        }
+    }
+}
+
+/// A balance, cup counter or scanner.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Instrument {
+    /// Its name.
+    pub name: InstrumentName,
+    /// What it is.
+    pub kind: InstrumentKind,
+    /// The benches it serves: one, or for a balance several.
+    pub benches: Vec<BenchName>,
+    /// Its port; what the file leaves out is as the profile says.
+    pub port: PortSettings,
+    /// What it speaks.
+    pub profile: ProfileName,
+    /// When a mass is taken (balances).
+    pub settle: SettleLimits,
+    /// When a run is over (cup counters).
+    pub count: CountLimits,
+}
+
+/// How weighings and counts find their container.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Linking {
+    /// Masses within this are near each other.
+    pub near: Mass,
+    /// A slice is owed at most this long after the count, minutes.
+    pub slice_minutes: u32,
+    /// A code read this long after a loose mass still belongs to it, seconds.
+    pub code_after_s: u32,
+    /// The same printed value within this is one weighing, seconds.
+    pub repeat_print_s: u32,
+    /// An intention ends after this, hours.
+    pub intention_hours: u32,
+    /// A slice owed this long is said aloud, minutes.
+    pub slice_aloud_minutes: u32,
+    /// Asks that change something are taken over MQTT.
+    pub asks_by_mqtt: bool,
+}
+
+impl Default for Linking {
+    fn default() -> Self {
+        Self {
+            near: Mass::from_ug(50_000),
+            slice_minutes: 15,
+            code_after_s: 20,
+            repeat_print_s: 10,
+            intention_hours: 6,
+            slice_aloud_minutes: 5,
+            asks_by_mqtt: false,
+        }
+    }
+}
+
+/// What is kept.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub struct Keep {
+    /// Lines that no fact rests on go after this many days; `None`: never.
+    pub unused_lines_days: Option<u32>,
+}
+
+/// What the program says about itself.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub struct Log {
+    /// From which level on.
+    pub level: LogLevel,
+    /// As lines for people or as JSON.
+    pub format: LogFormat,
+}
+
+/// Levels of the log.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum LogLevel {
+    /// Only what needs somebody.
+    Error,
+    /// And what may.
+    Warn,
+    /// And what goes on.
+    #[default]
+    Info,
+    /// And how.
+    Debug,
+    /// Everything.
+    Trace,
+}
+
+impl LogLevel {
+    /// The word of the configuration file.
+    pub const fn word(self) -> &'static str {
+        match self {
+            Self::Error => "error",
+            Self::Warn => "warn",
+            Self::Info => "info",
+            Self::Debug => "debug",
+            Self::Trace => "trace",
+        }
+    }
+}
+
+/// Forms of the log.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum LogFormat {
+    /// Lines for people.
+    #[default]
+    Text,
+    /// One JSON object a line.
+    Json,
+}
+
+/// Reads a configuration file from disk, with the method files that it names.
+///
+/// # Errors
+/// What is wrong, in that file or in a method file, with its place.
+pub fn load(path: &Path) -> Result<Station, Faults> {
+    let config = text::read_file(path)?;
+    let beside = path.parent().unwrap_or(Path::new(""));
+    parse_with(&path.display().to_string(), &config, &|name| {
+        let path = beside.join(name);
+        text::read_file(&path).map(|text| (path.display().to_string(), text))
+    })
+}
+
+/// Reads a configuration file that names no method files.
+///
+/// # Errors
+/// What is wrong, with its place.
+pub fn parse(file: &str, text: &str) -> Result<Station, Faults> {
+    parse_with(file, text, &|name| {
+        Err(Faults::from(crate::Fault {
+            file: name.into(),
+            line: 1,
+            column: 1,
+            path: String::new(),
+            says: "cannot be read: the configuration does not come from a folder".into(),
+            expected: "methods inside the configuration".into(),
+            try_this: "a [method.NAME] table".into(),
+        }))
+    })
+}
+
+/// Gives the shown name and the text of a method file named in the configuration.
+pub type MethodFiles<'f> = &'f dyn Fn(&str) -> Result<(String, String), Faults>;
+
+/// Reads a configuration file; `files` gives the method files that it names.
+///
+/// # Errors
+/// What is wrong, with its place.
+pub fn parse_with(file: &str, text: &str, files: MethodFiles<'_>) -> Result<Station, Faults> {
+    let shipped = (methods::shipped()?, profiles::shipped()?);
+    read(file, text, |root| station(root, shipped, files))
+}
+
+fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_>) -> Option<Station> {
+    root.only(keys::STATION);
+    let (mut methods, mut profiles) = shipped;
+    method_files(root, &mut methods, files);
+    let broken = own_methods(root, &mut methods);
+    let broken_profiles = profiles::own(root, &mut profiles);
+    let benches = tables::benches(root);
+    let instruments = instrument::all(root, &benches, &profiles, &broken_profiles);
+    let default_method = default_method(root, &methods, &broken);
+    // Everything is read before anything is missed, so that all faults are told.
+    let (lab, mqtt, broker) = (tables::lab(root), tables::mqtt(root), tables::broker(root));
+    let (linking, keep, log) = (tables::linking(root), tables::keep(root), tables::log(root));
+    let state_dir = root.get("state_dir").and_then(|e| tables::path(&e));
+    let (lab, default_method) = (lab?, default_method?);
+    Some(Station { lab, mqtt, broker, state_dir, benches, instruments, linking, keep, log, methods, profiles, default_method })
+}
+
+/// Names of tables that have a fault of their own: using them is no second one.
+type Broken<N> = BTreeSet<N>;
+
+fn default_method(root: &Table<'_>, methods: &Methods, broken: &Broken<MethodName>) -> Option<MethodName> {
+    let Some(entry) = root.get("default_method") else { return MethodName::new(defaults::METHOD).ok() };
+    if entry.quiet_text().and_then(|t| MethodName::new(t).ok()).is_some_and(|n| broken.contains(&n)) {
+        return None;
+    }
+    known_method(&entry, methods)
+}
+
+/// A method's name that must be among `methods`.
+pub(crate) fn known_method(entry: &Entry<'_>, methods: &Methods) -> Option<MethodName> {
+    let name: MethodName = entry.name()?;
+    if !methods.contains_key(&name) {
+        let known: Vec<&str> = methods.keys().map(MethodName::as_str).collect();
+        let expected = format!("the name of a method: {}", known.join(", "));
+        let says = format!("is {}, and there is no such method", quote(name.as_str()));
+        entry.fault(&says, &expected, &remedy_for_name(name.as_str(), &known));
+        return None;
+    }
+    Some(name)
+}
+
+/// `[method.NAME]` tables; gives the names of the broken ones.
+fn own_methods(root: &Table<'_>, methods: &mut Methods) -> Broken<MethodName> {
+    let mut broken = Broken::new();
+    let Some(table) = root.get("method").and_then(|e| e.any_table("method")) else { return broken };
+    for entry in table.entries() {
+        let Some(name) = entry.key_name::<MethodName>() else { continue };
+        match entry.any_table(name.as_str()).and_then(|t| methods::method(&t, Some(&name))) {
+            Some(method) => drop(methods.insert(name, method)),
+            None => drop(broken.insert(name)),
+        }
+    }
+    broken
+}
+
+/// `method_files`.
+fn method_files(root: &Table<'_>, methods: &mut Methods, files: MethodFiles<'_>) {
+    let Some(list) = root.get("method_files") else { return };
+    for entry in list.one_or_list() {
+        let Some(name) = entry.text() else { continue };
+        match files(name).and_then(|(file, text)| methods::parse(&file, &text)) {
+            Ok(method) => drop(methods.insert(method.name.clone(), method)),
+            Err(faults) => entry.foreign(faults),
+        }
+    }
+}

@@ -1,0 +1,179 @@
+//! The plain tables of the configuration file.
+
+use super::{Bench, Broker, Keep, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, address};
+use crate::reader::{Entry, Table};
+use crate::{defaults, keys};
+use std::path::PathBuf;
+use tarecup_core::names::{BenchName, StationName};
+use tarecup_core::quantity::Mass;
+
+/// More benches than any laboratory has rooms for.
+const MOST_BENCHES: usize = 100;
+
+fn open<'a>(root: &Table<'a>, name: &str, known: &[&str]) -> Option<Table<'a>> {
+    root.get(name).and_then(|e| e.table(name, known))
+}
+
+/// A path: text without line breaks or NUL.
+pub(super) fn path(entry: &Entry<'_>) -> Option<PathBuf> {
+    let text = entry.text()?;
+    if text.chars().any(char::is_control) || text.len() > 4_000 {
+        entry.fault(
+            "is not a path",
+            "a path without control characters",
+            "writing the path in single quotes, which take it as it is",
+        );
+        return None;
+    }
+    Some(PathBuf::from(text))
+}
+
+pub(super) fn lab(root: &Table<'_>) -> Option<Lab> {
+    let table = open(root, "lab", keys::LAB);
+    let get = |key: &str| table.as_ref().and_then(|t| t.get(key));
+    let name = get("name").and_then(|e| e.words()).unwrap_or_else(|| defaults::LAB.into());
+    let station = match get("station") {
+        Some(entry) => entry.name::<StationName>(),
+        None => StationName::new(defaults::STATION).ok(),
+    };
+    Some(Lab { name, station: station? })
+}
+
+pub(super) fn mqtt(root: &Table<'_>) -> Mqtt {
+    let mut mqtt = Mqtt {
+        url: None,
+        user: None,
+        password_file: None,
+        ca_file: None,
+        root: defaults::ROOT.into(),
+        retain_days: defaults::RETAIN_DAYS,
+    };
+    let Some(table) = open(root, "mqtt", keys::MQTT) else { return mqtt };
+    let url = table.get("url");
+    mqtt.url = url.as_ref().and_then(address::broker_url);
+    mqtt.user = table.get("user").and_then(|e| e.words());
+    mqtt.password_file = table.get("password_file").and_then(|e| path(&e));
+    mqtt.ca_file = table.get("ca_file").and_then(|e| path(&e));
+    if let Some(root) = table.get("root").and_then(|e| address::topic_root(&e)) {
+        mqtt.root = root;
+    }
+    if let Some(days) = table.get("retain_days").and_then(|e| e.whole(1..=3_650, "days")) {
+        mqtt.retain_days = days;
+    }
+    for key in ["user", "password_file", "ca_file"] {
+        if let (None, Some(entry)) = (&url, table.get(key)) {
+            entry.fault_of_key(
+                "says how to reach a broker, but there is no url",
+                "url beside it",
+                "url = \"mqtts://host:8883\" in [mqtt], or taking this line out",
+            );
+        }
+    }
+    if let (Some(_), Some(entry), None) = (&url, table.get("password_file"), table.get("user")) {
+        entry.fault_of_key(
+            "has no user beside it",
+            "user and password_file together",
+            "user = \"a name at the broker\" in [mqtt]",
+        );
+    }
+    let plain = mqtt.url.as_ref().is_some_and(|u| u.scheme == super::Scheme::Mqtt);
+    if let (true, Some(entry)) = (plain, table.get("ca_file")) {
+        entry.fault_of_key(
+            "needs TLS, and url begins with mqtt://",
+            "a url that begins with mqtts://",
+            "mqtts:// in url, or taking this line out",
+        );
+    }
+    if let (Some(url), Some(_)) = (&url, root.get("broker")) {
+        let says = "names a broker, and [broker] asks for the built-in one";
+        url.fault_of_key(says, "one of the two", "taking out url or the [broker] table");
+    }
+    mqtt
+}
+
+pub(super) fn broker(root: &Table<'_>) -> Broker {
+    let mut broker = Broker { listen: defaults::BROKER_LISTEN, password_file: None };
+    let Some(table) = open(root, "broker", keys::BROKER) else { return broker };
+    broker.password_file = table.get("password_file").and_then(|e| path(&e));
+    let Some(entry) = table.get("listen") else { return broker };
+    let Some(listen) = address::listen(&entry) else { return broker };
+    if !listen.ip().is_loopback() && broker.password_file.is_none() {
+        entry.fault(
+            "is an address that other machines can reach, and without passwords any of them could listen in",
+            "127.0.0.1 or ::1, or a password file",
+            "password_file = \"a file of users and passwords\" in [broker], or listen = \"127.0.0.1:18883\"",
+        );
+    }
+    broker.listen = listen;
+    broker
+}
+
+pub(super) fn benches(root: &Table<'_>) -> Vec<Bench> {
+    let tables =
+        root.get("bench").filter(|e| e.at_most(MOST_BENCHES)).map(|e| e.tables("bench", keys::BENCH)).unwrap_or_default();
+    let mut benches: Vec<Bench> = Vec::new();
+    for table in tables {
+        let entry = table.need("name", "a name for the bench", "name = \"north\" below [[bench]]");
+        let Some(entry) = entry else { continue };
+        let Some(name) = entry.name::<BenchName>() else { continue };
+        if benches.iter().any(|b| b.name == name) {
+            entry.fault(
+                &format!("is \"{name}\", as a bench above"),
+                "a name of its own for each bench",
+                "another name, or taking one of the two out",
+            );
+            continue;
+        }
+        benches.push(Bench { name });
+    }
+    if benches.is_empty() {
+        benches.extend(BenchName::new(defaults::BENCH).ok().map(|name| Bench { name }));
+    }
+    benches
+}
+
+pub(super) fn linking(root: &Table<'_>) -> Linking {
+    let mut l = Linking::default();
+    let Some(table) = open(root, "linking", keys::LINKING) else { return l };
+    if let Some(near) = table.get("near_g").and_then(|e| e.grams(Mass::from_ug(10_000_000))) {
+        l.near = near.value;
+    }
+    let whole = |key: &str, to: u32, what: &str, place: &mut u32| {
+        if let Some(value) = table.get(key).and_then(|e| e.whole(1..=to, what)) {
+            *place = value;
+        }
+    };
+    whole("slice_minutes", 240, "minutes", &mut l.slice_minutes);
+    whole("code_after_s", 3_600, "seconds", &mut l.code_after_s);
+    whole("repeat_print_s", 3_600, "seconds", &mut l.repeat_print_s);
+    whole("intention_hours", 72, "hours", &mut l.intention_hours);
+    whole("slice_aloud_minutes", 240, "minutes", &mut l.slice_aloud_minutes);
+    if let Some(flag) = table.get("asks_by_mqtt").and_then(|e| e.flag()) {
+        l.asks_by_mqtt = flag;
+    }
+    if let (true, Some(entry)) =
+        (l.slice_aloud_minutes > l.slice_minutes, table.get("slice_aloud_minutes").or(table.get("slice_minutes")))
+    {
+        let says = format!(
+            "would have a slice said aloud after {} minutes, when it is no longer owed after {}",
+            l.slice_aloud_minutes, l.slice_minutes
+        );
+        entry.fault(&says, "slice_aloud_minutes up to slice_minutes", "a smaller slice_aloud_minutes");
+    }
+    l
+}
+
+pub(super) fn keep(root: &Table<'_>) -> Keep {
+    let table = open(root, "keep", keys::KEEP);
+    let days = table.and_then(|t| t.get("unused_lines_days")).and_then(|e| e.whole(1..=36_500, "days"));
+    Keep { unused_lines_days: days }
+}
+
+pub(super) fn log(root: &Table<'_>) -> Log {
+    let Some(table) = open(root, "log", keys::LOG) else { return Log::default() };
+    let levels = [LogLevel::Error, LogLevel::Warn, LogLevel::Info, LogLevel::Debug, LogLevel::Trace].map(|l| (l.word(), l));
+    let level = table.get("level").and_then(|e| e.one_of(&levels)).unwrap_or_default();
+    let forms = [("text", LogFormat::Text), ("json", LogFormat::Json)];
+    let format = table.get("format").and_then(|e| e.one_of(&forms)).unwrap_or_default();
+    Log { level, format }
+}

@@ -1,0 +1,344 @@
+//! The configuration file: what a right one means, and where a wrong one is wrong.
+
+mod config_help;
+
+use config_help::expect_fault;
+use std::path::PathBuf;
+use tarecup_config::station::{self, InstrumentKind, LogFormat, LogLevel, Scheme, Station};
+use tarecup_core::quantity::Mass;
+use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
+use tarecup_drivers::port::Flow;
+
+fn read(text: &str) -> Station {
+    station::parse("it.toml", text).unwrap_or_else(|f| panic!("{f}"))
+}
+
+const WHOLE: &str = r#"
+state_dir = "/var/lib/tarecup"
+default_method = "t89-t90"
+
+[lab]
+name = "Mosswick materials laboratory"
+station = "wet-room"
+
+[mqtt]
+url = "mqtts://broker.example"
+user = "tarecup"
+password_file = "/etc/tarecup/mqtt-password"
+ca_file = "ca.pem"
+root = "lab/soils"
+retain_days = 7
+
+[[bench]]
+name = "north"
+[[bench]]
+name = "south"
+
+[[instrument]]
+name = "pan-1"
+kind = "balance"
+bench = ["north", "south"]
+port = "/dev/serial/by-id/usb-1"
+baud = 2400
+frame = "7E1"
+flow = "hardware"
+profile = "signed-steady"
+talks = "continuous"
+steady_readings = 5
+steady_span_g = 0.02
+load_from_g = 1
+change_from_g = 0.0300
+steady_ms = 900
+
+[[instrument]]
+name = "cup-1"
+kind = "counter"
+bench = "north"
+port = "tcp://10.0.0.9:4001"
+profile = "drop-line"
+debounce_ms = 200
+pause_ms = 4000
+gap_percent = 170
+
+[[instrument]]
+name = "wand"
+kind = "scanner"
+bench = "north"
+port = "/dev/serial/by-id/usb-2"
+profile = "plain-code"
+
+[linking]
+near_g = 0.021
+slice_minutes = 20
+code_after_s = 30
+repeat_print_s = 5
+intention_hours = 4
+slice_aloud_minutes = 6
+asks_by_mqtt = true
+
+[keep]
+unused_lines_days = 90
+
+[log]
+level = "debug"
+format = "json"
+"#;
+
+#[test]
+fn every_key_arrives() {
+    let s = read(WHOLE);
+    assert_eq!(s.state_dir, Some(PathBuf::from("/var/lib/tarecup")));
+    assert_eq!(s.default_method.as_str(), "t89-t90");
+    assert_eq!((s.lab.name.as_str(), s.lab.station.as_str()), ("Mosswick materials laboratory", "wet-room"));
+    let url = s.mqtt.url.as_ref().expect("a url");
+    assert_eq!((url.scheme, url.host.as_str(), url.port), (Scheme::Mqtts, "broker.example", 8883));
+    assert_eq!(url.to_string(), "mqtts://broker.example:8883");
+    assert_eq!(s.mqtt.user.as_deref(), Some("tarecup"));
+    assert_eq!(s.mqtt.password_file, Some(PathBuf::from("/etc/tarecup/mqtt-password")));
+    assert_eq!(s.mqtt.ca_file, Some(PathBuf::from("ca.pem")));
+    assert_eq!((s.mqtt.root.as_str(), s.mqtt.retain_days), ("lab/soils", 7));
+    assert_eq!(s.benches.iter().map(|b| b.name.as_str()).collect::<Vec<_>>(), ["north", "south"]);
+    let l = s.linking;
+    assert_eq!((l.near, l.slice_minutes, l.code_after_s, l.repeat_print_s), (Mass::from_ug(21_000), 20, 30, 5));
+    assert_eq!((l.intention_hours, l.slice_aloud_minutes, l.asks_by_mqtt), (4, 6, true));
+    assert_eq!(s.keep.unused_lines_days, Some(90));
+    assert_eq!((s.log.level, s.log.format), (LogLevel::Debug, LogFormat::Json));
+}
+
+#[test]
+fn every_key_of_an_instrument_arrives() {
+    let s = read(WHOLE);
+    let [pan, cup, wand] = &s.instruments[..] else { panic!("three instruments") };
+    assert_eq!((pan.name.as_str(), pan.kind), ("pan-1", InstrumentKind::Balance));
+    assert_eq!(pan.benches.iter().map(|b| b.as_str()).collect::<Vec<_>>(), ["north", "south"]);
+    assert_eq!((pan.port.path.as_str(), pan.port.baud, pan.port.flow), ("/dev/serial/by-id/usb-1", 2400, Flow::Hardware));
+    assert_eq!(String::from(pan.port.frame), "7E1");
+    assert_eq!(pan.profile.as_str(), "signed-steady");
+    let settle = SettleLimits {
+        talks: Talks::Continuous,
+        steady_readings: 5,
+        steady_span: Some(Mass::from_ug(20_000)),
+        load_from: Mass::from_ug(1_000_000),
+        change_from: Mass::from_ug(30_000),
+        steady_ms: 900,
+    };
+    assert_eq!(pan.settle, settle);
+    assert_eq!((cup.port.path.as_str(), cup.port.baud), ("tcp://10.0.0.9:4001", 9600));
+    assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170 });
+    assert_eq!((wand.kind, wand.profile.as_str()), (InstrumentKind::Scanner, "plain-code"));
+    assert_eq!(wand.settle, SettleLimits::default());
+}
+
+#[test]
+fn an_empty_file_gives_the_documented_defaults() {
+    let s = read("");
+    assert_eq!(s, read("\u{feff}# only a comment\r\n"));
+    assert_eq!(s.broker.listen.to_string(), "127.0.0.1:18883");
+    assert_eq!((s.mqtt.root.as_str(), s.mqtt.retain_days, s.mqtt.url), ("tarecup/v1", 30, None));
+    assert_eq!((s.default_method.as_str(), s.benches.len(), s.instruments.len()), ("d4318-multipoint", 1, 0));
+    assert_eq!(s.linking, station::Linking::default());
+    assert_eq!((s.state_dir, s.keep.unused_lines_days), (None, None));
+    assert!(s.methods.contains_key(&s.default_method), "the default method is shipped");
+}
+
+#[test]
+fn with_one_bench_an_instrument_need_not_name_it() {
+    let s = read("[[instrument]]\nname='p'\nkind='balance'\nport='/dev/ttyS0'\nprofile='signed-steady'\n");
+    assert_eq!(s.instruments[0].benches, [s.benches[0].name.clone()]);
+}
+
+/// A balance with one line more, or one line in place of another.
+fn balance(key: &str, line: &str) -> String {
+    let mut lines = vec![
+        ("name", "name = \"p\"".to_string()),
+        ("kind", "kind = \"balance\"".into()),
+        ("port", "port = \"/dev/ttyS0\"".into()),
+        ("profile", "profile = \"signed-steady\"".into()),
+    ];
+    match lines.iter_mut().find(|(k, _)| *k == key) {
+        Some((_, place)) => *place = line.into(),
+        None => lines.push((key, line.into())),
+    }
+    let lines: Vec<String> = lines.into_iter().map(|(_, l)| l).collect();
+    format!("[[instrument]]\n{}\n", lines.join("\n"))
+}
+
+#[test]
+fn the_balance_of_the_next_tests_is_right() {
+    assert_eq!(read(&balance("", "")).instruments.len(), 1);
+}
+
+#[test]
+fn wrong_instruments_are_pointed_at() {
+    let cases: [(&str, &str, &[&str]); 24] = [
+        ("name", "name = @@\"pan 1\"", &["instrument 1: name", "' ' cannot stand in a name", "letters"]),
+        ("name", "name = @@7", &["whole number", "putting it in quotes"]),
+        ("name", "name = @@\"\"", &["is empty"]),
+        ("kind", "kind = @@\"ballance\"", &["balance, counter, scanner", "did you mean"]),
+        ("bench", "bench = @@\"nort\"", &["no such bench", "[[bench]] with name = \"nort\""]),
+        ("bench", "bench = [\"bench-1\", @@\"bench-1\"]", &["twice"]),
+        ("bench", "bench = @@[]", &["empty list"]),
+        ("port", "port = @@\"ttyUSB0\"", &["neither a path", "tarecup ports"]),
+        ("port", "port = @@\"tcp://host\"", &["tcp://host:port"]),
+        ("port", "port = @@\"tcp://host:99999\"", &["tcp://host:port"]),
+        ("baud", "baud = @@0", &["is 0", "50 to 4000000"]),
+        ("baud", "baud = @@\"9600\"", &["a text in quotes", "without point or quotes"]),
+        ("baud", "baud = @@-9600", &["is -9600"]),
+        ("baud", "baud = @@99999999999999999999999999999999", &["99999999999999999999999…"]),
+        ("frame", "frame = @@\"9N1\"", &["\"9N1\"", "8N1"]),
+        ("flow", "flow = @@\"hard\"", &["none, hardware, software"]),
+        ("profile", "profile = @@\"signed-stedy\"", &["no such profile", "\"signed-steady\": did you mean"]),
+        ("profile", "profile = @@\"drop-line\"", &["profile of a counter", "instrument is a balance"]),
+        ("bond", "@@buad = 9600", &["is not a known key", "\"baud\": did you mean"]),
+        ("pause_ms", "@@pause_ms = 4000", &["for a counter only", "taking this line out"]),
+        ("load_from_g", "load_from_g = @@0.50000001", &["more decimals than a whole microgram"]),
+        ("load_from_g", "load_from_g = @@inf", &["not a finite number"]),
+        ("change_from_g", "change_from_g = @@-0.1", &["is -0.1", "above 0"]),
+        ("steady_span_g", "steady_span_g = @@2.0", &["is 2.00 g", "load_from_g"]),
+    ];
+    for (key, line, words) in cases {
+        expect_fault(&balance(key, line), words, |t| station::parse("it.toml", t));
+    }
+}
+
+#[test]
+fn wrong_tables_are_pointed_at() {
+    let cases: [(&str, &[&str]); 33] = [
+        ("[lab]\nstation = @@\"wet room\"", &["lab: station", "' ' cannot stand"]),
+        ("[lab]\n@@stations = \"x\"", &["\"station\": did you mean"]),
+        ("[lab]\nname = @@\"a\\u0000b\"", &["control character"]),
+        ("[lab]\n@@state_dir = \"x\"", &["does not belong here", "top of the configuration file"]),
+        ("@@baud = 1", &["does not belong here", "[[instrument]]"]),
+        ("@@lab = 3".replace("@@lab = ", "lab = @@").leak(), &["is a whole number", "[lab]"]),
+        ("[mqtt]\nurl = \"mqtts://h\"\nuser = \"u\"\n@@password = \"hunter2\"", &["is a secret", "password_file"]),
+        ("[mqtt]\nurl = @@\"mqtt://u:hunter2@h\"", &["holds a user or password", "password_file"]),
+        ("[mqtt]\nurl = @@\"http://h\"", &["does not begin with mqtt://"]),
+        ("[mqtt]\nurl = @@\"mqtt://h:0\"", &["1 to 65535"]),
+        ("[mqtt]\nurl = @@\"mqtt://\"", &["is not a host"]),
+        ("[mqtt]\nurl = @@\"mqtt://[::1\"", &["is not a host"]),
+        ("[mqtt]\n@@user = \"u\"", &["there is no url", "mqtts://host:8883"]),
+        ("[mqtt]\nurl = \"mqtts://h\"\n@@password_file = \"p\"", &["has no user", "user ="]),
+        ("[mqtt]\nurl = \"mqtt://h\"\n@@ca_file = \"p\"", &["needs TLS", "mqtts://"]),
+        ("[mqtt]\n@@url = \"mqtt://h\"\n[broker]\nlisten = \"127.0.0.1:1\"", &["built-in", "one of the two"]),
+        ("[mqtt]\nroot = @@\"a/+/b\"", &["wildcard", "tarecup/v1"]),
+        ("[mqtt]\nroot = @@\"a/#\"", &["wildcard"]),
+        ("[mqtt]\nroot = @@\"/a\"", &["empty level"]),
+        ("[mqtt]\nroot = @@\"$SYS/a\"", &["begins with '$'"]),
+        ("[mqtt]\nroot = @@\"a b\"", &["no letter, digit"]),
+        ("[mqtt]\nretain_days = @@0", &["1 to 3650"]),
+        ("[broker]\nlisten = @@\"0.0.0.0:18883\"", &["other machines can reach", "password_file"]),
+        ("[broker]\nlisten = @@\"127.0.0.1\"", &["not an address and port", "127.0.0.1:18883"]),
+        ("[broker]\nlisten = @@\"127.0.0.1:0\"", &["1 to 65535"]),
+        ("[[bench]]\nname = \"n\"\n[[bench]]\nname = @@\"n\"", &["as a bench above"]),
+        ("@@[[bench]]\n", &["bench 1: name", "is missing", "name = \"north\""]),
+        ("default_method = @@\"d4318-multi-point\"", &["no such method", "\"d4318-multipoint\": did you mean"]),
+        ("state_dir = @@5", &["putting it in quotes"]),
+        ("[linking]\nnear_g = @@\"0.05\"", &["without quotes"]),
+        ("[linking]\nslice_minutes = 4\nslice_aloud_minutes = @@5", &["no longer owed after 4"]),
+        ("[linking]\nasks_by_mqtt = @@\"yes\"", &["true or false without quotes"]),
+        ("[log]\nlevel = @@\"infos\"", &["\"info\": did you mean"]),
+    ];
+    for (marked, words) in cases {
+        expect_fault(marked, words, |t| station::parse("it.toml", t));
+    }
+}
+
+#[test]
+fn a_listener_beyond_loopback_is_right_with_passwords() {
+    let s = read("[broker]\nlisten = \"0.0.0.0:18883\"\npassword_file = \"users\"\n");
+    assert!(!s.broker.listen.ip().is_loopback());
+    assert_eq!(read("[broker]\nlisten = \"localhost:9\"").broker.listen.to_string(), "127.0.0.1:9");
+    assert_eq!(read("[broker]\nlisten = \"[::1]:9\"").broker.listen.to_string(), "[::1]:9");
+    let v6 = read("[mqtt]\nurl = \"mqtt://[fe80::1]:1884/\"").mqtt.url.expect("a url");
+    assert_eq!((v6.host.as_str(), v6.port, v6.to_string().as_str()), ("fe80::1", 1884, "mqtt://[fe80::1]:1884"));
+}
+
+#[test]
+fn instruments_that_collide_are_pointed_at() {
+    let one = "[[instrument]]\nname='a'\nkind='balance'\nport='/dev/ttyS0'\nprofile='signed-steady'\n";
+    let cases = [
+        ("[[instrument]]\nname='b'\nkind='balance'\nport=@@'/dev/ttyS0'\nprofile='signed-steady'\n", "line 4 too"),
+        (
+            "[[instrument]]\nname=@@'a'\nkind='balance'\nport='/dev/ttyS1'\nprofile='signed-steady'\n",
+            "as the instrument of line 2",
+        ),
+        (
+            "[[bench]]\nname='x'\n[[bench]]\nname='y'\n[[instrument]]\nname='c'\nkind='counter'\nbench=@@['x','y']\nport='/dev/ttyS1'\nprofile='drop-line'\n",
+            "several benches",
+        ),
+    ];
+    for (second, words) in cases {
+        let first = if second.starts_with("[[bench]]") { one.replace("kind=", "bench='x'\nkind=") } else { one.into() };
+        expect_fault(&format!("{first}{second}"), &[words], |t| station::parse("it.toml", t));
+    }
+    let two = "[[bench]]\nname='x'\n[[bench]]\nname='y'\n@@[[instrument]]\nname='a'\nkind='balance'\nport='/dev/ttyS0'\nprofile='signed-steady'\n";
+    expect_fault(two, &["instrument 1: bench", "is missing", "x, y"], |t| station::parse("it.toml", t));
+    let tcp = "[[instrument]]\nname='a'\nkind='balance'\nport='tcp://h:1'\n@@baud=1200\nprofile='signed-steady'\n";
+    expect_fault(tcp, &["no effect on a network port"], |t| station::parse("it.toml", t));
+}
+
+#[test]
+fn one_pass_tells_all_faults_in_order() {
+    let text = "colour = 1\n[lab]\nstation = \"a b\"\n[[instrument]]\nkind = \"x\"\nbaud = 0\n[log]\nlevel = 3\n";
+    let faults = station::parse("it.toml", text).expect_err("faults");
+    let places: Vec<(u32, u32)> = faults.list.iter().map(|f| (f.line, f.column)).collect();
+    let missing = [(4, 1); 3]; // name, port and profile
+    assert_eq!(places, [&[(1, 1), (3, 11)][..], &missing, &[(5, 8), (6, 8), (8, 9)]].concat(), "{faults}");
+    assert_eq!(faults.to_string().lines().count(), 8);
+}
+
+#[test]
+fn a_secret_is_never_repeated() {
+    for text in ["[mqtt]\npassword = \"hunter2\"", "[mqtt]\nurl = \"mqtt://u:hunter2@h\"", "secret = \"hunter2\""] {
+        let said = station::parse("it.toml", text).expect_err(text).to_string();
+        assert!(!said.contains("hunter2"), "{said}");
+    }
+}
+
+#[test]
+fn broken_syntax_is_pointed_at_and_hides_no_other_fault() {
+    let text = "[lab]\nname = \"x\nstation = \"a b\"\n[log]\nlevel = \"loud\"\n";
+    let faults = station::parse("it.toml", text).expect_err("faults");
+    assert!(faults.list.iter().any(|f| f.line == 2 && f.says.contains("cannot be understood")), "{faults}");
+    assert!(faults.list.iter().any(|f| (f.line, f.column) == (5, 9)), "{faults}");
+    expect_fault("[lab]\nname = \"a\"\n@@name = \"b\"\n", &["duplicate key", "removing or renaming"], |t| {
+        station::parse("it.toml", t)
+    });
+}
+
+#[test]
+fn a_broken_table_is_told_once_and_not_at_its_users() {
+    let text = "default_method = \"m\"\n[@@method.m]\ntitle = \"t\"\n".replace("[@@", "@@[");
+    expect_fault(&text, &["method, m lacks"], |t| station::parse("it.toml", t));
+    let text = format!("{}[profile.own]\nkind = @@\"ballance\"\n", balance("profile", "profile = \"own\""));
+    expect_fault(&text, &["\"balance\": did you mean"], |t| station::parse("it.toml", t));
+}
+
+#[test]
+fn what_an_instrument_leaves_out_is_as_its_profile_says() {
+    let s = read(&format!(
+        "{}[[instrument]]\nname='q'\nkind='balance'\nport='/dev/ttyS1'\nprofile='own'\nbaud=300\ntalks='continuous'\n\
+         [profile.own]\nkind='balance'\ntalks='print-on-key'\nserial={{baud=1200,frame='7E1',flow='software'}}\n",
+        balance("profile", "profile = \"own\"")
+    ));
+    let [p, q] = &s.instruments[..] else { panic!("two instruments") };
+    assert_eq!((p.port.baud, String::from(p.port.frame).as_str(), p.port.flow), (1200, "7E1", Flow::Software));
+    assert_eq!((p.settle.talks, q.settle.talks, q.port.baud), (Talks::PrintOnKey, Talks::Continuous, 300));
+}
+
+#[test]
+fn far_too_many_instruments_are_refused_at_the_first_beyond() {
+    let many = "[[instrument]]\n".repeat(201);
+    let faults = station::parse("it.toml", &many).expect_err("too many");
+    assert_eq!((faults.list.len(), faults.list[0].line), (1, 201), "{faults}");
+    assert!(faults.list[0].says.contains("1 of them from here on"), "{faults}");
+}
+
+#[test]
+fn own_profiles_are_taken_and_checked() {
+    let s = read("[profile.mine]\nkind = \"counter\"\n");
+    let mine = s.profiles.values().find(|p| p.name.as_str() == "mine").expect("mine");
+    assert_eq!((mine.kind, mine.shipped, mine.at.line), (InstrumentKind::Counter, false, 1));
+    expect_fault("[profile.@@\"my own\"]\nkind = \"counter\"\n", &["is not a name"], |t| station::parse("it.toml", t));
+    expect_fault("@@[profile.mine]\n", &["profile, mine: kind", "is missing"], |t| station::parse("it.toml", t));
+}
