@@ -265,7 +265,7 @@ impl Task {
                         }
                     }
                     if session.parting == Parting::Gone {
-                        self.farewell(true);
+                        self.farewell(!session.last_word_refused);
                         return End::Stop;
                     }
                     Err(End::Lost(lost))
@@ -353,7 +353,8 @@ impl Task {
                 outbox.retained.set(&topic, Some(presence));
             }
         }
-        let said = session.parting == Parting::LastWord && outbox.retained.settled();
+        // Only presence is waited for: other topics may be many, and without a proper goodbye the will speaks.
+        let said = session.parting == Parting::LastWord && outbox.retained.is_settled(&self.settings.topic("presence"));
         drop(outbox);
         if said {
             session.parting = Parting::Gone;
@@ -362,7 +363,7 @@ impl Task {
             }
         }
         if now >= until {
-            self.farewell(session.parting == Parting::Gone);
+            self.farewell(session.parting == Parting::Gone && !session.last_word_refused);
             return Err(End::Stop);
         }
         Ok(())
@@ -393,7 +394,7 @@ impl Task {
             }
             Happening::NotSubscribed(reason) => (self.on_event)(CourierEvent::Refused { what: What::Asks, reason }),
             Happening::Parted => {
-                self.farewell(true);
+                self.farewell(!session.last_word_refused);
                 return Err(End::Stop);
             }
             Happening::Other => {}
@@ -455,7 +456,10 @@ impl Task {
                 session.pause = (session.pause * 2).min(PAUSE_MOST);
                 return Some(CourierEvent::Refused { what: What::Fact(seq), reason });
             }
-            Item::Retained(topic, _) => What::Retained(topic.to_string()),
+            Item::Retained(topic, _) => {
+                session.last_word_refused |= session.parting == Parting::LastWord && topic.ends_with("/presence");
+                What::Retained(topic.to_string())
+            }
             Item::Answer(client) => What::Answer(client),
             Item::Live => return None,
         };

@@ -2,7 +2,7 @@
 
 use std::sync::Arc;
 
-use super::session::{Item, Session};
+use super::session::{Item, Parting, Session};
 use super::{End, Task, client_gone};
 use crate::publish::facts::Next;
 use crate::publish::outbox::Outbox;
@@ -53,6 +53,7 @@ impl Task {
                     }
                     Item::Retained(topic, version) => {
                         outbox.retained.settle(&topic, version);
+                        session.last_word_refused |= session.parting == Parting::LastWord && topic.ends_with("/presence");
                         What::Retained(topic.to_string())
                     }
                     Item::Answer(client) => What::Answer(client),
@@ -72,10 +73,10 @@ impl Task {
 
     /// Presence, then answers, then facts, then the other retained topics, of which a few at a time.
     fn choose(&mut self, session: &mut Session, outbox: &mut Outbox) -> Option<(Item, Message)> {
-        let retained_may = outbox.retained.flying() < RETAINED_FLYING.min(session.window);
-        if retained_may && let Some(due) = outbox.retained.next(true) {
+        if let Some(due) = outbox.retained.next(true) {
             return Some(retained_message(due));
         }
+        let retained_may = outbox.retained.flying() < RETAINED_FLYING.min(session.window);
         if let Some(Answer { client, payload, correlation }) = outbox.answers.pop_front() {
             let topic = self.settings.topic(&format!("answer/{client}"));
             return Some((Item::Answer(client), Message { topic, payload, assured: true, retain: false, correlation }));

@@ -36,6 +36,8 @@ pub(super) struct Session {
     pub(super) ignored_told: bool,
     pub(super) load: Option<(u64, JoinHandle<Page>)>,
     pub(super) parting: Parting,
+    /// The last word on presence was refused or too large.
+    pub(super) last_word_refused: bool,
     pub(super) pending_live: usize,
 }
 
@@ -63,6 +65,7 @@ impl Session {
             ignored_told: false,
             load: None,
             parting: Parting::No,
+            last_word_refused: false,
             pending_live: 0,
         }
     }

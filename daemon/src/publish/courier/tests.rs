@@ -198,6 +198,41 @@ async fn a_broker_that_answers_nothing_is_left_when_the_time_to_stop_is_over() {
 }
 
 #[tokio::test]
+async fn the_goodbye_waits_for_presence_alone_and_says_when_it_was_refused() {
+    for (verdict, told) in [(Ok(()), true), (Err("not authorized".to_owned()), false)] {
+        let mut stage = stage(Arc::new(Empty), false);
+        let (script, mut done) = stage.accepted(16).await;
+        let many = (0..9).map(|n| (format!("r/s/specimen/{n}"), Some(Bytes::from_static(b"open")))).collect();
+        stage.courier.send(Outgoing { retained: many, ..Outgoing::default() });
+        for id in 1..=3 {
+            published(&mut done).await;
+            script.send(Ok(Happening::Written(id))).expect("played");
+        }
+        let played = async {
+            let mut id = 3;
+            while let Some(did) = done.recv().await {
+                id += 1;
+                match did {
+                    Did::Published(message) => {
+                        script.send(Ok(Happening::Written(id))).expect("played");
+                        if message.topic == "r/s/presence" {
+                            script.send(Ok(Happening::Answered(id, verdict.clone()))).expect("played");
+                        } else if id == 4 {
+                            script.send(Ok(Happening::Answered(1, Ok(())))).expect("played");
+                        }
+                    }
+                    Did::Parted => script.send(Ok(Happening::Parted)).expect("played"),
+                    Did::Subscribed(topic) => panic!("{topic}"),
+                }
+            }
+        };
+        let stop = stage.courier.stop(Some(Bytes::from_static(b"stopped")), Duration::from_secs(2));
+        let (farewell, ()) = tokio::join!(stop, played);
+        assert_eq!((farewell.complete, farewell.presence_told), (false, told));
+    }
+}
+
+#[tokio::test]
 async fn attempts_come_quickly_first_and_then_seldom() {
     let mut stage = stage(Arc::new(Empty), false);
     let start = Instant::now();
