@@ -5,7 +5,7 @@ mod publish_support;
 use std::time::Duration;
 
 use bytes::Bytes;
-use publish_support::{Bench, Ledger, ROOT, Reader, STATION, run, topic, until};
+use publish_support::{Bench, Ledger, ROOT, Reader, STATION, latency, run, topic, until};
 use tarecup::publish::broker::{BrokerFault, BrokerSettings, BuiltIn, start};
 use tarecup::publish::{ASK_MAX, Answer, CourierEvent, CourierSettings, Outgoing};
 
@@ -198,4 +198,13 @@ async fn the_courier_finds_a_restarted_built_in_broker_again() {
     })
     .await;
     again.stop().await;
+}
+
+/// Figures only; the bound merely excludes a hidden polling interval.
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
+async fn a_fact_passes_the_built_in_broker_promptly() {
+    let (broker, bench, ledger) = built_in(false).await;
+    let took = latency(broker.address().port(), &bench, &ledger).await;
+    eprintln!("send to mosquitto_sub by the built-in broker: p50 {:?}, p99 {:?}, most {:?}", took[500], took[990], took[999]);
+    assert!(took[500] < Duration::from_millis(20), "{:?}", took[500]);
 }

@@ -9,7 +9,7 @@ use std::sync::atomic::Ordering;
 use std::time::{Duration, Instant};
 
 use bytes::Bytes;
-use publish_support::{Bench, Gate, Ledger, Mosquitto, ROOT, Reader, STATION, faults, free_port, topic, until};
+use publish_support::{Bench, Gate, Ledger, Mosquitto, ROOT, Reader, STATION, faults, free_port, latency, topic, until};
 use rumqttc::v5::mqttbytes::QoS;
 use rumqttc::v5::{AsyncClient, MqttOptions};
 use rustix::process::Signal;
@@ -294,35 +294,10 @@ async fn drops_go_at_once_in_order_and_idle_means_silence() {
 #[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn a_fact_reaches_a_subscriber_promptly() {
     let broker = Mosquitto::open("").await;
-    let mut child = tokio::process::Command::new("mosquitto_sub")
-        .args(["-p", &broker.port.to_string(), "-q", "1", "-V", "5", "-t", &topic("fact"), "-t", &topic("presence"), "-F", "%p"])
-        .stdout(std::process::Stdio::piped())
-        .kill_on_drop(true)
-        .spawn()
-        .expect("mosquitto_sub is installed");
-    let lines = child.stdout.take().expect("piped");
-    let (tx, mut rx) = tokio::sync::mpsc::unbounded_channel();
-    tokio::spawn(async move {
-        use tokio::io::AsyncBufReadExt;
-        let mut lines = tokio::io::BufReader::new(lines).lines();
-        while let Ok(Some(line)) = lines.next_line().await {
-            let _ = tx.send((Instant::now(), line));
-        }
-    });
     let ledger = Ledger::new(0, 200);
     let bench = Bench::at(broker.port, &ledger);
-    bench.retain("presence", "up");
-    assert!(tokio::time::timeout(5 * SECOND, rx.recv()).await.expect("in time").expect("open").1 == "up");
-    let mut took = Vec::new();
-    for _ in 0..1_000 {
-        let began = Instant::now();
-        ledger.add(&bench.courier);
-        let (at, _) = tokio::time::timeout(5 * SECOND, rx.recv()).await.expect("in time").expect("open");
-        took.push(at - began);
-        tokio::time::sleep(Duration::from_millis(1)).await;
-    }
-    took.sort();
-    eprintln!("send to mosquitto_sub: p50 {:?}, p99 {:?}, most {:?}", took[500], took[990], took[999]);
+    let took = latency(broker.port, &bench, &ledger).await;
+    eprintln!("send to mosquitto_sub by mosquitto: p50 {:?}, p99 {:?}, most {:?}", took[500], took[990], took[999]);
     assert!(took[500] < Duration::from_millis(20), "{:?}", took[500]);
 
     let cpu = || rustix::time::clock_gettime(rustix::time::ClockId::ProcessCPUTime);

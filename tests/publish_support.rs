@@ -17,7 +17,7 @@ use rumqttc::v5::{AsyncClient, Event, MqttOptions};
 use rustix::process::{Pid, Signal, kill_process};
 use tarecup::publish::{Courier, CourierEvent, CourierSettings, Outgoing, Past, spawn};
 use tempfile::TempDir;
-use tokio::io::{AsyncReadExt, AsyncWriteExt};
+use tokio::io::{AsyncBufReadExt, AsyncReadExt, AsyncWriteExt};
 use tokio::net::{TcpListener, TcpStream};
 
 pub const ROOT: &str = "tarecup/v1";
@@ -352,4 +352,30 @@ pub fn resident() -> u64 {
 
 pub fn read(path: &Path) -> String {
     std::fs::read_to_string(path).unwrap_or_default()
+}
+
+/// Times from handing over a fact to its line on the output of `mosquitto_sub`, for 1,000 facts, sorted.
+pub async fn latency(port: u16, bench: &Bench, ledger: &Ledger) -> Vec<Duration> {
+    let limit = Duration::from_secs(5);
+    let mut child = tokio::process::Command::new("mosquitto_sub")
+        .args(["-p", &port.to_string(), "-q", "1", "-V", "5", "-t", &topic("fact"), "-t", &topic("presence"), "-F", "%p"])
+        .stdout(Stdio::piped())
+        .kill_on_drop(true)
+        .spawn()
+        .expect("mosquitto_sub is installed");
+    let output = child.stdout.take().expect("piped");
+    let mut lines = tokio::io::BufReader::new(output).lines();
+    bench.retain("presence", "up");
+    let first = tokio::time::timeout(limit, lines.next_line()).await.expect("in time").expect("read");
+    assert_eq!(first.as_deref(), Some("up"), "subscribed");
+    let mut took = Vec::new();
+    for _ in 0..1_000 {
+        let began = Instant::now();
+        ledger.add(&bench.courier);
+        tokio::time::timeout(limit, lines.next_line()).await.expect("in time").expect("read").expect("a line");
+        took.push(began.elapsed());
+        tokio::time::sleep(Duration::from_millis(1)).await;
+    }
+    took.sort();
+    took
 }

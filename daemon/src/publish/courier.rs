@@ -1,6 +1,8 @@
 //! The task that owns client and connection and carries the outbox to the broker.
 
-use std::collections::{HashMap, VecDeque};
+mod fill;
+mod session;
+
 use std::pin::{Pin, pin};
 use std::sync::Arc;
 use std::time::{Duration, Instant};
@@ -11,16 +13,13 @@ use tokio::sync::oneshot;
 use tokio::task::JoinHandle;
 use tokio::time::Sleep;
 
-use super::facts::{Next, Paged};
-use super::outbox::{Outbox, Shared, StopAsked};
+use self::session::{Item, Parting, Session};
+use super::facts::Paged;
+use super::outbox::{Shared, StopAsked};
 use super::settings::{CourierSettings, SettingsFault};
-use super::transport::{Happening, Inlet, Lost, Message, Outlet, Rumqttc, Transport};
-use super::{Answer, CourierEvent, FACT_MAX, Outgoing, Past, What};
+use super::transport::{Happening, Inlet, Lost, Outlet, Rumqttc, Transport};
+use super::{CourierEvent, Outgoing, Past, What};
 
-/// Retained payloads on their way at a time: the rest of the window belongs to facts.
-const RETAINED_FLYING: usize = 4;
-/// Messages handed to the client but not yet written beyond which live ones wait.
-const CONGESTED: usize = 24;
 /// A connection that lasted this long earns a prompt first attempt after its end.
 const LASTED: Duration = Duration::from_secs(3);
 const RETRY_FIRST: Duration = Duration::from_millis(100);
@@ -49,6 +48,7 @@ pub struct Farewell {
 pub struct Courier {
     shared: Shared,
     on_event: OnEvent,
+    task: JoinHandle<()>,
 }
 
 impl Courier {
@@ -77,6 +77,12 @@ impl Courier {
     #[must_use]
     pub fn is_connected(&self) -> bool {
         self.shared.lock().connected
+    }
+
+    /// False when the task has ended, which it does of its own only by a panic of the callback.
+    #[must_use]
+    pub fn is_running(&self) -> bool {
+        !self.task.is_finished()
     }
 
     /// Sends what waits, then the last presence, then parts properly; without a connection it parts at once.
@@ -120,6 +126,17 @@ pub fn spawn(
 ) -> Result<Courier, SettingsFault> {
     settings.check()?;
     let transport = Rumqttc::new(&settings)?;
+    Ok(spawn_on(handle, transport, settings, past, delivered_through, on_event))
+}
+
+fn spawn_on<T: Transport>(
+    handle: &Handle,
+    transport: T,
+    settings: CourierSettings,
+    past: Arc<dyn Past>,
+    delivered_through: u64,
+    on_event: OnEvent,
+) -> Courier {
     let shared = Shared::new(&settings, delivered_through);
     let task = Task {
         shared: shared.clone(),
@@ -132,77 +149,8 @@ pub fn spawn(
         load_backoff: Duration::from_secs(1),
         last_why: String::new(),
     };
-    handle.spawn(task.run(transport));
-    Ok(Courier { shared, on_event })
-}
-
-/// What a message in flight was.
-#[derive(Debug)]
-enum Item {
-    Fact(u64),
-    Retained(Arc<str>, u64),
-    Answer(String),
-    Live,
-}
-
-/// State of one connection.
-struct Session {
-    /// Handed to the client in this order, not yet written.
-    submitted: VecDeque<(Item, usize)>,
-    /// Written, by packet identifier, not yet answered.
-    written: HashMap<u16, (Item, usize)>,
-    up: Option<Instant>,
-    max_packet: usize,
-    window: usize,
-    progress: Instant,
-    /// When to look whether the broker still answers; set only while something is in flight.
-    look: Option<Instant>,
-    /// Facts are refused: not before this.
-    pause_until: Option<Instant>,
-    pause: Duration,
-    refusals: usize,
-    ignored_told: bool,
-    load: Option<(u64, JoinHandle<Page>)>,
-    parting: Parting,
-    pending_live: usize,
-}
-
-#[derive(PartialEq, Eq, Clone, Copy)]
-enum Parting {
-    No,
-    Draining,
-    LastWord,
-    Gone,
-}
-
-impl Session {
-    fn new(now: Instant) -> Self {
-        Self {
-            submitted: VecDeque::new(),
-            written: HashMap::new(),
-            up: None,
-            max_packet: usize::MAX,
-            window: 1,
-            progress: now,
-            look: None,
-            pause_until: None,
-            pause: PAUSE_FIRST,
-            refusals: 0,
-            ignored_told: false,
-            load: None,
-            parting: Parting::No,
-            pending_live: 0,
-        }
-    }
-
-    fn in_flight(&self) -> usize {
-        self.submitted.len() - self.pending_live + self.written.len()
-    }
-
-    /// The longest packet that may have offended the broker.
-    fn longest(&self) -> Option<usize> {
-        self.submitted.iter().chain(self.written.values()).map(|(_, size)| *size).max()
-    }
+    let task = handle.spawn(task.run(transport));
+    Courier { shared, on_event, task }
 }
 
 /// How a session ended.
@@ -317,7 +265,7 @@ impl Task {
                         }
                     }
                     if session.parting == Parting::Gone {
-                        self.farewell(true);
+                        self.farewell(!session.last_word_refused);
                         return End::Stop;
                     }
                     Err(End::Lost(lost))
@@ -405,7 +353,8 @@ impl Task {
                 outbox.retained.set(&topic, Some(presence));
             }
         }
-        let said = session.parting == Parting::LastWord && outbox.retained.settled();
+        // Only presence is waited for: other topics may be many, and without a proper goodbye the will speaks.
+        let said = session.parting == Parting::LastWord && outbox.retained.is_settled(&self.settings.topic("presence"));
         drop(outbox);
         if said {
             session.parting = Parting::Gone;
@@ -414,7 +363,7 @@ impl Task {
             }
         }
         if now >= until {
-            self.farewell(session.parting == Parting::Gone);
+            self.farewell(session.parting == Parting::Gone && !session.last_word_refused);
             return Err(End::Stop);
         }
         Ok(())
@@ -445,7 +394,7 @@ impl Task {
             }
             Happening::NotSubscribed(reason) => (self.on_event)(CourierEvent::Refused { what: What::Asks, reason }),
             Happening::Parted => {
-                self.farewell(true);
+                self.farewell(!session.last_word_refused);
                 return Err(End::Stop);
             }
             Happening::Other => {}
@@ -507,7 +456,10 @@ impl Task {
                 session.pause = (session.pause * 2).min(PAUSE_MOST);
                 return Some(CourierEvent::Refused { what: What::Fact(seq), reason });
             }
-            Item::Retained(topic, _) => What::Retained(topic.to_string()),
+            Item::Retained(topic, _) => {
+                session.last_word_refused |= session.parting == Parting::LastWord && topic.ends_with("/presence");
+                What::Retained(topic.to_string())
+            }
             Item::Answer(client) => What::Answer(client),
             Item::Live => return None,
         };
@@ -566,117 +518,6 @@ impl Task {
             self.load_backoff = Duration::from_secs(1);
         }
     }
-
-    /// Hands to the client what the window allows.
-    fn fill<O: Outlet>(&mut self, session: &mut Session, outlet: &O) -> Result<(), End> {
-        let mut told = Vec::new();
-        let filled = {
-            let shared = self.shared.clone();
-            let mut outbox = shared.lock();
-            self.fill_assured(session, outlet, &mut outbox, &mut told)
-                .and_then(|()| Self::fill_live(session, outlet, &mut outbox, &mut told))
-        };
-        for event in told {
-            (self.on_event)(event);
-        }
-        filled.map_err(|()| End::Lost(client_gone()))
-    }
-
-    fn fill_assured<O: Outlet>(
-        &mut self,
-        session: &mut Session,
-        outlet: &O,
-        outbox: &mut Outbox,
-        told: &mut Vec<CourierEvent>,
-    ) -> Result<(), ()> {
-        while session.in_flight() < session.window {
-            let Some((item, message)) = self.choose(session, outbox) else { return Ok(()) };
-            let size = message.packet_size();
-            let over_cap = matches!(item, Item::Fact(_)) && message.payload.len() > FACT_MAX;
-            if over_cap || size > session.max_packet {
-                let (bytes, limit) = if over_cap { (message.payload.len(), FACT_MAX) } else { (size, session.max_packet) };
-                let what = match item {
-                    Item::Fact(seq) => {
-                        if outbox.facts.pass_over(seq) {
-                            told.push(CourierEvent::Delivered { through: outbox.facts.delivered() });
-                        }
-                        What::Fact(seq)
-                    }
-                    Item::Retained(topic, version) => {
-                        outbox.retained.settle(&topic, version);
-                        What::Retained(topic.to_string())
-                    }
-                    Item::Answer(client) => What::Answer(client),
-                    Item::Live => continue,
-                };
-                told.push(CourierEvent::TooLarge { what, bytes, limit });
-                continue;
-            }
-            if let Item::Fact(seq) = item {
-                outbox.facts.sent(seq);
-            }
-            outlet.publish(message)?;
-            session.submitted.push_back((item, size));
-        }
-        Ok(())
-    }
-
-    /// Presence, then answers, then facts, then the other retained topics, of which a few at a time.
-    fn choose(&mut self, session: &mut Session, outbox: &mut Outbox) -> Option<(Item, Message)> {
-        let retained_may = outbox.retained.flying() < RETAINED_FLYING.min(session.window);
-        if retained_may && let Some(due) = outbox.retained.next(true) {
-            return Some(retained_message(due));
-        }
-        if let Some(Answer { client, payload, correlation }) = outbox.answers.pop_front() {
-            let topic = self.settings.topic(&format!("answer/{client}"));
-            return Some((Item::Answer(client), Message { topic, payload, assured: true, retain: false, correlation }));
-        }
-        // While retained topics wait, facts leave them a part of the window: a long catch-up must not starve them.
-        let share = if outbox.retained.waiting() && session.window > RETAINED_FLYING { RETAINED_FLYING } else { 0 };
-        if session.pause_until.is_none() && outbox.facts.in_flight() < session.window - share {
-            match outbox.facts.next() {
-                Next::Send(seq, payload) => {
-                    let topic = self.fact_topic.clone();
-                    return Some((Item::Fact(seq), Message { topic, payload, assured: true, retain: false, correlation: None }));
-                }
-                Next::Load(after) if session.load.is_none() && self.load_retry.is_none() => {
-                    let (past, limit) = (Arc::clone(&self.past), self.settings.limits.page);
-                    let job = tokio::task::spawn_blocking(move || past.facts_after(after, limit));
-                    session.load = Some((after, job));
-                }
-                Next::Load(_) | Next::Idle => {}
-            }
-        }
-        if retained_may { outbox.retained.next(false).map(retained_message) } else { None }
-    }
-
-    fn fill_live<O: Outlet>(
-        session: &mut Session,
-        outlet: &O,
-        outbox: &mut Outbox,
-        told: &mut Vec<CourierEvent>,
-    ) -> Result<(), ()> {
-        while session.submitted.len() < CONGESTED.max(session.window + 8) {
-            let Some((topic, payload)) = outbox.live.pop() else { return Ok(()) };
-            let message = Message { topic, payload, assured: false, retain: false, correlation: None };
-            let size = message.packet_size();
-            if size > session.max_packet {
-                let what = What::Live(message.topic);
-                told.push(CourierEvent::TooLarge { what, bytes: size, limit: session.max_packet });
-                continue;
-            }
-            outlet.publish(message)?;
-            session.submitted.push_back((Item::Live, size));
-            session.pending_live += 1;
-        }
-        Ok(())
-    }
-}
-
-fn retained_message(due: super::retained::Due) -> (Item, Message) {
-    let topic = due.topic.to_string();
-    let message = Message { topic, payload: due.payload, assured: true, retain: true, correlation: None };
-    (Item::Retained(due.topic, due.version), message)
 }
 
 fn client_gone() -> Lost {
@@ -705,3 +546,6 @@ fn jittered(pause: Duration) -> Duration {
     let part = getrandom::fill(&mut byte).map_or(0.5, |()| f32::from(byte[0]) / 255.0);
     pause.mul_f32(0.5 + part / 2.0)
 }
+
+#[cfg(test)]
+mod tests;

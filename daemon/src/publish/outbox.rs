@@ -14,7 +14,7 @@ use super::facts::FactQueue;
 use super::live::LiveQueue;
 use super::retained::RetainedBoard;
 use super::settings::CourierSettings;
-use super::{Answer, CourierEvent, FACT_MAX, Outgoing, What};
+use super::{Answer, CourierEvent, FACT_MAX, Live, Outgoing, What};
 
 /// A request to say goodbye.
 pub(super) struct StopAsked {
@@ -87,7 +87,9 @@ impl Outbox {
         }
         for (topic, wanted) in outgoing.retained {
             let bytes = wanted.as_ref().map_or(0, Bytes::len);
-            if bytes > FACT_MAX {
+            if !is_topic(&topic) {
+                trouble.push(no_topic(What::Retained(topic)));
+            } else if bytes > FACT_MAX {
                 trouble.push(CourierEvent::TooLarge { what: What::Retained(topic), bytes, limit: FACT_MAX });
             } else if !self.retained.set(&topic, wanted) && !self.full_told {
                 self.full_told = true;
@@ -96,7 +98,12 @@ impl Outbox {
         }
         if self.connected {
             for live in outgoing.live {
-                self.live.push(live);
+                match &live {
+                    Live::Newest { topic, .. } | Live::Each { topic, .. } if !is_topic(topic) => {
+                        trouble.push(no_topic(What::Live(topic.clone())));
+                    }
+                    _ => self.live.push(live),
+                }
             }
             for answer in outgoing.answers {
                 if !client_name(&answer.client) {
@@ -123,5 +130,51 @@ impl Outbox {
 
     pub(super) fn settled(&self) -> bool {
         self.facts.settled() && self.retained.settled() && self.answers.is_empty()
+    }
+}
+
+/// A name that can be published to. Another one would make the client refuse the message, again and again.
+fn is_topic(topic: &str) -> bool {
+    (1..=1_024).contains(&topic.len()) && !topic.contains(['+', '#', '\0'])
+}
+
+fn no_topic(what: What) -> CourierEvent {
+    CourierEvent::Refused { what, reason: "not a topic: leave out + and #, and keep it under 1 KiB".to_owned() }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn what_could_never_be_sent_is_refused_at_the_door() {
+        let shared = Shared::new(&CourierSettings::new("h", 1, "r", "s"), 0);
+        let mut outbox = shared.lock();
+        outbox.connected = true;
+        let body = Bytes::from_static(b"x");
+        let trouble = outbox.take(Outgoing {
+            retained: vec![("r/s/+".into(), Some(body.clone())), (String::new(), None), ("r/s/head".into(), Some(body.clone()))],
+            live: vec![Live::Each { topic: "r/s/#".into(), payload: body.clone() }],
+            answers: vec![Answer { client: "a/b".into(), payload: body, correlation: None }],
+            ..Outgoing::default()
+        });
+        assert_eq!(trouble.len(), 4);
+        assert!(trouble.iter().all(|e| matches!(e, CourierEvent::Refused { .. })));
+        assert!(outbox.live.pop().is_none() && outbox.answers.is_empty());
+        assert!(outbox.retained.next(false).is_some_and(|due| &*due.topic == "r/s/head"));
+        assert!(outbox.retained.next(false).is_none());
+    }
+
+    #[test]
+    fn without_a_connection_moments_and_answers_are_not_kept() {
+        let shared = Shared::new(&CourierSettings::new("h", 1, "r", "s"), 0);
+        let mut outbox = shared.lock();
+        let body = Bytes::from_static(b"x");
+        outbox.take(Outgoing {
+            live: vec![Live::Newest { topic: "t".into(), payload: body.clone() }],
+            answers: vec![Answer { client: "a".into(), payload: body, correlation: None }],
+            ..Outgoing::default()
+        });
+        assert!(outbox.live.pop().is_none() && outbox.answers.is_empty());
     }
 }

@@ -65,6 +65,11 @@ impl RetainedBoard {
         self.flying == 0 && self.ready.iter().all(VecDeque::is_empty)
     }
 
+    /// The broker has answered for what this topic should show.
+    pub(super) fn is_settled(&self, topic: &str) -> bool {
+        self.entries.get(topic).is_none_or(|e| e.flying == 0 && e.delivered == e.version)
+    }
+
     pub(super) fn waiting(&self) -> bool {
         self.ready.iter().any(|q| !q.is_empty())
     }

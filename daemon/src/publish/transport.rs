@@ -114,7 +114,7 @@ impl Rumqttc {
         options.set_max_packet_size(Some(incoming));
         // Packet identifiers run in a circle of this length. It is longer than the window, so that an identifier is
         // free again before its turn comes, and much shorter than the default, which costs megabytes.
-        options.set_outgoing_inflight_upper_limit(4_096);
+        options.set_outgoing_inflight_upper_limit(1_024);
         let mut network = NetworkOptions::new();
         network.set_tcp_nodelay(true);
         options.set_network_options(network);
