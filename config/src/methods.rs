@@ -86,7 +86,7 @@ fn contradictions(m: &Method) -> Vec<(String, String)> {
     say("liquid.trials", trials == 0 || trials > 50, "is not between 1 and 50");
     say("liquid.trials", line && trials == 1, "is 1, and a line needs two trials at least");
     say("liquid.trials", line && windows > trials, "is less than the number of liquid.windows, each of which wants a trial");
-    say("liquid.how", !line && l.exponent.is_none(), "is one-point, which needs liquid.exponent");
+    say("liquid.exponent", !line && l.exponent.is_none(), "is missing, and the one-point formula needs it");
     say("liquid.exponent", l.exponent.is_some_and(|e| not_positive(e) || e >= 1.0), "is not between 0 and 1");
     let widest = l.drops[1].saturating_sub(l.drops[0]);
     say("liquid.spread_at_least", l.spread_at_least.is_some_and(|s| s > widest), "is more than liquid.drops can spread");

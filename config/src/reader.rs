@@ -96,8 +96,8 @@ impl<'t> Reading<'t> {
         }
     }
 
-    /// Whether further faults are only counted.
-    fn is_full(&self) -> bool {
+    /// Whether enough faults are known: further ones are not kept, and long lists need not be read on.
+    pub(crate) fn is_full(&self) -> bool {
         self.noted.borrow().len() >= MOST_NOTED
     }
 
