@@ -259,7 +259,7 @@ fn many_faults_are_told_and_the_rest_counted() {
     let rows = "[[specimen.plastic]]\nwater_percent = -1\n".repeat(300);
     let faults = read(&format!("[[specimen]]\nid = \"S\"\n{rows}"), Mode::Work).expect_err("faults");
     assert_eq!((faults.list.len(), faults.more), (100, 200));
-    assert!(faults.to_string().ends_with("and 200 more; correct these first"));
+    assert!(faults.to_string().ends_with("and at least 200 more; correct these first"));
 }
 
 #[test]

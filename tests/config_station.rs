@@ -318,7 +318,8 @@ fn a_broken_table_is_told_once_and_not_at_its_users() {
 fn what_an_instrument_leaves_out_is_as_its_profile_says() {
     let s = read(&format!(
         "{}[[instrument]]\nname='q'\nkind='balance'\nport='/dev/ttyS1'\nprofile='own'\nbaud=300\ntalks='continuous'\n\
-         [profile.own]\nkind='balance'\ntalks='print-on-key'\nserial={{baud=1200,frame='7E1',flow='software'}}\n",
+         [profile.own]\nkind='balance'\ntalks='print-on-key'\nserial={{baud=1200,frame='7E1',flow='software'}}\n\
+         frame={{ends=[\"\\r\\n\"]}}\nline=[{{pattern='(?<mass>\\d+\\.\\d+) (?<unit>g)'}}]\n",
         balance("profile", "profile = \"own\"")
     ));
     let [p, q] = &s.instruments[..] else { panic!("two instruments") };
@@ -334,11 +335,16 @@ fn far_too_many_instruments_are_refused_at_the_first_beyond() {
     assert!(faults.list[0].says.contains("1 of them from here on"), "{faults}");
 }
 
+/// The rest of a counter's profile.
+const TICKS: &str = "frame = { ends = [\"\\r\\n\"] }\nline = [{ pattern = 'tick', means = 'drop' }]\n";
+
 #[test]
 fn own_profiles_are_taken_and_checked() {
-    let s = read("[profile.mine]\nkind = \"counter\"\n");
+    let s = read(&format!("[profile.mine]\nkind = \"counter\"\n{TICKS}"));
     let mine = s.profiles.values().find(|p| p.name.as_str() == "mine").expect("mine");
     assert_eq!((mine.kind, mine.shipped, mine.at.line), (InstrumentKind::Counter, false, 1));
-    expect_fault("[profile.@@\"my own\"]\nkind = \"counter\"\n", &["is not a name"], |t| station::parse("it.toml", t));
-    expect_fault("@@[profile.mine]\n", &["profile, mine: kind", "is missing"], |t| station::parse("it.toml", t));
+    expect_fault(&format!("[profile.@@\"my own\"]\nkind = \"counter\"\n{TICKS}"), &["is not a name"], |t| {
+        station::parse("it.toml", t)
+    });
+    expect_fault(&format!("@@[profile.mine]\n{TICKS}"), &["profile, mine", "kind"], |t| station::parse("it.toml", t));
 }

@@ -57,7 +57,7 @@ impl fmt::Display for Fault {
 pub struct Faults {
     /// The first [`MOST_FAULTS`] faults.
     pub list: Vec<Fault>,
-    /// How many more there were.
+    /// How many more there were at least; very long lists of faults are not read to their end.
     pub more: usize,
 }
 
@@ -70,7 +70,7 @@ impl fmt::Display for Faults {
             write!(f, "{fault}")?;
         }
         if self.more > 0 {
-            write!(f, "\nand {} more; correct these first", self.more)?;
+            write!(f, "\nand at least {} more; correct these first", self.more)?;
         }
         Ok(())
     }

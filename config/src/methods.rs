@@ -1,11 +1,12 @@
 //! Method files: a test method's numbers as data, shipped ones and the laboratory's own.
 
 use crate::embedded;
-use crate::fault::{Faults, did_you_mean};
+use crate::fault::Faults;
 use crate::reader::{Table, read};
 use serde::Deserialize;
 use std::borrow::Cow;
 use std::collections::BTreeMap;
+use std::sync::OnceLock;
 use tarecup_core::method::{LiquidHow, Method};
 use tarecup_core::names::MethodName;
 use toml::Spanned;
@@ -19,12 +20,9 @@ pub type Methods = BTreeMap<MethodName, Method>;
 /// # Errors
 /// Only when a shipped file is broken, which a test excludes.
 pub fn shipped() -> Result<Methods, Faults> {
-    let mut methods = Methods::new();
-    for (file, text) in embedded::METHODS {
-        let method = parse(file, text)?;
-        methods.insert(method.name.clone(), method);
-    }
-    Ok(methods)
+    static SHIPPED: OnceLock<Result<Methods, Faults>> = OnceLock::new();
+    let read = || embedded::METHODS.iter().map(|(file, text)| parse(file, text).map(|m| (m.name.clone(), m))).collect();
+    SHIPPED.get_or_init(read).clone()
 }
 
 /// Reads a method file: the keys of one method at the top level.
@@ -54,44 +52,17 @@ pub(crate) fn method(table: &Table<'_>, name: Option<&MethodName>) -> Option<Met
     let method = match Method::deserialize(toml::Deserializer::from(tree)) {
         Ok(method) => method,
         Err(e) => {
-            refuse(table, &e);
+            table.refuse(&e, "method");
             return None;
         }
     };
     let contradictions = contradictions(&method);
     for (key, says) in &contradictions {
-        let path = if table.name.is_empty() { key.clone() } else { format!("{}: {key}", table.name) };
+        let path = table.path(key);
         let try_this = "correcting one of the two, or starting again from a shipped method";
         table.fault_at(table.locate(key), &path, says, "a method that does not contradict itself", try_this);
     }
     contradictions.is_empty().then_some(method)
-}
-
-/// Puts the deserialiser's one error into our words.
-fn refuse(table: &Table<'_>, e: &toml::de::Error) {
-    let at = e.span().map_or(table.at, |s| s.start);
-    let message = e.message().lines().next().unwrap_or_default();
-    let mut quoted = message.split('`').skip(1).step_by(2);
-    let name = if table.name.is_empty() { "method" } else { &table.name };
-    if message.starts_with("unknown field") || message.starts_with("unknown variant") {
-        let word = quoted.next().unwrap_or_default();
-        let known: Vec<&str> = quoted.collect();
-        let try_this = did_you_mean(word, known.iter().copied())
-            .map_or_else(|| "taking it out".to_string(), |near| format!("\"{near}\": did you mean that?"));
-        let says = format!("does not know {}", crate::fault::quote(word));
-        table.fault_at(at, name, &says, &format!("one of {}", known.join(", ")), &try_this);
-    } else if message.starts_with("missing field") {
-        let key = quoted.next().unwrap_or_default();
-        table.fault_at(at, name, &format!("lacks {key}"), "every number of a method", "copying the line from a shipped method");
-    } else {
-        table.fault_at(
-            at,
-            name,
-            &format!("is wrong here: {message}"),
-            "the form of the shipped methods",
-            "comparing with a shipped method",
-        );
-    }
 }
 
 /// Key path and words for every pair of numbers that cannot both hold.
@@ -115,7 +86,7 @@ fn contradictions(m: &Method) -> Vec<(String, String)> {
     say("liquid.trials", trials == 0 || trials > 50, "is not between 1 and 50");
     say("liquid.trials", line && trials == 1, "is 1, and a line needs two trials at least");
     say("liquid.trials", line && windows > trials, "is less than the number of liquid.windows, each of which wants a trial");
-    say("liquid.how", !line && l.exponent.is_none(), "is one-point, which needs liquid.exponent");
+    say("liquid.exponent", !line && l.exponent.is_none(), "is missing, and the one-point formula needs it");
     say("liquid.exponent", l.exponent.is_some_and(|e| not_positive(e) || e >= 1.0), "is not between 0 and 1");
     let widest = l.drops[1].saturating_sub(l.drops[0]);
     say("liquid.spread_at_least", l.spread_at_least.is_some_and(|s| s > widest), "is more than liquid.drops can spread");

@@ -6,6 +6,7 @@ use crate::reader::{Table, read};
 use crate::station::InstrumentKind;
 use serde::Deserialize;
 use std::collections::{BTreeMap, BTreeSet};
+use std::sync::OnceLock;
 use tarecup_core::names::ProfileName;
 use tarecup_core::sense::Talks;
 use tarecup_drivers::port::{CharFrame, Flow};
@@ -72,10 +73,9 @@ pub type Profiles = BTreeMap<ProfileName, ProfileSource>;
 /// # Errors
 /// Only when a shipped file is broken, which a test excludes.
 pub fn shipped() -> Result<Profiles, Faults> {
-    embedded::PROFILES
-        .iter()
-        .map(|(file, text)| parse(file, text).map(|p| (p.name.clone(), ProfileSource { shipped: true, ..p })))
-        .collect()
+    static SHIPPED: OnceLock<Result<Profiles, Faults>> = OnceLock::new();
+    let one = |(file, text): &(&str, &str)| parse(file, text).map(|p| (p.name.clone(), ProfileSource { shipped: true, ..p }));
+    SHIPPED.get_or_init(|| embedded::PROFILES.iter().map(one).collect()).clone()
 }
 
 /// Reads a profile file; its name is that of the file.
@@ -115,14 +115,7 @@ fn source(table: &Table<'_>, name: ProfileName, file: &str) -> Option<ProfileSou
     let (usual, plain) = match read {
         Ok(read) => read,
         Err(e) => {
-            let at = e.span().map_or(table.at, |s| s.start);
-            table.fault_at(
-                at,
-                &table.name,
-                &format!("is wrong here: {}", e.message()),
-                "the form of the shipped profiles",
-                "comparing with a shipped profile",
-            );
+            table.refuse(&e, "profile");
             return None;
         }
     };

@@ -96,8 +96,8 @@ impl<'t> Reading<'t> {
         }
     }
 
-    /// Whether further faults are only counted.
-    fn is_full(&self) -> bool {
+    /// Whether enough faults are known: further ones are not kept, and long lists need not be read on.
+    pub(crate) fn is_full(&self) -> bool {
         self.noted.borrow().len() >= MOST_NOTED
     }
 
@@ -179,7 +179,29 @@ impl<'a> Table<'a> {
         Entry { reading: self.reading, table: self.name.clone(), key, key_at, span: value.span(), value: value.get_ref() }
     }
 
-    fn path(&self, key: &str) -> String {
+    /// Puts a deserialiser's one error into our words; `what` names the kind of file.
+    pub(crate) fn refuse(&self, e: &toml::de::Error, what: &str) {
+        let at = e.span().map_or(self.at, |s| s.start);
+        let message = e.message().lines().next().unwrap_or_default();
+        let mut quoted = message.split('`').skip(1).step_by(2);
+        let name = if self.name.is_empty() { what } else { &self.name };
+        let (says, expected, try_this) = if message.starts_with("unknown field") || message.starts_with("unknown variant") {
+            let word = quoted.next().unwrap_or_default();
+            let known: Vec<&str> = quoted.collect();
+            let says = format!("does not know {}", quote(word));
+            (says, format!("one of {}", known.join(", ")), remedy_for_name(word, &known))
+        } else if message.starts_with("missing field") {
+            let says = format!("lacks {}", quoted.next().unwrap_or_default());
+            (says, format!("every key that a {what} needs"), format!("copying the line from a shipped {what}"))
+        } else {
+            let says = format!("is wrong here: {}", message.escape_debug());
+            (says, format!("the form of a shipped {what}"), format!("comparing with a shipped {what}"))
+        };
+        self.fault_at(at, name, &says, &expected, &try_this);
+    }
+
+    /// `table: key`, for messages.
+    pub(crate) fn path(&self, key: &str) -> String {
         if self.name.is_empty() { key.into() } else { format!("{}: {key}", self.name) }
     }
 
@@ -223,13 +245,20 @@ impl<'a> Table<'a> {
         Spanned::new(self.at..self.at, self.entries.clone())
     }
 
-    /// Where a dotted key path stands: as much of it as there is.
+    /// Where a key path such as `liquid.trials` or `line[2].pattern` stands:
+    /// as much of it as there is.
     pub(crate) fn locate(&self, path: &str) -> usize {
         let (mut at, mut entries) = (self.at, Some(self.entries));
         for part in path.split('.') {
-            let Some((key, value)) = entries.and_then(|t| t.get_key_value(part)) else { break };
+            let (key, nth) = match part.strip_suffix(']').and_then(|p| p.split_once('[')) {
+                Some((key, nth)) => (key, nth.parse::<usize>().ok()),
+                None => (part, None),
+            };
+            let Some((key, value)) = entries.and_then(|t| t.get_key_value(key)) else { break };
             at = key.span().start;
-            entries = value.get_ref().as_table();
+            let member = nth.and_then(|n| value.get_ref().as_array().and_then(|a| a.get(n.checked_sub(1)?)));
+            at = member.map_or(at, |m| m.span().start);
+            entries = member.unwrap_or(value).get_ref().as_table();
         }
         at
     }

@@ -94,6 +94,9 @@ fn scenario(root: &Table<'_>, file: &str, mode: Mode, methods: &Methods) -> Opti
     let mut above: BTreeMap<SpecimenId, Place> = BTreeMap::new();
     let mut whole = true;
     for table in list.map(|e| e.tables("specimen", keys::SPECIMEN)).unwrap_or_default() {
+        if table.reading.is_full() {
+            break;
+        }
         match specimen(&table, mode, methods, &mut above) {
             Some(specimen) => specimens.push(specimen),
             None => whole = false,

@@ -60,12 +60,12 @@ pub struct Masses {
 
 /// Reads all rows even when one is wrong; `None` when any was.
 pub(super) fn liquid(tables: &[Table<'_>], mode: Mode) -> Option<Vec<LiquidRow>> {
-    let rows: Vec<Option<LiquidRow>> = tables.iter().map(|t| liquid_row(t, mode)).collect();
+    let rows: Vec<Option<LiquidRow>> = tables.iter().take_while(|t| !t.reading.is_full()).map(|t| liquid_row(t, mode)).collect();
     rows.into_iter().collect()
 }
 
 pub(super) fn weighed(tables: &[Table<'_>], mode: Mode) -> Option<Vec<Weighed>> {
-    let rows: Vec<Option<Weighed>> = tables.iter().map(|t| weighed_row(t, mode)).collect();
+    let rows: Vec<Option<Weighed>> = tables.iter().take_while(|t| !t.reading.is_full()).map(|t| weighed_row(t, mode)).collect();
     rows.into_iter().collect()
 }
 
