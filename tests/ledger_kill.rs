@@ -52,7 +52,18 @@ fn write_for_ever(path: &Path) -> ! {
         let (seq, through) = (ledger.next_seq(), first + random() % count);
         let body = fact(seq, through);
         let facts = [FactRow { seq, at: at(through), kind: "mass_taken", who: None, through, body: &body }];
-        let done = ledger.commit(&Group { inputs: &inputs, facts: &facts, ..Group::default() }).expect("commits");
+        let done = match ledger.commit(&Group { inputs: &inputs, facts: &facts, ..Group::default() }) {
+            Ok(done) => done,
+            Err(error) => {
+                // As the service does it: begin again from what is stored.
+                eprintln!("{error}");
+                while let Err(error) = ledger.reopen() {
+                    eprintln!("{error}");
+                    std::thread::sleep(Duration::from_millis(20));
+                }
+                continue;
+            }
+        };
         writeln!(out, "stored {} {} {}", done.last_input, done.last_seq, done.last_hash).expect("the test listens");
         out.flush().expect("the test listens");
         if random().is_multiple_of(8) {

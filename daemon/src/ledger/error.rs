@@ -163,11 +163,18 @@ impl LedgerError {
         use rusqlite::ErrorCode as Code;
         let path = path.to_path_buf();
         let what = error.to_string();
+        // Making room for the index of the log beside the file is a write like any other.
+        if error.sqlite_extended_error_code() == Some(rusqlite::ffi::SQLITE_IOERR_SHMSIZE) {
+            return Self::Full { path };
+        }
         match error.sqlite_error_code() {
             Some(Code::DiskFull) => Self::Full { path },
             Some(Code::ReadOnly | Code::PermissionDenied) => Self::ReadOnly { path },
             Some(Code::DatabaseBusy | Code::DatabaseLocked | Code::FileLockingProtocolFailed) => Self::Busy { path },
-            Some(Code::SystemIoFailure) => Self::Io { path, what },
+            Some(Code::SystemIoFailure) => {
+                let code = error.sqlite_extended_error_code().unwrap_or_default();
+                Self::Io { path, what: format!("{what}, SQLite code {code}") }
+            }
             Some(Code::CannotOpen) => Self::CannotOpen { path, what },
             Some(Code::NotADatabase) => Self::NotALedger { path, why: "it is not an SQLite file".into() },
             Some(Code::DatabaseCorrupt) => Self::Damaged { path, what },
@@ -206,6 +213,7 @@ mod tests {
             (ffi::SQLITE_READONLY_DBMOVED, "mounted for writing"),
             (ffi::SQLITE_BUSY, "close whatever"),
             (ffi::SQLITE_BUSY_SNAPSHOT, "close whatever"),
+            (ffi::SQLITE_IOERR_SHMSIZE, "free space"),
             (ffi::SQLITE_IOERR_FSYNC, "check the disk"),
             (ffi::SQLITE_IOERR_WRITE, "check the disk"),
             (ffi::SQLITE_CORRUPT, "restore the latest backup"),
