@@ -325,6 +325,11 @@ fn files_that_are_no_ledger_are_refused_and_not_touched() {
     assert_eq!(contents(folder.path()), before);
 
     fs::remove_file(&file).expect("removed");
+    fs::create_dir(&file).expect("a folder of that name");
+    let error = Ledger::open(folder.path(), options()).expect_err("refused").to_string();
+    assert!(error.contains("it is not a file"), "{error}");
+
+    fs::remove_dir(&file).expect("removed");
     assert!(matches!(Reader::open(folder.path()), Err(LedgerError::Missing { .. })));
     fs::write(&file, "").expect("an empty file is as good as none");
     assert_eq!(Ledger::open(folder.path(), options()).expect("opens").next_input(), 1);

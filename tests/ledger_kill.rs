@@ -52,7 +52,18 @@ fn write_for_ever(path: &Path) -> ! {
         let (seq, through) = (ledger.next_seq(), first + random() % count);
         let body = fact(seq, through);
         let facts = [FactRow { seq, at: at(through), kind: "mass_taken", who: None, through, body: &body }];
-        let done = ledger.commit(&Group { inputs: &inputs, facts: &facts, ..Group::default() }).expect("commits");
+        let done = match ledger.commit(&Group { inputs: &inputs, facts: &facts, ..Group::default() }) {
+            Ok(done) => done,
+            Err(error) => {
+                // As the service does it: begin again from what is stored.
+                eprintln!("{error}");
+                while let Err(error) = ledger.reopen() {
+                    eprintln!("{error}");
+                    std::thread::sleep(Duration::from_millis(20));
+                }
+                continue;
+            }
+        };
         writeln!(out, "stored {} {} {}", done.last_input, done.last_seq, done.last_hash).expect("the test listens");
         out.flush().expect("the test listens");
         if random().is_multiple_of(8) {
@@ -188,4 +199,38 @@ fn a_second_process_is_refused_by_the_holders_number() {
     assert!(matches!(error, LedgerError::Held { pid: Some(pid), .. } if pid == writer.0.id()), "{error:?}");
     while heard.try_recv().is_ok() {}
     heard.recv_timeout(Duration::from_secs(20)).expect("the holder is undisturbed");
+}
+
+/// A ledger whose making was cut short is begun again, not refused.
+#[test]
+fn killed_while_it_is_made_it_can_still_be_opened() {
+    if let Some(path) = std::env::var_os(ROLE) {
+        write_for_ever(Path::new(&path));
+    }
+    let (mut cut_short, mut made, mut delay_us) = (0, 0, 0_u64);
+    // The moment that matters is found by halving and doubling, so that a
+    // slow machine finds it too.
+    for round in 0..100 {
+        let folder = TempDir::new().expect("a folder");
+        let (mut writer, heard) = start_writer(folder.path(), "killed_while_it_is_made_it_can_still_be_opened");
+        let lock = folder.path().join(format!("{FILE_NAME}.lock"));
+        let began = Instant::now();
+        while !lock.exists() && began.elapsed() < Duration::from_secs(20) {
+            std::thread::yield_now();
+        }
+        std::thread::sleep(Duration::from_micros(delay_us));
+        writer.0.kill().expect("killed");
+        writer.0.wait().expect("gone");
+        let last = heard.iter().last();
+        let begun = folder.path().join(FILE_NAME).exists();
+        delay_us = if begun { delay_us / 2 } else { delay_us * 2 + 50 };
+        cut_short += u32::from(last.is_none());
+        made += u32::from(begun);
+        Ledger::open(folder.path(), OpenOptions::new("boot-a", 0)).unwrap_or_else(|e| panic!("round {round}: {e}"));
+        agrees(folder.path(), last).unwrap_or_else(|why| panic!("round {round}: {why}"));
+        if round >= 11 && cut_short >= 3 && made >= 3 {
+            return;
+        }
+    }
+    panic!("{cut_short} were cut short before the first commit, {made} had begun a file: this tests nothing");
 }

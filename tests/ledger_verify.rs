@@ -255,8 +255,7 @@ fn rows_added_removed_or_exchanged_are_found() {
     }
 }
 
-/// A fact whose columns and hash were made to fit each other, but whose JSON
-/// says something else.
+/// What `verify` would call bad is never stored in the first place.
 #[test]
 fn json_that_differs_from_its_columns_is_refused_before_it_is_stored() {
     let folder = TempDir::new().expect("a folder");

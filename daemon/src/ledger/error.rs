@@ -74,6 +74,16 @@ pub enum LedgerError {
         /// The ledger's file.
         path: PathBuf,
     },
+    /// The file or one beside it cannot be opened.
+    #[error(
+        "the ledger {} cannot be opened ({what}); check that it is a file, and that this user may read and write it and its folder", .path.display()
+    )]
+    CannotOpen {
+        /// The ledger's file.
+        path: PathBuf,
+        /// What SQLite said.
+        what: String,
+    },
     /// Someone else keeps the database locked.
     #[error("another program keeps the ledger {} locked; close whatever has the file open for writing (a database browser, a copy job)", .path.display())]
     Busy {
@@ -153,11 +163,19 @@ impl LedgerError {
         use rusqlite::ErrorCode as Code;
         let path = path.to_path_buf();
         let what = error.to_string();
+        // Making room for the index of the log beside the file is a write like any other.
+        if error.sqlite_extended_error_code() == Some(rusqlite::ffi::SQLITE_IOERR_SHMSIZE) {
+            return Self::Full { path };
+        }
         match error.sqlite_error_code() {
             Some(Code::DiskFull) => Self::Full { path },
             Some(Code::ReadOnly | Code::PermissionDenied) => Self::ReadOnly { path },
             Some(Code::DatabaseBusy | Code::DatabaseLocked | Code::FileLockingProtocolFailed) => Self::Busy { path },
-            Some(Code::SystemIoFailure | Code::CannotOpen) => Self::Io { path, what },
+            Some(Code::SystemIoFailure) => {
+                let code = error.sqlite_extended_error_code().unwrap_or_default();
+                Self::Io { path, what: format!("{what}, SQLite code {code}") }
+            }
+            Some(Code::CannotOpen) => Self::CannotOpen { path, what },
             Some(Code::NotADatabase) => Self::NotALedger { path, why: "it is not an SQLite file".into() },
             Some(Code::DatabaseCorrupt) => Self::Damaged { path, what },
             _ => Self::Other { path, doing, what },
@@ -179,4 +197,35 @@ impl LedgerError {
 /// A stored digest must have its full length.
 pub(crate) fn digest_of(bytes: &[u8]) -> Option<Digest> {
     <[u8; 32]>::try_from(bytes).ok().map(Digest)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use rusqlite::ffi;
+
+    /// Extended codes, as SQLite gives them for what disks do.
+    #[test]
+    fn what_sqlite_says_becomes_a_sentence_with_a_remedy() {
+        for (code, remedy) in [
+            (ffi::SQLITE_FULL, "free space"),
+            (ffi::SQLITE_READONLY, "mounted for writing"),
+            (ffi::SQLITE_READONLY_DBMOVED, "mounted for writing"),
+            (ffi::SQLITE_BUSY, "close whatever"),
+            (ffi::SQLITE_BUSY_SNAPSHOT, "close whatever"),
+            (ffi::SQLITE_IOERR_SHMSIZE, "free space"),
+            (ffi::SQLITE_IOERR_FSYNC, "check the disk"),
+            (ffi::SQLITE_IOERR_WRITE, "check the disk"),
+            (ffi::SQLITE_CORRUPT, "restore the latest backup"),
+            (ffi::SQLITE_NOTADB, "nothing was changed"),
+            (ffi::SQLITE_CANTOPEN, "may read and write"),
+            (ffi::SQLITE_NOMEM, "restart the service"),
+        ] {
+            let error = rusqlite::Error::SqliteFailure(ffi::Error::new(code), None);
+            let said = LedgerError::sql(Path::new("/lab/ledger.sqlite"), "storing", &error).to_string();
+            assert!(said.contains(remedy) && said.contains("/lab/ledger.sqlite"), "{code}: {said}");
+        }
+        let full = std::io::Error::from(std::io::ErrorKind::StorageFull);
+        assert!(matches!(LedgerError::io(Path::new("x"), &full), LedgerError::Full { .. }));
+    }
 }

@@ -29,8 +29,15 @@ impl FileMark {
 pub(crate) struct Lock {
     path: PathBuf,
     mark: Option<FileMark>,
-    /// Closing it releases the lock.
-    _file: File,
+    file: File,
+}
+
+impl Drop for Lock {
+    /// Said expressly, because a process being started at this very moment may
+    /// hold a copy of the descriptor, and closing ours would not release it.
+    fn drop(&mut self) {
+        let _ = self.file.unlock();
+    }
 }
 
 /// `ledger.sqlite` is locked by `ledger.sqlite.lock`.
@@ -46,15 +53,11 @@ impl Lock {
         let path = lock_path(ledger);
         let opened = OpenOptions::new().read(true).write(true).create(true).truncate(false).open(&path);
         let mut file = opened.map_err(|e| LedgerError::io(&path, &e))?;
-        match file.try_lock() {
-            Ok(()) => {}
-            Err(TryLockError::WouldBlock) => {
-                return Err(LedgerError::Held { path: ledger.to_path_buf(), pid: read_pid(&mut file) });
-            }
-            Err(TryLockError::Error(e)) => return Err(LedgerError::io(&path, &e)),
+        if !try_for_a_while(&file).map_err(|e| LedgerError::io(&path, &e))? {
+            return Err(LedgerError::Held { path: ledger.to_path_buf(), pid: read_pid(&mut file) });
         }
         write_pid(&mut file).map_err(|e| LedgerError::io(&path, &e))?;
-        Ok(Self { mark: FileMark::at(&path), path, _file: file })
+        Ok(Self { mark: FileMark::at(&path), path, file })
     }
 
     /// Whether the file at the lock's path is still the one that is locked.
@@ -71,17 +74,21 @@ fn write_pid(file: &mut File) -> std::io::Result<()> {
     file.write_all(format!("{}\n", std::process::id()).as_bytes())
 }
 
-/// The holder writes its number right after locking, so it may be a moment
-/// late; waiting is bounded well below a second.
-fn read_pid(file: &mut File) -> Option<u32> {
-    for _ in 0..20 {
-        let mut text = [0_u8; 16];
-        let read = file.seek(SeekFrom::Start(0)).and_then(|_| file.read(&mut text)).unwrap_or(0);
-        let text = std::str::from_utf8(&text[..read]).unwrap_or("");
-        if let Some(pid) = text.strip_suffix('\n').and_then(|t| t.parse().ok()) {
-            return Some(pid);
+/// A holder that is just ending gets a quarter of a second; that also gives a
+/// holder that is just beginning the time to write its number.
+fn try_for_a_while(file: &File) -> std::io::Result<bool> {
+    for _ in 0..25 {
+        match file.try_lock() {
+            Ok(()) => return Ok(true),
+            Err(TryLockError::WouldBlock) => std::thread::sleep(Duration::from_millis(10)),
+            Err(TryLockError::Error(e)) => return Err(e),
         }
-        std::thread::sleep(Duration::from_millis(10));
     }
-    None
+    Ok(false)
+}
+
+fn read_pid(file: &mut File) -> Option<u32> {
+    let mut text = [0_u8; 16];
+    let read = file.seek(SeekFrom::Start(0)).and_then(|_| file.read(&mut text)).unwrap_or(0);
+    std::str::from_utf8(&text[..read]).ok()?.strip_suffix('\n')?.parse().ok()
 }

@@ -137,6 +137,7 @@ impl Reader {
         if !path.exists() {
             return Err(LedgerError::Missing { path });
         }
+        schema::check_is_file(&path)?;
         let conn = schema::connect(&path, OpenFlags::SQLITE_OPEN_READ_ONLY)?;
         match schema::check_made_by_us(&conn, &path)? {
             0 => Err(LedgerError::Missing { path }),

@@ -153,6 +153,7 @@ pub(crate) fn file_at(path: &Path) -> PathBuf {
 /// The file is never opened around SQLite: closing it again would drop the
 /// locks that this process's readers have on it.
 pub(crate) fn inspect(path: &Path) -> Result<(), LedgerError> {
+    check_is_file(path)?;
     let length = |path: &Path| std::fs::metadata(path).map_or(0, |m| m.len());
     // A journal is left when the very first write was cut short; only a
     // connection that may write can undo that, and opening will.
@@ -165,6 +166,15 @@ pub(crate) fn inspect(path: &Path) -> Result<(), LedgerError> {
         check_made_by_us(&connect(path, OpenFlags::SQLITE_OPEN_READ_ONLY)?, path)?;
     }
     Ok(())
+}
+
+/// A folder, a pipe or a device in the ledger's place would otherwise look
+/// like a failing disk, or be waited for.
+pub(crate) fn check_is_file(path: &Path) -> Result<(), LedgerError> {
+    match std::fs::metadata(path) {
+        Ok(found) if !found.is_file() => Err(not_a_ledger(path, "it is not a file")),
+        _ => Ok(()),
+    }
 }
 
 /// `file:` with everything but plain characters escaped (RFC 3986).
@@ -321,6 +331,20 @@ mod tests {
             .expect("row");
         assert_eq!((id, rows), (BIRTH.id.to_string(), 1));
         assert!(matches!(check_made_by_us(&conn, Path::new("x")), Err(LedgerError::Newer { found: 2, known: 1, .. })));
+    }
+
+    /// What a commit's durability rests on.
+    #[test]
+    fn the_writer_flushes_every_commit() {
+        let folder = tempfile::tempdir().expect("a folder");
+        let path = folder.path().join("x");
+        let flags = OpenFlags::SQLITE_OPEN_READ_WRITE | OpenFlags::SQLITE_OPEN_CREATE;
+        let conn = connect(&path, flags).expect("opens");
+        configure_writer(&conn, &path, None).expect("is set up");
+        let number = |name: &str| conn.pragma_query_value(None, name, |r| r.get::<_, i64>(0)).expect("a number");
+        assert_eq!((number("synchronous"), number("foreign_keys"), number("recursive_triggers")), (2, 1, 1));
+        let mode: String = conn.pragma_query_value(None, "journal_mode", |r| r.get(0)).expect("a mode");
+        assert_eq!(mode, "wal");
     }
 
     /// A misspelt column must be an error, not a text.
