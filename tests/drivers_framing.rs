@@ -68,7 +68,7 @@ fn lively() -> impl Strategy<Value = Vec<u8>> {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig::with_cases(300))]
+    #![proptest_config(ProptestConfig::with_cases(150))]
 
     #[test]
     fn any_split_gives_the_same_frames(bytes in lively(), cuts in prop::collection::vec(any::<usize>(), 0..40), quiet: bool) {

@@ -4,6 +4,7 @@
 //! The tests run one after the other, as some of them measure time and load.
 
 use rustix::fs::{FlockOperation, Mode, OFlags};
+use rustix::io::Errno;
 use rustix::pty::OpenptFlags;
 use rustix::termios::{InputModes, LocalModes, OptionalActions};
 use rustix::time::ClockId;
@@ -46,27 +47,30 @@ impl Pty {
         let mut line = rustix::termios::tcgetattr(&slave).expect("a line");
         line.make_raw();
         rustix::termios::tcsetattr(&slave, OptionalActions::Now, &line).expect("raw");
+        let flags = rustix::fs::fcntl_getfl(&master).expect("flags");
+        rustix::fs::fcntl_setfl(&master, flags | OFlags::NONBLOCK).expect("flags");
         Self { master, slave, path }
     }
 
     fn say(&self, text: &str) {
-        let mut rest = text.as_bytes();
+        let (mut rest, began) = (text.as_bytes(), Instant::now());
         while !rest.is_empty() {
-            let n = rustix::io::write(&self.master, rest).expect("written");
-            rest = &rest[n..];
+            match rustix::io::write(&self.master, rest) {
+                Ok(n) => rest = &rest[n..],
+                Err(Errno::AGAIN) => std::thread::sleep(Duration::from_millis(1)),
+                Err(e) => panic!("not written: {e}"),
+            }
+            assert!(began.elapsed() < LONG, "nobody reads the port");
         }
     }
 
     /// What was written to the instrument so far.
     fn asked(&self) -> Vec<u8> {
-        let flags = rustix::fs::fcntl_getfl(&self.master).expect("flags");
-        rustix::fs::fcntl_setfl(&self.master, flags | OFlags::NONBLOCK).expect("flags");
         let mut all = Vec::new();
         let mut some = [0u8; 4096];
         while let Ok(n) = rustix::io::read(&self.master, &mut some) {
             all.extend_from_slice(&some[..n]);
         }
-        rustix::fs::fcntl_setfl(&self.master, flags).expect("flags");
         all
     }
 
@@ -259,12 +263,12 @@ fn a_line_that_began_before_the_opening_is_no_mass() {
     service.stop(vec![port]);
 }
 
-/// Descriptors of this process that lead to a terminal that is gone or to `path`.
+/// Descriptors of this process that lead to `path`, whether it is still there or not.
 fn descriptors(path: &Path) -> usize {
+    let (there, gone) = (path.to_string_lossy().into_owned(), format!("{} (deleted)", path.display()));
     let files = std::fs::read_dir("/proc/self/fd").expect("descriptors").flatten();
-    files
-        .filter(|f| std::fs::read_link(f.path()).is_ok_and(|to| to.to_string_lossy().starts_with(&*path.to_string_lossy())))
-        .count()
+    let targets = files.filter_map(|f| std::fs::read_link(f.path()).ok());
+    targets.filter(|to| *to == Path::new(&there) || *to == Path::new(&gone)).count()
 }
 
 #[test]
@@ -283,6 +287,7 @@ fn unplugged_in_mid_line_and_plugged_in_again_under_its_name() {
     std::thread::sleep(Duration::from_millis(50));
 
     let path = first.path.clone();
+    assert_eq!(descriptors(&path), 2, "control: the test and the port have it open");
     std::fs::remove_file(&link).expect("unlinked");
     drop(first);
     assert!(service.sink.until_state(1, &PortState::Lost) < Duration::from_secs(1));
@@ -484,7 +489,8 @@ fn a_port_belongs_to_one_program() {
 fn another_program_at_the_port_is_named() {
     let _alone = alone();
     let (service, pty) = (Service::new(), Pty::new());
-    let mut holder = std::process::Command::new("flock").arg(&pty.path).args(["sleep", "30"]).spawn().expect("the holder");
+    let mut holder =
+        std::process::Command::new("flock").arg("--no-fork").arg(&pty.path).args(["sleep", "30"]).spawn().expect("the holder");
     let began = Instant::now();
     // Until the other program has its lock, this one would get it.
     while rustix::fs::flock(&pty.slave, FlockOperation::NonBlockingLockExclusive).is_ok() {
@@ -495,29 +501,15 @@ fn another_program_at_the_port_is_named() {
     let port = service.port(1, &pty.path, &signed_steady());
     let id = holder.id();
     let named = |t: &Took| {
-        let says = |w: &str| w.contains(&format!("'flock' (process {id})")) && w.contains("give this instrument another port");
+        let says = |w: &str| w.contains(&format!("'sleep' (process {id})")) && w.contains("give this instrument another port");
         t.states.iter().any(|s| matches!(&s.1, PortState::Refused(w) if says(w)))
     };
     assert!(service.sink.until("the holder's name", named) < Duration::from_secs(1));
+    // The control: once that program has ended the port is opened.
     holder.kill().expect("killed");
     holder.wait().expect("ended");
-    // `sleep` inherited the lock and lives on: end it too.
-    end_holders(&pty.path);
     assert!(service.sink.until_state(1, &PortState::Opened) < Duration::from_secs(2));
     service.stop(vec![port]);
-}
-
-/// Ends the child of the killed `flock`, which keeps the descriptor and with it the lock.
-fn end_holders(path: &Path) {
-    for entry in std::fs::read_dir("/proc").expect("processes").flatten() {
-        let Some(pid) = entry.file_name().to_str().and_then(|n| n.parse::<u32>().ok()) else { continue };
-        let Ok(files) = std::fs::read_dir(entry.path().join("fd")) else { continue };
-        let holds = files.flatten().any(|f| std::fs::read_link(f.path()).is_ok_and(|to| to == path));
-        if holds && pid != std::process::id() {
-            let pid = rustix::process::Pid::from_raw(pid as i32).expect("a process");
-            rustix::process::kill_process(pid, rustix::process::Signal::TERM).expect("ended");
-        }
-    }
 }
 
 #[test]

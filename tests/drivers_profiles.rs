@@ -108,7 +108,7 @@ fn signed_steady() {
             ("+   23.457 g  S\r\n", "no_pattern"),
             ("+   2.4571 g  S\r\n", "no_pattern"),
             ("+   23.4571 g  X\r\n", "no_pattern"),
-            ("+   23\04571 g  S\r\n", "no_pattern"),
+            ("+   23\x004571 g  S\r\n", "no_pattern"),
             ("x+   23.4571 g  S\r\n", "no_pattern"),
             ("+   23.4571 lb  S\r\n", "no_pattern"),
             ("+  999999.9 g  S\r\n", "mass"),

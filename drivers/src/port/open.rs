@@ -154,12 +154,17 @@ fn lock_holder(locks: &str, place: &str) -> Option<u32> {
     })
 }
 
+/// A process that has the device open. Its path alone would not do: in a
+/// container the same path is another device.
 fn open_by(device: &Path) -> Option<u32> {
-    let own = std::process::id();
+    use std::os::unix::fs::MetadataExt;
+    let place = |path: &Path| std::fs::metadata(path).map(|m| (m.dev(), m.ino())).ok();
+    let (own, wanted) = (std::process::id(), place(device)?);
     let pids = std::fs::read_dir("/proc").ok()?.flatten().filter_map(|e| e.file_name().to_str()?.parse::<u32>().ok());
     pids.filter(|pid| *pid != own).take(10_000).find(|pid| {
         let Ok(files) = std::fs::read_dir(format!("/proc/{pid}/fd")) else { return false };
-        files.flatten().take(10_000).any(|f| std::fs::read_link(f.path()).is_ok_and(|to| to == device))
+        let mut files = files.flatten().take(10_000).map(|f| f.path());
+        files.any(|f| std::fs::read_link(&f).is_ok_and(|to| to == device) && place(&f) == Some(wanted))
     })
 }
 
@@ -182,6 +187,19 @@ mod tests {
         assert_eq!(open(&settings("/nowhere/at/all")).err(), Some(OpenFault::Missing));
         let halted = PortSettings { baud: 0, ..settings("/dev/null") };
         assert!(matches!(open(&halted), Err(OpenFault::Refused(says)) if says.contains("baud")));
+    }
+
+    #[test]
+    fn a_process_that_has_a_file_open_is_found() {
+        let file = tempfile::NamedTempFile::new().expect("a file");
+        let path = file.path().canonicalize().expect("a path");
+        assert_eq!(open_by(&path), None, "this process itself does not count");
+        let mut child = std::process::Command::new("sleep");
+        let mut child = child.arg("30").stdin(file.reopen().expect("opened")).spawn().expect("a process");
+        let found = open_by(&path);
+        child.kill().expect("killed");
+        child.wait().expect("ended");
+        assert_eq!(found, Some(child.id()));
     }
 
     #[test]
