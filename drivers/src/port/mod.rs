@@ -1,5 +1,11 @@
 //! Ports: open, read, lose, reopen.
 
+mod ask;
+mod hold;
+pub mod list;
+mod open;
+pub mod serial;
+
 use serde::{Deserialize, Serialize};
 
 /// Character frame of a serial line, such as `8N1` or `7E1`.

@@ -127,7 +127,9 @@ fn largest(text: &ProfileText) -> Result<Mass, ProfileFault> {
 fn check_digits(text: &ProfileText) -> Result<(), ProfileFault> {
     match (&text.check, text.frame.tail) {
         (Some(_), 2) => Ok(()),
-        (Some(_), n) => fault("frame.tail", format!("two check digits come after the terminator, but tail is {n}; write tail = 2")),
+        (Some(_), n) => {
+            fault("frame.tail", format!("two check digits come after the terminator, but tail is {n}; write tail = 2"))
+        }
         (None, _) => Ok(()),
     }
 }
@@ -163,10 +165,16 @@ fn compile_line(text: &ProfileText, line: &LineText, key: &str, unit: Option<Mas
     let groups = groups(&regex, key)?;
     let means = line_means(text.kind, line, &groups, key)?;
     if means == LineMeans::Mass && groups.unit.is_none() && unit.is_none() {
-        return fault(format!("{key}.pattern"), "the mass has no unit; add a group (?<unit>g|kg), or unit = \"g\" to the profile");
+        return fault(
+            format!("{key}.pattern"),
+            "the mass has no unit; add a group (?<unit>g|kg), or unit = \"g\" to the profile",
+        );
     }
     if groups.basis.is_some() && text.basis.is_empty() {
-        return fault("basis", "the group 'basis' needs to know what its texts mean; write for instance basis = { G = \"gross\", N = \"net\" }");
+        return fault(
+            "basis",
+            "the group 'basis' needs to know what its texts mean; write for instance basis = { G = \"gross\", N = \"net\" }",
+        );
     }
     if line.means_basis.is_some() && (means != LineMeans::Mass || groups.basis.is_some()) {
         return fault(format!("{key}.means_basis"), "belongs to a line with a mass and without a group 'basis'");
@@ -217,7 +225,10 @@ fn line_means(kind: Kind, line: &LineText, groups: &Groups, key: &str) -> Result
     let counts = groups.total.is_some() || groups.drops.is_some() || groups.end.is_some();
     let reads = groups.code.is_some();
     if u8::from(weighs) + u8::from(counts) + u8::from(reads) > 1 {
-        return fault(format!("{key}.pattern"), "one line cannot be a mass, a count and a code at once; write a [[line]] for each");
+        return fault(
+            format!("{key}.pattern"),
+            "one line cannot be a mass, a count and a code at once; write a [[line]] for each",
+        );
     }
     let of_mass = [groups.unit, groups.steady, groups.moving, groups.basis].iter().any(Option::is_some);
     if of_mass && !weighs {
@@ -254,9 +265,10 @@ fn plain_means(kind: Kind, means: Means, key: &str) -> Result<LineMeans, Profile
         Means::End => (LineMeans::End, Some(Kind::Counter)),
     };
     match of {
-        Some(of) if of != kind => {
-            fault(format!("{key}.means"), format!("only a {} says so; for a line that betrays swapped cables write \"other-kind\"", of.word()))
-        }
+        Some(of) if of != kind => fault(
+            format!("{key}.means"),
+            format!("only a {} says so; for a line that betrays swapped cables write \"other-kind\"", of.word()),
+        ),
         _ => Ok(means),
     }
 }
