@@ -71,11 +71,40 @@ fn one_specimen_is_played_in_the_order_of_the_bench() {
     assert_eq!(
         words(&steps),
         [
-            "sign_in", "open_specimen", "C11 tare", "C12 tare", "C14 tare", "C15 tare", "intend", "31 drops", "C11 wet",
-            "set_aside_trial", "24 drops", "25 drops", "C12 wet", "intend", "C14 wet", "intend", "C15 wet", "intend_nothing",
-            "not_obtainable", "into_oven", "the oven is leapt over", "sign_in", "out_of_oven", "containers cool with the lid on",
-            "C12 dry", "C14 dry", "C15 dry", "set_aside_trial", "into_oven", "the oven is leapt over", "out_of_oven",
-            "containers cool with the lid on", "C14 dry", "the next lot is fetched",
+            "sign_in",
+            "open_specimen",
+            "C11 tare",
+            "C12 tare",
+            "C14 tare",
+            "C15 tare",
+            "intend",
+            "31 drops",
+            "C11 wet",
+            "set_aside_trial",
+            "24 drops",
+            "25 drops",
+            "C12 wet",
+            "intend",
+            "C14 wet",
+            "intend",
+            "C15 wet",
+            "intend_nothing",
+            "not_obtainable",
+            "into_oven",
+            "the oven is leapt over",
+            "sign_in",
+            "out_of_oven",
+            "containers cool with the lid on",
+            "C12 dry",
+            "C14 dry",
+            "C15 dry",
+            "set_aside_trial",
+            "into_oven",
+            "the oven is leapt over",
+            "out_of_oven",
+            "containers cool with the lid on",
+            "C14 dry",
+            "the next lot is fetched",
         ]
     );
     let asks: Vec<String> =
@@ -120,7 +149,9 @@ fn benches_work_side_by_side_and_a_named_bench_is_kept() {
 #[test]
 fn what_cannot_be_played_is_refused_with_the_place_and_a_remedy() {
     type Break = fn(&mut Day);
-    let cases: [(Break, &str); 17] = [
+    let cases: [(Break, &str); 20] = [
+        (|d| d.start_utc_us = i64::MAX, "give a time from 1970"),
+        (|d| d.start_utc_us = -1, "give a time from 1970"),
         (|d| d.benches.clear(), "give at least one"),
         (|d| d.benches[0].name = "no rth".into(), "bench 'no rth' cannot be a name"),
         (|d| d.benches[1].name = "north".into(), "bench 'north' occurs twice"),
@@ -133,6 +164,7 @@ fn what_cannot_be_played_is_refused_with_the_place_and_a_remedy() {
             },
             "describe it alike",
         ),
+        (|d| d.benches[0].balance.settings.interval_us = u64::MAX, "give 10000 to 5000000"),
         (|d| d.benches[0].balance.settings.dialect = BalanceDialect::AskedLong, "another dialect"),
         (|d| d.specimens[0].bench = Some("attic".into()), "name one of: north, south"),
         (|d| d.specimens[1].id = "S-1".into(), "specimen 'S-1' occurs twice"),
@@ -173,9 +205,8 @@ fn any_day() -> impl Strategy<Value = Day> {
     let trial = (any::<prop::sample::Index>(), 1usize..=3, 0u8..6, 1i64..90_000, prop::collection::vec(1u32..60, 1..=3));
     let one = (prop::collection::vec((0u8..3, trial), 1..8), 0u8..4, any::<bool>());
     (prop::collection::vec(one, 0..24), 1usize..=3, any::<bool>(), 6usize..40).prop_map(|(specimens, benches, shared, pool)| {
-        let benches: Vec<Bench> = (0..benches)
-            .map(|b| bench(&format!("b{b}"), b as u32, if shared { "pan" } else { ["p0", "p1", "p2"][b] }))
-            .collect();
+        let benches: Vec<Bench> =
+            (0..benches).map(|b| bench(&format!("b{b}"), b as u32, if shared { "pan" } else { ["p0", "p1", "p2"][b] })).collect();
         let specimens = specimens
             .into_iter()
             .enumerate()

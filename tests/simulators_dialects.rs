@@ -237,7 +237,14 @@ fn the_tare_key_overload_drift_and_a_missing_pan_show() {
     assert_eq!(after(&|b| b.tare_key()).1, "G       0.00 g\r\n");
     assert_eq!(after(&|b| b.put(700_000_000)).1, "        OVER\r\n");
     assert_eq!(after(&|b| b.put(-100_000_000)).1, "       UNDER\r\n");
-    assert_eq!(after(&|b| { b.put(30_000_000); b.drift(10_000) }).1, "G      30.08 g\r\n");
+    assert_eq!(
+        after(&|b| {
+            b.put(30_000_000);
+            b.drift(10_000)
+        })
+        .1,
+        "G      30.08 g\r\n"
+    );
     assert_eq!(after(&|b| b.lift()).1, "G       0.00 g\r\n", "drift ends with the load");
     assert_eq!(after(&|b| b.not_ready(3)), ("        WAIT\r\n".into(), "G       0.00 g\r\n".into()));
 }

@@ -12,6 +12,8 @@ pub const STEADY_LINES: usize = 16;
 pub const EMPTY_LINES: usize = 3;
 /// After loading: what is left of the step at each line, per mille. A damped swing of the pan, then rest.
 const SWING: [i64; 5] = [620, 240, -70, 25, -9];
+/// All lines of a placement on a streaming balance.
+pub const PLACEMENT_LINES: usize = ZERO_LINES + SWING.len() + STEADY_LINES + SWING.len() + EMPTY_LINES;
 /// A swinging pan is shown at least this many digits away from rest, so that no swinging line agrees with a resting one.
 const SWING_DIGITS: i64 = 20;
 /// Below this part of its capacity under zero a balance shows nothing any more.
@@ -249,8 +251,7 @@ pub fn placement_lasts_us(settings: &Settings) -> i64 {
     if settings.dialect.on_key() {
         return KEY_US as i64;
     }
-    let lines = ZERO_LINES + SWING.len() + STEADY_LINES + SWING.len() + EMPTY_LINES;
-    (lines as u64).saturating_mul(settings.interval_us) as i64
+    (PLACEMENT_LINES as u64).saturating_mul(settings.interval_us).min(i64::MAX as u64) as i64
 }
 
 /// To the nearest step, half away from zero.

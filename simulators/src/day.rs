@@ -163,6 +163,9 @@ impl Specimen {
 /// Why a day cannot be played. Each says where, and what to do.
 #[derive(Clone, Debug, PartialEq, thiserror::Error)]
 pub enum DayFault {
+    /// A start outside the years that dates can be written for.
+    #[error("the day begins at {0} µs UTC; give a time from 1970 to 9000")]
+    Start(i64),
     /// Nothing to work at.
     #[error("the day has no bench; give at least one")]
     NoBench,
@@ -185,6 +188,14 @@ pub enum DayFault {
     /// A shared balance described in two ways.
     #[error("balance '{0}' is shared but described differently at two benches; describe it alike")]
     SharedUnlike(String),
+    /// A balance slower or faster than any.
+    #[error("balance '{name}' would send a line every {interval_us} µs; give 10000 to 5000000")]
+    Interval {
+        /// The balance.
+        name: String,
+        /// Its interval.
+        interval_us: u64,
+    },
     /// A balance that only answers.
     #[error("balance '{0}' speaks only when asked; a day is played ahead of the questions, so give it another dialect")]
     AskedBalance(String),
@@ -199,7 +210,9 @@ pub enum DayFault {
         known: String,
     },
     /// A container twice in one specimen.
-    #[error("specimen '{specimen}' uses container '{container}' twice; it cannot be emptied in between, so take another container")]
+    #[error(
+        "specimen '{specimen}' uses container '{container}' twice; it cannot be emptied in between, so take another container"
+    )]
     ContainerTwice {
         /// The specimen.
         specimen: String,
@@ -231,6 +244,10 @@ pub enum DayFault {
     TooMany(usize),
 }
 
+/// Time between the lines of a balance, µs.
+const INTERVAL_US: std::ops::RangeInclusive<u64> = 10_000..=5_000_000;
+/// 1970 up to the year 9000, µs UTC: leaves room for all the mornings after.
+const START_US: std::ops::Range<i64> = 0..221_845_392_000_000_000;
 /// Most specimens in a day.
 pub const SPECIMENS_MAX: usize = 5_000;
 
@@ -247,6 +264,9 @@ impl Day {
     pub fn check(&self) -> Result<(), DayFault> {
         if self.specimens.len() > SPECIMENS_MAX {
             return Err(DayFault::TooMany(self.specimens.len()));
+        }
+        if !START_US.contains(&self.start_utc_us) {
+            return Err(DayFault::Start(self.start_utc_us));
         }
         self.check_benches()?;
         let mut seen = BTreeSet::new();
@@ -289,6 +309,10 @@ impl Day {
             if bench.balance.settings.dialect.asked() {
                 return Err(DayFault::AskedBalance(bench.balance.name.clone()));
             }
+            let interval_us = bench.balance.settings.interval_us;
+            if !INTERVAL_US.contains(&interval_us) {
+                return Err(DayFault::Interval { name: bench.balance.name.clone(), interval_us });
+            }
             if balances.insert(&bench.balance.name, &bench.balance).is_some_and(|other| *other != bench.balance) {
                 return Err(DayFault::SharedUnlike(bench.balance.name.clone()));
             }
@@ -304,20 +328,13 @@ impl Day {
             && !self.benches.iter().any(|b| b.name == *bench)
         {
             let known: Vec<&str> = self.benches.iter().map(|b| b.name.as_str()).collect();
-            return Err(DayFault::NoSuchBench {
-                specimen: specimen.id.clone(),
-                bench: bench.clone(),
-                known: known.join(", "),
-            });
+            return Err(DayFault::NoSuchBench { specimen: specimen.id.clone(), bench: bench.clone(), known: known.join(", ") });
         }
         let mut containers = BTreeSet::new();
         for (_, _, weighed) in specimen.weighed() {
             name("container", &weighed.container)?;
             if !containers.insert(&weighed.container) {
-                return Err(DayFault::ContainerTwice {
-                    specimen: specimen.id.clone(),
-                    container: weighed.container.clone(),
-                });
+                return Err(DayFault::ContainerTwice { specimen: specimen.id.clone(), container: weighed.container.clone() });
             }
             self.check_masses(specimen, weighed)?;
         }
@@ -334,8 +351,7 @@ impl Day {
     }
 
     fn check_masses(&self, specimen: &Specimen, weighed: &Weighed) -> Result<(), DayFault> {
-        let fault =
-            |why| DayFault::Mass { specimen: specimen.id.clone(), container: weighed.container.clone(), why };
+        let fault = |why| DayFault::Mass { specimen: specimen.id.clone(), container: weighed.container.clone(), why };
         // The coarsest balance of any bench the specimen may be sent to decides.
         let benches = self.benches.iter().filter(|b| specimen.bench.as_ref().is_none_or(|want| *want == b.name));
         for bench in benches {

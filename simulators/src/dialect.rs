@@ -25,8 +25,7 @@ use BalanceDialect::{AskedLong, CommaStream, FramedXor, PlainStream, PrintLine, 
 
 impl BalanceDialect {
     /// All of them.
-    pub const ALL: [BalanceDialect; 7] =
-        [SignedSteady, PlainStream, SlipGrossNet, CommaStream, FramedXor, PrintLine, AskedLong];
+    pub const ALL: [BalanceDialect; 7] = [SignedSteady, PlainStream, SlipGrossNet, CommaStream, FramedXor, PrintLine, AskedLong];
 
     /// The name, as the instrument profile has it.
     pub fn name(self) -> &'static str {

@@ -4,12 +4,12 @@
 //! has heard them. A hiccup of the machine therefore changes no result. After each weighing the operator looks at what
 //! the program made of it, as a technician looks at the screen, and says the role where the program asks for it.
 
-use crate::balance::{Balance, Noise};
+use crate::Timed;
+use crate::balance::{Balance, Noise, PLACEMENT_LINES};
 use crate::day::{Day, DayFault};
 use crate::pty::{Pty, PtyError};
 use crate::rng::Rng;
 use crate::schedule::{Role, SCAN_TO_PAN_US, Step, What, schedule};
-use crate::Timed;
 use serde_json::{Value, json};
 use std::collections::{BTreeMap, BinaryHeap};
 use std::path::{Path, PathBuf};
@@ -62,11 +62,21 @@ pub struct Play {
     pub noise: Noise,
     /// Waits of more than this are leapt over when the day is paced, µs of virtual time.
     pub leap_from_us: i64,
+    /// A streaming balance that nobody uses sends a line of its empty pan this often, µs of virtual time, so that it does
+    /// not seem to have fallen silent; `None`: it sends nothing between weighings. Not while time leaps.
+    pub idle_line_us: Option<i64>,
 }
 
 impl Default for Play {
     fn default() -> Self {
-        Self { speed: None, lines_together: 4, seed: 1, noise: Noise::NONE, leap_from_us: 20 * 60 * 1_000_000 }
+        Self {
+            speed: None,
+            lines_together: 4,
+            seed: 1,
+            noise: Noise::NONE,
+            leap_from_us: 20 * 60 * 1_000_000,
+            idle_line_us: None,
+        }
     }
 }
 
@@ -200,7 +210,10 @@ struct Event {
 
 #[derive(Clone, Debug, PartialEq, Eq, PartialOrd, Ord)]
 enum Due {
-    Write { instrument: String, bytes: Vec<u8> },
+    Write {
+        instrument: String,
+        bytes: Vec<u8>,
+    },
     /// Look at what the program made of the weighing.
     Look,
 }
@@ -215,6 +228,10 @@ struct Operator<'a> {
     rng: Rng,
     due: BinaryHeap<std::cmp::Reverse<Event>>,
     pace: Pace,
+    /// How often a balance that nobody uses speaks.
+    idle_line_us: Option<i64>,
+    /// When each streaming balance last said something.
+    spoke: BTreeMap<&'a str, i64>,
     /// Number of the latest weighing at each bench.
     latest: BTreeMap<usize, u64>,
     /// The tare of each container as last weighed.
@@ -239,8 +256,13 @@ impl<'a> Operator<'a> {
         }
         let pace = Pace::new(settings, day.start_utc_us);
         let summary = Summary { end_utc_us: day.start_utc_us, ..Summary::default() };
-        let (latest, tares) = (BTreeMap::new(), BTreeMap::new());
-        Self { day, steps, instruments, world, settings, balances, rng, due: BinaryHeap::new(), pace, latest, tares, summary }
+        let slowest = day.benches.iter().map(|b| b.balance.settings.interval_us).max().unwrap_or(0);
+        let placed_us = slowest.saturating_mul(settings.lines_together.min(PLACEMENT_LINES) as u64) as i64;
+        let idle_line_us = settings.idle_line_us.map(|us| us.max(IDLE_LINE_MIN_US).max(placed_us.saturating_mul(2)));
+        let streaming = |(_, b): &(&&'a str, &Balance)| !b.settings().dialect.on_key();
+        let spoke = balances.iter().filter(streaming).map(|(name, _)| (*name, day.start_utc_us)).collect();
+        let (due, latest, tares) = (BinaryHeap::new(), BTreeMap::new(), BTreeMap::new());
+        Self { day, steps, instruments, world, settings, balances, rng, due, pace, idle_line_us, spoke, latest, tares, summary }
     }
 
     fn run(&mut self) -> Result<(), PlayError> {
@@ -252,10 +274,12 @@ impl<'a> Operator<'a> {
                 // What is already under way goes first at the same time.
                 (Some(due), begins) if begins.is_none_or(|b| due <= b) => {
                     if let Some(std::cmp::Reverse(event)) = self.due.pop() {
+                        self.idle_until(event.at_utc_us, event.step)?;
                         self.event(event)?;
                     }
                 }
-                (_, Some(_)) => {
+                (_, Some(begins)) => {
+                    self.idle_until(begins, next_step)?;
                     self.begin(next_step)?;
                     next_step += 1;
                 }
@@ -276,6 +300,24 @@ impl<'a> Operator<'a> {
         true
     }
 
+    /// Lets balances that nobody uses show their empty pans until something else is due.
+    fn idle_until(&mut self, utc_us: i64, step: usize) -> Result<(), PlayError> {
+        let Some(every) = self.idle_line_us else {
+            return Ok(());
+        };
+        while let Some((&name, &spoke)) = self.spoke.iter().min_by_key(|(_, spoke)| **spoke) {
+            if spoke + every >= utc_us || !self.go_to(spoke + every) {
+                break;
+            }
+            // A placement speaks more often than this: an idle line never comes between its lines.
+            if let Some(line) = self.balances.get_mut(name).map(Balance::next_line) {
+                self.write(step, name, &line)?;
+            }
+            self.spoke.insert(name, spoke + every);
+        }
+        Ok(())
+    }
+
     fn begin(&mut self, no: usize) -> Result<(), PlayError> {
         let step = &self.steps[no];
         if !self.go_to(step.at_utc_us) {
@@ -294,7 +336,9 @@ impl<'a> Operator<'a> {
         match &step.what {
             What::Leap => {
                 // The time itself passes when the next event is gone to.
-                self.pace.leap_to(step.at_utc_us + step.takes_us);
+                let after = step.at_utc_us + step.takes_us;
+                self.pace.leap_to(after);
+                self.spoke.values_mut().for_each(|spoke| *spoke = after);
             }
             What::Ask(ask) => {
                 self.ask(no, ask)?;
@@ -315,6 +359,7 @@ impl<'a> Operator<'a> {
         let step = &self.steps[no];
         let bench = &self.day.benches[step.bench];
         self.enqueue(no, step.at_utc_us, &bench.scanner, vec![(0, crate::scanner_bytes(container))], 0);
+        // From here the placement speaks for the balance; idle lines may show the empty pan until it is loaded.
         let timed = match self.balances.get_mut(bench.balance.name.as_str()) {
             Some(balance) => together(balance.placement(mass_ug), self.settings.lines_together),
             None => Vec::new(),
@@ -345,6 +390,9 @@ impl<'a> Operator<'a> {
     }
 
     fn write(&mut self, step: usize, instrument: &str, bytes: &[u8]) -> Result<(), PlayError> {
+        if let Some(spoke) = self.spoke.get_mut(instrument) {
+            *spoke = self.summary.end_utc_us;
+        }
         let Some(pty) = self.instruments.ports.get_mut(instrument) else {
             return Err(PlayError::NoPort(instrument.to_string()));
         };
@@ -476,8 +524,12 @@ struct Pace {
     now_us: i64,
 }
 
+/// Balances that are not used speak no more often than this, µs.
+const IDLE_LINE_MIN_US: i64 = 3_000_000;
 /// Longest sleep before the world is asked whether to stop.
 const NAP: Duration = Duration::from_millis(50);
+/// A wait that would be longer than this (some thirty years) is cut short to what the clock can hold, seconds.
+const LONGEST_WAIT_S: f64 = 1e9;
 
 impl Pace {
     fn new(settings: &Play, start_us: i64) -> Self {
@@ -496,7 +548,7 @@ impl Pace {
             if utc_us - self.now_us > self.leap_from_us {
                 self.leap_to(utc_us);
             }
-            let seconds = (utc_us - self.virtual_us).max(0) as f64 / 1e6 / speed;
+            let seconds = ((utc_us - self.virtual_us).max(0) as f64 / 1e6 / speed).min(LONGEST_WAIT_S);
             let until = Duration::try_from_secs_f64(seconds).ok().and_then(|d| self.real.checked_add(d));
             while let Some(left) = until.and_then(|u| u.checked_duration_since(Instant::now())).filter(|d| !d.is_zero()) {
                 if world.stop() {

@@ -208,7 +208,8 @@ impl<'a> Plan<'a> {
                 Limit::Plastic => "plastic",
             };
             let who = self.bench(bench).operator.as_str();
-            let ask = json!({"ask": "not_obtainable", "specimen": specimen.id, "limit": limit, "because": not.because, "who": who});
+            let ask =
+                json!({"ask": "not_obtainable", "specimen": specimen.id, "limit": limit, "because": not.because, "who": who});
             self.ask(bench, Some(specimen), ask, format!("states that the {limit} limit cannot be obtained"));
         }
         let containers: Vec<&str> = drying(specimen, 0).collect();

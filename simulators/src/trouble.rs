@@ -1,8 +1,8 @@
 //! Trouble on the line: what bad cables, buffers and hands do to an instrument's bytes.
 
+use crate::Timed;
 use crate::pty::{Pty, PtyError};
 use crate::rng::Rng;
-use crate::Timed;
 
 /// How much of which trouble. Each is a probability for every piece of bytes, 0 to 1.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
