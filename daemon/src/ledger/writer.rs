@@ -365,7 +365,8 @@ struct Storing<'t> {
     bytes: u64,
 }
 
-const INSERT_INPUT: &str = "INSERT INTO input (no, at_utc_us, mono_us, boot, kind, instrument, bytes, reason)
+/// `OR FAIL` for the reason given at the trigger.
+const INSERT_INPUT: &str = "INSERT OR FAIL INTO input (no, at_utc_us, mono_us, boot, kind, instrument, bytes, reason)
      VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7, ?8)";
 const INSERT_FACT: &str = "INSERT INTO fact
      (seq, at_utc_us, mono_us, boot, kind, who, through, inputs_to, body, inputs_digest, hash)
