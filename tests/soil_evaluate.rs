@@ -145,6 +145,11 @@ fn an_answer_makes_no_water_content_of_impossible_masses() {
     });
     assert_eq!(limits.state, State::Provisional);
     assert_eq!(limits.liquid_limit.unwrap().points, 3);
+    let uncounted = after(|s| {
+        s.trials.push(with_masses(liquid(4, 0), ["20.00", "34.10", "30.00"]));
+        s.answers.push(answer("no_drops", "liquid 4"));
+    });
+    assert_eq!(uncounted.state, State::Provisional);
     let aside = after(|s| {
         s.trials.push(Trial { set_aside: Some("spilt".into()), ..with_masses(liquid(4, 28), ["20.00", "29.99", "30.00"]) });
     });

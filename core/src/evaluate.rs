@@ -82,8 +82,11 @@ fn state(sheet: &Sheet, trials: &[Determined], checks: &[CheckRow]) -> State {
         Severity::Hold => row.answered.is_none(),
         Severity::Note => checks::keeps_provisional(&row.check),
     };
-    // An answer explains impossible masses; it does not make a water content of them.
-    let unusable = |t: &Determined| t.active && matches!(t.water, Water::Wrong(_) | Water::NotAWater(_));
+    // An answer explains impossible masses or a count of nothing; it does not
+    // make a water content or a number of drops of them.
+    let unusable = |t: &Determined| {
+        (t.active && matches!(t.water, Water::Wrong(_) | Water::NotAWater(_))) || (t.counts_as(Kind::Liquid) && t.drops.is_none())
+    };
     if checks.iter().any(open) || trials.iter().any(unusable) {
         State::Provisional
     } else if sheet.reviewed {
