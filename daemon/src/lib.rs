@@ -1,5 +1,17 @@
-//! The inside of the `tarecup` program.
+//! tarecup: ties balances and a liquid-limit cup counter to moisture
+//! containers, keeps the record, publishes soil limits.
+//!
+//! This library is the inside of the `tarecup` program; its parts are public
+//! for the project's own tests, not as an interface to build on.
 #![forbid(unsafe_code)]
 
+pub mod asks;
+pub mod clock;
+pub mod command;
+pub mod desk;
+pub mod heard;
 pub mod ledger;
 pub mod publish;
+pub mod service;
+pub mod signals;
+pub mod socket;

@@ -1,2 +1,5 @@
-//! placeholder
-fn main() {}
+//! The `tarecup` program. See `tarecup help`.
+
+fn main() -> std::process::ExitCode {
+    tarecup::command::main()
+}

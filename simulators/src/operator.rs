@@ -471,6 +471,7 @@ impl<'a> Operator<'a> {
     fn agrees(&self, found: Option<&str>, meant: Role, container: &str, mass_ug: i64) -> bool {
         match (found, meant) {
             (Some(found), meant) if found == meant.word() => true,
+            (Some("further_dry"), Role::Dry) => true,
             (Some("tare_check" | "emptied"), Role::Tare) => self.tares.get(container) == Some(&mass_ug),
             _ => false,
         }

@@ -1,0 +1,230 @@
+//! `tarecup demo`: a day in a laboratory with simulated instruments on real
+//! pseudo-terminals, played in virtual time through the whole program.
+
+mod day;
+mod world;
+
+use super::{FAILED, LogForm, NOT_COMPLETE, WRONG_INPUT, start_log, tell};
+use crate::clock::VirtualClock;
+use crate::service::{Plan, Service, Tap, Told};
+use crate::signals;
+use std::io::Write;
+use std::net::SocketAddr;
+use std::path::{Path, PathBuf};
+use std::sync::{Arc, Mutex, PoisonError};
+use std::time::{Duration, Instant};
+use tarecup_config::scenario::{self, Mode, Scenario};
+use tarecup_config::{methods, station, text};
+use tarecup_core::fact::Fact;
+use tarecup_core::limits::{Limits, State};
+use tarecup_simulators::operator::{Instruments, Play, play};
+
+/// The day that is played when no scenario is named.
+const OWN_DAY: &str = include_str!("../../../../config/scenarios/day.toml");
+/// Virtual seconds per second, when nothing else is said.
+const SPEED: f64 = 240.0;
+/// How long the end waits for the broker to acknowledge everything.
+const DELIVERY: Duration = Duration::from_secs(10);
+
+/// Arguments of `demo`.
+#[derive(clap::Args)]
+pub struct DemoArgs {
+    /// Scenario file. Default: a day at the Mosswick materials laboratory.
+    #[arg(long, value_name = "FILE")]
+    scenario: Option<PathBuf>,
+    /// Virtual seconds per second. The oven is leapt over at any speed.
+    #[arg(long, value_name = "N")]
+    speed: Option<f64>,
+    /// State directory to keep. Default: one that is removed at the end.
+    #[arg(long, value_name = "DIR")]
+    state: Option<PathBuf>,
+    /// Do not pace, and end when the day is over.
+    #[arg(long)]
+    once: bool,
+    /// Print each published message as one line of JSON.
+    #[arg(long)]
+    json: bool,
+    /// Address of the bench screen (comes with a later version).
+    #[arg(long, value_name = "ADDR", hide = true)]
+    listen: Option<SocketAddr>,
+    /// Address of the built-in broker. Default: 127.0.0.1:18883, or a free one when that is taken.
+    #[arg(long, value_name = "ADDR")]
+    mqtt: Option<SocketAddr>,
+}
+
+/// Runs `demo`.
+pub fn run(args: DemoArgs, log: Option<LogForm>) -> u8 {
+    start_log(log, "warn");
+    match prepared(&args) {
+        Ok(prepared) => at_work(&args, prepared).unwrap_or_else(|says| {
+            eprintln!("{says}");
+            FAILED
+        }),
+        Err(says) => {
+            eprintln!("{says}");
+            WRONG_INPUT
+        }
+    }
+}
+
+struct Prepared {
+    scenario: Scenario,
+    day: tarecup_simulators::day::Day,
+}
+
+/// Everything that can be wrong with the input is found before anything starts.
+fn prepared(args: &DemoArgs) -> Result<Prepared, String> {
+    if args.listen.is_some() {
+        return Err(String::from("--listen: the bench screen comes with a later version; leave it out"));
+    }
+    if args.speed.is_some_and(|s| !(s.is_finite() && s > 0.0)) {
+        return Err(String::from("--speed: a number above 0 is expected, such as 240"));
+    }
+    let (name, text) = match &args.scenario {
+        Some(path) => (path.display().to_string(), text::read_file(path).map_err(|f| f.to_string())?),
+        None => (String::from("day.toml"), String::from(OWN_DAY)),
+    };
+    let methods = methods::shipped().map_err(|f| f.to_string())?;
+    let scenario = scenario::parse(&name, &text, Mode::Demo, &methods).map_err(|f| f.to_string())?;
+    let day = day::plan(&scenario);
+    day.check().map_err(|e| format!("{name}: {e}"))?;
+    Ok(Prepared { scenario, day })
+}
+
+/// A folder that is removed when the demo ends, unless a person named it.
+struct Folder {
+    path: PathBuf,
+    kept: bool,
+}
+
+impl Folder {
+    fn take(named: Option<&Path>) -> Result<Self, String> {
+        let path = match named {
+            Some(path) => path.to_path_buf(),
+            None => std::env::temp_dir().join(format!("tarecup-demo-{}", std::process::id())),
+        };
+        let path = std::path::absolute(&path).unwrap_or(path);
+        std::fs::create_dir_all(path.join("ports"))
+            .map_err(|e| format!("{}: {e}; name another folder with --state DIR", path.display()))?;
+        Ok(Self { path, kept: named.is_some() })
+    }
+}
+
+impl Drop for Folder {
+    fn drop(&mut self) {
+        if !self.kept {
+            let _ = std::fs::remove_dir_all(&self.path);
+        }
+    }
+}
+
+type Results = Arc<Mutex<Vec<Limits>>>;
+
+fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
+    let Prepared { scenario, day } = prepared;
+    let folder = Folder::take(args.state.as_deref())?;
+    let (stop, stopped) = signals::listen().map_err(|e| format!("the system gives no signals: {e}"))?;
+    let mut instruments = Instruments::open(&folder.path.join("ports"), &day).map_err(|e| e.to_string())?;
+    let clock = Arc::new(VirtualClock::new(day.start_utc_us));
+    let results: Results = Arc::default();
+    let config = day::config(&day, &instruments, args.mqtt);
+    let plan = Plan {
+        station: station::parse("(demo)", &config).map_err(|f| f.to_string())?,
+        state_dir: folder.path.clone(),
+        clock: clock.clone(),
+        time_passes: false,
+        any_broker_port: args.mqtt.is_none(),
+        tap: args.json.then(json_tap),
+        told: Some(teller(args.json, Arc::clone(&results))),
+    };
+    let service = Service::start(plan).map_err(|e| e.to_string())?;
+    greet(args, &scenario, &service);
+    let settings = Play { speed: if args.once { None } else { Some(args.speed.unwrap_or(SPEED)) }, ..Play::default() };
+    world::wait_for_ports(&service, instruments.links().count())?;
+    let began = Instant::now();
+    let mut world = world::DemoWorld::new(&service, &day, clock, stop.clone());
+    let played = play(&day, &mut instruments, &settings, &mut world);
+    let took = began.elapsed();
+    let delivered = played.is_ok() && service.wait_delivered(DELIVERY);
+    let code = match &played {
+        Err(e) if !stop.asked() => {
+            eprintln!("the day could not be played to its end: {e}");
+            FAILED
+        }
+        Err(_) => 0,
+        Ok(_) => ending(args, &scenario, &results, took, delivered, &service),
+    };
+    if !args.once && played.is_ok() && !stop.asked() {
+        if !args.json {
+            println!("\nThe broker stays up; look around. Ctrl-C ends the demo.");
+        }
+        let _ = stopped.recv();
+    }
+    service.stop();
+    Ok(code)
+}
+
+/// Each published message as one line.
+fn json_tap() -> Tap {
+    Arc::new(|topic, payload, retain, qos| {
+        let payload = payload.map_or("null", |p| std::str::from_utf8(p).unwrap_or("null"));
+        let topic = serde_json::Value::from(topic);
+        let line = format!("{{\"topic\":{topic},\"payload\":{payload},\"retain\":{retain},\"qos\":{qos}}}\n");
+        // A reader that went away ends nothing: the day is still recorded.
+        let _ = std::io::stdout().lock().write_all(line.as_bytes());
+    })
+}
+
+fn teller(json: bool, results: Results) -> Told {
+    Arc::new(move |recorded| {
+        if let Fact::LimitsComputed { limits, .. } = &recorded.fact {
+            let mut results = results.lock().unwrap_or_else(PoisonError::into_inner);
+            match results.iter_mut().find(|l| l.specimen == limits.specimen) {
+                Some(old) => *old = (**limits).clone(),
+                None => results.push((**limits).clone()),
+            }
+        }
+        if !json && let Some(line) = tell::line(recorded) {
+            let _ = writeln!(std::io::stdout().lock(), "{line}");
+        }
+    })
+}
+
+fn greet(args: &DemoArgs, scenario: &Scenario, service: &Service) {
+    if args.json {
+        return;
+    }
+    println!("{}", scenario.title);
+    println!(
+        "{} specimens; simulated balances, cup counters and scanners under {}",
+        scenario.specimens.len(),
+        service.state_dir().join("ports").display()
+    );
+    if let Some(at) = service.broker_address() {
+        println!("MQTT on {at}: for example  mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/#'", at.ip(), at.port());
+    }
+    println!();
+}
+
+fn ending(args: &DemoArgs, scenario: &Scenario, results: &Results, took: Duration, delivered: bool, service: &Service) -> u8 {
+    let mut results = results.lock().unwrap_or_else(PoisonError::into_inner).clone();
+    let place = |l: &Limits| scenario.specimens.iter().position(|s| s.id == l.specimen);
+    results.sort_by_key(place);
+    let complete = |s: &scenario::ScenarioSpecimen| results.iter().any(|l| l.specimen == s.id && l.state != State::Provisional);
+    let all = scenario.specimens.iter().all(complete);
+    if !args.json {
+        print!("{}", tell::table(&results));
+        println!(
+            "\nplayed in {:.1} s; {}",
+            took.as_secs_f64(),
+            if delivered { "everything published is acknowledged" } else { "NOT everything published was acknowledged" }
+        );
+        if let Some(at) = service.broker_address() {
+            println!("retained results: mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/+/specimen/+/limits'", at.ip(), at.port());
+        }
+        println!(
+            "Index values for a demonstration. Containers from a 110 °C oven burn: tongs, lid on, cool first. Dust from dry soil can carry silica or asbestos. Keep fingers and sleeves from a motorised cam."
+        );
+    }
+    if all { 0 } else { NOT_COMPLETE }
+}

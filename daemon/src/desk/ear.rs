@@ -1,0 +1,204 @@
+//! What the desk keeps of one instrument: its sense, its counters, and how it
+//! is connected.
+
+use super::load::{InstrumentSetup, Kind};
+use serde::{Deserialize, Serialize};
+use std::collections::BTreeMap;
+use tarecup_core::fact::Connection;
+use tarecup_core::sense::count::Count;
+use tarecup_core::sense::settle::Settle;
+use tarecup_core::sense::{CountRun, Happening, MassTaken};
+use tarecup_core::signal::{Reading, Signal};
+use tarecup_core::stamp::{SECOND_US, Stamp};
+use tarecup_drivers::heard::{PortState, Reject, What};
+
+/// A streaming balance that says nothing for this long is silent.
+const SILENT_US: i64 = 5 * SECOND_US;
+/// So many lines in a row that nobody understands are another language.
+const STRANGE_LINES: u32 = 4;
+
+/// Where a sense stood after its last fact; stored with that fact.
+#[derive(Clone, Debug, Default, Serialize, Deserialize)]
+pub struct SenseState {
+    /// Last input consumed.
+    pub through: u64,
+    /// The mass that still lies on the pan.
+    pub taken: Option<MassTaken>,
+    /// The last count run.
+    pub run: Option<CountRun>,
+}
+
+enum Sense {
+    Balance(Box<Settle>),
+    Counter(Box<Count>),
+    Scanner,
+}
+
+/// One instrument as the desk hears it.
+pub struct Ear {
+    sense: Sense,
+    streams: bool,
+    /// How it is connected.
+    pub connection: Connection,
+    /// Its port is open.
+    pub port_open: bool,
+    /// Where its sense stood after its last fact.
+    pub state: SenseState,
+    /// When something was last heard from it.
+    pub last_heard: Option<Stamp>,
+    /// Lines understood.
+    pub understood: u64,
+    /// Lines not understood, by reason.
+    pub rejects: BTreeMap<&'static str, u64>,
+    /// The latest line not understood.
+    pub last_reject: Option<String>,
+    strange: u32,
+    /// The latest reading and whether it was shown.
+    pub reading: Option<(Reading, Stamp)>,
+    /// What was last shown live, and when.
+    pub shown: Option<(Reading, Stamp)>,
+    /// Counters have changed since they were published.
+    pub counters_changed: bool,
+}
+
+impl Ear {
+    /// The ear of an instrument whose sense stood at `state`.
+    pub fn new(setup: &InstrumentSetup, state: SenseState) -> Self {
+        let sense = match setup.kind {
+            Kind::Balance => Sense::Balance(Box::new(Settle::resume(setup.settle, state.taken))),
+            Kind::Counter => Sense::Counter(Box::new(Count::resume(setup.count, state.run.as_ref()))),
+            Kind::Scanner => Sense::Scanner,
+        };
+        Self {
+            sense,
+            streams: setup.streams,
+            connection: Connection::Waiting,
+            port_open: false,
+            state,
+            last_heard: None,
+            understood: 0,
+            rejects: BTreeMap::new(),
+            last_reject: None,
+            strange: 0,
+            reading: None,
+            shown: None,
+            counters_changed: false,
+        }
+    }
+
+    /// Notes that a frame came; says when the connection is seen differently for it.
+    pub fn heard(&mut self, what: &What, at: &Stamp) -> Option<Connection> {
+        self.last_heard = Some(*at);
+        let now = match what {
+            What::Signal(_) | What::Nothing => {
+                self.strange = 0;
+                self.understood += 1;
+                Connection::Speaking
+            }
+            What::Reject(Reject::FirstPartial | Reject::CutOff) => return None,
+            What::Reject(_) => {
+                self.strange = self.strange.saturating_add(1);
+                if self.strange < STRANGE_LINES {
+                    return None;
+                }
+                Connection::WrongLanguage
+            }
+        };
+        (now != self.connection).then_some(now)
+    }
+
+    /// Counts a frame that was not understood.
+    pub fn reject(&mut self, reason: Reject, bytes: &[u8]) {
+        *self.rejects.entry(reason.word()).or_default() += 1;
+        self.last_reject = Some(bytes.iter().take(60).flat_map(|b| std::ascii::escape_default(*b)).map(char::from).collect());
+        self.counters_changed = true;
+    }
+
+    /// What a signal leads to: happenings, or a code.
+    pub fn sense(&mut self, signal: &Signal, input: u64, at: Stamp) -> ([Option<Happening>; 2], Option<String>) {
+        match (&mut self.sense, signal) {
+            (Sense::Balance(settle), Signal::Mass(reading)) => {
+                self.reading = Some((*reading, at));
+                ([settle.hear(reading, input, at), None], None)
+            }
+            (Sense::Balance(settle), Signal::Overload | Signal::Underload | Signal::NotReady) => {
+                settle.other(input, at);
+                ([None, None], None)
+            }
+            (Sense::Counter(count), Signal::Drop | Signal::Total(_) | Signal::End(_)) => (count.hear(signal, input, at), None),
+            (Sense::Scanner, Signal::Code(text)) => ([None, None], Some(text.clone())),
+            // A profile only yields signals of its own kind.
+            _ => ([None, None], None),
+        }
+    }
+
+    /// The port came or went.
+    pub fn port(&mut self, state: &PortState, at: Stamp) {
+        self.strange = 0;
+        self.port_open = *state == PortState::Opened;
+        match (&mut self.sense, state) {
+            (Sense::Balance(settle), PortState::Lost) => settle.disturbed(),
+            // A run that was over by its pause already is not marked: `hear` and `tick` come first.
+            (Sense::Counter(count), PortState::Lost) => count.interrupted("the counter's port was lost during the run"),
+            (Sense::Counter(count), PortState::Opened) => count.listening(at),
+            _ => (),
+        }
+    }
+
+    /// The port came or went, read back from the ledger: what its run led to is a fact already.
+    pub fn port_again(&mut self, state: &PortState, at: Stamp) {
+        let _ = self.tick(&at);
+        self.port(state, at);
+    }
+
+    /// The service was away.
+    pub fn service_was_away(&mut self, since: &str, now: Stamp) {
+        if let Sense::Counter(count) = &mut self.sense {
+            count.interrupted(&format!("the service was not running during the run (since {since})"));
+            count.listening(now);
+        }
+    }
+
+    /// Lets time pass for the sense.
+    pub fn tick(&mut self, now: &Stamp) -> Option<Happening> {
+        match &mut self.sense {
+            Sense::Counter(count) => count.tick(*now),
+            _ => None,
+        }
+    }
+
+    /// Whether a streaming balance has fallen silent.
+    pub fn silence(&self, now: &Stamp) -> Option<Connection> {
+        (self.silent_in_us(now)? <= 0).then_some(Connection::Silent)
+    }
+
+    fn silent_in_us(&self, now: &Stamp) -> Option<i64> {
+        let talking = self.streams && self.connection == Connection::Speaking;
+        let last = self.last_heard.filter(|_| talking)?;
+        Some(SILENT_US - now.since(&last).us)
+    }
+
+    /// Microseconds until time alone leads to something.
+    pub fn due_in_us(&self, now: &Stamp) -> Option<i64> {
+        let pause = match &self.sense {
+            Sense::Counter(count) => count.deadline().map(|d| -now.since(&d).us),
+            _ => None,
+        };
+        pause.into_iter().chain(self.silent_in_us(now)).min()
+    }
+
+    /// A mass was taken: this is where the sense stands.
+    pub fn remember_taken(&mut self, taken: MassTaken) {
+        (self.state.through, self.state.taken) = (taken.input, Some(taken));
+    }
+
+    /// The pan is empty again, and a fact says so.
+    pub fn remember_unloaded(&mut self, input: u64) {
+        (self.state.through, self.state.taken) = (input, None);
+    }
+
+    /// A run ended: this is where the sense stands.
+    pub fn remember_run(&mut self, run: &CountRun) {
+        (self.state.through, self.state.run) = (run.last_input, Some(run.clone()));
+    }
+}

@@ -1,0 +1,367 @@
+//! The desk: the one loop through which everything goes.
+//!
+//! It owns the laboratory's state and the ledger's writer. [`Desk::step`]
+//! takes what waits, decides, stores it in one transaction, and only then
+//! says what may leave ([`Effects`]). It knows no socket, no broker and no
+//! clock: time comes in with what it is given.
+//!
+//! What was taken and is not yet stored is *held*. When a commit fails, state
+//! and ledger are opened anew, exactly as at start-up, and what is held is
+//! taken again: nothing is lost and nothing is decided twice.
+
+mod ear;
+mod group;
+pub mod inbox;
+mod load;
+mod seat;
+mod views;
+
+pub use group::{Effects, LiveOut, Publish};
+pub use load::{DeskSetup, InstrumentSetup, Kind};
+pub use seat::{Seat, SeatSettings};
+pub use views::limits as limits_payload;
+
+use crate::asks;
+use crate::ledger::{Ledger, LedgerError, Reader};
+use ear::Ear;
+use group::{Group, Held};
+use inbox::{Incoming, Reply};
+use serde_json::json;
+use std::time::{Duration, Instant};
+use tarecup_core::fact::Connection;
+use tarecup_core::lab::{Input, Lab, Outcome};
+use tarecup_core::sense::Happening;
+use tarecup_core::stamp::Stamp;
+use tarecup_drivers::heard::{Batch, PortState, What};
+
+/// Lines that led to nothing are stored after this time at the latest.
+const HOLD: Duration = Duration::from_millis(200);
+/// Lines that led to nothing are stored when so many are held.
+const HOLD_LINES: usize = 4_000;
+
+/// The desk.
+pub struct Desk {
+    setup: DeskSetup,
+    ledger: Ledger,
+    reader: Reader,
+    lab: Lab,
+    ears: Vec<Ear>,
+    held: Vec<Held>,
+    held_since: Option<Instant>,
+    group: Group,
+    next_input: u64,
+    next_seq: u64,
+    delivered: u64,
+    delivered_stored: u64,
+    broker: Option<String>,
+    not_recording: Option<String>,
+    stopped: bool,
+}
+
+impl Desk {
+    /// Why nothing is being recorded, if so.
+    pub fn not_recording(&self) -> Option<&str> {
+        self.not_recording.as_deref()
+    }
+
+    /// Whether an orderly stop has been stored.
+    pub fn stopped(&self) -> bool {
+        self.stopped
+    }
+
+    /// Takes what waits and stores it. What may leave is added to `effects`
+    /// only after it is stored.
+    pub fn step(&mut self, incoming: &mut Vec<Incoming>, now: &Stamp, effects: &mut Effects) {
+        for item in incoming.drain(..) {
+            self.take(item, now, effects);
+        }
+        if self.not_recording.is_none() && self.something_due(now) {
+            self.absorb(Held::Timer { at: *now });
+        }
+        if self.should_commit() {
+            self.commit(effects);
+        }
+    }
+
+    fn take(&mut self, item: Incoming, now: &Stamp, effects: &mut Effects) {
+        match item {
+            Incoming::Batch(batch) => {
+                effects.heard.push((batch.instrument, batch.bytes.len() as u64));
+                self.absorb(Held::Batch { first: 0, batch });
+            }
+            Incoming::Overrun { instrument, lines, at } => self.absorb(Held::Overrun { instrument, lines, at }),
+            Incoming::Port { instrument, state, at } => self.absorb(Held::Port { instrument, state, at }),
+            Incoming::Ask { client, body, reply } => self.take_ask(client, &body, reply, now, effects),
+            Incoming::Delivered(through) => self.delivered = self.delivered.max(through),
+            Incoming::Broker(trouble) => self.broker = trouble,
+            Incoming::Tick(reply) => effects.replies.push((reply, String::new())),
+            Incoming::Stop => {
+                self.absorb(Held::Stop { at: *now });
+                self.group.urgent = true;
+            }
+        }
+    }
+
+    fn take_ask(&mut self, client: String, text: &str, reply: Reply, now: &Stamp, effects: &mut Effects) {
+        if let Some(why) = &self.not_recording {
+            let says = format!("nothing is being recorded: {why}");
+            return effects.replies.push((reply, asks::refusal(&says)));
+        }
+        match asks::parse(text) {
+            Err(says) => effects.replies.push((reply, asks::refusal(&says))),
+            Ok(asked) => match asked.wanted {
+                asks::Wanted::Read(read) => {
+                    // What is read must be stored: a client may act on it.
+                    if self.group.has_facts() {
+                        self.commit(effects);
+                    }
+                    let answer = self.read(&read, now);
+                    effects.replies.push((reply, answer));
+                }
+                asks::Wanted::Write(_) => {
+                    self.absorb(Held::Ask { client, id: asked.id, body: asked.body.to_string(), reply: Some(reply), at: *now });
+                }
+            },
+        }
+    }
+
+    /// Takes one thing: decides what it means and holds it until it is stored.
+    fn absorb(&mut self, mut held: Held) {
+        let kept = match &mut held {
+            Held::Batch { first, batch } => {
+                *first = self.next_input;
+                self.absorb_batch(batch);
+                true
+            }
+            Held::Overrun { instrument, lines, at } => {
+                let name = self.setup.instruments[usize::from(*instrument)].name.clone();
+                self.next_input += 1;
+                self.decide(Input::Overrun { instrument: name, lines: *lines }, *at);
+                true
+            }
+            Held::Port { instrument, state, at } => {
+                self.next_input += 1;
+                self.absorb_port(usize::from(*instrument), state, *at);
+                true
+            }
+            Held::Ask { client, id, body, reply, at } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
+            Held::Timer { at } => self.absorb_timer(*at),
+            Held::Settings { text, at } => {
+                let input = self.next_input;
+                self.next_input += 1;
+                let digest = crate::ledger::Digest::of(text.as_bytes()).to_string();
+                self.decide(Input::Settings { input, digest }, *at);
+                true
+            }
+            Held::Start { after_orderly_stop, at } => {
+                self.next_input += 1;
+                let program = String::from(env!("CARGO_PKG_VERSION"));
+                self.decide(Input::Started { program, after_orderly_stop: *after_orderly_stop }, *at);
+                true
+            }
+            Held::Stop { at } => {
+                self.next_input += 1;
+                self.decide(Input::Stopping, *at);
+                true
+            }
+        };
+        if kept {
+            self.held.push(held);
+            self.held_since.get_or_insert_with(Instant::now);
+        }
+    }
+
+    fn absorb_batch(&mut self, batch: &Batch) {
+        let index = usize::from(batch.instrument);
+        let mut begin = 0usize;
+        for frame in &batch.frames {
+            let input = self.next_input;
+            self.next_input += 1;
+            let bytes = begin..frame.end as usize;
+            begin = frame.end as usize;
+            self.group.lines += 1;
+            if let Some(change) = self.ears[index].heard(&frame.what, &frame.at) {
+                self.connection(index, change, None, frame.at);
+            }
+            match &frame.what {
+                What::Signal(signal) => self.signal(index, signal, input, frame.at),
+                What::Nothing => (),
+                What::Reject(reason) => self.ears[index].reject(*reason, &batch.bytes[bytes]),
+            }
+        }
+    }
+
+    fn signal(&mut self, index: usize, signal: &tarecup_core::signal::Signal, input: u64, at: Stamp) {
+        let (happenings, code) = self.ears[index].sense(signal, input, at);
+        for happening in happenings.into_iter().flatten() {
+            self.happened(index, happening);
+        }
+        if let Some(text) = code {
+            self.fetch_code(&text);
+            let scanner = self.setup.instruments[index].name.clone();
+            self.decide(Input::Code { scanner, text, input }, at);
+        }
+    }
+
+    fn happened(&mut self, index: usize, happening: Happening) {
+        let name = self.setup.instruments[index].name.clone();
+        match happening {
+            Happening::MassTaken(taken) => {
+                self.ears[index].remember_taken(taken);
+                self.group.senses.insert(index);
+                self.decide(Input::Mass { balance: name, taken }, taken.at);
+            }
+            Happening::Unloaded { input, at } => {
+                let before = self.group.facts.len();
+                self.decide(Input::Unloaded { balance: name.clone(), input }, at);
+                self.lab.pan_emptied(&name);
+                if self.group.facts.len() > before {
+                    self.ears[index].remember_unloaded(input);
+                    self.group.senses.insert(index);
+                }
+            }
+            Happening::Drops { drops, rate_per_s, at } => {
+                self.group.urgent = true;
+                self.group.live.push(LiveOut::Drop { instrument: name, drops, rate_per_s, at });
+            }
+            Happening::CountEnded(run) => {
+                self.ears[index].remember_run(&run);
+                self.group.senses.insert(index);
+                let at = run.at;
+                self.decide(Input::Count { cup: name, run }, at);
+            }
+        }
+    }
+
+    fn absorb_port(&mut self, index: usize, state: &PortState, at: Stamp) {
+        if let Some(happening) = self.ears[index].tick(&at) {
+            self.happened(index, happening);
+        }
+        self.ears[index].port(state, at);
+        let (connection, detail) = match state {
+            PortState::Waiting => (Connection::Waiting, Some(String::from("its port is not there"))),
+            PortState::Opened => (Connection::Waiting, None),
+            PortState::Lost => (Connection::PortLost, None),
+            PortState::Refused(why) => (Connection::Waiting, Some(why.clone())),
+        };
+        self.connection(index, connection, detail, at);
+    }
+
+    fn connection(&mut self, index: usize, state: Connection, detail: Option<String>, at: Stamp) {
+        self.ears[index].connection = state;
+        let instrument = self.setup.instruments[index].name.clone();
+        self.decide(Input::Instrument { instrument, state, detail }, at);
+    }
+
+    fn absorb_ask(&mut self, client: &str, id: Option<&str>, body: &str, reply: &mut Option<Reply>, at: Stamp) -> bool {
+        if let Some(id) = id {
+            match self.known_ask(client, id, body) {
+                Ok(None) => (),
+                Ok(Some(answer)) => {
+                    self.group.answers.push(group::Answered { keep: None, answer, reply: reply.take() });
+                    return false;
+                }
+                Err(says) => {
+                    self.group.answers.push(group::Answered { keep: None, answer: asks::refusal(&says), reply: reply.take() });
+                    return false;
+                }
+            }
+        }
+        self.fetch_named(body);
+        self.next_input += 1;
+        let before = self.group.facts.len();
+        let answer = match serde_json::from_str(body) {
+            Err(e) => asks::refusal(&format!("the ask cannot be done: {e}")),
+            Ok(ask) => match self.try_decide(Input::Ask(ask), at) {
+                Err(refusal) => asks::refusal(&refusal.0),
+                Ok(()) => {
+                    let facts: Vec<u64> = self.group.facts[before..].iter().map(|f| f.recorded.seq).collect();
+                    json!({"ok": true, "facts": facts}).to_string()
+                }
+            },
+        };
+        let keep = id.map(|id| (client.to_string(), id.to_string(), crate::ledger::Digest::of(body.as_bytes())));
+        self.group.answers.push(group::Answered { keep, answer, reply: reply.take() });
+        true
+    }
+
+    /// Lets time pass for senses, connections and the laboratory.
+    fn absorb_timer(&mut self, at: Stamp) -> bool {
+        let before = self.group.facts.len();
+        let number = self.next_input;
+        self.next_input += 1;
+        for index in 0..self.ears.len() {
+            if let Some(happening) = self.ears[index].tick(&at) {
+                self.happened(index, happening);
+            }
+            if let Some(change) = self.ears[index].silence(&at) {
+                self.connection(index, change, None, at);
+            }
+        }
+        self.decide(Input::Due, at);
+        let led_to_something = self.group.facts.len() > before;
+        if !led_to_something {
+            self.next_input = number;
+        }
+        led_to_something
+    }
+
+    fn decide(&mut self, input: Input, at: Stamp) {
+        if let Err(refusal) = self.try_decide(input, at) {
+            // Only asks are refused; an instrument's word never is.
+            tracing::error!(refusal = %refusal, "an input was refused that cannot be");
+        }
+    }
+
+    fn try_decide(&mut self, input: Input, at: Stamp) -> Result<(), tarecup_core::lab::Refusal> {
+        let Outcome { facts, touched } = self.lab.take(input, at, self.next_seq)?;
+        self.next_seq += facts.len() as u64;
+        self.group.add(facts, touched);
+        Ok(())
+    }
+
+    fn something_due(&self, now: &Stamp) -> bool {
+        self.due_in_us(now) == Some(0)
+    }
+
+    /// Microseconds until time alone leads to something.
+    pub fn due_in_us(&self, now: &Stamp) -> Option<i64> {
+        let ears = self.ears.iter().filter_map(|e| e.due_in_us(now)).min();
+        let lab = self.lab.due_in_us(now);
+        ears.into_iter().chain(lab).min().map(|us| us.max(0))
+    }
+
+    /// When held lines must be stored at the latest.
+    pub fn hold_until(&self) -> Option<Instant> {
+        self.held_since.map(|since| since + HOLD)
+    }
+
+    fn should_commit(&self) -> bool {
+        let waiting = self.group.urgent || self.group.has_facts() || !self.group.answers.is_empty();
+        let old = self.held_since.is_some_and(|since| since.elapsed() >= HOLD);
+        self.not_recording.is_none() && (waiting || old || self.group.lines >= HOLD_LINES)
+    }
+
+    /// Opens the ledger anew and takes again what is held. Called at intervals while nothing is recorded.
+    pub fn recover(&mut self, now: &Stamp, effects: &mut Effects) {
+        let Some(why) = self.not_recording.clone() else { return };
+        match self.reload_and_retake(*now) {
+            Ok(()) => {
+                tracing::warn!(reason = %why, "recording again");
+                self.not_recording = None;
+                self.commit(effects);
+                effects.presence = true;
+            }
+            Err(e) => self.note_not_recording(&e, effects),
+        }
+    }
+
+    fn note_not_recording(&mut self, error: &LedgerError, effects: &mut Effects) {
+        let why = error.to_string();
+        if self.not_recording.as_deref() != Some(why.as_str()) {
+            tracing::error!(reason = %why, "NOT RECORDING");
+            self.not_recording = Some(why);
+            effects.presence = true;
+        }
+    }
+}
