@@ -97,7 +97,9 @@ pub fn functions(code: &str) -> Vec<Function> {
         line += usize::from(c[at] == '\n');
         let word = c[at..].starts_with(&['f', 'n']) && (at == 0 || !is_name(c[at - 1])) && c.get(at + 2) == Some(&' ');
         let name: String = if word { c[at + 3..].iter().take_while(|c| is_name(**c)).collect() } else { String::new() };
-        if let (false, Some(end)) = (name.is_empty(), end_of_body(&c, at)) {
+        if !name.is_empty()
+            && let Some(end) = end_of_body(&c, at)
+        {
             let lines = 1 + c[at..end].iter().filter(|c| **c == '\n').count();
             found.push(Function { name, line, lines });
         }
