@@ -28,6 +28,9 @@ use tokio::runtime::{Handle, Runtime};
 /// How long an orderly stop waits for the broker.
 const FAREWELL: Duration = Duration::from_secs(3);
 
+/// How long the built-in broker has to read the farewell.
+const BROKER_READS: Duration = Duration::from_millis(200);
+
 /// Why the service did not start.
 #[derive(Debug, thiserror::Error)]
 pub enum StartError {
@@ -119,7 +122,7 @@ impl Service {
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
         let heard = Arc::new(Heard::default());
-        let setup = desk_setup(&station, &profiles, &state_dir);
+        let setup = desk_setup(&station, &profiles, &state_dir, time_passes);
         let options = OpenOptions::new(&boot_id(), clock.now().utc_us);
         let stamp = |boot| {
             clock.set_boot(boot);
@@ -245,6 +248,8 @@ impl Service {
         }
         #[cfg(feature = "broker")]
         if let Some(broker) = self.broker {
+            // It reads the farewell in its own time; stopped before that, it would say the last will.
+            std::thread::sleep(BROKER_READS);
             self.net_runtime.block_on(broker.stop());
         }
         let _ = std::fs::remove_file(socket::path(&self.state_dir));
@@ -334,7 +339,7 @@ pub fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
     Profile::compile(text).map_err(|e| e.to_string())
 }
 
-fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskSetup {
+fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_passes: bool) -> DeskSetup {
     let linking = &station.linking;
     let seconds = |s: u32| i64::from(s) * SECOND_US;
     let lab = Setup {
@@ -351,7 +356,7 @@ fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskS
             slice_aloud_us: seconds(linking.slice_aloud_minutes) * 60,
         },
     };
-    let instruments = station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?))).collect();
+    let instruments = station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?, time_passes))).collect();
     DeskSetup {
         station: station.lab.station.as_str().into(),
         state_dir: state_dir.display().to_string(),
@@ -362,7 +367,8 @@ fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskS
     }
 }
 
-fn instrument(i: &Instrument, profile: &Arc<Profile>) -> InstrumentSetup {
+/// In a virtual day hours pass in no time: silence then means nothing.
+fn instrument(i: &Instrument, profile: &Arc<Profile>, time_passes: bool) -> InstrumentSetup {
     let mut decoder = profile.decoder();
     InstrumentSetup {
         name: i.name.clone(),
@@ -376,7 +382,7 @@ fn instrument(i: &Instrument, profile: &Arc<Profile>) -> InstrumentSetup {
         port: i.port.path.clone(),
         settle: i.settle,
         count: i.count,
-        streams: i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
+        streams: time_passes && i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
         decode: Box::new(move |bytes| decoder.decode(bytes)),
     }
 }
