@@ -356,7 +356,8 @@ fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_pas
             slice_aloud_us: seconds(linking.slice_aloud_minutes) * 60,
         },
     };
-    let instruments = station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?, time_passes))).collect();
+    let instruments =
+        station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?, time_passes))).collect();
     DeskSetup {
         station: station.lab.station.as_str().into(),
         state_dir: state_dir.display().to_string(),

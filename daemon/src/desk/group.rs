@@ -42,6 +42,8 @@ pub(super) struct Decided {
 
 /// An answer that waits for its facts to be stored.
 pub(super) struct Answered {
+    /// Its ask is among what is held.
+    pub held: bool,
     /// Client, ask id and digest of the body, when the answer is kept.
     pub keep: Option<(String, String, Digest)>,
     pub answer: String,

@@ -258,11 +258,16 @@ impl Desk {
             match self.known_ask(client, id, body) {
                 Ok(None) => (),
                 Ok(Some(answer)) => {
-                    self.group.answers.push(group::Answered { keep: None, answer, reply: reply.take() });
+                    self.group.answers.push(group::Answered { held: false, keep: None, answer, reply: reply.take() });
                     return false;
                 }
                 Err(says) => {
-                    self.group.answers.push(group::Answered { keep: None, answer: asks::refusal(&says), reply: reply.take() });
+                    self.group.answers.push(group::Answered {
+                        held: false,
+                        keep: None,
+                        answer: asks::refusal(&says),
+                        reply: reply.take(),
+                    });
                     return false;
                 }
             }
@@ -281,7 +286,7 @@ impl Desk {
             },
         };
         let keep = id.map(|id| (client.to_string(), id.to_string(), crate::ledger::Digest::of(body.as_bytes())));
-        self.group.answers.push(group::Answered { keep, answer, reply: reply.take() });
+        self.group.answers.push(group::Answered { held: true, keep, answer, reply: reply.take() });
         true
     }
 
@@ -342,6 +347,15 @@ impl Desk {
         self.not_recording.is_none() && (waiting || old || self.group.lines >= HOLD_LINES)
     }
 
+    /// Nothing came for a while: time for the ledger's housekeeping.
+    pub fn idle(&mut self) {
+        if self.not_recording.is_none()
+            && let Err(e) = self.ledger.tidy()
+        {
+            tracing::warn!(error = %e, "housekeeping of the ledger has to wait");
+        }
+    }
+
     /// Opens the ledger anew and takes again what is held. Called at intervals while nothing is recorded.
     pub fn recover(&mut self, now: &Stamp, effects: &mut Effects) {
         let Some(why) = self.not_recording.clone() else { return };
@@ -351,6 +365,11 @@ impl Desk {
                 self.not_recording = None;
                 self.commit(effects);
                 effects.presence = true;
+                // What was stored in the moment of trouble was never announced.
+                match self.standing_topics(now) {
+                    Ok(topics) => effects.retained.splice(0..0, topics).for_each(drop),
+                    Err(e) => tracing::warn!(error = %e, "retained topics could not be read; they follow with the next change"),
+                }
             }
             Err(e) => self.note_not_recording(&e, effects),
         }
