@@ -10,6 +10,7 @@
 //! taken again: nothing is lost and nothing is decided twice.
 
 mod ear;
+mod flood;
 mod group;
 pub mod inbox;
 mod load;
@@ -75,6 +76,9 @@ impl Desk {
         for item in incoming.drain(..) {
             self.take(item, now, effects);
         }
+        if self.ears.iter().any(|e| e.flood.owes()) {
+            self.floods_over(now);
+        }
         if self.not_recording.is_none() && self.something_due(now) {
             self.absorb(Held::Timer { at: *now });
         }
@@ -87,7 +91,7 @@ impl Desk {
         match item {
             Incoming::Batch(batch) => {
                 effects.heard.push((batch.instrument, batch.bytes.len() as u64));
-                self.absorb(Held::Batch { first: 0, batch });
+                self.take_batch(batch);
             }
             Incoming::Overrun { instrument, lines, at } => self.absorb(Held::Overrun { instrument, lines, at }),
             Incoming::Port { instrument, state, at } => self.absorb(Held::Port { instrument, state, at }),
@@ -98,6 +102,30 @@ impl Desk {
             Incoming::Stop => {
                 self.absorb(Held::Stop { at: *now });
                 self.group.urgent = true;
+            }
+        }
+    }
+
+    fn take_batch(&mut self, batch: Batch) {
+        let index = usize::from(batch.instrument);
+        let mut changes = Vec::new();
+        let (batch, over) = self.ears[index].sift(batch, &mut changes);
+        if let Some(swallowed) = over {
+            self.absorb(Held::Flood { instrument: index as u16, swallowed });
+        }
+        for (change, at) in changes {
+            self.connection(index, change, None, at);
+        }
+        if !batch.frames.is_empty() {
+            self.absorb(Held::Batch { batch });
+        }
+    }
+
+    /// Floods whose second is over.
+    fn floods_over(&mut self, now: &Stamp) {
+        for index in 0..self.ears.len() {
+            if let Some(swallowed) = self.ears[index].flood.over(now) {
+                self.absorb(Held::Flood { instrument: index as u16, swallowed });
             }
         }
     }
@@ -128,9 +156,12 @@ impl Desk {
     /// Takes one thing: decides what it means and holds it until it is stored.
     fn absorb(&mut self, mut held: Held) {
         let kept = match &mut held {
-            Held::Batch { first, batch } => {
-                *first = self.next_input;
+            Held::Batch { batch } => {
                 self.absorb_batch(batch);
+                true
+            }
+            Held::Flood { .. } => {
+                self.next_input += 1;
                 true
             }
             Held::Overrun { instrument, lines, at } => {
