@@ -22,7 +22,7 @@ use tarecup_core::sense::Talks;
 use tarecup_core::stamp::{SECOND_US, Stamp};
 use tarecup_drivers::heard::{Clock, Deliver};
 use tarecup_drivers::port::serial::{self, PortTask};
-use tarecup_drivers::profile::{Profile, ProfileText};
+use tarecup_drivers::profile::Profile;
 use tokio::runtime::{Handle, Runtime};
 
 /// How long an orderly stop waits for the broker.
@@ -318,7 +318,7 @@ impl PortsThread {
 type Profiles = BTreeMap<String, Arc<Profile>>;
 
 /// Compiles the profiles that the instruments use.
-pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
+fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
     let mut profiles = Profiles::new();
     for instrument in &station.instruments {
         let name = instrument.profile.as_str();
@@ -332,9 +332,9 @@ pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
     Ok(profiles)
 }
 
-/// Compiles one profile.
-pub fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
-    let mut text: ProfileText = toml::from_str(&source.toml).map_err(|e| e.to_string())?;
+/// Compiles one profile, under the name of its file or table.
+fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
+    let mut text = source.text.clone();
     text.name.get_or_insert_with(|| source.name.as_str().into());
     Profile::compile(text).map_err(|e| e.to_string())
 }
@@ -398,12 +398,8 @@ fn settings_text(station: &Station) -> String {
                    "settle": i.settle, "count": i.count})
         })
         .collect();
-    let profiles: BTreeMap<_, _> = station
-        .instruments
-        .iter()
-        .filter_map(|i| station.profiles.get(&i.profile))
-        .map(|p| (p.name.as_str(), p.toml.as_str()))
-        .collect();
+    let profiles: BTreeMap<_, _> =
+        station.instruments.iter().filter_map(|i| station.profiles.get(&i.profile)).map(|p| (p.name.as_str(), &p.text)).collect();
     let linking = &station.linking;
     json!({
         "program": env!("CARGO_PKG_VERSION"), "laboratory": station.lab.name, "station": station.lab.station,
