@@ -8,6 +8,8 @@ extern crate alloc;
 #[cfg(test)]
 extern crate std;
 
+pub mod checks;
+pub mod evaluate;
 pub mod limits;
 pub mod method;
 pub mod names;
@@ -15,4 +17,5 @@ pub mod quantity;
 pub mod sense;
 pub mod sheet;
 pub mod signal;
+pub mod soil;
 pub mod stamp;
