@@ -10,6 +10,8 @@ extern crate std;
 
 pub mod checks;
 pub mod evaluate;
+pub mod fact;
+pub mod lab;
 pub mod limits;
 pub mod method;
 pub mod names;

@@ -1,0 +1,530 @@
+//! What persons ask for. One closed set, the same for every way in.
+
+use super::entities::{Container, Latest, LooseWhat, Specimen};
+use super::oven::STAYS_KEPT;
+use super::role::Role;
+use super::{Lab, New, Refusal};
+use crate::fact::{Counted, Fact, Intention, Limit, SpecimenOpened, Weighed};
+use crate::limits::State;
+use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
+use crate::quantity::{Mass, MassUnit};
+use crate::sheet::{Kind, Seq};
+use crate::signal::Basis;
+use crate::stamp::{Stamp, parse_rfc3339};
+use alloc::collections::{BTreeMap, BTreeSet};
+use alloc::format;
+use alloc::string::String;
+use alloc::vec;
+use alloc::vec::Vec;
+use serde::{Deserialize, Serialize};
+
+/// An ask that may write. Reading asks are answered without the laboratory.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+#[serde(tag = "ask", rename_all = "snake_case", deny_unknown_fields)]
+#[allow(missing_docs)]
+pub enum Ask {
+    /// Begin a specimen's tests.
+    OpenSpecimen {
+        specimen: SpecimenId,
+        #[serde(default)]
+        method: Option<MethodName>,
+        #[serde(default)]
+        edition: Option<String>,
+        #[serde(default)]
+        description: Option<String>,
+        #[serde(default)]
+        preparation: Option<String>,
+        #[serde(default)]
+        passing_75um_percent: Option<f64>,
+        #[serde(default)]
+        clay_percent: Option<f64>,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// Be named on what happens at a bench.
+    SignIn { bench: BenchName, operator: Operator },
+    /// No longer.
+    SignOut { bench: BenchName },
+    /// Say what a bench works on.
+    Intend {
+        bench: BenchName,
+        specimen: SpecimenId,
+        intention: Intention,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// Nothing in particular.
+    IntendNothing {
+        bench: BenchName,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// A code, as if a scanner had read it at the bench.
+    Code { bench: BenchName, text: String },
+    /// Say what the latest weighing at a bench is of.
+    SayRole {
+        bench: BenchName,
+        container: ContainerId,
+        role: Role,
+        #[serde(default)]
+        who: Option<Operator>,
+        why: String,
+    },
+    /// Tie any weighing to a container, also one that is tied already.
+    Tie { weighing: Seq, bench: BenchName, container: ContainerId, role: Role, who: Operator, why: String },
+    /// Tie a count whose slice was not taken to a specimen: its slice is owed at the bench.
+    TieCount { count: Seq, bench: BenchName, specimen: SpecimenId, who: Operator, why: String },
+    /// A weighing or count does not count.
+    SetAside { what: Seq, who: Operator, why: String },
+    /// A determination does not count.
+    SetAsideTrial { specimen: SpecimenId, kind: Kind, no: u32, who: Operator, why: String },
+    /// Correct a mass.
+    AmendMass { weighing: Seq, mass_g: String, who: Operator, why: String },
+    /// Correct a number of drops.
+    AmendDrops { count: Seq, drops: u32, who: Operator, why: String },
+    /// Enter a mass by hand.
+    TypeMass {
+        bench: BenchName,
+        container: ContainerId,
+        mass_g: String,
+        #[serde(default)]
+        role: Option<Role>,
+        who: Operator,
+    },
+    /// Enter a count by hand.
+    TypeDrops { bench: BenchName, drops: u32, who: Operator },
+    /// The paste of the counts so far is given up or was made anew.
+    NewPaste {
+        bench: BenchName,
+        #[serde(default)]
+        who: Option<Operator>,
+        #[serde(default)]
+        why: Option<String>,
+    },
+    /// Take back the latest weighing or count of a bench.
+    Undo {
+        bench: BenchName,
+        #[serde(default)]
+        who: Option<Operator>,
+        #[serde(default)]
+        why: Option<String>,
+    },
+    /// Enter a container in the register.
+    RegisterContainer {
+        container: ContainerId,
+        #[serde(default)]
+        lid_g: Option<String>,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// Declare a container free.
+    FreeContainer { container: ContainerId, who: Operator, why: String },
+    /// Containers go into the oven.
+    IntoOven {
+        containers: Vec<ContainerId>,
+        #[serde(default)]
+        celsius: Option<f64>,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// Containers come out of the oven.
+    OutOfOven {
+        containers: Vec<ContainerId>,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// The oven was off.
+    OvenOff { from: String, to: String, who: Operator, why: String },
+    /// A limit cannot be obtained.
+    NotObtainable {
+        specimen: SpecimenId,
+        limit: Limit,
+        because: String,
+        #[serde(default)]
+        who: Option<Operator>,
+    },
+    /// Answer a check.
+    AnswerCheck { specimen: SpecimenId, check: String, about: String, says: String, who: Operator },
+    /// Mark a result as reviewed.
+    Review { specimen: SpecimenId, who: Operator },
+}
+
+fn no(words: String) -> Refusal {
+    Refusal(words)
+}
+
+impl Lab {
+    pub(super) fn asked(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::OpenSpecimen { .. } => self.open_specimen(ask),
+            Ask::SignIn { bench, operator } => {
+                self.bench_there(&bench)?;
+                let same = self.signed_in(Some(&bench)).as_ref() == Some(&operator);
+                let fact = New::by(Some(operator.clone()), Fact::SignedIn { bench, operator });
+                Ok(if same { vec![] } else { vec![fact] })
+            }
+            Ask::SignOut { bench } => {
+                let who = self.bench_there(&bench)?.signed_in.clone();
+                Ok(if who.is_none() { vec![] } else { vec![New::by(who, Fact::SignedOut { bench })] })
+            }
+            Ask::Intend { bench, specimen, intention, who } => {
+                self.bench_there(&bench)?;
+                self.specimen_there(&specimen)?;
+                Ok(self.intend(&bench, &specimen, intention, who))
+            }
+            Ask::IntendNothing { bench, who } => {
+                let idle = self.bench_there(&bench)?.intention.is_none();
+                let who = who.or_else(|| self.signed_in(Some(&bench)));
+                let fact = Fact::IntentionEnded { bench, why: String::from("said so") };
+                Ok(if idle { vec![] } else { vec![New::by(who, fact)] })
+            }
+            Ask::Code { bench, text } => {
+                self.bench_there(&bench)?;
+                self.code_at(&bench, &[], &text, at).map_err(Refusal)
+            }
+            Ask::SayRole { .. } | Ask::Tie { .. } | Ask::TieCount { .. } => self.ask_tie(ask),
+            Ask::TypeMass { .. } | Ask::TypeDrops { .. } => self.ask_typed(ask, at),
+            Ask::RegisterContainer { .. } | Ask::FreeContainer { .. } => self.ask_container(ask),
+            Ask::IntoOven { .. } | Ask::OutOfOven { .. } | Ask::OvenOff { .. } => self.ask_oven(ask, at),
+            Ask::NotObtainable { .. } | Ask::AnswerCheck { .. } | Ask::Review { .. } => self.ask_result(ask),
+            Ask::SetAside { .. }
+            | Ask::SetAsideTrial { .. }
+            | Ask::AmendMass { .. }
+            | Ask::AmendDrops { .. }
+            | Ask::NewPaste { .. }
+            | Ask::Undo { .. } => self.ask_correction(ask),
+        }
+    }
+
+    pub(super) fn bench_there(&self, bench: &BenchName) -> Result<&super::entities::Bench, Refusal> {
+        self.benches.get(bench).ok_or_else(|| {
+            let names: Vec<&str> = self.benches.keys().map(BenchName::as_str).collect();
+            no(format!("there is no bench {bench}; the benches are {}", names.join(", ")))
+        })
+    }
+
+    pub(super) fn specimen_there(&self, specimen: &SpecimenId) -> Result<&super::entities::Specimen, Refusal> {
+        self.specimens.get(specimen).ok_or_else(|| no(format!("there is no specimen {specimen}; open it first")))
+    }
+
+    fn open_specimen(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
+        let Ask::OpenSpecimen { specimen, method, edition, description, preparation, passing_75um_percent, clay_percent, who } =
+            ask
+        else {
+            return Ok(vec![]);
+        };
+        if self.specimens.contains_key(&specimen) {
+            return Err(no(format!("specimen {specimen} is open already; give a new one another identifier")));
+        }
+        let code = ContainerId::new(specimen.as_str());
+        if code.is_ok_and(|c| self.containers.contains_key(&c)) {
+            return Err(no(format!(
+                "{specimen} is a container: a code can mean only one thing, so give the specimen another identifier"
+            )));
+        }
+        let name = method.unwrap_or_else(|| self.setup.default_method.clone());
+        let Some(method) = self.setup.methods.get(&name) else {
+            let names: Vec<&str> = self.setup.methods.keys().map(MethodName::as_str).collect();
+            return Err(no(format!("there is no method {name}; the methods are {}", names.join(", "))));
+        };
+        for (what, percent) in [("passing 0.075 mm", passing_75um_percent), ("clay", clay_percent)] {
+            if percent.is_some_and(|p| !(0.0..=100.0).contains(&p)) {
+                return Err(no(format!("the share {what} is a percentage between 0 and 100")));
+            }
+        }
+        let edition = edition.unwrap_or_else(|| method.edition.clone());
+        let opened =
+            SpecimenOpened { specimen, method: name, edition, description, preparation, passing_75um_percent, clay_percent };
+        Ok(vec![New::by(who, Fact::SpecimenOpened(opened))])
+    }
+
+    fn ask_tie(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::SayRole { bench, container, role, who, why } => {
+                let latest = self.bench_there(&bench)?.latest.as_ref();
+                let Some(Latest { seq, container: tied, role: as_role, .. }) = latest else {
+                    return Err(no(format!("nothing was weighed at bench {bench}; tie an older weighing by its number")));
+                };
+                if tied.as_ref() == Some(&container) && *as_role == Some(role) {
+                    return Ok(vec![]);
+                }
+                self.tie(*seq, &bench, &container, role, who.or_else(|| self.signed_in(Some(&bench))), why)
+            }
+            Ask::Tie { weighing, bench, container, role, who, why } => {
+                self.bench_there(&bench)?;
+                self.tie(weighing, &bench, &container, role, Some(who), why)
+            }
+            Ask::TieCount { count, bench, specimen, who, why } => {
+                needs_words(&why)?;
+                self.tie_count(count, &bench, &specimen)?;
+                Ok(vec![New::by(Some(who), Fact::CountTied { count, bench, specimen, why })])
+            }
+            _ => Ok(vec![]),
+        }
+    }
+
+    /// Whether a count may be tied to a specimen, its slice owed at a bench.
+    fn tie_count(&self, count: Seq, bench: &BenchName, specimen: &SpecimenId) -> Result<(), Refusal> {
+        let state = self.bench_there(bench)?;
+        self.specimen_there(specimen)?;
+        let loose = self.loose.get(&count).and_then(|l| match &l.what {
+            LooseWhat::Count(c) => Some(c),
+            LooseWhat::Weighing { .. } => None,
+        });
+        let tied = || self.specimens.values().find_map(|s| s.count(count).map(|c| (s, c)));
+        let found = match loose {
+            Some(c) => c,
+            None => {
+                let (of, c) =
+                    tied().ok_or_else(|| no(format!("no count has the number {count}, or its specimen is not at hand")))?;
+                if of.trials.iter().any(|t| t.counts.contains(&count)) {
+                    return Err(no(format!("a slice of count {count} was weighed for {}: take that weighing back first", of.id)));
+                }
+                if c.set_aside.is_some() {
+                    return Err(no(format!("count {count} was set aside; enter its drops by hand if it counts after all")));
+                }
+                c
+            }
+        };
+        let Some(owed) = state.owed.as_ref().filter(|o| !o.counts.contains(&count)) else { return Ok(()) };
+        let apart = owed.ended.since(&found.at).us.saturating_abs() >= self.setup.linking.slice_us;
+        if owed.specimen != *specimen || apart {
+            return Err(no(format!(
+                "another slice is owed at bench {bench} ({} drops for {}): weigh it or give up its paste first",
+                owed.drops, owed.specimen
+            )));
+        }
+        Ok(())
+    }
+
+    fn tie(
+        &self,
+        weighing: Seq,
+        bench: &BenchName,
+        container: &ContainerId,
+        role: Role,
+        who: Option<Operator>,
+        why: String,
+    ) -> Result<Vec<New>, Refusal> {
+        needs_words(&why)?;
+        if let Some(LooseWhat::Weighing { weighing: w, basis }) = self.loose.get(&weighing).map(|l| &l.what) {
+            let link = self.link_said(bench, container, role, (w.mass, *basis), &w.at, None).map_err(Refusal)?;
+            return Ok(vec![New::by(who, Fact::WeighingTied { weighing, link, why })]);
+        }
+        self.may_be_taken_out(weighing)?;
+        // A weighing that is tied already is judged as if it were not.
+        let mut without = self.around(weighing, container);
+        let untied = without
+            .untie(weighing, &mut Default::default())
+            .ok_or_else(|| no(format!("no weighing has the number {weighing}, or its specimen is not at hand")))?;
+        let w = &untied.weighing;
+        let link = without.link_said(bench, container, role, (w.mass, Basis::Gross), &w.at, Some(&untied)).map_err(Refusal)?;
+        Ok(vec![New::by(who, Fact::WeighingTied { weighing, link, why })])
+    }
+
+    /// The part of the laboratory that tying a weighing to a container looks at.
+    fn around(&self, weighing: Seq, container: &ContainerId) -> Lab {
+        let used = |c: &Container| c.tares.iter().chain(&c.with_lid).any(|w| w.seq == weighing);
+        let of_trial = |s: &Specimen| s.weighings().any(|w| w.seq == weighing);
+        let mut specimens: BTreeSet<&SpecimenId> = self.specimens.values().filter(|s| of_trial(s)).map(|s| &s.id).collect();
+        let trials = self.specimens.values().flat_map(|s| &s.trials);
+        let holder = trials.filter(|t| t.weighings().any(|w| w.seq == weighing)).map(|t| &t.container);
+        let ids: BTreeSet<&ContainerId> =
+            holder.chain(self.containers.values().filter(|c| used(c)).map(|c| &c.id)).chain([container]).collect();
+        let containers: Vec<&Container> = ids.into_iter().filter_map(|id| self.containers.get(id)).collect();
+        for held in containers.iter().filter_map(|c| c.holding.as_ref()) {
+            specimens.insert(&held.specimen);
+            specimens.extend(held.before.as_ref().map(|b| &b.specimen));
+        }
+        specimens.extend(containers.iter().filter_map(|c| c.released.as_ref()).map(|r| &r.holding.specimen));
+        for bench in self.benches.values() {
+            specimens.extend(bench.intention.as_ref().map(|w| &w.specimen));
+            specimens.extend(bench.owed.as_ref().map(|o| &o.specimen));
+        }
+        let specimens = specimens.into_iter().filter_map(|id| self.specimens.get(id));
+        Lab {
+            setup: self.setup.clone(),
+            specimens: specimens.map(|s| (s.id.clone(), s.clone())).collect(),
+            containers: containers.into_iter().map(|c| (c.id.clone(), c.clone())).collect(),
+            benches: self.benches.clone(),
+            instruments: BTreeMap::new(),
+            loose: BTreeMap::new(),
+        }
+    }
+
+    fn ask_typed(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::TypeMass { bench, container, mass_g, role, who } => {
+                self.bench_there(&bench)?;
+                let mass = typed_mass(&mass_g)?;
+                let link = match role {
+                    Some(role) => self.link_said(&bench, &container, role, (mass, Basis::Gross), at, None),
+                    None => self.link(core::slice::from_ref(&bench), &container, mass, Basis::Gross, at),
+                };
+                let link = Some(link.map_err(Refusal)?);
+                let (bench, or_at) = (Some(bench), vec![]);
+                let weighed = Weighed { mass_ug: mass, bench, or_at, balance: None, taken: None, link, loose: None };
+                Ok(vec![New::by(Some(who), Fact::Weighed(weighed))])
+            }
+            Ask::TypeDrops { bench, drops, who } => {
+                let work = self.bench_there(&bench)?.intention.as_ref().filter(|w| w.intention == Intention::Liquid);
+                let Some(specimen) = work.map(|w| w.specimen.clone()) else {
+                    return Err(no(format!("no liquid limit is in work at bench {bench}; say which specimen first")));
+                };
+                drops_believable(drops)?;
+                self.room_for_count(&bench).map_err(Refusal)?;
+                let mut facts = self.late_slice(&bench, &specimen, at);
+                let (bench, specimen) = (Some(bench), Some(specimen));
+                let counted = Counted { drops, bench, cup: None, run: None, specimen, replaces: None, loose: None };
+                facts.push(New::by(Some(who), Fact::Counted(counted)));
+                Ok(facts)
+            }
+            _ => Ok(vec![]),
+        }
+    }
+
+    fn ask_container(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::RegisterContainer { container, lid_g, who } => {
+                let lid = lid_g.as_deref().map(typed_mass).transpose()?;
+                if SpecimenId::new(container.as_str()).is_ok_and(|s| self.specimens.contains_key(&s)) {
+                    return Err(no(format!(
+                        "{container} is a specimen: a code can mean only one thing, so number the container otherwise"
+                    )));
+                }
+                Ok(vec![New::by(who, Fact::ContainerRegistered { container, lid })])
+            }
+            Ask::FreeContainer { container, who, why } => {
+                needs_words(&why)?;
+                match self.containers.get(&container) {
+                    Some(c) if c.holding.is_some() => Ok(vec![New::by(Some(who), Fact::ContainerFreed { container, why })]),
+                    _ => Err(no(format!("{container} holds nothing"))),
+                }
+            }
+            _ => Ok(vec![]),
+        }
+    }
+
+    fn ask_oven(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::IntoOven { containers, celsius, who } => {
+                self.all_hold(&containers)?;
+                if celsius.is_some_and(|c| !(20.0..=300.0).contains(&c)) {
+                    return Err(no(String::from("an oven temperature lies between 20 and 300 °C")));
+                }
+                Ok(vec![New::by(who, Fact::IntoOven { containers, celsius })])
+            }
+            Ask::OutOfOven { containers, who } => {
+                self.all_hold(&containers)?;
+                Ok(vec![New::by(who, Fact::OutOfOven { containers })])
+            }
+            Ask::OvenOff { from, to, who, why } => {
+                let time = |t: &str| {
+                    parse_rfc3339(t).ok_or_else(|| no(format!("\"{t}\" is not a time; write it like 2026-03-02T08:14:05Z")))
+                };
+                needs_words(&why)?;
+                let (from_utc_us, to_utc_us) = (time(&from)?, time(&to)?);
+                if from_utc_us >= to_utc_us || to_utc_us > at.utc_us {
+                    return Err(no(String::from("the oven was off from a time to a later one, both past")));
+                }
+                self.room_in_oven(&self.wet_before(to_utc_us))?;
+                Ok(vec![New::by(Some(who), Fact::OvenOff { from_utc_us, to_utc_us, why })])
+            }
+            _ => Ok(vec![]),
+        }
+    }
+
+    fn all_hold(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        if containers.is_empty() {
+            return Err(no(String::from("name the containers")));
+        }
+        self.room_in_oven(containers)?;
+        match containers.iter().find(|c| self.containers.get(*c).is_none_or(|c| c.holding.is_none())) {
+            Some(empty) => Err(no(format!("{empty} holds nothing that was weighed wet; weigh it first, or leave it out"))),
+            None => Ok(()),
+        }
+    }
+
+    fn room_in_oven(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        let holding = |id: &&ContainerId| self.containers.get(*id).and_then(|c| c.holding.as_ref());
+        let full = |id: &&ContainerId| holding(id).is_some_and(|h| h.oven.stays.len().max(h.oven.off.len()) >= STAYS_KEPT);
+        match containers.iter().find(full) {
+            Some(id) => {
+                Err(no(format!("{id} has been in and out of the oven {STAYS_KEPT} times: weigh it dry, or leave it out")))
+            }
+            None => Ok(()),
+        }
+    }
+
+    fn ask_result(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::NotObtainable { specimen, limit, because, who } => {
+                needs_words(&because)?;
+                self.specimen_there(&specimen)?;
+                Ok(vec![New::by(who, Fact::NotObtainable { specimen, limit, because })])
+            }
+            Ask::AnswerCheck { specimen, check, about, says, who } => {
+                needs_words(&says)?;
+                let limits = self.specimen_there(&specimen)?.limits.as_ref();
+                let found = limits.is_some_and(|l| l.checks.iter().any(|c| c.check == check && c.about == about));
+                match found {
+                    true => Ok(vec![New::by(Some(who), Fact::CheckAnswered { specimen, check, about, says })]),
+                    false => Err(no(format!("no check \"{check}\" speaks about \"{about}\" of {specimen}"))),
+                }
+            }
+            Ask::Review { specimen, who } => self.review(specimen, who),
+            _ => Ok(vec![]),
+        }
+    }
+
+    fn review(&self, specimen: SpecimenId, who: Operator) -> Result<Vec<New>, Refusal> {
+        let state = self.specimen_there(&specimen)?;
+        match state.limits.as_ref().map(|l| l.state) {
+            Some(State::Complete) => (),
+            Some(State::Reviewed) => return Err(no(format!("the result of {specimen} is reviewed already"))),
+            _ => {
+                return Err(no(format!(
+                    "the result of {specimen} is not complete; bring what is missing and answer its holds first"
+                )));
+            }
+        }
+        if worked_on(state).any(|by| *by == who) {
+            return Err(no(format!("{who} worked on {specimen}; a second person reviews")));
+        }
+        let revision = state.revision;
+        Ok(vec![New::by(Some(who), Fact::Reviewed { specimen, revision })])
+    }
+}
+
+/// Everybody whose hand is in a specimen's determinations: who weighed, counted, corrected or set aside.
+fn worked_on(specimen: &Specimen) -> impl Iterator<Item = &Operator> {
+    let weighings = specimen.weighings().flat_map(|w| w.by.iter().chain(w.corrected.iter().filter_map(|c| c.by.as_ref())));
+    let counts = specimen.counts.iter().flat_map(|c| c.by.iter().chain(c.corrected.iter().filter_map(|s| s.by.as_ref())));
+    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref()).filter_map(|s| s.by.as_ref());
+    weighings.chain(counts).chain(aside)
+}
+
+/// A number of drops that a person states.
+pub(super) fn drops_believable(drops: u32) -> Result<(), Refusal> {
+    match (1..=500).contains(&drops) {
+        true => Ok(()),
+        false => Err(no(String::from("a count lies between 1 and 500 drops"))),
+    }
+}
+
+/// A mass that a person typed, in grams.
+pub(super) fn typed_mass(text: &str) -> Result<Mass, Refusal> {
+    let mass = Mass::parse(text, MassUnit::Gram).map_err(|e| no(format!("\"{text}\" is not a mass in grams: {e}")))?;
+    if mass <= Mass::ZERO {
+        return Err(no(format!("\"{text}\" g is not more than nothing")));
+    }
+    Ok(mass)
+}
+
+/// Corrections say why.
+pub(super) fn needs_words(why: &str) -> Result<(), Refusal> {
+    match why.trim().is_empty() {
+        true => Err(no(String::from("say why, in a few words: the record keeps it"))),
+        false => Ok(()),
+    }
+}

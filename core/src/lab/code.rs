@@ -1,0 +1,151 @@
+//! A code was read: a card, a specimen, or a container.
+
+use super::ask::Ask;
+use super::entities::{Bench, Loose, LooseWhat};
+use super::{Lab, New};
+use crate::fact::{Fact, Intention};
+use crate::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
+use crate::sense::InputNo;
+use crate::sheet::Seq;
+use crate::stamp::Stamp;
+use alloc::format;
+use alloc::string::String;
+use alloc::vec;
+use alloc::vec::Vec;
+
+impl Lab {
+    pub(super) fn code_read(&self, scanner: &InstrumentName, text: &str, at: &Stamp, input: InputNo) -> Vec<New> {
+        let benches = self.benches_of(scanner);
+        let Some((first, others)) = benches.split_first() else { return vec![] };
+        let facts = self.code_at(first, others, text, at).unwrap_or_else(|says| vec![self.refused(first, says)]);
+        facts.into_iter().map(|f| f.through(input)).collect()
+    }
+
+    pub(super) fn refused(&self, bench: &BenchName, says: String) -> New {
+        New::by(self.signed_in(Some(bench)), Fact::Refused { bench: bench.clone(), says })
+    }
+
+    /// What a code means at a bench.
+    pub(super) fn code_at(&self, bench: &BenchName, or_at: &[BenchName], text: &str, at: &Stamp) -> Result<Vec<New>, String> {
+        let text = text.trim();
+        if let Some(card) = text.strip_prefix('+') {
+            return self.card(bench, card, at);
+        }
+        if let Ok(specimen) = SpecimenId::new(text)
+            && self.specimens.contains_key(&specimen)
+        {
+            let intention = self.benches.get(bench).and_then(|b| b.intention.as_ref()).map_or(Intention::Liquid, |w| w.intention);
+            return Ok(self.intend(bench, &specimen, intention, None));
+        }
+        let container =
+            ContainerId::new(text).map_err(|e| format!("the code read as \"{}\" is no container: {e}", printable(text)))?;
+        self.container_read(bench, or_at, &container, at)
+    }
+
+    fn container_read(
+        &self,
+        bench: &BenchName,
+        or_at: &[BenchName],
+        container: &ContainerId,
+        at: &Stamp,
+    ) -> Result<Vec<New>, String> {
+        let here = self.benches.get(bench).ok_or_else(|| format!("there is no bench {bench}"))?;
+        let in_hand = || {
+            let unused = here.hand.as_ref().filter(|h| h.weighing.is_none() && h.container != *container);
+            let instead_of = unused.map(|h| h.container.clone());
+            let (bench, container, or_at) = (bench.clone(), container.clone(), or_at.to_vec());
+            New::by(here.signed_in.clone(), Fact::TakenInHand { bench, container, or_at, instead_of })
+        };
+        let places: Vec<BenchName> = [bench].into_iter().chain(or_at).cloned().collect();
+        if let Some((weighing, printed)) = self.loose_on_pan(&places, at) {
+            return Ok(self.tie_late(&places, container, (weighing, printed), in_hand()));
+        }
+        // The same code again: nothing new, and it stays in hand.
+        let same = here.hand.as_ref().is_some_and(|h| h.container == *container && h.or_at == or_at);
+        Ok(if same { vec![] } else { vec![in_hand()] })
+    }
+
+    /// A loose weighing that still lies on a pan of these benches, or was printed just now.
+    fn loose_on_pan(&self, places: &[BenchName], at: &Stamp) -> Option<(Seq, bool)> {
+        let near = |balance: &InstrumentName| self.benches_of(balance).iter().any(|b| places.contains(b));
+        let pans = self.instruments.iter().filter(|(balance, _)| near(balance)).filter_map(|(_, i)| i.pan.as_ref());
+        let in_time = 0..=self.setup.linking.code_after_us;
+        let fresh = pans.filter(|p| p.loose && (!p.printed || in_time.contains(&at.since(&p.at).us)));
+        fresh.map(|p| (p.seq, p.printed)).filter(|(seq, _)| self.loose.contains_key(seq)).max()
+    }
+
+    /// The code came after the mass.
+    fn tie_late(
+        &self,
+        places: &[BenchName],
+        container: &ContainerId,
+        (weighing, printed): (Seq, bool),
+        in_hand: New,
+    ) -> Vec<New> {
+        let Some(bench) = places.first() else { return vec![] };
+        let who = self.signed_in(Some(bench));
+        let Some(Loose { what: LooseWhat::Weighing { weighing: w, basis }, .. }) = self.loose.get(&weighing) else {
+            return vec![in_hand];
+        };
+        match self.link(places, container, w.mass, *basis, &w.at) {
+            Ok(link) => {
+                let why = String::from("the code was read after the mass");
+                let mut facts = vec![in_hand, New::by(who, Fact::WeighingTied { weighing, link, why })];
+                if printed {
+                    let why = String::from("its mass was printed");
+                    facts.push(New::plain(Fact::HandEmptied { bench: bench.clone(), why }));
+                }
+                facts
+            }
+            Err(says) => vec![in_hand, self.refused(bench, says)],
+        }
+    }
+
+    fn card(&self, bench: &BenchName, card: &str, at: &Stamp) -> Result<Vec<New>, String> {
+        let current = self.benches.get(bench).and_then(|b| b.intention.as_ref()).map(|w| w.specimen.clone());
+        let intend = |intention| match &current {
+            Some(specimen) => Ok(self.intend(bench, specimen, intention, None)),
+            None => Err(String::from("no specimen is in work here: read the specimen's code first")),
+        };
+        let who = self.signed_in(Some(bench));
+        let ask = match card {
+            "liquid" => return intend(Intention::Liquid),
+            "plastic" => return intend(Intention::Plastic),
+            "natural" => return intend(Intention::Natural),
+            "nothing" => Ask::IntendNothing { bench: bench.clone(), who },
+            "undo" => Ask::Undo { bench: bench.clone(), who, why: None },
+            "new-paste" => Ask::NewPaste { bench: bench.clone(), who, why: None },
+            "sign-out" => Ask::SignOut { bench: bench.clone() },
+            other => match other.strip_prefix("by-").map(Operator::new) {
+                Some(Ok(operator)) => Ask::SignIn { bench: bench.clone(), operator },
+                _ => {
+                    return Err(format!(
+                        "no card is called \"+{}\": the cards are +liquid, +plastic, +natural, +nothing, +undo, +new-paste, +sign-out and +by-INITIALS",
+                        printable(other)
+                    ));
+                }
+            },
+        };
+        self.asked(ask, at).map_err(|r| r.0)
+    }
+
+    pub(super) fn intend(
+        &self,
+        bench: &BenchName,
+        specimen: &SpecimenId,
+        intention: Intention,
+        who: Option<Operator>,
+    ) -> Vec<New> {
+        let same = |b: &Bench| b.intention.as_ref().is_some_and(|w| w.specimen == *specimen && w.intention == intention);
+        if self.benches.get(bench).is_some_and(same) {
+            return vec![];
+        }
+        let who = who.or_else(|| self.signed_in(Some(bench)));
+        vec![New::by(who, Fact::IntentionSet { bench: bench.clone(), specimen: specimen.clone(), intention })]
+    }
+}
+
+/// A text that may hold anything, made fit to be shown.
+fn printable(text: &str) -> String {
+    text.chars().take(40).map(|c| if c.is_ascii_graphic() || c == ' ' { c } else { '?' }).collect()
+}

@@ -1,0 +1,175 @@
+//! From a specimen's state to its result.
+
+use super::entities::{Count, Entity, Specimen, TrialRecord};
+use super::{Lab, New, Outcome, oven};
+use crate::evaluate::evaluate;
+use crate::fact::{Counted, Fact, Limit, Recorded};
+use crate::limits::{Limits, State};
+use crate::sheet::{Answer, Closure, Kind, Sheet, Trial};
+use crate::soil::determined::about;
+use alloc::format;
+use alloc::string::String;
+use alloc::vec::Vec;
+
+impl Lab {
+    /// Results that have changed with what was just applied.
+    pub(super) fn follow(&self, outcome: &Outcome) -> Vec<New> {
+        let specimens = outcome.touched.iter().filter_map(|e| match e {
+            Entity::Specimen(id) => self.specimens.get(id),
+            _ => None,
+        });
+        let causes: Vec<String> = outcome.facts.iter().filter_map(cause).collect();
+        specimens.filter_map(|s| self.new_result(s, &causes)).map(New::plain).collect()
+    }
+
+    fn new_result(&self, specimen: &Specimen, causes: &[String]) -> Option<Fact> {
+        let method = self.setup.methods.get(&specimen.method)?;
+        let sheet = sheet(specimen);
+        if sheet.trials.is_empty() && sheet.liquid_not_obtainable.is_none() && sheet.plastic_not_obtainable.is_none() {
+            return None;
+        }
+        let mut limits = evaluate(&sheet, method);
+        limits.edition.clone_from(&specimen.edition);
+        let reviewed = specimen.reviewed.as_ref().is_some_and(|(of, _)| *of == specimen.revision);
+        if reviewed && limits.state == State::Complete && same_content(specimen.limits.as_ref(), &limits) {
+            limits.state = State::Reviewed;
+        }
+        if specimen.limits.as_ref() == Some(&limits) {
+            return None;
+        }
+        let changed = changes(specimen.limits.as_ref(), &limits, causes);
+        Some(Fact::LimitsComputed {
+            specimen: specimen.id.clone(),
+            revision: specimen.revision + 1,
+            changed,
+            limits: alloc::boxed::Box::new(limits),
+        })
+    }
+}
+
+fn same_content(old: Option<&Limits>, new: &Limits) -> bool {
+    old.is_some_and(|old| {
+        let mut old = old.clone();
+        old.state = new.state;
+        old == *new
+    })
+}
+
+/// What is different from the revision before, and which correction led to it, in words.
+fn changes(old: Option<&Limits>, new: &Limits, causes: &[String]) -> Vec<String> {
+    let Some(old) = old else { return Vec::new() };
+    let mut words = Vec::new();
+    let mut number = |name: &str, a: Option<f64>, b: Option<f64>| {
+        let show = |v: Option<f64>| v.map_or(String::from("none"), |v| format!("{v:.2}"));
+        if a != b {
+            words.push(format!("{name}: {} → {}", show(a), show(b)));
+        }
+    };
+    number("liquid limit", old.liquid_limit.as_ref().map(|l| l.value), new.liquid_limit.as_ref().map(|l| l.value));
+    number("plastic limit", old.plastic_limit.as_ref().map(|l| l.value), new.plastic_limit.as_ref().map(|l| l.value));
+    number("plasticity index", old.plasticity_index.value, new.plasticity_index.value);
+    number("natural water content", old.natural_water_percent, new.natural_water_percent);
+    if old.plasticity_index.non_plastic != new.plasticity_index.non_plastic {
+        words.push(String::from(if new.plasticity_index.non_plastic { "now non-plastic" } else { "no longer non-plastic" }));
+    }
+    let aside = |l: &Limits| l.trials.iter().filter(|t| t.set_aside.is_some()).count();
+    if aside(old) != aside(new) {
+        words.push(format!("determinations set aside: {} → {}", aside(old), aside(new)));
+    }
+    if old.state != new.state {
+        words.push(format!("{} → {}", state_word(old.state), state_word(new.state)));
+    }
+    words.extend(causes.iter().cloned());
+    words
+}
+
+fn state_word(state: State) -> &'static str {
+    match state {
+        State::Provisional => "provisional",
+        State::Complete => "complete",
+        State::Reviewed => "reviewed",
+    }
+}
+
+/// Why a result changed, where a person changed something that was already there.
+fn cause(r: &Recorded) -> Option<String> {
+    let says = match &r.fact {
+        Fact::MassAmended { weighing, was, mass, why } => {
+            format!("mass of weighing {weighing} corrected, {was} → {mass} g: {why}")
+        }
+        Fact::DropsAmended { count, was, drops, why } => format!("drops of count {count} corrected, {was} → {drops}: {why}"),
+        Fact::SetAside { what, why } => format!("fact {what} set aside: {why}"),
+        Fact::TrialSetAside { trial, no, why, .. } => format!("{} set aside: {why}", about(*trial, *no)),
+        Fact::WeighingTied { weighing, link, why } => format!("weighing {weighing} tied to {}: {why}", link.container),
+        Fact::CountTied { count, why, .. } => format!("count {count} tied: {why}"),
+        Fact::Counted(Counted { replaces: Some(old), drops, .. }) => {
+            format!("the counter told count {old} again, now {drops} drops")
+        }
+        Fact::OvenOff { why, .. } => format!("the oven was off: {why}"),
+        Fact::NotObtainable { limit: Limit::Liquid, because, .. } => format!("liquid limit not obtainable: {because}"),
+        Fact::NotObtainable { limit: Limit::Plastic, because, .. } => format!("plastic limit not obtainable: {because}"),
+        Fact::CheckAnswered { check, about, .. } => format!("check {check} about {about} answered"),
+        _ => return None,
+    };
+    Some(match &r.who {
+        Some(who) => format!("{says} ({who})"),
+        None => says,
+    })
+}
+
+/// A specimen's state as a sheet that can be computed.
+pub fn sheet(specimen: &Specimen) -> Sheet {
+    let answer = |a: &super::entities::CheckAnswer| Answer {
+        check: a.check.clone(),
+        about: a.about.clone(),
+        says: a.says.clone(),
+        by: a.by.clone(),
+    };
+    Sheet {
+        specimen: specimen.id.clone(),
+        trials: specimen.trials.iter().map(|t| trial(specimen, t)).collect(),
+        liquid_not_obtainable: specimen.liquid_not_obtainable.as_ref().map(|s| s.why.clone()),
+        plastic_not_obtainable: specimen.plastic_not_obtainable.as_ref().map(|s| s.why.clone()),
+        passing_75um_percent: specimen.passing_75um_percent,
+        clay_percent: specimen.clay_percent,
+        answers: specimen.answers.iter().map(answer).collect(),
+        reviewed: false,
+    }
+}
+
+fn trial(specimen: &Specimen, t: &TrialRecord) -> Trial {
+    let counts: Vec<&Count> =
+        t.counts.iter().filter_map(|&c| specimen.count(c)).filter(|c| c.set_aside.is_none() && c.superseded.is_none()).collect();
+    let wet = t.wets.last();
+    let weighings = t.tare.iter().chain(&t.wets).chain(t.dries.iter().map(|d| &d.weighing));
+    let typed = weighings.clone().any(|w| w.typed) || counts.iter().any(|c| c.typed);
+    Trial {
+        kind: t.kind,
+        no: t.no,
+        closures: if t.kind == Kind::Liquid { counts.iter().map(|c| closure(c)).collect() } else { Vec::new() },
+        container: Some(t.container.clone()),
+        tare: t.tare.as_ref().map(|w| w.mass),
+        wet: wet.map(|w| w.mass),
+        dry: t.dries.iter().map(oven::dry_weighing).collect(),
+        water_percent: None,
+        set_aside: t.set_aside.as_ref().map(|s| s.why.clone()),
+        typed,
+        by: wet.and_then(|w| w.by.clone()),
+        balance: wet.and_then(|w| w.balance.clone()),
+        cup: counts.last().and_then(|c| c.cup.clone()),
+        at_utc_us: wet.map(|w| w.at.utc_us),
+        facts: counts.iter().map(|c| c.seq).chain(weighings.map(|w| w.seq)).collect(),
+    }
+}
+
+fn closure(count: &Count) -> Closure {
+    Closure {
+        drops: count.drops,
+        rate_per_s: count.rate_per_s,
+        gaps: count.gaps,
+        doubles: count.doubles,
+        interrupted: count.interrupted.clone(),
+        typed: count.typed,
+        fact: Some(count.seq),
+    }
+}
