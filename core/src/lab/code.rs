@@ -38,7 +38,7 @@ impl Lab {
             return Ok(self.intend(bench, &specimen, intention, None));
         }
         let container =
-            ContainerId::new(text).map_err(|e| format!("the code read as \"{}\" is no container: {e}", printable(text)))?;
+            ContainerId::new(text).map_err(|e| format!("the code read as \"{}\" is no container: {}", printable(text), printable(&format!("{e}"))))?;
         self.container_read(bench, or_at, &container, at)
     }
 
@@ -147,5 +147,5 @@ impl Lab {
 
 /// A text that may hold anything, made fit to be shown.
 fn printable(text: &str) -> String {
-    text.chars().take(40).map(|c| if c.is_ascii_graphic() || c == ' ' { c } else { '?' }).collect()
+    text.chars().take(100).map(|c| if c.is_ascii_graphic() || c == ' ' { c } else { '?' }).collect()
 }

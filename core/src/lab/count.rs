@@ -51,10 +51,10 @@ impl Lab {
     /// of the first was taken.
     fn told_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<(&Specimen, &Count)> {
         let all = self.specimens.values().flat_map(|s| s.counts.iter().map(move |c| (s, c)));
-        let sliced = |s: &Specimen, c: &Count| s.trials.iter().any(|t| t.counts.contains(&c.seq));
-        let same =
-            |(s, c): &(&Specimen, &Count)| is_told_by(c, cup, run) && c.bench.is_some() && (began_with(c, run) || !sliced(s, c));
-        all.filter(same).max_by_key(|(_, c)| c.seq)
+        let (specimen, latest) = all.filter(|(_, c)| is_told_by(c, cup, run)).max_by_key(|(_, c)| c.seq)?;
+        let sliced = specimen.trials.iter().any(|t| t.counts.contains(&latest.seq));
+        let same = latest.bench.is_some() && (began_with(latest, run) || !sliced);
+        same.then_some((specimen, latest))
     }
 
     fn loose_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<Seq> {
