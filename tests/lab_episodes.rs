@@ -726,9 +726,11 @@ fn a_second_person_reviews_and_a_later_change_takes_it_back() {
 fn a_hold_is_answered() {
     let mut play = Play::open();
     whole_specimen(&mut play, "S-1", "C");
-    let count = play.trial("S-1", 3).counts[0];
-    // The fourth trial's drops are far off the line now.
-    play.ask(&format!(r#"{{"ask":"amend_drops","count":{count},"drops":33,"who":"AB","why":"other sheet"}}"#));
+    // Drops of the driest and the wettest trial exchanged: the flow line slopes the wrong way.
+    for (n, drops) in [(0, 17), (3, 34)] {
+        let count = play.trial("S-1", n).counts[0];
+        play.ask(&format!(r#"{{"ask":"amend_drops","count":{count},"drops":{drops},"who":"AB","why":"other sheet"}}"#));
+    }
     let holds: Vec<_> = tarecup_core::evaluate::open_holds(limits(&play, "S-1")).into_iter().cloned().collect();
     assert!(!holds.is_empty(), "{:?}", limits(&play, "S-1").checks);
     assert_eq!(limits(&play, "S-1").state, State::Provisional);

@@ -121,7 +121,7 @@ fn wet_role(held: &Held, tare: Option<Mass>, before: &Before, mass: Mass, near: 
         };
     }
     if mass > wet {
-        if held.kind == Kind::Thread && !held.been_in_oven && !held.finished {
+        if held.kind == Kind::Thread && !held.oven_recorded && !held.finished {
             return Ok(Role::Grown);
         }
         return new_use(held, before, || {
@@ -315,6 +315,8 @@ mod tests {
     fn threads_in_the_oven_do_not_grow() {
         let mut before = held(Some(21.43), 25.00, None, Kind::Thread);
         before.held.as_mut().unwrap().been_in_oven = true;
+        assert_eq!(role(&before, g(28.0), NEAR), Ok(Role::Grown), "hours later, but nobody says that it was dried");
+        before.held.as_mut().unwrap().oven_recorded = true;
         assert!(role(&before, g(28.0), NEAR).is_err());
     }
 }
