@@ -260,7 +260,9 @@ fn a_slip_is_printed_twice() {
     let first = play.last_weighing();
     assert_eq!(kinds(&play.wait(9 * SECOND).print("pan-n", "21.43")), ["slip_repeated"], "within ten seconds");
     let repeated = play.facts.last().unwrap();
-    assert!(matches!(repeated.fact, Fact::SlipRepeated { weighing, input } if weighing == first && repeated.through == Some(input)));
+    assert!(
+        matches!(repeated.fact, Fact::SlipRepeated { weighing, input } if weighing == first && repeated.through == Some(input))
+    );
     play.wait(SECOND).print("pan-n", "21.43");
     assert!(play.loose_why(play.last_weighing()).contains("no container is in hand"), "after ten seconds it is another one");
     let mut play = Play::open();
@@ -385,9 +387,8 @@ fn a_count_of_the_wrong_specimen_is_tied_to_the_right_one() {
     assert!(play.specimen("S-1").counts.is_empty());
     assert_eq!(play.bench("north").owed.as_ref().unwrap().specimen, specimen_id("S-2"));
     let other = play.count(20);
-    let says = play.refused(&format!(
-        r#"{{"ask":"tie_count","count":{count},"bench":"north","specimen":"S-2","who":"AB","why":"again"}}"#
-    ));
+    let says = play
+        .refused(&format!(r#"{{"ask":"tie_count","count":{count},"bench":"north","specimen":"S-2","who":"AB","why":"again"}}"#));
     assert!(says.contains("another slice is owed") && play.bench("north").owed.as_ref().unwrap().counts == [other], "{says}");
 }
 
@@ -405,7 +406,11 @@ fn a_loose_weighing_is_tied_later_and_again_to_the_right_container() {
     assert_eq!(play.container("C2").standing, Standing::Dry);
     play.tie(loose, "C1", "dry");
     assert_eq!(play.shown("S-1"), ["Liquid 1 C1 21.43 38.22 33.39", "Liquid 2 C2 20.00 36.00"]);
-    assert_eq!(documents(&play.lab)["container C2"], before["container C2"], "the wrong one is as if nothing had been: in the oven");
+    assert_eq!(
+        documents(&play.lab)["container C2"],
+        before["container C2"],
+        "the wrong one is as if nothing had been: in the oven"
+    );
     assert_eq!(play.container("C1").standing, Standing::Dry);
     assert_eq!(play.trial("S-1", 0).dries[0].weighing.by.as_ref().unwrap().as_str(), "AB");
     play.wait(HOUR).weigh("C2", "31.00");
@@ -450,7 +455,9 @@ fn a_mass_is_amended() {
     play.ask(&format!(r#"{{"ask":"amend_mass","weighing":{tare},"mass_g":"17.51","who":"CD","why":"slip"}}"#));
     assert_eq!(play.shown("S-1")[1], "Liquid 2 C2 17.51 55.53 46.05");
     assert_eq!(play.container("C2").tare().unwrap().mass, g("17.51"));
-    for (mass, word) in [("0", "more than nothing"), ("-3", "more than nothing"), ("abc", "is not a mass"), ("1e9", "is not a mass")] {
+    for (mass, word) in
+        [("0", "more than nothing"), ("-3", "more than nothing"), ("abc", "is not a mass"), ("1e9", "is not a mass")]
+    {
         let says = play.refused(&format!(r#"{{"ask":"amend_mass","weighing":{wet},"mass_g":"{mass}","who":"CD","why":"x"}}"#));
         assert!(says.contains(word), "{says}");
     }
@@ -701,7 +708,9 @@ fn a_second_person_reviews_and_a_later_change_takes_it_back() {
     let review = |who: &str| format!(r#"{{"ask":"review","specimen":"S-1","who":"{who}"}}"#);
     for check in limits(&play, "S-1").checks.clone() {
         let (check, about) = (check.check, check.about);
-        play.ask(&format!(r#"{{"ask":"answer_check","specimen":"S-1","check":"{check}","about":"{about}","says":"seen","who":"AB"}}"#));
+        play.ask(&format!(
+            r#"{{"ask":"answer_check","specimen":"S-1","check":"{check}","about":"{about}","says":"seen","who":"AB"}}"#
+        ));
     }
     assert_eq!(limits(&play, "S-1").state, State::Complete, "{:?}", limits(&play, "S-1").checks);
     // Published data, answers computed for this project from the sheet: least squares 33.60, mean of two 18.88.
@@ -792,7 +801,9 @@ fn a_finished_specimen_is_forgotten_and_a_correction_of_its_tare_asks_for_it() {
     whole_specimen(&mut play, "S-1", "C");
     for check in limits(&play, "S-1").checks.clone() {
         let (check, about) = (check.check, check.about);
-        play.ask(&format!(r#"{{"ask":"answer_check","specimen":"S-1","check":"{check}","about":"{about}","says":"seen","who":"AB"}}"#));
+        play.ask(&format!(
+            r#"{{"ask":"answer_check","specimen":"S-1","check":"{check}","about":"{about}","says":"seen","who":"AB"}}"#
+        ));
     }
     play.lab.forget_finished();
     assert!(play.lab.specimen(&specimen_id("S-1")).is_some(), "its containers still hold its soil");
@@ -832,4 +843,92 @@ fn one_code_means_one_thing() {
         assert_eq!(kinds(&play.scan("scan-n", code)), ["refused"], "{code:?}");
         assert!(play.next_step("north").chars().all(|c| !c.is_control()));
     }
+}
+
+#[test]
+fn after_a_crash_what_benches_and_containers_name_is_asked_for() {
+    let mut play = Play::open();
+    wet_trials(&mut play, "S-1", &[(28, "C1", "21.43", "38.22")]);
+    let whole = play.specimen("S-1").clone();
+    // Documents of containers and benches are there, that of the specimen is not yet.
+    let mut lab = Lab::new(play.lab.setup().clone());
+    lab.load(tarecup_core::lab::Loaded::Container(play.container("C1").clone()));
+    lab.load(tarecup_core::lab::Loaded::Bench(play.bench("north").clone()));
+    assert_eq!(lab.missing(), [specimen_id("S-1")]);
+    let run = play.run(25, 900, 950);
+    let mut without = lab.clone();
+    let outcome = without.take(Input::Count { cup: instrument("cup-n"), run }, play.now, 100).unwrap();
+    assert!(matches!(&outcome.facts[0].fact, Fact::Counted(c) if c.loose.as_ref().unwrap().contains("could not be read")));
+    assert!(without.loose(100).is_some(), "and the count is not lost");
+    lab.load(tarecup_core::lab::Loaded::Specimen(Box::new(whole)));
+    assert!(lab.missing().is_empty());
+}
+
+#[test]
+fn the_bench_says_what_comes_next() {
+    let mut play = Play::open();
+    let next =
+        |play: &Play, words: &str| assert!(play.next_step("north").contains(words), "{words}: {}", play.next_step("north"));
+    next(&play, "Read a specimen's code");
+    play.scan("scan-n", "C1");
+    next(&play, "Container C1 is in hand: put it on the pan, empty");
+    play.settle("pan-n", "21.43");
+    next(&play, "C1 is recorded: take it off");
+    play.lift("pan-n");
+    play.scan("scan-n", "S-1");
+    next(&play, "trial 1 of 3: cut the groove");
+    play.count(28);
+    next(&play, "28 drops for S-1: take a slice");
+    play.scan("scan-n", "C1");
+    next(&play, "with the slice");
+    play.settle("pan-n", "38.22");
+    play.lift("pan-n");
+    next(&play, "trial 2 of 3");
+    play.scan("scan-n", "+plastic");
+    next(&play, "roll threads");
+    play.scan("scan-n", "C5");
+    next(&play, "its empty mass is not known");
+    play.settle("pan-n", "25.00");
+    play.lift("pan-n");
+    play.scan("scan-n", "C5");
+    next(&play, "with more threads, or dried");
+    assert!(play.lab.guide(&bench_name("nowhere")).is_none());
+}
+
+#[test]
+fn words_have_a_length_that_fits_a_record() {
+    let mut play = Play::open();
+    let long = "x".repeat(1_001);
+    let says = play.refused(&format!(r#"{{"ask":"open_specimen","specimen":"S-2","description":"{long}"}}"#));
+    assert!(says.contains("at most 1000 characters"), "{says}");
+    let seq = play.weigh("C1", "21.43");
+    let says = play.refused(&format!(r#"{{"ask":"set_aside","what":{seq},"who":"AB","why":"{long}"}}"#));
+    assert!(says.contains("at most 1000 characters"), "{says}");
+}
+
+#[test]
+fn the_motor_was_stopped_and_went_on_with_its_running_total() {
+    use tarecup_core::sense::count::Count;
+    use tarecup_core::sense::{CountLimits, Happening};
+    use tarecup_core::signal::Signal;
+    let mut play = Play::open();
+    play.intend("north", "S-1", "liquid");
+    let mut sense = Count::new(CountLimits::default());
+    let mut runs = Vec::new();
+    let mut heard = |sense: &mut Count, play: &mut Play, signal: Signal, input: u64| {
+        for happening in sense.hear(&signal, input, play.now).into_iter().flatten() {
+            if let Happening::CountEnded(run) = happening {
+                runs.push(run.drops);
+                play.take(Input::Count { cup: instrument("cup-n"), run });
+            }
+        }
+        play.wait(SECOND / 2);
+    };
+    (1..=20).for_each(|n| heard(&mut sense, &mut play, Signal::Total(n), 100 + u64::from(n)));
+    play.wait(20 * SECOND);
+    (21..=28).for_each(|n| heard(&mut sense, &mut play, Signal::Total(n), 100 + u64::from(n)));
+    heard(&mut sense, &mut play, Signal::End(Some(28)), 200);
+    assert_eq!(runs, [20, 28]);
+    let owed = play.bench("north").owed.as_ref().unwrap();
+    assert_eq!((owed.counts.as_slice(), owed.drops), ([play.last_count()].as_slice(), 28), "one closure of 28 drops");
 }

@@ -11,7 +11,10 @@ const STORED: &str = include_str!("frozen/facts.jsonl");
 fn kinds() -> BTreeSet<&'static str> {
     fn known(fact: &Fact) {
         match fact {
-            Fact::ServiceStarted { .. } | Fact::ServiceStopped {} | Fact::SettingsTaken { .. } | Fact::InstrumentChanged { .. } => (),
+            Fact::ServiceStarted { .. }
+            | Fact::ServiceStopped {}
+            | Fact::SettingsTaken { .. }
+            | Fact::InstrumentChanged { .. } => (),
             Fact::LinesOverrun { .. } | Fact::SpecimenOpened(_) | Fact::SignedIn { .. } | Fact::SignedOut { .. } => (),
             Fact::IntentionSet { .. } | Fact::IntentionEnded { .. } | Fact::TakenInHand { .. } | Fact::HandEmptied { .. } => (),
             Fact::Refused { .. } | Fact::Weighed(_) | Fact::SlipRepeated { .. } | Fact::PanCleared { .. } => (),

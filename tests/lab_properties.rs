@@ -35,7 +35,20 @@ enum Op {
 }
 
 const CODES: [&str; 14] = [
-    "C1", "C2", "C3", "C4", "S-1", "S-2", "+plastic", "+liquid", "+natural", "+undo", "+new-paste", "+nothing", "+by-AB", "a b\u{7}",
+    "C1",
+    "C2",
+    "C3",
+    "C4",
+    "S-1",
+    "S-2",
+    "+plastic",
+    "+liquid",
+    "+natural",
+    "+undo",
+    "+new-paste",
+    "+nothing",
+    "+by-AB",
+    "a b\u{7}",
 ];
 const ROLES: [&str; 9] = ["tare", "tare_check", "tare_with_lid", "wet", "repeat", "grown", "dry", "further_dry", "emptied"];
 
@@ -90,7 +103,10 @@ fn ask_text(play: &Play, (kind, seq, c, r): (usize, u64, usize, usize)) -> Strin
         17 => format!(r#"{{"ask":"out_of_oven","containers":["{container}"]}}"#),
         18 => format!(r#"{{"ask":"oven_off","from":"{utc}","to":"{}",{who}}}"#, play.now.plus_us(-MINUTE).rfc3339()),
         19 => format!(r#"{{"ask":"free_container","container":"{container}",{who}}}"#),
-        20 => format!(r#"{{"ask":"intend",{at},"specimen":"{specimen}","intention":"{}"}}"#, ["liquid", "plastic", "natural"][r % 3]),
+        20 => format!(
+            r#"{{"ask":"intend",{at},"specimen":"{specimen}","intention":"{}"}}"#,
+            ["liquid", "plastic", "natural"][r % 3]
+        ),
         21 => format!(r#"{{"ask":"not_obtainable","specimen":"{specimen}","limit":"plastic","because":"crumbles"}}"#),
         22 => format!(r#"{{"ask":"register_container","container":"{container}","lid_g":"{mass}"}}"#),
         _ => format!(r#"{{"ask":"review","specimen":"{specimen}","who":"CD"}}"#),
@@ -265,11 +281,16 @@ fn blocks(n: i64) -> Vec<Vec<Step>> {
     let drops = [34, 28, 23, 17];
     let weigh = |k: usize, ug: i64| Step::Weigh(c(k), Mass::from_ug(ug).to_string());
     let mut all: Vec<Vec<Step>> = (0..6).map(|k| vec![weigh(k, tare(k as i64))]).collect();
-    for k in 0..4 {
-        all.push(vec![Step::Intend("liquid"), Step::Count(drops[k]), weigh(k, wet(k as i64))]);
+    for (k, drops) in drops.into_iter().enumerate() {
+        all.push(vec![Step::Intend("liquid"), Step::Count(drops), weigh(k, wet(k as i64))]);
     }
     for k in 4..6 {
-        all.push(vec![Step::Intend("plastic"), weigh(k, wet(k as i64) - 4_000_000), weigh(k, wet(k as i64) - 2_000_000), Step::Nothing]);
+        all.push(vec![
+            Step::Intend("plastic"),
+            weigh(k, wet(k as i64) - 4_000_000),
+            weigh(k, wet(k as i64) - 2_000_000),
+            Step::Nothing,
+        ]);
     }
     all.push(vec![Step::Oven((0..6).map(c).collect())]);
     all.extend((0..6).map(|k| vec![Step::Overnight, weigh(k, dry(k as i64) - if k < 4 { 0 } else { 1_000_000 })]));
@@ -474,5 +495,7 @@ fn memory_stays_bounded_whatever_a_balance_or_counter_repeats() {
     let specimen = play.specimen(&specimen_id("S-1")).unwrap();
     assert!(specimen.counts.len() <= 300, "{}", specimen.counts.len());
     assert!(play.bench(&bench_name("north")).unwrap().owed.as_ref().unwrap().counts.len() <= 20);
-    assert!(play.loose_things().any(|l| matches!(l.what, LooseWhat::Count(_)) && l.why.contains("does the counter count by itself")));
+    assert!(
+        play.loose_things().any(|l| matches!(l.what, LooseWhat::Count(_)) && l.why.contains("does the counter count by itself"))
+    );
 }

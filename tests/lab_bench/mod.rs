@@ -295,7 +295,9 @@ impl Play {
     }
 
     pub fn say(&mut self, bench: &str, container: &str, role: &str) -> Vec<Fact> {
-        self.ask(&format!(r#"{{"ask":"say_role","bench":"{bench}","container":"{container}","role":"{role}","who":"AB","why":"seen"}}"#))
+        self.ask(&format!(
+            r#"{{"ask":"say_role","bench":"{bench}","container":"{container}","role":"{role}","who":"AB","why":"seen"}}"#
+        ))
     }
 
     pub fn tie(&mut self, weighing: u64, container: &str, role: &str) -> Vec<Fact> {

@@ -18,6 +18,11 @@ use alloc::vec;
 use alloc::vec::Vec;
 use serde::{Deserialize, Serialize};
 
+/// Longest text of a reason or description, in characters.
+const LONGEST_WORDS: usize = 1_000;
+/// Most containers in one ask.
+const AT_ONCE: usize = 500;
+
 /// An ask that may write. Reading asks are answered without the laboratory.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[serde(tag = "ask", rename_all = "snake_case", deny_unknown_fields)]
@@ -232,6 +237,9 @@ impl Lab {
                 return Err(no(format!("the share {what} is a percentage between 0 and 100")));
             }
         }
+        for words in [&edition, &description, &preparation].into_iter().flatten() {
+            not_too_long(words)?;
+        }
         let edition = edition.unwrap_or_else(|| method.edition.clone());
         let opened =
             SpecimenOpened { specimen, method: name, edition, description, preparation, passing_75um_percent, clay_percent };
@@ -438,6 +446,9 @@ impl Lab {
         if containers.is_empty() {
             return Err(no(String::from("name the containers")));
         }
+        if containers.len() > AT_ONCE {
+            return Err(no(format!("at most {AT_ONCE} containers go in or out at once")));
+        }
         self.room_in_oven(containers)?;
         match containers.iter().find(|c| self.containers.get(*c).is_none_or(|c| c.holding.is_none())) {
             Some(empty) => Err(no(format!("{empty} holds nothing that was weighed wet; weigh it first, or leave it out"))),
@@ -525,6 +536,14 @@ pub(super) fn typed_mass(text: &str) -> Result<Mass, Refusal> {
 pub(super) fn needs_words(why: &str) -> Result<(), Refusal> {
     match why.trim().is_empty() {
         true => Err(no(String::from("say why, in a few words: the record keeps it"))),
+        false => not_too_long(why),
+    }
+}
+
+/// The record keeps words, not files.
+fn not_too_long(words: &str) -> Result<(), Refusal> {
+    match words.chars().count() > LONGEST_WORDS {
+        true => Err(no(format!("at most {LONGEST_WORDS} characters fit here; keep a longer text elsewhere and name it"))),
         false => Ok(()),
     }
 }

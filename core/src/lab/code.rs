@@ -37,8 +37,8 @@ impl Lab {
             let intention = self.benches.get(bench).and_then(|b| b.intention.as_ref()).map_or(Intention::Liquid, |w| w.intention);
             return Ok(self.intend(bench, &specimen, intention, None));
         }
-        let container =
-            ContainerId::new(text).map_err(|e| format!("the code read as \"{}\" is no container: {}", printable(text), printable(&format!("{e}"))))?;
+        let container = ContainerId::new(text)
+            .map_err(|e| format!("the code read as \"{}\" is no container: {}", printable(text), printable(&format!("{e}"))))?;
         self.container_read(bench, or_at, &container, at)
     }
 

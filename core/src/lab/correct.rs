@@ -45,6 +45,7 @@ impl Lab {
             Ask::NewPaste { bench, who, why } => {
                 let state = self.bench_there(&bench)?;
                 let why = why.unwrap_or_else(|| String::from("a new paste was made"));
+                needs_words(&why)?;
                 let who = who.or_else(|| state.signed_in.clone());
                 let owed = state
                     .owed
@@ -62,6 +63,7 @@ impl Lab {
                 let what = what.ok_or_else(|| Refusal(format!("nothing at bench {bench} can be taken back any more")))?;
                 self.may_be_set_aside(what)?;
                 let why = why.unwrap_or_else(|| String::from("taken back at the bench"));
+                needs_words(&why)?;
                 Ok(vec![New::by(who, Fact::SetAside { what, why })])
             }
             _ => Ok(vec![]),

@@ -84,9 +84,12 @@ impl Lab {
 
     pub(super) fn room_for_count(&self, bench: &BenchName) -> Result<SpecimenId, String> {
         let id = self.liquid_at(bench).ok_or_else(|| String::from("no liquid limit is in work at this bench"))?;
-        match self.specimens.get(id).is_some_and(|s| s.counts.len() >= COUNTS_OF_SPECIMEN) {
-            true => Err(format!("{COUNTS_OF_SPECIMEN} counts belong to {id} already: does the counter count by itself?")),
-            false => Ok(id.clone()),
+        match self.specimens.get(id) {
+            None => Err(format!("specimen {id} could not be read from the ledger: say again what the bench works on")),
+            Some(s) if s.counts.len() >= COUNTS_OF_SPECIMEN => {
+                Err(format!("{COUNTS_OF_SPECIMEN} counts belong to {id} already: does the counter count by itself?"))
+            }
+            Some(_) => Ok(id.clone()),
         }
     }
 

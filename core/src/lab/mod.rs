@@ -300,6 +300,11 @@ impl Lab {
         self.benches.values().filter_map(of_bench).min().map(|us| us.max(0))
     }
 
+    /// Specimens that containers hold or benches work on and that are not at hand: load them after the documents.
+    pub fn missing(&self) -> Vec<SpecimenId> {
+        self.needed().into_iter().filter(|id| !self.specimens.contains_key(id)).collect()
+    }
+
     /// Specimens that an input concerns and that are not at hand: those whose
     /// determinations rest on an empty weighing of a container. Load them first;
     /// without them a correction of that weighing is refused.
@@ -343,6 +348,15 @@ impl Lab {
 
     /// Forgets finished specimens that no container holds and no bench works on; they come back from the ledger when named.
     pub fn forget_finished(&mut self) {
+        let needed = self.needed();
+        self.specimens.retain(|id, s| s.open() || needed.contains(id));
+        while self.loose.len() > LOOSE_AT_HAND {
+            self.loose.pop_first();
+        }
+    }
+
+    /// Specimens that containers hold or benches work on.
+    fn needed(&self) -> BTreeSet<SpecimenId> {
         let held = self.containers.values().filter_map(|c| c.holding.as_ref()).flat_map(|h| {
             let before = h.before.as_ref().map(|b| b.specimen.clone());
             [Some(h.specimen.clone()), before].into_iter().flatten()
@@ -351,11 +365,7 @@ impl Lab {
             let work = b.intention.as_ref().map(|w| w.specimen.clone());
             work.into_iter().chain(b.owed.as_ref().map(|o| o.specimen.clone()))
         });
-        let needed: BTreeSet<SpecimenId> = held.chain(at_work).collect();
-        self.specimens.retain(|id, s| s.open() || needed.contains(id));
-        while self.loose.len() > LOOSE_AT_HAND {
-            self.loose.pop_first();
-        }
+        held.chain(at_work).collect()
     }
 
     /// A specimen at hand.
