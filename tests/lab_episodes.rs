@@ -84,6 +84,7 @@ fn two_slices_owed_at_a_shared_balance_and_scanner_the_screen_asks_whose() {
     assert_eq!(play.shown("S-2"), ["Liquid 1 C1 owed 36.00"]);
     assert!(play.bench("south").owed.is_none() && play.bench("north").owed.is_some());
     assert!(play.bench("north").refusal.is_none(), "the other bench is no longer asked");
+    assert!(play.bench("north").latest.is_none() && play.bench("south").latest.is_some(), "nor can it take it back");
     let seq = play.weigh("C2", "37.00");
     assert_eq!(play.role_of(seq), Some(Role::Wet), "only one slice is owed now");
     assert_eq!(play.shown("S-1"), ["Liquid 1 C2 owed 37.00"]);
@@ -99,6 +100,30 @@ fn a_scanner_shared_by_benches_with_balances_of_their_own() {
     assert_eq!(play.bench("south").latest.as_ref().unwrap().seq, seq);
     play.lift("pan-s");
     assert!(play.bench("north").hand.is_none(), "its hand is used up, whichever balance took the mass");
+}
+
+#[test]
+fn a_code_read_after_the_mass_at_a_shared_scanner_is_for_the_bench_of_the_balance() {
+    let setup = setup(&[
+        ("pan-n", &["north"]),
+        ("pan-s", &["south"]),
+        ("cup-n", &["north"]),
+        ("cup-s", &["south"]),
+        ("scan-n", &["north", "south"]),
+    ]);
+    let mut play = Play::new(setup);
+    for (bench, specimen, cup) in [("north", "S-1", "cup-n"), ("south", "S-2", "cup-s")] {
+        play.ask(&format!(r#"{{"ask":"sign_in","bench":"{bench}","operator":"{specimen}"}}"#));
+        play.ask(&format!(r#"{{"ask":"open_specimen","specimen":"{specimen}"}}"#));
+        play.intend(bench, specimen, "liquid");
+        play.count_at(cup, 25);
+    }
+    play.settle("pan-s", "36.00");
+    play.scan("scan-n", "C1");
+    assert_eq!(play.shown("S-2"), ["Liquid 1 C1 owed 36.00"]);
+    assert_eq!(play.trial("S-2", 0).wets[0].by.as_ref().unwrap().as_str(), "S-2");
+    play.lift("pan-s");
+    assert!(play.bench("north").hand.is_none());
 }
 
 #[test]

@@ -196,6 +196,7 @@ fn the_operator_can_always_say_the_role() {
     play.weigh("C1", "27.00");
     play.say("north", "C1", "dry");
     assert_eq!(play.shown("S-1"), ["Liquid 1 C1 21.43 38.22 33.39 27.00"]);
+    assert!(play.say("north", "C1", "further_dry").is_empty(), "said already");
     play.weigh("C1", "23.00");
     play.say("north", "C1", "tare");
     assert_eq!((play.container("C1").tare().unwrap().mass, play.container("C1").standing), (g("23.00"), Standing::Free));

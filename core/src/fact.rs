@@ -148,6 +148,9 @@ pub enum Fact {
         weighing: Seq,
         /// What it now belongs to.
         link: Link,
+        /// The bench that says so, when several showed the weighing.
+        #[serde(default, skip_serializing_if = "Option::is_none")]
+        bench: Option<BenchName>,
         /// Why.
         why: String,
     },

@@ -1,10 +1,10 @@
 //! What persons ask for. One closed set, the same for every way in.
 
-use super::entities::{Container, Latest, LooseWhat, Specimen};
+use super::entities::{Bench, Container, Latest, LooseWhat, Specimen};
 use super::oven::STAYS_KEPT;
 use super::role::Role;
 use super::{Lab, New, Refusal};
-use crate::fact::{Counted, Fact, Intention, Limit, SpecimenOpened, Weighed};
+use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
 use crate::limits::State;
 use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
 use crate::quantity::{Mass, MassUnit};
@@ -317,7 +317,7 @@ impl Lab {
         needs_words(&why)?;
         if let Some(LooseWhat::Weighing { weighing: w, basis }) = self.loose.get(&weighing).map(|l| &l.what) {
             let link = self.link_said(bench, container, role, (w.mass, *basis), &w.at, None).map_err(Refusal)?;
-            return Ok(vec![New::by(who, Fact::WeighingTied { weighing, link, why })]);
+            return Ok(vec![New::by(who, self.tied(weighing, link, bench, why))]);
         }
         self.may_be_taken_out(weighing)?;
         // A weighing that is tied already is judged as if it were not.
@@ -327,7 +327,14 @@ impl Lab {
             .ok_or_else(|| no(format!("no weighing has the number {weighing}, or its specimen is not at hand")))?;
         let w = &untied.weighing;
         let link = without.link_said(bench, container, role, (w.mass, Basis::Gross), &w.at, Some(&untied)).map_err(Refusal)?;
-        Ok(vec![New::by(who, Fact::WeighingTied { weighing, link, why })])
+        Ok(vec![New::by(who, self.tied(weighing, link, bench, why))])
+    }
+
+    /// The fact of a tie; it names the bench where several show the weighing.
+    pub(super) fn tied(&self, weighing: Seq, link: Link, bench: &BenchName, why: String) -> Fact {
+        let shows = |b: &&Bench| b.latest.as_ref().is_some_and(|l| l.seq == weighing);
+        let bench = (self.benches.values().filter(shows).count() > 1).then(|| bench.clone());
+        Fact::WeighingTied { weighing, link, bench, why }
     }
 
     /// The part of the laboratory that tying a weighing to a container looks at.

@@ -1,12 +1,11 @@
 //! A code was read: a card, a specimen, or a container.
 
 use super::ask::Ask;
-use super::entities::{Bench, Loose, LooseWhat};
+use super::entities::{Bench, Loose, LooseWhat, Pan};
 use super::{Lab, New};
 use crate::fact::{Fact, Intention};
 use crate::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
 use crate::sense::InputNo;
-use crate::sheet::Seq;
 use crate::stamp::Stamp;
 use alloc::format;
 use alloc::string::String;
@@ -57,8 +56,10 @@ impl Lab {
             New::by(here.signed_in.clone(), Fact::TakenInHand { bench, container, or_at, instead_of })
         };
         let places: Vec<BenchName> = [bench].into_iter().chain(or_at).cloned().collect();
-        if let Some((weighing, printed)) = self.loose_on_pan(&places, at) {
-            return Ok(self.tie_late(&places, container, (weighing, printed), in_hand()));
+        if let Some((balance, pan)) = self.loose_on_pan(&places, at) {
+            let served = self.benches_of(balance);
+            let places: Vec<BenchName> = places.into_iter().filter(|b| served.contains(b)).collect();
+            return Ok(self.tie_late(bench, &places, container, pan, in_hand()));
         }
         // The same code again: nothing new, and it stays in hand.
         let same = here.hand.as_ref().is_some_and(|h| h.container == *container && h.or_at == or_at);
@@ -66,32 +67,25 @@ impl Lab {
     }
 
     /// A loose weighing that still lies on a pan of these benches, or was printed just now.
-    fn loose_on_pan(&self, places: &[BenchName], at: &Stamp) -> Option<(Seq, bool)> {
+    fn loose_on_pan(&self, places: &[BenchName], at: &Stamp) -> Option<(&InstrumentName, &Pan)> {
         let near = |balance: &InstrumentName| self.benches_of(balance).iter().any(|b| places.contains(b));
-        let pans = self.instruments.iter().filter(|(balance, _)| near(balance)).filter_map(|(_, i)| i.pan.as_ref());
         let in_time = 0..=self.setup.linking.code_after_us;
-        let fresh = pans.filter(|p| p.loose && (!p.printed || in_time.contains(&at.since(&p.at).us)));
-        fresh.map(|p| (p.seq, p.printed)).filter(|(seq, _)| self.loose.contains_key(seq)).max()
+        let waits = |p: &Pan| p.loose && self.loose.contains_key(&p.seq) && (!p.printed || in_time.contains(&at.since(&p.at).us));
+        let pans = self.instruments.iter().filter_map(|(balance, i)| i.pan.as_ref().map(|p| (balance, p)));
+        pans.filter(|(balance, p)| near(balance) && waits(p)).max_by_key(|(_, p)| p.seq)
     }
 
     /// The code came after the mass.
-    fn tie_late(
-        &self,
-        places: &[BenchName],
-        container: &ContainerId,
-        (weighing, printed): (Seq, bool),
-        in_hand: New,
-    ) -> Vec<New> {
-        let Some(bench) = places.first() else { return vec![] };
-        let who = self.signed_in(Some(bench));
+    fn tie_late(&self, bench: &BenchName, places: &[BenchName], container: &ContainerId, pan: &Pan, in_hand: New) -> Vec<New> {
+        let (weighing, here) = (pan.seq, places.first().unwrap_or(bench));
         let Some(Loose { what: LooseWhat::Weighing { weighing: w, basis }, .. }) = self.loose.get(&weighing) else {
             return vec![in_hand];
         };
         match self.link(places, container, w.mass, *basis, &w.at) {
             Ok(link) => {
-                let why = String::from("the code was read after the mass");
-                let mut facts = vec![in_hand, New::by(who, Fact::WeighingTied { weighing, link, why })];
-                if printed {
+                let fact = self.tied(weighing, link, here, String::from("the code was read after the mass"));
+                let mut facts = vec![in_hand, New::by(self.signed_in(Some(here)), fact)];
+                if pan.printed {
                     let why = String::from("its mass was printed");
                     facts.push(New::plain(Fact::HandEmptied { bench: bench.clone(), why }));
                 }

@@ -100,7 +100,7 @@ fn cause(r: &Recorded) -> Option<String> {
         Fact::DropsAmended { count, was, drops, why } => format!("drops of count {count} corrected, {was} → {drops}: {why}"),
         Fact::SetAside { what, why } => format!("fact {what} set aside: {why}"),
         Fact::TrialSetAside { trial, no, why, .. } => format!("{} set aside: {why}", about(*trial, *no)),
-        Fact::WeighingTied { weighing, link, why } => format!("weighing {weighing} tied to {}: {why}", link.container),
+        Fact::WeighingTied { weighing, link, why, .. } => format!("weighing {weighing} tied to {}: {why}", link.container),
         Fact::CountTied { count, why, .. } => format!("count {count} tied: {why}"),
         Fact::Counted(Counted { replaces: Some(old), drops, .. }) => {
             format!("the counter told count {old} again, now {drops} drops")

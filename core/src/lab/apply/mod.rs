@@ -37,7 +37,7 @@ impl Lab {
             | Fact::Refused { bench, .. }
             | Fact::SliceOverdue { bench, .. } => self.apply_bench(bench, r, touched),
             Fact::Weighed(weighed) => self.apply_weighed(weighed, r, touched),
-            Fact::WeighingTied { weighing, link, .. } => self.apply_tied(*weighing, link, r, touched),
+            Fact::WeighingTied { weighing, link, bench, .. } => self.apply_tied(*weighing, link, bench.as_ref(), r, touched),
             Fact::Counted(counted) => self.apply_counted(counted, r, touched),
             Fact::CountTied { count, bench, specimen, .. } => self.apply_count_tied(*count, bench, specimen, r, touched),
             Fact::CountSuperseded { count, why } => self.apply_superseded(*count, why, touched),

@@ -8,7 +8,7 @@ use crate::lab::entities::{
 };
 use crate::lab::oven::work_hours;
 use crate::lab::role::Role;
-use crate::names::{ContainerId, SpecimenId};
+use crate::names::{BenchName, ContainerId, SpecimenId};
 use crate::quantity::Mass;
 use crate::sheet::Seq;
 use crate::signal::Basis;
@@ -110,8 +110,8 @@ impl Lab {
         }
     }
 
-    pub(super) fn apply_tied(&mut self, seq: Seq, link: &Link, r: &Recorded, touched: &mut Touched) {
-        let (bench, weighing) = match self.loose.remove(&seq) {
+    pub(super) fn apply_tied(&mut self, seq: Seq, link: &Link, said_at: Option<&BenchName>, r: &Recorded, touched: &mut Touched) {
+        let (home, weighing) = match self.loose.remove(&seq) {
             Some(Loose { bench, what: LooseWhat::Weighing { weighing, .. }, .. }) => {
                 touched.insert(Entity::Loose(seq));
                 (bench, weighing)
@@ -136,13 +136,27 @@ impl Lab {
             loose: None,
             at: weighing.at,
         };
+        self.show_tied(latest, home.as_ref(), said_at, r, touched);
+    }
+
+    /// Benches that showed the weighing as loose show what it is now; where several did, only the one it is of.
+    fn show_tied(
+        &mut self,
+        latest: Latest,
+        home: Option<&BenchName>,
+        said_at: Option<&BenchName>,
+        r: &Recorded,
+        touched: &mut Touched,
+    ) {
         for state in self.benches.values_mut() {
             let shown = state.latest.as_ref().map(|l| l.seq);
-            let home = bench.as_ref() == Some(&state.name) && shown.is_none_or(|l| l < seq);
-            if shown == Some(seq) || home {
-                (state.active, state.refusal, state.latest) = (r.at, None, Some(latest.clone()));
-                touched.insert(Entity::Bench(state.name.clone()));
+            let is_home = home == Some(&state.name) && shown.is_none_or(|l| l < latest.seq);
+            if shown != Some(latest.seq) && !is_home {
+                continue;
             }
+            (state.active, state.refusal) = (r.at, None);
+            state.latest = said_at.is_none_or(|b| *b == state.name).then(|| latest.clone());
+            touched.insert(Entity::Bench(state.name.clone()));
         }
     }
 
