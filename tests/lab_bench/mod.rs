@@ -8,7 +8,7 @@ use tarecup_core::lab::entities::{Bench, Container, Entity, Instrument, Loose, S
 use tarecup_core::lab::role::Role;
 use tarecup_core::lab::{Input, Lab, Linking, Loaded, Outcome, Refusal, Setup};
 use tarecup_core::method::Method;
-use tarecup_core::names::{BenchName, ContainerId, InstrumentName, MethodName, SpecimenId};
+use tarecup_core::names::{BenchName, ContainerId, InstrumentName, SpecimenId};
 use tarecup_core::quantity::{Mass, MassUnit};
 use tarecup_core::sense::{CountRun, EndedBy, MassTaken};
 use tarecup_core::signal::Basis;
@@ -434,8 +434,4 @@ pub fn whole_specimen(play: &mut Play, specimen: &str, prefix: &str) {
     for (n, row) in (5..).zip(&threads) {
         play.weigh(&name(n), row.2);
     }
-}
-
-pub fn method_name() -> MethodName {
-    MethodName::new("d4318-multipoint").unwrap()
 }
