@@ -1,6 +1,6 @@
 //! The envelope of asks: one handler behind every way in.
 //!
-//! An ask is one JSON object. `ask` says what is wanted; `id` makes it safe
+//! An ask is one JSON object. `ask` says what is wanted; `ask_id` makes it safe
 //! to repeat (the same client gets the same answer again); everything else
 //! belongs to the ask.
 
@@ -72,10 +72,10 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     let Value::Object(mut object) = value else {
         return Err(String::from("an ask is one JSON object with a member \"ask\""));
     };
-    let id = match object.remove("id") {
+    let id = match object.remove("ask_id") {
         None | Some(Value::Null) => None,
         Some(Value::String(id)) if !id.is_empty() && id.len() <= 64 => Some(id),
-        Some(_) => return Err(String::from("\"id\" of an ask is a text of 1 to 64 characters")),
+        Some(_) => return Err(String::from("\"ask_id\" is a text of 1 to 64 characters")),
     };
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
@@ -127,10 +127,12 @@ mod tests {
 
     #[test]
     fn good_asks_are_read() {
-        let asked = parse(r#"{"ask":"sign_in","bench":"north","operator":"AB","id":"7"}"#).expect("an ask");
+        let asked = parse(r#"{"ask":"sign_in","bench":"north","operator":"AB","ask_id":"7"}"#).expect("an ask");
         assert_eq!(asked.id.as_deref(), Some("7"));
         assert!(matches!(asked.wanted, Wanted::Write(Ask::SignIn { .. })));
-        assert!(asked.body.get("id").is_none());
+        assert!(asked.body.get("ask_id").is_none());
+        let asked = parse(r#"{"ask":"document","kind":"container","id":"C11"}"#).expect("an ask");
+        assert!(matches!(asked.wanted, Wanted::Read(Read::Document { .. })));
         let asked = parse(r#"{"ask":"facts_after","seq":3}"#).expect("an ask");
         assert!(matches!(asked.wanted, Wanted::Read(Read::FactsAfter { seq: 3, limit: 100 })));
     }
@@ -145,7 +147,7 @@ mod tests {
             (r#"{"ask":"sign_in","bench":"a b","operator":"AB"}"#, "cannot be done"),
             (r#"{"ask":"sign_in","bench":"north","operator":"AB","pin":"1234"}"#, "cannot be done"),
             (r#"{"ask":"facts_after","seq":-1}"#, "whole number"),
-            (r#"{"ask":"status","id":""}"#, "1 to 64"),
+            (r#"{"ask":"status","ask_id":""}"#, "1 to 64"),
         ] {
             let says = parse(text).expect_err(text);
             assert!(says.contains(words), "{text}: {says}");

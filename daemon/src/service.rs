@@ -23,7 +23,7 @@ use tarecup_core::stamp::{SECOND_US, Stamp};
 use tarecup_drivers::heard::{Clock, Deliver};
 use tarecup_drivers::port::serial::{self, PortTask};
 use tarecup_drivers::profile::{Profile, ProfileText};
-use tokio::runtime::Runtime;
+use tokio::runtime::{Handle, Runtime};
 
 /// How long an orderly stop waits for the broker.
 const FAREWELL: Duration = Duration::from_secs(3);
@@ -48,6 +48,14 @@ pub enum StartError {
     /// The broker's settings.
     #[error("[mqtt] {0}")]
     Mqtt(String),
+    /// The state directory.
+    #[error("the state directory {} cannot be made: {error}; name another one with --state DIR", .path.display())]
+    StateDir {
+        /// Where.
+        path: PathBuf,
+        /// Why.
+        error: std::io::Error,
+    },
     /// The local socket.
     #[error("the local socket in {}: {error}", .state_dir.display())]
     Socket {
@@ -88,7 +96,7 @@ pub struct Plan {
 pub struct Service {
     seat: Seat,
     ports: Vec<PortTask>,
-    ports_runtime: Runtime,
+    ports_thread: PortsThread,
     net_runtime: Runtime,
     courier: SharedCourier,
     #[cfg(feature = "broker")]
@@ -106,9 +114,10 @@ impl Service {
     pub fn start(plan: Plan) -> Result<Service, StartError> {
         let Plan { station, state_dir, clock, time_passes, any_broker_port, tap, told } = plan;
         let profiles = compile_profiles(&station)?;
-        let ports_runtime = runtime("ports")?;
-        let net_runtime = runtime("net")?;
+        make_state_dir(&state_dir)?;
         let inbox = Inbox::new();
+        let ports_runtime = PortsThread::start(&inbox, time_passes)?;
+        let net_runtime = runtime("net")?;
         let heard = Arc::new(Heard::default());
         let setup = desk_setup(&station, &profiles, &state_dir);
         let options = OpenOptions::new(&boot_id(), clock.now().utc_us);
@@ -141,14 +150,14 @@ impl Service {
             socket::listen(&state_dir).map_err(|error| StartError::Socket { state_dir: state_dir.clone(), error })?
         };
         net_runtime.spawn(socket::serve(listener, Arc::clone(&inbox)));
-        let seat_settings = SeatSettings { clock: clock.clone(), time_passes, gather: time_passes };
+        let seat_settings = SeatSettings { clock: clock.clone(), time_passes };
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
-        let ports = open_ports(&station, &profiles, &ports_runtime, &clock, &inbox);
+        let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox);
         Ok(Service {
             seat,
             ports,
-            ports_runtime,
+            ports_thread: ports_runtime,
             net_runtime,
             courier,
             #[cfg(feature = "broker")]
@@ -225,9 +234,7 @@ impl Service {
 
     /// Stops in order: ports close, the desk stores what it has, the broker hears of it.
     pub fn stop(self) -> bool {
-        for port in self.ports {
-            self.ports_runtime.block_on(port.join());
-        }
+        self.ports_thread.stop(self.ports);
         let desk = self.seat.stop();
         let orderly = desk.as_ref().is_some_and(Desk::stopped);
         let presence = desk.as_ref().map(|d| Bytes::from(d.presence("stopped", &self.clock.now()).to_string()));
@@ -242,14 +249,65 @@ impl Service {
         }
         let _ = std::fs::remove_file(socket::path(&self.state_dir));
         self.net_runtime.shutdown_timeout(Duration::from_millis(500));
-        self.ports_runtime.shutdown_timeout(Duration::from_millis(500));
         orderly
     }
+}
+
+/// The state directory is its owner's alone: ledger and socket lie in it.
+fn make_state_dir(path: &Path) -> Result<(), StartError> {
+    use std::os::unix::fs::DirBuilderExt;
+    let made = std::fs::DirBuilder::new().recursive(true).mode(0o700).create(path);
+    made.map_err(|error| StartError::StateDir { path: path.to_path_buf(), error })
 }
 
 fn runtime(name: &str) -> Result<Runtime, StartError> {
     let mut builder = tokio::runtime::Builder::new_multi_thread();
     builder.worker_threads(1).max_blocking_threads(16).thread_name(name).enable_all().build().map_err(StartError::System)
+}
+
+/// After lines came, the ports are looked at again after this time: lines of
+/// many ports are then read together, which costs a fraction of the wake-ups.
+/// The first line after a pause does not wait.
+const PACE: Duration = Duration::from_micros(4_000);
+
+/// The thread that drives all ports.
+struct PortsThread {
+    handle: Handle,
+    stop: tokio::sync::oneshot::Sender<Vec<PortTask>>,
+    thread: std::thread::JoinHandle<()>,
+}
+
+impl PortsThread {
+    /// With `paced`, lines that come fast are gathered; a virtual day is not paced.
+    fn start(inbox: &Arc<Inbox>, paced: bool) -> Result<Self, StartError> {
+        let inbox = Arc::clone(inbox);
+        let before_waiting = move || {
+            if inbox.lines_are_in() && paced {
+                std::thread::sleep(PACE);
+            }
+        };
+        let mut builder = tokio::runtime::Builder::new_current_thread();
+        let runtime =
+            builder.max_blocking_threads(16).on_thread_park(before_waiting).enable_all().build().map_err(StartError::System)?;
+        let handle = runtime.handle().clone();
+        let (stop, stopped) = tokio::sync::oneshot::channel::<Vec<PortTask>>();
+        let work = move || {
+            runtime.block_on(async {
+                for port in stopped.await.unwrap_or_default() {
+                    port.join().await;
+                }
+            });
+            runtime.shutdown_timeout(Duration::from_millis(500));
+        };
+        let thread = std::thread::Builder::new().name("ports".into()).spawn(work).map_err(StartError::System)?;
+        Ok(Self { handle, stop, thread })
+    }
+
+    /// Closes all ports; what was read is delivered.
+    fn stop(self, ports: Vec<PortTask>) {
+        let _ = self.stop.send(ports);
+        let _ = self.thread.join();
+    }
 }
 
 type Profiles = BTreeMap<String, Arc<Profile>>;
@@ -567,7 +625,7 @@ fn text(value: &serde_json::Value) -> Bytes {
 fn open_ports(
     station: &Station,
     profiles: &Profiles,
-    runtime: &Runtime,
+    runtime: &Handle,
     clock: &Arc<dyn BootClock>,
     inbox: &Arc<Inbox>,
 ) -> Vec<PortTask> {
@@ -576,14 +634,7 @@ fn open_ports(
     for (id, instrument) in station.instruments.iter().enumerate() {
         if let Some(profile) = profiles.get(instrument.profile.as_str()) {
             let out: Arc<dyn Deliver> = inbox.clone();
-            ports.push(serial::spawn(
-                runtime.handle(),
-                id as u16,
-                instrument.port.clone(),
-                Arc::clone(profile),
-                Arc::clone(&clock),
-                out,
-            ));
+            ports.push(serial::spawn(runtime, id as u16, instrument.port.clone(), Arc::clone(profile), Arc::clone(&clock), out));
         }
     }
     ports

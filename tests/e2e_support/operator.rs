@@ -217,7 +217,7 @@ impl<'a> Operator<'a> {
     /// Asks until there is an answer; the id makes it one ask.
     pub fn ask(&mut self, mut wanted: Value) -> Value {
         self.asks += 1;
-        wanted["id"] = json!(format!("{}-{}", self.name, self.asks));
+        wanted["ask_id"] = json!(format!("{}-{}", self.name, self.asks));
         let start = Instant::now();
         loop {
             if let Ok(answer) = ask(&self.station.state, &wanted) {

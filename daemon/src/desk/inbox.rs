@@ -1,5 +1,6 @@
 //! The bounded queue in front of the desk.
 
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::{Arc, Condvar, Mutex, MutexGuard, PoisonError};
 use std::time::{Duration, Instant};
 use tarecup_core::stamp::Stamp;
@@ -7,6 +8,8 @@ use tarecup_drivers::heard::{Batch, Deliver, InstrumentId, PortState};
 
 /// Bytes of lines that may wait. A reader that finds no room holds what it has.
 const BYTES_MOST: usize = 8 << 20;
+/// Bytes of lines that wake the desk by themselves.
+const MUCH: usize = 64 << 10;
 /// Asks that may wait.
 const ASKS_MOST: usize = 256;
 
@@ -66,6 +69,7 @@ struct State {
 pub struct Inbox {
     state: Mutex<State>,
     wake: Condvar,
+    lines_wait: AtomicBool,
 }
 
 impl Inbox {
@@ -121,6 +125,17 @@ impl Inbox {
         self.push(Incoming::Stop);
     }
 
+    /// Wakes the desk when lines have come since the last call; tells whether any had.
+    pub fn lines_are_in(&self) -> bool {
+        let any = self.lines_wait.swap(false, Ordering::Relaxed);
+        if any {
+            // Taking the lock first: the desk is either before its check or asleep.
+            drop(self.lock());
+            self.wake.notify_one();
+        }
+        any
+    }
+
     /// Takes all that waits; waits for something until the given moment.
     pub fn take(&self, into: &mut Vec<Incoming>, until: Option<Instant>) {
         let mut state = self.lock();
@@ -141,6 +156,8 @@ impl Inbox {
 }
 
 impl Deliver for Inbox {
+    /// Lines wake the desk only when much has gathered: whoever drives the
+    /// ports calls [`Inbox::lines_are_in`] when it has read what there was.
     fn heard(&self, batch: Batch) -> Result<(), Batch> {
         let mut state = self.lock();
         if state.bytes + batch.bytes.len() > BYTES_MOST {
@@ -148,8 +165,12 @@ impl Deliver for Inbox {
         }
         state.bytes += batch.bytes.len();
         state.items.push(Incoming::Batch(batch));
+        let much = state.bytes >= MUCH;
         drop(state);
-        self.wake.notify_one();
+        self.lines_wait.store(true, Ordering::Relaxed);
+        if much {
+            self.wake.notify_one();
+        }
         Ok(())
     }
 

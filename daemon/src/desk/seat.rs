@@ -11,10 +11,6 @@ use tarecup_drivers::heard::Clock;
 
 /// While nothing is recorded, the ledger is tried again at this interval.
 const TRY_AGAIN: Duration = Duration::from_millis(500);
-/// Lines that follow each other faster than this are gathered …
-const BUSY: Duration = Duration::from_millis(4);
-/// … for this long, so that a group is worth its wake-up. A fact waits no longer than that for company.
-const GATHER: Duration = Duration::from_millis(2);
 /// With a virtual clock the desk need not look at time by itself.
 const FAR: Duration = Duration::from_secs(3_600);
 
@@ -24,8 +20,6 @@ pub struct SeatSettings {
     pub clock: Arc<dyn Clock>,
     /// Time passes by itself; false in a virtual day, whose clock is set from outside.
     pub time_passes: bool,
-    /// Gather lines that come fast.
-    pub gather: bool,
 }
 
 /// The desk at work in its thread.
@@ -64,14 +58,9 @@ impl Seat {
 
 fn work(desk: &mut Desk, inbox: &Inbox, settings: &SeatSettings, hand_on: &mut dyn FnMut(&Desk, Effects)) {
     let mut incoming: Vec<Incoming> = Vec::new();
-    let mut last_step = Instant::now();
     let mut tries_until: Option<Instant> = None;
     while !desk.stopped() {
         inbox.take(&mut incoming, wait_until(desk, settings));
-        if settings.gather && last_step.elapsed() < BUSY && incoming.iter().all(|i| matches!(i, Incoming::Batch(_))) {
-            std::thread::sleep(GATHER);
-            inbox.take(&mut incoming, Some(Instant::now()));
-        }
         let mut effects = Effects::default();
         if desk.not_recording().is_some() {
             desk.recover(&settings.clock.now(), &mut effects);
@@ -83,7 +72,6 @@ fn work(desk: &mut Desk, inbox: &Inbox, settings: &SeatSettings, hand_on: &mut d
             let now = settings.clock.now();
             desk.step(&mut incoming, &now, &mut effects);
         }
-        last_step = Instant::now();
         hand_on(desk, effects);
         if tries_until.is_some_and(|until| Instant::now() > until) {
             return;
