@@ -310,7 +310,8 @@ impl PortsThread {
     }
 }
 
-type Profiles = BTreeMap<String, Arc<Profile>>;
+/// Compiled profiles by name.
+pub type Profiles = BTreeMap<String, Arc<Profile>>;
 
 /// Compiles the profiles that the instruments use.
 pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
@@ -334,7 +335,8 @@ pub fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
     Profile::compile(text).map_err(|e| e.to_string())
 }
 
-fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskSetup {
+/// What the desk needs to know of the settings.
+pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskSetup {
     let linking = &station.linking;
     let seconds = |s: u32| i64::from(s) * SECOND_US;
     let lab = Setup {
