@@ -79,10 +79,7 @@ fn varied() -> Vec<Sheet> {
     let one_point = sheet(
         "ONE-POINT",
         "d4318-one-point",
-        vec![
-            liquid(&[24], "H1", "20.68", "33.77", &["30.23"]),
-            liquid(&[26], "H2", "22.19", "37.56", &["33.44"]),
-        ],
+        vec![liquid(&[24], "H1", "20.68", "33.77", &["30.23"]), liquid(&[26], "H2", "22.19", "37.56", &["33.44"])],
         vec![slice("H3", "23.74", "33.12", &["31.59"]), slice("H4", "23.07", "31.06", &["29.73"])],
     );
     let t89 = sheet(
@@ -221,11 +218,15 @@ fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
     for (worked, sheet) in worked.iter().zip(sheets) {
         let played = last_limits(lines, &sheet.id);
         assert_eq!((&worked["specimen"], &worked["revision"], &worked["ledger"]), (&json!(sheet.id), &json!(0), &Value::Null));
-        for part in ["liquid_limit", "plastic_limit", "plasticity_index", "natural_water_percent", "liquidity_index", "group", "method"] {
+        for part in
+            ["liquid_limit", "plastic_limit", "plasticity_index", "natural_water_percent", "liquidity_index", "group", "method"]
+        {
             assert_eq!(worked[part], played[part], "{} {part}", sheet.id);
         }
         let row = |t: &Value| -> Vec<Value> {
-            ["kind", "no", "drops", "closures", "container", "tare_g", "wet_g", "dry_g", "water_percent", "used"].map(|k| t[k].clone()).into()
+            ["kind", "no", "drops", "closures", "container", "tare_g", "wet_g", "dry_g", "water_percent", "used"]
+                .map(|k| t[k].clone())
+                .into()
         };
         let rows = |v: &Value| -> Vec<Vec<Value>> { v["trials"].as_array().into_iter().flatten().map(row).collect() };
         assert_eq!(rows(worked), rows(&played), "{}", sheet.id);
@@ -409,7 +410,11 @@ fn a_specimen_that_cannot_be_completed_ends_with_code_3() {
     let slip = last_limits(&lines, "SLIP");
     assert_eq!(slip["state"], "provisional");
     let trial = &slip["trials"][1];
-    assert_eq!((&trial["used"], &trial["water_percent"]), (&json!(false), &Value::Null), "no water content from impossible masses");
+    assert_eq!(
+        (&trial["used"], &trial["water_percent"]),
+        (&json!(false), &Value::Null),
+        "no water content from impossible masses"
+    );
     let masses = slip["checks"].as_array().into_iter().flatten().find(|c| c["about"] == "liquid 2" && c["severity"] == "hold");
     assert!(masses.is_some(), "the slip is held: {}", slip["checks"]);
     // Control: the same files with the slips mended end with 0.

@@ -67,6 +67,8 @@ fn undisturbed() -> Value {
     let station = station();
     station.start();
     wait_up(&station.state, PORTS);
+    // The first line after the opening of a port may be half a line, and is not used.
+    std::thread::sleep(Duration::from_millis(300));
     let mut both = Vec::new();
     for no in [1, 2] {
         let sheet = specimen(no);
@@ -121,12 +123,44 @@ fn record_is_sound(station: &Station, told: &[Value]) -> (u64, u64) {
     }
     let inputs: Vec<u64> = stored.iter().filter_map(|f| f["fact"]["taken"]["input"].as_u64()).collect();
     assert_eq!(inputs.iter().collect::<BTreeSet<_>>().len(), inputs.len(), "each line is one weighing at most");
-    let runs: Vec<(Value, Value)> =
-        stored.iter().filter(|f| f["kind"] == "counted").map(|f| (f["fact"]["cup"].clone(), f["fact"]["run"]["first_input"].clone())).collect();
+    let runs: Vec<(Value, Value)> = stored
+        .iter()
+        .filter(|f| f["kind"] == "counted")
+        .map(|f| (f["fact"]["cup"].clone(), f["fact"]["run"]["first_input"].clone()))
+        .collect();
     for (no, run) in runs.iter().enumerate() {
         assert!(!runs[..no].contains(run), "a run is told once: {run:?}");
     }
     (stored.len() as u64, next - 1)
+}
+
+/// What one operator did while the service was killed again and again.
+#[derive(Default)]
+struct Worked {
+    specimens: usize,
+    repeated: u64,
+    interrupted: u64,
+    silent: Vec<String>,
+    facts: Vec<Value>,
+}
+
+/// Plays specimens at one bench until nobody kills any more; each must come out as wanted.
+fn works(station: &Station, cup: Cup, first: usize, want: &Value, over: &AtomicBool) -> Worked {
+    let mut worked = Worked::default();
+    while worked.specimens == 0 || !over.load(Ordering::SeqCst) {
+        let sheet = specimen(first + 2 * worked.specimens);
+        let mut operator = Operator::at(station, cup, true);
+        operator.facts = std::mem::take(&mut worked.facts);
+        operator.play(&sheet);
+        let limits = limits_of(&operator.facts, &sheet.id);
+        assert_eq!(essence(&limits), *want, "{} after {} kills", sheet.id, station.kills.load(Ordering::SeqCst));
+        worked.specimens += 1;
+        worked.repeated += operator.repeated;
+        worked.interrupted += operator.interrupted;
+        worked.silent.append(&mut operator.silently_wrong);
+        worked.facts = operator.facts;
+    }
+    worked
 }
 
 #[test]
@@ -134,38 +168,33 @@ fn killed_fifty_times_the_results_are_those_of_an_undisturbed_day() {
     let want = undisturbed();
     let mut dice = Dice::thrown("fifty kills");
     let station = station();
-    let over = AtomicBool::new(false);
-    let (mut repeated, mut interrupted, mut silent, mut played) = (0, 0, Vec::new(), 0);
+    let (never, over) = (AtomicBool::new(false), AtomicBool::new(false));
     let began = Instant::now();
-    let (up, facts) = std::thread::scope(|scope| {
-        let killer = scope.spawn(|| killer(&station, &mut dice, 50, 900, &over));
+    let (up, north, south) = std::thread::scope(|scope| {
+        let killer = scope.spawn(|| killer(&station, &mut dice, 50, 1_100, &never));
         until("the service is up", PATIENCE, || status(&station.state).is_some());
-        let mut facts: Vec<Value> = Vec::new();
-        while played < 2 || !killer.is_finished() {
-            played += 1;
-            let sheet = specimen(played);
-            let mut operator = Operator::at(&station, cup_of(played), true);
-            operator.facts = std::mem::take(&mut facts);
-            operator.play(&sheet);
-            let limits = limits_of(&operator.facts, &sheet.id);
-            assert_eq!(essence(&limits), want, "{} after {} kills", sheet.id, station.kills.load(Ordering::SeqCst));
-            repeated += operator.repeated;
-            interrupted += operator.interrupted;
-            silent.append(&mut operator.silently_wrong);
-            facts = operator.facts;
-        }
-        (killer.join().expect("the killer"), facts)
+        let north = scope.spawn(|| works(&station, Cup::Numbered, 1, &want, &over));
+        let south = scope.spawn(|| works(&station, Cup::Unnumbered, 2, &want, &over));
+        let up = killer.join().expect("the killer");
+        over.store(true, Ordering::SeqCst);
+        (up, north.join().expect("north"), south.join().expect("south"))
     });
-    assert_eq!(silent, Vec::<String>::new(), "a count is never wrong without a word");
     let kills = station.kills.load(Ordering::SeqCst);
     assert!(kills >= 50, "{kills}");
+    assert_eq!((north.silent.clone(), south.silent.clone()), (vec![], vec![]), "a count is never wrong without a word");
     assert_eq!(station.term(), Some(0), "{}", station.log());
-    let (stored, inputs) = record_is_sound(&station, &facts);
+    record_is_sound(&station, &north.facts);
+    let (stored, inputs) = record_is_sound(&station, &south.facts);
     let (half, worst) = (up[up.len() / 2], up[up.len() - 1]);
     println!(
-        "{kills} kills in {:.0} s: {played} specimens as undisturbed, {stored} facts and {inputs} inputs without a gap, {repeated} steps repeated, \
-         {interrupted} runs marked interrupted; from start to answer {} ms (median), {} ms (worst)",
+        "{kills} kills in {:.0} s: {} + {} specimens as undisturbed, {stored} facts and {inputs} inputs without a gap, {} steps repeated, \
+         {} + {} runs marked interrupted; from start to answer {} ms (median), {} ms (worst)",
         began.elapsed().as_secs_f64(),
+        north.specimens,
+        south.specimens,
+        north.repeated + south.repeated,
+        north.interrupted,
+        south.interrupted,
         half.as_millis(),
         worst.as_millis()
     );
@@ -180,7 +209,7 @@ fn an_operator_who_repeats_nothing_ends_with_missing_trials() {
     let station = station();
     let over = AtomicBool::new(false);
     let limits = std::thread::scope(|scope| {
-        let killer = scope.spawn(|| killer(&station, &mut dice, 40, 350, &over));
+        let killer = scope.spawn(|| killer(&station, &mut dice, 60, 1_500, &over));
         until("the service is up", PATIENCE, || status(&station.state).is_some());
         let mut operator = Operator::at(&station, Cup::Numbered, false);
         operator.play(&sheet);
@@ -210,6 +239,22 @@ fn counts_of_run(station: &Station, after: u64) -> Vec<Value> {
     counted()
 }
 
+/// One run of the cup, and a kill in the middle of it; what it was told as.
+fn one_run(station: &Station, cup: Cup, name: &str, drops: u32, kill_at: Option<Duration>) -> Vec<Value> {
+    wait_up(&station.state, PORTS);
+    std::thread::sleep(Duration::from_millis(260));
+    let after = status(&station.state).and_then(|s| s["seq"].as_u64()).expect("a number");
+    std::thread::scope(|scope| {
+        scope.spawn(|| station.drops(name, cup, drops, DROP));
+        if let Some(kill_at) = kill_at {
+            std::thread::sleep(kill_at);
+            station.kill9();
+            station.start();
+        }
+    });
+    counts_of_run(station, after)
+}
+
 /// Kills in mid-run. A numbered run is complete by its totals or marked; an
 /// unnumbered one that lost drops is always marked: never silently short.
 #[test]
@@ -219,28 +264,10 @@ fn a_count_across_the_downtime_is_complete_or_marked() {
     station.start();
     wait_up(&station.state, PORTS);
     let (drops, mut marked, mut complete, mut nothing) = (24, 0, 0, 0);
-    for round in 0..14 {
-        let (cup, name) = if round % 7 == 0 { (Cup::Numbered, "cup-1") } else { (Cup::Unnumbered, "cup-2") };
-        wait_up(&station.state, PORTS);
-        std::thread::sleep(Duration::from_millis(250));
-        let after = status(&station.state).and_then(|s| s["seq"].as_u64()).expect("a number");
-        let undisturbed = round == 1;
+    for round in 0..13 {
+        let (cup, name) = if round % 6 == 0 { (Cup::Numbered, "cup-1") } else { (Cup::Unnumbered, "cup-2") };
         let kill_at = Duration::from_millis(60 + dice.below(u64::from(drops) * DROP.as_millis() as u64 - 120));
-        std::thread::scope(|scope| {
-            scope.spawn(|| station.drops(name, cup, drops, DROP));
-            std::thread::sleep(kill_at);
-            if !undisturbed {
-                station.kill9();
-                station.start();
-            }
-        });
-        let counts = counts_of_run(&station, after);
-        if undisturbed {
-            // Control: without a kill the same run is whole and carries no mark.
-            let run = &counts[0]["fact"]["run"];
-            assert_eq!((&counts[0]["fact"]["drops"], &run["interrupted"]), (&json!(drops), &Value::Null), "{run}");
-            continue;
-        }
+        let counts = one_run(&station, cup, name, drops, Some(kill_at));
         for fact in &counts {
             let (told, run) = (&fact["fact"]["drops"], &fact["fact"]["run"]);
             if run["interrupted"].is_string() {
@@ -248,14 +275,26 @@ fn a_count_across_the_downtime_is_complete_or_marked() {
             } else {
                 let noticed = run["gaps"] != 0 || run["doubles"] != 0;
                 assert!(told == drops || noticed, "killed after {kill_at:?}: {drops} fell, told without a word as {told}: {run}");
-                assert_eq!(cup, Cup::Numbered, "killed after {kill_at:?} in mid-run, an unnumbered run cannot be known to be whole: {run}");
+                assert_eq!(
+                    cup,
+                    Cup::Numbered,
+                    "killed after {kill_at:?} in mid-run, an unnumbered run cannot be known to be whole: {run}"
+                );
                 assert_eq!(told, drops, "totals cover what was missed");
                 complete += 1;
             }
         }
         nothing += usize::from(counts.is_empty());
     }
-    println!("13 runs killed in the middle: {marked} marked interrupted, {complete} complete by their totals, {nothing} not heard at all");
+    // Control: without a kill the same run is whole and carries no mark; tried again should this machine have stood still.
+    let whole = |_| {
+        let counts = one_run(&station, Cup::Unnumbered, "cup-2", drops, None);
+        counts.len() == 1 && counts[0]["fact"]["drops"] == drops && counts[0]["fact"]["run"]["interrupted"].is_null()
+    };
+    assert!((0..3).any(whole), "a run that nobody disturbs is whole");
+    println!(
+        "13 runs killed in the middle: {marked} marked interrupted, {complete} complete by their totals, {nothing} not heard at all"
+    );
     assert!(marked >= 6, "{marked} marked");
     // Runs that no bench had in work are loose, and told all the same.
     let report = verify(&station.state, None, &mut |_| ()).expect("it can be read");

@@ -88,9 +88,8 @@ pub struct Ended {
 /// Runs the program to its end.
 pub fn tarecup(arguments: &[&str]) -> Ended {
     let began = Instant::now();
-    let mut child = Running::start(
-        Command::new(TARECUP).args(arguments).stdin(Stdio::null()).stdout(Stdio::piped()).stderr(Stdio::piped()),
-    );
+    let mut child =
+        Running::start(Command::new(TARECUP).args(arguments).stdin(Stdio::null()).stdout(Stdio::piped()).stderr(Stdio::piped()));
     let drain = |mut from: Box<dyn Read + Send>| {
         std::thread::spawn(move || {
             let mut text = String::new();

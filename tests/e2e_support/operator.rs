@@ -16,6 +16,8 @@ use tarecup_simulators::pty::Pty;
 const LINE: Duration = Duration::from_millis(4);
 /// Between two drops: an instrument in a hurry.
 pub const DROP: Duration = Duration::from_millis(30);
+/// A person is not quicker than this after the screen is back.
+const SETTLED: Duration = Duration::from_millis(260);
 /// A run that was not told by then never will be: the pause that ends a run, and much more.
 const RUN_LOST: Duration = Duration::from_secs(4);
 
@@ -141,15 +143,36 @@ impl Station {
         pty.write_or_lose(text.as_bytes()).expect("written");
     }
 
+    /// Pulls the instrument's plug.
+    pub fn unplug(&self, instrument: &str) {
+        self.ptys[instrument].lock().expect("pty").unplug();
+    }
+
+    /// Plugs it in again, under the same name.
+    pub fn replug(&self, instrument: &str) {
+        self.ptys[instrument].lock().expect("pty").replug().expect("a pseudo-terminal");
+    }
+
+    /// What the status says of one instrument.
+    pub fn instrument(&self, name: &str) -> Value {
+        let status = status(&self.state).unwrap_or_default();
+        let all = status["instruments"].as_array().cloned().unwrap_or_default();
+        all.into_iter().find(|i| i["instrument"] == name).unwrap_or_default()
+    }
+
+    pub fn pid(&self) -> u32 {
+        self.child.lock().expect("child").as_ref().expect("running").pid()
+    }
+
     /// The container goes onto the pan and stays.
-    fn load(&self, pan: &str, grams: &str) {
+    pub fn load(&self, pan: &str, grams: &str) {
         for line in std::iter::repeat_n("0.00", 3).chain(std::iter::repeat_n(grams, 6)) {
             self.say(pan, &format!("+{line:>10} g  S\r\n"));
             std::thread::sleep(LINE);
         }
     }
 
-    fn unload(&self, pan: &str) {
+    pub fn unload(&self, pan: &str) {
         (0..3).for_each(|_| self.say(pan, "+      0.00 g  S\r\n"));
     }
 
@@ -174,10 +197,12 @@ pub struct Operator<'a> {
     pan: &'static str,
     cup_name: &'static str,
     cup: Cup,
-    /// Looks whether a step was taken and repeats it; a lazy one just goes on.
+    /// Looks whether a weighing or count was taken and repeats it; a lazy one just goes on.
     careful: bool,
     asks: u64,
     name: String,
+    /// Kills that this operator has noticed.
+    noticed: u64,
     /// Every fact told so far, by number from 1.
     pub facts: Vec<Value>,
     /// Steps done again.
@@ -197,11 +222,32 @@ impl<'a> Operator<'a> {
         static MADE: AtomicU64 = AtomicU64::new(0);
         let name = format!("op{}", MADE.fetch_add(1, Ordering::SeqCst));
         let (facts, silently_wrong) = (Vec::new(), Vec::new());
-        Self { station, bench, pan, cup_name, cup, careful, asks: 0, name, facts, repeated: 0, interrupted: 0, silently_wrong }
+        Self {
+            station,
+            bench,
+            pan,
+            cup_name,
+            cup,
+            careful,
+            asks: 0,
+            name,
+            noticed: 0,
+            facts,
+            repeated: 0,
+            interrupted: 0,
+            silently_wrong,
+        }
     }
 
-    fn up(&self) {
-        wait_up(&self.station.state, PORTS);
+    /// Waits for the service when it went away. The first line after the opening
+    /// of a port may be half a line and is not used, unless it was quiet before.
+    fn up(&mut self) {
+        let generation = self.station.generation();
+        if self.noticed != generation || self.facts.is_empty() {
+            wait_up(&self.station.state, PORTS);
+            std::thread::sleep(SETTLED);
+            self.noticed = generation;
+        }
     }
 
     /// Takes the facts that are new; what was told before must not change.
@@ -225,10 +271,6 @@ impl<'a> Operator<'a> {
                 return answer;
             }
             assert!(start.elapsed() < PATIENCE, "no answer to {wanted}");
-            if !self.careful {
-                self.up();
-                return Value::Null;
-            }
             self.repeated += 1;
             std::thread::sleep(Duration::from_millis(20));
         }
@@ -264,6 +306,7 @@ impl<'a> Operator<'a> {
     }
 
     fn weigh(&mut self, container: &str, grams: &str) {
+        self.up();
         let before = self.latest();
         let mass: f64 = grams.parse().expect("a number");
         let taken = |b: &Value| {
@@ -380,6 +423,7 @@ impl<'a> Operator<'a> {
         }
         self.ask(json!({"ask": "intend_nothing", "bench": bench}));
         if self.careful {
+            // What holds no soil cannot go into the oven: a lazy operator's asks would be refused.
             let containers: Vec<&str> = slices.iter().map(|s| s.container.as_str()).collect();
             self.ask(json!({"ask": "into_oven", "containers": containers}));
             self.ask(json!({"ask": "out_of_oven", "containers": containers}));
