@@ -201,15 +201,13 @@ fn killed_fifty_times_the_results_are_those_of_an_undisturbed_day() {
     assert!(half < Duration::from_secs(2), "a restart takes {half:?}");
 }
 
-/// Control: who does not repeat what was not confirmed ends with a specimen that lacks trials.
-#[test]
-fn an_operator_who_repeats_nothing_ends_with_missing_trials() {
+/// How many of a specimen's five determinations enter the result when nobody repeats what was not confirmed.
+fn lazily(dice: &mut Dice) -> usize {
     let sheet = specimen(1);
-    let mut dice = Dice::thrown("lazy operator");
     let station = station();
     let over = AtomicBool::new(false);
     let limits = std::thread::scope(|scope| {
-        let killer = scope.spawn(|| killer(&station, &mut dice, 60, 1_500, &over));
+        let killer = scope.spawn(|| killer(&station, dice, 60, 1_000, &over));
         until("the service is up", PATIENCE, || status(&station.state).is_some());
         let mut operator = Operator::at(&station, Cup::Numbered, false);
         operator.play(&sheet);
@@ -221,7 +219,15 @@ fn an_operator_who_repeats_nothing_ends_with_missing_trials() {
     });
     let used = limits["trials"].as_array().into_iter().flatten().filter(|t| t["used"] == true).count();
     println!("{} kills, {used} of 5 determinations without repeating", station.kills.load(Ordering::SeqCst));
-    assert!(used < 5, "kills must show where nobody repeats: {limits}");
+    used
+}
+
+/// Control: who does not repeat what was not confirmed ends with a specimen that lacks trials.
+#[test]
+fn an_operator_who_repeats_nothing_ends_with_missing_trials() {
+    let mut dice = Dice::thrown("lazy operator");
+    // Once in a long while no kill hits a weighing.
+    assert!((0..3).any(|_| lazily(&mut dice) < 5), "kills must show where nobody repeats");
 }
 
 /// The counts that a run led to, waiting until nothing more can come of it.
