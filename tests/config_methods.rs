@@ -106,7 +106,7 @@ fn a_method_file_beside_the_configuration_is_found() {
 
 #[test]
 fn wrong_methods_are_pointed_at() {
-    let cases: [(&str, &str, &[&str]); 12] = [
+    let cases: [(&str, &str, &[&str]); 15] = [
         ("how = \"flow-line\"", "how = @@\"flowline\"", &["does not know \"flowline\"", "\"flow-line\": did you mean"]),
         ("trials = 3\n", "@@trails = 3\ntrials = 3\n", &["\"trails\"", "\"trials\": did you mean"]),
         ("[plastic]\nthread_mm = [3.0, 3.2]\n", "@@[plastic]\n", &["lacks thread_mm", "shipped method"]),
@@ -118,11 +118,19 @@ fn wrong_methods_are_pointed_at() {
         ("hours = 16", "@@hours = nan", &["drying.hours", "above 0"]),
         ("decimals = 0", "@@decimals = 7", &["rounding.decimals"]),
         ("name = \"own\"", "name = @@\"my own\"", &["is wrong here", "cannot stand in a name"]),
+        ("\"liquid.trials\" = \"invented\"\n", "", &["liquid.trials is wrong", "no source", "under [source]"]),
+        ("\"drying.hours\" = \"inv", "@@\"drying.ours\" = \"x\"\n\"drying.hours\" = \"inv", &["source.drying.ours is wrong"]),
+        ("\"drying.hours\" = \"inv", "@@\"\\u001b\" = \"x\"\n\"drying.hours\" = \"inv", &["source.\\u{1b} is wrong"]),
         ("title = \"Our own way\"", "@@title = \" \"", &["is empty"]),
     ];
     for (right, wrong, words) in cases {
         let text = OWN.replacen(right, wrong, 1);
-        let text = if words.is_empty() { text.replacen("windows", "@@windows", 1) } else { text };
+        // Where what is wrong is missing, the mark stands at the key that lacks it.
+        let text = match (words.first(), wrong) {
+            (None, _) => text.replacen("windows", "@@windows", 1),
+            (Some(_), "") => text.replacen("trials", "@@trials", 1),
+            _ => text,
+        };
         expect_fault(&text, words, |t| methods::parse("it.toml", t));
     }
     let twice = inside().replacen("title", "@@name = \"own\"\ntitle", 1);

@@ -54,7 +54,7 @@ steady_ms = 900
 name = "cup-1"
 kind = "counter"
 bench = "north"
-port = "tcp://10.0.0.9:4001"
+port = "/dev/serial/by-id/usb-3"
 profile = "drop-line"
 debounce_ms = 200
 pause_ms = 4000
@@ -74,10 +74,6 @@ code_after_s = 30
 repeat_print_s = 5
 intention_hours = 4
 slice_aloud_minutes = 6
-asks_by_mqtt = true
-
-[keep]
-unused_lines_days = 90
 
 [log]
 level = "debug"
@@ -100,8 +96,7 @@ fn every_key_arrives() {
     assert_eq!(s.benches.iter().map(|b| b.name.as_str()).collect::<Vec<_>>(), ["north", "south"]);
     let l = s.linking;
     assert_eq!((l.near, l.slice_minutes, l.code_after_s, l.repeat_print_s), (Mass::from_ug(21_000), 20, 30, 5));
-    assert_eq!((l.intention_hours, l.slice_aloud_minutes, l.asks_by_mqtt), (4, 6, true));
-    assert_eq!(s.keep.unused_lines_days, Some(90));
+    assert_eq!((l.intention_hours, l.slice_aloud_minutes), (4, 6));
     assert_eq!((s.log.level, s.log.format), (LogLevel::Debug, LogFormat::Json));
 }
 
@@ -123,7 +118,7 @@ fn every_key_of_an_instrument_arrives() {
         steady_ms: 900,
     };
     assert_eq!(pan.settle, settle);
-    assert_eq!((cup.port.path.as_str(), cup.port.baud), ("tcp://10.0.0.9:4001", 9600));
+    assert_eq!((cup.port.path.as_str(), cup.port.baud), ("/dev/serial/by-id/usb-3", 9600));
     assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170 });
     assert_eq!((wand.kind, wand.profile.as_str()), (InstrumentKind::Scanner, "plain-code"));
     assert_eq!(wand.settle, SettleLimits::default());
@@ -137,7 +132,7 @@ fn an_empty_file_gives_the_documented_defaults() {
     assert_eq!((s.mqtt.root.as_str(), s.mqtt.retain_days, s.mqtt.url), ("tarecup/v1", 30, None));
     assert_eq!((s.default_method.as_str(), s.benches.len(), s.instruments.len()), ("d4318-multipoint", 1, 0));
     assert_eq!(s.linking, station::Linking::default());
-    assert_eq!((s.state_dir, s.keep.unused_lines_days), (None, None));
+    assert_eq!(s.state_dir, None);
     assert!(s.methods.contains_key(&s.default_method), "the default method is shipped");
 }
 
@@ -178,9 +173,9 @@ fn wrong_instruments_are_pointed_at() {
         ("bench", "bench = @@\"nort\"", &["no such bench", "[[bench]] with name = \"nort\""]),
         ("bench", "bench = [\"bench-1\", @@\"bench-1\"]", &["twice"]),
         ("bench", "bench = @@[]", &["empty list"]),
-        ("port", "port = @@\"ttyUSB0\"", &["neither a path", "tarecup ports"]),
-        ("port", "port = @@\"tcp://host\"", &["tcp://host:port"]),
-        ("port", "port = @@\"tcp://host:99999\"", &["tcp://host:port"]),
+        ("port", "port = @@\"ttyUSB0\"", &["not an absolute path", "tarecup ports"]),
+        ("port", "port = @@\"tcp://10.0.0.9:4001\"", &["later version", "socat", "port = \"/run/pan-1\""]),
+        ("port", "port = @@\"TCP://\"", &["later version", "socat"]),
         ("baud", "baud = @@0", &["is 0", "50 to 4000000"]),
         ("baud", "baud = @@\"9600\"", &["a text in quotes", "without point or quotes"]),
         ("baud", "baud = @@-9600", &["is -9600"]),
@@ -199,25 +194,31 @@ fn wrong_instruments_are_pointed_at() {
     for (key, line, words) in cases {
         expect_fault(&balance(key, line), words, |t| station::parse("it.toml", t));
     }
+    for (key, words) in [("port", &["tarecup ports"][..]), ("profile", &["signed-steady", "[profile.NAME]", "`tarecup check`"])] {
+        let lacking = format!("@@{}", balance(key, ""));
+        expect_fault(&lacking, &[&[key, "is missing"], words].concat(), |t| station::parse("it.toml", t));
+    }
 }
 
 #[test]
 fn wrong_tables_are_pointed_at() {
-    let cases: [(&str, &[&str]); 33] = [
+    let cases: [(&str, &[&str]); 37] = [
         ("[lab]\nstation = @@\"wet room\"", &["lab: station", "' ' cannot stand"]),
         ("[lab]\n@@stations = \"x\"", &["\"station\": did you mean"]),
         ("[lab]\nname = @@\"a\\u0000b\"", &["control character"]),
         ("[lab]\n@@state_dir = \"x\"", &["does not belong here", "top of the configuration file"]),
         ("@@baud = 1", &["does not belong here", "[[instrument]]"]),
         ("@@lab = 3".replace("@@lab = ", "lab = @@").leak(), &["is a whole number", "[lab]"]),
-        ("[mqtt]\nurl = \"mqtts://h\"\nuser = \"u\"\n@@password = \"hunter2\"", &["is a secret", "password_file"]),
+        ("[mqtt]\nurl = \"mqtt://h\"\nuser = \"u\"\n@@password = \"hunter2\"", &["is a secret", "password_file"]),
         ("[mqtt]\nurl = @@\"mqtt://u:hunter2@h\"", &["holds a user or password", "password_file"]),
         ("[mqtt]\nurl = @@\"http://h\"", &["does not begin with mqtt://"]),
         ("[mqtt]\nurl = @@\"mqtt://h:0\"", &["1 to 65535"]),
         ("[mqtt]\nurl = @@\"mqtt://\"", &["is not a host"]),
         ("[mqtt]\nurl = @@\"mqtt://[::1\"", &["is not a host"]),
         ("[mqtt]\n@@user = \"u\"", &["there is no url", "mqtts://host:8883"]),
-        ("[mqtt]\nurl = \"mqtts://h\"\n@@password_file = \"p\"", &["has no user", "user ="]),
+        ("[mqtt]\nurl = \"mqtt://h\"\n@@password_file = \"p\"", &["has no user", "user ="]),
+        ("[mqtt]\nurl = @@\"mqtts://h\"", &["mqtt: url asks for TLS", "no ca_file", "ca_file = \"ca.crt\" in [mqtt]"]),
+        ("[mqtt]\nurl = \"mqtts://h\"\nca_file = @@5", &["putting it in quotes"]),
         ("[mqtt]\nurl = \"mqtt://h\"\n@@ca_file = \"p\"", &["needs TLS", "mqtts://"]),
         ("[mqtt]\n@@url = \"mqtt://h\"\n[broker]\nlisten = \"127.0.0.1:1\"", &["built-in", "one of the two"]),
         ("[mqtt]\nroot = @@\"a/+/b\"", &["wildcard", "tarecup/v1"]),
@@ -235,7 +236,9 @@ fn wrong_tables_are_pointed_at() {
         ("state_dir = @@5", &["putting it in quotes"]),
         ("[linking]\nnear_g = @@\"0.05\"", &["without quotes"]),
         ("[linking]\nslice_minutes = 4\nslice_aloud_minutes = @@5", &["no longer owed after 4"]),
-        ("[linking]\nasks_by_mqtt = @@\"yes\"", &["true or false without quotes"]),
+        ("[linking]\n@@asks_by_mqtt = false", &["is not a known key"]),
+        ("[@@keep]\nunused_lines_days = 400", &["is not a known key", "one of state_dir"]),
+        ("method_files = @@\"a\\u001b.toml\"", &["not a path"]),
         ("[log]\nlevel = @@\"infos\"", &["\"info\": did you mean"]),
     ];
     for (marked, words) in cases {
@@ -273,8 +276,6 @@ fn instruments_that_collide_are_pointed_at() {
     }
     let two = "[[bench]]\nname='x'\n[[bench]]\nname='y'\n@@[[instrument]]\nname='a'\nkind='balance'\nport='/dev/ttyS0'\nprofile='signed-steady'\n";
     expect_fault(two, &["instrument 1: bench", "is missing", "x, y"], |t| station::parse("it.toml", t));
-    let tcp = "[[instrument]]\nname='a'\nkind='balance'\nport='tcp://h:1'\n@@baud=1200\nprofile='signed-steady'\n";
-    expect_fault(tcp, &["no effect on a network port"], |t| station::parse("it.toml", t));
 }
 
 #[test]
@@ -346,5 +347,36 @@ fn own_profiles_are_taken_and_checked() {
     expect_fault(&format!("[profile.@@\"my own\"]\nkind = \"counter\"\n{TICKS}"), &["is not a name"], |t| {
         station::parse("it.toml", t)
     });
+    let pattern = "[profile.mine]\nkind = 'counter'\nframe = { ends = [\"\\n\"] }\n[[profile.mine.line]]\n@@pattern = '(tick'\nmeans = 'drop'\n";
+    expect_fault(pattern, &["profile, mine: line[1].pattern"], |t| station::parse("it.toml", t));
+    let unit = "[profile.mine]\nkind = 'balance'\n@@unit = \"g\\u001b\"\nframe = { ends = [\"\\n\"] }\nline = []\n";
+    expect_fault(unit, &["profile, mine: unit is wrong", "\\u{1b}"], |t| station::parse("it.toml", t));
+    let renamed = format!("[profile.mine]\nname = \"yours\"\nkind = \"counter\"\n{TICKS}").replace("name", "@@name");
+    expect_fault(&renamed, &["\"yours\"", "\"mine\""], |t| station::parse("it.toml", t));
+    let key = "[profile.mine]\nkind = 'counter'\n@@fram = { ends = [\"\\n\"] }\n";
+    expect_fault(key, &["\"frame\": did you mean"], |t| station::parse("it.toml", t));
     expect_fault(&format!("@@[profile.mine]\n{TICKS}"), &["profile, mine", "kind"], |t| station::parse("it.toml", t));
+}
+
+#[test]
+fn relative_paths_lie_beside_the_file() {
+    let folder = tempfile::tempdir().expect("a folder");
+    let load = |text: &str| {
+        let config = folder.path().join("tarecup.toml");
+        std::fs::write(&config, text).expect("written");
+        station::load(&config).unwrap_or_else(|f| panic!("{f}"))
+    };
+    let mqtt = "[mqtt]\nurl = 'mqtts://h'\nuser = 'u'\n";
+    let s = load(&format!("state_dir = 'state'\n{mqtt}password_file = 'secret/broker'\nca_file = '../ca.crt'\n"));
+    assert_eq!(s.state_dir, Some(folder.path().join("state")));
+    assert_eq!(s.mqtt.password_file, Some(folder.path().join("secret/broker")));
+    assert_eq!(s.mqtt.ca_file, Some(folder.path().join("../ca.crt")));
+    let s = load("[broker]\npassword_file = 'users'\n");
+    assert_eq!((s.broker.password_file, s.state_dir), (Some(folder.path().join("users")), None));
+
+    let s = load(&format!("state_dir = '/var/lib/tarecup'\n{mqtt}password_file = '/etc/p'\nca_file = '/etc/ca.crt'\n"));
+    let as_written = ["/var/lib/tarecup", "/etc/p", "/etc/ca.crt"].map(|p| Some(PathBuf::from(p)));
+    assert_eq!([s.state_dir, s.mqtt.password_file, s.mqtt.ca_file], as_written);
+    let s = load("[broker]\npassword_file = '/etc/users'\n");
+    assert_eq!(s.broker.password_file, Some(PathBuf::from("/etc/users")));
 }

@@ -100,7 +100,7 @@ impl Days {
     }
 
     fn open(&mut self) {
-        let setup = desk_setup(&self.station, &self.profiles, self.dir.path());
+        let setup = desk_setup(&self.station, &self.profiles, self.dir.path(), true);
         let options = OpenOptions::new(&format!("boot-{}", self.boots), self.utc_us);
         let (utc_us, mono_us) = (self.utc_us, self.mono_us);
         let (desk, first) =

@@ -92,6 +92,20 @@ pub(crate) fn quote(text: &str) -> String {
     if text.chars().nth(LONGEST).is_some() { format!("\"{shown}…\"") } else { format!("\"{shown}\"") }
 }
 
+/// A sentence that holds texts from a file, fit to stand in a message: control
+/// characters escaped, cut when long.
+pub(crate) fn harmless(sentence: &str) -> String {
+    const LONGEST: usize = 400;
+    let mut shown = String::new();
+    for c in sentence.chars().take(LONGEST) {
+        if c.is_control() { shown.extend(c.escape_debug()) } else { shown.push(c) }
+    }
+    if sentence.chars().nth(LONGEST).is_some() {
+        shown.push('…');
+    }
+    shown
+}
+
 /// The candidate that `word` was probably meant to be.
 pub fn did_you_mean<'c>(word: &str, candidates: impl IntoIterator<Item = &'c str>) -> Option<&'c str> {
     if word.len() > 64 {
@@ -162,5 +176,7 @@ mod tests {
     fn hostile_text_is_shown_harmlessly() {
         assert_eq!(quote("a\u{1b}[31m\n"), "\"a\\u{1b}[31m\\n\"");
         assert!(quote(&"y".repeat(500)).len() < 60);
+        assert_eq!(harmless("the \"unit\" a\u{1b}[31m\n is none"), "the \"unit\" a\\u{1b}[31m\\n is none");
+        assert!(harmless(&"\u{1}".repeat(1_000_000)).len() < 3_000);
     }
 }

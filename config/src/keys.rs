@@ -12,7 +12,6 @@ pub(crate) const STATION: &[&str] = &[
     "bench",
     "instrument",
     "linking",
-    "keep",
     "log",
     "method",
     "profile",
@@ -45,8 +44,7 @@ pub(crate) const SETTLE: &[&str] = &["talks", "steady_readings", "steady_span_g"
 /// Keys of an instrument that only a cup counter has.
 pub(crate) const COUNT: &[&str] = &["debounce_ms", "pause_ms", "gap_percent"];
 pub(crate) const LINKING: &[&str] =
-    &["near_g", "slice_minutes", "code_after_s", "repeat_print_s", "intention_hours", "slice_aloud_minutes", "asks_by_mqtt"];
-pub(crate) const KEEP: &[&str] = &["unused_lines_days"];
+    &["near_g", "slice_minutes", "code_after_s", "repeat_print_s", "intention_hours", "slice_aloud_minutes"];
 pub(crate) const LOG: &[&str] = &["level", "format"];
 
 /// A scenario or sheet file.

@@ -1,7 +1,7 @@
 //! Instrument profiles: the shipped ones and those of `[profile.NAME]` tables.
 
 use crate::embedded;
-use crate::fault::{Faults, Place};
+use crate::fault::{Faults, Place, harmless, quote};
 use crate::reader::{Table, read};
 use crate::station::InstrumentKind;
 use serde::Deserialize;
@@ -10,16 +10,17 @@ use std::sync::OnceLock;
 use tarecup_core::names::ProfileName;
 use tarecup_core::sense::Talks;
 use tarecup_drivers::port::{CharFrame, Flow};
+use tarecup_drivers::profile::{self, Profile, ProfileFault, ProfileText};
 
-/// A profile as it was written, ready to be compiled.
+/// A profile that has been checked.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub struct ProfileSource {
     /// Its name.
     pub name: ProfileName,
     /// Whose lines it reads.
     pub kind: InstrumentKind,
-    /// What it says, as a TOML text with its keys at the top level.
-    pub toml: String,
+    /// What it says; [`tarecup_drivers::profile::Profile::compile`] takes it without fault.
+    pub text: ProfileText,
     /// The file it comes from.
     pub file: String,
     /// Where it begins in that file.
@@ -43,25 +44,14 @@ pub struct Usual {
     pub talks: Option<Talks>,
 }
 
-/// The keys of a profile that an instrument's table can override.
-#[derive(Deserialize)]
-struct UsualText {
-    talks: Option<String>,
-    #[serde(default)]
-    serial: SerialText,
-}
-
-#[derive(Default, Deserialize)]
-struct SerialText {
-    baud: Option<u32>,
-    frame: Option<CharFrame>,
-    flow: Option<Flow>,
-}
-
-impl From<UsualText> for Usual {
-    fn from(text: UsualText) -> Self {
-        let talks = text.talks.map(|t| if t == "print-on-key" { Talks::PrintOnKey } else { Talks::Continuous });
-        Self { baud: text.serial.baud, frame: text.serial.frame, flow: text.serial.flow, talks }
+impl From<&ProfileText> for Usual {
+    fn from(text: &ProfileText) -> Self {
+        let talks = text.talks.map(|t| match t {
+            profile::Talks::PrintOnKey => Talks::PrintOnKey,
+            profile::Talks::Stream | profile::Talks::Asked => Talks::Continuous,
+        });
+        let serial = text.serial.clone().unwrap_or_default();
+        Self { baud: serial.baud, frame: serial.frame, flow: serial.flow, talks }
     }
 }
 
@@ -109,23 +99,28 @@ pub(crate) fn own(root: &Table<'_>, profiles: &mut Profiles) -> BTreeSet<Profile
 
 /// The one place where a profile's table is understood.
 fn source(table: &Table<'_>, name: ProfileName, file: &str) -> Option<ProfileSource> {
-    let kind = table.need("kind", "balance, counter or scanner", "kind = \"balance\"")?.one_of(&InstrumentKind::WORDS)?;
-    let tree = || toml::Deserializer::from(table.to_tree());
-    let read = UsualText::deserialize(tree()).and_then(|usual| toml::Table::deserialize(tree()).map(|plain| (usual, plain)));
-    let (usual, plain) = match read {
-        Ok(read) => read,
+    let text = match ProfileText::deserialize(toml::Deserializer::from(table.to_tree())) {
+        Ok(text) => text,
         Err(e) => {
             table.refuse(&e, "profile");
             return None;
         }
     };
-    Some(ProfileSource {
-        name,
-        kind,
-        toml: plain.to_string(),
-        file: file.into(),
-        at: table.place(),
-        shipped: false,
-        usual: usual.into(),
-    })
+    if let Some(other) = text.name.as_ref().filter(|n| *n != name.as_str()) {
+        let says = format!("is {}, but the file or table calls it {}", quote(other), quote(name.as_str()));
+        table.fault_at(table.locate("name"), &table.path("name"), &says, "one name", "taking this line out, or renaming one");
+        return None;
+    }
+    if let Err(ProfileFault { key, says }) = Profile::compile(text.clone()) {
+        let (path, says) = (table.path(&key), format!("is wrong: {}", harmless(&says)));
+        table.fault_at(table.locate(&key), &path, &says, "a profile that can be used", "comparing with a shipped profile");
+        return None;
+    }
+    let kind = match text.kind {
+        profile::Kind::Balance => InstrumentKind::Balance,
+        profile::Kind::Counter => InstrumentKind::Counter,
+        profile::Kind::Scanner => InstrumentKind::Scanner,
+    };
+    let usual = Usual::from(&text);
+    Some(ProfileSource { name, kind, text, file: file.into(), at: table.place(), shipped: false, usual })
 }

@@ -246,10 +246,15 @@ impl<'a> Table<'a> {
     }
 
     /// Where a key path such as `liquid.trials` or `line[2].pattern` stands:
-    /// as much of it as there is.
+    /// as much of it as there is. What is left of the path may also be one key
+    /// in quotes, as in `[source]`.
     pub(crate) fn locate(&self, path: &str) -> usize {
         let (mut at, mut entries) = (self.at, Some(self.entries));
-        for part in path.split('.') {
+        let mut left = Some(path);
+        while let Some(path) = left {
+            let whole = entries.and_then(|t| t.get_key_value(path));
+            let part = if whole.is_some() { path } else { path.split('.').next().unwrap_or(path) };
+            left = path[part.len()..].strip_prefix('.');
             let (key, nth) = match part.strip_suffix(']').and_then(|p| p.split_once('[')) {
                 Some((key, nth)) => (key, nth.parse::<usize>().ok()),
                 None => (part, None),
@@ -362,15 +367,6 @@ impl<'a> Entry<'a> {
             self.fault(&format!("is {}", quote(text)), &expected, &remedy_for_name(text, &words));
         }
         found
-    }
-
-    /// True or false.
-    pub(crate) fn flag(&self) -> Option<bool> {
-        let flag = self.value.as_bool();
-        if flag.is_none() {
-            self.wrong_kind("true or false", "true or false without quotes");
-        }
-        flag
     }
 
     /// A whole number within bounds.

@@ -27,7 +27,7 @@ enum OneOrList<T> {
 #[schemars(deny_unknown_fields)]
 #[expect(dead_code, reason = "only its shape is used")]
 struct Config {
-    /// Folder of the ledger; without it, where the service manager says.
+    /// Folder of the ledger, relative to this file; without it, where the service manager says.
     state_dir: Option<String>,
     /// Method where nobody names one; default "d4318-multipoint".
     default_method: Option<Name>,
@@ -45,8 +45,6 @@ struct Config {
     instrument: Option<Vec<Instrument>>,
     /// How weighings find their container.
     linking: Option<Linking>,
-    /// What is kept.
-    keep: Option<Keep>,
     /// What the program says about itself.
     log: Option<Log>,
     /// Methods of the laboratory, by name.
@@ -78,9 +76,9 @@ struct Mqtt {
     url: Option<String>,
     /// User name at the broker.
     user: Option<String>,
-    /// File whose first line is the password.
+    /// File whose first line is the password, relative to this file.
     password_file: Option<String>,
-    /// File with the certificates to trust.
+    /// File with the certificates to trust, relative to this file; required with mqtts://.
     ca_file: Option<String>,
     /// Topic root; default "tarecup/v1".
     #[schemars(regex(pattern = r"^[A-Za-z0-9._-]+(/[A-Za-z0-9._-]+)*$"))]
@@ -97,7 +95,7 @@ struct Mqtt {
 struct Broker {
     /// Where it listens; default "127.0.0.1:18883".
     listen: Option<String>,
-    /// File of users and passwords; required beyond loopback.
+    /// File of users and passwords, relative to this file; required beyond loopback.
     password_file: Option<String>,
 }
 
@@ -152,7 +150,8 @@ struct Instrument {
     kind: Kind,
     /// The bench it serves; a balance may serve several.
     bench: Option<OneOrList<Name>>,
-    /// "/dev/serial/by-id/…" or "tcp://host:port".
+    /// Absolute path of a serial port, such as "/dev/serial/by-id/…".
+    #[schemars(regex(pattern = r"^/"))]
     port: String,
     /// Speed in baud; default 9600.
     #[schemars(range(min = 50, max = 4_000_000))]
@@ -211,18 +210,6 @@ struct Linking {
     /// A slice owed this long is said aloud, minutes; default 5.
     #[schemars(range(min = 1, max = 240))]
     slice_aloud_minutes: Option<u32>,
-    /// Asks that change something are taken over MQTT; default false.
-    asks_by_mqtt: Option<bool>,
-}
-
-/// What is kept.
-#[derive(JsonSchema)]
-#[schemars(deny_unknown_fields)]
-#[expect(dead_code, reason = "only its shape is used")]
-struct Keep {
-    /// Lines that no fact rests on go after this many days; left out: never.
-    #[schemars(range(min = 1, max = 36_500))]
-    unused_lines_days: Option<u32>,
 }
 
 /// Levels of the log.
@@ -280,7 +267,6 @@ mod tests {
             ("Bench", keys::BENCH),
             ("Instrument", keys::INSTRUMENT),
             ("Linking", keys::LINKING),
-            ("Keep", keys::KEEP),
             ("Log", keys::LOG),
         ];
         for (name, known) in tables {

@@ -22,11 +22,14 @@ use tarecup_core::sense::Talks;
 use tarecup_core::stamp::{SECOND_US, Stamp};
 use tarecup_drivers::heard::{Clock, Deliver};
 use tarecup_drivers::port::serial::{self, PortTask};
-use tarecup_drivers::profile::{Profile, ProfileText};
+use tarecup_drivers::profile::Profile;
 use tokio::runtime::{Handle, Runtime};
 
 /// How long an orderly stop waits for the broker.
 const FAREWELL: Duration = Duration::from_secs(3);
+
+/// How long the built-in broker has to read the farewell.
+const BROKER_READS: Duration = Duration::from_millis(200);
 
 /// Why the service did not start.
 #[derive(Debug, thiserror::Error)]
@@ -119,7 +122,7 @@ impl Service {
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
         let heard = Arc::new(Heard::default());
-        let setup = desk_setup(&station, &profiles, &state_dir);
+        let setup = desk_setup(&station, &profiles, &state_dir, time_passes);
         let options = OpenOptions::new(&boot_id(), clock.now().utc_us);
         let stamp = |boot| {
             clock.set_boot(boot);
@@ -245,6 +248,8 @@ impl Service {
         }
         #[cfg(feature = "broker")]
         if let Some(broker) = self.broker {
+            // It reads the farewell in its own time; stopped before that, it would say the last will.
+            std::thread::sleep(BROKER_READS);
             self.net_runtime.block_on(broker.stop());
         }
         let _ = std::fs::remove_file(socket::path(&self.state_dir));
@@ -328,15 +333,15 @@ pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
     Ok(profiles)
 }
 
-/// Compiles one profile.
-pub fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
-    let mut text: ProfileText = toml::from_str(&source.toml).map_err(|e| e.to_string())?;
+/// Compiles one profile, under the name of its file or table.
+fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
+    let mut text = source.text.clone();
     text.name.get_or_insert_with(|| source.name.as_str().into());
     Profile::compile(text).map_err(|e| e.to_string())
 }
 
 /// What the desk needs to know of the settings.
-pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> DeskSetup {
+pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_passes: bool) -> DeskSetup {
     let linking = &station.linking;
     let seconds = |s: u32| i64::from(s) * SECOND_US;
     let lab = Setup {
@@ -353,7 +358,8 @@ pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> D
             slice_aloud_us: seconds(linking.slice_aloud_minutes) * 60,
         },
     };
-    let instruments = station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?))).collect();
+    let instruments =
+        station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?, time_passes))).collect();
     DeskSetup {
         station: station.lab.station.as_str().into(),
         state_dir: state_dir.display().to_string(),
@@ -364,7 +370,8 @@ pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path) -> D
     }
 }
 
-fn instrument(i: &Instrument, profile: &Arc<Profile>) -> InstrumentSetup {
+/// In a virtual day hours pass in no time: silence then means nothing.
+fn instrument(i: &Instrument, profile: &Arc<Profile>, time_passes: bool) -> InstrumentSetup {
     let mut decoder = profile.decoder();
     InstrumentSetup {
         name: i.name.clone(),
@@ -378,7 +385,7 @@ fn instrument(i: &Instrument, profile: &Arc<Profile>) -> InstrumentSetup {
         port: i.port.path.clone(),
         settle: i.settle,
         count: i.count,
-        streams: i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
+        streams: time_passes && i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
         decode: Box::new(move |bytes| decoder.decode(bytes)),
     }
 }
@@ -393,12 +400,8 @@ fn settings_text(station: &Station) -> String {
                    "settle": i.settle, "count": i.count})
         })
         .collect();
-    let profiles: BTreeMap<_, _> = station
-        .instruments
-        .iter()
-        .filter_map(|i| station.profiles.get(&i.profile))
-        .map(|p| (p.name.as_str(), p.toml.as_str()))
-        .collect();
+    let profiles: BTreeMap<_, _> =
+        station.instruments.iter().filter_map(|i| station.profiles.get(&i.profile)).map(|p| (p.name.as_str(), &p.text)).collect();
     let linking = &station.linking;
     json!({
         "program": env!("CARGO_PKG_VERSION"), "laboratory": station.lab.name, "station": station.lab.station,

@@ -55,7 +55,7 @@ pub(super) fn broker_url(entry: &Entry<'_>) -> Option<BrokerUrl> {
     }
     let rest = rest.strip_suffix('/').unwrap_or(rest);
     let default = if scheme == Scheme::Mqtts { defaults::MQTTS_PORT } else { defaults::MQTT_PORT };
-    let Some((host, port)) = host_port(rest, Some(default)) else {
+    let Some((host, port)) = host_port(rest, default) else {
         entry.fault(
             &format!("names {}, which is not a host with a port", quote(rest)),
             URL,
@@ -67,7 +67,7 @@ pub(super) fn broker_url(entry: &Entry<'_>) -> Option<BrokerUrl> {
 }
 
 /// `host`, `host:port` or `[v6]:port`.
-fn host_port(text: &str, default: Option<u16>) -> Option<(String, u16)> {
+fn host_port(text: &str, default: u16) -> Option<(String, u16)> {
     let (host, port) = if let Some(rest) = text.strip_prefix('[') {
         let (host, rest) = rest.split_once(']')?;
         host.parse::<std::net::Ipv6Addr>().ok()?;
@@ -75,9 +75,9 @@ fn host_port(text: &str, default: Option<u16>) -> Option<(String, u16)> {
     } else {
         text.split_once(':').unwrap_or((text, ""))
     };
-    let port = match (port, default) {
-        ("", Some(port)) if !text.ends_with(':') => port,
-        (digits, _) if digits.bytes().all(|b| b.is_ascii_digit()) => digits.parse().ok().filter(|p| *p > 0)?,
+    let port = match port {
+        "" if !text.ends_with(':') => default,
+        digits if digits.bytes().all(|b| b.is_ascii_digit()) => digits.parse().ok().filter(|p| *p > 0)?,
         _ => return None,
     };
     let allowed = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'.' | b'-' | b'_' | b':');
@@ -122,16 +122,24 @@ pub(super) fn topic_root(entry: &Entry<'_>) -> Option<String> {
     None
 }
 
-/// Reads an instrument's port: an absolute path or `tcp://host:port`.
+/// What an instrument's port looks like.
+pub(super) const PORT: &str = "the absolute path of a serial port, such as \"/dev/serial/by-id/…\"";
+
+/// Reads an instrument's port: an absolute path.
 pub(super) fn port(entry: &Entry<'_>) -> Option<String> {
     let text = entry.text()?;
-    let good = match text.strip_prefix("tcp://") {
-        Some(rest) => host_port(rest, None).is_some(),
-        None => text.starts_with('/') && text.len() <= 4_000 && !text.chars().any(char::is_control),
-    };
-    if !good {
-        let says = format!("is {}, which is neither a path nor a network address", quote(text));
-        entry.fault(&says, "\"/dev/serial/by-id/…\" or \"tcp://host:port\"", "`tarecup ports`, which lists the ports there are");
+    if text.get(..6).is_some_and(|scheme| scheme.eq_ignore_ascii_case("tcp://")) {
+        entry.fault(
+            "is on the network, and instruments on the network come with a later version",
+            PORT,
+            "a bridge to a serial port of this machine, such as `socat pty,raw,echo=0,link=/run/pan-1 tcp:HOST:PORT`, \
+             and port = \"/run/pan-1\"",
+        );
+        return None;
+    }
+    if !text.starts_with('/') || text.len() > 4_000 || text.chars().any(char::is_control) {
+        let says = format!("is {}, which is not an absolute path", quote(text));
+        entry.fault(&says, PORT, "`tarecup ports`, which lists the ports there are");
         return None;
     }
     Some(text.to_string())

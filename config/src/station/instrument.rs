@@ -99,8 +99,7 @@ fn at_benches(table: &Table<'_>, benches: &[Bench], kind: Option<InstrumentKind>
 }
 
 fn port(table: &Table<'_>, taken: &mut Taken, usual: Usual) -> Option<PortSettings> {
-    let entry =
-        table.need("port", "\"/dev/serial/by-id/…\" or \"tcp://host:port\"", "`tarecup ports`, which lists the ports there are");
+    let entry = table.need("port", address::PORT, "`tarecup ports`, which lists the ports there are");
     let baud = table.get("baud");
     let speed = match &baud {
         Some(e) => e.whole(50..=4_000_000, "the speed in baud"),
@@ -117,16 +116,6 @@ fn port(table: &Table<'_>, taken: &mut Taken, usual: Usual) -> Option<PortSettin
     };
     let entry = entry?;
     let path = address::port(&entry)?;
-    if path.starts_with("tcp://") {
-        for entry in ["baud", "frame", "flow"].iter().filter_map(|k| table.get(k)) {
-            let says = "has no effect on a network port";
-            entry.fault_of_key(
-                says,
-                "a serial port, or no such key",
-                "setting it in the box at the other end and taking this line out",
-            );
-        }
-    }
     if let Some(first) = taken.ports.iter().find(|t| t.value == path) {
         let says = format!("is the port of the instrument in line {} too", first.at.line);
         entry.fault(&says, "a port of its own for each instrument", "`tarecup ports`, which lists the ports there are");
@@ -153,7 +142,9 @@ fn profile<'p>(table: &Table<'_>, kind: Option<InstrumentKind>, known: &Known<'p
         None => known.profiles.keys().map(ProfileName::as_str).collect(),
     };
     let expected = format!("what the instrument speaks: {}", fitting.join(", "));
-    let entry = table.need("profile", &expected, "`tarecup learn PORT`, which listens and says which profile fits")?;
+    let try_this =
+        "one of these or, where the instrument speaks otherwise, a [profile.NAME] of your own, and then `tarecup check`";
+    let entry = table.need("profile", &expected, try_this)?;
     let name: ProfileName = entry.name()?;
     if known.broken.contains(&name) {
         return None;

@@ -21,7 +21,8 @@ pub use address::{BrokerUrl, Scheme};
 
 /// Everything a station is told. An empty file gives the defaults.
 ///
-/// Paths are as written; relative ones mean the folder of the file.
+/// [`load`] makes every relative path one of the configuration file's folder;
+/// [`parse`] and [`parse_with`] know no folder and leave paths as written.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Station {
     /// The laboratory.
@@ -38,8 +39,6 @@ pub struct Station {
     pub instruments: Vec<Instrument>,
     /// How weighings find their container.
     pub linking: Linking,
-    /// What is kept.
-    pub keep: Keep,
     /// What the program says about itself.
     pub log: Log,
     /// Shipped methods and the laboratory's own, by name.
@@ -68,7 +67,7 @@ pub struct Mqtt {
     pub user: Option<String>,
     /// File whose first line is the password.
     pub password_file: Option<PathBuf>,
-    /// File with the certificates that are trusted in place of the system's.
+    /// File with the certificates that are trusted; never absent with `mqtts://`.
     pub ca_file: Option<PathBuf>,
     /// Topic root, without slash at either end.
     pub root: String,
@@ -152,8 +151,6 @@ pub struct Linking {
     pub intention_hours: u32,
     /// A slice owed this long is said aloud, minutes.
     pub slice_aloud_minutes: u32,
-    /// Asks that change something are taken over MQTT.
-    pub asks_by_mqtt: bool,
 }
 
 impl Default for Linking {
@@ -165,16 +162,8 @@ impl Default for Linking {
             repeat_print_s: 10,
             intention_hours: 6,
             slice_aloud_minutes: 5,
-            asks_by_mqtt: false,
         }
     }
-}
-
-/// What is kept.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
-pub struct Keep {
-    /// Lines that no fact rests on go after this many days; `None`: never.
-    pub unused_lines_days: Option<u32>,
 }
 
 /// What the program says about itself.
@@ -227,15 +216,26 @@ pub enum LogFormat {
 
 /// Reads a configuration file from disk, with the method files that it names.
 ///
+/// A relative `state_dir`, `password_file`, `ca_file` or member of
+/// `method_files` lies in the folder of the configuration file (of the path it
+/// is named by, where that is a link), not in the one the program was started
+/// from: a service manager starts it from anywhere.
+///
 /// # Errors
 /// What is wrong, in that file or in a method file, with its place.
 pub fn load(path: &Path) -> Result<Station, Faults> {
     let config = text::read_file(path)?;
     let beside = path.parent().unwrap_or(Path::new(""));
-    parse_with(&path.display().to_string(), &config, &|name| {
+    let mut station = parse_with(&path.display().to_string(), &config, &|name| {
         let path = beside.join(name);
         text::read_file(&path).map(|text| (path.display().to_string(), text))
-    })
+    })?;
+    let mqtt = &mut station.mqtt;
+    let paths = [&mut station.state_dir, &mut mqtt.password_file, &mut mqtt.ca_file, &mut station.broker.password_file];
+    for path in paths.into_iter().flatten() {
+        *path = beside.join(&*path);
+    }
+    Ok(station)
 }
 
 /// Reads a configuration file that names no method files.
@@ -279,10 +279,10 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
     let default_method = default_method(root, &methods, &broken);
     // Everything is read before anything is missed, so that all faults are told.
     let (lab, mqtt, broker) = (tables::lab(root), tables::mqtt(root), tables::broker(root));
-    let (linking, keep, log) = (tables::linking(root), tables::keep(root), tables::log(root));
+    let (linking, log) = (tables::linking(root), tables::log(root));
     let state_dir = root.get("state_dir").and_then(|e| tables::path(&e));
     let (lab, default_method) = (lab?, default_method?);
-    Some(Station { lab, mqtt, broker, state_dir, benches, instruments, linking, keep, log, methods, profiles, default_method })
+    Some(Station { lab, mqtt, broker, state_dir, benches, instruments, linking, log, methods, profiles, default_method })
 }
 
 /// Names of tables that have a fault of their own: using them is no second one.
@@ -327,8 +327,8 @@ fn own_methods(root: &Table<'_>, methods: &mut Methods) -> Broken<MethodName> {
 fn method_files(root: &Table<'_>, methods: &mut Methods, files: MethodFiles<'_>) {
     let Some(list) = root.get("method_files") else { return };
     for entry in list.one_or_list() {
-        let Some(name) = entry.text() else { continue };
-        match files(name).and_then(|(file, text)| methods::parse(&file, &text)) {
+        let Some(name) = tables::path(&entry) else { continue };
+        match files(&name.to_string_lossy()).and_then(|(file, text)| methods::parse(&file, &text)) {
             Ok(method) => drop(methods.insert(method.name.clone(), method)),
             Err(faults) => entry.foreign(faults),
         }

@@ -1,6 +1,6 @@
 //! The plain tables of the configuration file.
 
-use super::{Bench, Broker, Keep, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, address};
+use super::{Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, address};
 use crate::reader::{Entry, Table};
 use crate::{defaults, keys};
 use std::path::PathBuf;
@@ -60,35 +60,52 @@ pub(super) fn mqtt(root: &Table<'_>) -> Mqtt {
     if let Some(days) = table.get("retain_days").and_then(|e| e.whole(1..=3_650, "days")) {
         mqtt.retain_days = days;
     }
-    for key in ["user", "password_file", "ca_file"] {
-        if let (None, Some(entry)) = (&url, table.get(key)) {
-            entry.fault_of_key(
-                "says how to reach a broker, but there is no url",
-                "url beside it",
-                "url = \"mqtts://host:8883\" in [mqtt], or taking this line out",
-            );
+    match &url {
+        Some(url) => {
+            of_the_connection(&table, url, mqtt.url.as_ref());
+            if root.get("broker").is_some() {
+                let says = "names a broker, and [broker] asks for the built-in one";
+                url.fault_of_key(says, "one of the two", "taking out url or the [broker] table");
+            }
         }
+        None => without_url(&table),
     }
-    if let (Some(_), Some(entry), None) = (&url, table.get("password_file"), table.get("user")) {
+    mqtt
+}
+
+/// Keys that say how to reach a broker, where none is named.
+fn without_url(table: &Table<'_>) {
+    for entry in ["user", "password_file", "ca_file"].iter().filter_map(|k| table.get(k)) {
+        entry.fault_of_key(
+            "says how to reach a broker, but there is no url",
+            "url beside it",
+            "url = \"mqtts://host:8883\" in [mqtt], or taking this line out",
+        );
+    }
+}
+
+/// What the keys beside `url` must say for the broker to be reached.
+fn of_the_connection(table: &Table<'_>, url: &Entry<'_>, read: Option<&BrokerUrl>) {
+    if let (Some(entry), None) = (table.get("password_file"), table.get("user")) {
         entry.fault_of_key(
             "has no user beside it",
             "user and password_file together",
             "user = \"a name at the broker\" in [mqtt]",
         );
     }
-    let plain = mqtt.url.as_ref().is_some_and(|u| u.scheme == super::Scheme::Mqtt);
-    if let (true, Some(entry)) = (plain, table.get("ca_file")) {
-        entry.fault_of_key(
+    match (read.map(|u| u.scheme), table.get("ca_file")) {
+        (Some(Scheme::Mqtt), Some(entry)) => entry.fault_of_key(
             "needs TLS, and url begins with mqtt://",
             "a url that begins with mqtts://",
             "mqtts:// in url, or taking this line out",
-        );
+        ),
+        (Some(Scheme::Mqtts), None) => url.fault(
+            "asks for TLS, and no ca_file says which certificates to trust",
+            "ca_file beside a url that begins with mqtts://",
+            "ca_file = \"ca.crt\" in [mqtt], a PEM file with the certificate of whoever signed the broker's, or mqtt:// for no TLS",
+        ),
+        _ => {}
     }
-    if let (Some(url), Some(_)) = (&url, root.get("broker")) {
-        let says = "names a broker, and [broker] asks for the built-in one";
-        url.fault_of_key(says, "one of the two", "taking out url or the [broker] table");
-    }
-    mqtt
 }
 
 pub(super) fn broker(root: &Table<'_>) -> Broker {
@@ -148,9 +165,6 @@ pub(super) fn linking(root: &Table<'_>) -> Linking {
     whole("repeat_print_s", 3_600, "seconds", &mut l.repeat_print_s);
     whole("intention_hours", 72, "hours", &mut l.intention_hours);
     whole("slice_aloud_minutes", 240, "minutes", &mut l.slice_aloud_minutes);
-    if let Some(flag) = table.get("asks_by_mqtt").and_then(|e| e.flag()) {
-        l.asks_by_mqtt = flag;
-    }
     if let (true, Some(entry)) =
         (l.slice_aloud_minutes > l.slice_minutes, table.get("slice_aloud_minutes").or(table.get("slice_minutes")))
     {
@@ -161,12 +175,6 @@ pub(super) fn linking(root: &Table<'_>) -> Linking {
         entry.fault(&says, "slice_aloud_minutes up to slice_minutes", "a smaller slice_aloud_minutes");
     }
     l
-}
-
-pub(super) fn keep(root: &Table<'_>) -> Keep {
-    let table = open(root, "keep", keys::KEEP);
-    let days = table.and_then(|t| t.get("unused_lines_days")).and_then(|e| e.whole(1..=36_500, "days"));
-    Keep { unused_lines_days: days }
 }
 
 pub(super) fn log(root: &Table<'_>) -> Log {

@@ -1,7 +1,6 @@
 //! `tarecup check`: is the config file right?
 
 use super::{WRONG_INPUT, files};
-use crate::service::compile_profiles;
 use std::path::PathBuf;
 
 /// Arguments of `check`.
@@ -29,10 +28,6 @@ pub fn run(args: &CheckArgs) -> u8 {
             return WRONG_INPUT;
         }
     };
-    if let Err(e) = compile_profiles(&station) {
-        eprintln!("{e}");
-        return WRONG_INPUT;
-    }
     match path {
         Some(path) => println!("{} is right.", path.display()),
         None => println!("There is no config file; the defaults are in force. Name one with --config FILE."),

@@ -1,6 +1,7 @@
 //! What the desk keeps of one instrument: its sense, its counters, and how it
 //! is connected.
 
+use super::flood::{Flood, Swallowed};
 use super::load::{InstrumentSetup, Kind};
 use serde::{Deserialize, Serialize};
 use std::collections::BTreeMap;
@@ -10,7 +11,7 @@ use tarecup_core::sense::settle::Settle;
 use tarecup_core::sense::{CountRun, Happening, MassTaken};
 use tarecup_core::signal::{Reading, Signal};
 use tarecup_core::stamp::{SECOND_US, Stamp};
-use tarecup_drivers::heard::{PortState, Reject, What};
+use tarecup_drivers::heard::{Batch, PortState, Reject, What};
 
 /// A streaming balance that says nothing for this long is silent.
 const SILENT_US: i64 = 5 * SECOND_US;
@@ -59,6 +60,8 @@ pub struct Ear {
     pub shown: Option<(Reading, Stamp)>,
     /// Counters have changed since they were published.
     pub counters_changed: bool,
+    /// Noise beyond what is kept line by line.
+    pub(super) flood: Flood,
 }
 
 impl Ear {
@@ -83,6 +86,7 @@ impl Ear {
             reading: None,
             shown: None,
             counters_changed: false,
+            flood: Flood::default(),
         }
     }
 
@@ -112,6 +116,22 @@ impl Ear {
         *self.rejects.entry(reason.word()).or_default() += 1;
         self.last_reject = Some(bytes.iter().take(60).flat_map(|b| std::ascii::escape_default(*b)).map(char::from).collect());
         self.counters_changed = true;
+    }
+
+    /// Takes a flood out of a batch; its lines are counted all the same.
+    pub(super) fn sift(&mut self, batch: Batch, changes: &mut Vec<(Connection, Stamp)>) -> (Batch, Option<Swallowed>) {
+        let mut flood = std::mem::take(&mut self.flood);
+        let sifted = flood.sift(batch, |frame, bytes| {
+            changes.extend(self.heard(&frame.what, &frame.at).map(|c| (c, frame.at)));
+            if let What::Reject(reason) = frame.what {
+                self.reject(reason, bytes);
+            }
+            if let Some((change, _)) = changes.last() {
+                self.connection = *change;
+            }
+        });
+        self.flood = flood;
+        sifted
     }
 
     /// What a signal leads to: happenings, or a code.
@@ -184,7 +204,8 @@ impl Ear {
             Sense::Counter(count) => count.deadline().map(|d| -now.since(&d).us),
             _ => None,
         };
-        pause.into_iter().chain(self.silent_in_us(now)).min()
+        let flood = self.flood.due_in_us(now).filter(|_| self.flood.owes());
+        pause.into_iter().chain(self.silent_in_us(now)).chain(flood).min()
     }
 
     /// A mass was taken: this is where the sense stands.

@@ -1,5 +1,6 @@
 //! What is taken and not yet stored, and its one transaction.
 
+use super::flood::Swallowed;
 use super::inbox::Reply;
 use super::{Desk, InstrumentSetup, views};
 use crate::ledger::{AnswerRow, Digest, DocumentRow, FactRow, Group as Rows, InputKind, InputRow};
@@ -16,8 +17,10 @@ use tarecup_drivers::heard::{Batch, InstrumentId, PortState, What};
 
 /// One thing that was taken. Held until it is stored; taken again if that fails.
 pub(super) enum Held {
-    /// Frames of one port; `first` is the number of the first one.
-    Batch { first: u64, batch: Batch },
+    /// Frames of one port.
+    Batch { batch: Batch },
+    /// Lines of a flood, as one row.
+    Flood { instrument: InstrumentId, swallowed: Swallowed },
     /// Lines lost.
     Overrun { instrument: InstrumentId, lines: u64, at: Stamp },
     /// A port's state.
@@ -42,6 +45,8 @@ pub(super) struct Decided {
 
 /// An answer that waits for its facts to be stored.
 pub(super) struct Answered {
+    /// Its ask is among what is held.
+    pub held: bool,
     /// Client, ask id and digest of the body, when the answer is kept.
     pub keep: Option<(String, String, Digest)>,
     pub answer: String,
@@ -203,6 +208,9 @@ impl Desk {
             .iter()
             .map(|h| match h {
                 Held::Batch { .. } | Held::Ask { .. } | Held::Settings { .. } => String::new(),
+                Held::Flood { swallowed: s, .. } => {
+                    serde_json::json!({"lines": s.lines, "bytes": s.bytes, "sha256": s.sha256, "sample": s.sample}).to_string()
+                }
                 Held::Overrun { lines, .. } => format!("{{\"overrun_lines\":{lines}}}"),
                 Held::Port { state, instrument: i, .. } => format!("{} {state:?}", instrument(i)),
                 Held::Timer { .. } => String::from("due"),
@@ -329,6 +337,7 @@ fn input_rows<'a>(
     let mut rows = Vec::with_capacity(lines + held.len());
     let mut no = first;
     for (held, text) in held.iter().zip(texts) {
+        let mut reason = None;
         let (kind, at, instrument, bytes) = match held {
             Held::Batch { batch, .. } => {
                 no = batch_rows(batch, name(batch.instrument), no, &mut rows);
@@ -337,13 +346,17 @@ fn input_rows<'a>(
             Held::Overrun { instrument, at, .. } | Held::Port { instrument, at, .. } => {
                 (InputKind::Port, at, Some(*instrument), text.as_bytes())
             }
+            Held::Flood { instrument, swallowed } => {
+                reason = Some(swallowed.reason.word());
+                (InputKind::Flood, &swallowed.at, Some(*instrument), text.as_bytes())
+            }
             Held::Ask { body, at, .. } => (InputKind::Ask, at, None, body.as_bytes()),
             Held::Timer { at } => (InputKind::Timer, at, None, text.as_bytes()),
             Held::Settings { text, at } => (InputKind::Settings, at, None, text.as_bytes()),
             Held::Start { at, .. } | Held::Stop { at } => (InputKind::Start, at, None, text.as_bytes()),
         };
         let instrument = instrument.map(name);
-        rows.push(InputRow { no, at: *at, kind, instrument, bytes, reason: None });
+        rows.push(InputRow { no, at: *at, kind, instrument, bytes, reason });
         no += 1;
     }
     rows

@@ -136,6 +136,17 @@ impl Inbox {
         any
     }
 
+    /// Takes what persons wait for; lines stay, and with them the bound on their number.
+    pub fn take_urgent(&self, into: &mut Vec<Incoming>) {
+        let mut state = self.lock();
+        let all = std::mem::take(&mut state.items);
+        let (urgent, rest) =
+            all.into_iter().partition(|i| matches!(i, Incoming::Ask { .. } | Incoming::Tick(_) | Incoming::Stop));
+        state.items = rest;
+        state.asks = 0;
+        into.extend::<Vec<Incoming>>(urgent);
+    }
+
     /// Takes all that waits; waits for something until the given moment.
     pub fn take(&self, into: &mut Vec<Incoming>, until: Option<Instant>) {
         let mut state = self.lock();
@@ -207,6 +218,19 @@ mod tests {
         inbox.take(&mut items, None);
         assert_eq!(items.len(), 1);
         assert!(inbox.heard(back).is_ok());
+    }
+
+    #[test]
+    fn what_persons_wait_for_can_be_taken_alone() {
+        let inbox = Inbox::new();
+        assert!(inbox.heard(batch(10)).is_ok());
+        inbox.stop();
+        let mut items = Vec::new();
+        inbox.take_urgent(&mut items);
+        assert!(matches!(items.as_slice(), [Incoming::Stop]));
+        items.clear();
+        inbox.take(&mut items, None);
+        assert!(matches!(items.as_slice(), [Incoming::Batch(_)]));
     }
 
     #[test]

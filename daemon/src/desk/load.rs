@@ -2,7 +2,7 @@
 //! that failed. One code for both.
 
 use super::ear::{Ear, SenseState};
-use super::group::{Effects, Group, Held, Publish, payload};
+use super::group::{Answered, Effects, Group, Held, Publish, payload};
 use super::{Desk, views};
 use crate::ledger::{Asked, Digest, DocumentStored, InputKind, InputStored, Ledger, LedgerError, OpenOptions, Which};
 use serde::de::DeserializeOwned;
@@ -269,13 +269,15 @@ impl Desk {
         }
         if landed {
             // Stored after all: only the answers are still owed.
-            self.group.answers = answers.into_iter().map(|a| super::group::Answered { keep: None, ..a }).collect();
+            self.group.answers = answers.into_iter().map(|a| Answered { keep: None, held: false, ..a }).collect();
             return Ok(());
         }
-        let mut replies = answers.into_iter();
+        let (of_held, others): (Vec<Answered>, Vec<Answered>) = answers.into_iter().partition(|a| a.held);
+        self.group.answers = others;
+        let mut replies = of_held.into_iter();
         for mut one in held {
             if let Held::Ask { reply, .. } = &mut one {
-                *reply = replies.by_ref().find(|a| a.keep.is_some() || a.reply.is_some()).and_then(|a| a.reply);
+                *reply = replies.next().and_then(|a| a.reply);
             }
             self.absorb(one);
         }
@@ -352,7 +354,7 @@ impl Desk {
     }
 
     /// Everything that stands published: open things first, then finished specimens within their days.
-    fn standing_topics(&mut self, now: &Stamp) -> Result<Vec<Publish>, LedgerError> {
+    pub(super) fn standing_topics(&mut self, now: &Stamp) -> Result<Vec<Publish>, LedgerError> {
         let seq = self.next_seq - 1;
         let mut topics: Vec<Publish> = Vec::new();
         let mut put = |topic: String, view: &Value| topics.push(Publish { topic, payload: Some(payload(view)) });

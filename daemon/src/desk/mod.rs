@@ -10,6 +10,7 @@
 //! taken again: nothing is lost and nothing is decided twice.
 
 mod ear;
+mod flood;
 mod group;
 pub mod inbox;
 mod load;
@@ -75,6 +76,9 @@ impl Desk {
         for item in incoming.drain(..) {
             self.take(item, now, effects);
         }
+        if self.ears.iter().any(|e| e.flood.owes()) {
+            self.floods_over(now);
+        }
         if self.not_recording.is_none() && self.something_due(now) {
             self.absorb(Held::Timer { at: *now });
         }
@@ -87,7 +91,7 @@ impl Desk {
         match item {
             Incoming::Batch(batch) => {
                 effects.heard.push((batch.instrument, batch.bytes.len() as u64));
-                self.absorb(Held::Batch { first: 0, batch });
+                self.take_batch(batch);
             }
             Incoming::Overrun { instrument, lines, at } => self.absorb(Held::Overrun { instrument, lines, at }),
             Incoming::Port { instrument, state, at } => self.absorb(Held::Port { instrument, state, at }),
@@ -98,6 +102,30 @@ impl Desk {
             Incoming::Stop => {
                 self.absorb(Held::Stop { at: *now });
                 self.group.urgent = true;
+            }
+        }
+    }
+
+    fn take_batch(&mut self, batch: Batch) {
+        let index = usize::from(batch.instrument);
+        let mut changes = Vec::new();
+        let (batch, over) = self.ears[index].sift(batch, &mut changes);
+        if let Some(swallowed) = over {
+            self.absorb(Held::Flood { instrument: index as u16, swallowed });
+        }
+        for (change, at) in changes {
+            self.connection(index, change, None, at);
+        }
+        if !batch.frames.is_empty() {
+            self.absorb(Held::Batch { batch });
+        }
+    }
+
+    /// Floods whose second is over.
+    fn floods_over(&mut self, now: &Stamp) {
+        for index in 0..self.ears.len() {
+            if let Some(swallowed) = self.ears[index].flood.over(now) {
+                self.absorb(Held::Flood { instrument: index as u16, swallowed });
             }
         }
     }
@@ -128,9 +156,12 @@ impl Desk {
     /// Takes one thing: decides what it means and holds it until it is stored.
     fn absorb(&mut self, mut held: Held) {
         let kept = match &mut held {
-            Held::Batch { first, batch } => {
-                *first = self.next_input;
+            Held::Batch { batch } => {
                 self.absorb_batch(batch);
+                true
+            }
+            Held::Flood { .. } => {
+                self.next_input += 1;
                 true
             }
             Held::Overrun { instrument, lines, at } => {
@@ -258,11 +289,16 @@ impl Desk {
             match self.known_ask(client, id, body) {
                 Ok(None) => (),
                 Ok(Some(answer)) => {
-                    self.group.answers.push(group::Answered { keep: None, answer, reply: reply.take() });
+                    self.group.answers.push(group::Answered { held: false, keep: None, answer, reply: reply.take() });
                     return false;
                 }
                 Err(says) => {
-                    self.group.answers.push(group::Answered { keep: None, answer: asks::refusal(&says), reply: reply.take() });
+                    self.group.answers.push(group::Answered {
+                        held: false,
+                        keep: None,
+                        answer: asks::refusal(&says),
+                        reply: reply.take(),
+                    });
                     return false;
                 }
             }
@@ -281,7 +317,7 @@ impl Desk {
             },
         };
         let keep = id.map(|id| (client.to_string(), id.to_string(), crate::ledger::Digest::of(body.as_bytes())));
-        self.group.answers.push(group::Answered { keep, answer, reply: reply.take() });
+        self.group.answers.push(group::Answered { held: true, keep, answer, reply: reply.take() });
         true
     }
 
@@ -342,6 +378,15 @@ impl Desk {
         self.not_recording.is_none() && (waiting || old || self.group.lines >= HOLD_LINES)
     }
 
+    /// Nothing came for a while: time for the ledger's housekeeping.
+    pub fn idle(&mut self) {
+        if self.not_recording.is_none()
+            && let Err(e) = self.ledger.tidy()
+        {
+            tracing::warn!(error = %e, "housekeeping of the ledger has to wait");
+        }
+    }
+
     /// Opens the ledger anew and takes again what is held. Called at intervals while nothing is recorded.
     pub fn recover(&mut self, now: &Stamp, effects: &mut Effects) {
         let Some(why) = self.not_recording.clone() else { return };
@@ -351,6 +396,11 @@ impl Desk {
                 self.not_recording = None;
                 self.commit(effects);
                 effects.presence = true;
+                // What was stored in the moment of trouble was never announced.
+                match self.standing_topics(now) {
+                    Ok(topics) => effects.retained.splice(0..0, topics).for_each(drop),
+                    Err(e) => tracing::warn!(error = %e, "retained topics could not be read; they follow with the next change"),
+                }
             }
             Err(e) => self.note_not_recording(&e, effects),
         }

@@ -11,6 +11,8 @@ use tarecup_drivers::heard::Clock;
 
 /// While nothing is recorded, the ledger is tried again at this interval.
 const TRY_AGAIN: Duration = Duration::from_millis(500);
+/// A stop while nothing can be stored is granted after this time.
+const LAST_TRIES: Duration = Duration::from_secs(2);
 /// With a virtual clock the desk need not look at time by itself.
 const FAR: Duration = Duration::from_secs(3_600);
 
@@ -58,27 +60,46 @@ impl Seat {
 
 fn work(desk: &mut Desk, inbox: &Inbox, settings: &SeatSettings, hand_on: &mut dyn FnMut(&Desk, Effects)) {
     let mut incoming: Vec<Incoming> = Vec::new();
-    let mut tries_until: Option<Instant> = None;
     while !desk.stopped() {
-        inbox.take(&mut incoming, wait_until(desk, settings));
         let mut effects = Effects::default();
-        if desk.not_recording().is_some() {
-            desk.recover(&settings.clock.now(), &mut effects);
-        }
-        if desk.not_recording().is_some() {
-            refuse_while_not_recording(desk, &mut incoming, &mut effects, &mut tries_until);
-        } else {
-            tries_until = None;
-            let now = settings.clock.now();
-            desk.step(&mut incoming, &now, &mut effects);
-        }
-        hand_on(desk, effects);
-        if tries_until.is_some_and(|until| Instant::now() > until) {
+        if desk.not_recording().is_some() && !out_of_trouble(desk, inbox, settings, hand_on) {
             return;
         }
-        if desk.not_recording().is_some() {
-            std::thread::sleep(TRY_AGAIN);
+        inbox.take(&mut incoming, wait_until(desk, settings));
+        if incoming.is_empty() {
+            desk.idle();
         }
+        desk.step(&mut incoming, &settings.clock.now(), &mut effects);
+        hand_on(desk, effects);
+    }
+}
+
+/// While nothing can be stored: lines wait where they are, asks are refused in
+/// words, the ledger is tried again and again. False when a stop was asked for
+/// and the trouble outlasted it.
+fn out_of_trouble(desk: &mut Desk, inbox: &Inbox, settings: &SeatSettings, hand_on: &mut dyn FnMut(&Desk, Effects)) -> bool {
+    let mut until: Option<Instant> = None;
+    loop {
+        let mut effects = Effects::default();
+        desk.recover(&settings.clock.now(), &mut effects);
+        if desk.not_recording().is_none() {
+            hand_on(desk, effects);
+            if until.is_some() {
+                inbox.stop();
+            }
+            return true;
+        }
+        let mut urgent = Vec::new();
+        inbox.take_urgent(&mut urgent);
+        if urgent.iter().any(|i| matches!(i, Incoming::Stop)) {
+            until.get_or_insert_with(|| Instant::now() + LAST_TRIES);
+        }
+        refuse(desk, urgent, &mut effects);
+        hand_on(desk, effects);
+        if until.is_some_and(|until| Instant::now() > until) {
+            return false;
+        }
+        std::thread::sleep(TRY_AGAIN);
     }
 }
 
@@ -86,7 +107,7 @@ fn work(desk: &mut Desk, inbox: &Inbox, settings: &SeatSettings, hand_on: &mut d
 fn wait_until(desk: &Desk, settings: &SeatSettings) -> Option<Instant> {
     let now = Instant::now();
     if desk.not_recording().is_some() {
-        return Some(now + TRY_AGAIN);
+        return Some(now);
     }
     let due = desk.due_in_us(&settings.clock.now()).map(|us| match settings.time_passes {
         // A little later than due, so that it is due indeed.
@@ -96,16 +117,9 @@ fn wait_until(desk: &Desk, settings: &SeatSettings) -> Option<Instant> {
     due.into_iter().chain(desk.hold_until()).min()
 }
 
-/// Nothing can be stored: lines wait in order, asks are refused in words, a stop is granted after a while.
-fn refuse_while_not_recording(
-    desk: &Desk,
-    incoming: &mut Vec<Incoming>,
-    effects: &mut Effects,
-    tries_until: &mut Option<Instant>,
-) {
-    let why = desk.not_recording().unwrap_or_default().to_string();
-    let mut waiting = Vec::new();
-    for item in incoming.drain(..) {
+fn refuse(desk: &Desk, urgent: Vec<Incoming>, effects: &mut Effects) {
+    let why = desk.not_recording().unwrap_or_default();
+    for item in urgent {
         match item {
             Incoming::Ask { body, reply, .. } => {
                 let status = asks::parse(&body).is_ok_and(|a| matches!(a.wanted, asks::Wanted::Read(asks::Read::Status)));
@@ -117,9 +131,7 @@ fn refuse_while_not_recording(
                 effects.replies.push((reply, answer));
             }
             Incoming::Tick(reply) => effects.replies.push((reply, String::new())),
-            Incoming::Stop => *tries_until = Some(Instant::now() + Duration::from_secs(2)),
-            other => waiting.push(other),
+            _ => (),
         }
     }
-    *incoming = waiting;
 }

@@ -30,9 +30,6 @@ const CLIENTS_MAX: usize = 256;
 /// Messages that may wait for one slow subscriber.
 const QUEUE_MAX: usize = 20_000;
 
-/// How long the end waits for what is on its way to subscribers.
-const LAST_WORDS: Duration = Duration::from_millis(150);
-
 /// What the built-in broker needs to know.
 #[derive(Debug, Clone)]
 pub struct BrokerSettings {
@@ -143,9 +140,6 @@ impl BuiltIn {
 
     /// Closes every connection and ends. Stop the courier first.
     pub async fn stop(mut self) {
-        // What was acknowledged to the courier a moment ago, "stopped" above all, is still on
-        // its way to the subscribers; an ended connection would throw it away.
-        tokio::time::sleep(LAST_WORDS).await;
         self.shutdown.shutdown();
         if tokio::time::timeout(Duration::from_secs(2), &mut self.task).await.is_err() {
             self.task.abort();
