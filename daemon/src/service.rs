@@ -315,10 +315,11 @@ impl PortsThread {
     }
 }
 
-type Profiles = BTreeMap<String, Arc<Profile>>;
+/// Compiled profiles by name.
+pub type Profiles = BTreeMap<String, Arc<Profile>>;
 
 /// Compiles the profiles that the instruments use.
-fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
+pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
     let mut profiles = Profiles::new();
     for instrument in &station.instruments {
         let name = instrument.profile.as_str();
@@ -339,7 +340,8 @@ fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
     Profile::compile(text).map_err(|e| e.to_string())
 }
 
-fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_passes: bool) -> DeskSetup {
+/// What the desk needs to know of the settings.
+pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_passes: bool) -> DeskSetup {
     let linking = &station.linking;
     let seconds = |s: u32| i64::from(s) * SECOND_US;
     let lab = Setup {
