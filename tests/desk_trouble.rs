@@ -171,3 +171,34 @@ fn the_same_ask_under_the_same_id_is_done_once() {
     let (plain, _) = ask(&mut desk, 400, r#"{"ask":"open_specimen","specimen":"S-1"}"#);
     assert!(plain.contains("open already"), "{plain}");
 }
+
+/// Lines that lead to nothing: the pan shows almost zero.
+fn idle_lines(lines: i64, begin_ms: i64) -> Incoming {
+    let (mut bytes, mut frames) = (Vec::new(), Vec::new());
+    for n in 0..lines {
+        bytes.extend_from_slice(b"0.00\n");
+        frames.push(Frame { end: bytes.len() as u32, at: at(begin_ms + n), what: What::Signal(reading(0.0)) });
+    }
+    Incoming::Batch(Batch { instrument: 0, bytes, frames, read_at: None })
+}
+
+#[test]
+fn a_balance_that_speaks_for_days_gets_a_fact_now_and_then() {
+    let dir = tempfile::tempdir().expect("a folder");
+    let mut desk = open(dir.path());
+    let kept = |dir: &Path| {
+        let facts = Reader::open(dir).expect("a reader").facts_after(0, 1_000).expect("facts");
+        facts.iter().filter(|f| f.kind == "lines_kept").count()
+    };
+    for n in 0..19 {
+        let begin = 1_000 + n * 10_000;
+        desk.step(&mut vec![idle_lines(10_000, begin)], &at(begin + 10_000), &mut Effects::default());
+    }
+    assert_eq!(kept(dir.path()), 0, "not yet: the control");
+    for n in 19..22 {
+        let begin = 1_000 + n * 10_000;
+        desk.step(&mut vec![idle_lines(10_000, begin)], &at(begin + 10_000), &mut Effects::default());
+    }
+    assert_eq!(kept(dir.path()), 1);
+    assert!(verify(dir.path(), None, &mut |_| ()).expect("a report").ok());
+}

@@ -15,7 +15,8 @@ fn kinds() -> BTreeSet<&'static str> {
             | Fact::ServiceStopped {}
             | Fact::SettingsTaken { .. }
             | Fact::InstrumentChanged { .. } => (),
-            Fact::LinesOverrun { .. } | Fact::SpecimenOpened(_) | Fact::SignedIn { .. } | Fact::SignedOut { .. } => (),
+            Fact::LinesOverrun { .. } | Fact::LinesKept { .. } => (),
+            Fact::SpecimenOpened(_) | Fact::SignedIn { .. } | Fact::SignedOut { .. } => (),
             Fact::IntentionSet { .. } | Fact::IntentionEnded { .. } | Fact::TakenInHand { .. } | Fact::HandEmptied { .. } => (),
             Fact::Refused { .. } | Fact::Weighed(_) | Fact::SlipRepeated { .. } | Fact::PanCleared { .. } => (),
             Fact::WeighingTied { .. } | Fact::Counted(_) | Fact::CountTied { .. } | Fact::CountSuperseded { .. } => (),
@@ -26,7 +27,7 @@ fn kinds() -> BTreeSet<&'static str> {
         }
     }
     let _: fn(&Fact) = known;
-    let all = "service_started service_stopped settings_taken instrument_changed lines_overrun specimen_opened signed_in \
+    let all = "service_started service_stopped settings_taken instrument_changed lines_overrun lines_kept specimen_opened signed_in \
         signed_out intention_set intention_ended taken_in_hand hand_emptied refused weighed slip_repeated pan_cleared \
         weighing_tied counted count_tied count_superseded slice_overdue set_aside trial_set_aside mass_amended drops_amended \
         container_registered container_freed into_oven out_of_oven oven_off not_obtainable limits_computed check_answered reviewed";
@@ -46,7 +47,7 @@ fn stored_facts_read_and_are_written_byte_for_byte() {
 fn there_is_an_example_of_each_kind() {
     let stored: Vec<Fact> = STORED.lines().map(|l| serde_json::from_str(l).unwrap()).collect();
     assert_eq!(stored.iter().map(Fact::kind).collect::<BTreeSet<_>>(), kinds());
-    assert_eq!(kinds().len(), 34);
+    assert_eq!(kinds().len(), 35);
 }
 
 #[test]

@@ -71,6 +71,11 @@ pub enum Fact {
         /// How many.
         lines: u64,
     },
+    /// Many lines came that led to nothing: the chain takes them in here, so that a start need not read them all.
+    LinesKept {
+        /// How many since the fact before.
+        lines: u64,
+    },
     /// A specimen's tests began.
     SpecimenOpened(SpecimenOpened),
     /// A person signed in at a bench.
@@ -439,6 +444,7 @@ impl Fact {
             Fact::SettingsTaken { .. } => "settings_taken",
             Fact::InstrumentChanged { .. } => "instrument_changed",
             Fact::LinesOverrun { .. } => "lines_overrun",
+            Fact::LinesKept { .. } => "lines_kept",
             Fact::SpecimenOpened(_) => "specimen_opened",
             Fact::SignedIn { .. } => "signed_in",
             Fact::SignedOut { .. } => "signed_out",

@@ -136,6 +136,11 @@ pub enum Input {
         /// How many.
         lines: u64,
     },
+    /// Many lines have come since the last fact.
+    LinesKept {
+        /// How many.
+        lines: u64,
+    },
     /// The service came up.
     Started {
         /// Program version.
@@ -240,6 +245,7 @@ impl Lab {
             Input::Started { program, after_orderly_stop } => {
                 alloc::vec![New::plain(Fact::ServiceStarted { program, after_orderly_stop })]
             }
+            Input::LinesKept { lines } => alloc::vec![New::plain(Fact::LinesKept { lines })],
             Input::Settings { input, digest } => alloc::vec![New::plain(Fact::SettingsTaken { input, digest })],
             Input::Stopping => self.stopping(),
             Input::Due => self.due(at),

@@ -97,6 +97,8 @@ impl Desk {
             group: Group::default(),
             next_input: 1,
             next_seq: 1,
+            last_fact_input: 1,
+            cleaned: now,
             delivered,
             delivered_stored: delivered,
             broker: None,
@@ -149,6 +151,8 @@ impl Desk {
     fn load(&mut self, now: Stamp) -> Result<(), LedgerError> {
         let tail = self.ledger.tail();
         (self.next_input, self.next_seq) = (tail.last_input + 1, tail.last_seq + 1);
+        // A start and a recovery are followed by a fact; counting begins there.
+        self.last_fact_input = self.next_input;
         self.group = Group::default();
         self.lab = Lab::new(self.setup.lab.clone());
         for (kind, which) in [
@@ -387,6 +391,15 @@ impl Desk {
         for stored in results {
             topics.extend(self.result_topics(&stored, now));
         }
+        Ok(topics)
+    }
+
+    /// Once a day, results that have stood published for their days are taken down.
+    pub(super) fn take_down(&mut self, now: &Stamp) -> Result<Vec<Publish>, LedgerError> {
+        let mut topics = Vec::new();
+        self.each_document("specimen", Which::All, |desk, stored| {
+            topics.extend(desk.result_topics(&stored, now).into_iter().filter(|p| p.payload.is_none()));
+        })?;
         Ok(topics)
     }
 

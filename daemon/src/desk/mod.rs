@@ -32,13 +32,15 @@ use std::time::{Duration, Instant};
 use tarecup_core::fact::Connection;
 use tarecup_core::lab::{Input, Lab, Outcome};
 use tarecup_core::sense::Happening;
-use tarecup_core::stamp::Stamp;
+use tarecup_core::stamp::{HOUR_US, Stamp};
 use tarecup_drivers::heard::{Batch, PortState, What};
 
 /// Lines that led to nothing are stored after this time at the latest.
 const HOLD: Duration = Duration::from_millis(200);
 /// A fact that nobody waits for is stored with the next one, after this time at the latest.
 const COMPANY: Duration = Duration::from_millis(20);
+/// After so many lines without a fact, a fact says that they are kept.
+const LINES_BETWEEN_FACTS: u64 = 200_000;
 /// Lines that led to nothing are stored when so many are held.
 const HOLD_LINES: usize = 4_000;
 
@@ -54,11 +56,15 @@ pub struct Desk {
     group: Group,
     next_input: u64,
     next_seq: u64,
+    /// Where the lines begin that no fact has followed.
+    last_fact_input: u64,
     delivered: u64,
     delivered_stored: u64,
     broker: Option<String>,
     not_recording: Option<String>,
     stopped: bool,
+    /// When results were last looked through for those to be taken down.
+    cleaned: Stamp,
 }
 
 impl Desk {
@@ -81,11 +87,19 @@ impl Desk {
         if self.ears.iter().any(|e| e.flood.owes()) {
             self.floods_over(now);
         }
+        self.many_lines(now);
         if self.not_recording.is_none() && self.something_due(now) {
             self.absorb(Held::Timer { at: *now });
         }
         if self.should_commit() {
             self.commit(effects);
+        }
+        if now.since(&self.cleaned).us >= 24 * HOUR_US {
+            self.cleaned = *now;
+            match self.take_down(now) {
+                Ok(topics) => effects.retained.extend(topics),
+                Err(e) => tracing::warn!(error = %e, "old results stay published for another day"),
+            }
         }
     }
 
@@ -120,6 +134,15 @@ impl Desk {
         }
         if !batch.frames.is_empty() {
             self.absorb(Held::Batch { batch });
+        }
+    }
+
+    /// A start reads what came since the last fact: that must not grow for days.
+    fn many_lines(&mut self, now: &Stamp) {
+        if self.group.has_facts() {
+            self.last_fact_input = self.next_input;
+        } else if self.next_input - self.last_fact_input >= LINES_BETWEEN_FACTS {
+            self.absorb(Held::Timer { at: *now });
         }
     }
 
@@ -336,6 +359,11 @@ impl Desk {
             }
         }
         self.decide(Input::Due, at);
+        let lines = number - self.last_fact_input;
+        if lines >= LINES_BETWEEN_FACTS {
+            self.decide(Input::LinesKept { lines }, at);
+            self.last_fact_input = number;
+        }
         let led_to_something = self.group.facts.len() > before;
         if !led_to_something {
             self.next_input = number;

@@ -23,7 +23,11 @@ impl Lab {
     /// Applies one recorded fact and names the entities it touched.
     pub fn apply(&mut self, r: &Recorded, touched: &mut Touched) {
         match &r.fact {
-            Fact::SettingsTaken { .. } | Fact::ServiceStarted { .. } | Fact::ServiceStopped {} | Fact::SlipRepeated { .. } => (),
+            Fact::SettingsTaken { .. }
+            | Fact::ServiceStarted { .. }
+            | Fact::ServiceStopped {}
+            | Fact::LinesKept { .. }
+            | Fact::SlipRepeated { .. } => (),
             Fact::InstrumentChanged { .. } | Fact::LinesOverrun { .. } | Fact::PanCleared { .. } => {
                 self.apply_instrument(r, touched);
             }
