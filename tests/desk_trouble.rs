@@ -109,7 +109,7 @@ fn a_failed_commit_loses_and_doubles_nothing() {
     let mut desk = open(dir.path());
     let mut effects = Effects::default();
     desk.step(&mut vec![placement(21.43, 1_000)], &at(3_000), &mut effects);
-    assert_eq!(effects.facts.len(), 2, "speaking and weighed");
+    assert_eq!(effects.facts.len(), 3, "speaking, weighed, lifted");
 
     let other = hold(dir.path());
     let mut effects = Effects::default();
@@ -127,7 +127,7 @@ fn a_failed_commit_loses_and_doubles_nothing() {
     let mut effects = Effects::default();
     desk.recover(&at(7_000), &mut effects);
     assert_eq!(desk.not_recording(), None);
-    assert_eq!(effects.facts.len(), 1, "the weighing that waited leaves once it is stored");
+    assert_eq!(effects.facts.len(), 2, "the weighing that waited leaves once it is stored");
 
     desk.step(&mut vec![placement(33.39, 8_000)], &at(10_000), &mut Effects::default());
     let masses: Vec<i64> = weighed(dir.path()).into_iter().map(|(_, m)| m).collect();

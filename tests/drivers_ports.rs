@@ -6,7 +6,7 @@
 use rustix::fs::{FlockOperation, Mode, OFlags};
 use rustix::io::Errno;
 use rustix::pty::OpenptFlags;
-use rustix::termios::{InputModes, LocalModes, OptionalActions};
+use rustix::termios::{ControlModes, InputModes, LocalModes, OptionalActions};
 use rustix::time::ClockId;
 use std::os::fd::OwnedFd;
 use std::path::{Path, PathBuf};
@@ -579,6 +579,28 @@ fn the_line_is_set_as_configured() {
     assert!(!line.local_modes.intersects(LocalModes::ECHO | LocalModes::ICANON | LocalModes::ISIG));
     assert!(line.input_modes.contains(InputModes::IXON | InputModes::INPCK));
     assert!(!line.input_modes.intersects(InputModes::ICRNL | InputModes::INLCR | InputModes::IGNCR));
+    service.stop(vec![port]);
+}
+
+#[test]
+fn a_line_without_parity_still_marks_bad_bytes_and_stays_up_when_closed() {
+    let _alone = alone();
+    let (service, pty) = (Service::new(), Pty::new());
+    let mut line = rustix::termios::tcgetattr(&pty.slave).expect("a line");
+    line.control_modes |= ControlModes::HUPCL;
+    line.control_modes -= ControlModes::CSTOPB | ControlModes::CRTSCTS;
+    line.input_modes |= InputModes::IGNPAR | InputModes::PARMRK;
+    rustix::termios::tcsetattr(&pty.slave, OptionalActions::Now, &line).expect("set");
+    let settings =
+        PortSettings { baud: 1_200, frame: "8N2".parse().expect("a frame"), flow: Flow::Hardware, ..settings(&pty.path) };
+    let port = service.port_with(1, settings, &signed_steady());
+    service.sink.until_state(1, &PortState::Opened);
+    let line = rustix::termios::tcgetattr(&pty.slave).expect("a line");
+    assert_eq!((line.output_speed(), line.input_speed()), (1_200, 1_200));
+    assert!(line.input_modes.contains(InputModes::INPCK));
+    assert!(!line.input_modes.intersects(InputModes::IGNPAR | InputModes::PARMRK | InputModes::IXON));
+    assert!(line.control_modes.contains(ControlModes::CSTOPB | ControlModes::CRTSCTS | ControlModes::CLOCAL));
+    assert!(!line.control_modes.contains(ControlModes::HUPCL));
     service.stop(vec![port]);
 }
 

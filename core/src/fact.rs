@@ -107,6 +107,12 @@ pub enum Fact {
         bench: BenchName,
         /// Which container.
         container: ContainerId,
+        /// Other benches that share the scanner: the mass may be taken there.
+        #[serde(default, skip_serializing_if = "Vec::is_empty")]
+        or_at: Vec<BenchName>,
+        /// The container that was in hand and got no mass.
+        #[serde(default, skip_serializing_if = "Option::is_none")]
+        instead_of: Option<ContainerId>,
     },
     /// No container is in hand any more.
     HandEmptied {
@@ -131,18 +137,26 @@ pub enum Fact {
         /// The line that repeats it.
         input: InputNo,
     },
+    /// A loose mass was taken off the pan: a code read from here on is not its.
+    PanCleared {
+        /// Which balance.
+        balance: InstrumentName,
+    },
     /// A weighing was tied to a container, or to another one than before.
     WeighingTied {
         /// The weighing.
         weighing: Seq,
         /// What it now belongs to.
         link: Link,
+        /// The bench that says so, when several showed the weighing.
+        #[serde(default, skip_serializing_if = "Option::is_none")]
+        bench: Option<BenchName>,
         /// Why.
         why: String,
     },
     /// A run of the cup ended.
     Counted(Counted),
-    /// A loose count was tied to a specimen.
+    /// A count was tied to a specimen, or to another one than before; its slice is owed.
     CountTied {
         /// The count.
         count: Seq,
@@ -381,6 +395,9 @@ pub struct Weighed {
     pub mass_ug: Mass,
     /// Where, when that is clear.
     pub bench: Option<BenchName>,
+    /// Benches that a loose mass may belong to as well, when the balance or the scanner is shared.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub or_at: Vec<BenchName>,
     /// Which balance; `None` when a person typed the value.
     pub balance: Option<InstrumentName>,
     /// How the stream led to it; `None` when typed.
@@ -405,6 +422,9 @@ pub struct Counted {
     pub run: Option<CountRun>,
     /// The specimen; `None` when loose.
     pub specimen: Option<SpecimenId>,
+    /// An earlier count of the same run, told before the counter was done.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub replaces: Option<Seq>,
     /// Why it is loose, and what to do.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub loose: Option<String>,
@@ -429,6 +449,7 @@ impl Fact {
             Fact::Refused { .. } => "refused",
             Fact::Weighed(_) => "weighed",
             Fact::SlipRepeated { .. } => "slip_repeated",
+            Fact::PanCleared { .. } => "pan_cleared",
             Fact::WeighingTied { .. } => "weighing_tied",
             Fact::Counted(_) => "counted",
             Fact::CountTied { .. } => "count_tied",

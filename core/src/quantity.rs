@@ -96,7 +96,7 @@ impl Mass {
     }
     /// The absolute value.
     pub const fn abs(self) -> Self {
-        Mass(self.0.abs())
+        Mass(self.0.saturating_abs())
     }
 
     /// Reads a decimal number, `.` or `,` as decimal sign, in the given unit.

@@ -58,15 +58,15 @@ impl Stamp {
     /// Time passed from `earlier` to this moment.
     pub fn since(&self, earlier: &Stamp) -> Elapsed {
         if self.boot == earlier.boot {
-            Elapsed { us: self.mono_us - earlier.mono_us, basis: Basis::Monotonic }
+            Elapsed { us: self.mono_us.saturating_sub(earlier.mono_us), basis: Basis::Monotonic }
         } else {
-            Elapsed { us: self.utc_us - earlier.utc_us, basis: Basis::Wall }
+            Elapsed { us: self.utc_us.saturating_sub(earlier.utc_us), basis: Basis::Wall }
         }
     }
 
     /// The same boot, this much later.
     pub fn plus_us(&self, us: i64) -> Stamp {
-        Stamp { utc_us: self.utc_us + us, mono_us: self.mono_us + us, boot: self.boot }
+        Stamp { utc_us: self.utc_us.saturating_add(us), mono_us: self.mono_us.saturating_add(us), boot: self.boot }
     }
 
     /// UTC in RFC 3339 with six decimals, as every record and payload has it.

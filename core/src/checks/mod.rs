@@ -166,7 +166,7 @@ fn hold(check: &str, about: &str, says: String, facts: Vec<Seq>) -> CheckRow {
 
 /// A number of drops as people write it: whole, or with one decimal for a mean.
 fn drops_text(drops: f64) -> String {
-    if drops.fract() == 0.0 { format!("{drops:.0}") } else { format!("{drops:.1}") }
+    if libm::trunc(drops) == drops { format!("{drops:.0}") } else { format!("{drops:.1}") }
 }
 
 /// The container of a trial, for a sentence.

@@ -1,19 +1,27 @@
 //! What persons ask for. One closed set, the same for every way in.
 
-use super::entities::{Latest, LooseWhat};
+use super::entities::{Bench, Container, Latest, LooseWhat, Specimen};
+use super::oven::STAYS_KEPT;
 use super::role::Role;
 use super::{Lab, New, Refusal};
-use crate::fact::{Counted, Fact, Intention, Limit, SpecimenOpened, TrialRef, Weighed};
+use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
+use crate::limits::State;
 use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
 use crate::quantity::{Mass, MassUnit};
 use crate::sheet::{Kind, Seq};
 use crate::signal::Basis;
 use crate::stamp::{Stamp, parse_rfc3339};
+use alloc::collections::{BTreeMap, BTreeSet};
 use alloc::format;
 use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
 use serde::{Deserialize, Serialize};
+
+/// Longest text of a reason or description, in characters.
+const LONGEST_WORDS: usize = 1_000;
+/// Most containers in one ask.
+const AT_ONCE: usize = 500;
 
 /// An ask that may write. Reading asks are answered without the laboratory.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -69,7 +77,7 @@ pub enum Ask {
     },
     /// Tie any weighing to a container, also one that is tied already.
     Tie { weighing: Seq, bench: BenchName, container: ContainerId, role: Role, who: Operator, why: String },
-    /// Tie a loose count to a specimen.
+    /// Tie a count whose slice was not taken to a specimen: its slice is owed at the bench.
     TieCount { count: Seq, bench: BenchName, specimen: SpecimenId, who: Operator, why: String },
     /// A weighing or count does not count.
     SetAside { what: Seq, who: Operator, why: String },
@@ -151,7 +159,7 @@ fn no(words: String) -> Refusal {
 }
 
 impl Lab {
-    pub(super) fn asked(&self, ask: Ask, at: &Stamp, _next_seq: Seq) -> Result<Vec<New>, Refusal> {
+    pub(super) fn asked(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
         match ask {
             Ask::OpenSpecimen { .. } => self.open_specimen(ask),
             Ask::SignIn { bench, operator } => {
@@ -177,7 +185,7 @@ impl Lab {
             }
             Ask::Code { bench, text } => {
                 self.bench_there(&bench)?;
-                self.code_at(&bench, false, &text, at).map_err(Refusal)
+                self.code_at(&bench, &[], &text, at).map_err(Refusal)
             }
             Ask::SayRole { .. } | Ask::Tie { .. } | Ask::TieCount { .. } => self.ask_tie(ask),
             Ask::TypeMass { .. } | Ask::TypeDrops { .. } => self.ask_typed(ask, at),
@@ -213,6 +221,12 @@ impl Lab {
         if self.specimens.contains_key(&specimen) {
             return Err(no(format!("specimen {specimen} is open already; give a new one another identifier")));
         }
+        let code = ContainerId::new(specimen.as_str());
+        if code.is_ok_and(|c| self.containers.contains_key(&c)) {
+            return Err(no(format!(
+                "{specimen} is a container: a code can mean only one thing, so give the specimen another identifier"
+            )));
+        }
         let name = method.unwrap_or_else(|| self.setup.default_method.clone());
         let Some(method) = self.setup.methods.get(&name) else {
             let names: Vec<&str> = self.setup.methods.keys().map(MethodName::as_str).collect();
@@ -222,6 +236,9 @@ impl Lab {
             if percent.is_some_and(|p| !(0.0..=100.0).contains(&p)) {
                 return Err(no(format!("the share {what} is a percentage between 0 and 100")));
             }
+        }
+        for words in [&edition, &description, &preparation].into_iter().flatten() {
+            not_too_long(words)?;
         }
         let edition = edition.unwrap_or_else(|| method.edition.clone());
         let opened =
@@ -246,15 +263,46 @@ impl Lab {
                 self.tie(weighing, &bench, &container, role, Some(who), why)
             }
             Ask::TieCount { count, bench, specimen, who, why } => {
-                self.bench_there(&bench)?;
-                self.specimen_there(&specimen)?;
-                match self.loose.get(&count).map(|l| &l.what) {
-                    Some(LooseWhat::Count(_)) => Ok(vec![New::by(Some(who), Fact::CountTied { count, bench, specimen, why })]),
-                    _ => Err(no(format!("no loose count has the number {count}"))),
-                }
+                needs_words(&why)?;
+                self.tie_count(count, &bench, &specimen)?;
+                Ok(vec![New::by(Some(who), Fact::CountTied { count, bench, specimen, why })])
             }
             _ => Ok(vec![]),
         }
+    }
+
+    /// Whether a count may be tied to a specimen, its slice owed at a bench.
+    fn tie_count(&self, count: Seq, bench: &BenchName, specimen: &SpecimenId) -> Result<(), Refusal> {
+        let state = self.bench_there(bench)?;
+        self.specimen_there(specimen)?;
+        let loose = self.loose.get(&count).and_then(|l| match &l.what {
+            LooseWhat::Count(c) => Some(c),
+            LooseWhat::Weighing { .. } => None,
+        });
+        let tied = || self.specimens.values().find_map(|s| s.count(count).map(|c| (s, c)));
+        let found = match loose {
+            Some(c) => c,
+            None => {
+                let (of, c) =
+                    tied().ok_or_else(|| no(format!("no count has the number {count}, or its specimen is not at hand")))?;
+                if of.trials.iter().any(|t| t.counts.contains(&count)) {
+                    return Err(no(format!("a slice of count {count} was weighed for {}: take that weighing back first", of.id)));
+                }
+                if c.set_aside.is_some() {
+                    return Err(no(format!("count {count} was set aside; enter its drops by hand if it counts after all")));
+                }
+                c
+            }
+        };
+        let Some(owed) = state.owed.as_ref().filter(|o| !o.counts.contains(&count)) else { return Ok(()) };
+        let apart = owed.ended.since(&found.at).us.saturating_abs() >= self.setup.linking.slice_us;
+        if owed.specimen != *specimen || apart {
+            return Err(no(format!(
+                "another slice is owed at bench {bench} ({} drops for {}): weigh it or give up its paste first",
+                owed.drops, owed.specimen
+            )));
+        }
+        Ok(())
     }
 
     fn tie(
@@ -267,22 +315,56 @@ impl Lab {
         why: String,
     ) -> Result<Vec<New>, Refusal> {
         needs_words(&why)?;
+        if let Some(LooseWhat::Weighing { weighing: w, basis }) = self.loose.get(&weighing).map(|l| &l.what) {
+            let link = self.link_said(bench, container, role, (w.mass, *basis), &w.at, None).map_err(Refusal)?;
+            return Ok(vec![New::by(who, self.tied(weighing, link, bench, why))]);
+        }
+        self.may_be_taken_out(weighing)?;
         // A weighing that is tied already is judged as if it were not.
-        let mut without = None;
-        let (mass, basis, at) = match self.loose.get(&weighing).map(|l| &l.what) {
-            Some(LooseWhat::Weighing { weighing, basis }) => (weighing.mass, *basis, weighing.at),
-            _ => {
-                let mut lab = self.clone();
-                let taken = lab.untie(weighing, &mut Default::default());
-                let w =
-                    taken.ok_or_else(|| no(format!("no weighing has the number {weighing}, or its specimen is not at hand")))?;
-                without = Some(lab);
-                (w.mass, Basis::Gross, w.at)
-            }
-        };
-        let lab = without.as_ref().unwrap_or(self);
-        let link = lab.link_said(bench, container, role, mass, basis, &at).map_err(Refusal)?;
-        Ok(vec![New::by(who, Fact::WeighingTied { weighing, link, why })])
+        let mut without = self.around(weighing, container);
+        let untied = without
+            .untie(weighing, &mut Default::default())
+            .ok_or_else(|| no(format!("no weighing has the number {weighing}, or its specimen is not at hand")))?;
+        let w = &untied.weighing;
+        let link = without.link_said(bench, container, role, (w.mass, Basis::Gross), &w.at, Some(&untied)).map_err(Refusal)?;
+        Ok(vec![New::by(who, self.tied(weighing, link, bench, why))])
+    }
+
+    /// The fact of a tie; it names the bench where several show the weighing.
+    pub(super) fn tied(&self, weighing: Seq, link: Link, bench: &BenchName, why: String) -> Fact {
+        let shows = |b: &&Bench| b.latest.as_ref().is_some_and(|l| l.seq == weighing);
+        let bench = (self.benches.values().filter(shows).count() > 1).then(|| bench.clone());
+        Fact::WeighingTied { weighing, link, bench, why }
+    }
+
+    /// The part of the laboratory that tying a weighing to a container looks at.
+    fn around(&self, weighing: Seq, container: &ContainerId) -> Lab {
+        let used = |c: &Container| c.tares.iter().chain(&c.with_lid).any(|w| w.seq == weighing);
+        let of_trial = |s: &Specimen| s.weighings().any(|w| w.seq == weighing);
+        let mut specimens: BTreeSet<&SpecimenId> = self.specimens.values().filter(|s| of_trial(s)).map(|s| &s.id).collect();
+        let trials = self.specimens.values().flat_map(|s| &s.trials);
+        let holder = trials.filter(|t| t.weighings().any(|w| w.seq == weighing)).map(|t| &t.container);
+        let ids: BTreeSet<&ContainerId> =
+            holder.chain(self.containers.values().filter(|c| used(c)).map(|c| &c.id)).chain([container]).collect();
+        let containers: Vec<&Container> = ids.into_iter().filter_map(|id| self.containers.get(id)).collect();
+        for held in containers.iter().filter_map(|c| c.holding.as_ref()) {
+            specimens.insert(&held.specimen);
+            specimens.extend(held.before.as_ref().map(|b| &b.specimen));
+        }
+        specimens.extend(containers.iter().filter_map(|c| c.released.as_ref()).map(|r| &r.holding.specimen));
+        for bench in self.benches.values() {
+            specimens.extend(bench.intention.as_ref().map(|w| &w.specimen));
+            specimens.extend(bench.owed.as_ref().map(|o| &o.specimen));
+        }
+        let specimens = specimens.into_iter().filter_map(|id| self.specimens.get(id));
+        Lab {
+            setup: self.setup.clone(),
+            specimens: specimens.map(|s| (s.id.clone(), s.clone())).collect(),
+            containers: containers.into_iter().map(|c| (c.id.clone(), c.clone())).collect(),
+            benches: self.benches.clone(),
+            instruments: BTreeMap::new(),
+            loose: BTreeMap::new(),
+        }
     }
 
     fn ask_typed(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
@@ -291,24 +373,24 @@ impl Lab {
                 self.bench_there(&bench)?;
                 let mass = typed_mass(&mass_g)?;
                 let link = match role {
-                    Some(role) => self.link_said(&bench, &container, role, mass, Basis::Gross, at),
-                    None => self.link(&bench, &container, false, mass, Basis::Gross, at),
+                    Some(role) => self.link_said(&bench, &container, role, (mass, Basis::Gross), at, None),
+                    None => self.link(core::slice::from_ref(&bench), &container, mass, Basis::Gross, at),
                 };
                 let link = Some(link.map_err(Refusal)?);
-                let weighed = Weighed { mass_ug: mass, bench: Some(bench), balance: None, taken: None, link, loose: None };
+                let (bench, or_at) = (Some(bench), vec![]);
+                let weighed = Weighed { mass_ug: mass, bench, or_at, balance: None, taken: None, link, loose: None };
                 Ok(vec![New::by(Some(who), Fact::Weighed(weighed))])
             }
             Ask::TypeDrops { bench, drops, who } => {
                 let work = self.bench_there(&bench)?.intention.as_ref().filter(|w| w.intention == Intention::Liquid);
-                let specimen = work.map(|w| w.specimen.clone());
-                if specimen.is_none() {
+                let Some(specimen) = work.map(|w| w.specimen.clone()) else {
                     return Err(no(format!("no liquid limit is in work at bench {bench}; say which specimen first")));
-                }
-                if !(1..=500).contains(&drops) {
-                    return Err(no(String::from("a count lies between 1 and 500 drops")));
-                }
-                let mut facts = self.late_slice(&bench, at);
-                let counted = Counted { drops, bench: Some(bench), cup: None, run: None, specimen, loose: None };
+                };
+                drops_believable(drops)?;
+                self.room_for_count(&bench).map_err(Refusal)?;
+                let mut facts = self.late_slice(&bench, &specimen, at);
+                let (bench, specimen) = (Some(bench), Some(specimen));
+                let counted = Counted { drops, bench, cup: None, run: None, specimen, replaces: None, loose: None };
                 facts.push(New::by(Some(who), Fact::Counted(counted)));
                 Ok(facts)
             }
@@ -320,6 +402,11 @@ impl Lab {
         match ask {
             Ask::RegisterContainer { container, lid_g, who } => {
                 let lid = lid_g.as_deref().map(typed_mass).transpose()?;
+                if SpecimenId::new(container.as_str()).is_ok_and(|s| self.specimens.contains_key(&s)) {
+                    return Err(no(format!(
+                        "{container} is a specimen: a code can mean only one thing, so number the container otherwise"
+                    )));
+                }
                 Ok(vec![New::by(who, Fact::ContainerRegistered { container, lid })])
             }
             Ask::FreeContainer { container, who, why } => {
@@ -350,10 +437,12 @@ impl Lab {
                 let time = |t: &str| {
                     parse_rfc3339(t).ok_or_else(|| no(format!("\"{t}\" is not a time; write it like 2026-03-02T08:14:05Z")))
                 };
+                needs_words(&why)?;
                 let (from_utc_us, to_utc_us) = (time(&from)?, time(&to)?);
                 if from_utc_us >= to_utc_us || to_utc_us > at.utc_us {
                     return Err(no(String::from("the oven was off from a time to a later one, both past")));
                 }
+                self.room_in_oven(&self.wet_before(to_utc_us))?;
                 Ok(vec![New::by(Some(who), Fact::OvenOff { from_utc_us, to_utc_us, why })])
             }
             _ => Ok(vec![]),
@@ -364,8 +453,23 @@ impl Lab {
         if containers.is_empty() {
             return Err(no(String::from("name the containers")));
         }
+        if containers.len() > AT_ONCE {
+            return Err(no(format!("at most {AT_ONCE} containers go in or out at once")));
+        }
+        self.room_in_oven(containers)?;
         match containers.iter().find(|c| self.containers.get(*c).is_none_or(|c| c.holding.is_none())) {
             Some(empty) => Err(no(format!("{empty} holds nothing that was weighed wet; weigh it first, or leave it out"))),
+            None => Ok(()),
+        }
+    }
+
+    fn room_in_oven(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        let holding = |id: &&ContainerId| self.containers.get(*id).and_then(|c| c.holding.as_ref());
+        let full = |id: &&ContainerId| holding(id).is_some_and(|h| h.oven.stays.len().max(h.oven.off.len()) >= STAYS_KEPT);
+        match containers.iter().find(full) {
+            Some(id) => {
+                Err(no(format!("{id} has been in and out of the oven {STAYS_KEPT} times: weigh it dry, or leave it out")))
+            }
             None => Ok(()),
         }
     }
@@ -393,23 +497,36 @@ impl Lab {
 
     fn review(&self, specimen: SpecimenId, who: Operator) -> Result<Vec<New>, Refusal> {
         let state = self.specimen_there(&specimen)?;
-        let complete = state.limits.as_ref().is_some_and(|l| l.state != crate::limits::State::Provisional);
-        let tested_by = |t: &super::entities::TrialRecord| t.wets.iter().any(|w| w.by.as_ref() == Some(&who));
-        if !complete {
-            return Err(no(format!("the result of {specimen} is not complete; answer its holds first")));
+        match state.limits.as_ref().map(|l| l.state) {
+            Some(State::Complete) => (),
+            Some(State::Reviewed) => return Err(no(format!("the result of {specimen} is reviewed already"))),
+            _ => {
+                return Err(no(format!(
+                    "the result of {specimen} is not complete; bring what is missing and answer its holds first"
+                )));
+            }
         }
-        if state.trials.iter().any(tested_by) {
-            return Err(no(format!("{who} weighed for {specimen}; a second person reviews")));
+        if worked_on(state).any(|by| *by == who) {
+            return Err(no(format!("{who} worked on {specimen}; a second person reviews")));
         }
         let revision = state.revision;
         Ok(vec![New::by(Some(who), Fact::Reviewed { specimen, revision })])
     }
+}
 
-    /// Which determination of which specimen, or a refusal in words.
-    pub(super) fn trial_there(&self, specimen: &SpecimenId, which: TrialRef) -> Result<(), Refusal> {
-        let there = self.specimen_there(specimen)?.trial(which).is_some();
-        let missing = || no(format!("{specimen} has no such determination number {}", which.no));
-        if there { Ok(()) } else { Err(missing()) }
+/// Everybody whose hand is in a specimen's determinations: who weighed, counted, corrected or set aside.
+fn worked_on(specimen: &Specimen) -> impl Iterator<Item = &Operator> {
+    let weighings = specimen.weighings().flat_map(|w| w.by.iter().chain(w.corrected.iter().filter_map(|c| c.by.as_ref())));
+    let counts = specimen.counts.iter().flat_map(|c| c.by.iter().chain(c.corrected.iter().filter_map(|s| s.by.as_ref())));
+    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref()).filter_map(|s| s.by.as_ref());
+    weighings.chain(counts).chain(aside)
+}
+
+/// A number of drops that a person states.
+pub(super) fn drops_believable(drops: u32) -> Result<(), Refusal> {
+    match (1..=500).contains(&drops) {
+        true => Ok(()),
+        false => Err(no(String::from("a count lies between 1 and 500 drops"))),
     }
 }
 
@@ -426,6 +543,14 @@ pub(super) fn typed_mass(text: &str) -> Result<Mass, Refusal> {
 pub(super) fn needs_words(why: &str) -> Result<(), Refusal> {
     match why.trim().is_empty() {
         true => Err(no(String::from("say why, in a few words: the record keeps it"))),
+        false => not_too_long(why),
+    }
+}
+
+/// The record keeps words, not files.
+fn not_too_long(words: &str) -> Result<(), Refusal> {
+    match words.chars().count() > LONGEST_WORDS {
+        true => Err(no(format!("at most {LONGEST_WORDS} characters fit here; keep a longer text elsewhere and name it"))),
         false => Ok(()),
     }
 }

@@ -1,24 +1,22 @@
 //! A code was read: a card, a specimen, or a container.
 
 use super::ask::Ask;
-use super::entities::{Bench, Loose, LooseWhat};
+use super::entities::{Bench, Loose, LooseWhat, Pan};
 use super::{Lab, New};
 use crate::fact::{Fact, Intention};
 use crate::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
 use crate::sense::InputNo;
-use crate::sheet::Seq;
 use crate::stamp::Stamp;
 use alloc::format;
-use alloc::string::{String, ToString};
+use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
 
 impl Lab {
     pub(super) fn code_read(&self, scanner: &InstrumentName, text: &str, at: &Stamp, input: InputNo) -> Vec<New> {
         let benches = self.benches_of(scanner);
-        let Some(first) = benches.first() else { return vec![] };
-        let shared = benches.len() > 1;
-        let facts = self.code_at(first, shared, text, at).unwrap_or_else(|says| vec![self.refused(first, says)]);
+        let Some((first, others)) = benches.split_first() else { return vec![] };
+        let facts = self.code_at(first, others, text, at).unwrap_or_else(|says| vec![self.refused(first, says)]);
         facts.into_iter().map(|f| f.through(input)).collect()
     }
 
@@ -27,7 +25,7 @@ impl Lab {
     }
 
     /// What a code means at a bench.
-    pub(super) fn code_at(&self, bench: &BenchName, shared: bool, text: &str, at: &Stamp) -> Result<Vec<New>, String> {
+    pub(super) fn code_at(&self, bench: &BenchName, or_at: &[BenchName], text: &str, at: &Stamp) -> Result<Vec<New>, String> {
         let text = text.trim();
         if let Some(card) = text.strip_prefix('+') {
             return self.card(bench, card, at);
@@ -38,48 +36,62 @@ impl Lab {
             let intention = self.benches.get(bench).and_then(|b| b.intention.as_ref()).map_or(Intention::Liquid, |w| w.intention);
             return Ok(self.intend(bench, &specimen, intention, None));
         }
-        let container =
-            ContainerId::new(text).map_err(|e| format!("the code read as \"{}\" is no container: {e}", printable(text)))?;
-        self.container_read(bench, shared, &container, at)
+        let container = ContainerId::new(text)
+            .map_err(|e| format!("the code read as \"{}\" is no container: {}", printable(text), printable(&format!("{e}"))))?;
+        self.container_read(bench, or_at, &container, at)
     }
 
-    fn container_read(&self, bench: &BenchName, shared: bool, container: &ContainerId, at: &Stamp) -> Result<Vec<New>, String> {
+    fn container_read(
+        &self,
+        bench: &BenchName,
+        or_at: &[BenchName],
+        container: &ContainerId,
+        at: &Stamp,
+    ) -> Result<Vec<New>, String> {
         let here = self.benches.get(bench).ok_or_else(|| format!("there is no bench {bench}"))?;
-        if let Some(loose) = self.loose_on_pan(here, at) {
-            return self.tie_late(bench, shared, container, loose);
+        let in_hand = || {
+            let unused = here.hand.as_ref().filter(|h| h.weighing.is_none() && h.container != *container);
+            let instead_of = unused.map(|h| h.container.clone());
+            let (bench, container, or_at) = (bench.clone(), container.clone(), or_at.to_vec());
+            New::by(here.signed_in.clone(), Fact::TakenInHand { bench, container, or_at, instead_of })
+        };
+        let places: Vec<BenchName> = [bench].into_iter().chain(or_at).cloned().collect();
+        if let Some((balance, pan)) = self.loose_on_pan(&places, at) {
+            let served = self.benches_of(balance);
+            let places: Vec<BenchName> = places.into_iter().filter(|b| served.contains(b)).collect();
+            return Ok(self.tie_late(bench, &places, container, pan, in_hand()));
         }
-        if here.hand.as_ref().is_some_and(|h| h.container == *container) {
-            return Ok(vec![]);
-        }
-        let who = here.signed_in.clone();
-        Ok(vec![New::by(who, Fact::TakenInHand { bench: bench.clone(), container: container.clone() })])
+        // The same code again: nothing new, and it stays in hand.
+        let same = here.hand.as_ref().is_some_and(|h| h.container == *container && h.or_at == or_at);
+        Ok(if same { vec![] } else { vec![in_hand()] })
     }
 
-    /// A loose weighing that still lies on one of the bench's pans, or was printed just now.
-    fn loose_on_pan(&self, bench: &Bench, at: &Stamp) -> Option<Seq> {
-        let on_pan = self.pans.iter().filter(|(balance, _)| self.benches_of(balance).contains(&bench.name));
-        let fresh = on_pan.filter(|(_, p)| p.loose && (!p.printed || at.since(&p.at).us <= self.setup.linking.code_after_us));
-        fresh.map(|(_, p)| p.seq).filter(|seq| self.loose.contains_key(seq)).max()
+    /// A loose weighing that still lies on a pan of these benches, or was printed just now.
+    fn loose_on_pan(&self, places: &[BenchName], at: &Stamp) -> Option<(&InstrumentName, &Pan)> {
+        let near = |balance: &InstrumentName| self.benches_of(balance).iter().any(|b| places.contains(b));
+        let in_time = 0..=self.setup.linking.code_after_us;
+        let waits = |p: &Pan| p.loose && self.loose.contains_key(&p.seq) && (!p.printed || in_time.contains(&at.since(&p.at).us));
+        let pans = self.instruments.iter().filter_map(|(balance, i)| i.pan.as_ref().map(|p| (balance, p)));
+        pans.filter(|(balance, p)| near(balance) && waits(p)).max_by_key(|(_, p)| p.seq)
     }
 
     /// The code came after the mass.
-    fn tie_late(&self, bench: &BenchName, shared: bool, container: &ContainerId, weighing: Seq) -> Result<Vec<New>, String> {
-        let who = self.signed_in(Some(bench));
-        let in_hand = New::by(who.clone(), Fact::TakenInHand { bench: bench.clone(), container: container.clone() });
+    fn tie_late(&self, bench: &BenchName, places: &[BenchName], container: &ContainerId, pan: &Pan, in_hand: New) -> Vec<New> {
+        let (weighing, here) = (pan.seq, places.first().unwrap_or(bench));
         let Some(Loose { what: LooseWhat::Weighing { weighing: w, basis }, .. }) = self.loose.get(&weighing) else {
-            return Ok(vec![in_hand]);
+            return vec![in_hand];
         };
-        match self.link(bench, container, shared, w.mass, *basis, &w.at) {
+        match self.link(places, container, w.mass, *basis, &w.at) {
             Ok(link) => {
-                let why = String::from("the code was read after the mass");
-                let mut facts = vec![in_hand, New::by(who, Fact::WeighingTied { weighing, link, why })];
-                if self.pans.values().any(|p| p.seq == weighing && p.printed) {
+                let fact = self.tied(weighing, link, here, String::from("the code was read after the mass"));
+                let mut facts = vec![in_hand, New::by(self.signed_in(Some(here)), fact)];
+                if pan.printed {
                     let why = String::from("its mass was printed");
                     facts.push(New::plain(Fact::HandEmptied { bench: bench.clone(), why }));
                 }
-                Ok(facts)
+                facts
             }
-            Err(says) => Ok(vec![in_hand, self.refused(bench, says)]),
+            Err(says) => vec![in_hand, self.refused(bench, says)],
         }
     }
 
@@ -108,7 +120,7 @@ impl Lab {
                 }
             },
         };
-        self.asked(ask, at, 0).map_err(|r| r.0)
+        self.asked(ask, at).map_err(|r| r.0)
     }
 
     pub(super) fn intend(
@@ -129,5 +141,5 @@ impl Lab {
 
 /// A text that may hold anything, made fit to be shown.
 fn printable(text: &str) -> String {
-    text.chars().take(40).map(|c| if c.is_ascii_graphic() || c == ' ' { c } else { '?' }).collect::<String>().to_string()
+    text.chars().take(100).map(|c| if c.is_ascii_graphic() || c == ' ' { c } else { '?' }).collect()
 }

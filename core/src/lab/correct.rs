@@ -1,10 +1,12 @@
 //! Corrections: new facts that name the fact they correct, who, and why.
 
-use super::ask::{Ask, needs_words, typed_mass};
-use super::entities::{LooseWhat, Weighing};
+use super::ask::{Ask, drops_believable, needs_words, typed_mass};
+use super::entities::{LooseWhat, Specimen, Weighing};
 use super::{Lab, New, Refusal};
 use crate::fact::{Fact, TrialRef};
+use crate::names::SpecimenId;
 use crate::sheet::Seq;
+use crate::soil::determined::about;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec;
@@ -15,12 +17,12 @@ impl Lab {
         match ask {
             Ask::SetAside { what, who, why } => {
                 needs_words(&why)?;
-                self.known(what)?;
+                self.may_be_set_aside(what)?;
                 Ok(vec![New::by(Some(who), Fact::SetAside { what, why })])
             }
             Ask::SetAsideTrial { specimen, kind, no, who, why } => {
                 needs_words(&why)?;
-                self.trial_there(&specimen, TrialRef { kind, no })?;
+                self.trial_counts(&specimen, TrialRef { kind, no })?;
                 Ok(vec![New::by(Some(who), Fact::TrialSetAside { specimen, trial: kind, no, why })])
             }
             Ask::AmendMass { weighing, mass_g, who, why } => {
@@ -29,13 +31,12 @@ impl Lab {
                 let was = self.weighing(weighing).map(|w| w.mass);
                 let was =
                     was.ok_or_else(|| Refusal(format!("no weighing has the number {weighing}, or its specimen is not at hand")))?;
+                self.all_at_hand(weighing)?;
                 Ok(vec![New::by(Some(who), Fact::MassAmended { weighing, was, mass, why })])
             }
             Ask::AmendDrops { count, drops, who, why } => {
                 needs_words(&why)?;
-                if !(1..=500).contains(&drops) {
-                    return Err(Refusal(String::from("a count lies between 1 and 500 drops")));
-                }
+                drops_believable(drops)?;
                 let was = self
                     .drops_of(count)
                     .ok_or_else(|| Refusal(format!("no count has the number {count}, or its specimen is not at hand")))?;
@@ -44,6 +45,7 @@ impl Lab {
             Ask::NewPaste { bench, who, why } => {
                 let state = self.bench_there(&bench)?;
                 let why = why.unwrap_or_else(|| String::from("a new paste was made"));
+                needs_words(&why)?;
                 let who = who.or_else(|| state.signed_in.clone());
                 let owed = state
                     .owed
@@ -57,30 +59,70 @@ impl Lab {
                 let who = who.or_else(|| state.signed_in.clone());
                 let weighing = state.latest.as_ref().map(|l| l.seq);
                 let count = state.owed.as_ref().and_then(|o| o.counts.last().copied());
-                let what = weighing.max(count).filter(|&seq| self.known(seq).is_ok());
+                let what = weighing.max(count);
                 let what = what.ok_or_else(|| Refusal(format!("nothing at bench {bench} can be taken back any more")))?;
+                self.may_be_set_aside(what)?;
                 let why = why.unwrap_or_else(|| String::from("taken back at the bench"));
+                needs_words(&why)?;
                 Ok(vec![New::by(who, Fact::SetAside { what, why })])
             }
             _ => Ok(vec![]),
         }
     }
 
-    fn known(&self, what: Seq) -> Result<(), Refusal> {
-        if self.weighing(what).is_some() || self.drops_of(what).is_some() {
+    fn may_be_set_aside(&self, what: Seq) -> Result<(), Refusal> {
+        if self.drops_of(what).is_some() || self.loose.contains_key(&what) {
             return Ok(());
         }
-        Err(Refusal(format!("no weighing or count in force has the number {what}, or its specimen is not at hand")))
+        match self.weighing(what) {
+            Some(_) => self.may_be_taken_out(what),
+            None => Err(Refusal(format!("no weighing or count in force has the number {what}, or its specimen is not at hand"))),
+        }
+    }
+
+    /// Whether a tied weighing can leave its place without leaving others behind.
+    pub(super) fn may_be_taken_out(&self, seq: Seq) -> Result<(), Refusal> {
+        self.all_at_hand(seq)?;
+        let trials = self.specimens.values().flat_map(|s| &s.trials);
+        for trial in trials.filter(|t| t.weighings().any(|w| w.seq == seq)) {
+            let container = &trial.container;
+            let only_wet = matches!(trial.wets.as_slice(), [one] if one.seq == seq);
+            if only_wet && !(trial.dries.is_empty() && trial.repeats.is_empty()) {
+                return Err(Refusal(format!(
+                    "{container} was weighed again after this wet mass: correct the mass, set the whole trial aside, or take the later weighings back first"
+                )));
+            }
+            let kept = self.containers.get(container).is_some_and(|c| c.tares.iter().any(|w| w.seq == seq));
+            if trial.tare.as_ref().is_some_and(|w| w.seq == seq) && !kept {
+                return Err(Refusal(format!(
+                    "{container} was weighed empty many times since: correct the mass, or set the trial aside"
+                )));
+            }
+        }
+        Ok(())
+    }
+
+    /// Everything that rests on a weighing must be at hand before it is changed.
+    fn all_at_hand(&self, seq: Seq) -> Result<(), Refusal> {
+        match self.rests_on(seq).first() {
+            Some(id) => Err(Refusal(format!("specimen {id} rests on this weighing and could not be read from the ledger"))),
+            None => Ok(()),
+        }
+    }
+
+    fn trial_counts(&self, specimen: &SpecimenId, which: TrialRef) -> Result<(), Refusal> {
+        let trial = self.specimen_there(specimen)?.trial(which);
+        match trial.map(|t| t.set_aside.is_some()) {
+            Some(false) => Ok(()),
+            Some(true) => Err(Refusal(format!("{} of {specimen} is set aside already", about(which.kind, which.no)))),
+            None => Err(Refusal(format!("{specimen} has no determination {}", about(which.kind, which.no)))),
+        }
     }
 
     /// A weighing that is in force or loose.
     fn weighing(&self, seq: Seq) -> Option<&Weighing> {
-        let of_trials = self
-            .specimens
-            .values()
-            .flat_map(|s| &s.trials)
-            .flat_map(|t| t.tare.iter().chain(&t.wets).chain(t.dries.iter().map(|d| &d.weighing)));
-        let of_containers = self.containers.values().flat_map(|c| &c.tares);
+        let of_trials = self.specimens.values().flat_map(Specimen::weighings);
+        let of_containers = self.containers.values().flat_map(|c| c.tares.iter().chain(&c.with_lid));
         let loose = self.loose.get(&seq).and_then(|l| match &l.what {
             LooseWhat::Weighing { weighing, .. } => Some(weighing),
             LooseWhat::Count(_) => None,

@@ -1,40 +1,72 @@
 //! A count run ended: whose slice is owed?
 
+use super::entities::{Count, Loose, LooseWhat, Specimen};
 use super::{Lab, New};
 use crate::fact::{Counted, Fact, Intention};
 use crate::names::{BenchName, InstrumentName, SpecimenId};
 use crate::sense::CountRun;
 use crate::sheet::Seq;
 use crate::stamp::Stamp;
+use alloc::format;
 use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
 
+/// More counts than any test of one specimen has.
+const COUNTS_OF_SPECIMEN: usize = 300;
+/// More closures than any paste has before a slice is taken.
+const CLOSURES_OF_PASTE: usize = 20;
+
 impl Lab {
-    pub(super) fn count_ended(&self, cup: &InstrumentName, run: CountRun, _next_seq: Seq) -> Vec<New> {
+    pub(super) fn count_ended(&self, cup: &InstrumentName, run: CountRun) -> Vec<New> {
+        let (at, through, drops) = (run.at, run.last_input, run.drops);
+        let cup_ = Some(cup.clone());
+        if let Some((specimen, first)) = self.told_before(cup, &run) {
+            let (bench, replaces) = (first.bench.clone(), Some(first.seq));
+            let who = first.by.clone().or_else(|| self.signed_in(bench.as_ref()));
+            let specimen = Some(specimen.id.clone());
+            let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose: None };
+            return vec![New::by(who, Fact::Counted(counted)).through(through)];
+        }
+        let replaces = self.loose_before(cup, &run);
         let benches: Vec<&BenchName> = self.benches_of(cup).iter().collect();
         let (bench, specimen) = self.count_for(&benches);
-        let (at, through, drops) = (run.at, run.last_input, run.drops);
         let bench = bench.or_else(|| self.only_bench(cup));
         let who = self.signed_in(bench.as_ref());
         let mut facts = match (&bench, &specimen) {
-            (Some(bench), Ok(_)) => self.late_slice(bench, &at),
+            (Some(bench), Ok(specimen)) => self.late_slice(bench, specimen, &at),
             _ => Vec::new(),
         };
         let (specimen, loose) = match specimen {
             Ok(specimen) => (Some(specimen), None),
             Err(why) => (None, Some(why)),
         };
-        let counted = Counted { drops, bench, cup: Some(cup.clone()), run: Some(run), specimen, loose };
+        let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose };
         facts.push(New::by(who, Fact::Counted(counted)).through(through));
         facts
+    }
+
+    /// A count of a specimen that this run tells again: it begins with the same
+    /// line. A run that only went on after a pause is another one once the slice
+    /// of the first was taken.
+    fn told_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<(&Specimen, &Count)> {
+        let all = self.specimens.values().flat_map(|s| s.counts.iter().map(move |c| (s, c)));
+        let (specimen, latest) = all.filter(|(_, c)| is_told_by(c, cup, run)).max_by_key(|(_, c)| c.seq)?;
+        let sliced = specimen.trials.iter().any(|t| t.counts.contains(&latest.seq));
+        let same = latest.bench.is_some() && (began_with(latest, run) || !sliced);
+        same.then_some((specimen, latest))
+    }
+
+    fn loose_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<Seq> {
+        let told = |l: &&Loose| matches!(&l.what, LooseWhat::Count(c) if is_told_by(c, cup, run));
+        self.loose.values().rev().find(told).map(|l| l.seq)
     }
 
     /// The bench whose liquid limit is in work, among those the counter serves.
     fn count_for(&self, benches: &[&BenchName]) -> (Option<BenchName>, Result<SpecimenId, String>) {
         let liquid = |b: &&&BenchName| self.liquid_at(b).is_some();
         match benches.iter().filter(liquid).collect::<Vec<_>>().as_slice() {
-            [one] => (Some((**one).clone()), self.liquid_at(one).cloned().ok_or_else(String::new)),
+            [one] => (Some((**one).clone()), self.room_for_count(one)),
             [] => (None, Err(String::from("no liquid limit is in work at this bench: say which specimen the count belongs to"))),
             _ => (
                 None,
@@ -50,15 +82,39 @@ impl Lab {
         (work.intention == Intention::Liquid).then_some(&work.specimen)
     }
 
-    /// Counts whose slice can no longer come: the paste has stood too long.
-    pub(super) fn late_slice(&self, bench: &BenchName, now: &Stamp) -> Vec<New> {
-        let Some(owed) = self.benches.get(bench).and_then(|b| b.owed.as_ref()) else { return vec![] };
-        if now.since(&owed.ended).us < self.setup.linking.slice_us {
-            return vec![];
+    pub(super) fn room_for_count(&self, bench: &BenchName) -> Result<SpecimenId, String> {
+        let id = self.liquid_at(bench).ok_or_else(|| String::from("no liquid limit is in work at this bench"))?;
+        match self.specimens.get(id) {
+            None => Err(format!("specimen {id} could not be read from the ledger: say again what the bench works on")),
+            Some(s) if s.counts.len() >= COUNTS_OF_SPECIMEN => {
+                Err(format!("{COUNTS_OF_SPECIMEN} counts belong to {id} already: does the counter count by itself?"))
+            }
+            Some(_) => Ok(id.clone()),
         }
-        let gone = |&count: &Seq| {
-            New::plain(Fact::CountSuperseded { count, why: String::from("no slice was taken in time, and a new count began") })
-        };
-        owed.counts.iter().map(gone).collect()
     }
+
+    /// Counts whose slice can no longer come: the paste has stood too long, or is of another specimen.
+    pub(super) fn late_slice(&self, bench: &BenchName, specimen: &SpecimenId, now: &Stamp) -> Vec<New> {
+        let Some(owed) = self.benches.get(bench).and_then(|b| b.owed.as_ref()) else { return vec![] };
+        let why = if owed.specimen != *specimen {
+            format!("no slice was taken before the bench counted for {specimen}")
+        } else if now.since(&owed.ended).us >= self.setup.linking.slice_us {
+            String::from("no slice was taken in time, and a new count began")
+        } else if owed.counts.len() >= CLOSURES_OF_PASTE {
+            format!("{CLOSURES_OF_PASTE} closures without a slice are no longer one paste")
+        } else {
+            return vec![];
+        };
+        owed.counts.iter().map(|&count| New::plain(Fact::CountSuperseded { count, why: why.clone() })).collect()
+    }
+}
+
+fn is_told_by(count: &Count, cup: &InstrumentName, run: &CountRun) -> bool {
+    let first = count.run.map(|(first, _)| first);
+    count.cup.as_ref() == Some(cup) && first == Some(run.first_input) && count.set_aside.is_none()
+}
+
+/// Whether the run is the very one that was counted, only with another final number.
+fn began_with(count: &Count, run: &CountRun) -> bool {
+    count.run.is_some_and(|(_, began)| began == run.began)
 }

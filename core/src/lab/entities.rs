@@ -6,8 +6,10 @@ use crate::lab::role::Role;
 use crate::limits::Limits;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::Mass;
+use crate::sense::InputNo;
 use crate::sheet::{Kind, Seq};
 use crate::stamp::{Basis, Stamp};
+use alloc::boxed::Box;
 use alloc::string::String;
 use alloc::vec::Vec;
 use serde::{Deserialize, Serialize};
@@ -42,6 +44,9 @@ pub struct Weighing {
     pub by: Option<Operator>,
     /// Typed by a person, or corrected by one.
     pub typed: bool,
+    /// The latest correction.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub corrected: Option<Said>,
 }
 
 /// A person's word: who, why, in which fact.
@@ -68,6 +73,33 @@ pub struct Container {
     pub holding: Option<Holding>,
     /// Where it stands, for people and topics.
     pub standing: Standing,
+    /// Empty weighings with the lid on.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub with_lid: Vec<Weighing>,
+    /// What it held before it was last weighed empty, so that this weighing can be taken back.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub released: Option<Released>,
+    /// Specimens whose determinations use an empty weighing kept here.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub tare_uses: Vec<TareUse>,
+}
+
+/// What a container held before it was weighed empty.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Released {
+    /// The empty weighing.
+    pub by: Seq,
+    /// What it held.
+    pub holding: Holding,
+}
+
+/// An empty weighing is the tare of a specimen's determination.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct TareUse {
+    /// The empty weighing.
+    pub tare: Seq,
+    /// The specimen.
+    pub specimen: SpecimenId,
 }
 
 /// What a container holds.
@@ -79,25 +111,42 @@ pub struct Holding {
     pub trial: TrialRef,
     /// Its drying.
     pub oven: OvenClock,
+    /// The finished determination that this one took the place of, so that it can be taken back.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub before: Option<Box<Holding>>,
 }
 
-/// Time in the oven of what a container holds.
+/// Time in the oven of what a container holds. What was recorded is kept, and
+/// hours are computed from it, so that a weighing can be taken back and a report
+/// of an oven that was off may come late.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct OvenClock {
     /// In the oven since, by the record.
     pub since: Option<Stamp>,
-    /// Time in the oven before that, µs.
-    pub before_us: i64,
-    /// Time during which the oven was off, µs, to be taken away.
-    pub off_us: i64,
+    /// Stays in the oven that are over.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub stays: Vec<Stay>,
+    /// Times during which the oven did not heat, UTC µs from–to, in order and apart.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub off: Vec<(i64, i64)>,
     /// Somebody recorded the oven.
     pub recorded: bool,
     /// Where nobody did: when the wet weighing was.
     pub wet_at: Stamp,
-    /// Oven time at the previous dry weighing, µs, and when that was.
-    pub at_previous_dry: Option<(i64, Stamp)>,
-    /// Some part was measured across a restart of the machine.
-    pub basis: Basis,
+}
+
+/// A stay in the oven.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Stay {
+    /// From.
+    pub from: Stamp,
+    /// To.
+    pub to: Stamp,
+    /// Somebody recorded its beginning; else it is counted from the wet weighing.
+    pub recorded: bool,
+    /// It ended because the container was weighed dry in this fact.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub ended_by: Option<Seq>,
 }
 
 /// Where a container stands.
@@ -180,6 +229,18 @@ pub struct Count {
     pub superseded: Option<String>,
     /// Set aside by a person.
     pub set_aside: Option<Said>,
+    /// The latest correction.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub corrected: Option<Said>,
+    /// Who was signed in.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub by: Option<Operator>,
+    /// Where its slice is owed, or was.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub bench: Option<BenchName>,
+    /// First line of the run, and when it began: tells a run that is told again.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub run: Option<(InputNo, Stamp)>,
 }
 
 /// One determination.
@@ -197,6 +258,9 @@ pub struct TrialRecord {
     pub tare: Option<Weighing>,
     /// Wet weighings that count in turn; the last one is in force.
     pub wets: Vec<Weighing>,
+    /// The wet container once more; changes nothing.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub repeats: Vec<Weighing>,
     /// Dry weighings in order.
     pub dries: Vec<DryRecord>,
     /// Set aside by a person.
@@ -250,6 +314,9 @@ pub struct Bench {
     pub refusal: Option<String>,
     /// When something last happened here.
     pub active: Stamp,
+    /// The latest code of a container read here, by its fact.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub code: Option<Seq>,
 }
 
 /// What a bench works on.
@@ -268,10 +335,14 @@ pub struct Hand {
     pub container: ContainerId,
     /// Since when.
     pub since: Stamp,
-    /// The mass it has been given since.
+    /// The mass taken with it in hand, loose or not.
     pub weighing: Option<Seq>,
-    /// Its code was read by a scanner that several benches share.
-    pub shared: bool,
+    /// Other benches that share the scanner which read the code: the mass may be taken there.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub or_at: Vec<BenchName>,
+    /// The container that was in hand before and got no mass.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub instead_of: Option<ContainerId>,
 }
 
 /// A count has ended and nothing was weighed yet.
@@ -349,12 +420,42 @@ pub struct Instrument {
     pub since: Option<Stamp>,
     /// Lines lost because nothing could take them.
     pub overrun_lines: u64,
+    /// A mass that was printed, or lies loose on the pan.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub pan: Option<Pan>,
+}
+
+/// The latest mass of a balance, as long as another line or code can still refer to it.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Pan {
+    /// The weighing.
+    pub seq: Seq,
+    /// The line itself was the weighing (print key).
+    pub printed: bool,
+    /// Mass as printed.
+    pub mass: Mass,
+    /// When.
+    pub at: Stamp,
+    /// It is loose.
+    pub loose: bool,
+    /// The fact that tied it, when that came later.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub tied: Option<Seq>,
 }
 
 impl Container {
     /// A container that was never seen.
     pub fn new(id: ContainerId) -> Self {
-        Self { id, tares: Vec::new(), lid: None, holding: None, standing: Standing::Unknown }
+        Self {
+            id,
+            tares: Vec::new(),
+            lid: None,
+            holding: None,
+            standing: Standing::Unknown,
+            with_lid: Vec::new(),
+            released: None,
+            tare_uses: Vec::new(),
+        }
     }
     /// The empty weighing in force.
     pub fn tare(&self) -> Option<&Weighing> {
@@ -374,6 +475,7 @@ impl Bench {
             latest: None,
             refusal: None,
             active: Stamp::default(),
+            code: None,
         }
     }
 }
@@ -381,7 +483,7 @@ impl Bench {
 impl Instrument {
     /// An instrument that was never heard.
     pub fn new(name: InstrumentName) -> Self {
-        Self { name, state: Connection::Waiting, detail: None, since: None, overrun_lines: 0 }
+        Self { name, state: Connection::Waiting, detail: None, since: None, overrun_lines: 0, pan: None }
     }
 }
 
@@ -389,6 +491,11 @@ impl TrialRecord {
     /// Kind and number.
     pub fn reference(&self) -> TrialRef {
         TrialRef { kind: self.kind, no: self.no }
+    }
+    /// Every weighing of it: tare, wet, repeated, dry.
+    pub fn weighings(&self) -> impl Iterator<Item = &Weighing> {
+        let dries = self.dries.iter().map(|d| &d.weighing);
+        self.tare.iter().chain(&self.wets).chain(&self.repeats).chain(dries)
     }
 }
 
@@ -400,6 +507,10 @@ impl Specimen {
     /// A determination, to be changed.
     pub fn trial_mut(&mut self, which: TrialRef) -> Option<&mut TrialRecord> {
         self.trials.iter_mut().find(|t| t.reference() == which)
+    }
+    /// Weighings of all its determinations.
+    pub fn weighings(&self) -> impl Iterator<Item = &Weighing> {
+        self.trials.iter().flat_map(TrialRecord::weighings)
     }
     /// A count run.
     pub fn count(&self, seq: Seq) -> Option<&Count> {

@@ -3,7 +3,7 @@
 use super::Lab;
 use super::entities::{Bench, Hand, Standing};
 use crate::fact::Intention;
-use crate::names::BenchName;
+use crate::names::{BenchName, ContainerId};
 use crate::sheet::Kind;
 use alloc::format;
 use alloc::string::String;
@@ -65,15 +65,24 @@ impl Lab {
         if hand.weighing.is_some() {
             return format!("{id} is recorded: take it off the pan");
         }
-        let container = self.containers.get(id);
-        let how = match container.map_or(Standing::Unknown, |c| c.standing) {
-            Standing::Wet | Standing::InOven => "with its dried soil",
-            Standing::Drying | Standing::Dry if bench.owed.is_none() => "dried again, or emptied",
-            Standing::Unknown if bench.owed.is_none() => "empty",
-            _ if bench.owed.is_some() => "with the slice",
-            _ if bench.intention.as_ref().is_some_and(|w| w.intention != Intention::Liquid) => "with the soil",
-            _ => "empty",
+        let standing = self.containers.get(id).map_or(Standing::Unknown, |c| c.standing);
+        let opens = bench.owed.is_some() || bench.intention.as_ref().is_some_and(|w| w.intention != Intention::Liquid);
+        let what = if bench.owed.is_some() { "the slice" } else { "the soil" };
+        let how = match (standing, opens) {
+            (Standing::Wet, _) if self.gathers_threads(id) => String::from("with more threads, or dried"),
+            (Standing::Wet | Standing::InOven, _) => String::from("with its dried soil"),
+            (Standing::Drying, _) => String::from("dried again"),
+            (Standing::Dry, false) => String::from("dried again, or emptied"),
+            (Standing::Unknown, true) => format!("with {what} (its empty mass is not known: weigh it empty afterwards)"),
+            (Standing::Dry | Standing::Free, true) => format!("with {what}"),
+            (Standing::Unknown | Standing::Free, false) => String::from("empty"),
         };
-        format!("Container {id} is in hand: put it on the pan, {how}")
+        let instead = hand.instead_of.as_ref().map_or(String::new(), |other| format!(" instead of {other}, which got no mass"));
+        format!("Container {id} is in hand{instead}: put it on the pan, {how}")
+    }
+
+    fn gathers_threads(&self, id: &ContainerId) -> bool {
+        let holding = self.containers.get(id).and_then(|c| c.holding.as_ref());
+        holding.is_some_and(|h| h.trial.kind == Kind::Thread && !h.oven.recorded)
     }
 }

@@ -29,6 +29,7 @@ use crate::stamp::{SECOND_US, Stamp};
 use alloc::boxed::Box;
 use alloc::collections::{BTreeMap, BTreeSet};
 use alloc::string::String;
+use alloc::sync::Arc;
 use alloc::vec::Vec;
 use ask::Ask;
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
@@ -189,27 +190,15 @@ impl New {
     }
 }
 
-/// What a balance's pan was last given. Not a fact: rebuilt from the lines.
-#[derive(Clone, Debug)]
-struct Pan {
-    seq: Seq,
-    printed: bool,
-    mass: Mass,
-    at: Stamp,
-    code_since: bool,
-    loose: bool,
-}
-
 /// The laboratory.
 #[derive(Clone, Debug)]
 pub struct Lab {
-    setup: Setup,
+    setup: Arc<Setup>,
     specimens: BTreeMap<SpecimenId, Specimen>,
     containers: BTreeMap<ContainerId, Container>,
     benches: BTreeMap<BenchName, Bench>,
     instruments: BTreeMap<InstrumentName, Instrument>,
     loose: BTreeMap<Seq, Loose>,
-    pans: BTreeMap<InstrumentName, Pan>,
 }
 
 impl Lab {
@@ -218,35 +207,34 @@ impl Lab {
         let benches = setup.benches.iter().map(|b| (b.clone(), Bench::new(b.clone()))).collect();
         let instruments = setup.instruments.keys().map(|i| (i.clone(), Instrument::new(i.clone()))).collect();
         Self {
-            setup,
+            setup: Arc::new(setup),
             specimens: BTreeMap::new(),
             containers: BTreeMap::new(),
             benches,
             instruments,
             loose: BTreeMap::new(),
-            pans: BTreeMap::new(),
         }
     }
 
     /// Takes an input: decides, applies, follows up. Nothing has changed when it is refused.
     pub fn take(&mut self, input: Input, at: Stamp, next_seq: Seq) -> Result<Outcome, Refusal> {
-        let new = self.decide(input, &at, next_seq)?;
+        let new = self.decide(input, &at)?;
         let mut outcome = Outcome::default();
         self.record(new, at, next_seq, &mut outcome);
         let follow = self.follow(&outcome);
-        let next = next_seq + outcome.facts.len() as Seq;
+        let next = next_seq.saturating_add(outcome.facts.len() as Seq);
         self.record(follow, at, next, &mut outcome);
         Ok(outcome)
     }
 
     /// What an input means, as facts.
-    fn decide(&self, input: Input, at: &Stamp, next_seq: Seq) -> Result<Vec<New>, Refusal> {
+    fn decide(&self, input: Input, at: &Stamp) -> Result<Vec<New>, Refusal> {
         Ok(match input {
             Input::Mass { balance, taken } => self.mass_taken(&balance, taken),
             Input::Unloaded { balance, input } => self.unloaded(&balance, input),
-            Input::Count { cup, run } => self.count_ended(&cup, run, next_seq),
+            Input::Count { cup, run } => self.count_ended(&cup, run),
             Input::Code { scanner, text, input } => self.code_read(&scanner, &text, at, input),
-            Input::Ask(ask) => self.asked(ask, at, next_seq)?,
+            Input::Ask(ask) => self.asked(ask, at)?,
             Input::Instrument { instrument, state, detail } => self.instrument_changed(instrument, state, detail),
             Input::Overrun { instrument, lines } => alloc::vec![New::plain(Fact::LinesOverrun { instrument, lines })],
             Input::Started { program, after_orderly_stop } => {
@@ -260,7 +248,7 @@ impl Lab {
 
     fn record(&mut self, new: Vec<New>, at: Stamp, first: Seq, outcome: &mut Outcome) {
         for (n, New { fact, who, through }) in new.into_iter().enumerate() {
-            let recorded = Recorded { seq: first + n as Seq, at, who, through, fact };
+            let recorded = Recorded { seq: first.saturating_add(n as Seq), at, who, through, fact };
             self.apply(&recorded, &mut outcome.touched);
             outcome.facts.push(recorded);
         }
@@ -272,23 +260,21 @@ impl Lab {
     }
 
     fn stopping(&self) -> Vec<New> {
-        let ended = |b: &Bench| Fact::IntentionEnded { bench: b.name.clone(), why: String::from("the service was stopped") };
-        let intentions = self.benches.values().filter(|b| b.intention.is_some()).map(|b| New::plain(ended(b)));
-        intentions.chain([New::plain(Fact::ServiceStopped {})]).collect()
+        let ended = self.benches.values().flat_map(|b| let_go(b, "the service was stopped"));
+        ended.chain([New::plain(Fact::ServiceStopped {})]).collect()
     }
 
     /// Facts that are due because time has passed.
     fn due(&self, now: &Stamp) -> Vec<New> {
         let mut facts = Vec::new();
         for bench in self.benches.values() {
-            let idle = now.since(&bench.active).us;
-            if bench.intention.is_some() && idle >= self.setup.linking.intention_us {
-                let why = String::from("nothing happened here for the set time; say again what the bench works on");
-                facts.push(New::plain(Fact::IntentionEnded { bench: bench.name.clone(), why }));
-            }
-            if let Some(owed) =
-                bench.owed.as_ref().filter(|o| !o.said && now.since(&o.ended).us >= self.setup.linking.slice_aloud_us)
-                && let Some(&count) = owed.counts.last()
+            if self.idle_in_us(bench, now).is_some_and(|us| us <= 0) {
+                facts.extend(let_go(bench, "nothing happened here for the set time; say again what the bench works on"));
+                let owed = bench.owed.iter().flat_map(|o| &o.counts);
+                let why = || String::from("no slice was taken, and nothing happened at the bench for the set time");
+                facts.extend(owed.map(|&count| New::plain(Fact::CountSuperseded { count, why: why() })));
+            } else if self.aloud_in_us(bench, now).is_some_and(|us| us <= 0)
+                && let Some(&count) = bench.owed.as_ref().and_then(|o| o.counts.last())
             {
                 facts.push(New::plain(Fact::SliceOverdue { bench: bench.name.clone(), count }));
             }
@@ -296,15 +282,55 @@ impl Lab {
         facts
     }
 
+    /// Microseconds until a bench at which nothing happens lets go of everything.
+    fn idle_in_us(&self, bench: &Bench, now: &Stamp) -> Option<i64> {
+        let holds = bench.intention.is_some() || bench.hand.is_some() || bench.owed.is_some();
+        holds.then(|| self.setup.linking.intention_us.saturating_sub(now.since(&bench.active).us))
+    }
+
+    /// Microseconds until a slice owed is said aloud.
+    fn aloud_in_us(&self, bench: &Bench, now: &Stamp) -> Option<i64> {
+        let owed = bench.owed.as_ref().filter(|o| !o.said)?;
+        Some(self.setup.linking.slice_aloud_us.saturating_sub(now.since(&owed.ended).us))
+    }
+
     /// Microseconds from now until [`Input::Due`] has something to say.
     pub fn due_in_us(&self, now: &Stamp) -> Option<i64> {
-        let limits = &self.setup.linking;
-        let of_bench = |b: &Bench| {
-            let intention = b.intention.as_ref().map(|_| limits.intention_us - now.since(&b.active).us);
-            let slice = b.owed.as_ref().filter(|o| !o.said).map(|o| limits.slice_aloud_us - now.since(&o.ended).us);
-            intention.into_iter().chain(slice).min()
-        };
+        let of_bench = |b: &Bench| self.idle_in_us(b, now).into_iter().chain(self.aloud_in_us(b, now)).min();
         self.benches.values().filter_map(of_bench).min().map(|us| us.max(0))
+    }
+
+    /// Specimens that containers hold or benches work on and that are not at hand: load them after the documents.
+    pub fn missing(&self) -> Vec<SpecimenId> {
+        self.needed().into_iter().filter(|id| !self.specimens.contains_key(id)).collect()
+    }
+
+    /// Specimens that an input concerns and that are not at hand: those whose
+    /// determinations rest on an empty weighing of a container. Load them first;
+    /// without them a correction of that weighing is refused.
+    pub fn wants(&self, input: &Input) -> Vec<SpecimenId> {
+        let undo = |bench: Option<&Bench>| bench.and_then(|b| b.latest.as_ref()).map(|l| l.seq);
+        let weighing = match input {
+            Input::Code { scanner, text, .. } if text.trim() == "+undo" => {
+                undo(self.benches_of(scanner).first().and_then(|b| self.benches.get(b)))
+            }
+            Input::Ask(Ask::Code { bench, text }) if text.trim() == "+undo" => undo(self.benches.get(bench)),
+            Input::Ask(Ask::Undo { bench, .. } | Ask::SayRole { bench, .. }) => undo(self.benches.get(bench)),
+            Input::Ask(Ask::Tie { weighing, .. } | Ask::AmendMass { weighing, .. } | Ask::SetAside { what: weighing, .. }) => {
+                Some(*weighing)
+            }
+            _ => None,
+        };
+        weighing.map_or(Vec::new(), |seq| self.rests_on(seq))
+    }
+
+    /// Specimens not at hand whose determinations rest on an empty weighing.
+    fn rests_on(&self, tare: Seq) -> Vec<SpecimenId> {
+        let uses = self.containers.values().flat_map(|c| &c.tare_uses).filter(|u| u.tare == tare).map(|u| &u.specimen);
+        let released = self.containers.values().filter_map(|c| c.released.as_ref());
+        let released = released.filter(|r| r.by == tare).map(|r| &r.holding.specimen);
+        let away: BTreeSet<&SpecimenId> = uses.chain(released).filter(|id| !self.specimens.contains_key(id)).collect();
+        away.into_iter().cloned().collect()
     }
 
     /// Puts an entity read from the ledger in place.
@@ -320,16 +346,26 @@ impl Lab {
         }
     }
 
-    /// Forgets finished specimens that no container holds; they come back from the ledger when named.
+    /// Forgets finished specimens that no container holds and no bench works on; they come back from the ledger when named.
     pub fn forget_finished(&mut self) {
-        let held: BTreeSet<&SpecimenId> =
-            self.containers.values().filter_map(|c| c.holding.as_ref()).map(|h| &h.specimen).collect();
-        let at_work: BTreeSet<&SpecimenId> =
-            self.benches.values().filter_map(|b| b.intention.as_ref()).map(|i| &i.specimen).collect();
-        self.specimens.retain(|id, s| s.open() || held.contains(id) || at_work.contains(id));
+        let needed = self.needed();
+        self.specimens.retain(|id, s| s.open() || needed.contains(id));
         while self.loose.len() > LOOSE_AT_HAND {
             self.loose.pop_first();
         }
+    }
+
+    /// Specimens that containers hold or benches work on.
+    fn needed(&self) -> BTreeSet<SpecimenId> {
+        let held = self.containers.values().filter_map(|c| c.holding.as_ref()).flat_map(|h| {
+            let before = h.before.as_ref().map(|b| b.specimen.clone());
+            [Some(h.specimen.clone()), before].into_iter().flatten()
+        });
+        let at_work = self.benches.values().flat_map(|b| {
+            let work = b.intention.as_ref().map(|w| w.specimen.clone());
+            work.into_iter().chain(b.owed.as_ref().map(|o| o.specimen.clone()))
+        });
+        held.chain(at_work).collect()
     }
 
     /// A specimen at hand.
@@ -393,6 +429,14 @@ impl Lab {
     pub(crate) fn signed_in(&self, bench: Option<&BenchName>) -> Option<Operator> {
         bench.and_then(|b| self.benches.get(b)).and_then(|b| b.signed_in.clone())
     }
+}
+
+/// Ends what a bench works on and has in hand.
+fn let_go(bench: &Bench, why: &str) -> Vec<New> {
+    let name = || bench.name.clone();
+    let intention = bench.intention.as_ref().map(|_| Fact::IntentionEnded { bench: name(), why: String::from(why) });
+    let hand = bench.hand.as_ref().map(|_| Fact::HandEmptied { bench: name(), why: String::from(why) });
+    intention.into_iter().chain(hand).map(New::plain).collect()
 }
 
 /// An entity read from the ledger.

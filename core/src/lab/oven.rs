@@ -1,72 +1,123 @@
 //! Time in the oven, and when a container counts as dry.
 
 use super::Lab;
-use super::entities::{Container, DryRecord, Holding, OvenClock, Standing, TrialRecord, Weighing};
+use super::entities::{Container, DryRecord, Holding, OvenClock, Standing, Stay, TrialRecord};
 use crate::method::Drying;
 use crate::quantity::Mass;
-use crate::sheet::DryWeighing;
+use crate::sheet::{DryWeighing, Seq};
 use crate::stamp::{Basis, HOUR_US, Stamp};
 use alloc::vec::Vec;
+
+/// Stays and times off that a container keeps; asks beyond are refused.
+pub(super) const STAYS_KEPT: usize = 200;
 
 impl OvenClock {
     /// Starts with the wet weighing; a record of the oven makes it true.
     pub(super) fn new(wet_at: Stamp) -> Self {
-        Self { since: None, before_us: 0, off_us: 0, recorded: false, wet_at, at_previous_dry: None, basis: Basis::Monotonic }
+        Self { since: None, stays: Vec::new(), off: Vec::new(), recorded: false, wet_at }
     }
 
-    /// Time in the oven up to now, µs, and the clock it rests on.
+    /// Time in the oven up to a moment, µs, and the clock it rests on.
     pub(super) fn total(&self, now: &Stamp) -> (i64, Basis) {
-        let running = match (self.recorded, &self.since) {
-            (true, Some(since)) => Some(now.since(since)),
-            (true, None) => None,
-            (false, _) => Some(now.since(&self.wet_at)),
-        };
-        let us = self.before_us + running.map_or(0, |r| r.us.max(0)) - self.off_us;
-        let wall = self.basis == Basis::Wall || running.is_some_and(|r| r.basis == Basis::Wall);
-        (us.max(0), if wall { Basis::Wall } else { Basis::Monotonic })
+        if !self.recorded && self.stays.is_empty() {
+            return self.heated(&self.wet_at, now);
+        }
+        let over = self.stays.iter().map(|s| (s.from, if now.since(&s.to).us >= 0 { s.to } else { *now }));
+        let running = self.since.iter().map(|since| (*since, *now));
+        let mut all = (0i64, Basis::Monotonic);
+        for (from, to) in over.chain(running) {
+            let (us, basis) = self.heated(&from, &to);
+            all.0 = all.0.saturating_add(us);
+            if basis == Basis::Wall && us > 0 {
+                all.1 = Basis::Wall;
+            }
+        }
+        all
     }
 
-    pub(super) fn put_in(&mut self, now: Stamp) {
-        if self.since.is_none() {
-            self.since = Some(now);
+    /// From one moment to another, without the time in which the oven was off.
+    fn heated(&self, from: &Stamp, to: &Stamp) -> (i64, Basis) {
+        let passed = to.since(from);
+        let overlap = |&(a, b): &(i64, i64)| b.min(to.utc_us).saturating_sub(a.max(from.utc_us)).max(0);
+        let off = self.off.iter().map(overlap).fold(0i64, i64::saturating_add);
+        (passed.us.saturating_sub(off).max(0), passed.basis)
+    }
+
+    /// Into the oven. What lies before, if it was weighed dry without a record, stays as it was counted.
+    pub(super) fn put_in(&mut self, now: Stamp, last_dry: Option<Stamp>) {
+        if !self.recorded
+            && self.stays.is_empty()
+            && let Some(dry) = last_dry
+        {
+            self.stays.push(Stay { from: self.wet_at, to: dry, recorded: false, ended_by: None });
         }
+        self.since.get_or_insert(now);
         self.recorded = true;
     }
 
-    pub(super) fn take_out(&mut self, now: &Stamp) {
-        if let Some(since) = self.since.take() {
-            let stay = now.since(&since);
-            self.before_us += stay.us.max(0);
-            if stay.basis == Basis::Wall {
-                self.basis = Basis::Wall;
-            }
+    /// Out of the oven. Where nobody recorded that it went in, it did with the wet weighing.
+    pub(super) fn take_out(&mut self, now: Stamp) {
+        if let Some(from) = self.since.take() {
+            self.stays.push(Stay { from, to: now, recorded: true, ended_by: None });
+        } else if !self.recorded && self.stays.is_empty() {
+            self.stays.push(Stay { from: self.wet_at, to: now, recorded: false, ended_by: None });
+            self.recorded = true;
         }
     }
 
-    /// Takes away the time in which the oven did not heat.
-    pub(super) fn off(&mut self, from_utc_us: i64, to_utc_us: i64, now: &Stamp) {
-        let start = match (self.recorded, &self.since) {
-            (true, Some(since)) => since.utc_us,
-            (true, None) => return,
-            (false, _) => self.wet_at.utc_us,
-        };
-        self.off_us += (to_utc_us.min(now.utc_us) - from_utc_us.max(start)).max(0);
+    /// The oven did not heat from–to. Reports that overlap are one time.
+    pub(super) fn was_off(&mut self, from_utc_us: i64, to_utc_us: i64) {
+        self.off.push((from_utc_us, to_utc_us));
+        self.off.sort_unstable();
+        let mut apart: Vec<(i64, i64)> = Vec::new();
+        for &(from, to) in &self.off {
+            match apart.last_mut().filter(|last| from <= last.1) {
+                Some(last) => last.1 = last.1.max(to),
+                None => apart.push((from, to)),
+            }
+        }
+        self.off = apart;
     }
 
-    /// A dry weighing: it is out of the oven now, whether or not that was recorded.
-    pub(super) fn weighed(&mut self, weighing: Weighing) -> DryRecord {
-        let now = weighing.at;
-        let (total, basis) = self.total(&now);
-        let since_previous_hours = self.at_previous_dry.map(|(before, _)| hours(total - before));
-        let record = DryRecord { weighing, oven_hours: hours(total), since_previous_hours, oven_recorded: self.recorded, basis };
-        self.take_out(&now);
-        self.at_previous_dry = Some((total, now));
-        record
+    /// Weighed dry: it is out of the oven now, whether or not that was recorded.
+    pub(super) fn weighed(&mut self, at: Stamp, seq: Seq) {
+        if let Some(from) = self.since.take_if(|since| at.since(since).us >= 0) {
+            self.stays.push(Stay { from, to: at, recorded: true, ended_by: Some(seq) });
+        }
+    }
+
+    /// That weighing was of another container: this one stayed in.
+    pub(super) fn not_weighed(&mut self, seq: Seq) {
+        let last = self.stays.pop_if(|s| s.ended_by == Some(seq) && self.since.is_none());
+        if let Some(stay) = last {
+            self.since = Some(stay.from);
+        }
+    }
+
+    /// Somebody recorded every stay that began before a moment.
+    fn recorded_before(&self, now: &Stamp) -> bool {
+        let began = |from: &Stamp| now.since(from).us >= 0;
+        let mut stays = self.stays.iter().filter(|s| began(&s.from)).peekable();
+        let any = stays.peek().is_some() || self.since.as_ref().is_some_and(began);
+        self.recorded && any && stays.all(|s| s.recorded)
     }
 }
 
 fn hours(us: i64) -> f64 {
     us.max(0) as f64 / HOUR_US as f64
+}
+
+/// Works the hours of a determination's dry weighings anew from the oven's record.
+pub(super) fn work_hours(dries: &mut [DryRecord], oven: &OvenClock) {
+    let mut previous: Option<i64> = None;
+    for dry in dries {
+        let (total, basis) = oven.total(&dry.weighing.at);
+        dry.oven_hours = hours(total);
+        dry.since_previous_hours = previous.map(|before| hours(total.saturating_sub(before)));
+        dry.oven_recorded = oven.recorded_before(&dry.weighing.at);
+        dry.basis = basis;
+        previous = Some(total);
+    }
 }
 
 /// Whether dry weighings prove dryness by the method: enough hours in the
@@ -128,53 +179,96 @@ impl Lab {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::lab::entities::Weighing;
     use crate::stamp::Boot;
 
     fn at(hours: i64) -> Stamp {
         Stamp { utc_us: hours * HOUR_US, mono_us: hours * HOUR_US, boot: Boot(1) }
     }
 
-    fn weighing(mass: i64, hours: i64) -> Weighing {
-        Weighing { seq: 1, mass: Mass::from_ug(mass), balance: None, at: at(hours), by: None, typed: false }
+    fn dry(hours: i64) -> DryRecord {
+        let weighing = Weighing {
+            seq: hours as u64,
+            mass: Mass::from_ug(1),
+            balance: None,
+            at: at(hours),
+            by: None,
+            typed: false,
+            corrected: None,
+        };
+        DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }
+    }
+
+    /// Hours, hours since the previous one, and whether recorded, of dry weighings at these hours.
+    fn worked(clock: &OvenClock, dries: &[i64]) -> Vec<(f64, Option<f64>, bool)> {
+        let mut dries: Vec<DryRecord> = dries.iter().map(|&h| dry(h)).collect();
+        work_hours(&mut dries, clock);
+        dries.iter().map(|d| (d.oven_hours, d.since_previous_hours, d.oven_recorded)).collect()
     }
 
     #[test]
     fn without_a_record_the_wet_weighing_starts_the_clock() {
-        let mut clock = OvenClock::new(at(0));
-        let dry = clock.weighed(weighing(1, 16));
-        assert_eq!((dry.oven_hours, dry.oven_recorded), (16.0, false));
+        let clock = OvenClock::new(at(0));
+        assert_eq!(worked(&clock, &[16, 18]), [(16.0, None, false), (18.0, Some(2.0), false)]);
     }
 
     #[test]
     fn with_a_record_only_time_in_the_oven_counts() {
         let mut clock = OvenClock::new(at(0));
-        clock.put_in(at(4));
-        clock.take_out(&at(10));
-        assert_eq!(clock.weighed(weighing(1, 16)).oven_hours, 6.0);
-        clock.put_in(at(17));
-        let again = clock.weighed(weighing(1, 19));
-        assert_eq!((again.oven_hours, again.since_previous_hours), (8.0, Some(2.0)));
-        // Not put back: it proves nothing.
-        assert_eq!(clock.weighed(weighing(1, 30)).since_previous_hours, Some(0.0));
+        clock.put_in(at(4), None);
+        clock.take_out(at(10));
+        clock.weighed(at(16), 16);
+        clock.put_in(at(17), Some(at(16)));
+        clock.weighed(at(19), 19);
+        // The third was not put back: it proves nothing.
+        let want = [(6.0, None, true), (8.0, Some(2.0), true), (8.0, Some(0.0), true)];
+        assert_eq!(worked(&clock, &[16, 19, 30]), want);
     }
 
     #[test]
-    fn an_oven_that_was_off_overnight_does_not_dry() {
+    fn a_record_that_begins_late_keeps_what_was_counted_before() {
         let mut clock = OvenClock::new(at(0));
-        clock.put_in(at(1));
-        clock.off(3 * HOUR_US, 13 * HOUR_US, &at(16));
-        assert_eq!(clock.weighed(weighing(1, 17)).oven_hours, 6.0);
-        let mut none = OvenClock::new(at(5));
-        none.off(0, 4 * HOUR_US, &at(16));
-        assert_eq!(none.total(&at(16)).0, 11 * HOUR_US);
+        clock.put_in(at(6), Some(at(4)));
+        clock.weighed(at(8), 8);
+        assert_eq!(worked(&clock, &[4, 8]), [(4.0, None, false), (6.0, Some(2.0), false)]);
+    }
+
+    #[test]
+    fn taken_out_without_having_been_put_in() {
+        let mut clock = OvenClock::new(at(0));
+        clock.take_out(at(9));
+        assert_eq!(worked(&clock, &[12]), [(9.0, None, false)]);
+    }
+
+    #[test]
+    fn an_oven_that_was_off_overnight_does_not_dry_and_is_taken_away_once() {
+        let mut clock = OvenClock::new(at(0));
+        clock.put_in(at(1), None);
+        clock.weighed(at(17), 17);
+        clock.was_off(3 * HOUR_US, 10 * HOUR_US);
+        clock.was_off(8 * HOUR_US, 13 * HOUR_US);
+        assert_eq!(worked(&clock, &[17]), [(6.0, None, true)]);
+        let mut late = OvenClock::new(at(5));
+        late.was_off(0, 4 * HOUR_US);
+        assert_eq!(late.total(&at(16)).0, 11 * HOUR_US);
+    }
+
+    #[test]
+    fn a_weighing_taken_back_puts_the_container_back_in() {
+        let mut clock = OvenClock::new(at(0));
+        clock.put_in(at(1), None);
+        let before = clock.clone();
+        clock.weighed(at(5), 5);
+        clock.not_weighed(5);
+        assert_eq!(clock, before);
     }
 
     #[test]
     fn a_clock_set_back_never_gives_negative_hours() {
         let mut clock = OvenClock::new(at(10));
         let later = Stamp { utc_us: 0, mono_us: 0, boot: Boot(2) };
-        clock.put_in(at(11));
-        assert_eq!(clock.total(&later), (0, Basis::Wall));
+        clock.put_in(at(11), None);
+        assert_eq!(clock.total(&later).0, 0);
     }
 
     #[test]

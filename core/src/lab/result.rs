@@ -3,9 +3,10 @@
 use super::entities::{Count, Entity, Specimen, TrialRecord};
 use super::{Lab, New, Outcome, oven};
 use crate::evaluate::evaluate;
-use crate::fact::Fact;
+use crate::fact::{Counted, Fact, Limit, Recorded};
 use crate::limits::{Limits, State};
 use crate::sheet::{Answer, Closure, Kind, Sheet, Trial};
+use crate::soil::determined::about;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec::Vec;
@@ -17,10 +18,11 @@ impl Lab {
             Entity::Specimen(id) => self.specimens.get(id),
             _ => None,
         });
-        specimens.filter_map(|s| self.new_result(s)).map(New::plain).collect()
+        let causes: Vec<String> = outcome.facts.iter().filter_map(cause).collect();
+        specimens.filter_map(|s| self.new_result(s, &causes)).map(New::plain).collect()
     }
 
-    fn new_result(&self, specimen: &Specimen) -> Option<Fact> {
+    fn new_result(&self, specimen: &Specimen, causes: &[String]) -> Option<Fact> {
         let method = self.setup.methods.get(&specimen.method)?;
         let sheet = sheet(specimen);
         if sheet.trials.is_empty() && sheet.liquid_not_obtainable.is_none() && sheet.plastic_not_obtainable.is_none() {
@@ -35,7 +37,7 @@ impl Lab {
         if specimen.limits.as_ref() == Some(&limits) {
             return None;
         }
-        let changed = changes(specimen.limits.as_ref(), &limits);
+        let changed = changes(specimen.limits.as_ref(), &limits, causes);
         Some(Fact::LimitsComputed {
             specimen: specimen.id.clone(),
             revision: specimen.revision + 1,
@@ -53,8 +55,8 @@ fn same_content(old: Option<&Limits>, new: &Limits) -> bool {
     })
 }
 
-/// What is different from the revision before, in words.
-fn changes(old: Option<&Limits>, new: &Limits) -> Vec<String> {
+/// What is different from the revision before, and which correction led to it, in words.
+fn changes(old: Option<&Limits>, new: &Limits, causes: &[String]) -> Vec<String> {
     let Some(old) = old else { return Vec::new() };
     let mut words = Vec::new();
     let mut number = |name: &str, a: Option<f64>, b: Option<f64>| {
@@ -74,7 +76,45 @@ fn changes(old: Option<&Limits>, new: &Limits) -> Vec<String> {
     if aside(old) != aside(new) {
         words.push(format!("determinations set aside: {} → {}", aside(old), aside(new)));
     }
+    if old.state != new.state {
+        words.push(format!("{} → {}", state_word(old.state), state_word(new.state)));
+    }
+    words.extend(causes.iter().cloned());
     words
+}
+
+fn state_word(state: State) -> &'static str {
+    match state {
+        State::Provisional => "provisional",
+        State::Complete => "complete",
+        State::Reviewed => "reviewed",
+    }
+}
+
+/// Why a result changed, where a person changed something that was already there.
+fn cause(r: &Recorded) -> Option<String> {
+    let says = match &r.fact {
+        Fact::MassAmended { weighing, was, mass, why } => {
+            format!("mass of weighing {weighing} corrected, {was} → {mass} g: {why}")
+        }
+        Fact::DropsAmended { count, was, drops, why } => format!("drops of count {count} corrected, {was} → {drops}: {why}"),
+        Fact::SetAside { what, why } => format!("fact {what} set aside: {why}"),
+        Fact::TrialSetAside { trial, no, why, .. } => format!("{} set aside: {why}", about(*trial, *no)),
+        Fact::WeighingTied { weighing, link, why, .. } => format!("weighing {weighing} tied to {}: {why}", link.container),
+        Fact::CountTied { count, why, .. } => format!("count {count} tied: {why}"),
+        Fact::Counted(Counted { replaces: Some(old), drops, .. }) => {
+            format!("the counter told count {old} again, now {drops} drops")
+        }
+        Fact::OvenOff { why, .. } => format!("the oven was off: {why}"),
+        Fact::NotObtainable { limit: Limit::Liquid, because, .. } => format!("liquid limit not obtainable: {because}"),
+        Fact::NotObtainable { limit: Limit::Plastic, because, .. } => format!("plastic limit not obtainable: {because}"),
+        Fact::CheckAnswered { check, about, .. } => format!("check {check} about {about} answered"),
+        _ => return None,
+    };
+    Some(match &r.who {
+        Some(who) => format!("{says} ({who})"),
+        None => says,
+    })
 }
 
 /// A specimen's state as a sheet that can be computed.

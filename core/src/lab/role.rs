@@ -54,8 +54,12 @@ pub struct Held {
     pub dry: Option<Mass>,
     /// Dried as the method wants it, or set aside: a new determination may use the container.
     pub finished: bool,
+    /// It was set aside: the container is free whatever is in it.
+    pub set_aside: bool,
     /// It has been in the oven, by the record or because it was weighed wet long ago.
     pub been_in_oven: bool,
+    /// Somebody recorded the oven.
+    pub oven_recorded: bool,
 }
 
 /// Decides the role of a gross mass, or says why a person has to.
@@ -107,10 +111,17 @@ fn held_role(held: &Held, tare: Option<Mass>, before: &Before, mass: Mass, near:
 fn wet_role(held: &Held, tare: Option<Mass>, before: &Before, mass: Mass, near: Mass) -> Result<Role, String> {
     let wet = held.wet;
     if is_near(mass, wet, near) {
-        return Ok(if held.been_in_oven && mass <= wet { Role::Dry } else { Role::Repeat });
+        return match (held.been_in_oven, held.oven_recorded) {
+            _ if held.set_aside => Ok(Role::Repeat),
+            (true, true) if mass <= wet => Ok(Role::Dry),
+            (true, false) => Err(format!(
+                "{mass} g is the wet mass of {wet} g, weighed hours ago, and nobody recorded the oven: say whether this is the dry mass or the wet one again"
+            )),
+            _ => Ok(Role::Repeat),
+        };
     }
     if mass > wet {
-        if held.kind == Kind::Thread && !held.been_in_oven && !held.finished {
+        if held.kind == Kind::Thread && !held.oven_recorded && !held.finished {
             return Ok(Role::Grown);
         }
         return new_use(held, before, || {
@@ -120,12 +131,18 @@ fn wet_role(held: &Held, tare: Option<Mass>, before: &Before, mass: Mass, near: 
         });
     }
     match tare.and_then(|t| empty_like(t, before.lid, mass, near)) {
+        Some(Role::TareCheck) if held.set_aside => Ok(Role::Emptied),
+        Some(lid) if held.set_aside => Ok(lid),
         Some(_) => Err(format!(
             "{mass} g is the mass of the empty container, but its soil has not been weighed dry: was it dropped or emptied? Set the trial aside, or say what the mass is"
         )),
         None if tare.is_some_and(|t| mass < t) => {
             Err(format!("{mass} g is lighter than the empty container: read the code again or say what the mass is"))
         }
+        None if held.set_aside && before.wet_open && held.been_in_oven => Err(String::from(
+            "this may be the dried soil of the trial that was set aside, or a new wet one: say what the mass is",
+        )),
+        None if held.set_aside && before.wet_open => Ok(Role::Wet),
         None => Ok(Role::Dry),
     }
 }
@@ -134,32 +151,39 @@ fn dried_role(held: &Held, dry: Mass, tare: Option<Mass>, before: &Before, mass:
     if is_near(mass, dry, near) {
         return Ok(Role::FurtherDry);
     }
-    // Soil that was not yet dry loses a little more; what it can still lose is
-    // small against what it has lost, and far from the empty container.
-    let lost = held.wet - dry;
-    if mass < dry && (dry - mass).ug() <= lost.ug() / 4 && tare.is_none_or(|t| mass > t + near) {
-        return Ok(Role::FurtherDry);
+    // Soil that was not yet dry loses a little more, and dried soil takes up a
+    // little moisture from the air. Both are small against what it has lost.
+    let little = Mass::from_ug((held.wet - dry).ug().max(0) / 4);
+    let a_little_off = (mass - dry).abs() <= little && tare.is_none_or(|t| mass > t + near);
+    if a_little_off && mass < dry {
+        return match held.finished && before.wet_open {
+            true => Err(format!(
+                "{mass} g is a little lighter than the dried soil at {dry} g: say whether it is weighed dry again, or wet with new soil"
+            )),
+            false => Ok(Role::FurtherDry),
+        };
+    }
+    let heavier = || {
+        format!(
+            "{mass} g is heavier than the dried soil at {dry} g: did it take up moisture, or is it another container? Say what the mass is"
+        )
+    };
+    if mass > dry {
+        return if a_little_off { Err(heavier()) } else { new_use(held, before, heavier) };
     }
     let Some(tare) = tare else {
         // The tare is owed: the only thing left to weigh is the empty container.
-        return match mass < dry {
-            true => Ok(Role::Tare),
-            false => {
-                new_use(held, before, || String::from("the container weighs more than its dried soil: say what the mass is"))
-            }
-        };
+        return Ok(Role::Tare);
     };
     match empty_like(tare, before.lid, mass, near) {
         Some(Role::TareCheck) if held.finished => Ok(Role::Emptied),
-        Some(_) if held.finished => Ok(Role::TareWithLid),
+        Some(lid) if held.finished => Ok(lid),
         Some(_) => Err(format!(
             "{mass} g is the empty container, but its soil is not dry yet by the method: if it was emptied, say so; the dry mass of {dry} g then stays as it is"
         )),
-        None if mass > dry => new_use(held, before, || {
-            format!(
-                "{mass} g is heavier than the dried soil at {dry} g: did it take up moisture, or is it another container? Say what the mass is"
-            )
-        }),
+        None if mass < tare => {
+            Err(format!("{mass} g is lighter than the empty container: read the code again or say what the mass is"))
+        }
         None => Err(format!(
             "{mass} g lies between the empty container ({tare} g) and its dried soil ({dry} g): was soil lost, or is it another container? Say what the mass is"
         )),
@@ -186,7 +210,15 @@ mod tests {
     }
 
     fn held(tare: Option<f64>, wet: f64, dry: Option<f64>, kind: Kind) -> Before {
-        let held = Held { kind, wet: g(wet), dry: dry.map(g), finished: dry.is_some(), been_in_oven: false };
+        let held = Held {
+            kind,
+            wet: g(wet),
+            dry: dry.map(g),
+            finished: dry.is_some(),
+            set_aside: false,
+            been_in_oven: false,
+            oven_recorded: false,
+        };
         Before { tare: tare.map(g), lid: None, held: Some(held), wet_open: false }
     }
 
@@ -246,17 +278,45 @@ mod tests {
     }
 
     #[test]
-    fn nearly_dry_soil_from_the_oven_is_a_dry_weighing() {
-        let mut before = held(Some(21.43), 25.00, None, Kind::Thread);
-        assert_eq!(role(&before, g(24.97), NEAR), Ok(Role::Repeat));
+    fn a_mass_like_the_wet_one_is_dry_only_when_the_oven_was_recorded() {
+        let mut before = held(Some(21.43), 25.00, None, Kind::Natural);
+        let near_wet = |before: &Before| role(before, g(24.97), NEAR);
+        assert_eq!(near_wet(&before), Ok(Role::Repeat));
         before.held.as_mut().unwrap().been_in_oven = true;
-        assert_eq!(role(&before, g(24.97), NEAR), Ok(Role::Dry));
+        assert!(near_wet(&before).unwrap_err().contains("nobody recorded the oven"));
+        before.held.as_mut().unwrap().oven_recorded = true;
+        assert_eq!(near_wet(&before), Ok(Role::Dry));
+    }
+
+    #[test]
+    fn a_container_whose_trial_was_set_aside_is_free() {
+        let mut before = held(Some(21.43), 38.22, None, Kind::Liquid);
+        let set = before.held.as_mut().unwrap();
+        (set.set_aside, set.finished) = (true, true);
+        assert_eq!(role(&before, g(21.43), NEAR), Ok(Role::Emptied));
+        assert_eq!(role(&before, g(33.39), NEAR), Ok(Role::Dry), "its soil may still be dried and weighed");
+        before.wet_open = true;
+        assert_eq!(role(&before, g(33.39), NEAR), Ok(Role::Wet));
+        assert_eq!(role(&before, g(39.00), NEAR), Ok(Role::Wet));
+        before.held.as_mut().unwrap().been_in_oven = true;
+        assert!(role(&before, g(33.39), NEAR).is_err(), "dry or wet: a person says");
+    }
+
+    #[test]
+    fn dried_soil_that_changed_a_little_never_opens_a_new_determination() {
+        let mut before = held(Some(21.43), 38.22, Some(33.39), Kind::Liquid);
+        before.wet_open = true;
+        for mass in [33.30, 33.50, 34.50] {
+            assert!(role(&before, g(mass), NEAR).is_err(), "{mass}");
+        }
     }
 
     #[test]
     fn threads_in_the_oven_do_not_grow() {
         let mut before = held(Some(21.43), 25.00, None, Kind::Thread);
         before.held.as_mut().unwrap().been_in_oven = true;
+        assert_eq!(role(&before, g(28.0), NEAR), Ok(Role::Grown), "hours later, but nobody says that it was dried");
+        before.held.as_mut().unwrap().oven_recorded = true;
         assert!(role(&before, g(28.0), NEAR).is_err());
     }
 }

@@ -1,45 +1,48 @@
 //! A mass was taken: whose is it?
 
+use super::entities::Hand;
 use super::{Lab, New};
-use crate::fact::{Fact, Weighed};
+use crate::fact::{Fact, Link, Weighed};
 use crate::names::{BenchName, InstrumentName};
 use crate::sense::{InputNo, MassTaken};
+use crate::sheet::Seq;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
+
+/// A container in hand whose mass a balance may take.
+struct Reach<'a> {
+    /// Where it is in hand.
+    bench: &'a BenchName,
+    hand: &'a Hand,
+    /// Benches the mass may be for: more than one only when the scanner is shared.
+    places: Vec<BenchName>,
+}
 
 impl Lab {
     pub(super) fn mass_taken(&self, balance: &InstrumentName, taken: MassTaken) -> Vec<New> {
         if let Some(weighing) = self.repeated_slip(balance, &taken) {
             return vec![New::plain(Fact::SlipRepeated { weighing, input: taken.input }).through(taken.input)];
         }
-        let (bench, link) = match self.hands_at(balance).as_slice() {
+        let reach = self.hands_at(balance);
+        let (bench, link) = match reach.as_slice() {
             [] => (
                 self.only_bench(balance),
                 Err(String::from(
                     "no container is in hand: read the code of the container on the pan, or tie the weighing later",
                 )),
             ),
-            [bench] => (Some((*bench).clone()), self.link_hand(bench, &taken)),
-            several => (None, Err(self.several_hands(several))),
+            [one] => (one.places.first().cloned(), self.link_hand(one, &taken)),
+            several => (None, Err(several_hands(several))),
         };
-        let (link, loose) = match link {
-            Ok(link) => (Some(link), None),
-            Err(why) => (None, Some(why)),
+        let hand_at = match reach.as_slice() {
+            [one] => Some(one.bench.clone()),
+            _ => None,
         };
-        let who = self.signed_in(bench.as_ref());
-        let printed_link = taken.printed && link.is_some();
-        let weighed = Weighed {
-            mass_ug: taken.mass,
-            bench: bench.clone(),
-            balance: Some(balance.clone()),
-            taken: Some(taken),
-            link,
-            loose,
-        };
-        let mut facts = vec![New::by(who, Fact::Weighed(weighed)).through(taken.input)];
-        if let Some(bench) = bench.filter(|_| printed_link) {
+        let printed_link = taken.printed && link.is_ok();
+        let mut facts = vec![self.weighed(balance, taken, bench, link)];
+        if let Some(bench) = hand_at.filter(|_| printed_link) {
             // A balance with a print key cannot show an empty pan: one code, one weighing.
             let why = String::from("its mass was printed");
             facts.push(New::plain(Fact::HandEmptied { bench, why }).through(taken.input));
@@ -47,48 +50,72 @@ impl Lab {
         facts
     }
 
-    /// The pan is empty: containers that got their mass leave the hand.
-    pub(super) fn unloaded(&self, balance: &InstrumentName, input: InputNo) -> Vec<New> {
-        let done = |b: &&BenchName| self.benches.get(*b).and_then(|b| b.hand.as_ref()).is_some_and(|h| h.weighing.is_some());
-        let emptied = |bench: &BenchName| {
-            let why = String::from("the pan is empty again");
-            New::plain(Fact::HandEmptied { bench: bench.clone(), why }).through(input)
+    fn weighed(&self, balance: &InstrumentName, taken: MassTaken, bench: Option<BenchName>, link: Result<Link, String>) -> New {
+        let who = self.signed_in(bench.as_ref());
+        let (link, loose) = match link {
+            Ok(link) => (Some(link), None),
+            Err(why) => (None, Some(why)),
         };
-        self.benches_of(balance).iter().filter(done).map(emptied).collect()
+        // Whoever shares the balance sees the loose mass and can say whose it is.
+        let others = self.benches_of(balance).iter().filter(|b| link.is_none() && Some(*b) != bench.as_ref());
+        let or_at = others.cloned().collect();
+        let (mass_ug, balance, input) = (taken.mass, Some(balance.clone()), taken.input);
+        let weighed = Weighed { mass_ug, bench, or_at, balance, taken: Some(taken), link, loose };
+        New::by(who, Fact::Weighed(weighed)).through(input)
     }
 
-    /// Forgets what lay on a pan: after this a code read no longer reaches back to it.
-    pub fn pan_emptied(&mut self, balance: &InstrumentName) {
-        if self.pans.get(balance).is_some_and(|p| !p.printed) {
-            self.pans.remove(balance);
+    /// The pan is empty: containers that got their mass leave the hand, and a
+    /// loose mass is no longer what a code is read for.
+    pub(super) fn unloaded(&self, balance: &InstrumentName, input: InputNo) -> Vec<New> {
+        let pan = self.instruments.get(balance).and_then(|i| i.pan.as_ref()).filter(|p| !p.printed);
+        let done = |r: &Reach| {
+            // A code that was read for the mass on the pan, in vain, is used up as well.
+            r.hand.weighing.is_some() || pan.is_some_and(|p| self.benches.get(r.bench).and_then(|b| b.code) > Some(p.seq))
+        };
+        let emptied = |r: Reach| {
+            let why = String::from("the pan is empty again");
+            New::plain(Fact::HandEmptied { bench: r.bench.clone(), why }).through(input)
+        };
+        let mut facts: Vec<New> = self.hands_at(balance).into_iter().filter(done).map(emptied).collect();
+        if pan.is_some() {
+            facts.push(New::plain(Fact::PanCleared { balance: balance.clone() }).through(input));
         }
+        facts
     }
 
     /// The weighing of which this slip is a second print.
-    fn repeated_slip(&self, balance: &InstrumentName, taken: &MassTaken) -> Option<u64> {
-        let pan = self.pans.get(balance)?;
+    fn repeated_slip(&self, balance: &InstrumentName, taken: &MassTaken) -> Option<Seq> {
+        let pan = self.instruments.get(balance)?.pan.as_ref()?;
         let age = taken.at.since(&pan.at).us;
-        let same = taken.printed && pan.printed && pan.mass == taken.mass && !pan.code_since;
-        (same && (0..self.setup.linking.repeat_print_us).contains(&age)).then_some(pan.seq)
+        let same = taken.printed && pan.printed && pan.mass == taken.mass;
+        let fresh = (0..self.setup.linking.repeat_print_us).contains(&age);
+        // A code that was read for this very slip is not a new one.
+        let latest = Some(pan.tied.unwrap_or(pan.seq));
+        let code_since = self.hands_at(balance).iter().any(|r| self.benches.get(r.bench).and_then(|b| b.code) > latest);
+        (same && fresh && !code_since).then_some(pan.seq)
     }
 
-    fn hands_at(&self, balance: &InstrumentName) -> Vec<&BenchName> {
-        let in_hand = |b: &&BenchName| self.benches.get(*b).is_some_and(|b| b.hand.is_some());
-        self.benches_of(balance).iter().filter(in_hand).collect()
+    /// Containers in hand at the benches that a balance serves, or at those that share their scanner.
+    fn hands_at(&self, balance: &InstrumentName) -> Vec<Reach<'_>> {
+        let served = self.benches_of(balance);
+        let reach = |bench: &BenchName| -> Option<Reach<'_>> {
+            let state = self.benches.get(bench)?;
+            let hand = state.hand.as_ref()?;
+            let places: Vec<BenchName> = match hand.or_at.is_empty() {
+                true => served.iter().filter(|b| **b == state.name).cloned().collect(),
+                false => served.iter().filter(|b| **b == state.name || hand.or_at.contains(b)).cloned().collect(),
+            };
+            (!places.is_empty()).then_some(Reach { bench: &state.name, hand, places })
+        };
+        self.benches.keys().filter_map(reach).collect()
     }
 
-    fn link_hand(&self, bench: &BenchName, taken: &MassTaken) -> Result<crate::fact::Link, String> {
-        let hand =
-            self.benches.get(bench).and_then(|b| b.hand.as_ref()).ok_or_else(|| String::from("no container is in hand"))?;
-        self.link(bench, &hand.container, hand.shared, taken.mass, taken.basis, &taken.at)
+    fn link_hand(&self, reach: &Reach, taken: &MassTaken) -> Result<Link, String> {
+        self.link(&reach.places, &reach.hand.container, taken.mass, taken.basis, &taken.at)
     }
+}
 
-    fn several_hands(&self, benches: &[&BenchName]) -> String {
-        let named: Vec<String> = benches
-            .iter()
-            .filter_map(|b| self.benches.get(*b))
-            .filter_map(|b| b.hand.as_ref().map(|h| format!("{} ({})", h.container, b.name)))
-            .collect();
-        format!("several containers are in hand at this balance: {}; read again the code of the one on the pan", named.join(", "))
-    }
+fn several_hands(several: &[Reach]) -> String {
+    let named: Vec<String> = several.iter().map(|r| format!("{} ({})", r.hand.container, r.bench)).collect();
+    format!("several containers are in hand at this balance: {}; read again the code of the one on the pan", named.join(", "))
 }

@@ -25,7 +25,7 @@
 //!   unrepeated run of one drop is a new run;
 //! * a higher total after a pause: the motor was stopped and went on. A run with
 //!   that total as its count begins, the pause noted as a gap, and supersedes the
-//!   first when it ends;
+//!   first when it ends. Both say the same first line;
 //! * an unnumbered drop within the debounce of the end: ignored as a double.
 //!
 //! **Interruptions.** When the port or the service was away during a run, the run
@@ -334,6 +334,7 @@ impl Count {
             // and the pause itself, unless nobody was listening then.
             Some(ended) if n >= ended.drops && ended.ended_by == EndedBy::Pause => {
                 run.gaps = if ended.interrupted.is_some() { 0 } else { n - ended.drops };
+                run.first_input = ended.first_input;
             }
             _ if self.just_listening(&at) => run.gaps = 0,
             _ => {}

@@ -8,6 +8,7 @@ use bytes::Bytes;
 use serde::Serialize;
 use serde_json::Value;
 use std::collections::{BTreeMap, BTreeSet};
+use std::time::Instant;
 use tarecup_core::fact::{Fact, Recorded, VERSION};
 use tarecup_core::lab::entities::Entity;
 use tarecup_core::names::InstrumentName;
@@ -63,6 +64,8 @@ pub(super) struct Group {
     /// Instruments whose sense has moved on.
     pub senses: BTreeSet<usize>,
     pub lines: usize,
+    /// When the first fact was decided.
+    pub first_fact: Option<Instant>,
     /// Something cannot wait for company.
     pub urgent: bool,
 }
@@ -73,9 +76,21 @@ impl Group {
     }
 
     pub fn add(&mut self, facts: Vec<Recorded>, mut touched: BTreeSet<Entity>) {
+        if !facts.is_empty() {
+            self.first_fact.get_or_insert_with(Instant::now);
+            self.urgent |= facts.iter().any(|r| !patient(&r.fact));
+        }
         self.facts.extend(facts.into_iter().map(|recorded| Decided { body: stored(&recorded), recorded }));
         self.touched.append(&mut touched);
     }
+}
+
+/// Facts that nobody at a bench waits for.
+fn patient(fact: &Fact) -> bool {
+    matches!(
+        fact,
+        Fact::PanCleared { .. } | Fact::HandEmptied { .. } | Fact::InstrumentChanged { .. } | Fact::LinesOverrun { .. }
+    )
 }
 
 /// A message for the moment.

@@ -160,9 +160,7 @@ impl Desk {
         ] {
             self.each_document(kind, which, |desk, stored| desk.load_one(&stored))?;
         }
-        let held: Vec<SpecimenId> =
-            self.lab.containers().filter_map(|c| c.holding.as_ref()).map(|h| h.specimen.clone()).collect();
-        for id in held {
+        for id in self.lab.missing() {
             self.fetch_specimen(&id);
         }
         self.load_senses(now)
@@ -325,16 +323,25 @@ impl Desk {
         }
     }
 
-    /// Brings back the specimen that a weighing or count belongs to.
-    fn fetch_fact_of(&mut self, seq: u64) {
-        let Ok(Some(stored)) = self.reader.fact(seq) else { return };
-        let Ok(fact) = serde_json::from_slice::<Fact>(&stored.body) else { return };
-        let specimen = match fact {
-            Fact::Weighed(w) => w.link.and_then(|l| l.specimen),
-            Fact::Counted(c) => c.specimen,
+    /// Specimens that a weighing or count was tied to, at first and later.
+    fn specimens_of(&self, seq: u64) -> Vec<SpecimenId> {
+        let ties = self.reader.facts_naming(seq).unwrap_or_else(|e| {
+            tracing::warn!(error = %e, seq, "the ties of a weighing could not be read");
+            Vec::new()
+        });
+        let specimen = |stored: &crate::ledger::FactStored| match serde_json::from_slice::<Fact>(&stored.body) {
+            Ok(Fact::Weighed(w)) => w.link.and_then(|l| l.specimen),
+            Ok(Fact::WeighingTied { link, .. }) => link.specimen,
+            Ok(Fact::Counted(c)) => c.specimen,
+            Ok(Fact::CountTied { specimen, .. }) => Some(specimen),
             _ => None,
         };
-        if let Some(id) = specimen {
+        ties.iter().filter_map(specimen).collect()
+    }
+
+    /// Brings back the specimens that a weighing or count belongs to.
+    fn fetch_fact_of(&mut self, seq: u64) {
+        for id in self.specimens_of(seq) {
             self.fetch_specimen(&id);
         }
         let id = format!("{seq:020}");

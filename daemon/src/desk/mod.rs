@@ -37,6 +37,8 @@ use tarecup_drivers::heard::{Batch, PortState, What};
 
 /// Lines that led to nothing are stored after this time at the latest.
 const HOLD: Duration = Duration::from_millis(200);
+/// A fact that nobody waits for is stored with the next one, after this time at the latest.
+const COMPANY: Duration = Duration::from_millis(20);
 /// Lines that led to nothing are stored when so many are held.
 const HOLD_LINES: usize = 4_000;
 
@@ -245,7 +247,6 @@ impl Desk {
             Happening::Unloaded { input, at } => {
                 let before = self.group.facts.len();
                 self.decide(Input::Unloaded { balance: name.clone(), input }, at);
-                self.lab.pan_emptied(&name);
                 if self.group.facts.len() > before {
                     self.ears[index].remember_unloaded(input);
                     self.group.senses.insert(index);
@@ -350,6 +351,9 @@ impl Desk {
     }
 
     fn try_decide(&mut self, input: Input, at: Stamp) -> Result<(), tarecup_core::lab::Refusal> {
+        for id in self.lab.wants(&input) {
+            self.fetch_specimen(&id);
+        }
         let Outcome { facts, touched } = self.lab.take(input, at, self.next_seq)?;
         self.next_seq += facts.len() as u64;
         self.group.add(facts, touched);
@@ -369,11 +373,14 @@ impl Desk {
 
     /// When held lines must be stored at the latest.
     pub fn hold_until(&self) -> Option<Instant> {
-        self.held_since.map(|since| since + HOLD)
+        let lines = self.held_since.map(|since| since + HOLD);
+        let facts = self.group.first_fact.map(|since| since + COMPANY);
+        lines.into_iter().chain(facts).min()
     }
 
     fn should_commit(&self) -> bool {
-        let waiting = self.group.urgent || self.group.has_facts() || !self.group.answers.is_empty();
+        let company = self.group.first_fact.is_some_and(|since| since.elapsed() >= COMPANY);
+        let waiting = self.group.urgent || company || !self.group.answers.is_empty();
         let old = self.held_since.is_some_and(|since| since.elapsed() >= HOLD);
         self.not_recording.is_none() && (waiting || old || self.group.lines >= HOLD_LINES)
     }

@@ -215,6 +215,17 @@ impl Reader {
         self.one(&sql, (signed(seq),), fact)
     }
 
+    /// The fact `seq`, and the facts after it that tie it anew (few: they are found by their kind).
+    pub fn facts_naming(&self, seq: u64) -> Result<Vec<FactStored>, LedgerError> {
+        let sql = format!(
+            "SELECT {RAW_FACT} FROM fact WHERE seq = ?1
+             OR (seq > ?1 AND kind = 'weighing_tied' AND CAST(body AS TEXT) ->> '$.fact.weighing' = ?1)
+             OR (seq > ?1 AND kind = 'count_tied' AND CAST(body AS TEXT) ->> '$.fact.count' = ?1)
+             ORDER BY seq LIMIT {MOST_ROWS}"
+        );
+        self.list(&sql, (signed(seq),), fact)
+    }
+
     /// The latest fact of a kind.
     pub fn latest_fact(&self, kind: &str) -> Result<Option<FactStored>, LedgerError> {
         let sql = format!("SELECT {RAW_FACT} FROM fact WHERE kind = ?1 ORDER BY seq DESC LIMIT 1");

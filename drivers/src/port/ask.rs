@@ -1,10 +1,10 @@
 //! Asking an instrument that speaks only when asked. Writes never wait.
 
 use crate::profile::Ask;
-use rustix::io::Errno;
-use std::os::fd::BorrowedFd;
+use std::io::ErrorKind;
 use std::time::Duration;
 use tokio::time::Instant;
+use tokio_serial::{ClearBuffer, SerialPort, SerialStream};
 
 /// A request that could not be written for so long is given up.
 pub(super) const WRITE_TIMEOUT: Duration = Duration::from_secs(1);
@@ -44,13 +44,14 @@ impl Asker {
     }
 
     /// Writes the request, or what is left of it.
-    pub(super) fn act(&mut self, port: BorrowedFd<'_>, now: Instant) -> Asking {
+    pub(super) fn act(&mut self, port: &mut SerialStream, now: Instant) -> Asking {
         let (mut done, give_up) = self.writing.unwrap_or((0, now + WRITE_TIMEOUT));
         while done < self.ask.send.len() {
-            match rustix::io::write(port, &self.ask.send[done..]) {
+            match port.try_write(&self.ask.send[done..]) {
                 Ok(n) if n > 0 => done += n,
-                Ok(_) | Err(Errno::AGAIN) => return self.blocked(port, done, give_up, now),
-                Err(Errno::INTR) => {}
+                Ok(_) => return self.blocked(port, done, give_up, now),
+                Err(e) if e.kind() == ErrorKind::WouldBlock => return self.blocked(port, done, give_up, now),
+                Err(e) if e.kind() == ErrorKind::Interrupted => {}
                 Err(_) => return Asking::Gone,
             }
         }
@@ -58,14 +59,14 @@ impl Asker {
         Asking::Sent
     }
 
-    fn blocked(&mut self, port: BorrowedFd<'_>, done: usize, give_up: Instant, now: Instant) -> Asking {
+    fn blocked(&mut self, port: &SerialStream, done: usize, give_up: Instant, now: Instant) -> Asking {
         if now < give_up {
             self.writing = Some((done, give_up));
             self.next = now + AGAIN;
             return Asking::Blocked;
         }
         // Old requests that nobody took would all be answered at once later.
-        let _ = rustix::termios::tcflush(port, rustix::termios::QueueSelector::OFlush);
+        let _ = port.clear(ClearBuffer::Output);
         self.finished(now);
         Asking::GivenUp
     }

@@ -3,9 +3,11 @@
 use super::{CharFrame, Flow, PortSettings};
 use rustix::fs::{CWD, FlockOperation, Mode, OFlags};
 use rustix::io::Errno;
-use rustix::termios::{ControlModes, InputModes, OptionalActions, SpecialCodeIndex, Termios};
+use rustix::termios::{ControlModes, InputModes, OptionalActions, Termios};
+use serialport::{DataBits, FlowControl, Parity, SerialPortBuilder, StopBits};
 use std::os::fd::{AsFd, BorrowedFd, OwnedFd};
 use std::path::Path;
+use tokio_serial::{SerialPortBuilderExt, SerialStream};
 
 /// Why a port is not open.
 #[derive(Clone, Debug, PartialEq, Eq)]
@@ -19,7 +21,8 @@ pub(super) enum OpenFault {
 }
 
 /// Opens the port, locks it and sets its line. May block for as long as the driver likes.
-pub(super) fn open(settings: &PortSettings) -> Result<OwnedFd, OpenFault> {
+/// Needs a runtime with I/O around it.
+pub(super) fn open(settings: &PortSettings) -> Result<SerialStream, OpenFault> {
     let path = settings.path.as_str();
     if path.starts_with("tcp://") {
         return Err(refused(
@@ -30,25 +33,83 @@ pub(super) fn open(settings: &PortSettings) -> Result<OwnedFd, OpenFault> {
     if settings.baud == 0 {
         return Err(refused(path, "0 baud would hang up; write the instrument's speed, such as 9600"));
     }
+    // Both descriptors must lead to one device, also when a link is changed meanwhile.
+    let device = std::fs::canonicalize(path).ok().and_then(|d| d.into_os_string().into_string().ok());
+    let device = device.as_deref().unwrap_or(path);
+    let probe = probe(path, device)?;
+    let port = stream(settings, device, probe.as_fd())?;
+    finish(probe.as_fd(), settings)?;
+    Ok(port)
+}
+
+/// A second descriptor of the device, held only while it is opened: it tells
+/// what is wrong better than the stream does, and it reaches settings of the
+/// line that the stream does not offer. These belong to the device, not to
+/// the descriptor.
+fn probe(path: &str, device: &str) -> Result<OwnedFd, OpenFault> {
     // Without waiting for a carrier: most instruments have no such line.
     let flags = OFlags::RDWR | OFlags::NOCTTY | OFlags::NONBLOCK | OFlags::CLOEXEC;
-    let fd = rustix::fs::openat(CWD, path, flags, Mode::empty()).map_err(|e| not_opened(path, e))?;
+    let fd = rustix::fs::openat(CWD, device, flags, Mode::empty()).map_err(|e| not_opened(path, e))?;
     if !rustix::termios::isatty(&fd) {
         return Err(match rustix::termios::tcgetattr(&fd) {
             // An adapter that was pulled between opening and asking.
-            Err(Errno::IO | Errno::NODEV | Errno::NXIO) => OpenFault::Missing,
+            Err(e) if gone(e) => OpenFault::Missing,
             _ => refused(path, "it is not a serial port; `tarecup ports` lists those of this machine"),
         });
     }
-    // An exclusive-use flag would not stop a second program of root; the lock does,
-    // and it goes with the descriptor, whatever ends this program.
+    // A port of another program is left before anything about it is changed.
     match rustix::fs::flock(&fd, FlockOperation::NonBlockingLockExclusive) {
         Ok(()) => {}
         Err(Errno::WOULDBLOCK) => return Err(OpenFault::Busy),
         Err(e) => return Err(refused(path, &format!("it cannot be locked for this program alone ({e}); use a local device"))),
     }
-    set_line(fd.as_fd(), settings)?;
+    // The stream takes the lock next, and goes without if another is quicker.
+    let _ = rustix::fs::flock(&fd, FlockOperation::Unlock);
     Ok(fd)
+}
+
+/// Opens the device with its speed, character frame and flow control. Modem
+/// lines are left alone: pseudo-terminals have none, and instruments seldom
+/// need them.
+fn stream(settings: &PortSettings, device: &str, probe: BorrowedFd<'_>) -> Result<SerialStream, OpenFault> {
+    builder(settings, device).open_native_async().map_err(|e| {
+        if rustix::termios::tcgetattr(probe).is_err_and(gone) {
+            return OpenFault::Missing;
+        }
+        match e.kind {
+            serialport::ErrorKind::NoDevice => OpenFault::Busy,
+            serialport::ErrorKind::Io(std::io::ErrorKind::NotFound) => OpenFault::Missing,
+            _ => unset(settings, &e.description),
+        }
+    })
+}
+
+fn builder(settings: &PortSettings, device: &str) -> SerialPortBuilder {
+    let CharFrame { data_bits, parity, stop_bits } = settings.frame;
+    let data_bits = match data_bits {
+        5 => DataBits::Five,
+        6 => DataBits::Six,
+        7 => DataBits::Seven,
+        _ => DataBits::Eight,
+    };
+    let parity = match parity {
+        'E' => Parity::Even,
+        'O' => Parity::Odd,
+        _ => Parity::None,
+    };
+    let flow = match settings.flow {
+        Flow::None => FlowControl::None,
+        Flow::Hardware => FlowControl::Hardware,
+        Flow::Software => FlowControl::Software,
+    };
+    // Exclusive, for the lock: it goes with the stream, whatever ends this program.
+    serialport::new(device, settings.baud)
+        .data_bits(data_bits)
+        .parity(parity)
+        .stop_bits(if stop_bits == 2 { StopBits::Two } else { StopBits::One })
+        .flow_control(flow)
+        .preserve_dtr_on_open()
+        .exclusive(true)
 }
 
 fn refused(path: &str, why: &str) -> OpenFault {
@@ -57,7 +118,8 @@ fn refused(path: &str, why: &str) -> OpenFault {
 
 fn not_opened(path: &str, error: Errno) -> OpenFault {
     match error {
-        Errno::NOENT | Errno::NOTDIR | Errno::NXIO | Errno::NODEV | Errno::IO => OpenFault::Missing,
+        Errno::NOENT | Errno::NOTDIR => OpenFault::Missing,
+        e if gone(e) => OpenFault::Missing,
         Errno::BUSY => OpenFault::Busy,
         Errno::ACCESS | Errno::PERM => {
             let group = "give the service's user the group that owns the device (often 'dialout'), then start the service again";
@@ -68,23 +130,33 @@ fn not_opened(path: &str, error: Errno) -> OpenFault {
     }
 }
 
-/// Raw bytes, speed, character frame and flow control. Modem lines are left
-/// alone: pseudo-terminals have none, and instruments seldom need them.
-fn set_line(fd: BorrowedFd<'_>, settings: &PortSettings) -> Result<(), OpenFault> {
-    let path = settings.path.as_str();
-    let failed = |e: Errno| match e {
-        Errno::IO | Errno::NODEV | Errno::NXIO => OpenFault::Missing,
-        e => refused(path, &format!("the line cannot be set to {} baud, {} ({e})", settings.baud, String::from(settings.frame))),
-    };
+fn gone(error: Errno) -> bool {
+    matches!(error, Errno::IO | Errno::NODEV | Errno::NXIO)
+}
+
+fn unset(settings: &PortSettings, why: &str) -> OpenFault {
+    let (baud, frame) = (settings.baud, String::from(settings.frame));
+    refused(
+        &settings.path,
+        &format!("the line cannot be set to {baud} baud, {frame} ({why}); try other settings of the instrument"),
+    )
+}
+
+/// What the stream does not offer.
+fn finish(fd: BorrowedFd<'_>, settings: &PortSettings) -> Result<(), OpenFault> {
+    let failed = |e: Errno| if gone(e) { OpenFault::Missing } else { unset(settings, &e.to_string()) };
+    // The exclusive-use flag that comes with the stream's lock would outlive this
+    // program where the other end stays (a pseudo-terminal), and it would not stop
+    // a second program of root; the lock does.
+    rustix::termios::ioctl_tiocnxcl(fd).map_err(failed)?;
     let mut line = rustix::termios::tcgetattr(fd).map_err(failed)?;
-    shape(&mut line, settings.frame, settings.flow);
-    line.set_speed(settings.baud).map_err(failed)?;
+    shape(&mut line);
     rustix::termios::tcsetattr(fd, OptionalActions::Now, &line).map_err(failed)?;
     // A driver may accept a speed and set another one.
     let speed = rustix::termios::tcgetattr(fd).map_err(failed)?.output_speed();
     if u64::from(speed.abs_diff(settings.baud)) * 100 > u64::from(settings.baud) * 3 {
         return Err(refused(
-            path,
+            &settings.path,
             &format!(
                 "the port cannot run at {} baud (it chose {speed}); set the instrument to a usual speed, such as 9600",
                 settings.baud
@@ -94,31 +166,14 @@ fn set_line(fd: BorrowedFd<'_>, settings: &PortSettings) -> Result<(), OpenFault
     Ok(())
 }
 
-fn shape(line: &mut Termios, frame: CharFrame, flow: Flow) {
-    line.make_raw();
-    let bits = match frame.data_bits {
-        5 => ControlModes::CS5,
-        6 => ControlModes::CS6,
-        7 => ControlModes::CS7,
-        _ => ControlModes::CS8,
-    };
-    let modes = &mut line.control_modes;
+fn shape(line: &mut Termios) {
     // Without HUPCL the lines stay up when the port is closed: some counters
     // reset themselves when DTR falls.
-    *modes -= ControlModes::CSIZE | ControlModes::PARENB | ControlModes::PARODD | ControlModes::CSTOPB;
-    *modes -= ControlModes::CRTSCTS | ControlModes::HUPCL;
-    *modes |= bits | ControlModes::CREAD | ControlModes::CLOCAL;
-    modes.set(ControlModes::PARENB, frame.parity != 'N');
-    modes.set(ControlModes::PARODD, frame.parity == 'O');
-    modes.set(ControlModes::CSTOPB, frame.stop_bits == 2);
-    modes.set(ControlModes::CRTSCTS, flow == Flow::Hardware);
+    line.control_modes -= ControlModes::HUPCL;
     // A byte with a wrong parity or a missing stop bit (a wrong speed) arrives
     // as NUL, so that it cannot pass for a digit.
     line.input_modes |= InputModes::INPCK;
     line.input_modes -= InputModes::IGNPAR | InputModes::PARMRK;
-    line.input_modes.set(InputModes::IXON | InputModes::IXOFF, flow == Flow::Software);
-    line.special_codes[SpecialCodeIndex::VMIN] = 1;
-    line.special_codes[SpecialCodeIndex::VTIME] = 0;
 }
 
 /// The sentence for a port that another program has.

@@ -13,15 +13,14 @@ use crate::heard::{Batch, Clock, Deliver, InstrumentId, PortState};
 use crate::intake::Intake;
 use crate::profile::Profile;
 use std::io;
-use std::os::fd::{AsFd, OwnedFd};
 use std::sync::Arc;
 use std::time::Duration;
 use tokio::io::AsyncReadExt;
-use tokio::net::unix::pipe::Receiver;
 use tokio::runtime::Handle;
 use tokio::sync::watch;
 use tokio::task::{JoinHandle, spawn_blocking};
 use tokio::time::{Instant, sleep, sleep_until, timeout};
+use tokio_serial::{ClearBuffer, SerialPort, SerialStream};
 
 /// Silence after opening that makes the first byte a true beginning. Even at
 /// 300 baud a character takes 33 ms, and adapters hold bytes back for 16 ms.
@@ -124,9 +123,9 @@ impl Port {
         loop {
             let Some(opened) = self.open().await else { break };
             match opened {
-                Ok(fd) => {
+                Ok(port) => {
                     self.say(PortState::Opened);
-                    match self.listen(fd).await {
+                    match self.listen(port).await {
                         Ended::Stopped => break,
                         Ended::Lost { lived: true } => pause = BACK_OFF[0],
                         // A port that opens and is gone at once is not asked more and more often.
@@ -177,7 +176,7 @@ impl Port {
     }
 
     /// Tries to open; `None` when stopped meanwhile.
-    async fn open(&mut self) -> Option<Result<OwnedFd, OpenFault>> {
+    async fn open(&mut self) -> Option<Result<SerialStream, OpenFault>> {
         let settings = Arc::clone(&self.settings);
         let opening = spawn_blocking(move || open::open(&settings));
         tokio::select! {
@@ -217,12 +216,7 @@ impl Port {
     }
 
     /// Reads until the port is lost or the task is stopped, then closes it.
-    async fn listen(&mut self, fd: OwnedFd) -> Ended {
-        // Readiness of a terminal works as that of a pipe; this type gives it
-        // without unsafe code, and without a second read that finds nothing.
-        let Ok(mut port) = Receiver::from_file_unchecked(std::fs::File::from(fd)) else {
-            return Ended::Lost { lived: false };
-        };
+    async fn listen(&mut self, mut port: SerialStream) -> Ended {
         let opened = Instant::now();
         self.intake.opened(false);
         let mut asker = self.profile.ask().map(|ask| Asker::new(ask, opened + QUIET + QUIET / 4));
@@ -246,7 +240,7 @@ impl Port {
                 },
                 () = sleep_until(self.retry_at), if !self.hold.is_empty() => self.try_again(),
                 () = due(asker.as_ref()), if asker.is_some() => {
-                    if let Some(asker) = &mut asker && asker.act(port.as_fd(), Instant::now()) == Asking::Gone {
+                    if let Some(asker) = &mut asker && asker.act(&mut port, Instant::now()) == Asking::Gone {
                         break false;
                     }
                 }
@@ -291,11 +285,10 @@ async fn due(asker: Option<&Asker>) {
 
 /// Closes the port on a thread of its own: a driver may take seconds to give
 /// up bytes that nobody takes, so these are thrown away first.
-async fn close(port: Receiver) {
-    let Ok(fd) = port.into_nonblocking_fd() else { return };
+async fn close(port: SerialStream) {
     let closing = spawn_blocking(move || {
-        let _ = rustix::termios::tcflush(&fd, rustix::termios::QueueSelector::OFlush);
-        drop(fd);
+        let _ = port.clear(ClearBuffer::Output);
+        drop(port);
     });
     let _ = timeout(FAREWELL, closing).await;
 }
