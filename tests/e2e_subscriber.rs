@@ -148,6 +148,24 @@ fn subscribers_at_the_built_in_broker_see_the_demonstration() {
 }
 
 #[test]
+fn a_subscriber_of_a_demonstration_played_once_gets_the_results() {
+    let dir = tempfile::tempdir().expect("a folder");
+    let sheets = sheets();
+    let file = dir.path().join("day.toml");
+    std::fs::write(&file, scenario(&sheets)).expect("written");
+    let port = free_port();
+    let sub = MosquittoSub::on(port, "#");
+    let mut command = Command::new(TARECUP);
+    command.args(["demo", "--once", "--scenario"]).arg(&file).args(["--mqtt", &format!("127.0.0.1:{port}")]);
+    let mut demo = Running::start(command.stdout(Stdio::null()).stderr(Stdio::null()).stdin(Stdio::null()));
+    assert_eq!(demo.wait(PATIENCE).code(), Some(0));
+    let presence = || last(&sub.got).get("tarecup/v1/wet-room/presence").cloned().unwrap_or_default();
+    until("the end is told", PATIENCE, || presence().contains("\"stopped\""));
+    // All is there but a presence that says "up".
+    assert_eq!(retained_faults(&last(&sub.got), &sheets), ["presence"]);
+}
+
+#[test]
 fn a_broker_killed_in_mid_scenario_loses_nothing() {
     let mut broker = Mosquitto::start();
     let sheets = sheets();

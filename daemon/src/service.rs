@@ -29,6 +29,7 @@ use tokio::runtime::{Handle, Runtime};
 const FAREWELL: Duration = Duration::from_secs(3);
 
 /// How long the built-in broker has to read the farewell.
+#[cfg(feature = "broker")]
 const BROKER_READS: Duration = Duration::from_millis(200);
 
 /// Why the service did not start.

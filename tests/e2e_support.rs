@@ -4,7 +4,9 @@
 // Each test program uses a part of this.
 #![allow(dead_code)]
 
+#[path = "e2e_operator.rs"]
 pub mod operator;
+#[path = "e2e_listeners.rs"]
 pub mod subscriber;
 
 use serde::Serialize;
