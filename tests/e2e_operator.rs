@@ -315,7 +315,11 @@ impl<'a> Operator<'a> {
         };
         let held = |b: &Value| b["in_hand"]["container"] == container;
         for attempt in 0.. {
-            assert!(attempt < 60, "{container} {grams} g is never taken\n{}", self.station.log());
+            if attempt >= 20 {
+                self.look();
+                let from = self.facts.len().saturating_sub(8);
+                panic!("{container} {grams} g is never taken: {:#?}\n{:?}", &self.facts[from..], self.bench_now());
+            }
             if attempt > 0 {
                 self.repeated += 1;
                 self.up();
