@@ -326,6 +326,9 @@ impl<'a> Operator<'a> {
                 if self.bench_now().is_some_and(|b| taken(&b)) {
                     break;
                 }
+                // Begin anew with an empty pan: a code read while a loose mass lies there would be tied to that one.
+                self.station.unload(self.pan);
+                std::thread::sleep(Duration::from_millis(30));
             }
             let generation = self.station.generation();
             let second = Duration::from_secs(3);
