@@ -183,6 +183,12 @@ impl Days {
     }
 
     fn away(&mut self, away: Away) {
+        // What nobody waits for is stored a moment later; killed within that moment, the pan is unloaded again by the
+        // operator. Here it is stored.
+        if let Some(until) = self.desk.as_ref().and_then(Desk::hold_until) {
+            std::thread::sleep(until.saturating_duration_since(std::time::Instant::now()) + std::time::Duration::from_millis(1));
+            self.step(Vec::new());
+        }
         if away == Away::Stopped {
             self.step(vec![Incoming::Stop]);
             assert!(self.desk.as_ref().is_some_and(Desk::stopped));

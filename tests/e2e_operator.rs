@@ -315,13 +315,20 @@ impl<'a> Operator<'a> {
         };
         let held = |b: &Value| b["in_hand"]["container"] == container;
         for attempt in 0.. {
-            assert!(attempt < 60, "{container} {grams} g is never taken\n{}", self.station.log());
+            if attempt >= 20 {
+                self.look();
+                let from = self.facts.len().saturating_sub(8);
+                panic!("{container} {grams} g is never taken: {:#?}\n{:?}", &self.facts[from..], self.bench_now());
+            }
             if attempt > 0 {
                 self.repeated += 1;
                 self.up();
                 if self.bench_now().is_some_and(|b| taken(&b)) {
                     break;
                 }
+                // Begin anew with an empty pan: a code read while a loose mass lies there would be tied to that one.
+                self.station.unload(self.pan);
+                std::thread::sleep(Duration::from_millis(30));
             }
             let generation = self.station.generation();
             let second = Duration::from_secs(3);
