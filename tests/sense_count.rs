@@ -255,6 +255,17 @@ fn a_run_is_never_silently_short() {
         ),
         ("drops right after opening may have begun unheard", vec![open(0), drops(5, 4_999)], vec!["5 h5 g0 d0 pause cut"]),
         ("later they have not", vec![open(0), drops(5, 5_000)], vec!["5 h5 g0 d0 pause"]),
+        (
+            "held back for two seconds and read at once",
+            vec![drops(5, 0), at(4_100, Drop), at(4_100, Drop), at(4_100, Drop), at(4_100, Drop)],
+            vec!["6 h6 g1 d3 pause cut"],
+        ),
+        ("control: a bounce in its own moment", vec![drops(5, 0), at(2_000, Drop)], vec!["5 h5 g0 d1 pause"]),
+        (
+            "held back, but the final count covers",
+            vec![drops(5, 0), at(4_100, Drop), at(4_100, Drop), at(4_600, End(Some(9)))],
+            vec!["9 h6 g1 d1 end"],
+        ),
         ("a total right after opening is whole", vec![open(0), totals(20..=22, 400)], vec!["22 h3 g0 d0 pause"]),
         ("the final count makes them whole", vec![open(0), drops(5, 400), at(2_600, End(Some(9)))], vec!["9 h5 g0 d0 end"]),
     ]);

@@ -50,6 +50,9 @@ const LATE_US: i64 = 10 * SECOND_US;
 /// Why a run of unnumbered drops that was already going on may be short.
 const BEGAN_UNHEARD: &str = "the run may have begun before the counter was listened to";
 
+/// Why a run of unnumbered drops whose lines were held back may be short.
+const READ_LATE: &str = "drops of the run were held back and came all at once, so that they could not be counted one by one";
+
 /// What one line can show: a run that is over, then what this line itself means.
 pub type Shown = [Option<Happening>; 2];
 
@@ -132,6 +135,12 @@ impl Run {
         self.last_input = input;
         if bounced(limits, &self.last, &at) {
             self.doubles = self.doubles.saturating_add(1);
+            // A bounce follows its own drop. Drops that all come in one moment after a
+            // long silence were held back on the way: they are drops, and how many fell
+            // can no longer be told.
+            if at == self.last && self.intervals.latest_is_long(limits.gap_percent) {
+                self.interrupted.get_or_insert_with(|| READ_LATE.into());
+            }
             return None;
         }
         self.holed |= self.deaf;

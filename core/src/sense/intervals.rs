@@ -31,6 +31,15 @@ impl Intervals {
         }
     }
 
+    /// Whether the latest interval was longer than `gap_percent` of the median one.
+    pub(super) fn latest_is_long(&self, gap_percent: u32) -> bool {
+        if self.kept.len() < FEWEST || self.usual_x2.is_some() {
+            return false;
+        }
+        let latest = self.kept.last().zip(median_x2(&self.kept));
+        latest.is_some_and(|(us, usual_x2)| is_long(*us, usual_x2, gap_percent))
+    }
+
     /// How many intervals were longer than `gap_percent` of the median one.
     pub(super) fn gaps(&self, gap_percent: u32) -> u32 {
         if self.kept.len() < FEWEST {

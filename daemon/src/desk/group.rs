@@ -301,6 +301,9 @@ impl Desk {
                 topics.insert(format!("bench/{}", bench.name), Some(payload(&view)));
             }
         }
+        if let Some(stop) = group.facts.iter().find(|d| matches!(d.recorded.fact, Fact::ServiceStopped {})) {
+            topics.insert(String::from("head"), Some(payload(&self.head_view(&stop.recorded.at))));
+        }
         for decided in &group.facts {
             if let Fact::LimitsComputed { specimen, .. } = &decided.recorded.fact
                 && let Some(view) = self.limits_view(&decided.recorded)

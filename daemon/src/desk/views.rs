@@ -36,7 +36,7 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
     let guide = lab.guide(&bench.name);
     let loose = lab.loose_things().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
     json!({
-        "v": V, "seq": seq, "at": bench.active.rfc3339(), "bench": bench.name,
+        "v": V, "seq": seq, "at": (bench.active != Stamp::default()).then(|| bench.active.rfc3339()), "bench": bench.name,
         "signed_in": bench.signed_in,
         "in_hand": bench.hand.as_ref().map(|h| json!({"container": h.container, "since": h.since.rfc3339(), "weighed": h.weighing.is_some()})),
         "intention": bench.intention.as_ref().map(|w| json!({"specimen": w.specimen, "intention": w.intention})),
