@@ -210,11 +210,14 @@ fn undo_takes_back_the_latest_weighing_or_count() {
 #[test]
 fn a_limit_that_cannot_be_obtained() {
     let mut play = Play::open();
-    let ask = r#"{"ask":"not_obtainable","specimen":"S-1","limit":"plastic","because":"crumbles at every water content"}"#;
+    let ask =
+        r#"{"ask":"not_obtainable","specimen":"S-1","limit":"plastic","because":"crumbles at every water content","who":"AB"}"#;
     play.ask(ask);
     assert!(limits(&play, "S-1").plasticity_index.non_plastic);
     assert!(play.specimen("S-1").plastic_not_obtainable.is_some());
-    play.ask(r#"{"ask":"not_obtainable","specimen":"S-1","limit":"liquid","because":"slides in the cup"}"#);
+    let nobody = ask.replace(r#","who":"AB""#, "");
+    assert!(play.refused(&nobody).contains("say who"));
+    play.ask(r#"{"ask":"not_obtainable","specimen":"S-1","limit":"liquid","because":"slides in the cup","who":"AB"}"#);
     assert!(play.specimen("S-1").liquid_not_obtainable.is_some());
     assert!(play.refused(r#"{"ask":"not_obtainable","specimen":"S-1","limit":"liquid","because":" "}"#).contains("say why"));
     assert!(play.refused(&ask.replace("S-1", "S-9")).contains("open it first"));

@@ -371,6 +371,22 @@ fn another_code_before_any_mass_replaces_aloud() {
 }
 
 #[test]
+fn a_code_that_was_not_understood_empties_the_hand_aloud() {
+    let mut play = Play::open();
+    play.scan("scan-n", "C1");
+    let facts = play.take(tarecup_core::lab::Input::CodeUnread { scanner: instrument("scan-n"), input: 900 });
+    assert_eq!(kinds(&facts), ["hand_emptied", "refused"]);
+    assert!(play.next_step("north").contains("read it again"), "{}", play.next_step("north"));
+    let seq = play.settle("pan-n", "25.00");
+    assert_eq!(play.role_of(seq), None, "whose it is, nobody can know");
+    // The control: a code that is understood is in hand as ever.
+    play.lift("pan-n");
+    play.scan("scan-n", "C1");
+    let seq = play.settle("pan-n", "21.43");
+    assert_eq!(play.container("C1").tares.last().map(|t| t.seq), Some(seq));
+}
+
+#[test]
 fn the_code_of_a_container_in_use_when_a_slice_is_owed() {
     let mut play = Play::open();
     wet_trials(&mut play, "S-1", &[(28, "C1", "21.43", "38.22")]);

@@ -204,9 +204,14 @@ impl Service {
         let open = |i: &&serde_json::Value| i["port_open"] == serde_json::Value::Bool(true);
         status["status"]["instruments"].as_array().map_or(0, |all| all.iter().filter(open).count())
     }
-    /// Whether the desk's thread has died.
-    pub fn desk_ended(&self) -> bool {
-        self.seat.ended()
+    /// Whether a part has ended that should run for as long as the service does.
+    pub fn part_ended(&self) -> bool {
+        let courier = self.courier.lock().unwrap_or_else(PoisonError::into_inner).as_ref().is_some_and(|c| !c.is_running());
+        #[cfg(feature = "broker")]
+        let broker = self.broker.as_ref().is_some_and(|b| !b.is_running());
+        #[cfg(not(feature = "broker"))]
+        let broker = false;
+        self.seat.ended() || self.ports_thread.thread.is_finished() || courier || broker
     }
     /// Whether the broker has accepted the connection.
     pub fn broker_connected(&self) -> bool {
@@ -274,7 +279,7 @@ fn runtime(name: &str) -> Result<Runtime, StartError> {
 /// After lines came, the ports are looked at again after this time: lines of
 /// many ports are then read together, which costs a fraction of the wake-ups.
 /// The first line after a pause does not wait.
-const PACE: Duration = Duration::from_micros(4_000);
+const PACE: Duration = Duration::from_micros(3_000);
 
 /// The thread that drives all ports.
 struct PortsThread {

@@ -105,6 +105,9 @@ pub enum ClientError {
         /// What the system says.
         error: std::io::Error,
     },
+    /// More than an ask may be.
+    #[error("the ask is {0} bytes long; at most {most} fit", most = asks::LARGEST)]
+    TooLong(usize),
     /// The connection broke.
     #[error("the service went away before it answered ({0}); ask again")]
     Broken(std::io::Error),
@@ -112,6 +115,9 @@ pub enum ClientError {
 
 /// Asks the running service, from another process.
 pub fn ask_service(state_dir: &Path, text: &str, timeout: Duration) -> Result<String, ClientError> {
+    if text.len() > asks::LARGEST {
+        return Err(ClientError::TooLong(text.len()));
+    }
     let path = path(state_dir);
     let mut stream = Blocking::connect(&path).map_err(|error| ClientError::Nobody { path, error })?;
     let exchange = |stream: &mut Blocking| {

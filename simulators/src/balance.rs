@@ -26,7 +26,7 @@ const KEY_US: u64 = 4_000_000;
 pub struct Settings {
     /// How it speaks.
     pub dialect: BalanceDialect,
-    /// Decimals of a gram, 1 to 4.
+    /// Decimals of a gram, 1 to 6.
     pub decimals: u8,
     /// The largest mass it can weigh, µg.
     pub capacity_ug: i64,
@@ -35,14 +35,14 @@ pub struct Settings {
 }
 
 impl Settings {
-    /// Ten lines a second, up to 620 g. Decimals beyond 1 to 4 are brought into that range.
+    /// Ten lines a second, up to 620 g. Decimals beyond 1 to 6 are brought into that range.
     pub fn new(dialect: BalanceDialect, decimals: u8) -> Self {
-        Self { dialect, decimals: decimals.clamp(1, 4), capacity_ug: 620_000_000, interval_us: 100_000 }
+        Self { dialect, decimals: decimals.clamp(1, 6), capacity_ug: 620_000_000, interval_us: 100_000 }
     }
 
     /// One step of the last digit, µg.
     pub fn step_ug(&self) -> i64 {
-        10i64.pow(6 - u32::from(self.decimals.clamp(1, 4)))
+        10i64.pow(6 - u32::from(self.decimals.clamp(1, 6)))
     }
 }
 

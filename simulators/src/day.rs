@@ -281,7 +281,7 @@ impl Day {
         Ok(())
     }
 
-    /// Decimals of a gram that a balance needs to show every mass of these specimens exactly (1 to 4, or more than can be had).
+    /// Decimals of a gram that a balance needs to show every mass of these specimens exactly (1 to 6).
     pub fn decimals_needed(specimens: &[Specimen]) -> u8 {
         let masses = specimens.iter().flat_map(|s| s.weighed().flat_map(|(_, _, w)| masses(w).map(|(_, ug)| ug)));
         masses.map(decimals_of).max().unwrap_or(1).max(1)

@@ -190,9 +190,9 @@ fn with_minus(ug: i64, decimals: u8) -> String {
     format!("{}{}", if ug < 0 { "-" } else { "" }, digits(ug, decimals))
 }
 
-/// The magnitude in grams with exactly so many decimals (1 to 4); what lies beyond them is cut off.
+/// The magnitude in grams with exactly so many decimals (1 to 6); what lies beyond them is cut off.
 fn digits(ug: i64, decimals: u8) -> String {
-    let decimals = decimals.clamp(1, 4);
+    let decimals = decimals.clamp(1, 6);
     let steps_per_g = 10u64.pow(u32::from(decimals));
     let steps = ug.unsigned_abs() / (1_000_000 / steps_per_g);
     format!("{}.{:0width$}", steps / steps_per_g, steps % steps_per_g, width = usize::from(decimals))

@@ -5,7 +5,7 @@ use super::oven::STAYS_KEPT;
 use super::role::Role;
 use super::{Lab, New, Refusal};
 use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
-use crate::limits::State;
+use crate::limits::{Severity, State};
 use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
 use crate::quantity::{Mass, MassUnit};
 use crate::sheet::{Kind, Seq};
@@ -84,13 +84,20 @@ pub enum Ask {
     /// A determination does not count.
     SetAsideTrial { specimen: SpecimenId, kind: Kind, no: u32, who: Operator, why: String },
     /// Correct a mass.
-    AmendMass { weighing: Seq, mass_g: String, who: Operator, why: String },
+    AmendMass {
+        weighing: Seq,
+        #[serde(deserialize_with = "mass_text")]
+        mass_g: String,
+        who: Operator,
+        why: String,
+    },
     /// Correct a number of drops.
     AmendDrops { count: Seq, drops: u32, who: Operator, why: String },
     /// Enter a mass by hand.
     TypeMass {
         bench: BenchName,
         container: ContainerId,
+        #[serde(deserialize_with = "mass_text")]
         mass_g: String,
         #[serde(default)]
         role: Option<Role>,
@@ -479,7 +486,10 @@ impl Lab {
             Ask::NotObtainable { specimen, limit, because, who } => {
                 needs_words(&because)?;
                 self.specimen_there(&specimen)?;
-                Ok(vec![New::by(who, Fact::NotObtainable { specimen, limit, because })])
+                let at_work = |b: &&super::entities::Bench| b.intention.as_ref().is_some_and(|w| w.specimen == specimen);
+                let signed_in = || self.benches.values().filter(at_work).find_map(|b| b.signed_in.clone());
+                let who = who.or_else(signed_in).ok_or_else(|| no(String::from("say who states it: the result rests on it")))?;
+                Ok(vec![New::by(Some(who), Fact::NotObtainable { specimen, limit, because })])
             }
             Ask::AnswerCheck { specimen, check, about, says, who } => {
                 needs_words(&says)?;
@@ -501,12 +511,19 @@ impl Lab {
             Some(State::Complete) => (),
             Some(State::Reviewed) => return Err(no(format!("the result of {specimen} is reviewed already"))),
             _ => {
+                let rows = state.limits.iter().flat_map(|l| &l.checks).filter(|c| c.answered.is_none());
+                let open: Vec<String> = rows
+                    .filter(|c| c.severity == Severity::Hold || crate::checks::keeps_provisional(&c.check))
+                    .map(|c| format!("{} ({})", c.about, c.check))
+                    .collect();
                 return Err(no(format!(
-                    "the result of {specimen} is not complete; bring what is missing and answer its holds first"
+                    "the result of {specimen} is not complete; bring what is missing and answer its holds first: {}",
+                    open.join(", ")
                 )));
             }
         }
-        if worked_on(state).any(|by| *by == who) {
+        // The same initials in another case are the same person.
+        if worked_on(state).any(|by| by.as_str().eq_ignore_ascii_case(who.as_str())) {
             return Err(no(format!("{who} worked on {specimen}; a second person reviews")));
         }
         let revision = state.revision;
@@ -514,12 +531,15 @@ impl Lab {
     }
 }
 
-/// Everybody whose hand is in a specimen's determinations: who weighed, counted, corrected or set aside.
+/// Everybody whose hand is in a specimen's result: who weighed, counted, corrected, set aside, stated or answered.
 fn worked_on(specimen: &Specimen) -> impl Iterator<Item = &Operator> {
     let weighings = specimen.weighings().flat_map(|w| w.by.iter().chain(w.corrected.iter().filter_map(|c| c.by.as_ref())));
     let counts = specimen.counts.iter().flat_map(|c| c.by.iter().chain(c.corrected.iter().filter_map(|s| s.by.as_ref())));
-    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref()).filter_map(|s| s.by.as_ref());
-    weighings.chain(counts).chain(aside)
+    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref());
+    let stated = specimen.liquid_not_obtainable.iter().chain(&specimen.plastic_not_obtainable);
+    let said = aside.chain(stated).filter_map(|s| s.by.as_ref());
+    let answered = specimen.answers.iter().filter_map(|a| a.by.as_ref());
+    weighings.chain(counts).chain(said).chain(answered)
 }
 
 /// A number of drops that a person states.
@@ -528,6 +548,21 @@ pub(super) fn drops_believable(drops: u32) -> Result<(), Refusal> {
         true => Ok(()),
         false => Err(no(String::from("a count lies between 1 and 500 drops"))),
     }
+}
+
+/// A mass in grams as text, or as the JSON number that stands for the same text.
+fn mass_text<'de, D: serde::Deserializer<'de>>(from: D) -> Result<String, D::Error> {
+    #[derive(Deserialize)]
+    #[serde(untagged)]
+    enum Given {
+        Text(String),
+        Number(f64),
+    }
+    Ok(match Given::deserialize(from).map_err(|_| serde::de::Error::custom("mass_g is a mass in grams, such as \"21.43\""))? {
+        Given::Text(text) => text,
+        // The shortest text that reads back as this number: 21.43 stays 21.43.
+        Given::Number(number) => format!("{number}"),
+    })
 }
 
 /// A mass that a person typed, in grams.

@@ -20,6 +20,19 @@ impl Lab {
         facts.into_iter().map(|f| f.through(input)).collect()
     }
 
+    /// Somebody read a code and nothing usable came: the container that was in hand
+    /// before is not the one in hand now.
+    pub(super) fn code_unread(&self, scanner: &InstrumentName, input: InputNo) -> Vec<New> {
+        let Some(bench) = self.benches_of(scanner).first() else { return vec![] };
+        let waiting = self.benches.get(bench).and_then(|b| b.hand.as_ref()).is_some_and(|h| h.weighing.is_none());
+        let emptied =
+            || Fact::HandEmptied { bench: bench.clone(), why: String::from("another code was read and not understood") };
+        let says = String::from("a code came that could not be understood: read it again");
+        let facts =
+            waiting.then(|| New::by(self.signed_in(Some(bench)), emptied())).into_iter().chain([self.refused(bench, says)]);
+        facts.map(|f| f.through(input)).collect()
+    }
+
     pub(super) fn refused(&self, bench: &BenchName, says: String) -> New {
         New::by(self.signed_in(Some(bench)), Fact::Refused { bench: bench.clone(), says })
     }

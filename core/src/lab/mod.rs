@@ -118,6 +118,13 @@ pub enum Input {
         /// The line.
         input: InputNo,
     },
+    /// A scanner sent something that is no code.
+    CodeUnread {
+        /// Which scanner.
+        scanner: InstrumentName,
+        /// The line.
+        input: InputNo,
+    },
     /// A person asks for something.
     Ask(Ask),
     /// An instrument's connection changed.
@@ -239,6 +246,7 @@ impl Lab {
             Input::Unloaded { balance, input } => self.unloaded(&balance, input),
             Input::Count { cup, run } => self.count_ended(&cup, run),
             Input::Code { scanner, text, input } => self.code_read(&scanner, &text, at, input),
+            Input::CodeUnread { scanner, input } => self.code_unread(&scanner, input),
             Input::Ask(ask) => self.asked(ask, at)?,
             Input::Instrument { instrument, state, detail } => self.instrument_changed(instrument, state, detail),
             Input::Overrun { instrument, lines } => alloc::vec![New::plain(Fact::LinesOverrun { instrument, lines })],

@@ -52,7 +52,7 @@ pub fn run(args: &AskArgs) -> u8 {
     };
     match socket::ask_service(&dir, &text, Duration::from_secs(10)) {
         Ok(answer) => {
-            println!("{answer}");
+            say!("{answer}");
             let ok = serde_json::from_str::<Value>(&answer).is_ok_and(|a| a["ok"] == Value::Bool(true));
             if ok { 0 } else { FAILED }
         }

@@ -17,7 +17,7 @@ pub struct CheckArgs {
 /// Runs `check`.
 pub fn run(args: &CheckArgs) -> u8 {
     if args.schema {
-        println!("{:#}", tarecup_config::schema::config_schema());
+        say!("{:#}", tarecup_config::schema::config_schema());
         return 0;
     }
     let path = files::config_path(args.config.as_deref());
@@ -29,10 +29,10 @@ pub fn run(args: &CheckArgs) -> u8 {
         }
     };
     match path {
-        Some(path) => println!("{} is right.", path.display()),
-        None => println!("There is no config file; the defaults are in force. Name one with --config FILE."),
+        Some(path) => say!("{} is right.", path.display()),
+        None => say!("There is no config file; the defaults are in force. Name one with --config FILE."),
     }
-    println!(
+    say!(
         "station {} of {}: {} bench(es), {} instrument(s)",
         station.lab.station,
         station.lab.name,
@@ -41,7 +41,7 @@ pub fn run(args: &CheckArgs) -> u8 {
     );
     for i in &station.instruments {
         let benches: Vec<&str> = i.benches.iter().map(|b| b.as_str()).collect();
-        println!(
+        say!(
             "  {:<12} {:<8} {:<18} {} at {}",
             i.name.as_str(),
             i.kind.word(),

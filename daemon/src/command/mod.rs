@@ -5,6 +5,14 @@
 //! ended and a specimen is not complete · 4 nothing is being recorded · 5 no
 //! service answers.
 
+/// Prints a line for people or programs. A reader that went away is no trouble of ours.
+macro_rules! say {
+    ($($arg:tt)*) => {{
+        use std::io::Write as _;
+        let _ = writeln!(std::io::stdout().lock(), $($arg)*);
+    }};
+}
+
 mod ask;
 mod check;
 mod demo;
@@ -89,6 +97,7 @@ pub fn main() -> ExitCode {
             return ExitCode::from(if e.use_stderr() { WRONG_INPUT } else { 0 });
         }
     };
+    prepare_process();
     ExitCode::from(match cli.verb {
         Verb::Demo(args) => demo::run(args, cli.log),
         Verb::Run(args) => run::run(args, cli.log),
@@ -100,13 +109,26 @@ pub fn main() -> ExitCode {
     })
 }
 
-/// Starts the log on standard error.
+/// What is written is its owner's alone; as many files and sockets may be open as the system allows.
+fn prepare_process() {
+    use rustix::process::{Resource, getrlimit, setrlimit};
+    rustix::process::umask(rustix::fs::Mode::from_raw_mode(0o077));
+    let mut limit = getrlimit(Resource::Nofile);
+    limit.current = limit.maximum;
+    let _ = setrlimit(Resource::Nofile, limit);
+}
+
+/// Starts the log on standard error. A log that cannot be written stops nothing.
 fn start_log(form: Option<LogForm>, default_level: &str) {
     use std::io::IsTerminal;
     use tracing_subscriber::EnvFilter;
     let filter = EnvFilter::try_from_env("TARECUP_LOG")
-        .unwrap_or_else(|_| EnvFilter::new(format!("{default_level},mqtt5=warn,rumqttc=warn")));
-    let log = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_target(false);
+        .unwrap_or_else(|_| EnvFilter::new(format!("{default_level},mqtt5=off,rumqttc=warn")));
+    let log = tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_writer(std::io::stderr)
+        .with_target(false)
+        .log_internal_errors(false);
     // A second start in one process (tests) keeps the first.
     let _ = match form {
         Some(LogForm::Json) => log.json().try_init(),

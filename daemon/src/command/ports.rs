@@ -13,15 +13,15 @@ pub fn run(args: &PortsArgs) -> u8 {
     let ports = tarecup_drivers::port::list::list();
     if args.json {
         for port in &ports {
-            println!("{}", serde_json::json!({"stable": port.stable, "device": port.device, "about": port.about}));
+            say!("{}", serde_json::json!({"stable": port.stable, "device": port.device, "about": port.about}));
         }
         return 0;
     }
     if ports.is_empty() {
-        println!("No serial port was found. Is the adapter plugged in, and may this user see it (group dialout)?");
+        say!("No serial port was found. Is the adapter plugged in, and may this user see it (group dialout)?");
     }
     for port in &ports {
-        println!("{}\n    {} {}", port.stable, port.device, port.about);
+        say!("{}\n    {} {}", port.stable, port.device, port.about);
     }
     0
 }

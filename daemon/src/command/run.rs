@@ -9,6 +9,9 @@ use std::sync::Arc;
 use std::time::Duration;
 use tarecup_config::station::LogFormat;
 
+/// How often the parts of the service are looked after.
+const LOOK_AFTER: Duration = Duration::from_secs(2);
+
 /// Arguments of `run`.
 #[derive(clap::Args)]
 pub struct RunArgs {
@@ -60,10 +63,10 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         return FAILED;
     };
     loop {
-        match stop.recv_timeout(Duration::from_secs(30)) {
+        match stop.recv_timeout(LOOK_AFTER) {
             Ok(()) => break,
-            Err(_) if service.desk_ended() => {
-                tracing::error!("the desk has ended by itself; leaving so that the service manager starts again");
+            Err(_) if service.part_ended() => {
+                tracing::error!("a part of the service has ended by itself; leaving so that the service manager starts it again");
                 service.stop();
                 return FAILED;
             }

@@ -33,9 +33,9 @@ pub fn run(args: &StatusArgs) -> u8 {
             let answer: Value = serde_json::from_str(&answer).unwrap_or_default();
             let status = &answer["status"];
             if args.json {
-                println!("{status}");
+                say!("{status}");
             } else {
-                print!("{}", told(status));
+                say!("{}", (told(status)).trim_end());
             }
             if status["not_recording"].is_string() { NOT_RECORDING } else { 0 }
         }

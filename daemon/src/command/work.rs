@@ -51,11 +51,11 @@ pub fn run(args: &WorkArgs) -> u8 {
         let results = results(scenario, &station);
         if args.json {
             for limits in &results {
-                println!("{}", limits_payload(limits, 0, 0, None, &[], serde_json::Value::Null));
+                say!("{}", limits_payload(limits, 0, 0, None, &[], serde_json::Value::Null));
             }
         } else {
-            println!("{}", scenario.title);
-            print!("{}", tell::table(&results));
+            say!("{}", scenario.title);
+            say!("{}", (tell::table(&results)).trim_end());
         }
     }
     0

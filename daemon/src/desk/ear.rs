@@ -15,6 +15,8 @@ use tarecup_drivers::heard::{Batch, PortState, Reject, What};
 
 /// A streaming balance that says nothing for this long is silent.
 const SILENT_US: i64 = 5 * SECOND_US;
+/// Counters of an instrument that speaks are published again after this time.
+const SHOWN_AGAIN_US: i64 = 15 * SECOND_US;
 /// So many lines in a row that nobody understands are another language.
 const STRANGE_LINES: u32 = 4;
 
@@ -60,6 +62,8 @@ pub struct Ear {
     pub shown: Option<(Reading, Stamp)>,
     /// Counters have changed since they were published.
     pub counters_changed: bool,
+    /// Lines understood, and when the last was heard, as they were last published.
+    published: (u64, Option<Stamp>),
     /// Noise beyond what is kept line by line.
     pub(super) flood: Flood,
 }
@@ -86,6 +90,7 @@ impl Ear {
             reading: None,
             shown: None,
             counters_changed: false,
+            published: (0, None),
             flood: Flood::default(),
         }
     }
@@ -177,6 +182,18 @@ impl Ear {
             count.interrupted(&format!("the service was not running during the run (since {since})"));
             count.listening(now);
         }
+    }
+
+    /// Whether its published counters are so old that they mislead.
+    pub fn shown_long_ago(&self) -> bool {
+        let (lines, at) = self.published;
+        let age = self.last_heard.zip(at).map_or(i64::MAX, |(now, then)| now.since(&then).us);
+        lines != self.understood && age >= SHOWN_AGAIN_US
+    }
+
+    /// Its counters are being published.
+    pub fn counters_shown(&mut self) {
+        self.published = (self.understood, self.last_heard);
     }
 
     /// Lets time pass for the sense.

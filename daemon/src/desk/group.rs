@@ -315,8 +315,9 @@ impl Desk {
         for index in 0..self.ears.len() {
             let name = self.setup.instruments[index].name.clone();
             let topic = format!("instrument/{name}");
-            let counted = std::mem::take(&mut self.ears[index].counters_changed);
+            let counted = std::mem::take(&mut self.ears[index].counters_changed) || self.ears[index].shown_long_ago();
             if counted || topics.contains_key(&topic) {
+                self.ears[index].counters_shown();
                 topics.insert(topic, Some(payload(&self.instrument_view(index))));
             }
         }

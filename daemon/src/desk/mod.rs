@@ -242,7 +242,13 @@ impl Desk {
             match &frame.what {
                 What::Signal(signal) => self.signal(index, signal, input, frame.at),
                 What::Nothing => (),
-                What::Reject(reason) => self.ears[index].reject(*reason, &batch.bytes[bytes]),
+                What::Reject(reason) => {
+                    self.ears[index].reject(*reason, &batch.bytes[bytes]);
+                    if self.setup.instruments[index].kind == Kind::Scanner {
+                        let scanner = self.setup.instruments[index].name.clone();
+                        self.decide(Input::CodeUnread { scanner, input }, frame.at);
+                    }
+                }
             }
         }
     }
@@ -293,6 +299,7 @@ impl Desk {
             self.happened(index, happening);
         }
         self.ears[index].port(state, at);
+        self.ears[index].counters_changed = true;
         let (connection, detail) = match state {
             PortState::Waiting => (Connection::Waiting, Some(String::from("its port is not there"))),
             PortState::Opened => (Connection::Waiting, None),

@@ -12,6 +12,8 @@ use tarecup_simulators::operator::Instruments;
 
 /// 2026-03-02T07:30:00Z, a Monday.
 const START_UTC_US: i64 = 1_772_436_600_000_000;
+/// What the demo's balances can weigh: as much as a scenario file may say.
+const CAPACITY_UG: i64 = 60_000 * 1_000_000;
 /// Benches where the scenario names none.
 const BENCHES: [&str; 2] = ["north", "south"];
 /// Who works at them.
@@ -25,7 +27,7 @@ pub fn plan(scenario: &Scenario) -> Day {
         Err(_) => String::new(),
     };
     let specimens: Vec<Specimen> = scenario.specimens.iter().map(|s| specimen(s, method(s))).collect();
-    let decimals = Day::decimals_needed(&specimens).clamp(2, 4);
+    let decimals = Day::decimals_needed(&specimens).clamp(2, 6);
     let mut names: Vec<String> = BENCHES.iter().map(|b| (*b).to_string()).collect();
     for named in specimens.iter().filter_map(|s| s.bench.as_ref()) {
         if !names.contains(named) {
@@ -36,8 +38,28 @@ pub fn plan(scenario: &Scenario) -> Day {
     Day { start_utc_us: START_UTC_US, benches, specimens }
 }
 
+/// Columns of the mass on the display of the demo's balances.
+const COLUMNS: usize = 10;
+
+/// Whether every mass of the day fits the display with all its decimals.
+pub fn fits_display(day: &Day) -> Result<(), String> {
+    let decimals = usize::from(Day::decimals_needed(&day.specimens).clamp(2, 6));
+    let masses = day
+        .specimens
+        .iter()
+        .flat_map(Specimen::weighed)
+        .flat_map(|(_, _, w)| [w.tare_ug, w.wet_ug].into_iter().chain(w.dry_ug.clone()));
+    let largest = masses.max().unwrap_or(0) / 1_000_000;
+    match largest.to_string().len() + 1 + decimals > COLUMNS {
+        true => Err(format!(
+            "a mass of {largest} g with {decimals} decimals (the finest mass of the file decides) does not fit the {COLUMNS} columns of the demo's balance; round the masses, or compute the file with `tarecup work`"
+        )),
+        false => Ok(()),
+    }
+}
+
 fn bench(n: usize, name: &str, decimals: u8) -> Bench {
-    let settings = Settings::new(BalanceDialect::SignedSteady, decimals);
+    let settings = Settings { capacity_ug: CAPACITY_UG, ..Settings::new(BalanceDialect::SignedSteady, decimals) };
     Bench {
         name: name.to_string(),
         operator: OPERATORS[n % OPERATORS.len()].to_string(),

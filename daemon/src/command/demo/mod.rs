@@ -90,6 +90,7 @@ fn prepared(args: &DemoArgs) -> Result<Prepared, String> {
     let scenario = scenario::parse(&name, &text, Mode::Demo, &methods).map_err(|f| f.to_string())?;
     let day = day::plan(&scenario);
     day.check().map_err(|e| format!("{name}: {e}"))?;
+    day::fits_display(&day).map_err(|says| format!("{name}: {says}"))?;
     Ok(Prepared { scenario, day })
 }
 
@@ -101,15 +102,26 @@ struct Folder {
 
 impl Folder {
     fn take(named: Option<&Path>) -> Result<Self, String> {
+        let trouble =
+            |path: &Path, e: &dyn std::fmt::Display| format!("{}: {e}; name another folder with --state DIR", path.display());
         let path = match named {
             Some(path) => path.to_path_buf(),
-            None => std::env::temp_dir().join(format!("tarecup-demo-{}", std::process::id())),
+            None => own_folder().map_err(|e| trouble(&std::env::temp_dir(), &e))?,
         };
         let path = std::path::absolute(&path).unwrap_or(path);
-        std::fs::create_dir_all(path.join("ports"))
-            .map_err(|e| format!("{}: {e}; name another folder with --state DIR", path.display()))?;
+        std::fs::create_dir_all(path.join("ports")).map_err(|e| trouble(&path, &e))?;
         Ok(Self { path, kept: named.is_some() })
     }
+}
+
+/// A new folder under a name that nobody could have prepared, its owner's alone.
+fn own_folder() -> std::io::Result<PathBuf> {
+    use std::os::unix::fs::DirBuilderExt;
+    let mut random = [0u8; 8];
+    getrandom::fill(&mut random).map_err(|e| std::io::Error::other(e.to_string()))?;
+    let path = std::env::temp_dir().join(format!("tarecup-demo-{:016x}", u64::from_ne_bytes(random)));
+    std::fs::DirBuilder::new().mode(0o700).create(&path)?;
+    Ok(path)
 }
 
 impl Drop for Folder {
@@ -162,7 +174,7 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
     }
     if !args.once && played.is_ok() && !stop.asked() {
         if !args.json {
-            println!("\nThe broker stays up; look around. Ctrl-C ends the demo.");
+            say!("\nThe broker stays up; look around. Ctrl-C ends the demo.");
         }
         let _ = stopped.recv();
     }
@@ -200,16 +212,16 @@ fn greet(args: &DemoArgs, scenario: &Scenario, service: &Service) {
     if args.json {
         return;
     }
-    println!("{}", scenario.title);
-    println!(
+    say!("{}", scenario.title);
+    say!(
         "{} specimens; simulated balances, cup counters and scanners under {}",
         scenario.specimens.len(),
         service.state_dir().join("ports").display()
     );
     if let Some(at) = service.broker_address() {
-        println!("MQTT on {at}: for example  mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/#'", at.ip(), at.port());
+        say!("MQTT on {at}: for example  mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/#'", at.ip(), at.port());
     }
-    println!();
+    say!("");
 }
 
 fn ending(args: &DemoArgs, scenario: &Scenario, results: &Results, took: Duration, delivered: bool, service: &Service) -> u8 {
@@ -219,16 +231,16 @@ fn ending(args: &DemoArgs, scenario: &Scenario, results: &Results, took: Duratio
     let complete = |s: &scenario::ScenarioSpecimen| results.iter().any(|l| l.specimen == s.id && l.state != State::Provisional);
     let all = scenario.specimens.iter().all(complete);
     if !args.json {
-        print!("{}", tell::table(&results));
-        println!(
+        say!("{}", (tell::table(&results)).trim_end());
+        say!(
             "\nplayed in {:.1} s; {}",
             took.as_secs_f64(),
             if delivered { "everything published is acknowledged" } else { "NOT everything published was acknowledged" }
         );
         if let Some(at) = service.broker_address() {
-            println!("retained results: mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/+/specimen/+/limits'", at.ip(), at.port());
+            say!("retained results: mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/+/specimen/+/limits'", at.ip(), at.port());
         }
-        println!(
+        say!(
             "Index values for a demonstration. Containers from a 110 °C oven burn: tongs, lid on, cool first. Dust from dry soil can carry silica or asbestos. Keep fingers and sleeves from a motorised cam."
         );
     }
