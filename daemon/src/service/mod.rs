@@ -1,29 +1,37 @@
 //! Puts the parts together: ports, desk, ledger, broker, courier, local socket.
 
+mod broker;
+mod outlet;
+mod ports;
+
+pub use broker::fact_payload;
+
 use crate::clock::{BootClock, boot_id};
 use crate::desk::inbox::Inbox;
-use crate::desk::{Desk, DeskSetup, Effects, InstrumentSetup, Kind, LiveOut, Seat, SeatSettings};
+use crate::desk::{Desk, DeskSetup, InstrumentSetup, Kind, Seat, SeatSettings};
 use crate::heard::Heard;
-use crate::ledger::{FactStored, LedgerError, OpenOptions, Reader};
-use crate::publish::{self, Courier, CourierEvent, CourierSettings, Live, Login, Outgoing, Past, TlsSettings};
+use crate::ledger::{LedgerError, OpenOptions};
+use crate::publish::{self, Courier};
 use crate::{asks, socket};
-use bytes::{BufMut, Bytes, BytesMut};
+use broker::{SharedCourier, courier_settings, start_courier};
+use bytes::Bytes;
+use outlet::Outlet;
+use ports::{PortsThread, open_ports};
 use serde_json::json;
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
-use std::sync::{Arc, Mutex, PoisonError};
+use std::sync::{Arc, PoisonError};
 use std::time::Duration;
 use tarecup_config::profiles::ProfileSource;
-use tarecup_config::station::{Instrument, InstrumentKind, Scheme, Station};
+use tarecup_config::station::{Instrument, InstrumentKind, Station};
 use tarecup_core::fact::Recorded;
 use tarecup_core::lab::{Linking, Setup};
 use tarecup_core::sense::Talks;
-use tarecup_core::stamp::{SECOND_US, Stamp};
-use tarecup_drivers::heard::{Clock, Deliver};
-use tarecup_drivers::port::serial::{self, PortTask};
+use tarecup_core::stamp::SECOND_US;
+use tarecup_drivers::port::serial::PortTask;
 use tarecup_drivers::profile::Profile;
-use tokio::runtime::{Handle, Runtime};
+use tokio::runtime::Runtime;
 
 /// How long an orderly stop waits for the broker.
 const FAREWELL: Duration = Duration::from_secs(3);
@@ -133,7 +141,7 @@ impl Service {
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
         #[cfg(feature = "broker")]
-        let broker = built_in(&station, &mut settings, any_broker_port, &net_runtime)?;
+        let broker = broker::built_in(&station, &mut settings, any_broker_port, &net_runtime)?;
         #[cfg(not(feature = "broker"))]
         let _ = any_broker_port;
         let broker_name = format!("{}:{}", settings.host, settings.port);
@@ -276,51 +284,6 @@ fn runtime(name: &str) -> Result<Runtime, StartError> {
     builder.worker_threads(1).max_blocking_threads(16).thread_name(name).enable_all().build().map_err(StartError::System)
 }
 
-/// After lines came, the ports are looked at again after this time: lines of
-/// many ports are then read together, which costs a fraction of the wake-ups.
-/// The first line after a pause does not wait.
-const PACE: Duration = Duration::from_micros(3_000);
-
-/// The thread that drives all ports.
-struct PortsThread {
-    handle: Handle,
-    stop: tokio::sync::oneshot::Sender<Vec<PortTask>>,
-    thread: std::thread::JoinHandle<()>,
-}
-
-impl PortsThread {
-    /// With `paced`, lines that come fast are gathered; a virtual day is not paced.
-    fn start(inbox: &Arc<Inbox>, paced: bool) -> Result<Self, StartError> {
-        let inbox = Arc::clone(inbox);
-        let before_waiting = move || {
-            if inbox.lines_are_in() && paced {
-                std::thread::sleep(PACE);
-            }
-        };
-        let mut builder = tokio::runtime::Builder::new_current_thread();
-        let runtime =
-            builder.max_blocking_threads(16).on_thread_park(before_waiting).enable_all().build().map_err(StartError::System)?;
-        let handle = runtime.handle().clone();
-        let (stop, stopped) = tokio::sync::oneshot::channel::<Vec<PortTask>>();
-        let work = move || {
-            runtime.block_on(async {
-                for port in stopped.await.unwrap_or_default() {
-                    port.join().await;
-                }
-            });
-            runtime.shutdown_timeout(Duration::from_millis(500));
-        };
-        let thread = std::thread::Builder::new().name("ports".into()).spawn(work).map_err(StartError::System)?;
-        Ok(Self { handle, stop, thread })
-    }
-
-    /// Closes all ports; what was read is delivered.
-    fn stop(self, ports: Vec<PortTask>) {
-        let _ = self.stop.send(ports);
-        let _ = self.thread.join();
-    }
-}
-
 /// Compiled profiles by name.
 pub type Profiles = BTreeMap<String, Arc<Profile>>;
 
@@ -419,242 +382,4 @@ fn settings_text(station: &Station) -> String {
         "mqtt": {"root": station.mqtt.root, "retain_days": station.mqtt.retain_days},
     })
     .to_string()
-}
-
-fn courier_settings(station: &Station) -> Result<CourierSettings, StartError> {
-    let root = station.mqtt.root.as_str();
-    let name = station.lab.station.as_str();
-    let mut settings = match &station.mqtt.url {
-        Some(url) => CourierSettings::new(&url.host, url.port, root, name),
-        None => CourierSettings::new(&station.broker.listen.ip().to_string(), station.broker.listen.port().max(1), root, name),
-    };
-    settings.asks = true;
-    if let Some(url) = &station.mqtt.url {
-        if url.scheme == Scheme::Mqtts {
-            let ca_file = station.mqtt.ca_file.clone().ok_or_else(|| {
-                StartError::Mqtt(
-                    "ca_file is needed with mqtts: the file with the certificate of whoever signed the broker's".into(),
-                )
-            })?;
-            settings.tls = Some(TlsSettings { ca_file });
-        }
-        settings.login = login(station)?;
-    }
-    Ok(settings)
-}
-
-fn login(station: &Station) -> Result<Option<Login>, StartError> {
-    let Some(user) = station.mqtt.user.clone() else { return Ok(None) };
-    let password = match &station.mqtt.password_file {
-        None => String::new(),
-        Some(path) => {
-            let text =
-                std::fs::read_to_string(path).map_err(|e| StartError::Mqtt(format!("password_file {}: {e}", path.display())))?;
-            text.lines().next().unwrap_or_default().trim().to_string()
-        }
-    };
-    Ok(Some(Login { user, password }))
-}
-
-#[cfg(feature = "broker")]
-fn built_in(
-    station: &Station,
-    settings: &mut CourierSettings,
-    any_port: bool,
-    runtime: &Runtime,
-) -> Result<Option<publish::broker::BuiltIn>, StartError> {
-    use publish::broker::{BrokerFault, BrokerSettings, start};
-    if station.mqtt.url.is_some() {
-        return Ok(None);
-    }
-    let mut wanted = BrokerSettings::for_courier(station.broker.listen, settings);
-    wanted.passwords = station.broker.password_file.clone();
-    let started = match runtime.block_on(start(wanted.clone())) {
-        Err(BrokerFault::InUse { address, holder }) if any_port => {
-            tracing::warn!(%address, %holder, "the usual address of the built-in broker is taken; using a free one");
-            wanted.address.set_port(0);
-            runtime.block_on(start(wanted))
-        }
-        other => other,
-    };
-    let broker = started.map_err(|e| StartError::Broker(e.to_string()))?;
-    broker.admit(settings);
-    Ok(Some(broker))
-}
-
-type SharedCourier = Arc<Mutex<Option<Courier>>>;
-
-fn start_courier(
-    settings: CourierSettings,
-    desk: &Desk,
-    state_dir: &Path,
-    inbox: &Arc<Inbox>,
-    shared: &SharedCourier,
-    runtime: &Runtime,
-) -> Result<(), StartError> {
-    let past = Arc::new(LedgerPast { path: state_dir.to_path_buf(), ledger: desk.ledger_name() });
-    let (inbox, answers) = (Arc::clone(inbox), Arc::clone(shared));
-    let on_event = Arc::new(move |event: CourierEvent| courier_event(event, &inbox, &answers));
-    let courier = publish::spawn(runtime.handle(), settings, past, desk.delivered_through(), on_event);
-    let courier = courier.map_err(|e| StartError::Mqtt(e.to_string()))?;
-    *shared.lock().unwrap_or_else(PoisonError::into_inner) = Some(courier);
-    Ok(())
-}
-
-fn courier_event(event: CourierEvent, inbox: &Arc<Inbox>, answers: &SharedCourier) {
-    match event {
-        CourierEvent::Connected => {
-            tracing::info!("the broker accepted the connection");
-            inbox.broker(None);
-        }
-        CourierEvent::Disconnected { why } => {
-            tracing::warn!(%why, "no broker; recording goes on");
-            inbox.broker(Some(why));
-        }
-        CourierEvent::Delivered { through } => inbox.delivered(through),
-        CourierEvent::Asked { client, payload, correlation } => asked_by_mqtt(client, &payload, correlation, inbox, answers),
-        other => tracing::warn!(?other, "the broker"),
-    }
-}
-
-/// Asks over MQTT may read. What would write is refused: a name on a topic proves nothing.
-fn asked_by_mqtt(client: String, payload: &[u8], correlation: Option<Bytes>, inbox: &Arc<Inbox>, answers: &SharedCourier) {
-    let answers = Arc::clone(answers);
-    let to = client.clone();
-    let reply = move |answer: String| {
-        let answer = publish::Answer { client: to, payload: Bytes::from(answer), correlation };
-        let outgoing = Outgoing { answers: vec![answer], ..Outgoing::default() };
-        if let Some(courier) = answers.lock().unwrap_or_else(PoisonError::into_inner).as_ref() {
-            courier.send(outgoing);
-        }
-    };
-    let asked = std::str::from_utf8(payload)
-        .map_err(|_| String::from("the ask is not UTF-8"))
-        .and_then(|text| asks::parse(text).map(|a| (text, a)));
-    match asked {
-        Ok((text, asked)) if matches!(asked.wanted, asks::Wanted::Read(_)) => {
-            inbox.ask(format!("mqtt-{client}"), text.into(), Box::new(reply));
-        }
-        Ok(_) => reply(asks::refusal("asks that change the record are not taken over MQTT; use the bench or the local socket")),
-        Err(says) => reply(asks::refusal(&says)),
-    }
-}
-
-/// Facts that the courier no longer has in memory.
-struct LedgerPast {
-    path: PathBuf,
-    ledger: (String, u64),
-}
-
-impl Past for LedgerPast {
-    fn facts_after(&self, seq: u64, limit: usize) -> Result<Vec<(u64, Bytes)>, String> {
-        let reader = Reader::open(&self.path).map_err(|e| e.to_string())?;
-        let facts = reader.facts_after(seq, limit).map_err(|e| e.to_string())?;
-        Ok(facts.iter().map(|f: &FactStored| (f.seq, fact_payload(&self.ledger, &f.body))).collect())
-    }
-}
-
-/// A fact as it is published: its stored bytes, with the ledger's name put in front.
-pub fn fact_payload(ledger: &(String, u64), stored: &[u8]) -> Bytes {
-    let mut payload = BytesMut::with_capacity(stored.len() + 80);
-    payload.put_slice(format!("{{\"ledger\":\"{}\",\"epoch\":{},", ledger.0, ledger.1).as_bytes());
-    payload.put_slice(stored.get(1..).unwrap_or_default());
-    payload.freeze()
-}
-
-/// Turns what may leave into messages.
-struct Outlet {
-    settings: CourierSettings,
-    ledger: (String, u64),
-    courier: SharedCourier,
-    heard: Arc<Heard>,
-    tap: Option<Tap>,
-    told: Option<Told>,
-    clock: Arc<dyn BootClock>,
-}
-
-impl Outlet {
-    fn hand_on(&self, desk: &Desk, effects: Effects) {
-        let mut outgoing = Outgoing::default();
-        if effects.presence {
-            let presence = desk.presence("up", &self.clock.now()).to_string();
-            outgoing.retained.push((self.settings.topic("presence"), Some(Bytes::from(presence))));
-        }
-        outgoing.facts = effects.facts.iter().map(|(seq, body)| (*seq, fact_payload(&self.ledger, body))).collect();
-        outgoing.retained.extend(effects.retained.into_iter().map(|p| (self.settings.topic(&p.topic), p.payload)));
-        outgoing.live = effects.live.iter().map(|(live, seq)| self.live(live, *seq)).collect();
-        if let Some(tap) = &self.tap {
-            self.tapped(tap, &outgoing);
-        }
-        let anything = !(outgoing.facts.is_empty() && outgoing.retained.is_empty() && outgoing.live.is_empty());
-        if anything && let Some(courier) = self.courier.lock().unwrap_or_else(PoisonError::into_inner).as_ref() {
-            courier.send(outgoing);
-        }
-        if let Some(told) = &self.told {
-            effects.recorded.iter().for_each(|r| told(r));
-        }
-        for (reply, answer) in effects.replies {
-            reply(answer);
-        }
-        self.heard.add(&effects.heard);
-    }
-
-    fn live(&self, live: &LiveOut, seq: u64) -> Live {
-        match live {
-            LiveOut::Drop { instrument, drops, rate_per_s, at } => Live::Each {
-                topic: self.settings.topic(&format!("live/{instrument}")),
-                payload: text(&json!({"v": 1, "seq": seq, "at": at.rfc3339(), "drops": drops, "rate_per_s": rate_per_s})),
-            },
-            LiveOut::Mass { instrument, reading, at } => Live::Newest {
-                topic: self.settings.topic(&format!("live/{instrument}")),
-                payload: text(
-                    &json!({"v": 1, "seq": seq, "at": at.rfc3339(), "mass_g": reading.mass.grams(), "steady": reading.mark, "basis": reading.basis}),
-                ),
-            },
-        }
-    }
-
-    fn tapped(&self, tap: &Tap, outgoing: &Outgoing) {
-        let fact_topic = self.settings.topic("fact");
-        for (_, payload) in &outgoing.facts {
-            tap(&fact_topic, Some(payload), false, 1);
-        }
-        for (topic, payload) in &outgoing.retained {
-            tap(topic, payload.as_deref(), true, 1);
-        }
-        for live in &outgoing.live {
-            let (Live::Newest { topic, payload } | Live::Each { topic, payload }) = live;
-            tap(topic, Some(payload), false, 0);
-        }
-    }
-}
-
-fn text(value: &serde_json::Value) -> Bytes {
-    Bytes::from(value.to_string())
-}
-
-fn open_ports(
-    station: &Station,
-    profiles: &Profiles,
-    runtime: &Handle,
-    clock: &Arc<dyn BootClock>,
-    inbox: &Arc<Inbox>,
-) -> Vec<PortTask> {
-    let clock: Arc<dyn Clock> = Arc::new(Stamps(Arc::clone(clock)));
-    let mut ports = Vec::new();
-    for (id, instrument) in station.instruments.iter().enumerate() {
-        if let Some(profile) = profiles.get(instrument.profile.as_str()) {
-            let out: Arc<dyn Deliver> = inbox.clone();
-            ports.push(serial::spawn(runtime, id as u16, instrument.port.clone(), Arc::clone(profile), Arc::clone(&clock), out));
-        }
-    }
-    ports
-}
-
-struct Stamps(Arc<dyn BootClock>);
-
-impl Clock for Stamps {
-    fn now(&self) -> Stamp {
-        self.0.now()
-    }
 }
