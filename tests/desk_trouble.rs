@@ -27,6 +27,7 @@ fn setup() -> DeskSetup {
         toml::from_str(include_str!("../config/methods/d4318-multipoint.toml")).expect("a method");
     let name = MethodName::new("d4318-multipoint").expect("a name");
     DeskSetup {
+        key: None,
         station: "test".into(),
         state_dir: String::new(),
         lab: Setup {

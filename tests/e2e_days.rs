@@ -11,6 +11,7 @@ use std::collections::BTreeMap;
 use std::sync::{Arc, Mutex};
 use tarecup::desk::inbox::Incoming;
 use tarecup::desk::{Desk, Effects};
+use tarecup::keys::Key;
 use tarecup::ledger::{OpenOptions, verify};
 use tarecup::service::{Profiles, compile_profiles, desk_setup};
 use tarecup_config::station::{Station, parse};
@@ -100,7 +101,7 @@ impl Days {
     }
 
     fn open(&mut self) {
-        let setup = desk_setup(&self.station, &self.profiles, self.dir.path(), true);
+        let setup = desk_setup(&self.station, &self.profiles, self.dir.path(), Key::random().ok(), true);
         let options = OpenOptions::new(&format!("boot-{}", self.boots), self.utc_us);
         let (utc_us, mono_us) = (self.utc_us, self.mono_us);
         let (desk, first) =

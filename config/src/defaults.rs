@@ -27,3 +27,9 @@ pub const METHOD: &str = "d4318-multipoint";
 pub const BAUD: u32 = 9_600;
 /// Drops per second of a motorised cup, where a scenario does not say.
 pub const RATE_PER_S: f64 = 2.0;
+
+/// Hours from one backup to the next.
+pub const BACKUP_EVERY_HOURS: u32 = 24;
+
+/// Backups that are kept.
+pub const BACKUPS_KEPT: u32 = 14;

@@ -9,6 +9,8 @@ pub(crate) const STATION: &[&str] = &[
     "lab",
     "mqtt",
     "broker",
+    "record",
+    "backup",
     "bench",
     "instrument",
     "linking",
@@ -19,6 +21,8 @@ pub(crate) const STATION: &[&str] = &[
 pub(crate) const LAB: &[&str] = &["name", "station"];
 pub(crate) const MQTT: &[&str] = &["url", "user", "password_file", "ca_file", "root", "retain_days"];
 pub(crate) const BROKER: &[&str] = &["listen", "password_file"];
+pub(crate) const RECORD: &[&str] = &["signing_key_file"];
+pub(crate) const BACKUP: &[&str] = &["folder", "every_hours", "keep"];
 pub(crate) const BENCH: &[&str] = &["name"];
 pub(crate) const INSTRUMENT: &[&str] = &[
     "name",
@@ -73,7 +77,9 @@ pub(crate) fn home_of(key: &str) -> Option<&'static str> {
     if ["state_dir", "default_method", "method_files"].contains(&key) {
         return Some("the top of the configuration file, before its first [table]");
     }
-    let homes: [(&[&str], &str); 6] = [
+    let homes: [(&[&str], &str); 8] = [
+        (RECORD, "[record] of the configuration file"),
+        (BACKUP, "[backup] of the configuration file"),
         (INSTRUMENT, "an [[instrument]] of the configuration file"),
         (LINKING, "[linking] of the configuration file"),
         (MQTT, "[mqtt] of the configuration file"),

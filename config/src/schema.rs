@@ -39,6 +39,10 @@ struct Config {
     mqtt: Option<Mqtt>,
     /// The built-in broker.
     broker: Option<Broker>,
+    /// How the record is signed.
+    record: Option<Record>,
+    /// Backups made while the service runs.
+    backup: Option<Backup>,
     /// Benches: places with a balance and a cup counter.
     bench: Option<Vec<Bench>>,
     /// Balances, cup counters, scanners.
@@ -97,6 +101,30 @@ struct Broker {
     listen: Option<String>,
     /// File of users and passwords, relative to this file; required beyond loopback.
     password_file: Option<String>,
+}
+
+/// How the record is signed.
+#[derive(JsonSchema)]
+#[schemars(deny_unknown_fields)]
+#[expect(dead_code, reason = "only its shape is used")]
+struct Record {
+    /// File of the key that heads are signed with, relative to this file; made when there is none.
+    signing_key_file: Option<String>,
+}
+
+/// Backups made while the service runs.
+#[derive(JsonSchema)]
+#[schemars(deny_unknown_fields)]
+#[expect(dead_code, reason = "only its shape is used")]
+struct Backup {
+    /// Folder for backups, relative to this file; best on another disk.
+    folder: String,
+    /// Hours from one backup to the next; default 24.
+    #[schemars(range(min = 1, max = 744))]
+    every_hours: Option<u32>,
+    /// Backups that are kept; default 14.
+    #[schemars(range(min = 1, max = 1000))]
+    keep: Option<u32>,
 }
 
 /// A bench.
@@ -264,6 +292,8 @@ mod tests {
             ("Lab", keys::LAB),
             ("Mqtt", keys::MQTT),
             ("Broker", keys::BROKER),
+            ("Record", keys::RECORD),
+            ("Backup", keys::BACKUP),
             ("Bench", keys::BENCH),
             ("Instrument", keys::INSTRUMENT),
             ("Linking", keys::LINKING),

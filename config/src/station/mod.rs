@@ -31,6 +31,10 @@ pub struct Station {
     pub mqtt: Mqtt,
     /// The built-in broker; it serves when `mqtt.url` is not given.
     pub broker: Broker,
+    /// File of the key that heads are signed with; without it, the usual place.
+    pub signing_key_file: Option<PathBuf>,
+    /// Backups made while the service runs; `None`: only those a person asks for.
+    pub backup: Option<Backup>,
     /// Where the ledger lies; without it, where the service manager says.
     pub state_dir: Option<PathBuf>,
     /// The benches; at least one.
@@ -82,6 +86,17 @@ pub struct Broker {
     pub listen: SocketAddr,
     /// File with users and passwords; beyond loopback it is required.
     pub password_file: Option<PathBuf>,
+}
+
+/// Backups made while the service runs.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Backup {
+    /// Where they go.
+    pub folder: PathBuf,
+    /// Hours from one to the next.
+    pub every_hours: u32,
+    /// How many are kept.
+    pub keep: u32,
 }
 
 /// One place with a balance and a cup counter.
@@ -216,7 +231,7 @@ pub enum LogFormat {
 
 /// Reads a configuration file from disk, with the method files that it names.
 ///
-/// A relative `state_dir`, `password_file`, `ca_file` or member of
+/// A relative `state_dir`, `signing_key_file`, backup `folder`, `password_file`, `ca_file` or member of
 /// `method_files` lies in the folder of the configuration file (of the path it
 /// is named by, where that is a link), not in the one the program was started
 /// from: a service manager starts it from anywhere.
@@ -231,7 +246,16 @@ pub fn load(path: &Path) -> Result<Station, Faults> {
         text::read_file(&path).map(|text| (path.display().to_string(), text))
     })?;
     let mqtt = &mut station.mqtt;
-    let paths = [&mut station.state_dir, &mut mqtt.password_file, &mut mqtt.ca_file, &mut station.broker.password_file];
+    let paths = [
+        &mut station.state_dir,
+        &mut station.signing_key_file,
+        &mut mqtt.password_file,
+        &mut mqtt.ca_file,
+        &mut station.broker.password_file,
+    ];
+    if let Some(backup) = &mut station.backup {
+        backup.folder = beside.join(&backup.folder);
+    }
     for path in paths.into_iter().flatten() {
         *path = beside.join(&*path);
     }
@@ -281,8 +305,23 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
     let (lab, mqtt, broker) = (tables::lab(root), tables::mqtt(root), tables::broker(root));
     let (linking, log) = (tables::linking(root), tables::log(root));
     let state_dir = root.get("state_dir").and_then(|e| tables::path(&e));
+    let (signing_key_file, backup) = (tables::signing_key_file(root), tables::backup(root));
     let (lab, default_method) = (lab?, default_method?);
-    Some(Station { lab, mqtt, broker, state_dir, benches, instruments, linking, log, methods, profiles, default_method })
+    Some(Station {
+        lab,
+        mqtt,
+        broker,
+        signing_key_file,
+        backup,
+        state_dir,
+        benches,
+        instruments,
+        linking,
+        log,
+        methods,
+        profiles,
+        default_method,
+    })
 }
 
 /// Names of tables that have a fault of their own: using them is no second one.

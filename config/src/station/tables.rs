@@ -1,6 +1,6 @@
 //! The plain tables of the configuration file.
 
-use super::{Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, address};
+use super::{Backup, Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, address};
 use crate::reader::{Entry, Table};
 use crate::{defaults, keys};
 use std::path::PathBuf;
@@ -123,6 +123,23 @@ pub(super) fn broker(root: &Table<'_>) -> Broker {
     }
     broker.listen = listen;
     broker
+}
+
+pub(super) fn signing_key_file(root: &Table<'_>) -> Option<PathBuf> {
+    open(root, "record", keys::RECORD)?.get("signing_key_file").and_then(|e| path(&e))
+}
+
+pub(super) fn backup(root: &Table<'_>) -> Option<Backup> {
+    let table = open(root, "backup", keys::BACKUP)?;
+    let folder = table.need("folder", "a folder for backups", "folder = \"/mnt/other-disk/tarecup\" below [backup]");
+    let mut backup = Backup { folder: path(&folder?)?, every_hours: defaults::BACKUP_EVERY_HOURS, keep: defaults::BACKUPS_KEPT };
+    if let Some(hours) = table.get("every_hours").and_then(|e| e.whole(1..=744, "hours")) {
+        backup.every_hours = hours;
+    }
+    if let Some(keep) = table.get("keep").and_then(|e| e.whole(1..=1_000, "backups")) {
+        backup.keep = keep;
+    }
+    Some(backup)
 }
 
 pub(super) fn benches(root: &Table<'_>) -> Vec<Bench> {

@@ -347,6 +347,25 @@ impl Lab {
         away.into_iter().cloned().collect()
     }
 
+    /// Takes a fact that was decided before: applies it and decides nothing. The
+    /// state that results is the one the fact led to when it was made.
+    pub fn fold(&mut self, recorded: &Recorded) -> BTreeSet<Entity> {
+        let mut touched = BTreeSet::new();
+        self.apply(recorded, &mut touched);
+        touched
+    }
+
+    /// The same state under other settings, as a start with changed settings makes it.
+    pub fn set_up_anew(self, setup: Setup) -> Self {
+        let mut lab = Self::new(setup);
+        lab.specimens = self.specimens;
+        lab.containers = self.containers;
+        lab.loose = self.loose;
+        self.benches.into_values().for_each(|b| lab.load(Loaded::Bench(b)));
+        self.instruments.into_values().for_each(|i| lab.load(Loaded::Instrument(i)));
+        lab
+    }
+
     /// Puts an entity read from the ledger in place.
     pub fn load(&mut self, entity: Loaded) {
         match entity {

@@ -21,6 +21,7 @@ mod ports;
 mod run;
 mod status;
 mod tell;
+mod verify;
 mod work;
 
 use clap::{Parser, Subcommand, ValueEnum};
@@ -76,6 +77,8 @@ enum Verb {
     Ask(ask::AskArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
+    /// Prove that a ledger is as it was written.
+    Verify(verify::VerifyArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
 }
@@ -106,6 +109,7 @@ pub fn main() -> ExitCode {
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
+        Verb::Verify(args) => verify::run(&args),
     })
 }
 

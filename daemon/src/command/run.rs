@@ -2,9 +2,10 @@
 
 use super::{FAILED, LogForm, StateArg, WRONG_INPUT, files, start_log};
 use crate::clock::MachineClock;
+use crate::keys::{self, Key};
 use crate::service::{Plan, Service, StartError};
 use crate::signals;
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::time::Duration;
 use tarecup_config::station::LogFormat;
@@ -20,6 +21,21 @@ pub struct RunArgs {
     config: Option<PathBuf>,
     #[command(flatten)]
     state: StateArg,
+}
+
+/// The key that heads are signed with; made at the first start.
+fn signing_key(named: Option<&Path>) -> Result<Key, String> {
+    let place = named.map(Path::to_path_buf).or_else(keys::usual_place);
+    let place = place.ok_or("there is no place for the signing key: name a file with signing_key_file in [record]")?;
+    let new = !place.exists();
+    let key = Key::load_or_make(&place)?;
+    let fingerprint = key.public().fingerprint();
+    if new {
+        tracing::warn!(file = %place.display(), %fingerprint, "made a key that heads are signed with: write its fingerprint down where this machine cannot change it");
+    } else {
+        tracing::info!(%fingerprint, "heads are signed");
+    }
+    Ok(key)
 }
 
 /// Runs `run`.
@@ -41,12 +57,20 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         }
     };
     let signals = signals::listen();
+    let key = match signing_key(station.signing_key_file.as_deref()) {
+        Ok(key) => key,
+        Err(says) => {
+            eprintln!("{says}");
+            return FAILED;
+        }
+    };
     let plan = Plan {
         station,
         state_dir,
         clock: Arc::new(MachineClock::new()),
         time_passes: true,
         any_broker_port: false,
+        key: Some(key),
         tap: None,
         told: None,
     };

@@ -3,6 +3,7 @@
 use super::flood::Swallowed;
 use super::inbox::Reply;
 use super::{Desk, InstrumentSetup, views};
+use crate::keys::HeadText;
 use crate::ledger::{AnswerRow, Digest, DocumentRow, FactRow, Group as Rows, InputKind, InputRow};
 use bytes::Bytes;
 use serde::Serialize;
@@ -272,6 +273,7 @@ impl Desk {
             }
         }
         self.held_since = None;
+        self.sign_when_due(&group);
         let seq = self.next_seq - 1;
         effects.retained.extend(self.topics(&group));
         self.live_masses(&mut group.live);
@@ -283,6 +285,28 @@ impl Desk {
         let replies = group.answers.into_iter().filter_map(|a| a.reply.map(|r| (r, a.answer)));
         effects.replies.extend(replies);
         self.lab.forget_finished();
+    }
+
+    /// A result is worth a signature, and so is the end of a day's work.
+    fn sign_when_due(&mut self, group: &Group) {
+        let due = |d: &&Decided| matches!(d.recorded.fact, Fact::LimitsComputed { .. } | Fact::ServiceStopped {});
+        if let Some(last) = group.facts.iter().rfind(due) {
+            let at = last.recorded.at;
+            self.sign_head(&at);
+        }
+    }
+
+    /// Signs where the ledger ends, and keeps that.
+    pub(super) fn sign_head(&mut self, at: &Stamp) {
+        let Some(key) = &self.setup.key else { return };
+        let tail = self.ledger.tail();
+        let head =
+            HeadText { ledger: tail.id, epoch: tail.epoch, seq: tail.last_seq, hash: tail.last_hash, at_utc_us: at.utc_us };
+        let signed = key.sign(&head);
+        if let Err(e) = self.ledger.keep_head(&signed) {
+            tracing::warn!(error = %e, "a signed head could not be kept; the next one vouches for everything before it as well");
+        }
+        self.signed = Some(signed);
     }
 
     /// Topics that have changed with the group.

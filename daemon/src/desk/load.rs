@@ -4,7 +4,7 @@
 use super::ear::{Ear, SenseState};
 use super::group::{Answered, Effects, Group, Held, Publish, payload};
 use super::{Desk, views};
-use crate::ledger::{Asked, Digest, DocumentStored, InputKind, InputStored, Ledger, LedgerError, OpenOptions, Which};
+use crate::ledger::{Asked, Digest, DocumentStored, InputKind, InputStored, Ledger, LedgerError, OpenOptions, Reader, Which};
 use serde::de::DeserializeOwned;
 use serde_json::Value;
 use std::path::Path;
@@ -72,6 +72,8 @@ pub struct DeskSetup {
     pub settings: String,
     /// Finished specimens stay published for so many days.
     pub retain_days: u32,
+    /// Signs heads, if anything does.
+    pub key: Option<crate::keys::Key>,
 }
 
 impl Desk {
@@ -99,6 +101,7 @@ impl Desk {
             next_seq: 1,
             last_fact_input: 1,
             cleaned: now,
+            signed: None,
             delivered,
             delivered_stored: delivered,
             broker: None,
@@ -217,16 +220,23 @@ impl Desk {
             let state: SenseState = serde_json::from_slice(&stored.body).unwrap_or_default();
             states.insert(stored.id, state);
         })?;
-        let take = |i: &InstrumentSetup| Ear::new(i, states.remove(i.name.as_str()).unwrap_or_default());
-        self.ears = self.setup.instruments.iter().map(take).collect();
-        let floor = self.next_input.saturating_sub(FED_AGAIN);
-        let mut from = self.ears.iter().map(|e| e.state.through + 1).min().unwrap_or(self.next_input).max(floor);
+        let ears = self.setup.instruments.iter().map(|i| Ear::new(i, states.remove(i.name.as_str()).unwrap_or_default()));
+        self.ears = ears.collect();
+        let reader = self.ledger.reader()?;
+        self.feed_senses(&reader, self.next_input, now)
+    }
+
+    /// Feeds the senses what came after their last fact and before the input `before`, in which the service came up.
+    pub(super) fn feed_senses(&mut self, reader: &Reader, before: u64, now: Stamp) -> Result<(), LedgerError> {
+        let floor = before.saturating_sub(FED_AGAIN);
+        let mut from = self.ears.iter().map(|e| e.state.through + 1).min().unwrap_or(before).max(floor);
         let mut last: Option<Stamp> = None;
-        loop {
-            let page = self.reader.inputs_from(from, PAGE, None)?;
+        while from < before {
+            let page = reader.inputs_from(from, PAGE, None)?;
             let Some(end) = page.last() else { break };
-            (from, last) = (end.no + 1, Some(end.at));
-            for input in &page {
+            from = end.no + 1;
+            for input in page.iter().filter(|i| i.no < before) {
+                last = Some(input.at);
                 self.feed_again(input);
             }
         }

@@ -9,6 +9,7 @@
 //! and ledger are opened anew, exactly as at start-up, and what is held is
 //! taken again: nothing is lost and nothing is decided twice.
 
+pub(crate) mod again;
 mod ear;
 mod flood;
 mod group;
@@ -65,6 +66,8 @@ pub struct Desk {
     stopped: bool,
     /// When results were last looked through for those to be taken down.
     cleaned: Stamp,
+    /// The latest head that was signed.
+    signed: Option<crate::ledger::SignedHead>,
 }
 
 impl Desk {
@@ -96,6 +99,10 @@ impl Desk {
         }
         if now.since(&self.cleaned).us >= 24 * HOUR_US {
             self.cleaned = *now;
+            self.sign_head(now);
+            effects
+                .retained
+                .push(group::Publish { topic: String::from("head"), payload: Some(group::payload(&self.head_view(now))) });
             match self.take_down(now) {
                 Ok(topics) => effects.retained.extend(topics),
                 Err(e) => tracing::warn!(error = %e, "old results stay published for another day"),

@@ -3,6 +3,7 @@
 
 use super::Desk;
 use crate::asks::{Read, refusal};
+use crate::keys::hex;
 use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
 use tarecup_core::lab::Lab;
@@ -10,7 +11,7 @@ use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
-use tarecup_core::stamp::Stamp;
+use tarecup_core::stamp::{Stamp, rfc3339};
 
 /// Version of the payloads.
 const V: u32 = 1;
@@ -123,9 +124,11 @@ impl Desk {
 
     pub(super) fn head_view(&self, at: &Stamp) -> Value {
         let tail = self.ledger.tail();
+        let signed = self.signed.as_ref().filter(|s| s.seq == tail.last_seq && s.epoch == tail.epoch);
         json!({
-            "v": V, "seq": tail.last_seq, "at": at.rfc3339(), "ledger": tail.id.to_string(), "epoch": tail.epoch,
-            "hash": tail.last_hash.to_string(), "signature": null,
+            "v": V, "seq": tail.last_seq, "at": signed.map_or_else(|| at.rfc3339(), |s| rfc3339(s.at_utc_us)),
+            "ledger": tail.id.to_string(), "epoch": tail.epoch, "hash": tail.last_hash.to_string(),
+            "signature": signed.map(|s| hex(&s.signature)), "key": signed.map(|s| hex(&s.key)),
         })
     }
 

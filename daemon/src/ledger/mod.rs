@@ -12,6 +12,7 @@
 
 mod chain;
 mod error;
+mod heads;
 mod lock;
 mod reader;
 mod rows;
@@ -21,6 +22,7 @@ mod writer;
 
 pub use chain::{Digest, LedgerId};
 pub use error::LedgerError;
+pub use heads::SignedHead;
 pub use reader::{Asked, Head, Reader, Which};
 pub use rows::{AnswerRow, DocumentRow, DocumentStored, FactRow, FactStored, Group, InputKind, InputRow, InputStored};
 pub use verify::{Fault, KnownHead, Progress, VerifyReport, verify};

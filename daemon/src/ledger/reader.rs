@@ -232,6 +232,12 @@ impl Reader {
         self.one(&sql, (kind,), fact)
     }
 
+    /// All facts of a kind, oldest first.
+    pub fn facts_of_kind(&self, kind: &str) -> Result<Vec<FactStored>, LedgerError> {
+        let sql = format!("SELECT {RAW_FACT} FROM fact WHERE kind = ?1 ORDER BY seq");
+        self.list(&sql, (kind,), fact)
+    }
+
     /// One document.
     pub fn document(&self, kind: &str, id: &str) -> Result<Option<DocumentStored>, LedgerError> {
         let sql = "SELECT kind, id, seq, open, body FROM document WHERE kind = ?1 AND id = ?2";

@@ -20,7 +20,7 @@ pub(crate) const APPLICATION_ID: i32 = 0x5443_7570;
 pub(crate) const NEWEST: i32 = STEPS.len() as i32;
 
 /// Each step brings the file from one layout to the next.
-const STEPS: &[&str] = &[LAYOUT_1];
+const STEPS: &[&str] = &[LAYOUT_1, LAYOUT_2];
 
 /// Oldest SQLite without the fault in which a reset of the write-ahead log
 /// could lose commits (fixed in 3.51.3).
@@ -126,6 +126,22 @@ BEGIN SELECT RAISE(ABORT, 'the ledger keeps its name'); END;
 CREATE TRIGGER ledger_same_id BEFORE UPDATE ON ledger
 WHEN NEW.id IS NOT OLD.id OR NEW.one IS NOT OLD.one OR NEW.epoch < OLD.epoch
 BEGIN SELECT RAISE(ABORT, 'the ledger keeps its name, and its epoch only rises'); END;
+";
+
+/// Signed heads.
+const LAYOUT_2: &str = "
+CREATE TABLE signed_head (
+    seq INTEGER PRIMARY KEY,
+    hash BLOB NOT NULL CHECK (length(hash) = 32),
+    epoch INTEGER NOT NULL,
+    at_utc_us INTEGER NOT NULL,
+    key BLOB NOT NULL CHECK (length(key) = 32),
+    signature BLOB NOT NULL CHECK (length(signature) = 64)
+) STRICT;
+CREATE TRIGGER signed_head_no_update BEFORE UPDATE ON signed_head
+BEGIN SELECT RAISE(ABORT, 'signed heads are never changed'); END;
+CREATE TRIGGER signed_head_no_delete BEFORE DELETE ON signed_head
+BEGIN SELECT RAISE(ABORT, 'signed heads are never deleted'); END;
 ";
 
 /// Refuses an SQLite library that can lose commits.

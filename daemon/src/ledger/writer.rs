@@ -177,6 +177,13 @@ impl Ledger {
         Ok(Committed { last_input: tail.last_input, last_seq: tail.last_seq, last_hash: tail.last_hash })
     }
 
+    pub(super) fn path_and_connection(&mut self) -> Result<(&Path, &Connection), LedgerError> {
+        match &self.open {
+            Some(open) => Ok((&self.path, &open.conn)),
+            None => Err(LedgerError::Poisoned { path: self.path.clone() }),
+        }
+    }
+
     /// To be called when there is nothing to do: copies the write-ahead log
     /// back into the file, so that no commit has to wait for that. Does
     /// nothing while little has been stored since the last time; never waits

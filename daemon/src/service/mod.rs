@@ -3,13 +3,16 @@
 mod broker;
 mod outlet;
 mod ports;
+mod settings;
 
 pub use broker::fact_payload;
+pub use settings::{Profiles, setup_of};
 
 use crate::clock::{BootClock, boot_id};
 use crate::desk::inbox::Inbox;
-use crate::desk::{Desk, DeskSetup, InstrumentSetup, Kind, Seat, SeatSettings};
+use crate::desk::{Desk, DeskSetup, Seat, SeatSettings};
 use crate::heard::Heard;
+use crate::keys::Key;
 use crate::ledger::{LedgerError, OpenOptions};
 use crate::publish::{self, Courier};
 use crate::{asks, socket};
@@ -17,18 +20,13 @@ use broker::{SharedCourier, courier_settings, start_courier};
 use bytes::Bytes;
 use outlet::Outlet;
 use ports::{PortsThread, open_ports};
-use serde_json::json;
-use std::collections::BTreeMap;
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
 use std::sync::{Arc, PoisonError};
 use std::time::Duration;
 use tarecup_config::profiles::ProfileSource;
-use tarecup_config::station::{Instrument, InstrumentKind, Station};
+use tarecup_config::station::Station;
 use tarecup_core::fact::Recorded;
-use tarecup_core::lab::{Linking, Setup};
-use tarecup_core::sense::Talks;
-use tarecup_core::stamp::SECOND_US;
 use tarecup_drivers::port::serial::PortTask;
 use tarecup_drivers::profile::Profile;
 use tokio::runtime::Runtime;
@@ -98,6 +96,8 @@ pub struct Plan {
     pub time_passes: bool,
     /// When the built-in broker's address is taken, take a free one.
     pub any_broker_port: bool,
+    /// Signs heads.
+    pub key: Option<Key>,
     /// Sees messages.
     pub tap: Option<Tap>,
     /// Sees facts.
@@ -124,14 +124,14 @@ pub struct Service {
 impl Service {
     /// Starts everything. Nothing runs when it fails.
     pub fn start(plan: Plan) -> Result<Service, StartError> {
-        let Plan { station, state_dir, clock, time_passes, any_broker_port, tap, told } = plan;
+        let Plan { station, state_dir, clock, time_passes, any_broker_port, key, tap, told } = plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
         let inbox = Inbox::new();
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
         let heard = Arc::new(Heard::default());
-        let setup = desk_setup(&station, &profiles, &state_dir, time_passes);
+        let setup = desk_setup(&station, &profiles, &state_dir, key, time_passes);
         let options = OpenOptions::new(&boot_id(), clock.now().utc_us);
         let stamp = |boot| {
             clock.set_boot(boot);
@@ -284,9 +284,6 @@ fn runtime(name: &str) -> Result<Runtime, StartError> {
     builder.worker_threads(1).max_blocking_threads(16).thread_name(name).enable_all().build().map_err(StartError::System)
 }
 
-/// Compiled profiles by name.
-pub type Profiles = BTreeMap<String, Arc<Profile>>;
-
 /// Compiles the profiles that the instruments use.
 pub fn compile_profiles(station: &Station) -> Result<Profiles, StartError> {
     let mut profiles = Profiles::new();
@@ -310,76 +307,8 @@ fn compile_profile(source: &ProfileSource) -> Result<Profile, String> {
 }
 
 /// What the desk needs to know of the settings.
-pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time_passes: bool) -> DeskSetup {
-    let linking = &station.linking;
-    let seconds = |s: u32| i64::from(s) * SECOND_US;
-    let lab = Setup {
-        benches: station.benches.iter().map(|b| b.name.clone()).collect(),
-        instruments: station.instruments.iter().map(|i| (i.name.clone(), i.benches.clone())).collect(),
-        methods: station.methods.clone(),
-        default_method: station.default_method.clone(),
-        linking: Linking {
-            near: linking.near,
-            slice_us: seconds(linking.slice_minutes) * 60,
-            code_after_us: seconds(linking.code_after_s),
-            repeat_print_us: seconds(linking.repeat_print_s),
-            intention_us: seconds(linking.intention_hours) * 3_600,
-            slice_aloud_us: seconds(linking.slice_aloud_minutes) * 60,
-        },
-    };
-    let instruments =
-        station.instruments.iter().filter_map(|i| Some(instrument(i, profiles.get(i.profile.as_str())?, time_passes))).collect();
-    DeskSetup {
-        station: station.lab.station.as_str().into(),
-        state_dir: state_dir.display().to_string(),
-        lab,
-        instruments,
-        settings: settings_text(station),
-        retain_days: station.mqtt.retain_days,
-    }
-}
-
-/// In a virtual day hours pass in no time: silence then means nothing.
-fn instrument(i: &Instrument, profile: &Arc<Profile>, time_passes: bool) -> InstrumentSetup {
-    let mut decoder = profile.decoder();
-    InstrumentSetup {
-        name: i.name.clone(),
-        kind: match i.kind {
-            InstrumentKind::Balance => Kind::Balance,
-            InstrumentKind::Counter => Kind::Counter,
-            InstrumentKind::Scanner => Kind::Scanner,
-        },
-        benches: i.benches.clone(),
-        profile: i.profile.as_str().into(),
-        port: i.port.path.clone(),
-        settle: i.settle,
-        count: i.count,
-        streams: time_passes && i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
-        decode: Box::new(move |bytes| decoder.decode(bytes)),
-    }
-}
-
-/// The settings in full, as the ledger keeps them. Secrets live in files of their own and are named only.
-fn settings_text(station: &Station) -> String {
-    let instruments: Vec<_> = station
-        .instruments
-        .iter()
-        .map(|i| {
-            json!({"name": i.name, "kind": i.kind.word(), "benches": i.benches, "port": i.port, "profile": i.profile,
-                   "settle": i.settle, "count": i.count})
-        })
-        .collect();
-    let profiles: BTreeMap<_, _> =
-        station.instruments.iter().filter_map(|i| station.profiles.get(&i.profile)).map(|p| (p.name.as_str(), &p.text)).collect();
-    let linking = &station.linking;
-    json!({
-        "program": env!("CARGO_PKG_VERSION"), "laboratory": station.lab.name, "station": station.lab.station,
-        "benches": station.benches.iter().map(|b| &b.name).collect::<Vec<_>>(),
-        "instruments": instruments, "profiles": profiles, "methods": station.methods, "default_method": station.default_method,
-        "linking": {"near_ug": linking.near, "slice_minutes": linking.slice_minutes, "code_after_s": linking.code_after_s,
-                    "repeat_print_s": linking.repeat_print_s, "intention_hours": linking.intention_hours,
-                    "slice_aloud_minutes": linking.slice_aloud_minutes},
-        "mqtt": {"root": station.mqtt.root, "retain_days": station.mqtt.retain_days},
-    })
-    .to_string()
+pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, key: Option<Key>, time_passes: bool) -> DeskSetup {
+    let kept = settings::Kept::of(station, key.as_ref(), time_passes);
+    let text = kept.text();
+    DeskSetup { key, ..kept.setup(profiles, text, state_dir.display().to_string()) }
 }

@@ -6,6 +6,7 @@ mod world;
 
 use super::{FAILED, LogForm, NOT_COMPLETE, WRONG_INPUT, start_log, tell};
 use crate::clock::VirtualClock;
+use crate::keys::Key;
 use crate::service::{Plan, Service, Tap, Told};
 use crate::signals;
 use std::io::Write;
@@ -148,6 +149,8 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
         clock: clock.clone(),
         time_passes: false,
         any_broker_port: args.mqtt.is_none(),
+        // A demonstration's record is thrown away; its key with it.
+        key: Key::random().ok(),
         tap: args.json.then(json_tap),
         told: Some(teller(args.json, Arc::clone(&results))),
     };
