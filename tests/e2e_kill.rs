@@ -11,6 +11,7 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::time::{Duration, Instant};
 use tarecup::ledger::{InputKind, Reader, verify};
+use tarecup::proof::prove;
 
 /// A small specimen: E4's first two trials and a third, in containers of its own.
 fn specimen(no: usize) -> Sheet {
@@ -86,6 +87,9 @@ fn undisturbed() -> Value {
 
 /// The stored record by itself: chain, numbers, and each line once.
 fn record_is_sound(station: &Station, told: &[Value]) -> (u64, u64) {
+    // Across every kill: documents follow from facts, and facts from what was heard.
+    let proof = prove(&station.state, &[], true, &mut |_| ()).expect("it can be read");
+    assert_eq!((proof.first_bad(), proof.redecided), (None, Some(vec![])));
     let report = verify(&station.state, None, &mut |_| ()).expect("it can be read");
     assert!(report.ok(), "{:?}", report.first_bad);
     let reader = Reader::open(&station.state).expect("it opens");

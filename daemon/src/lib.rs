@@ -6,6 +6,7 @@
 #![forbid(unsafe_code)]
 
 pub mod asks;
+pub mod backup;
 pub mod clock;
 pub mod command;
 pub mod desk;

@@ -14,6 +14,7 @@ macro_rules! say {
 }
 
 mod ask;
+mod backup;
 mod check;
 mod demo;
 mod files;
@@ -77,6 +78,10 @@ enum Verb {
     Ask(ask::AskArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
+    /// Make a proven copy of the ledger, also while the service runs.
+    Backup(backup::BackupArgs),
+    /// Put a backup in the place of a ledger.
+    Restore(backup::RestoreArgs),
     /// Prove that a ledger is as it was written.
     Verify(verify::VerifyArgs),
     /// List serial ports by their stable paths.
@@ -110,6 +115,8 @@ pub fn main() -> ExitCode {
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
         Verb::Verify(args) => verify::run(&args),
+        Verb::Backup(args) => backup::backup(&args),
+        Verb::Restore(args) => backup::restore(&args),
     })
 }
 

@@ -215,6 +215,7 @@ impl Desk {
             "not_recording": self.not_recording, "ledger": tail.id.to_string(), "epoch": tail.epoch, "seq": tail.last_seq,
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
+            "backup": crate::backup::Note::read(std::path::Path::new(&self.setup.state_dir)).view(),
             "instruments": instruments, "benches": benches,
         })
     }

@@ -10,6 +10,7 @@
 //! Facts come in and go out as the JSON bytes that were stored: nothing here
 //! serialises them again.
 
+mod backup;
 mod chain;
 mod error;
 mod heads;
@@ -20,6 +21,7 @@ mod schema;
 mod verify;
 mod writer;
 
+pub use backup::{Proven, Restored, copy, prove, restore};
 pub use chain::{Digest, LedgerId};
 pub use error::LedgerError;
 pub use heads::SignedHead;

@@ -232,6 +232,12 @@ impl Reader {
         self.one(&sql, (kind,), fact)
     }
 
+    /// Epochs, each with the first fact it holds for, oldest first.
+    pub fn epochs(&self) -> Result<Vec<(u64, u64)>, LedgerError> {
+        let sql = "SELECT epoch, first_seq FROM epoch ORDER BY epoch";
+        self.list(sql, (), |row| Ok((number(row, 0)?, number(row, 1)?)))
+    }
+
     /// All facts of a kind, oldest first.
     pub fn facts_of_kind(&self, kind: &str) -> Result<Vec<FactStored>, LedgerError> {
         let sql = format!("SELECT {RAW_FACT} FROM fact WHERE kind = ?1 ORDER BY seq");

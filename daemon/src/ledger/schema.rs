@@ -128,8 +128,18 @@ WHEN NEW.id IS NOT OLD.id OR NEW.one IS NOT OLD.one OR NEW.epoch < OLD.epoch
 BEGIN SELECT RAISE(ABORT, 'the ledger keeps its name, and its epoch only rises'); END;
 ";
 
-/// Signed heads.
+/// Signed heads, and from which fact on an epoch holds.
 const LAYOUT_2: &str = "
+CREATE TABLE epoch (
+    epoch INTEGER PRIMARY KEY,
+    first_seq INTEGER NOT NULL,
+    at_utc_us INTEGER NOT NULL
+) STRICT;
+INSERT INTO epoch (epoch, first_seq, at_utc_us) SELECT epoch, 1, created_utc_us FROM ledger;
+CREATE TRIGGER epoch_no_update BEFORE UPDATE ON epoch
+BEGIN SELECT RAISE(ABORT, 'epochs are never changed'); END;
+CREATE TRIGGER epoch_no_delete BEFORE DELETE ON epoch
+BEGIN SELECT RAISE(ABORT, 'epochs are never deleted'); END;
 CREATE TABLE signed_head (
     seq INTEGER PRIMARY KEY,
     hash BLOB NOT NULL CHECK (length(hash) = 32),
@@ -311,6 +321,9 @@ fn migrate_by(steps: &[&str], version: i32, conn: &mut Connection, birth: &Birth
     if version == 0 {
         let row = (birth.id.to_string(), birth.utc_us);
         tx.execute("INSERT INTO ledger (one, id, epoch, created_utc_us) VALUES (1, ?1, 1, ?2)", row)?;
+        if steps.len() > 1 {
+            tx.execute("INSERT INTO epoch (epoch, first_seq, at_utc_us) VALUES (1, 1, ?1)", [birth.utc_us])?;
+        }
         tx.pragma_update(None, "application_id", APPLICATION_ID)?;
     }
     tx.pragma_update(None, "user_version", steps.len() as i32)?;
@@ -337,7 +350,7 @@ mod tests {
         migrate_by(&broken, 0, &mut conn, &BIRTH).expect_err("the second step is broken");
         assert_eq!(state(&conn), (0, 0, 0));
 
-        migrate_by(STEPS, 0, &mut conn, &BIRTH).expect("the first layout");
+        migrate_by(&STEPS[..1], 0, &mut conn, &BIRTH).expect("the first layout");
         let first = state(&conn);
         assert_eq!((first.0, first.1), (APPLICATION_ID, 1));
         migrate_by(&broken, 1, &mut conn, &BIRTH).expect_err("the second step is broken");

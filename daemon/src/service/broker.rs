@@ -147,7 +147,11 @@ impl Past for LedgerPast {
     fn facts_after(&self, seq: u64, limit: usize) -> Result<Vec<(u64, Bytes)>, String> {
         let reader = Reader::open(&self.path).map_err(|e| e.to_string())?;
         let facts = reader.facts_after(seq, limit).map_err(|e| e.to_string())?;
-        Ok(facts.iter().map(|f: &FactStored| (f.seq, fact_payload(&self.ledger, &f.body))).collect())
+        // A fact keeps the epoch in which it was made, also when a backup has been restored since.
+        let epochs = reader.epochs().map_err(|e| e.to_string())?;
+        let epoch = |seq| epochs.iter().rfind(|(_, first)| *first <= seq).map_or(self.ledger.1, |(epoch, _)| *epoch);
+        let payload = |f: &FactStored| fact_payload(&(self.ledger.0.clone(), epoch(f.seq)), &f.body);
+        Ok(facts.iter().map(|f| (f.seq, payload(f))).collect())
     }
 }
 

@@ -8,6 +8,7 @@ mod settings;
 pub use broker::fact_payload;
 pub use settings::{Profiles, setup_of};
 
+use crate::backup::{self, Keeper};
 use crate::clock::{BootClock, boot_id};
 use crate::desk::inbox::Inbox;
 use crate::desk::{Desk, DeskSetup, Seat, SeatSettings};
@@ -119,6 +120,7 @@ pub struct Service {
     broker_name: String,
     clock: Arc<dyn BootClock>,
     state_dir: PathBuf,
+    backups: Option<Keeper>,
 }
 
 impl Service {
@@ -166,7 +168,9 @@ impl Service {
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
         let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox);
+        let backups = keep_backups(&station, &state_dir, &clock)?;
         Ok(Service {
+            backups,
             seat,
             ports,
             ports_thread: ports_runtime,
@@ -251,6 +255,9 @@ impl Service {
 
     /// Stops in order: ports close, the desk stores what it has, the broker hears of it.
     pub fn stop(self) -> bool {
+        if let Some(backups) = self.backups {
+            backups.stop();
+        }
         self.ports_thread.stop(self.ports);
         let desk = self.seat.stop();
         let orderly = desk.as_ref().is_some_and(Desk::stopped);
@@ -270,6 +277,17 @@ impl Service {
         self.net_runtime.shutdown_timeout(Duration::from_millis(500));
         orderly
     }
+}
+
+fn keep_backups(station: &Station, state_dir: &Path, clock: &Arc<dyn BootClock>) -> Result<Option<Keeper>, StartError> {
+    let Some(backup) = &station.backup else { return Ok(None) };
+    let plan = backup::Plan {
+        state_dir: state_dir.to_path_buf(),
+        folder: backup.folder.clone(),
+        every_hours: backup.every_hours,
+        keep: backup.keep,
+    };
+    Keeper::start(plan, clock.clone()).map(Some).map_err(StartError::System)
 }
 
 /// The state directory is its owner's alone: ledger and socket lie in it.
