@@ -363,7 +363,8 @@ mod tests {
             .query_row("SELECT id, (SELECT count(*) FROM ledger) FROM ledger", [], |r| Ok((r.get(0)?, r.get(1)?)))
             .expect("row");
         assert_eq!((id, rows), (BIRTH.id.to_string(), 1));
-        assert!(matches!(check_made_by_us(&conn, Path::new("x")), Err(LedgerError::Newer { found: 2, known: 1, .. })));
+        migrate_by(&[LAYOUT_1, LAYOUT_2, "CREATE TABLE more (x INTEGER) STRICT;"], 2, &mut conn, &BIRTH).expect("a third layout");
+        assert!(matches!(check_made_by_us(&conn, Path::new("x")), Err(LedgerError::Newer { found: 3, known: 2, .. })));
     }
 
     /// What a commit's durability rests on.
