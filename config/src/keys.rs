@@ -77,9 +77,8 @@ pub(crate) fn home_of(key: &str) -> Option<&'static str> {
     if ["state_dir", "default_method", "method_files"].contains(&key) {
         return Some("the top of the configuration file, before its first [table]");
     }
-    let homes: [(&[&str], &str); 8] = [
+    let homes: [(&[&str], &str); 7] = [
         (RECORD, "[record] of the configuration file"),
-        (BACKUP, "[backup] of the configuration file"),
         (INSTRUMENT, "an [[instrument]] of the configuration file"),
         (LINKING, "[linking] of the configuration file"),
         (MQTT, "[mqtt] of the configuration file"),

@@ -74,7 +74,10 @@ struct Walk<'a> {
 impl Walk<'_> {
     fn step(&mut self, again: &mut Again, input: &InputStored) -> Result<(), LedgerError> {
         let settings = match self.settings_of(input)? {
-            Some(Err(why)) => return Ok(self.stop(0, why)),
+            Some(Err(why)) => {
+                self.stop(0, why);
+                return Ok(());
+            }
             Some(Ok(setup)) => Some(setup),
             None => None,
         };
