@@ -116,9 +116,18 @@ impl Station {
         command
     }
 
+    pub fn signal(&self, signal: rustix::process::Signal) {
+        self.child.lock().expect("child").as_ref().expect("it runs").signal(signal);
+    }
+
     pub fn start(&self) {
+        self.start_with(&[]);
+    }
+
+    pub fn start_with(&self, environment: &[(&str, &std::ffi::OsStr)]) {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
         let mut command = self.command();
+        command.envs(environment.iter().copied());
         *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
     }
 

@@ -18,3 +18,4 @@ pub mod publish;
 pub mod service;
 pub mod signals;
 pub mod socket;
+pub mod watch;

@@ -4,7 +4,7 @@ use super::{FAILED, LogForm, StateArg, WRONG_INPUT, files, start_log};
 use crate::clock::MachineClock;
 use crate::keys::{self, Key};
 use crate::service::{Plan, Service, StartError};
-use crate::signals;
+use crate::{signals, watch};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::time::Duration;
@@ -82,6 +82,7 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         }
     };
     tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), "recording");
+    watch::ready();
     let Ok((_, stop)) = signals else {
         eprintln!("the system gives no signals; stopping");
         return FAILED;
@@ -94,10 +95,11 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
                 service.stop();
                 return FAILED;
             }
-            Err(std::sync::mpsc::RecvTimeoutError::Timeout) => (),
+            Err(std::sync::mpsc::RecvTimeoutError::Timeout) => watch::look_after(service.inbox()),
             Err(std::sync::mpsc::RecvTimeoutError::Disconnected) => break,
         }
     }
     tracing::info!("stopping in order");
+    watch::stopping();
     if service.stop() { 0 } else { FAILED }
 }

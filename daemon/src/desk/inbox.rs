@@ -48,7 +48,7 @@ pub enum Incoming {
     Delivered(u64),
     /// Whether a broker is connected, and why not.
     Broker(Option<String>),
-    /// Look at the clock; tell when that is done.
+    /// Look at the clock; tell when that is done, with the reason when nothing is being recorded.
     Tick(Reply),
     /// Stop in order.
     Stop,

@@ -130,7 +130,7 @@ fn refuse(desk: &Desk, urgent: Vec<Incoming>, effects: &mut Effects) {
                 };
                 effects.replies.push((reply, answer));
             }
-            Incoming::Tick(reply) => effects.replies.push((reply, String::new())),
+            Incoming::Tick(reply) => effects.replies.push((reply, why.to_string())),
             _ => (),
         }
     }
