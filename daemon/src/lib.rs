@@ -10,6 +10,7 @@ pub mod backup;
 pub mod clock;
 pub mod command;
 pub mod desk;
+pub mod drill;
 pub mod heard;
 pub mod keys;
 pub mod ledger;

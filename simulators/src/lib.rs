@@ -12,6 +12,7 @@ pub mod balance;
 pub mod counter;
 pub mod day;
 pub mod dialect;
+pub mod drill;
 pub mod operator;
 pub mod play;
 pub mod pty;

@@ -17,6 +17,7 @@ mod ask;
 mod backup;
 mod check;
 mod demo;
+mod drill;
 mod files;
 mod ports;
 mod run;
@@ -78,6 +79,8 @@ enum Verb {
     Ask(ask::AskArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
+    /// Drill: what does this set-up catch? Simulated laboratories make mistakes at a known rate.
+    Drill(drill::DrillArgs),
     /// Make a proven copy of the ledger, also while the service runs.
     Backup(backup::BackupArgs),
     /// Put a backup in the place of a ledger.
@@ -115,6 +118,7 @@ pub fn main() -> ExitCode {
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
         Verb::Verify(args) => verify::run(&args),
+        Verb::Drill(args) => drill::run(&args),
         Verb::Backup(args) => backup::backup(&args),
         Verb::Restore(args) => backup::restore(&args),
     })

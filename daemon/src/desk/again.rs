@@ -55,6 +55,27 @@ impl Again {
         Ok(Self { desk })
     }
 
+    /// Begins under these settings with the state of a laboratory, as if the service had just come up.
+    pub fn begin(&mut self, setup: DeskSetup, lab: Option<Lab>, at: Stamp) {
+        self.desk.ears = setup.instruments.iter().map(|i| Ear::new(i, Default::default())).collect();
+        self.desk.lab = lab.unwrap_or_else(|| Lab::new(setup.lab.clone()));
+        self.desk.setup = setup;
+        (self.desk.next_input, self.desk.last_fact_input) = (1, 1);
+        self.desk.group = Group::default();
+        self.desk.decide(Input::Started { program: String::new(), after_orderly_stop: true }, at);
+        self.desk.group = Group::default();
+    }
+
+    /// The state of the laboratory.
+    pub fn lab(&self) -> &Lab {
+        &self.desk.lab
+    }
+
+    /// Microseconds until time alone leads to something.
+    pub fn due_in_us(&self, now: &Stamp) -> Option<i64> {
+        self.desk.due_in_us(now)
+    }
+
     /// What an input leads to: facts with the bytes they would be stored as.
     ///
     /// # Errors

@@ -8,7 +8,9 @@ mod redecided;
 use crate::ledger::{self, KnownHead, LedgerError, Reader, VerifyReport};
 use std::path::Path;
 
+pub(crate) use documents::nothing;
 pub use heads::Heads;
+pub(crate) use redecided::Scratch;
 
 /// Differences listed at most; beyond them the count would say nothing more.
 pub(crate) const MOST_DIFFERENCES: usize = 200;

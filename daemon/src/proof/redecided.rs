@@ -20,14 +20,20 @@ const PAGE: usize = 1_000;
 const FACT_PAGE: usize = 1_000;
 
 /// A folder for the ledger that nothing is written to.
-struct Scratch(PathBuf);
+pub(crate) struct Scratch(PathBuf);
 
 impl Scratch {
-    fn new() -> Result<Self, LedgerError> {
+    pub(crate) fn new() -> Result<Self, LedgerError> {
         let mut random = [0; 8];
         let path = std::env::temp_dir();
         getrandom::fill(&mut random).map_err(|e| LedgerError::Io { path: path.clone(), what: e.to_string() })?;
         Ok(Self(path.join(format!("tarecup-again-{:016x}", u64::from_ne_bytes(random)))))
+    }
+}
+
+impl Scratch {
+    pub(crate) fn path(&self) -> &std::path::Path {
+        &self.0
     }
 }
 
