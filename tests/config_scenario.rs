@@ -215,7 +215,7 @@ fn wrong_and_missing_keys_are_pointed_at() {
         (
             "clay_percent = 34.5\n",
             "clay_percent = 34.5\n@@cone = [{ penetration_mm = 20.1 }]\n",
-            &["no cone method", "[[specimen.liquid]]"],
+            &["no simulated cone", "[[specimen.liquid]]"],
         ),
         ("bench = \"north\"", "bench = @@\"north east\"", &["' ' cannot stand"]),
     ];

@@ -355,6 +355,7 @@ pub fn desk_setup(station: &Station, profiles: &Profiles, state_dir: &Path, time
         instruments: station.instruments.iter().map(|i| (i.name.clone(), i.benches.clone())).collect(),
         methods: station.methods.clone(),
         default_method: station.default_method.clone(),
+        balances: station.instruments.iter().map(|i| (i.name.clone(), i.weighs)).collect(),
         linking: Linking {
             near: linking.near,
             slice_us: seconds(linking.slice_minutes) * 60,

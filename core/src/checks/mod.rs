@@ -110,13 +110,16 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     nobody::check,
 ];
 
-/// Runs every check and puts persons' answers to them.
+/// Runs every check, weighs it as the method says and puts persons' answers to them.
 pub fn all(worked: &Worked) -> Vec<CheckRow> {
     let mut rows = Vec::new();
     for check in ALL {
         check(worked, &mut rows);
     }
     for row in &mut rows {
+        if let Some(severity) = worked.method.severity.get(&row.check) {
+            row.severity = *severity;
+        }
         let answer = worked.sheet.answers.iter().rev().find(|a| a.check == row.check && a.about == row.about);
         row.answered = answer.map(|a| a.says.clone());
     }
@@ -146,8 +149,9 @@ impl<'a> Worked<'a> {
 /// Facts a determination rests on.
 fn facts(trial: &Trial) -> Vec<Seq> {
     let closures = trial.closures.iter().filter_map(|c| c.fact);
+    let penetrations = trial.penetrations.iter().filter_map(|p| p.fact);
     let dry = trial.dry.iter().filter_map(|d| d.fact);
-    in_order(trial.facts.iter().copied().chain(closures).chain(dry).collect())
+    in_order(trial.facts.iter().copied().chain(closures).chain(penetrations).chain(dry).collect())
 }
 
 fn in_order(mut facts: Vec<Seq>) -> Vec<Seq> {

@@ -194,6 +194,7 @@ mod tests {
             at: at(hours),
             by: None,
             typed: false,
+            step: None,
             corrected: None,
         };
         DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }

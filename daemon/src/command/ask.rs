@@ -6,7 +6,7 @@ use serde_json::{Map, Value};
 use std::time::Duration;
 
 /// Members that are numbers; everything else is text.
-const NUMBERS: [&str; 12] = [
+const NUMBERS: [&str; 14] = [
     "seq",
     "limit",
     "no",
@@ -17,6 +17,8 @@ const NUMBERS: [&str; 12] = [
     "celsius",
     "passing_75um_percent",
     "clay_percent",
+    "liquid_limit_oven_dried",
+    "penetration_mm",
     "revision",
     "kind_no",
 ];

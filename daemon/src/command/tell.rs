@@ -30,6 +30,9 @@ pub fn line(r: &Recorded) -> Option<String> {
                 c.run.as_ref().and_then(|r| r.interrupted.as_ref()).map(|w| format!(" INTERRUPTED: {w}")).unwrap_or_default();
             format!("{bench:<8} cup      {:>3} drops{rate}  {whose}{cut}", c.drops)
         }
+        Fact::PenetrationEntered { penetration_mm, bench, specimen } => {
+            format!("{:<8} cone     {penetration_mm:>5.1} mm  {specimen}", bench.as_str())
+        }
         Fact::Weighed(w) => {
             let bench = w.bench.as_ref().map_or("?", |b| b.as_str());
             match &w.link {

@@ -12,6 +12,9 @@ use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
 use tarecup_core::stamp::Stamp;
 
+/// Name of the one document of what all results say together.
+pub(super) const STATISTICS: &str = "all";
+
 /// Version of the payloads.
 const V: u32 = 1;
 
@@ -23,7 +26,7 @@ pub(super) fn of(lab: &Lab, entity: &Entity, seq: u64) -> Option<(String, Value)
         Entity::Bench(name) => lab.bench(name).map(|b| (format!("bench/{name}"), bench(lab, b, seq))),
         // Its counters are the desk's: the desk fills it in.
         Entity::Instrument(name) => Some((format!("instrument/{name}"), Value::Null)),
-        Entity::Loose(_) => None,
+        Entity::Loose(_) | Entity::Statistics => None,
     }
 }
 
@@ -41,7 +44,7 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "in_hand": bench.hand.as_ref().map(|h| json!({"container": h.container, "since": h.since.rfc3339(), "weighed": h.weighing.is_some()})),
         "intention": bench.intention.as_ref().map(|w| json!({"specimen": w.specimen, "intention": w.intention})),
         "slice_owed": bench.owed.as_ref().map(|o| json!({
-            "specimen": o.specimen, "drops": o.drops, "closures": o.counts.len(), "since": o.ended.rfc3339(), "overdue": o.said,
+            "specimen": o.specimen, "drops": o.drops, "penetration_mm": o.penetration_mm, "closures": o.counts.len(), "since": o.ended.rfc3339(), "overdue": o.said,
         })),
         "latest": bench.latest.as_ref().map(|l| json!({
             "seq": l.seq, "mass_g": grams(l.mass), "container": l.container, "role": l.role, "loose": l.loose, "at": l.at.rfc3339(),
@@ -77,9 +80,10 @@ pub(super) fn specimen(s: &Specimen, seq: u64) -> Value {
         .trials
         .iter()
         .map(|t| {
-            let drops = t.counts.last().and_then(|&c| s.count(c)).map(|c| c.drops);
+            let count = t.counts.last().and_then(|&c| s.count(c));
+            let (drops, mm) = (count.map(|c| c.drops), count.and_then(|c| c.penetration_mm));
             json!({
-                "kind": t.kind, "no": t.no, "container": t.container, "drops": drops,
+                "kind": t.kind, "no": t.no, "container": t.container, "drops": drops.filter(|_| mm.is_none()), "penetration_mm": mm,
                 "tare": t.tare.is_some(), "wet": !t.wets.is_empty(), "dry": t.dries.len(),
                 "set_aside": t.set_aside.as_ref().map(|a| a.why.as_str()),
             })
@@ -179,8 +183,8 @@ impl Desk {
     }
 
     fn read_document(&self, kind: &str, id: &str) -> String {
-        if !["specimen", "container", "bench", "instrument", "loose"].contains(&kind) {
-            return refusal("a document is of the kind specimen, container, bench, instrument or loose");
+        if !["specimen", "container", "bench", "instrument", "loose", "statistics"].contains(&kind) {
+            return refusal("a document is of the kind specimen, container, bench, instrument, loose or statistics");
         }
         match self.reader.document(kind, id) {
             Err(e) => refusal(&e.to_string()),
