@@ -21,6 +21,7 @@ mod ports;
 mod run;
 mod status;
 mod tell;
+mod validate;
 mod work;
 
 use clap::{Parser, Subcommand, ValueEnum};
@@ -72,6 +73,8 @@ enum Verb {
     Check(check::CheckArgs),
     /// Compute limits from scenario or sheet files, without instruments.
     Work(work::WorkArgs),
+    /// Work published examples with this program and write a dated report.
+    Validate(validate::ValidateArgs),
     /// Ask the running service for something.
     Ask(ask::AskArgs),
     /// How the running service is doing.
@@ -103,6 +106,7 @@ pub fn main() -> ExitCode {
         Verb::Run(args) => run::run(args, cli.log),
         Verb::Check(args) => check::run(&args),
         Verb::Work(args) => work::run(&args),
+        Verb::Validate(args) => validate::run(&args),
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
