@@ -145,6 +145,12 @@ fn wrong_methods_are_pointed_at() {
         };
         expect_fault(&text, words, |t| methods::parse("it.toml", t));
     }
+    let cone = OWN.replacen("how = \"flow-line\"", "how = \"cone\"", 1);
+    let faults = methods::parse("it.toml", &cone).expect_err("a cone method with drops").to_string();
+    assert!(faults.contains("it.toml:5:1") && faults.contains("add [cone] with its numbers"), "{faults}");
+    assert!(faults.contains("it.toml:8:1") && faults.contains("which has no drops"), "{faults}");
+    let weighed = OWN.replacen("[rounding]", "[severity]\n@@thread = \"hold\"\n[rounding]", 1);
+    expect_fault(&weighed, &["severity.thread", "no check of this name"], |t| methods::parse("it.toml", t));
     let twice = inside().replacen("title", "@@name = \"own\"\ntitle", 1);
     expect_fault(&twice, &["method, own: name", "taking this line out"], |t| station::parse("it.toml", t));
     let named = inside().replacen("decimals = 0", "@@decimals = 7", 1);

@@ -209,6 +209,15 @@ fn what_a_laboratory_meets_comes_out_as_numpy_has_it() {
     println!("{} specimens in {:.1} s", sheets.len(), ended.took.as_secs_f64());
 }
 
+/// A limit without what the record of other specimens puts in it, which `work` does not have.
+fn without_record(limit: &Value) -> Value {
+    let mut limit = limit.clone();
+    if let Value::Object(members) = &mut limit {
+        members.retain(|k, _| !["u", "interval_95", "u_from"].contains(&k.as_str()));
+    }
+    limit
+}
+
 /// `work --json` on the same file: the same numbers, no revision, no ledger.
 fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
     let ended = tarecup(&["work", &file.display().to_string(), "--json"]);
@@ -221,7 +230,7 @@ fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
         for part in
             ["liquid_limit", "plastic_limit", "plasticity_index", "natural_water_percent", "liquidity_index", "group", "method"]
         {
-            assert_eq!(worked[part], played[part], "{} {part}", sheet.id);
+            assert_eq!(without_record(&worked[part]), without_record(&played[part]), "{} {part}", sheet.id);
         }
         let row = |t: &Value| -> Vec<Value> {
             ["kind", "no", "drops", "closures", "container", "tare_g", "wet_g", "dry_g", "water_percent", "used"]

@@ -95,7 +95,7 @@ fn each_check_speaks_when_it_should() {
         (|s| s.trials[0].penetrations[0].mm = 0.0, "no_penetration", "cone 1", Hold, false),
         (|s| s.trials[0].penetrations[0].mm = f64::NAN, "no_penetration", "cone 1", Hold, false),
         (|s| s.trials[0].penetrations[0].mm = 15.5, "penetrations", "cone 1", Note, true),
-        (|s| drop(s.trials[0].penetrations.pop()), "single_penetration", "cone 1", Note, true),
+        (|s| s.trials[0].penetrations.truncate(1), "single_penetration", "cone 1", Note, true),
         (|s| s.trials[0].penetrations = cone(1, &[14.0, 14.2]).penetrations, "penetration_range", "cone 1", Note, true),
         (|s| (s.trials[0].penetrations, s.trials[1].penetrations) = shallow(), "both_sides", "liquid limit", Note, true),
         (|s| s.trials[0].penetrations[0].typed = true, "typed", "cone 1", Note, true),

@@ -84,7 +84,7 @@ pub fn group_of_non_plastic(liquid_limit: Option<f64>) -> Group {
 pub fn organic(liquid_limit: f64, oven_dried: f64) -> Option<Group> {
     let ratio = oven_dried / liquid_limit;
     let group = if liquid_limit < 50.0 { Group::Ol } else { Group::Oh };
-    (ratio >= 0.0 && ratio < 0.75).then_some(group)
+    (0.0..0.75).contains(&ratio).then_some(group)
 }
 
 /// Plasticity by the liquid limit, EN ISO 14688-2: low below 35, intermediate to 50, high above.

@@ -7,6 +7,7 @@ use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
 use tarecup_core::lab::Lab;
 use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
+use tarecup_core::lab::statistics::Sums;
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
@@ -116,6 +117,17 @@ pub fn limits(limits: &Limits, revision: u32, seq: u64, at: Option<String>, chan
     Value::Object(view)
 }
 
+/// How far the laboratory's own finished trials lie from their lines and its thread containers from their means.
+fn own_scatter(lab: &Lab) -> Value {
+    let one = |sums: Sums| {
+        let pooled = sums.pooled();
+        let sd = (pooled.df > 0).then(|| pooled.variance().sqrt());
+        json!({"sd_percent": sd, "degrees_of_freedom": pooled.df, "specimens": sums.specimens})
+    };
+    let all = lab.statistics();
+    json!({"cup": one(all.cup), "cone": one(all.cone), "threads": one(all.threads)})
+}
+
 impl Desk {
     pub(super) fn limits_view(&self, r: &Recorded) -> Option<Value> {
         let Fact::LimitsComputed { revision, changed, limits: body, .. } = &r.fact else { return None };
@@ -216,7 +228,7 @@ impl Desk {
             "not_recording": self.not_recording, "ledger": tail.id.to_string(), "epoch": tail.epoch, "seq": tail.last_seq,
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
-            "instruments": instruments, "benches": benches,
+            "instruments": instruments, "benches": benches, "own_scatter": own_scatter(&self.lab),
         })
     }
 }
