@@ -108,6 +108,22 @@ fn a_penetration_is_corrected_and_taken_back() {
 }
 
 #[test]
+fn the_oven_dried_limit_tells_organic_soil() {
+    let mut play = Play::open();
+    let open =
+        |id: &str, limit: &str| format!(r#"{{"ask":"open_specimen","specimen":"{id}","liquid_limit_oven_dried":{limit}}}"#);
+    for limit in ["0.0", "-1.0", "1000.0"] {
+        assert!(play.refused(&open("S-9", limit)).contains("between 0 and 1000"), "{limit}");
+    }
+    play.ask(&open("S-9", "30.0"));
+    assert_eq!(play.specimen("S-9").liquid_limit_oven_dried, Some(30.0));
+    play.restart();
+    weigh_all(&mut play, "S-9", [40.7, 42.4, 44.0]);
+    assert_eq!(limits(&play, "S-9").group.as_deref(), Some("OL"));
+    assert!(limits(&play, "S-9").checks.iter().any(|c| c.check == "organic" && c.says.contains("cooler")));
+}
+
+#[test]
 fn undo_takes_back_the_latest_penetration() {
     let mut play = at_the_cone();
     penetrate(&mut play, 16.0);
@@ -119,10 +135,16 @@ fn undo_takes_back_the_latest_penetration() {
 /// One specimen in the cup from tares to dry masses; its four slices hold 10 g of dry soil, its threads too.
 fn finished(play: &mut Play, id: &str, waters: [f64; 3]) {
     play.ask(&format!(r#"{{"ask":"open_specimen","specimen":"{id}"}}"#));
+    weigh_all(play, id, waters);
+}
+
+fn weigh_all(play: &mut Play, id: &str, waters: [f64; 3]) {
     play.ask(r#"{"ask":"intend_nothing","bench":"north"}"#);
     let name = |n: usize| format!("{}{n}", id.replace("S-", "K"));
     let with = |water: f64| format!("{:.2}", 30.0 + water / 10.0);
-    (0..5).for_each(|n| drop(play.weigh(&name(n), "20.00")));
+    for n in 0..5 {
+        play.weigh(&name(n), "20.00");
+    }
     play.intend("north", id, "liquid");
     for (n, (drops, water)) in [32, 24, 17].into_iter().zip(waters).enumerate() {
         play.count(drops);
@@ -136,7 +158,9 @@ fn finished(play: &mut Play, id: &str, waters: [f64; 3]) {
     play.oven("into_oven", &all);
     play.wait(20 * HOUR);
     play.oven("out_of_oven", &all);
-    all.iter().for_each(|c| drop(play.weigh(c, "30.00")));
+    for container in all {
+        play.weigh(container, "30.00");
+    }
 }
 
 fn limits<'p>(play: &'p Play, id: &str) -> &'p Limits {
@@ -164,6 +188,9 @@ fn finished_results_speak_together_and_corrections_take_back() {
     let revision = play.specimen("S-2").revision;
     play.weigh("K20", "20.00");
     assert_eq!(play.specimen("S-2").revision, revision);
+    let before = limits(&play, "S-2").clone();
+    play.ask(r#"{"ask":"review","specimen":"S-2","who":"KL"}"#);
+    assert_eq!(*limits(&play, "S-2"), Limits { state: State::Reviewed, ..before }, "what was reviewed is what was seen");
     play.restart();
 
     let both = *play.lab.statistics();

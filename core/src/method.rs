@@ -234,6 +234,9 @@ pub struct Drying {
     pub constant_hours: f64,
     /// Oven temperature, °C, from–to.
     pub oven_celsius: [f64; 2],
+    /// Which soils want another temperature, for people.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub note: Option<String>,
 }
 
 /// What happens to a value exactly half way.

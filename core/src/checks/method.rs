@@ -315,7 +315,7 @@ const OF_PRECISION: [&str; 4] = [
 ];
 
 /// Checks whose weight a method may say. What is missing or impossible is so in every method.
-const WEIGHED: [&str; 28] = [
+const WEIGHED: [&str; 29] = [
     "arithmetic",
     "both_sides",
     "closures",
@@ -328,6 +328,7 @@ const WEIGHED: [&str; 28] = [
     "interrupted",
     "nobody",
     "not_dry",
+    "organic",
     "oven_clock",
     "oven_record",
     "penetration_range",
@@ -347,12 +348,13 @@ const WEIGHED: [&str; 28] = [
 ];
 
 /// Choices, which may have a source too.
-const CHOICES: [&str; 8] = [
+const CHOICES: [&str; 9] = [
     "liquid.how",
     "liquid.both_sides",
     "liquid.closure_counts",
     "cone.axes",
     "cone.both_sides",
+    "drying.note",
     "rounding.tie",
     "rounding.index_from",
     "non_plastic.compare",

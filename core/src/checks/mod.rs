@@ -22,6 +22,7 @@ mod missing;
 mod nobody;
 mod non_plastic;
 mod not_obtainable;
+mod organic;
 mod oven_record;
 mod rate;
 mod same_container;
@@ -102,6 +103,7 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     not_obtainable::check,
     non_plastic::check,
     u_line::check,
+    organic::check,
     cone::check,
     same_container::check,
     shares::check,

@@ -33,11 +33,15 @@ impl Lab {
         }
         let mut limits = evaluate_with(&sheet, method, &self.record_without(specimen, method));
         limits.edition.clone_from(&specimen.edition);
+        // What stands keeps the uncertainty it was told with: another specimen is no reason to change it.
+        if let Some(old) = specimen.limits.as_ref().filter(|old| same_content(old, &limits)) {
+            limits = Limits { state: limits.state, ..old.clone() };
+        }
         let reviewed = specimen.reviewed.as_ref().is_some_and(|(of, _)| *of == specimen.revision);
-        if reviewed && limits.state == State::Complete && same_content(specimen.limits.as_ref(), &limits) {
+        if reviewed && limits.state == State::Complete && specimen.limits.as_ref().is_some_and(|old| same_content(old, &limits)) {
             limits.state = State::Reviewed;
         }
-        if specimen.limits.as_ref().is_some_and(|old| same_but_for_the_record(old, &limits)) {
+        if specimen.limits.as_ref() == Some(&limits) {
             return None;
         }
         let changed = changes(specimen.limits.as_ref(), &limits, causes);
@@ -63,10 +67,10 @@ impl Lab {
     }
 }
 
-/// Whether a result is the same but for what the record of other specimens puts
-/// in it. A result that stands is not changed because another one was finished.
-fn same_but_for_the_record(old: &Limits, new: &Limits) -> bool {
-    old == new || without_the_record(old.clone()) == without_the_record(new.clone())
+/// Whether a result is the same but for its state and what the record of other specimens puts in it.
+fn same_content(old: &Limits, new: &Limits) -> bool {
+    let bare = |limits: &Limits| Limits { state: State::Provisional, ..without_the_record(limits.clone()) };
+    bare(old) == bare(new)
 }
 
 fn without_the_record(mut limits: Limits) -> Limits {
@@ -78,14 +82,6 @@ fn without_the_record(mut limits: Limits) -> Limits {
     }
     (limits.plasticity_index.u, limits.plasticity_index.interval_95) = (None, None);
     limits
-}
-
-fn same_content(old: Option<&Limits>, new: &Limits) -> bool {
-    old.is_some_and(|old| {
-        let mut old = old.clone();
-        old.state = new.state;
-        same_but_for_the_record(&old, new)
-    })
 }
 
 /// What is different from the revision before, and which correction led to it, in words.
