@@ -242,6 +242,26 @@ fn one_point_is_the_mean_of_its_trials() {
     assert!(row(&wide, "window", "liquid 1").unwrap().says.contains("add water"));
 }
 
+/// Two exponents, the second from 50 % on: IS 2720-5 has .092 and .120, from memory, not checked against the text.
+#[test]
+fn a_wetter_soil_may_have_another_exponent() {
+    let mut m = method("d4318-one-point");
+    (m.liquid.exponent, m.liquid.exponent_from_50_percent) = (Some(0.092), Some(0.120));
+    m.source.insert("liquid.exponent_from_50_percent".into(), "IS 2720-5 [mem]".into());
+    assert_eq!(m.faults(), []);
+    let ll = |w: f64| {
+        let s = sheet(vec![with_water(liquid(1, 22), w), with_water(liquid(2, 22), w)]);
+        evaluate(&s, &m).liquid_limit.unwrap().value
+    };
+    assert!((ll(40.0) - 40.0 * 0.88f64.powf(0.092)).abs() < 1e-12);
+    assert!((ll(60.0) - 60.0 * 0.88f64.powf(0.120)).abs() < 1e-12);
+    m.liquid.exponent_from_50_percent = Some(1.5);
+    assert_eq!(m.faults()[0].0, "liquid.exponent_from_50_percent");
+    let mut line = d4318();
+    line.liquid.exponent_from_50_percent = Some(0.12);
+    assert!(line.faults().iter().any(|(key, says)| key == "liquid.exponent_from_50_percent" && says.contains("leave it out")));
+}
+
 #[test]
 fn one_trial_gives_no_line_and_says_so() {
     let limits = after(|s| drop(s.trials.drain(1..3)));

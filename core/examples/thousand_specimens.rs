@@ -7,6 +7,7 @@ use tarecup_core::method::Method;
 use tarecup_core::names::{ContainerId, InstrumentName, SpecimenId};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sheet::{Closure, DryWeighing, Kind, Reading, Sheet, Trial};
+use tarecup_core::soil::slopes::Slopes;
 use tarecup_core::soil::uncertainty::{Balance, Laboratory, Pooled};
 
 const METHOD: &str = include_str!("../../config/methods/d4318-multipoint.toml");
@@ -79,6 +80,7 @@ fn main() {
     let laboratory = Laboratory {
         lines: Pooled { sum_sq: 1.2, df: 40 },
         threads: Pooled { sum_sq: 3.0, df: 40 },
+        slopes: Slopes::default(),
         balances: [(InstrumentName::new("pan-1").expect("a name"), Balance::default())].into(),
     };
     let begin = Instant::now();

@@ -49,6 +49,7 @@ pub fn evaluate_with(sheet: &Sheet, method: &Method, laboratory: &Laboratory) ->
         plastic: plastic.as_ref(),
         index: &index,
         trials: &trials,
+        laboratory,
     };
     let checks = checks::all(&worked);
     let state = state(sheet, &trials, &checks);

@@ -199,6 +199,9 @@ pub struct Liquid {
     /// Exponent of the one-point formula `LL = w · (N/25)^exponent`.
     #[serde(default)]
     pub exponent: Option<f64>,
+    /// Exponent in its place where the limit comes to 50 % or more by the first.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub exponent_from_50_percent: Option<f64>,
     /// What the balance must show at least, grams.
     pub balance_reads_g: f64,
     /// Wet soil of a slice, grams, at least.

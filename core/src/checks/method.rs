@@ -183,6 +183,14 @@ impl Method {
             }
             _ => {}
         }
+        let wetter = self.liquid.exponent_from_50_percent;
+        if wetter.is_some() && self.liquid.exponent.is_none() {
+            let says = "the method has no exponent that this one could take the place of: leave it out";
+            fault(faults, "liquid.exponent_from_50_percent", says.to_owned());
+        } else if let Some(e) = wetter.filter(|e| !(*e > 0.0 && *e < 1.0)) {
+            let says = format!("{e} is no exponent of the one-point formula: write a number between 0 and 1");
+            fault(faults, "liquid.exponent_from_50_percent", says);
+        }
     }
 
     fn ranges(&self, faults: &mut Faults) {
@@ -254,6 +262,7 @@ impl Method {
             ("liquid.windows", !self.liquid.windows.is_empty()),
             ("liquid.spread_at_least", self.liquid.spread_at_least.is_some()),
             ("liquid.exponent", self.liquid.exponent.is_some()),
+            ("liquid.exponent_from_50_percent", self.liquid.exponent_from_50_percent.is_some()),
             ("liquid.mass_from_g", self.liquid.mass_from_g.is_some()),
             ("plastic.mass_from_g", self.plastic.mass_from_g.is_some()),
             ("plastic.agree_within_percent", self.plastic.agree_within_percent.is_some()),

@@ -43,6 +43,7 @@ use crate::sheet::{Kind, Seq, Sheet, Trial};
 use crate::soil::determined::Determined;
 use crate::soil::flow::FlowLine;
 use crate::soil::limits::NoLiquid;
+use crate::soil::uncertainty::Laboratory;
 use alloc::borrow::ToOwned;
 use alloc::format;
 use alloc::string::String;
@@ -76,6 +77,8 @@ pub struct Worked<'a> {
     pub plastic: Option<&'a PlasticLimit>,
     /// The plasticity index.
     pub index: &'a PlasticityIndex,
+    /// What the laboratory's own record says. It moves with every finished specimen: no hold may rest on it.
+    pub laboratory: &'a Laboratory,
 }
 
 /// Every check, in the order in which a person works: what is missing, single

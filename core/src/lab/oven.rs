@@ -274,7 +274,7 @@ mod tests {
 
     #[test]
     fn dry_by_hours_or_by_constant_mass() {
-        let rule = Drying { hours: 15.0, constant_percent: 0.1, constant_hours: 1.0, oven_celsius: [105.0, 115.0] };
+        let rule = Drying { hours: 15.0, constant_percent: 0.1, constant_hours: 1.0, oven_celsius: [105.0, 115.0], note: None };
         let d = |mass: i64, hours: f64, back: Option<f64>| DryWeighing {
             mass: Mass::from_ug(mass),
             oven_hours: Some(hours),

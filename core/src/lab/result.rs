@@ -62,6 +62,7 @@ impl Lab {
         Laboratory {
             lines: others.lines(method.device()).pooled(),
             threads: others.threads.pooled(),
+            slopes: others.slopes,
             balances: self.setup.balances.clone(),
         }
     }

@@ -8,6 +8,7 @@
 use crate::limits::{Limits, LiquidLimit, State};
 use crate::method::Device;
 use crate::sheet::Kind;
+use crate::soil::slopes::Slopes;
 use crate::soil::stats;
 use crate::soil::uncertainty::Pooled;
 use alloc::vec::Vec;
@@ -17,8 +18,6 @@ use serde::{Deserialize, Serialize};
 const PARTS: f64 = 1e9;
 /// A specimen counts no more than this, (percent water)²: beyond it something else is wrong.
 const MOST: f64 = 1e4;
-/// Parts of one percent, and of its square, in the sums of the chart of slopes.
-const COARSE: f64 = 1e6;
 
 /// Squares and degrees of freedom.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
@@ -29,23 +28,6 @@ pub struct Sums {
     pub df: u64,
     /// Specimens in it.
     pub specimens: u64,
-}
-
-/// Slopes of flow lines against liquid limits, one pair of each specimen.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
-pub struct Slopes {
-    /// Specimens in it.
-    pub n: u64,
-    /// Sum of liquid limits, 10⁻⁶ percent.
-    pub limit: i64,
-    /// Sum of slopes per decade, 10⁻⁶ percent.
-    pub slope: i64,
-    /// Sum of squares of liquid limits, 10⁻⁶ (percent)².
-    pub limit_sq: i64,
-    /// Sum of products, 10⁻⁶ (percent)².
-    pub product: i64,
-    /// Sum of squares of slopes, 10⁻⁶ (percent)².
-    pub slope_sq: i64,
 }
 
 /// What all finished results say together.
@@ -83,60 +65,6 @@ impl Sums {
     /// As uncertainties use it.
     pub fn pooled(self) -> Pooled {
         Pooled { sum_sq: self.sum_sq as f64 / PARTS, df: self.df }
-    }
-}
-
-impl Slopes {
-    fn of(limit: f64, slope: f64) -> Slopes {
-        let within = |v: f64| v.is_finite() && libm::fabs(v) <= MOST;
-        if !(within(limit) && within(slope)) {
-            return Slopes::default();
-        }
-        let parts = |v: f64| libm::round(v * COARSE) as i64;
-        Slopes {
-            n: 1,
-            limit: parts(limit),
-            slope: parts(slope),
-            limit_sq: parts(limit * limit),
-            product: parts(limit * slope),
-            slope_sq: parts(slope * slope),
-        }
-    }
-    fn plus(self, other: Slopes) -> Slopes {
-        Slopes {
-            n: self.n.saturating_add(other.n),
-            limit: self.limit.saturating_add(other.limit),
-            slope: self.slope.saturating_add(other.slope),
-            limit_sq: self.limit_sq.saturating_add(other.limit_sq),
-            product: self.product.saturating_add(other.product),
-            slope_sq: self.slope_sq.saturating_add(other.slope_sq),
-        }
-    }
-    fn minus(self, other: Slopes) -> Slopes {
-        Slopes {
-            n: self.n.saturating_sub(other.n),
-            limit: self.limit.saturating_sub(other.limit),
-            slope: self.slope.saturating_sub(other.slope),
-            limit_sq: self.limit_sq.saturating_sub(other.limit_sq),
-            product: self.product.saturating_sub(other.product),
-            slope_sq: self.slope_sq.saturating_sub(other.slope_sq),
-        }
-    }
-
-    /// The slope that soils of this liquid limit have here, with the standard
-    /// deviation of single ones about it; from ten specimens on.
-    pub fn expected(&self, limit: f64) -> Option<(f64, f64)> {
-        if self.n < 10 {
-            return None;
-        }
-        let n = self.n as f64;
-        let [x, y, xx, xy, yy] = [self.limit, self.slope, self.limit_sq, self.product, self.slope_sq].map(|v| v as f64 / COARSE);
-        let (sxx, sxy, syy) = (xx - x * x / n, xy - x * y / n, yy - y * y / n);
-        let slope = if sxx > 0.0 { sxy / sxx } else { 0.0 };
-        let rest = (syy - slope * sxy).max(0.0);
-        let expected = y / n + slope * (limit - x / n);
-        let sd = libm::sqrt(rest / (n - 2.0));
-        (expected.is_finite() && sd.is_finite()).then_some((expected, sd))
     }
 }
 
@@ -233,18 +161,5 @@ mod tests {
         assert_eq!(sums, Statistics::default());
         assert_eq!(Sums::of(f64::NAN, 1), Sums::default());
         assert_eq!(Slopes::of(f64::INFINITY, 1.0), Slopes::default());
-    }
-
-    #[test]
-    fn slopes_follow_the_limits() {
-        let mut slopes = Slopes::default();
-        for i in 0..20 {
-            let limit = 25.0 + 2.0 * f64::from(i);
-            let off = if i % 2 == 0 { 0.5 } else { -0.5 };
-            slopes = slopes.plus(Slopes::of(limit, -0.2 * limit + off));
-        }
-        let (expected, sd) = slopes.expected(50.0).unwrap();
-        assert!((expected + 10.0).abs() < 0.1 && (sd - 0.53).abs() < 0.05, "{expected} {sd}");
-        assert_eq!(Slopes { n: 9, ..slopes }.expected(50.0), None);
     }
 }

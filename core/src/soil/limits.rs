@@ -105,7 +105,8 @@ fn by_one_point(points: &[(f64, f64)], method: &Method) -> Result<LiquidLimit, N
     if points.is_empty() {
         return Err(NoLiquid::TooFew(0));
     }
-    let limits: Vec<f64> = points.iter().map(|&(drops, water)| one_point(drops, water, exponent)).collect();
+    let limit = |&(drops, water): &(f64, f64)| one_point(drops, water, exponent_for(drops, water, exponent, method));
+    let limits: Vec<f64> = points.iter().map(limit).collect();
     let value = stats::mean(&limits).ok_or(NoLiquid::OutOfReach(f64::INFINITY))?;
     let u = stats::mean_uncertainty(&limits);
     let half = u.and_then(|u| Some(u * super::student::two_sided(CONFIDENCE, limits.len() as u64 - 1)?));
@@ -122,6 +123,12 @@ fn by_one_point(points: &[(f64, f64)], method: &Method) -> Result<LiquidLimit, N
         residual_sd: None,
         how: "one point".to_string(),
     })
+}
+
+/// The exponent for a trial: a method may have another one for wetter soils.
+pub fn exponent_for(drops: f64, water: f64, exponent: f64, method: &Method) -> f64 {
+    let wet = one_point(drops, water, exponent) >= 50.0;
+    method.liquid.exponent_from_50_percent.filter(|e| wet && e.is_finite()).unwrap_or(exponent)
 }
 
 /// The plastic limit: mean of the thread determinations, `u = sd/√n`. `None`

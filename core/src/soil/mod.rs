@@ -11,6 +11,7 @@ pub mod limits;
 pub mod line;
 pub mod precision;
 pub mod rounding;
+pub mod slopes;
 pub mod stats;
 pub mod student;
 pub mod uncertainty;

@@ -12,6 +12,7 @@
 use super::determined::Determined;
 use super::flow::FlowLine;
 use super::limits::CONFIDENCE;
+use super::slopes::Slopes;
 use super::student;
 use crate::limits::{LiquidLimit, PlasticLimit, PlasticityIndex};
 use crate::method::{Device, LiquidHow, Method, Uncertainty};
@@ -55,6 +56,8 @@ pub struct Laboratory {
     pub lines: Pooled,
     /// Thread containers about their means; the specimen itself left out.
     pub threads: Pooled,
+    /// Slopes of flow lines in the cup against liquid limits; the specimen itself left out.
+    pub slopes: Slopes,
     /// Its balances.
     pub balances: BTreeMap<InstrumentName, Balance>,
 }
@@ -273,6 +276,7 @@ fn by_one_point<'a>(trials: &[Determined<'a>], method: &Method, stated: &Uncerta
     for t in points {
         let Some((drops, water)) = t.liquid_point() else { continue };
         let weighed = known.water(t).unwrap_or_default();
+        let exponent = super::limits::exponent_for(drops, water, exponent, method);
         let along = exponent * water / drops * reading_u(method);
         budget.independent += weight * weight * (weighed.independent + along * along);
         budget.add(weight, &weighed);

@@ -113,6 +113,7 @@ mod tests {
         assert_eq!(text(&["into_oven", "containers=C1, C2"]).unwrap()["containers"][1], "C2");
         assert_eq!(text(&["not_obtainable", "limit=plastic"]).unwrap()["limit"], "plastic");
         assert_eq!(text(&["facts_after", "seq=3", "limit=5"]).unwrap()["limit"], 5);
+        assert_eq!(text(&["type_penetration", "bench=north", "penetration_mm=19.8", "who=AB"]).unwrap()["penetration_mm"], 19.8);
         assert!(text(&["set_aside", "what"]).is_err());
         assert!(text(&["set_aside", "what=x"]).is_err());
         assert_eq!(text(&[r#"{"ask":"status"}"#]).unwrap()["ask"], "status");
