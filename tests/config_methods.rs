@@ -54,7 +54,19 @@ compare = "rounded"
 fn the_shipped_methods_are_right() {
     let shipped = methods::shipped().unwrap_or_else(|f| panic!("{f}"));
     let names: Vec<&str> = shipped.keys().map(|n| n.as_str()).collect();
-    assert_eq!(names, ["d4318-multipoint", "d4318-one-point", "iso17892-cup", "t89-t90"]);
+    assert_eq!(
+        names,
+        [
+            "bs1377-cone",
+            "d4318-multipoint",
+            "d4318-one-point",
+            "is2720-cup",
+            "iso17892-cone-60",
+            "iso17892-cone-80",
+            "iso17892-cup",
+            "t89-t90"
+        ]
+    );
 }
 
 #[test]
@@ -78,7 +90,7 @@ fn an_own_method_is_read_from_the_configuration() {
     let station = station::parse("it.toml", &inside()).unwrap_or_else(|f| panic!("{f}"));
     assert_eq!(station.default_method.as_str(), "own");
     assert_eq!(station.methods[&station.default_method], methods::parse("it.toml", OWN).expect("right"));
-    assert_eq!(station.methods.len(), 5);
+    assert_eq!(station.methods.len(), 9);
 }
 
 #[test]
@@ -133,6 +145,12 @@ fn wrong_methods_are_pointed_at() {
         };
         expect_fault(&text, words, |t| methods::parse("it.toml", t));
     }
+    let cone = OWN.replacen("how = \"flow-line\"", "how = \"cone\"", 1);
+    let faults = methods::parse("it.toml", &cone).expect_err("a cone method with drops").to_string();
+    assert!(faults.contains("it.toml:5:1") && faults.contains("add [cone] with its numbers"), "{faults}");
+    assert!(faults.contains("it.toml:8:1") && faults.contains("which has no drops"), "{faults}");
+    let weighed = OWN.replacen("[rounding]", "[severity]\n@@thread = \"hold\"\n[rounding]", 1);
+    expect_fault(&weighed, &["severity.thread", "no check of this name"], |t| methods::parse("it.toml", t));
     let twice = inside().replacen("title", "@@name = \"own\"\ntitle", 1);
     expect_fault(&twice, &["method, own: name", "taking this line out"], |t| station::parse("it.toml", t));
     let named = inside().replacen("decimals = 0", "@@decimals = 7", 1);

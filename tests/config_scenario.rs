@@ -215,7 +215,7 @@ fn wrong_and_missing_keys_are_pointed_at() {
         (
             "clay_percent = 34.5\n",
             "clay_percent = 34.5\n@@cone = [{ penetration_mm = 20.1 }]\n",
-            &["no cone method", "[[specimen.liquid]]"],
+            &["no simulated cone", "[[specimen.liquid]]"],
         ),
         ("bench = \"north\"", "bench = @@\"north east\"", &["' ' cannot stand"]),
     ];
@@ -228,6 +228,48 @@ fn wrong_and_missing_keys_are_pointed_at() {
             marked.insert_str(header, "@@");
         }
         expect_fault(&marked, words, |t| read(t, Mode::Demo));
+    }
+}
+
+/// A sheet of the cone, with invented figures.
+const CONE: &str = r#"method = "bs1377-cone"
+[[specimen]]
+id = "S-1"
+liquid_limit_oven_dried = 31.5
+[[specimen.cone]]
+penetration_mm = [15.8, 16]
+container = "C1"
+tare_g = 6.91
+wet_g = 84.06
+dry_g = 64.07
+[[specimen.cone]]
+penetration_mm = 18.8
+water_percent = 37.4
+"#;
+
+#[test]
+fn cone_rows_become_cone_trials() {
+    let scenario = read(CONE, Mode::Work).unwrap_or_else(|f| panic!("{f}"));
+    let sheet = to_sheet(&scenario.specimens[0]);
+    assert_eq!(sheet.liquid_limit_oven_dried, Some(31.5));
+    let shown: Vec<_> =
+        sheet.trials.iter().map(|t| (t.kind, t.no, t.penetrations.iter().map(|p| p.mm).collect::<Vec<_>>())).collect();
+    assert_eq!(shown, [(Kind::Cone, 1, vec![15.8, 16.0]), (Kind::Cone, 2, vec![18.8])]);
+    assert!(sheet.trials.iter().all(|t| t.typed && t.penetrations.iter().all(|p| p.typed)), "what `work` reads was typed");
+}
+
+#[test]
+fn wrong_cone_rows_are_pointed_at() {
+    let cases: [(&str, &str, &[&str]); 6] = [
+        ("penetration_mm = 18.8", "penetration_mm = @@0", &["millimetres of penetration, 0.1 to 60"]),
+        ("penetration_mm = 18.8", "penetration_mm = @@\"18\"", &["penetration"]),
+        ("penetration_mm = 18.8", "penetration_mm = @@[]", &["empty list"]),
+        ("[[specimen.cone]]\npenetration_mm = 18.8", "@@[[specimen.cone]]", &["penetration_mm is missing", "19.8"]),
+        ("penetration_mm = 18.8", "@@drops = 25\npenetration_mm = 18.8", &["does not belong here", "[[specimen.liquid]]"]),
+        ("liquid_limit_oven_dried = 31.5", "liquid_limit_oven_dried = @@-3", &["percent of dry mass"]),
+    ];
+    for (right, wrong, words) in cases {
+        expect_fault(&CONE.replacen(right, wrong, 1), words, |t| read(t, Mode::Work));
     }
 }
 

@@ -49,6 +49,8 @@ steady_span_g = 0.02
 load_from_g = 1
 change_from_g = 0.0300
 steady_ms = 900
+repeatability_g = 0.008
+linearity_g = 0
 
 [[instrument]]
 name = "cup-1"
@@ -118,6 +120,8 @@ fn every_key_of_an_instrument_arrives() {
         steady_ms: 900,
     };
     assert_eq!(pan.settle, settle);
+    assert_eq!((pan.weighs.repeatability_g, pan.weighs.linearity_g), (Some(0.008), Some(0.0)));
+    assert_eq!(wand.weighs, tarecup_core::soil::uncertainty::Balance::default());
     assert_eq!((cup.port.path.as_str(), cup.port.baud), ("/dev/serial/by-id/usb-3", 9600));
     assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170 });
     assert_eq!((wand.kind, wand.profile.as_str()), (InstrumentKind::Scanner, "plain-code"));

@@ -36,6 +36,7 @@ fn setup() -> DeskSetup {
             methods: BTreeMap::from([(name.clone(), method)]),
             default_method: name,
             linking: Linking::default(),
+            balances: BTreeMap::new(),
         },
         instruments: vec![InstrumentSetup {
             name: pan,

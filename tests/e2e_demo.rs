@@ -209,6 +209,15 @@ fn what_a_laboratory_meets_comes_out_as_numpy_has_it() {
     println!("{} specimens in {:.1} s", sheets.len(), ended.took.as_secs_f64());
 }
 
+/// A limit without what the record of other specimens puts in it, which `work` does not have.
+fn without_record(limit: &Value) -> Value {
+    let mut limit = limit.clone();
+    if let Value::Object(members) = &mut limit {
+        members.retain(|k, _| !["u", "interval_95", "u_from"].contains(&k.as_str()));
+    }
+    limit
+}
+
 /// `work --json` on the same file: the same numbers, no revision, no ledger.
 fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
     let ended = tarecup(&["work", &file.display().to_string(), "--json"]);
@@ -221,7 +230,7 @@ fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
         for part in
             ["liquid_limit", "plastic_limit", "plasticity_index", "natural_water_percent", "liquidity_index", "group", "method"]
         {
-            assert_eq!(worked[part], played[part], "{} {part}", sheet.id);
+            assert_eq!(without_record(&worked[part]), without_record(&played[part]), "{} {part}", sheet.id);
         }
         let row = |t: &Value| -> Vec<Value> {
             ["kind", "no", "drops", "closures", "container", "tare_g", "wet_g", "dry_g", "water_percent", "used"]
@@ -238,6 +247,20 @@ fn same_as_work(file: &Path, sheets: &[Sheet], lines: &[Value]) {
 fn names(names: &[&str]) -> BTreeSet<String> {
     names.iter().map(|n| (*n).to_owned()).collect()
 }
+
+/// Members that stand there only when there is something in them.
+const MAY_LACK: [&str; 10] = [
+    "set_aside",
+    "u_from",
+    "interval_95_classical",
+    "slope_per_mm",
+    "penetrations_mm",
+    "water_u",
+    "group_en_iso_14688_2",
+    "group_m145",
+    "group_index",
+    "interval_95",
+];
 
 /// The members of the limits payload, written out: they are a contract.
 fn limits_members() -> BTreeMap<&'static str, BTreeSet<String>> {
@@ -262,7 +285,8 @@ fn members_differ(limits: &Value) -> Vec<String> {
     let mut wrong = Vec::new();
     let mut look = |name: &str, value: &Value, want: &BTreeSet<String>| {
         if let Value::Object(members) = value {
-            let have: BTreeSet<String> = members.keys().filter(|k| k.as_str() != "set_aside").cloned().collect();
+            let have: BTreeSet<String> =
+                members.keys().filter(|k| want.contains(*k) || !MAY_LACK.contains(&k.as_str())).cloned().collect();
             let off: Vec<&String> = have.symmetric_difference(want).collect();
             if !off.is_empty() {
                 wrong.push(format!("{name}: {off:?}"));

@@ -46,7 +46,7 @@ def line(drops, w):
         sd = np.sqrt(np.sum((w - design @ [at25, slope]) ** 2) / freedom)
         u = sd * np.sqrt(np.linalg.inv(design.T @ design)[0, 0])
         t = stats.t.ppf(0.975, freedom)
-        found |= {"residual_sd": float(sd), "u": float(u), "interval_95": [float(at25 - t * u), float(at25 + t * u)]}
+        found |= {"residual_sd": float(sd), "interval_95_classical": [float(at25 - t * u), float(at25 + t * u)]}
     return found
 
 

@@ -330,10 +330,16 @@ fn do_step(play: &mut Play, specimen: &str, south: bool, step: &Step, morning: &
 fn result(play: &Play, id: &str) -> serde_json::Value {
     let mut limits = serde_json::to_value(play.specimen(id).limits.as_ref().unwrap()).unwrap();
     limits["trials"].as_array_mut().unwrap().iter_mut().for_each(|t| {
-        for name in ["at", "balance", "cup", "rate_per_s"] {
+        for name in ["at", "balance", "cup", "rate_per_s", "water_u"] {
             t.as_object_mut().unwrap().remove(name);
         }
     });
+    // What was finished before, and which balance weighed what, is in the uncertainties on purpose.
+    for limit in ["liquid_limit", "plastic_limit", "plasticity_index"] {
+        for name in ["u", "interval_95", "u_from"] {
+            limits[limit].as_object_mut().unwrap().remove(name);
+        }
+    }
     limits["checks"] = serde_json::Value::Null;
     limits
 }

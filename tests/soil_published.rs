@@ -142,6 +142,25 @@ fn norris_is_reproduced() {
     certified("residual_sd", line.residual_sd().unwrap());
 }
 
+/// NIST StRD, NoInt1, regression through the origin: certified slope and residual standard deviation. With
+/// its mirror image each point keeps its distance from a line through the origin, and that is the best line.
+#[test]
+fn no_intercept_is_reproduced() {
+    let data: toml::Table = toml::from_str(include_str!("published/lines.toml")).unwrap();
+    let noint = &data["noint1"];
+    let yx: Vec<(f64, f64)> = noint["yx"].clone().try_into().unwrap();
+    let points: Vec<_> = yx.iter().flat_map(|&(y, x)| [(x, y), (-x, -y)]).collect();
+    let line = Line::fit(&points).unwrap();
+    for (key, value) in [("slope", line.slope()), ("residual_sd", line.residual_sd().unwrap())] {
+        let wanted = noint[key].as_float().unwrap();
+        assert!(((value - wanted) / wanted).abs() < 1e-12, "{key}: {value} {wanted}");
+    }
+    assert!(line.intercept().abs() < 1e-10);
+    // Control: without the mirror image the line does not run through the origin.
+    let plain: Vec<_> = yx.iter().map(|&(y, x)| (x, y)).collect();
+    assert!((Line::fit(&plain).unwrap().slope() - 1.0).abs() < 1e-12);
+}
+
 /// Published tables of t(0.975); the same four figures in every statistics text.
 #[test]
 fn student_quantiles() {

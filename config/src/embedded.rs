@@ -7,7 +7,10 @@ macro_rules! files {
 }
 
 /// File name and text of every shipped method.
-pub(crate) const METHODS: &[(&str, &str)] = files!("methods": "d4318-multipoint", "d4318-one-point", "t89-t90", "iso17892-cup");
+pub(crate) const METHODS: &[(&str, &str)] = files!(
+    "methods": "d4318-multipoint", "d4318-one-point", "t89-t90", "iso17892-cup", "is2720-cup", "bs1377-cone", "iso17892-cone-80",
+    "iso17892-cone-60",
+);
 
 /// File name and text of every shipped profile.
 pub(crate) const PROFILES: &[(&str, &str)] = files!(

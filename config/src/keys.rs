@@ -39,12 +39,15 @@ pub(crate) const INSTRUMENT: &[&str] = &[
     "load_from_g",
     "change_from_g",
     "steady_ms",
+    "repeatability_g",
+    "linearity_g",
     "debounce_ms",
     "pause_ms",
     "gap_percent",
 ];
 /// Keys of an instrument that only a balance has.
-pub(crate) const SETTLE: &[&str] = &["talks", "steady_readings", "steady_span_g", "load_from_g", "change_from_g", "steady_ms"];
+pub(crate) const SETTLE: &[&str] =
+    &["talks", "steady_readings", "steady_span_g", "load_from_g", "change_from_g", "steady_ms", "repeatability_g", "linearity_g"];
 /// Keys of an instrument that only a cup counter has.
 pub(crate) const COUNT: &[&str] = &["debounce_ms", "pause_ms", "gap_percent"];
 pub(crate) const LINKING: &[&str] =
@@ -64,12 +67,14 @@ pub(crate) const SPECIMEN: &[&str] = &[
     "because",
     "passing_75um_percent",
     "clay_percent",
+    "liquid_limit_oven_dried",
     "liquid",
     "plastic",
     "cone",
 ];
 pub(crate) const LIQUID: &[&str] =
     &["drops", "container", "tare_g", "wet_g", "dry_g", "rate_per_s", "water_percent", "set_aside"];
+pub(crate) const CONE: &[&str] = &["penetration_mm", "container", "tare_g", "wet_g", "dry_g", "water_percent", "set_aside"];
 pub(crate) const WEIGHED: &[&str] = &["container", "tare_g", "wet_g", "dry_g", "water_percent", "set_aside"];
 
 /// Where a key of the configuration file belongs, for one found elsewhere.
@@ -77,12 +82,13 @@ pub(crate) fn home_of(key: &str) -> Option<&'static str> {
     if ["state_dir", "default_method", "method_files"].contains(&key) {
         return Some("the top of the configuration file, before its first [table]");
     }
-    let homes: [(&[&str], &str); 7] = [
+    let homes: [(&[&str], &str); 8] = [
         (RECORD, "[record] of the configuration file"),
         (INSTRUMENT, "an [[instrument]] of the configuration file"),
         (LINKING, "[linking] of the configuration file"),
         (MQTT, "[mqtt] of the configuration file"),
         (LIQUID, "a [[specimen.liquid]] row of a scenario"),
+        (CONE, "a [[specimen.cone]] row of a scenario"),
         (SPECIMEN, "a [[specimen]] of a scenario"),
         (LAB, "[lab] of the configuration file"),
     ];

@@ -205,6 +205,12 @@ struct Instrument {
     /// Without a steady mark, readings must agree for this long, milliseconds.
     #[schemars(range(min = 1, max = 60_000))]
     steady_ms: Option<u32>,
+    /// Standard deviation of a balance's repeated readings, grams, from its papers or the laboratory's own test.
+    #[schemars(range(min = 0, max = 10))]
+    repeatability_g: Option<f64>,
+    /// Largest departure of a balance from a straight line, grams.
+    #[schemars(range(min = 0, max = 10))]
+    linearity_g: Option<f64>,
     /// Two drops closer than this are one, milliseconds.
     #[schemars(range(min = 1, max = 400))]
     debounce_ms: Option<u32>,

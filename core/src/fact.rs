@@ -226,6 +226,26 @@ pub enum Fact {
         /// Why.
         why: String,
     },
+    /// A penetration of the cone was entered by a person; the slice of its paste is owed.
+    PenetrationEntered {
+        /// How deep, millimetres.
+        penetration_mm: f64,
+        /// Where its slice is owed.
+        bench: BenchName,
+        /// The specimen.
+        specimen: SpecimenId,
+    },
+    /// A penetration was corrected by a person.
+    PenetrationAmended {
+        /// The penetration.
+        penetration: Seq,
+        /// What it was, millimetres.
+        was_mm: f64,
+        /// What it is, millimetres.
+        penetration_mm: f64,
+        /// Why.
+        why: String,
+    },
     /// A container was entered in the register.
     ContainerRegistered {
         /// Which.
@@ -340,6 +360,9 @@ pub struct SpecimenOpened {
     /// Share finer than clay size, percent.
     #[serde(default)]
     pub clay_percent: Option<f64>,
+    /// Liquid limit of the same soil dried in the oven before the test, percent.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub liquid_limit_oven_dried: Option<f64>,
 }
 
 /// What a bench works on.
@@ -465,6 +488,8 @@ impl Fact {
             Fact::TrialSetAside { .. } => "trial_set_aside",
             Fact::MassAmended { .. } => "mass_amended",
             Fact::DropsAmended { .. } => "drops_amended",
+            Fact::PenetrationEntered { .. } => "penetration_entered",
+            Fact::PenetrationAmended { .. } => "penetration_amended",
             Fact::ContainerRegistered { .. } => "container_registered",
             Fact::ContainerFreed { .. } => "container_freed",
             Fact::IntoOven { .. } => "into_oven",

@@ -41,6 +41,15 @@ pub struct Limits {
     pub activity: Option<f64>,
     /// Group by the plasticity chart.
     pub group: Option<String>,
+    /// Plasticity by EN ISO 14688-2: low, intermediate, high or non-plastic.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_en_iso_14688_2: Option<String>,
+    /// Group by AASHTO M 145, where the share passing 0.075 mm is known and decides it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_m145: Option<String>,
+    /// Group index of AASHTO M 145, a whole number.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_index: Option<u32>,
     /// Every determination.
     pub trials: Vec<TrialRow>,
     /// What the checks say.
@@ -67,14 +76,24 @@ pub struct LiquidLimit {
     /// As reported.
     #[serde(serialize_with = "whole_when_whole")]
     pub rounded: f64,
-    /// Standard uncertainty, where the trials tell one.
+    /// Standard uncertainty, where there is one to tell.
     pub u: Option<f64>,
-    /// 95 % interval, where the trials tell one.
+    /// 95 % interval that goes with it.
     pub interval_95: Option<[f64; 2]>,
+    /// What `u` and `interval_95` rest on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub u_from: Option<String>,
+    /// Student interval from these trials alone, where they tell one.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95_classical: Option<[f64; 2]>,
     /// Trials used.
     pub points: u32,
-    /// Change of water content per tenfold number of drops (negative for a fall).
+    /// Change of water content per tenfold number of drops (negative for a fall), or per tenfold
+    /// penetration of a cone on a logarithmic axis.
     pub slope_per_decade: Option<f64>,
+    /// Change of water content per millimetre of penetration, on linear axes.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub slope_per_mm: Option<f64>,
     /// Residual standard deviation about the line.
     pub residual_sd: Option<f64>,
     /// `flow line`, `one point` or `cone`.
@@ -89,8 +108,14 @@ pub struct PlasticLimit {
     /// As reported.
     #[serde(serialize_with = "whole_when_whole")]
     pub rounded: f64,
-    /// Standard uncertainty of the mean, where there are two or more.
+    /// Standard uncertainty of the mean, where there is one to tell.
     pub u: Option<f64>,
+    /// 95 % interval that goes with it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95: Option<[f64; 2]>,
+    /// What they rest on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub u_from: Option<String>,
     /// Determinations used.
     pub points: u32,
 }
@@ -105,6 +130,9 @@ pub struct PlasticityIndex {
     pub rounded: Option<f64>,
     /// Standard uncertainty.
     pub u: Option<f64>,
+    /// 95 % interval that goes with it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95: Option<[f64; 2]>,
     /// The soil is non-plastic.
     pub non_plastic: bool,
 }
@@ -123,8 +151,11 @@ pub struct TrialRow {
     pub closures: Vec<u32>,
     /// Drops per second of the closure that counts.
     pub rate_per_s: Option<f64>,
-    /// Cone penetration.
+    /// Cone penetration that counts: the mean of those of the paste.
     pub penetration_mm: Option<f64>,
+    /// All penetrations of the paste.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub penetrations_mm: Vec<f64>,
     /// The container.
     pub container: Option<ContainerId>,
     /// Mass of the empty container, grams.
@@ -135,6 +166,9 @@ pub struct TrialRow {
     pub dry_g: Option<f64>,
     /// Water content, percent of dry mass.
     pub water_percent: Option<f64>,
+    /// Standard uncertainty of the water content that comes from the balance, percent of dry mass.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub water_u: Option<f64>,
     /// Whether the determination entered the result.
     pub used: bool,
     /// Why a person set it aside.

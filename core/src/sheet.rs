@@ -25,6 +25,8 @@ pub struct Sheet {
     pub passing_75um_percent: Option<f64>,
     /// Share finer than clay size, percent of dry mass.
     pub clay_percent: Option<f64>,
+    /// Liquid limit of the same soil dried in the oven before the test, percent of dry mass.
+    pub liquid_limit_oven_dried: Option<f64>,
     /// Checks a person has answered: check name, what it was about, the words.
     pub answers: Vec<Answer>,
     /// A second person has reviewed the result as it stands.
@@ -67,6 +69,8 @@ pub struct Trial {
     pub no: u32,
     /// Closures of the paste, in order. Empty for threads and natural water.
     pub closures: Vec<Closure>,
+    /// Cone penetrations of the paste, in order. Empty but for the cone.
+    pub penetrations: Vec<Penetration>,
     /// The container.
     pub container: Option<ContainerId>,
     /// Mass of the empty container in force at the wet weighing; `None` while it is owed.
@@ -85,12 +89,34 @@ pub struct Trial {
     pub by: Option<Operator>,
     /// Balance of the wet weighing.
     pub balance: Option<InstrumentName>,
+    /// Where the empty, the wet and the latest dry mass were read.
+    pub readings: [Reading; 3],
     /// Cup counter of the closures.
     pub cup: Option<InstrumentName>,
     /// When the wet weighing was taken, UTC µs.
     pub at_utc_us: Option<i64>,
     /// Facts the determination rests on.
     pub facts: Vec<Seq>,
+}
+
+/// Where a mass was read.
+#[derive(Clone, Debug, Default, PartialEq, Eq)]
+pub struct Reading {
+    /// Which balance; `None` when typed or not known.
+    pub balance: Option<InstrumentName>,
+    /// One step of its last printed digit.
+    pub step: Option<Mass>,
+}
+
+/// One penetration of the cone.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Penetration {
+    /// How deep, millimetres.
+    pub mm: f64,
+    /// Typed by a person.
+    pub typed: bool,
+    /// The fact, when there is a ledger.
+    pub fact: Option<Seq>,
 }
 
 /// One closure of the groove.

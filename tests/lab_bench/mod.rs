@@ -77,6 +77,7 @@ pub fn setup(instruments: &[(&str, &[&str])]) -> Setup {
         default_method: method.name.clone(),
         methods: BTreeMap::from([(method.name.clone(), method)]),
         linking: Linking::default(),
+        balances: BTreeMap::new(),
     }
 }
 
@@ -88,7 +89,8 @@ pub fn documents(lab: &Lab) -> BTreeMap<String, String> {
     let benches = lab.benches().map(|b| (format!("bench {}", b.name), json(b)));
     let instruments = lab.instruments().map(|i| (format!("instrument {}", i.name), json(i)));
     let loose = lab.loose_things().map(|l| (format!("loose {}", l.seq), json(l)));
-    specimens.chain(containers).chain(benches).chain(instruments).chain(loose).collect()
+    let statistics = [(String::from("statistics"), json(lab.statistics()))];
+    specimens.chain(containers).chain(benches).chain(instruments).chain(loose).chain(statistics).collect()
 }
 
 mod erased {
@@ -113,6 +115,7 @@ pub fn reloaded(lab: &Lab) -> Lab {
     lab.benches().for_each(|b| new.load(Loaded::Bench(again::<Bench>(b))));
     lab.instruments().for_each(|i| new.load(Loaded::Instrument(again::<Instrument>(i))));
     lab.loose_things().for_each(|l| new.load(Loaded::Loose(again::<Loose>(l))));
+    new.load(Loaded::Statistics(again(lab.statistics())));
     new
 }
 
@@ -176,6 +179,7 @@ impl Play {
             Entity::Bench(id) => format!("bench {id}"),
             Entity::Instrument(id) => format!("instrument {id}"),
             Entity::Loose(seq) => format!("loose {seq}"),
+            Entity::Statistics => String::from("statistics"),
         };
         let named: Vec<String> = outcome.touched.iter().map(key).collect();
         for id in before.keys().chain(after.keys()) {

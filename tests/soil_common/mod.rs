@@ -13,6 +13,10 @@ pub const METHODS: &[(&str, &str)] = &[
     ("d4318-one-point", include_str!("../../config/methods/d4318-one-point.toml")),
     ("t89-t90", include_str!("../../config/methods/t89-t90.toml")),
     ("iso17892-cup", include_str!("../../config/methods/iso17892-cup.toml")),
+    ("is2720-cup", include_str!("../../config/methods/is2720-cup.toml")),
+    ("bs1377-cone", include_str!("../../config/methods/bs1377-cone.toml")),
+    ("iso17892-cone-80", include_str!("../../config/methods/iso17892-cone-80.toml")),
+    ("iso17892-cone-60", include_str!("../../config/methods/iso17892-cone-60.toml")),
 ];
 
 pub fn method(name: &str) -> Method {
@@ -32,6 +36,7 @@ pub fn sheet(trials: Vec<Trial>) -> Sheet {
         plastic_not_obtainable: None,
         passing_75um_percent: None,
         clay_percent: None,
+        liquid_limit_oven_dried: None,
         answers: Vec::new(),
         reviewed: false,
     }
@@ -42,6 +47,7 @@ pub fn trial(kind: Kind, no: u32) -> Trial {
         kind,
         no,
         closures: Vec::new(),
+        penetrations: Vec::new(),
         container: None,
         tare: None,
         wet: None,
@@ -51,6 +57,7 @@ pub fn trial(kind: Kind, no: u32) -> Trial {
         typed: false,
         by: None,
         balance: None,
+        readings: Default::default(),
         cup: None,
         at_utc_us: None,
         facts: Vec::new(),

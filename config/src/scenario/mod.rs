@@ -12,7 +12,7 @@ use crate::{defaults, keys};
 use std::collections::BTreeMap;
 use tarecup_core::names::{BenchName, MethodName, SpecimenId};
 
-pub use rows::{LiquidRow, Masses, Water, Weighed};
+pub use rows::{ConeRow, LiquidRow, Masses, Water, Weighed};
 pub use sheet::to_sheet;
 
 /// What the file is read for.
@@ -67,6 +67,10 @@ pub struct ScenarioSpecimen {
     pub passing_75um_percent: Option<f64>,
     /// Share finer than clay size, percent of dry mass.
     pub clay_percent: Option<f64>,
+    /// Liquid limit of the same soil dried in the oven before the test, percent of dry mass.
+    pub liquid_limit_oven_dried: Option<f64>,
+    /// Cone determinations in the order tested.
+    pub cone: Vec<ConeRow>,
     /// Liquid determinations in the order tested.
     pub liquid: Vec<LiquidRow>,
     /// Plastic determinations in the order tested.
@@ -118,16 +122,20 @@ fn specimen(
     let id = id(table, above);
     let words = |key: &str| table.get(key).and_then(|e| e.words());
     let percent = |key: &str| table.get(key).and_then(|e| e.number(0.0..=100.0, "percent of dry mass"));
-    if let Some(cone) = table.get("cone") {
+    if let (Some(cone), Mode::Demo) = (table.get("cone"), mode) {
         cone.fault_of_key(
-            "is a fall-cone determination, and this version has no cone method",
+            "is a fall-cone determination, and a demonstration has no simulated cone",
             "cup and thread determinations",
-            "[[specimen.liquid]] rows with drops, or leaving this specimen out",
+            "[[specimen.liquid]] rows with drops, or `tarecup work` to compute this file",
         );
     }
     let (liquid_not_obtainable, plastic_not_obtainable) = not_obtainable(table);
     let list = |key: &str, name: &str, known: &[&str]| table.get(key).map(|e| e.tables(name, known)).unwrap_or_default();
     let liquid = rows::liquid(&list("liquid", "liquid", keys::LIQUID), mode);
+    let cone = match mode {
+        Mode::Work => rows::cone(&list("cone", "cone", keys::CONE), mode),
+        Mode::Demo => Some(Vec::new()),
+    };
     let plastic = rows::weighed(&list("plastic", "plastic", keys::WEIGHED), mode);
     let natural = rows::weighed(&list("natural", "natural", keys::WEIGHED), mode);
     rows::each_container_once(table);
@@ -136,8 +144,9 @@ fn specimen(
     let method = table.get("method").and_then(|e| known_method(&e, methods));
     let (description, preparation) = (words("description"), words("preparation"));
     let (passing_75um_percent, clay_percent) = (percent("passing_75um_percent"), percent("clay_percent"));
+    let oven_dried = table.get("liquid_limit_oven_dried").and_then(|e| e.number(1.0..=1_000.0, "percent of dry mass"));
     let bench = table.get("bench").and_then(|e| e.name());
-    let (id, natural, liquid, plastic) = (id?, natural?, liquid?, plastic?);
+    let (id, natural, liquid, cone, plastic) = (id?, natural?, liquid?, cone?, plastic?);
     Some(ScenarioSpecimen {
         id,
         at: table.place(),
@@ -150,6 +159,8 @@ fn specimen(
         plastic_not_obtainable,
         passing_75um_percent,
         clay_percent,
+        liquid_limit_oven_dried: oven_dried,
+        cone,
         liquid,
         plastic,
     })
@@ -186,7 +197,7 @@ fn not_obtainable(table: &Table<'_>) -> (Option<String>, Option<String>) {
 
 fn nothing_to_do(table: &Table<'_>) {
     if !["liquid", "plastic", "natural", "not_obtainable", "cone"].iter().any(|k| table.get(k).is_some()) {
-        let expected = "liquid, plastic or natural determinations, or not_obtainable";
+        let expected = "liquid, cone, plastic or natural determinations, or not_obtainable";
         table.fault("has no determination", expected, "[[specimen.liquid]] and [[specimen.plastic]] rows below it");
     }
 }

@@ -11,6 +11,8 @@ use tarecup_core::quantity::Mass;
 const HEAVIEST: Mass = Mass::from_ug(60_000_000_000);
 /// Most drops that anybody counts.
 const MOST_DROPS: u32 = 500;
+/// No cone goes deeper than its cup, millimetres.
+const DEEPEST: f64 = 60.0;
 /// Water contents beyond this are not soil's, percent of dry mass.
 const WETTEST: f64 = 2_000.0;
 
@@ -21,6 +23,15 @@ pub struct LiquidRow {
     pub drops: Vec<Placed<u32>>,
     /// Drops per second, where the file says.
     pub rate_per_s: Option<f64>,
+    /// The slice.
+    pub weighed: Weighed,
+}
+
+/// A determination by the cone.
+#[derive(Clone, Debug, PartialEq)]
+pub struct ConeRow {
+    /// Penetrations of the paste, millimetres, in order; at least one.
+    pub penetration_mm: Vec<Placed<f64>>,
     /// The slice.
     pub weighed: Weighed,
 }
@@ -67,6 +78,20 @@ pub(super) fn liquid(tables: &[Table<'_>], mode: Mode) -> Option<Vec<LiquidRow>>
 pub(super) fn weighed(tables: &[Table<'_>], mode: Mode) -> Option<Vec<Weighed>> {
     let rows: Vec<Option<Weighed>> = tables.iter().take_while(|t| !t.reading.is_full()).map(|t| weighed_row(t, mode)).collect();
     rows.into_iter().collect()
+}
+
+pub(super) fn cone(tables: &[Table<'_>], mode: Mode) -> Option<Vec<ConeRow>> {
+    let rows: Vec<Option<ConeRow>> = tables.iter().take_while(|t| !t.reading.is_full()).map(|t| cone_row(t, mode)).collect();
+    rows.into_iter().collect()
+}
+
+fn cone_row(table: &Table<'_>, mode: Mode) -> Option<ConeRow> {
+    let try_this = "penetration_mm = 19.8, or [19.7, 19.9] for two penetrations of one paste";
+    let read = table.need("penetration_mm", "how deep the cone went", try_this).map(|e| e.one_or_list()).unwrap_or_default();
+    let one = |e: &Entry<'_>| e.number(0.1..=DEEPEST, "millimetres of penetration").map(|value| Placed { value, at: e.place() });
+    let depths: Vec<Placed<f64>> = read.iter().filter_map(one).collect();
+    let weighed = weighed_row(table, mode)?;
+    (!depths.is_empty() && depths.len() == read.len()).then_some(ConeRow { penetration_mm: depths, weighed })
 }
 
 fn liquid_row(table: &Table<'_>, mode: Mode) -> Option<LiquidRow> {
@@ -133,7 +158,7 @@ fn masses(table: &Table<'_>, mode: Mode) -> Option<Masses> {
 /// One container cannot hold two things at once: within a specimen each is used once.
 pub(super) fn each_container_once(specimen: &Table<'_>) {
     let mut used: BTreeMap<String, Place> = BTreeMap::new();
-    for key in ["natural", "liquid", "plastic"] {
+    for key in ["natural", "liquid", "cone", "plastic"] {
         for row in specimen.get(key).map(|e| e.subtables()).unwrap_or_default() {
             // What was set aside has set its container free.
             let Some(entry) = row.get("container").filter(|_| row.get("set_aside").is_none()) else { continue };

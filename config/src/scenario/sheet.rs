@@ -1,7 +1,7 @@
 //! From a row of the file to the common form that is computed.
 
 use super::{LiquidRow, ScenarioSpecimen, Water, Weighed};
-use tarecup_core::sheet::{Closure, DryWeighing, Kind, Sheet, Trial};
+use tarecup_core::sheet::{Closure, DryWeighing, Kind, Penetration, Reading, Sheet, Trial};
 
 /// The sheet of one specimen, as a person typed it: no clocks, no facts, no
 /// oven record. A drop rate that the file does not state stays unknown.
@@ -9,6 +9,11 @@ pub fn to_sheet(specimen: &ScenarioSpecimen) -> Sheet {
     let mut trials = Vec::new();
     for (no, row) in (1..).zip(&specimen.liquid) {
         trials.push(trial(Kind::Liquid, no, &row.weighed, closures(row)));
+    }
+    for (no, row) in (1..).zip(&specimen.cone) {
+        let mut trial = trial(Kind::Cone, no, &row.weighed, Vec::new());
+        trial.penetrations = row.penetration_mm.iter().map(|p| Penetration { mm: p.value, typed: true, fact: None }).collect();
+        trials.push(trial);
     }
     for (no, row) in (1..).zip(&specimen.plastic) {
         trials.push(trial(Kind::Thread, no, row, Vec::new()));
@@ -23,6 +28,7 @@ pub fn to_sheet(specimen: &ScenarioSpecimen) -> Sheet {
         plastic_not_obtainable: specimen.plastic_not_obtainable.clone(),
         passing_75um_percent: specimen.passing_75um_percent,
         clay_percent: specimen.clay_percent,
+        liquid_limit_oven_dried: specimen.liquid_limit_oven_dried,
         answers: Vec::new(),
         reviewed: false,
     }
@@ -60,6 +66,7 @@ fn trial(kind: Kind, no: u32, row: &Weighed, closures: Vec<Closure>) -> Trial {
         kind,
         no,
         closures,
+        penetrations: Vec::new(),
         container: row.container.clone(),
         tare,
         wet,
@@ -69,6 +76,7 @@ fn trial(kind: Kind, no: u32, row: &Weighed, closures: Vec<Closure>) -> Trial {
         typed: true,
         by: None,
         balance: None,
+        readings: [const { Reading { balance: None, step: None } }; 3],
         cup: None,
         at_utc_us: None,
         facts: Vec::new(),

@@ -9,6 +9,7 @@ use std::collections::BTreeSet;
 use tarecup_core::names::{BenchName, InstrumentName, ProfileName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
+use tarecup_core::soil::uncertainty::Balance;
 use tarecup_drivers::port::{CharFrame, Flow, PortSettings};
 
 /// More instruments than one station can listen to in a sensible way.
@@ -50,10 +51,24 @@ fn one(table: &Table<'_>, known: &Known<'_>, taken: &mut Taken) -> Option<Instru
     let usual = profile.map(|p| p.usual).unwrap_or_default();
     let port = port(table, taken, usual);
     let (settle, count) = (settle(table, usual), count(table));
+    let grams = |key: &str, what: &str| table.get(key).and_then(|e| e.number(0.0..=10.0, what));
+    let weighs = Balance {
+        repeatability_g: grams("repeatability_g", "the standard deviation of repeated readings in grams"),
+        linearity_g: grams("linearity_g", "the largest departure from a straight line in grams"),
+    };
     if let Some(kind) = kind {
         not_of_this_kind(table, kind);
     }
-    Some(Instrument { name: name?, kind: kind?, benches: benches?, port: port?, profile: profile?.name.clone(), settle, count })
+    Some(Instrument {
+        name: name?,
+        kind: kind?,
+        benches: benches?,
+        port: port?,
+        profile: profile?.name.clone(),
+        settle,
+        count,
+        weighs,
+    })
 }
 
 fn name(table: &Table<'_>, taken: &mut Taken) -> Option<InstrumentName> {

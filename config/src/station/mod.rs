@@ -15,6 +15,7 @@ use std::path::{Path, PathBuf};
 use tarecup_core::names::{BenchName, InstrumentName, MethodName, ProfileName, StationName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits};
+use tarecup_core::soil::uncertainty::Balance;
 use tarecup_drivers::port::PortSettings;
 
 pub use address::{BrokerUrl, Scheme};
@@ -149,6 +150,8 @@ pub struct Instrument {
     pub settle: SettleLimits,
     /// When a run is over (cup counters).
     pub count: CountLimits,
+    /// What is known of a balance beside its lines.
+    pub weighs: Balance,
 }
 
 /// How weighings and counts find their container.

@@ -2,6 +2,7 @@
 
 use super::{LIQUID_LIMIT, PLASTIC_LIMIT, Worked, container_text, count_text, facts, list_text, note};
 use crate::limits::CheckRow;
+use crate::method::Device;
 use crate::sheet::{Kind, Trial};
 use crate::soil::determined::{Determined, Water};
 use crate::soil::limits::{liquid_trials_needed, threads_needed};
@@ -11,7 +12,7 @@ use alloc::string::String;
 use alloc::vec::Vec;
 
 pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
-    for t in worked.active().filter(|t| t.trial.kind != Kind::Cone) {
+    for t in worked.active() {
         let lacks = lacks(t);
         if !lacks.is_empty() {
             let says = format!("{} still missing for {}; {}.", list_text(&lacks), container_text(t.trial), next(t.trial));
@@ -27,6 +28,9 @@ fn lacks(t: &Determined) -> Vec<String> {
     let mut lacks = Vec::new();
     if t.trial.kind == Kind::Liquid && t.trial.closures.is_empty() {
         lacks.push("the count of drops".to_owned());
+    }
+    if t.trial.kind == Kind::Cone && t.trial.penetrations.is_empty() {
+        lacks.push("the penetration of the cone".to_owned());
     }
     if t.water == Water::Open {
         if t.trial.wet.is_none() {
@@ -51,7 +55,7 @@ fn next(trial: &Trial) -> &'static str {
 }
 
 fn liquid_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
-    let (sheet, begun) = (worked.sheet, worked.of(Kind::Liquid).count());
+    let (sheet, begun) = (worked.sheet, worked.of(worked.method.limit_kind()).count());
     let spared = sheet.plastic_not_obtainable.is_some() && begun == 0;
     if sheet.liquid_not_obtainable.is_some() || spared {
         return;
@@ -59,12 +63,16 @@ fn liquid_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
     let needed = liquid_trials_needed(worked.method);
     let finished = worked.trials.iter().filter(|t| t.liquid_point().is_some()).count();
     if finished < needed {
-        let next = if begun >= needed { "finish those that are begun" } else { "count and take a slice for the rest" };
+        let (what, rest) = match worked.method.device() {
+            Device::Cup => ("liquid trial", "count and take a slice for the rest"),
+            Device::Cone => ("cone trial", "read the cone and take a slice for the rest"),
+        };
+        let next = if begun >= needed { "finish those that are begun" } else { rest };
         let says = format!(
             "{finished} of the method's {} finished, {begun} begun; {next}, or state that the limit cannot be obtained.",
-            count_text(needed, "liquid trial")
+            count_text(needed, what)
         );
-        rows.push(note("missing", LIQUID_LIMIT, says, worked.facts_of(Kind::Liquid)));
+        rows.push(note("missing", LIQUID_LIMIT, says, worked.facts_of(worked.method.limit_kind())));
     }
 }
 

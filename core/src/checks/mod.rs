@@ -22,6 +22,7 @@ mod missing;
 mod nobody;
 mod non_plastic;
 mod not_obtainable;
+mod organic;
 mod oven_record;
 mod rate;
 mod same_container;
@@ -42,6 +43,7 @@ use crate::sheet::{Kind, Seq, Sheet, Trial};
 use crate::soil::determined::Determined;
 use crate::soil::flow::FlowLine;
 use crate::soil::limits::NoLiquid;
+use crate::soil::uncertainty::Laboratory;
 use alloc::borrow::ToOwned;
 use alloc::format;
 use alloc::string::String;
@@ -75,6 +77,8 @@ pub struct Worked<'a> {
     pub plastic: Option<&'a PlasticLimit>,
     /// The plasticity index.
     pub index: &'a PlasticityIndex,
+    /// What the laboratory's own record says. It moves with every finished specimen: no hold may rest on it.
+    pub laboratory: &'a Laboratory,
 }
 
 /// Every check, in the order in which a person works: what is missing, single
@@ -102,6 +106,7 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     not_obtainable::check,
     non_plastic::check,
     u_line::check,
+    organic::check,
     cone::check,
     same_container::check,
     shares::check,
@@ -110,13 +115,16 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     nobody::check,
 ];
 
-/// Runs every check and puts persons' answers to them.
+/// Runs every check, weighs it as the method says and puts persons' answers to them.
 pub fn all(worked: &Worked) -> Vec<CheckRow> {
     let mut rows = Vec::new();
     for check in ALL {
         check(worked, &mut rows);
     }
     for row in &mut rows {
+        if let Some(severity) = worked.method.severity.get(&row.check) {
+            row.severity = *severity;
+        }
         let answer = worked.sheet.answers.iter().rev().find(|a| a.check == row.check && a.about == row.about);
         row.answered = answer.map(|a| a.says.clone());
     }
@@ -146,8 +154,9 @@ impl<'a> Worked<'a> {
 /// Facts a determination rests on.
 fn facts(trial: &Trial) -> Vec<Seq> {
     let closures = trial.closures.iter().filter_map(|c| c.fact);
+    let penetrations = trial.penetrations.iter().filter_map(|p| p.fact);
     let dry = trial.dry.iter().filter_map(|d| d.fact);
-    in_order(trial.facts.iter().copied().chain(closures).chain(dry).collect())
+    in_order(trial.facts.iter().copied().chain(closures).chain(penetrations).chain(dry).collect())
 }
 
 fn in_order(mut facts: Vec<Seq>) -> Vec<Seq> {

@@ -11,7 +11,7 @@ use alloc::vec::Vec;
 pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
     let counted: Vec<f64> = worked.of(Kind::Liquid).filter_map(|t| t.drops).collect();
     let Some((least, most)) = stats::range(counted.iter().copied()) else { return };
-    if counted.len() < 2 || worked.method.liquid.how == LiquidHow::OnePoint {
+    if counted.len() < 2 || worked.method.liquid.how != LiquidHow::FlowLine {
         return;
     }
     let facts = || worked.facts_of(Kind::Liquid);

@@ -16,6 +16,8 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
     let windows = &windows[..windows.len().min(MOST_WINDOWS)];
     match worked.method.liquid.how {
         LiquidHow::FlowLine => uncovered(worked, windows, rows),
+        // The cone has a range of penetrations, and its own check.
+        LiquidHow::Cone => (),
         LiquidHow::OnePoint => outside(worked, windows, rows),
     }
 }

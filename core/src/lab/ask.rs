@@ -44,6 +44,8 @@ pub enum Ask {
         #[serde(default)]
         clay_percent: Option<f64>,
         #[serde(default)]
+        liquid_limit_oven_dried: Option<f64>,
+        #[serde(default)]
         who: Option<Operator>,
     },
     /// Be named on what happens at a bench.
@@ -93,6 +95,8 @@ pub enum Ask {
     },
     /// Correct a number of drops.
     AmendDrops { count: Seq, drops: u32, who: Operator, why: String },
+    /// Correct a penetration.
+    AmendPenetration { what: Seq, penetration_mm: f64, who: Operator, why: String },
     /// Enter a mass by hand.
     TypeMass {
         bench: BenchName,
@@ -105,6 +109,8 @@ pub enum Ask {
     },
     /// Enter a count by hand.
     TypeDrops { bench: BenchName, drops: u32, who: Operator },
+    /// Enter a penetration of the cone by hand.
+    TypePenetration { bench: BenchName, penetration_mm: f64, who: Operator },
     /// The paste of the counts so far is given up or was made anew.
     NewPaste {
         bench: BenchName,
@@ -195,7 +201,7 @@ impl Lab {
                 self.code_at(&bench, &[], &text, at).map_err(Refusal)
             }
             Ask::SayRole { .. } | Ask::Tie { .. } | Ask::TieCount { .. } => self.ask_tie(ask),
-            Ask::TypeMass { .. } | Ask::TypeDrops { .. } => self.ask_typed(ask, at),
+            Ask::TypeMass { .. } | Ask::TypeDrops { .. } | Ask::TypePenetration { .. } => self.ask_typed(ask, at),
             Ask::RegisterContainer { .. } | Ask::FreeContainer { .. } => self.ask_container(ask),
             Ask::IntoOven { .. } | Ask::OutOfOven { .. } | Ask::OvenOff { .. } => self.ask_oven(ask, at),
             Ask::NotObtainable { .. } | Ask::AnswerCheck { .. } | Ask::Review { .. } => self.ask_result(ask),
@@ -203,6 +209,7 @@ impl Lab {
             | Ask::SetAsideTrial { .. }
             | Ask::AmendMass { .. }
             | Ask::AmendDrops { .. }
+            | Ask::AmendPenetration { .. }
             | Ask::NewPaste { .. }
             | Ask::Undo { .. } => self.ask_correction(ask),
         }
@@ -220,8 +227,17 @@ impl Lab {
     }
 
     fn open_specimen(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
-        let Ask::OpenSpecimen { specimen, method, edition, description, preparation, passing_75um_percent, clay_percent, who } =
-            ask
+        let Ask::OpenSpecimen {
+            specimen,
+            method,
+            edition,
+            description,
+            preparation,
+            passing_75um_percent,
+            clay_percent,
+            liquid_limit_oven_dried,
+            who,
+        } = ask
         else {
             return Ok(vec![]);
         };
@@ -244,12 +260,23 @@ impl Lab {
                 return Err(no(format!("the share {what} is a percentage between 0 and 100")));
             }
         }
+        if liquid_limit_oven_dried.is_some_and(|l| !(l > 0.0 && l < 1_000.0)) {
+            return Err(no(String::from("the liquid limit of the oven-dried soil lies between 0 and 1000 percent")));
+        }
         for words in [&edition, &description, &preparation].into_iter().flatten() {
             not_too_long(words)?;
         }
         let edition = edition.unwrap_or_else(|| method.edition.clone());
-        let opened =
-            SpecimenOpened { specimen, method: name, edition, description, preparation, passing_75um_percent, clay_percent };
+        let opened = SpecimenOpened {
+            specimen,
+            method: name,
+            edition,
+            description,
+            preparation,
+            passing_75um_percent,
+            clay_percent,
+            liquid_limit_oven_dried,
+        };
         Ok(vec![New::by(who, Fact::SpecimenOpened(opened))])
     }
 
@@ -302,6 +329,11 @@ impl Lab {
             }
         };
         let Some(owed) = state.owed.as_ref().filter(|o| !o.counts.contains(&count)) else { return Ok(()) };
+        if owed.penetration_mm.is_some() != found.penetration_mm.is_some() {
+            return Err(no(format!(
+                "another slice is owed at bench {bench}, and cup and cone are never mixed: weigh it or give up its paste first"
+            )));
+        }
         let apart = owed.ended.since(&found.at).us.saturating_abs() >= self.setup.linking.slice_us;
         if owed.specimen != *specimen || apart {
             return Err(no(format!(
@@ -371,6 +403,7 @@ impl Lab {
             benches: self.benches.clone(),
             instruments: BTreeMap::new(),
             loose: BTreeMap::new(),
+            statistics: self.statistics,
         }
     }
 
@@ -401,6 +434,7 @@ impl Lab {
                 facts.push(New::by(Some(who), Fact::Counted(counted)));
                 Ok(facts)
             }
+            Ask::TypePenetration { bench, penetration_mm, who } => self.penetration_typed(bench, penetration_mm, who, at),
             _ => Ok(vec![]),
         }
     }
@@ -547,6 +581,14 @@ pub(super) fn drops_believable(drops: u32) -> Result<(), Refusal> {
     match (1..=500).contains(&drops) {
         true => Ok(()),
         false => Err(no(String::from("a count lies between 1 and 500 drops"))),
+    }
+}
+
+/// A penetration that a person states.
+pub(super) fn depth_believable(mm: f64) -> Result<(), Refusal> {
+    match mm > 0.0 && mm <= 60.0 {
+        true => Ok(()),
+        false => Err(no(String::from("a penetration lies above 0 and goes to 60 mm at most: the cup is no deeper"))),
     }
 }
 

@@ -1,6 +1,6 @@
 //! Corrections: new facts that name the fact they correct, who, and why.
 
-use super::ask::{Ask, drops_believable, needs_words, typed_mass};
+use super::ask::{Ask, depth_believable, drops_believable, needs_words, typed_mass};
 use super::entities::{LooseWhat, Specimen, Weighing};
 use super::{Lab, New, Refusal};
 use crate::fact::{Fact, TrialRef};
@@ -37,10 +37,22 @@ impl Lab {
             Ask::AmendDrops { count, drops, who, why } => {
                 needs_words(&why)?;
                 drops_believable(drops)?;
+                if self.specimens.values().find_map(|s| s.count(count)).is_some_and(|c| c.penetration_mm.is_some()) {
+                    return Err(Refusal(format!("{count} is a penetration of the cone: correct it with amend_penetration")));
+                }
                 let was = self
                     .drops_of(count)
                     .ok_or_else(|| Refusal(format!("no count has the number {count}, or its specimen is not at hand")))?;
                 Ok(vec![New::by(Some(who), Fact::DropsAmended { count, was, drops, why })])
+            }
+            Ask::AmendPenetration { what, penetration_mm, who, why } => {
+                needs_words(&why)?;
+                depth_believable(penetration_mm)?;
+                let was_mm = self.specimens.values().find_map(|s| s.count(what)).filter(|c| c.set_aside.is_none());
+                let was_mm = was_mm.and_then(|c| c.penetration_mm).ok_or_else(|| {
+                    Refusal(format!("no penetration in force has the number {what}, or its specimen is not at hand"))
+                })?;
+                Ok(vec![New::by(Some(who), Fact::PenetrationAmended { penetration: what, was_mm, penetration_mm, why })])
             }
             Ask::NewPaste { bench, who, why } => {
                 let state = self.bench_there(&bench)?;

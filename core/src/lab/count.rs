@@ -1,9 +1,11 @@
 //! A count run ended: whose slice is owed?
 
-use super::entities::{Count, Loose, LooseWhat, Specimen};
-use super::{Lab, New};
+use super::ask::depth_believable;
+use super::entities::{Count, Loose, LooseWhat, Owed, Specimen};
+use super::{Lab, New, Refusal};
 use crate::fact::{Counted, Fact, Intention};
-use crate::names::{BenchName, InstrumentName, SpecimenId};
+use crate::method::Device;
+use crate::names::{BenchName, InstrumentName, Operator, SpecimenId};
 use crate::sense::CountRun;
 use crate::sheet::Seq;
 use crate::stamp::Stamp;
@@ -18,6 +20,37 @@ const COUNTS_OF_SPECIMEN: usize = 300;
 const CLOSURES_OF_PASTE: usize = 20;
 
 impl Lab {
+    /// A penetration read by eye: another of the same paste, or the first of a new one.
+    pub(super) fn penetration_typed(
+        &self,
+        bench: BenchName,
+        penetration_mm: f64,
+        who: Operator,
+        at: &Stamp,
+    ) -> Result<Vec<New>, Refusal> {
+        self.bench_there(&bench)?;
+        depth_believable(penetration_mm)?;
+        if self.liquid_at(&bench).is_none() {
+            return Err(Refusal(format!("no liquid limit is in work at bench {bench}; say which specimen first")));
+        }
+        let specimen = self.room_for_count(&bench).map_err(Refusal)?;
+        let method = self.specimens.get(&specimen).and_then(|s| self.setup.methods.get(&s.method));
+        if method.is_none_or(|m| m.device() != Device::Cone) {
+            return Err(Refusal(format!(
+                "the method of {specimen} has no cone: enter drops with type_drops, or open the specimen by a cone method"
+            )));
+        }
+        let owed = self.benches.get(&bench).and_then(|b| b.owed.as_ref());
+        if owed.is_some_and(|o| o.specimen == specimen && o.penetration_mm.is_none()) {
+            return Err(Refusal(String::from(
+                "a slice is owed for drops of the cup, and cup and cone are never mixed: weigh it or give up its paste first",
+            )));
+        }
+        let mut facts = self.late_paste(&bench, &specimen, at);
+        facts.push(New::by(Some(who), Fact::PenetrationEntered { penetration_mm, bench, specimen }));
+        Ok(facts)
+    }
+
     pub(super) fn count_ended(&self, cup: &InstrumentName, run: CountRun) -> Vec<New> {
         let (at, through, drops) = (run.at, run.last_input, run.drops);
         let cup_ = Some(cup.clone());
@@ -95,6 +128,13 @@ impl Lab {
 
     /// Counts whose slice can no longer come: the paste has stood too long, or is of another specimen.
     pub(super) fn late_slice(&self, bench: &BenchName, specimen: &SpecimenId, now: &Stamp) -> Vec<New> {
+        match self.benches.get(bench).and_then(|b| b.owed.as_ref()).filter(|o| o.penetration_mm.is_some()) {
+            Some(owed) => given_up(owed, "no slice was taken after the cone, and the bench counted in the cup"),
+            None => self.late_paste(bench, specimen, now),
+        }
+    }
+
+    fn late_paste(&self, bench: &BenchName, specimen: &SpecimenId, now: &Stamp) -> Vec<New> {
         let Some(owed) = self.benches.get(bench).and_then(|b| b.owed.as_ref()) else { return vec![] };
         let why = if owed.specimen != *specimen {
             format!("no slice was taken before the bench counted for {specimen}")
@@ -105,8 +145,12 @@ impl Lab {
         } else {
             return vec![];
         };
-        owed.counts.iter().map(|&count| New::plain(Fact::CountSuperseded { count, why: why.clone() })).collect()
+        given_up(owed, &why)
     }
+}
+
+fn given_up(owed: &Owed, why: &str) -> Vec<New> {
+    owed.counts.iter().map(|&count| New::plain(Fact::CountSuperseded { count, why: String::from(why) })).collect()
 }
 
 fn is_told_by(count: &Count, cup: &InstrumentName, run: &CountRun) -> bool {

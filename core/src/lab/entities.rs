@@ -27,6 +27,8 @@ pub enum Entity {
     Instrument(InstrumentName),
     /// A weighing or count tied to nothing.
     Loose(Seq),
+    /// What all finished results say together.
+    Statistics,
 }
 
 /// One weighing as it is used.
@@ -44,6 +46,9 @@ pub struct Weighing {
     pub by: Option<Operator>,
     /// Typed by a person, or corrected by one.
     pub typed: bool,
+    /// One step of the last digit that the balance printed.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub step: Option<Mass>,
     /// The latest correction.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub corrected: Option<Said>,
@@ -184,6 +189,9 @@ pub struct Specimen {
     pub passing_75um_percent: Option<f64>,
     /// Share finer than clay size, percent.
     pub clay_percent: Option<f64>,
+    /// Liquid limit of the same soil dried in the oven before the test, percent.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub liquid_limit_oven_dried: Option<f64>,
     /// When it was opened.
     pub opened: Stamp,
     /// Count runs that belong to it, in order.
@@ -204,13 +212,16 @@ pub struct Specimen {
     pub limits: Option<Limits>,
 }
 
-/// A count run of a specimen.
+/// A count run of a specimen, or a penetration of its cone.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Count {
     /// The fact.
     pub seq: Seq,
-    /// Drops that count.
+    /// Drops that count; 0 of a penetration.
     pub drops: u32,
+    /// How deep the cone went, millimetres.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub penetration_mm: Option<f64>,
     /// Drops per second.
     pub rate_per_s: Option<f64>,
     /// Gaps noticed.
@@ -354,6 +365,9 @@ pub struct Owed {
     pub counts: Vec<Seq>,
     /// Drops of the last one.
     pub drops: u32,
+    /// Its penetration, of the cone.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub penetration_mm: Option<f64>,
     /// When the last one was over.
     pub ended: Stamp,
     /// It has been said aloud.
@@ -460,6 +474,30 @@ impl Container {
     /// The empty weighing in force.
     pub fn tare(&self) -> Option<&Weighing> {
         self.tares.last()
+    }
+}
+
+impl Count {
+    /// A count that a person typed, with nothing in it yet.
+    pub(super) fn typed(seq: Seq, at: Stamp, by: Option<Operator>) -> Self {
+        Self {
+            seq,
+            drops: 0,
+            penetration_mm: None,
+            rate_per_s: None,
+            gaps: 0,
+            doubles: 0,
+            interrupted: None,
+            cup: None,
+            at,
+            typed: true,
+            superseded: None,
+            set_aside: None,
+            corrected: None,
+            by,
+            bench: None,
+            run: None,
+        }
     }
 }
 

@@ -30,8 +30,9 @@ impl Lab {
             return say(self.hand_next(bench, hand));
         }
         if let Some(owed) = &bench.owed {
-            let drops = owed.drops;
-            let next = format!("{drops} drops for {}: take a slice, read its container's code and weigh it wet", owed.specimen);
+            let found =
+                owed.penetration_mm.map_or_else(|| format!("{} drops", owed.drops), |mm| format!("{mm} mm of penetration"));
+            let next = format!("{found} for {}: take a slice, read its container's code and weigh it wet", owed.specimen);
             return Some(Guide { next, urgent: owed.said });
         }
         let Some(work) = &bench.intention else {
@@ -48,13 +49,17 @@ impl Lab {
     }
 
     fn liquid_next(&self, specimen: &crate::names::SpecimenId) -> String {
+        let method = self.specimens.get(specimen).and_then(|s| self.setup.methods.get(&s.method));
+        let kind = method.map_or(Kind::Liquid, |m| m.limit_kind());
         let done = self
             .specimens
             .get(specimen)
-            .map_or(0, |s| s.trials.iter().filter(|t| t.kind == Kind::Liquid && t.set_aside.is_none()).count());
-        let method = self.specimens.get(specimen).and_then(|s| self.setup.methods.get(&s.method));
+            .map_or(0, |s| s.trials.iter().filter(|t| t.kind == kind && t.set_aside.is_none()).count());
         let wanted = method.map_or(0, |m| m.liquid.trials as usize);
         match done < wanted {
+            true if kind == Kind::Cone => {
+                format!("Liquid limit of {specimen}, trial {} of {wanted}: let the cone fall and enter its penetration", done + 1)
+            }
             true => format!("Liquid limit of {specimen}, trial {} of {wanted}: cut the groove and start the cup", done + 1),
             false => format!("Liquid limit of {specimen}: {done} trials are in; go on to the plastic limit, or count another"),
         }

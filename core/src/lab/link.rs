@@ -143,7 +143,8 @@ impl Lab {
             && (late || at.since(&owed.ended).us < self.setup.linking.slice_us)
         {
             let (specimen, counts) = (owed.specimen.clone(), owed.counts.clone());
-            return Some(WetFor { specimen, kind: Kind::Liquid, counts, no: None });
+            let kind = if owed.penetration_mm.is_some() { Kind::Cone } else { Kind::Liquid };
+            return Some(WetFor { specimen, kind, counts, no: None });
         }
         let work = bench.intention.as_ref()?;
         let kind = match work.intention {

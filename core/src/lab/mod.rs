@@ -8,6 +8,7 @@
 pub mod ask;
 pub mod entities;
 pub mod role;
+pub mod statistics;
 
 mod apply;
 mod code;
@@ -25,6 +26,7 @@ use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator,
 use crate::quantity::Mass;
 use crate::sense::{CountRun, InputNo, MassTaken};
 use crate::sheet::Seq;
+use crate::soil::uncertainty::Balance;
 use crate::stamp::{SECOND_US, Stamp};
 use alloc::boxed::Box;
 use alloc::collections::{BTreeMap, BTreeSet};
@@ -33,6 +35,7 @@ use alloc::sync::Arc;
 use alloc::vec::Vec;
 use ask::Ask;
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
+use statistics::Statistics;
 
 pub use guide::Guide;
 pub use oven::dried;
@@ -53,6 +56,8 @@ pub struct Setup {
     pub default_method: MethodName,
     /// Limits of linking.
     pub linking: Linking,
+    /// What is known of balances beside their lines.
+    pub balances: BTreeMap<InstrumentName, Balance>,
 }
 
 /// Limits of linking weighings and counts.
@@ -211,6 +216,7 @@ pub struct Lab {
     benches: BTreeMap<BenchName, Bench>,
     instruments: BTreeMap<InstrumentName, Instrument>,
     loose: BTreeMap<Seq, Loose>,
+    statistics: Statistics,
 }
 
 impl Lab {
@@ -225,6 +231,7 @@ impl Lab {
             benches,
             instruments,
             loose: BTreeMap::new(),
+            statistics: Statistics::default(),
         }
     }
 
@@ -361,6 +368,7 @@ impl Lab {
         lab.specimens = self.specimens;
         lab.containers = self.containers;
         lab.loose = self.loose;
+        lab.statistics = self.statistics;
         self.benches.into_values().for_each(|b| lab.load(Loaded::Bench(b)));
         self.instruments.into_values().for_each(|i| lab.load(Loaded::Instrument(i)));
         lab
@@ -374,6 +382,7 @@ impl Lab {
             Loaded::Bench(b) if self.benches.contains_key(&b.name) => drop(self.benches.insert(b.name.clone(), b)),
             Loaded::Instrument(i) if self.instruments.contains_key(&i.name) => drop(self.instruments.insert(i.name.clone(), i)),
             Loaded::Loose(l) => drop(self.loose.insert(l.seq, l)),
+            Loaded::Statistics(s) => self.statistics = s,
             // A bench or instrument that the settings no longer have stays in the ledger only.
             Loaded::Bench(_) | Loaded::Instrument(_) => (),
         }
@@ -441,6 +450,10 @@ impl Lab {
     pub fn loose_things(&self) -> impl Iterator<Item = &Loose> {
         self.loose.values()
     }
+    /// What all finished results say together.
+    pub fn statistics(&self) -> &Statistics {
+        &self.statistics
+    }
     /// The setup in force.
     pub fn setup(&self) -> &Setup {
         &self.setup
@@ -485,4 +498,6 @@ pub enum Loaded {
     Instrument(Instrument),
     /// A loose thing.
     Loose(Loose),
+    /// What all finished results say together.
+    Statistics(Statistics),
 }

@@ -194,6 +194,7 @@ mod tests {
             at: at(hours),
             by: None,
             typed: false,
+            step: None,
             corrected: None,
         };
         DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }
@@ -273,7 +274,7 @@ mod tests {
 
     #[test]
     fn dry_by_hours_or_by_constant_mass() {
-        let rule = Drying { hours: 15.0, constant_percent: 0.1, constant_hours: 1.0, oven_celsius: [105.0, 115.0] };
+        let rule = Drying { hours: 15.0, constant_percent: 0.1, constant_hours: 1.0, oven_celsius: [105.0, 115.0], note: None };
         let d = |mass: i64, hours: f64, back: Option<f64>| DryWeighing {
             mass: Mass::from_ug(mass),
             oven_hours: Some(hours),

@@ -1,12 +1,15 @@
 //! From a specimen's state to its result.
 
-use super::entities::{Count, Entity, Specimen, TrialRecord};
+use super::entities::{Count, Entity, Specimen, TrialRecord, Weighing};
+use super::statistics::Statistics;
 use super::{Lab, New, Outcome, oven};
-use crate::evaluate::evaluate;
+use crate::evaluate::evaluate_with;
 use crate::fact::{Counted, Fact, Limit, Recorded};
 use crate::limits::{Limits, State};
-use crate::sheet::{Answer, Closure, Kind, Sheet, Trial};
+use crate::method::Method;
+use crate::sheet::{Answer, Closure, Kind, Penetration, Reading, Sheet, Trial};
 use crate::soil::determined::about;
+use crate::soil::uncertainty::Laboratory;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec::Vec;
@@ -28,10 +31,14 @@ impl Lab {
         if sheet.trials.is_empty() && sheet.liquid_not_obtainable.is_none() && sheet.plastic_not_obtainable.is_none() {
             return None;
         }
-        let mut limits = evaluate(&sheet, method);
+        let mut limits = evaluate_with(&sheet, method, &self.record_without(specimen, method));
         limits.edition.clone_from(&specimen.edition);
+        // What stands keeps the uncertainty it was told with: another specimen is no reason to change it.
+        if let Some(old) = specimen.limits.as_ref().filter(|old| same_content(old, &limits)) {
+            limits = Limits { state: limits.state, ..old.clone() };
+        }
         let reviewed = specimen.reviewed.as_ref().is_some_and(|(of, _)| *of == specimen.revision);
-        if reviewed && limits.state == State::Complete && same_content(specimen.limits.as_ref(), &limits) {
+        if reviewed && limits.state == State::Complete && specimen.limits.as_ref().is_some_and(|old| same_content(old, &limits)) {
             limits.state = State::Reviewed;
         }
         if specimen.limits.as_ref() == Some(&limits) {
@@ -47,12 +54,35 @@ impl Lab {
     }
 }
 
-fn same_content(old: Option<&Limits>, new: &Limits) -> bool {
-    old.is_some_and(|old| {
-        let mut old = old.clone();
-        old.state = new.state;
-        old == *new
-    })
+impl Lab {
+    /// What the laboratory's record says, this specimen left out.
+    fn record_without(&self, specimen: &Specimen, method: &Method) -> Laboratory {
+        let own = specimen.limits.as_ref().map_or(Statistics::default(), Statistics::of);
+        let others = self.statistics.minus(own);
+        Laboratory {
+            lines: others.lines(method.device()).pooled(),
+            threads: others.threads.pooled(),
+            slopes: others.slopes,
+            balances: self.setup.balances.clone(),
+        }
+    }
+}
+
+/// Whether a result is the same but for its state and what the record of other specimens puts in it.
+fn same_content(old: &Limits, new: &Limits) -> bool {
+    let bare = |limits: &Limits| Limits { state: State::Provisional, ..without_the_record(limits.clone()) };
+    bare(old) == bare(new)
+}
+
+fn without_the_record(mut limits: Limits) -> Limits {
+    if let Some(limit) = &mut limits.liquid_limit {
+        (limit.u, limit.interval_95, limit.u_from) = (None, None, None);
+    }
+    if let Some(limit) = &mut limits.plastic_limit {
+        (limit.u, limit.interval_95, limit.u_from) = (None, None, None);
+    }
+    (limits.plasticity_index.u, limits.plasticity_index.interval_95) = (None, None);
+    limits
 }
 
 /// What is different from the revision before, and which correction led to it, in words.
@@ -98,6 +128,9 @@ fn cause(r: &Recorded) -> Option<String> {
             format!("mass of weighing {weighing} corrected, {was} → {mass} g: {why}")
         }
         Fact::DropsAmended { count, was, drops, why } => format!("drops of count {count} corrected, {was} → {drops}: {why}"),
+        Fact::PenetrationAmended { penetration, was_mm, penetration_mm, why } => {
+            format!("penetration {penetration} corrected, {was_mm} → {penetration_mm} mm: {why}")
+        }
         Fact::SetAside { what, why } => format!("fact {what} set aside: {why}"),
         Fact::TrialSetAside { trial, no, why, .. } => format!("{} set aside: {why}", about(*trial, *no)),
         Fact::WeighingTied { weighing, link, why, .. } => format!("weighing {weighing} tied to {}: {why}", link.container),
@@ -132,6 +165,7 @@ pub fn sheet(specimen: &Specimen) -> Sheet {
         plastic_not_obtainable: specimen.plastic_not_obtainable.as_ref().map(|s| s.why.clone()),
         passing_75um_percent: specimen.passing_75um_percent,
         clay_percent: specimen.clay_percent,
+        liquid_limit_oven_dried: specimen.liquid_limit_oven_dried,
         answers: specimen.answers.iter().map(answer).collect(),
         reviewed: false,
     }
@@ -147,6 +181,7 @@ fn trial(specimen: &Specimen, t: &TrialRecord) -> Trial {
         kind: t.kind,
         no: t.no,
         closures: if t.kind == Kind::Liquid { counts.iter().map(|c| closure(c)).collect() } else { Vec::new() },
+        penetrations: counts.iter().filter_map(|c| penetration(c)).collect(),
         container: Some(t.container.clone()),
         tare: t.tare.as_ref().map(|w| w.mass),
         wet: wet.map(|w| w.mass),
@@ -156,10 +191,19 @@ fn trial(specimen: &Specimen, t: &TrialRecord) -> Trial {
         typed,
         by: wet.and_then(|w| w.by.clone()),
         balance: wet.and_then(|w| w.balance.clone()),
+        readings: [t.tare.as_ref(), wet, t.dries.last().map(|d| &d.weighing)].map(reading),
         cup: counts.last().and_then(|c| c.cup.clone()),
         at_utc_us: wet.map(|w| w.at.utc_us),
         facts: counts.iter().map(|c| c.seq).chain(weighings.map(|w| w.seq)).collect(),
     }
+}
+
+fn reading(weighing: Option<&Weighing>) -> Reading {
+    weighing.map_or(Reading::default(), |w| Reading { balance: w.balance.clone(), step: w.step })
+}
+
+fn penetration(count: &Count) -> Option<Penetration> {
+    Some(Penetration { mm: count.penetration_mm?, typed: count.typed, fact: Some(count.seq) })
 }
 
 fn closure(count: &Count) -> Closure {

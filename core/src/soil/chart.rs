@@ -8,7 +8,7 @@
 /// few decimals, the rest is the arithmetic of doubles.
 const ON_LINE: f64 = 1e-9;
 
-/// Group of inorganic fines.
+/// Group of fines.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Group {
     /// Lean clay.
@@ -21,6 +21,10 @@ pub enum Group {
     Ch,
     /// Elastic silt.
     Mh,
+    /// Organic silt or clay of low liquid limit.
+    Ol,
+    /// Organic silt or clay of high liquid limit.
+    Oh,
 }
 
 impl Group {
@@ -32,6 +36,8 @@ impl Group {
             Self::ClMl => "CL-ML",
             Self::Ch => "CH",
             Self::Mh => "MH",
+            Self::Ol => "OL",
+            Self::Oh => "OH",
         }
     }
 }
@@ -73,6 +79,47 @@ pub fn group_of_non_plastic(liquid_limit: Option<f64>) -> Group {
     }
 }
 
+/// Organic fines: drying in the oven takes more than a quarter off the liquid
+/// limit (ratio below 0.75). `None` for fines that are not organic.
+pub fn organic(liquid_limit: f64, oven_dried: f64) -> Option<Group> {
+    let ratio = oven_dried / liquid_limit;
+    let group = if liquid_limit < 50.0 { Group::Ol } else { Group::Oh };
+    (0.0..0.75).contains(&ratio).then_some(group)
+}
+
+/// Plasticity by the liquid limit, EN ISO 14688-2: low below 35, intermediate to 50, high above.
+pub fn plasticity_by_liquid_limit(liquid_limit: f64) -> &'static str {
+    match liquid_limit {
+        l if l < 35.0 => "low",
+        l if l <= 50.0 => "intermediate",
+        _ => "high",
+    }
+}
+
+/// Group of AASHTO M 145 by the reported limits and the share passing 0.075 mm
+/// (from memory, not checked against the text). Non-plastic soil has PI 0, and
+/// perhaps no liquid limit. `None` where the coarser sieves would decide: up to
+/// 25 % passing with a PI up to 6 it may be an A-1, up to 10 % non-plastic an A-3.
+pub fn m145(passing_75um: f64, liquid_limit: Option<f64>, plasticity_index: f64) -> Option<&'static str> {
+    if !(0.0..=100.0).contains(&passing_75um) || (passing_75um <= 25.0 && plasticity_index <= 6.0) {
+        return None;
+    }
+    // A non-plastic soil without a liquid limit is not a wet one.
+    let high = liquid_limit.is_some_and(|l| l > 40.0);
+    let plastic = plasticity_index > 10.0;
+    Some(match (passing_75um > 35.0, high, plastic) {
+        (true, false, false) => "A-4",
+        (true, true, false) => "A-5",
+        (true, false, true) => "A-6",
+        (true, true, true) if liquid_limit.is_some_and(|l| plasticity_index <= l - 30.0 + ON_LINE) => "A-7-5",
+        (true, true, true) => "A-7-6",
+        (false, false, false) => "A-2-4",
+        (false, true, false) => "A-2-5",
+        (false, false, true) => "A-2-6",
+        (false, true, true) => "A-2-7",
+    })
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -99,6 +146,44 @@ mod tests {
         }
         assert_eq!(group_of_non_plastic(None), Group::Ml);
         assert_eq!(group_of_non_plastic(Some(50.0)), Group::Mh);
+    }
+
+    #[test]
+    fn organic_fines_lose_a_quarter_in_the_oven() {
+        assert_eq!(organic(48.0, 35.9), Some(Group::Ol));
+        assert_eq!(organic(48.0, 36.0), None); // 0.75 itself
+        assert_eq!(organic(60.0, 40.0), Some(Group::Oh));
+        assert_eq!(organic(0.0, 0.0), None);
+    }
+
+    #[test]
+    fn plasticity_has_its_edges_in_the_middle_class() {
+        let of = [34.9, 35.0, 50.0, 50.1].map(plasticity_by_liquid_limit);
+        assert_eq!(of, ["low", "intermediate", "intermediate", "high"]);
+    }
+
+    #[test]
+    fn each_group_of_m145_and_its_edges() {
+        for (passing, ll, pi, group) in [
+            (36.0, Some(40.0), 10.0, Some("A-4")),
+            (36.0, Some(41.0), 10.0, Some("A-5")),
+            (36.0, Some(40.0), 11.0, Some("A-6")),
+            (72.0, Some(52.0), 21.0, Some("A-7-5")), // 21 ≤ 52 − 30
+            (72.0, Some(51.0), 21.0, Some("A-7-5")), // exactly
+            (72.0, Some(50.0), 21.0, Some("A-7-6")),
+            (35.0, Some(30.0), 8.0, Some("A-2-4")),
+            (35.0, Some(45.0), 8.0, Some("A-2-5")),
+            (20.0, Some(38.0), 14.0, Some("A-2-6")),
+            (20.0, Some(45.0), 14.0, Some("A-2-7")),
+            (30.0, None, 0.0, Some("A-2-4")),
+            (60.0, None, 0.0, Some("A-4")),
+            (25.0, Some(20.0), 6.0, None), // may be an A-1-b
+            (8.0, None, 0.0, None),        // may be an A-3
+            (101.0, Some(30.0), 12.0, None),
+            (f64::NAN, Some(30.0), 12.0, None),
+        ] {
+            assert_eq!(m145(passing, ll, pi), group, "{passing} {ll:?} {pi}");
+        }
     }
 
     #[test]

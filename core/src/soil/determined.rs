@@ -4,7 +4,7 @@ use super::water::{WaterError, water_percent};
 use crate::limits::TrialRow;
 use crate::method::{ClosureCounts, Method};
 use crate::quantity::Mass;
-use crate::sheet::{Closure, Kind, Sheet, Trial};
+use crate::sheet::{Closure, Kind, Penetration, Sheet, Trial};
 use crate::stamp;
 use alloc::format;
 use alloc::string::String;
@@ -34,11 +34,17 @@ pub struct Determined<'a> {
     pub trial: &'a Trial,
     /// How checks name it: `liquid 1`.
     pub about: String,
-    /// It counts: no person set it aside, and its limit was not stated to be
-    /// not obtainable.
+    /// It counts: no person set it aside, its limit was not stated to be not
+    /// obtainable, and it was made with the method's device.
     pub active: bool,
+    /// It would count, but was made with the cup where the method has the cone, or the other way round.
+    pub other_device: bool,
+    /// Kind of determination that the liquid limit rests on.
+    pub limit_kind: Kind,
     /// Drops that count by the method.
     pub drops: Option<f64>,
+    /// Penetration that counts, millimetres.
+    pub penetration: Option<f64>,
     /// Its water content.
     pub water: Water,
 }
@@ -50,12 +56,20 @@ pub fn determine<'a>(sheet: &'a Sheet, method: &Method) -> Vec<Determined<'a>> {
         Kind::Thread => sheet.plastic_not_obtainable.is_some(),
         Kind::Natural => false,
     };
-    let one = |trial: &'a Trial| Determined {
-        trial,
-        about: about(trial.kind, trial.no),
-        active: trial.set_aside.is_none() && !given_up(trial.kind),
-        drops: drops(&trial.closures, method.liquid.closure_counts),
-        water: water(trial),
+    let limit_kind = method.limit_kind();
+    let one = |trial: &'a Trial| {
+        let stands = trial.set_aside.is_none() && !given_up(trial.kind);
+        let other = matches!(trial.kind, Kind::Liquid | Kind::Cone) && trial.kind != limit_kind;
+        Determined {
+            trial,
+            about: about(trial.kind, trial.no),
+            active: stands && !other,
+            other_device: stands && other,
+            limit_kind,
+            drops: drops(&trial.closures, method.liquid.closure_counts),
+            penetration: penetration(&trial.penetrations),
+            water: water(trial),
+        }
     };
     sheet.trials.iter().map(one).collect()
 }
@@ -87,6 +101,13 @@ fn drops(closures: &[Closure], how: ClosureCounts) -> Option<f64> {
     }
     let sum: f64 = counting.iter().map(|c| f64::from(c.drops)).sum();
     Some(sum / counting.len() as f64)
+}
+
+/// Mean penetration of a paste; `None` without one or with one that is no depth.
+fn penetration(of_paste: &[Penetration]) -> Option<f64> {
+    let depths: Vec<f64> = of_paste.iter().map(|p| p.mm).collect();
+    let sound = depths.iter().all(|mm| mm.is_finite() && *mm > 0.0);
+    if sound { super::stats::mean(&depths) } else { None }
 }
 
 /// Masses come first; a given value stands in for masses that are not there.
@@ -128,13 +149,21 @@ impl Determined<'_> {
         }
     }
 
-    /// Drops and water content, when both are known and the trial counts.
-    pub fn liquid_point(&self) -> Option<(f64, f64)> {
-        if self.counts_as(Kind::Liquid) { Some((self.drops?, self.water()?)) } else { None }
+    /// Drops or millimetres at which the paste was found.
+    pub fn reading(&self) -> Option<f64> {
+        match self.limit_kind {
+            Kind::Cone => self.penetration,
+            _ => self.drops,
+        }
     }
 
-    /// The row of the result. `used`: it entered a limit.
-    pub fn row(&self, used: bool, method: &Method) -> TrialRow {
+    /// Drops (of a cone method: millimetres) and water content, when both are known and the trial counts.
+    pub fn liquid_point(&self) -> Option<(f64, f64)> {
+        if self.counts_as(self.limit_kind) { Some((self.reading()?, self.water()?)) } else { None }
+    }
+
+    /// The row of the result. `used`: it entered a limit; `water_u`: what the balance leaves uncertain.
+    pub fn row(&self, used: bool, water_u: Option<f64>, method: &Method) -> TrialRow {
         let trial = self.trial;
         TrialRow {
             kind: trial.kind,
@@ -142,15 +171,17 @@ impl Determined<'_> {
             drops: self.drops,
             closures: trial.closures.iter().map(|c| c.drops).collect(),
             rate_per_s: rate(counting(&trial.closures, method.liquid.closure_counts)),
-            penetration_mm: None,
+            penetration_mm: self.penetration,
+            penetrations_mm: trial.penetrations.iter().map(|p| p.mm).filter(|mm| mm.is_finite()).collect(),
             container: trial.container.clone(),
             tare_g: trial.tare.map(Mass::grams),
             wet_g: trial.wet.map(Mass::grams),
             dry_g: trial.dry.last().map(|d| d.mass.grams()),
             water_percent: self.water(),
+            water_u,
             used,
             set_aside: trial.set_aside.clone(),
-            typed: trial.typed || trial.closures.iter().any(|c| c.typed),
+            typed: trial.typed || trial.closures.iter().any(|c| c.typed) || trial.penetrations.iter().any(|p| p.typed),
             by: trial.by.clone(),
             balance: trial.balance.clone(),
             cup: trial.cup.clone(),

@@ -46,6 +46,17 @@ pub fn group_index_of_a2(passing_75um: f64, plasticity_index: f64) -> f64 {
     second_term(passing_75um, plasticity_index).max(0.0)
 }
 
+/// Group index as it is reported, for a group of M 145: a whole number, halves
+/// up. Of the other groups of A-2, and of non-plastic soil, it is 0.
+pub fn group_index_of(group: &str, passing_75um: f64, liquid_limit: f64, plasticity_index: f64) -> u32 {
+    let index = match group {
+        "A-2-6" | "A-2-7" => group_index_of_a2(passing_75um, plasticity_index),
+        "A-2-4" | "A-2-5" => 0.0,
+        _ => group_index(passing_75um, liquid_limit, plasticity_index),
+    };
+    super::rounding::round(index, 0, crate::method::Tie::HalfUp) as u32
+}
+
 fn second_term(passing_75um: f64, plasticity_index: f64) -> f64 {
     0.01 * (passing_75um - 15.0) * (plasticity_index - 10.0)
 }
@@ -70,5 +81,8 @@ mod tests {
         assert_eq!(group_index(10.0, 30.0, 5.0), 0.0);
         assert_eq!(group_index_of_a2(30.0, 5.0), 0.0);
         assert!((group_index_of_a2(30.0, 20.0) - 1.5).abs() < 1e-12);
+        assert_eq!(group_index_of("A-2-6", 30.0, 38.0, 20.0), 2);
+        assert_eq!(group_index_of("A-2-4", 34.0, 38.0, 9.0), 0);
+        assert_eq!(group_index_of("A-7-5", 72.0, 52.0, 21.0), 16);
     }
 }

@@ -1,11 +1,11 @@
 //! The limits from worked determinations, by a method.
 
 use super::determined::Determined;
-use super::flow::{FlowError, FlowLine, one_point};
+use super::flow::{Across, FlowError, FlowLine, one_point};
 use super::rounding::round;
 use super::{DROPS_AT_LIMIT, stats};
 use crate::limits::{LiquidLimit, PlasticLimit, PlasticityIndex};
-use crate::method::{Digits, LiquidHow, Method};
+use crate::method::{Axes, Device, Digits, LiquidHow, Method};
 use crate::sheet::{Kind, Sheet};
 use alloc::string::ToString;
 use alloc::vec::Vec;
@@ -24,6 +24,8 @@ pub enum NoLiquid {
     Line(FlowError),
     /// The method asks for the one-point formula and gives no exponent.
     NoExponent,
+    /// The method uses the cone and does not say which.
+    NoCone,
     /// The value is no water content that a soil can have.
     OutOfReach(f64),
 }
@@ -32,7 +34,7 @@ pub enum NoLiquid {
 /// arithmetic needs.
 pub fn liquid_trials_needed(method: &Method) -> usize {
     let least = match method.liquid.how {
-        LiquidHow::FlowLine => 2,
+        LiquidHow::FlowLine | LiquidHow::Cone => 2,
         LiquidHow::OnePoint => 1,
     };
     least.max(method.liquid.trials as usize)
@@ -45,8 +47,8 @@ pub fn threads_needed(method: &Method) -> usize {
 
 /// The liquid limit from all trials that count, and the line it lies on.
 ///
-/// By the flow line the interval is the classical Student interval for a
-/// point on the line; by one point, for a mean.
+/// The interval given here is the classical Student interval: for a point on
+/// the line, or by one point, for a mean.
 ///
 /// # Errors
 /// See [`NoLiquid`].
@@ -56,27 +58,44 @@ pub fn liquid(sheet: &Sheet, trials: &[Determined], method: &Method) -> Result<(
     }
     let points: Vec<(f64, f64)> = trials.iter().filter_map(Determined::liquid_point).collect();
     let (limit, line) = match method.liquid.how {
-        LiquidHow::FlowLine => by_flow_line(&points, method)?,
+        LiquidHow::FlowLine => by_line(&points, Across::Drops, method)?,
+        LiquidHow::Cone => {
+            let axes = method.cone.as_ref().ok_or(NoLiquid::NoCone)?.axes;
+            by_line(&points, Across::Depth(axes), method)?
+        }
         LiquidHow::OnePoint => (by_one_point(&points, method)?, None),
     };
     if limit.value.is_finite() && limit.value > 0.0 { Ok((limit, line)) } else { Err(NoLiquid::OutOfReach(limit.value)) }
 }
 
-fn by_flow_line(points: &[(f64, f64)], method: &Method) -> Result<(LiquidLimit, Option<FlowLine>), NoLiquid> {
+/// Drops or millimetres at which the limit is read off the line.
+pub fn reading_at_limit(method: &Method) -> f64 {
+    match (method.device(), &method.cone) {
+        (Device::Cone, Some(cone)) => cone.at_mm,
+        _ => DROPS_AT_LIMIT,
+    }
+}
+
+fn by_line(points: &[(f64, f64)], across: Across, method: &Method) -> Result<(LiquidLimit, Option<FlowLine>), NoLiquid> {
     if points.len() < 2 {
         return Err(NoLiquid::TooFew(points.len()));
     }
-    let line = FlowLine::fit(points).map_err(NoLiquid::Line)?;
-    let value = line.at(DROPS_AT_LIMIT);
+    let line = FlowLine::fit_across(points, across).map_err(NoLiquid::Line)?;
+    let at = reading_at_limit(method);
+    let value = line.at(at);
+    let linear = across == Across::Depth(Axes::Linear);
     let limit = LiquidLimit {
         value,
         rounded: report(value, method),
-        u: line.u_at(DROPS_AT_LIMIT),
-        interval_95: line.interval(DROPS_AT_LIMIT, CONFIDENCE),
+        u: line.u_at(at),
+        interval_95: line.interval(at, CONFIDENCE),
+        u_from: None,
+        interval_95_classical: None,
         points: points.len() as u32,
-        slope_per_decade: Some(line.slope()),
+        slope_per_decade: (!linear).then(|| line.slope()),
+        slope_per_mm: linear.then(|| line.slope()),
         residual_sd: line.residual_sd(),
-        how: "flow line".to_string(),
+        how: if across == Across::Drops { "flow line".to_string() } else { "cone".to_string() },
     };
     Ok((limit, Some(line)))
 }
@@ -86,7 +105,8 @@ fn by_one_point(points: &[(f64, f64)], method: &Method) -> Result<LiquidLimit, N
     if points.is_empty() {
         return Err(NoLiquid::TooFew(0));
     }
-    let limits: Vec<f64> = points.iter().map(|&(drops, water)| one_point(drops, water, exponent)).collect();
+    let limit = |&(drops, water): &(f64, f64)| one_point(drops, water, exponent_for(drops, water, exponent, method));
+    let limits: Vec<f64> = points.iter().map(limit).collect();
     let value = stats::mean(&limits).ok_or(NoLiquid::OutOfReach(f64::INFINITY))?;
     let u = stats::mean_uncertainty(&limits);
     let half = u.and_then(|u| Some(u * super::student::two_sided(CONFIDENCE, limits.len() as u64 - 1)?));
@@ -95,11 +115,20 @@ fn by_one_point(points: &[(f64, f64)], method: &Method) -> Result<LiquidLimit, N
         rounded: report(value, method),
         u,
         interval_95: half.filter(|h| h.is_finite()).map(|h| [value - h, value + h]),
+        u_from: None,
+        interval_95_classical: None,
+        slope_per_mm: None,
         points: limits.len() as u32,
         slope_per_decade: None,
         residual_sd: None,
         how: "one point".to_string(),
     })
+}
+
+/// The exponent for a trial: a method may have another one for wetter soils.
+pub fn exponent_for(drops: f64, water: f64, exponent: f64, method: &Method) -> f64 {
+    let wet = one_point(drops, water, exponent) >= 50.0;
+    method.liquid.exponent_from_50_percent.filter(|e| wet && e.is_finite()).unwrap_or(exponent)
 }
 
 /// The plastic limit: mean of the thread determinations, `u = sd/√n`. `None`
@@ -111,7 +140,7 @@ pub fn plastic(sheet: &Sheet, trials: &[Determined], method: &Method) -> Option<
     let waters = waters(trials, Kind::Thread);
     let value = stats::mean(&waters)?;
     let u = stats::mean_uncertainty(&waters);
-    Some(PlasticLimit { value, rounded: report(value, method), u, points: waters.len() as u32 })
+    Some(PlasticLimit { value, rounded: report(value, method), u, interval_95: None, u_from: None, points: waters.len() as u32 })
 }
 
 /// Mean natural water content.
@@ -128,7 +157,7 @@ pub fn waters(trials: &[Determined], kind: Kind) -> Vec<f64> {
 ///
 /// Non-plastic when either limit was stated not obtainable, or when the
 /// plastic limit is not below the liquid limit, compared as the method says
-/// (T 90-16, section 7).
+/// (T 90-16, section 7). What is uncertain in it comes later.
 pub fn index(sheet: &Sheet, ll: Option<&LiquidLimit>, pl: Option<&PlasticLimit>, method: &Method) -> PlasticityIndex {
     let non_plastic = PlasticityIndex { non_plastic: true, ..PlasticityIndex::default() };
     if sheet.liquid_not_obtainable.is_some() || sheet.plastic_not_obtainable.is_some() {
@@ -143,8 +172,7 @@ pub fn index(sheet: &Sheet, ll: Option<&LiquidLimit>, pl: Option<&PlasticLimit>,
         Digits::Rounded => ll.rounded - pl.rounded,
         Digits::Unrounded => value,
     };
-    let u = ll.u.zip(pl.u).map(|(a, b)| libm::hypot(a, b)).filter(|u| u.is_finite());
-    PlasticityIndex { value: Some(value), rounded: Some(report(rounded, method)), u, non_plastic: false }
+    PlasticityIndex { value: Some(value), rounded: Some(report(rounded, method)), u: None, interval_95: None, non_plastic: false }
 }
 
 /// The plastic limit is not below the liquid limit.

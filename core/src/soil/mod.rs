@@ -9,9 +9,12 @@ pub mod flow;
 pub mod indices;
 pub mod limits;
 pub mod line;
+pub mod precision;
 pub mod rounding;
+pub mod slopes;
 pub mod stats;
 pub mod student;
+pub mod uncertainty;
 pub mod water;
 
 /// Drops at which the liquid limit is read off the flow line. This is the

@@ -6,7 +6,7 @@ use serde_json::{Map, Value};
 use std::time::Duration;
 
 /// Members that are numbers; everything else is text.
-const NUMBERS: [&str; 12] = [
+const NUMBERS: [&str; 14] = [
     "seq",
     "limit",
     "no",
@@ -17,6 +17,8 @@ const NUMBERS: [&str; 12] = [
     "celsius",
     "passing_75um_percent",
     "clay_percent",
+    "liquid_limit_oven_dried",
+    "penetration_mm",
     "revision",
     "kind_no",
 ];
@@ -111,6 +113,7 @@ mod tests {
         assert_eq!(text(&["into_oven", "containers=C1, C2"]).unwrap()["containers"][1], "C2");
         assert_eq!(text(&["not_obtainable", "limit=plastic"]).unwrap()["limit"], "plastic");
         assert_eq!(text(&["facts_after", "seq=3", "limit=5"]).unwrap()["limit"], 5);
+        assert_eq!(text(&["type_penetration", "bench=north", "penetration_mm=19.8", "who=AB"]).unwrap()["penetration_mm"], 19.8);
         assert!(text(&["set_aside", "what"]).is_err());
         assert!(text(&["set_aside", "what=x"]).is_err());
         assert_eq!(text(&[r#"{"ask":"status"}"#]).unwrap()["ask"], "status");

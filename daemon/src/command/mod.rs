@@ -23,6 +23,7 @@ mod ports;
 mod run;
 mod status;
 mod tell;
+mod validate;
 mod verify;
 mod work;
 
@@ -75,6 +76,8 @@ enum Verb {
     Check(check::CheckArgs),
     /// Compute limits from scenario or sheet files, without instruments.
     Work(work::WorkArgs),
+    /// Work published examples with this program and write a dated report.
+    Validate(validate::ValidateArgs),
     /// Ask the running service for something.
     Ask(ask::AskArgs),
     /// How the running service is doing.
@@ -114,6 +117,7 @@ pub fn main() -> ExitCode {
         Verb::Run(args) => run::run(args, cli.log),
         Verb::Check(args) => check::run(&args),
         Verb::Work(args) => work::run(&args),
+        Verb::Validate(args) => validate::run(&args),
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),

@@ -77,6 +77,15 @@ fn told(s: &Value) -> String {
         }
         out.push('\n');
     }
+    for (what, name) in [("cup", "trials in the cup"), ("cone", "trials with the cone"), ("threads", "thread containers")] {
+        let own = &s["own_scatter"][what];
+        if let Some(sd) = own["sd_percent"].as_f64() {
+            out += &format!(
+                "own scatter of {name}: {sd:.2} % water, {} degrees of freedom, {} specimens\n",
+                own["degrees_of_freedom"], own["specimens"]
+            );
+        }
+    }
     for b in s["benches"].as_array().into_iter().flatten() {
         out += &format!("bench {:<8} {} · {}\n", text(&b["bench"]), text(&b["signed_in"]), text(&b["next"]));
     }

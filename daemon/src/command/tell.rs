@@ -30,6 +30,9 @@ pub fn line(r: &Recorded) -> Option<String> {
                 c.run.as_ref().and_then(|r| r.interrupted.as_ref()).map(|w| format!(" INTERRUPTED: {w}")).unwrap_or_default();
             format!("{bench:<8} cup      {:>3} drops{rate}  {whose}{cut}", c.drops)
         }
+        Fact::PenetrationEntered { penetration_mm, bench, specimen } => {
+            format!("{:<8} cone     {penetration_mm:>5.1} mm  {specimen}", bench.as_str())
+        }
         Fact::Weighed(w) => {
             let bench = w.bench.as_ref().map_or("?", |b| b.as_str());
             match &w.link {
@@ -98,6 +101,20 @@ fn short(l: &Limits) -> String {
     )
 }
 
+/// The 95 % intervals of one specimen, and what they rest on; nothing where there are none.
+fn intervals(l: &Limits) -> String {
+    let (ll, pl) = (l.liquid_limit.as_ref(), l.plastic_limit.as_ref());
+    let all =
+        [("LL", ll.and_then(|v| v.interval_95)), ("PL", pl.and_then(|v| v.interval_95)), ("PI", l.plasticity_index.interval_95)];
+    let told: Vec<String> =
+        all.iter().filter_map(|(name, i)| i.map(|[low, high]| format!("{name} {low:.2} to {high:.2}"))).collect();
+    if told.is_empty() {
+        return String::new();
+    }
+    let from = ll.and_then(|v| v.u_from.as_deref()).or_else(|| pl.and_then(|v| v.u_from.as_deref()));
+    format!("  95 %  {} {} ({})\n", l.specimen, told.join(", "), from.unwrap_or_default())
+}
+
 /// Results as a table, with what the checks say below it.
 pub fn table(results: &[Limits]) -> String {
     let mut out = format!(
@@ -124,6 +141,9 @@ pub fn table(results: &[Limits]) -> String {
         );
     }
     out += "water contents in percent of dry mass; as reported in brackets\n";
+    for l in results {
+        out += &intervals(l);
+    }
     for l in results {
         for c in l.checks.iter().filter(|c| c.answered.is_none()) {
             let mark = if c.severity == Severity::Hold { "HOLD" } else { "note" };

@@ -261,6 +261,7 @@ impl Desk {
                 let loose = lab.loose(*seq);
                 doc("loose", &format!("{seq:020}"), loose.is_some(), json(&loose))
             }
+            Entity::Statistics => doc("statistics", views::STATISTICS, true, json(lab.statistics())),
         }
     }
 

@@ -10,6 +10,7 @@ use serde_json::Value;
 use std::path::Path;
 use tarecup_core::fact::Fact;
 use tarecup_core::lab::entities::{Container, Entity, Loose, Specimen};
+use tarecup_core::lab::statistics::Statistics;
 use tarecup_core::lab::{Lab, Loaded, Setup};
 use tarecup_core::names::{BenchName, ContainerId, InstrumentName, SpecimenId};
 use tarecup_core::sense::{CountLimits, SettleLimits};
@@ -167,10 +168,27 @@ impl Desk {
         ] {
             self.each_document(kind, which, |desk, stored| desk.load_one(&stored))?;
         }
+        self.load_statistics()?;
         for id in self.lab.missing() {
             self.fetch_specimen(&id);
         }
         self.load_senses(now)
+    }
+
+    /// What all results say together; of a ledger that has no such document yet, from its results.
+    fn load_statistics(&mut self) -> Result<(), LedgerError> {
+        if let Some(stored) = self.reader.document("statistics", views::STATISTICS)? {
+            self.load_one(&stored);
+            return Ok(());
+        }
+        let mut sums = Statistics::default();
+        self.each_document("specimen", Which::All, |_, stored| {
+            if let Ok(Some(specimen)) = serde_json::from_slice::<Option<Specimen>>(&stored.body) {
+                sums = sums.plus(specimen.limits.as_ref().map_or(Statistics::default(), Statistics::of));
+            }
+        })?;
+        self.lab.load(Loaded::Statistics(sums));
+        Ok(())
     }
 
     fn each_document(
@@ -205,6 +223,7 @@ impl Desk {
             "container" => read(stored).map(|c: Container| Loaded::Container(c)),
             "bench" => read(stored).map(Loaded::Bench),
             "instrument" => read(stored).map(Loaded::Instrument),
+            "statistics" => read(stored).map(Loaded::Statistics),
             "loose" => read(stored).map(|l: Loose| Loaded::Loose(l)),
             _ => None,
         };
@@ -347,7 +366,7 @@ impl Desk {
             Ok(Fact::Weighed(w)) => w.link.and_then(|l| l.specimen),
             Ok(Fact::WeighingTied { link, .. }) => link.specimen,
             Ok(Fact::Counted(c)) => c.specimen,
-            Ok(Fact::CountTied { specimen, .. }) => Some(specimen),
+            Ok(Fact::CountTied { specimen, .. } | Fact::PenetrationEntered { specimen, .. }) => Some(specimen),
             _ => None,
         };
         ties.iter().filter_map(specimen).collect()

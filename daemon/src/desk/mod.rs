@@ -21,6 +21,7 @@ mod views;
 pub use group::{Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
+pub(crate) use views::STATISTICS;
 pub use views::limits as limits_payload;
 
 use crate::asks;

@@ -8,10 +8,14 @@ use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
 use tarecup_core::lab::Lab;
 use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
+use tarecup_core::lab::statistics::Sums;
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
 use tarecup_core::stamp::{Stamp, rfc3339};
+
+/// Name of the one document of what all results say together.
+pub(crate) const STATISTICS: &str = "all";
 
 /// Version of the payloads.
 const V: u32 = 1;
@@ -24,7 +28,7 @@ pub(super) fn of(lab: &Lab, entity: &Entity, seq: u64) -> Option<(String, Value)
         Entity::Bench(name) => lab.bench(name).map(|b| (format!("bench/{name}"), bench(lab, b, seq))),
         // Its counters are the desk's: the desk fills it in.
         Entity::Instrument(name) => Some((format!("instrument/{name}"), Value::Null)),
-        Entity::Loose(_) => None,
+        Entity::Loose(_) | Entity::Statistics => None,
     }
 }
 
@@ -42,7 +46,7 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "in_hand": bench.hand.as_ref().map(|h| json!({"container": h.container, "since": h.since.rfc3339(), "weighed": h.weighing.is_some()})),
         "intention": bench.intention.as_ref().map(|w| json!({"specimen": w.specimen, "intention": w.intention})),
         "slice_owed": bench.owed.as_ref().map(|o| json!({
-            "specimen": o.specimen, "drops": o.drops, "closures": o.counts.len(), "since": o.ended.rfc3339(), "overdue": o.said,
+            "specimen": o.specimen, "drops": o.drops, "penetration_mm": o.penetration_mm, "closures": o.counts.len(), "since": o.ended.rfc3339(), "overdue": o.said,
         })),
         "latest": bench.latest.as_ref().map(|l| json!({
             "seq": l.seq, "mass_g": grams(l.mass), "container": l.container, "role": l.role, "loose": l.loose, "at": l.at.rfc3339(),
@@ -78,9 +82,10 @@ pub(super) fn specimen(s: &Specimen, seq: u64) -> Value {
         .trials
         .iter()
         .map(|t| {
-            let drops = t.counts.last().and_then(|&c| s.count(c)).map(|c| c.drops);
+            let count = t.counts.last().and_then(|&c| s.count(c));
+            let (drops, mm) = (count.map(|c| c.drops), count.and_then(|c| c.penetration_mm));
             json!({
-                "kind": t.kind, "no": t.no, "container": t.container, "drops": drops,
+                "kind": t.kind, "no": t.no, "container": t.container, "drops": drops.filter(|_| mm.is_none()), "penetration_mm": mm,
                 "tare": t.tare.is_some(), "wet": !t.wets.is_empty(), "dry": t.dries.len(),
                 "set_aside": t.set_aside.as_ref().map(|a| a.why.as_str()),
             })
@@ -111,6 +116,17 @@ pub fn limits(limits: &Limits, revision: u32, seq: u64, at: Option<String>, chan
     view.insert("changed".into(), json!(changed));
     view.insert("ledger".into(), ledger);
     Value::Object(view)
+}
+
+/// How far the laboratory's own finished trials lie from their lines and its thread containers from their means.
+fn own_scatter(lab: &Lab) -> Value {
+    let one = |sums: Sums| {
+        let pooled = sums.pooled();
+        let sd = (pooled.df > 0).then(|| pooled.variance().sqrt());
+        json!({"sd_percent": sd, "degrees_of_freedom": pooled.df, "specimens": sums.specimens})
+    };
+    let all = lab.statistics();
+    json!({"cup": one(all.cup), "cone": one(all.cone), "threads": one(all.threads)})
 }
 
 impl Desk {
@@ -182,8 +198,8 @@ impl Desk {
     }
 
     fn read_document(&self, kind: &str, id: &str) -> String {
-        if !["specimen", "container", "bench", "instrument", "loose"].contains(&kind) {
-            return refusal("a document is of the kind specimen, container, bench, instrument or loose");
+        if !["specimen", "container", "bench", "instrument", "loose", "statistics"].contains(&kind) {
+            return refusal("a document is of the kind specimen, container, bench, instrument, loose or statistics");
         }
         match self.reader.document(kind, id) {
             Err(e) => refusal(&e.to_string()),
@@ -216,7 +232,7 @@ impl Desk {
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
             "backup": crate::backup::Note::read(std::path::Path::new(&self.setup.state_dir)).view(),
-            "instruments": instruments, "benches": benches,
+            "instruments": instruments, "benches": benches, "own_scatter": own_scatter(&self.lab),
         })
     }
 }

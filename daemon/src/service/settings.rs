@@ -15,6 +15,7 @@ use tarecup_core::method::Method;
 use tarecup_core::names::{BenchName, InstrumentName, MethodName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
+use tarecup_core::soil::uncertainty::Balance;
 use tarecup_core::stamp::SECOND_US;
 use tarecup_drivers::port::PortSettings;
 use tarecup_drivers::profile::{Profile, ProfileText};
@@ -52,6 +53,8 @@ struct InstrumentKept {
     profile: String,
     settle: SettleLimits,
     count: CountLimits,
+    #[serde(default)]
+    weighs: Balance,
 }
 
 #[derive(Serialize, Deserialize)]
@@ -78,6 +81,7 @@ impl Kept {
             profile: i.profile.as_str().into(),
             settle: i.settle,
             count: i.count,
+            weighs: i.weighs,
         });
         let used = station.instruments.iter().filter_map(|i| station.profiles.get(&i.profile));
         let linking = &station.linking;
@@ -116,6 +120,7 @@ impl Kept {
             instruments: self.instruments.iter().map(|i| (i.name.clone(), i.benches.clone())).collect(),
             methods: self.methods.clone(),
             default_method: self.default_method.clone(),
+            balances: self.instruments.iter().map(|i| (i.name.clone(), i.weighs)).collect(),
             linking: Linking {
                 near: linking.near_ug,
                 slice_us: seconds(linking.slice_minutes) * 60,

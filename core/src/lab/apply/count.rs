@@ -30,6 +30,29 @@ impl Lab {
         }
     }
 
+    pub(super) fn apply_penetration(
+        &mut self,
+        mm: f64,
+        bench: &BenchName,
+        specimen: &SpecimenId,
+        r: &Recorded,
+        touched: &mut Touched,
+    ) {
+        let mut count = Count::typed(r.seq, r.at, r.who.clone());
+        count.penetration_mm = Some(mm);
+        self.count_belongs(count, specimen, bench, r, touched);
+    }
+
+    pub(super) fn apply_penetration_amended(&mut self, seq: Seq, mm: f64, said: &Said, touched: &mut Touched) {
+        self.with_count(seq, touched, |c| (c.penetration_mm, c.typed, c.corrected) = (Some(mm), true, Some(said.clone())));
+        for bench in self.benches.values_mut() {
+            if let Some(owed) = bench.owed.as_mut().filter(|o| o.counts.last() == Some(&seq)) {
+                owed.penetration_mm = Some(mm);
+                touched.insert(Entity::Bench(bench.name.clone()));
+            }
+        }
+    }
+
     fn drop_loose(&mut self, seq: Seq, touched: &mut Touched) -> bool {
         let was = self.loose.remove(&seq).is_some();
         if was {
@@ -55,7 +78,7 @@ impl Lab {
             let Some(owed) = bench.owed.as_mut().filter(|o| o.counts.contains(&old)) else { continue };
             owed.counts.iter_mut().filter(|c| **c == old).for_each(|c| *c = seq);
             if owed.counts.last() == Some(&seq) {
-                (owed.drops, owed.ended) = (drops, ended);
+                (owed.drops, owed.penetration_mm, owed.ended) = (drops, None, ended);
             }
             touched.insert(Entity::Bench(bench.name.clone()));
         }
@@ -159,7 +182,6 @@ impl Lab {
 fn new_count(counted: &Counted, r: &Recorded) -> Count {
     let run = counted.run.as_ref();
     Count {
-        seq: r.seq,
         drops: counted.drops,
         rate_per_s: run.and_then(|r| r.rate_per_s),
         gaps: run.map_or(0, |r| r.gaps),
@@ -168,18 +190,15 @@ fn new_count(counted: &Counted, r: &Recorded) -> Count {
         cup: counted.cup.clone(),
         at: run.map_or(r.at, |r| r.at),
         typed: run.is_none(),
-        superseded: None,
-        set_aside: None,
-        corrected: None,
-        by: r.who.clone(),
         bench: counted.bench.clone(),
         run: run.map(|r| (r.first_input, r.began)),
+        ..Count::typed(r.seq, r.at, r.who.clone())
     }
 }
 
 /// What is owed after these counts of a specimen.
 fn owed_for(specimen: &crate::lab::entities::Specimen, counts: Vec<Seq>) -> Option<Owed> {
     let last = counts.last().and_then(|&c| specimen.count(c))?;
-    let (drops, ended) = (last.drops, last.at);
-    Some(Owed { specimen: specimen.id.clone(), counts, drops, ended, said: false })
+    let (drops, penetration_mm, ended) = (last.drops, last.penetration_mm, last.at);
+    Some(Owed { specimen: specimen.id.clone(), counts, drops, penetration_mm, ended, said: false })
 }

@@ -7,6 +7,7 @@ mod weighing;
 use super::Lab;
 use super::entities::{CheckAnswer, Container, Entity, Hand, OvenClock, Said, Specimen, TrialRecord, Work};
 use super::oven::work_hours;
+use super::statistics::Statistics;
 use crate::fact::{Fact, Limit, Recorded, SpecimenOpened, TrialRef};
 use crate::limits::State;
 use crate::names::{BenchName, ContainerId, Operator, SpecimenId};
@@ -44,6 +45,12 @@ impl Lab {
             Fact::WeighingTied { weighing, link, bench, .. } => self.apply_tied(*weighing, link, bench.as_ref(), r, touched),
             Fact::Counted(counted) => self.apply_counted(counted, r, touched),
             Fact::CountTied { count, bench, specimen, .. } => self.apply_count_tied(*count, bench, specimen, r, touched),
+            Fact::PenetrationEntered { penetration_mm, bench, specimen } => {
+                self.apply_penetration(*penetration_mm, bench, specimen, r, touched);
+            }
+            Fact::PenetrationAmended { penetration, penetration_mm, why, .. } => {
+                self.apply_penetration_amended(*penetration, *penetration_mm, &said(r, why), touched);
+            }
             Fact::CountSuperseded { count, why } => self.apply_superseded(*count, why, touched),
             Fact::SetAside { what, why } => self.apply_set_aside(*what, said(r, why), touched),
             Fact::TrialSetAside { specimen, trial, no, why } => {
@@ -90,6 +97,7 @@ impl Lab {
             preparation: o.preparation,
             passing_75um_percent: o.passing_75um_percent,
             clay_percent: o.clay_percent,
+            liquid_limit_oven_dried: o.liquid_limit_oven_dried,
             opened: r.at,
             counts: Vec::new(),
             trials: Vec::new(),
@@ -193,7 +201,13 @@ impl Lab {
                 {
                     *of = *revision;
                 }
+                let was = state.limits.as_ref().map_or(Statistics::default(), Statistics::of);
+                let sums = self.statistics.minus(was).plus(Statistics::of(limits));
                 state.limits = Some((**limits).clone());
+                if sums != self.statistics {
+                    self.statistics = sums;
+                    touched.insert(Entity::Statistics);
+                }
             }
             _ => (),
         }

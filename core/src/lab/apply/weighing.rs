@@ -53,7 +53,8 @@ impl Lab {
         let mass = weighed.link.as_ref().map_or(weighed.mass_ug, |l| l.gross);
         let at = weighed.taken.map_or(r.at, |t| t.at);
         let (typed, by) = (weighed.taken.is_none(), r.who.clone());
-        let weighing = Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, corrected: None };
+        let step = weighed.taken.map(|t| t.step);
+        let weighing = Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, step, corrected: None };
         self.lies_on_pan(weighed, r.seq, touched);
         match &weighed.link {
             Some(link) => self.apply_link(&weighing, link, touched),
