@@ -354,6 +354,16 @@ pub enum Intention {
     Natural,
 }
 
+/// How a groove failed to close as it should.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum ClosureFault {
+    /// The soil slid on the cup instead of flowing together.
+    Slid,
+    /// The sides of the groove tore.
+    Tore,
+}
+
 /// A limit.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(rename_all = "snake_case")]

@@ -106,11 +106,13 @@ impl Method {
     }
 
     fn ranges(&self, faults: &mut Faults) {
-        for (key, [low, high]) in [
+        let paste = self.liquid.paste_water_percent.map(|range| ("liquid.paste_water_percent", range));
+        let always = [
             ("liquid.rate_per_s", self.liquid.rate_per_s),
             ("plastic.thread_mm", self.plastic.thread_mm),
             ("drying.oven_celsius", self.drying.oven_celsius),
-        ] {
+        ];
+        for (key, [low, high]) in always.into_iter().chain(paste) {
             if !(low > 0.0 && low <= high && high.is_finite()) {
                 fault(faults, key, format!("from {low} to {high} is no range: write two numbers above 0, the smaller first"));
             }
@@ -121,6 +123,8 @@ impl Method {
         for (key, value) in [
             ("liquid.closure_mm", Some(self.liquid.closure_mm)),
             ("liquid.balance_reads_g", Some(self.liquid.balance_reads_g)),
+            ("liquid.slope_per_decade", self.liquid.slope_per_decade),
+            ("liquid.slope_sd", self.liquid.slope_sd),
             ("plastic.mass_from_g", self.plastic.mass_from_g),
             ("plastic.agree_within_percent", self.plastic.agree_within_percent),
             ("drying.hours", Some(self.drying.hours)),
@@ -155,6 +159,9 @@ impl Method {
             ("liquid.windows", !self.liquid.windows.is_empty()),
             ("liquid.spread_at_least", self.liquid.spread_at_least.is_some()),
             ("liquid.exponent", self.liquid.exponent.is_some()),
+            ("liquid.slope_per_decade", self.liquid.slope_per_decade.is_some()),
+            ("liquid.slope_sd", self.liquid.slope_sd.is_some()),
+            ("liquid.paste_water_percent", self.liquid.paste_water_percent.is_some()),
             ("plastic.mass_from_g", self.plastic.mass_from_g.is_some()),
             ("plastic.agree_within_percent", self.plastic.agree_within_percent.is_some()),
         ];

@@ -34,7 +34,7 @@ mod tare_owed;
 mod threads;
 mod typed;
 mod u_line;
-mod windows;
+pub(crate) mod windows;
 
 use crate::limits::{CheckRow, LiquidLimit, PlasticLimit, PlasticityIndex, Severity};
 use crate::method::Method;

@@ -1,7 +1,7 @@
 //! What the laboratory's state is made of. Each entity is stored as one
 //! versioned document.
 
-use crate::fact::{Connection, Intention, TrialRef};
+use crate::fact::{ClosureFault, Connection, Intention, TrialRef};
 use crate::lab::role::Role;
 use crate::limits::Limits;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
@@ -133,6 +133,9 @@ pub struct OvenClock {
     pub recorded: bool,
     /// Where nobody did: when the wet weighing was.
     pub wet_at: Stamp,
+    /// Oven temperature stated when it went in last, °C.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub celsius: Option<f64>,
 }
 
 /// A stay in the oven.
@@ -202,6 +205,9 @@ pub struct Specimen {
     pub reviewed: Option<(u32, Option<Operator>)>,
     /// The latest result.
     pub limits: Option<Limits>,
+    /// What is wanted of it; empty: liquid and plastic limit.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub wanted: Vec<Intention>,
 }
 
 /// A count run of a specimen.
@@ -241,6 +247,9 @@ pub struct Count {
     /// First line of the run, and when it began: tells a run that is told again.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub run: Option<(InputNo, Stamp)>,
+    /// Set aside because the groove did not close as it should.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub failed: Option<ClosureFault>,
 }
 
 /// One determination.
@@ -265,6 +274,20 @@ pub struct TrialRecord {
     pub dries: Vec<DryRecord>,
     /// Set aside by a person.
     pub set_aside: Option<Said>,
+    /// It was begun for another specimen and moved here.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub moved: Option<Moved>,
+}
+
+/// A determination that was begun for another specimen.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Moved {
+    /// For which.
+    pub from: SpecimenId,
+    /// Its number there.
+    pub no: u32,
+    /// Who moved it, and why.
+    pub said: Said,
 }
 
 /// One dry weighing with its oven time.
@@ -317,6 +340,20 @@ pub struct Bench {
     /// The latest code of a container read here, by its fact.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub code: Option<Seq>,
+    /// The run that goes on at the cup does not stand.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub failed: Option<FailedRun>,
+}
+
+/// A person said of a run that it does not stand, before it was over.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct FailedRun {
+    /// What happened.
+    pub fault: ClosureFault,
+    /// Who, and why.
+    pub said: Said,
+    /// When.
+    pub at: Stamp,
 }
 
 /// What a bench works on.
@@ -390,6 +427,12 @@ pub struct Loose {
     pub why: String,
     /// When.
     pub at: Stamp,
+    /// First and last line of its instrument that it rests on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub inputs: Option<[InputNo; 2]>,
+    /// A person said what it was; it stays loose and needs nobody any more.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub explained: Option<Said>,
 }
 
 /// What is loose.
@@ -476,6 +519,7 @@ impl Bench {
             refusal: None,
             active: Stamp::default(),
             code: None,
+            failed: None,
         }
     }
 }
@@ -519,6 +563,13 @@ impl Specimen {
     /// The number the next determination of this kind gets.
     pub fn next_no(&self, kind: Kind) -> u32 {
         self.trials.iter().filter(|t| t.kind == kind).map(|t| t.no).max().unwrap_or(0) + 1
+    }
+    /// Whether this is wanted of it.
+    pub fn wants(&self, what: Intention) -> bool {
+        match self.wanted.is_empty() {
+            true => what != Intention::Natural,
+            false => self.wanted.contains(&what),
+        }
     }
     /// Whether work is still to be done on it.
     pub fn open(&self) -> bool {

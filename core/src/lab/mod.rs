@@ -9,14 +9,17 @@ pub mod ask;
 pub mod entities;
 pub mod role;
 
+pub mod advice;
 mod apply;
 mod code;
 mod correct;
 mod count;
-mod guide;
+pub mod guide;
 mod link;
+pub mod loose;
 mod oven;
 mod result;
+pub mod shelf;
 mod weigh;
 
 use crate::fact::{Connection, Fact, Recorded};
@@ -34,8 +37,11 @@ use alloc::vec::Vec;
 use ask::Ask;
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 
+pub use advice::{Advice, Slope, Wish};
 pub use guide::Guide;
+pub use loose::LooseThing;
 pub use oven::dried;
+pub use shelf::OnShelf;
 
 /// Loose things kept at hand; older ones stay in the ledger.
 const LOOSE_AT_HAND: usize = 1_000;

@@ -14,7 +14,7 @@ pub(super) const STAYS_KEPT: usize = 200;
 impl OvenClock {
     /// Starts with the wet weighing; a record of the oven makes it true.
     pub(super) fn new(wet_at: Stamp) -> Self {
-        Self { since: None, stays: Vec::new(), off: Vec::new(), recorded: false, wet_at }
+        Self { since: None, stays: Vec::new(), off: Vec::new(), recorded: false, wet_at, celsius: None }
     }
 
     /// Time in the oven up to a moment, µs, and the clock it rests on.
@@ -103,7 +103,12 @@ impl OvenClock {
     }
 }
 
-fn hours(us: i64) -> f64 {
+/// When the latest stay in the oven began.
+pub(super) fn last_stay(oven: &OvenClock) -> Option<Stamp> {
+    oven.stays.last().map(|s| s.from)
+}
+
+pub(super) fn hours(us: i64) -> f64 {
     us.max(0) as f64 / HOUR_US as f64
 }
 

@@ -20,7 +20,10 @@ impl Lab {
             _ => {
                 let why = counted.loose.clone().unwrap_or_default();
                 let (at, what) = (count.at, LooseWhat::Count(count));
-                self.loose.insert(r.seq, Loose { seq: r.seq, bench: counted.bench.clone(), what, why: why.clone(), at });
+                self.loose.insert(r.seq, {
+                    let inputs = counted.run.as_ref().map(|r| [r.first_input, r.last_input]);
+                    Loose { seq: r.seq, bench: counted.bench.clone(), what, why: why.clone(), at, inputs, explained: None }
+                });
                 touched.insert(Entity::Loose(r.seq));
                 if let Some(state) = counted.bench.as_ref().and_then(|b| self.benches.get_mut(b)) {
                     state.refusal = Some(why);
@@ -174,6 +177,7 @@ fn new_count(counted: &Counted, r: &Recorded) -> Count {
         by: r.who.clone(),
         bench: counted.bench.clone(),
         run: run.map(|r| (r.first_input, r.began)),
+        failed: None,
     }
 }
 

@@ -99,6 +99,7 @@ impl Lab {
             revision: 0,
             reviewed: None,
             limits: None,
+            wanted: Vec::new(),
         };
         self.specimens.insert(o.specimen.clone(), specimen);
         touched.insert(Entity::Specimen(o.specimen));

@@ -60,7 +60,9 @@ impl Lab {
             None => {
                 let why = weighed.loose.clone().unwrap_or_default();
                 let what = LooseWhat::Weighing { weighing, basis };
-                self.loose.insert(r.seq, Loose { seq: r.seq, bench: weighed.bench.clone(), what, why, at });
+                let inputs = weighed.taken.map(|t| [t.first_input, t.input]);
+                let (seq, bench) = (r.seq, weighed.bench.clone());
+                self.loose.insert(seq, Loose { seq, bench, what, why, at, inputs, explained: None });
                 touched.insert(Entity::Loose(r.seq));
             }
         }
@@ -277,6 +279,7 @@ impl Lab {
             repeats: Vec::new(),
             dries: Vec::new(),
             set_aside: None,
+            moved: None,
         };
         let place = specimen.trials.partition_point(|t| t.wets.first().is_some_and(|w| w.seq < weighing.seq));
         specimen.trials.insert(place, record);
