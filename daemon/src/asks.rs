@@ -5,10 +5,16 @@
 //! belongs to the ask.
 
 use serde_json::{Map, Value, json};
+use std::str::FromStr;
+use tarecup_core::lab::Wish;
 use tarecup_core::lab::ask::Ask;
+use tarecup_core::names::{BenchName, NameError, SpecimenId};
+use tarecup_core::quantity::{Mass, MassUnit};
 
 /// Largest ask, in bytes. Checked before anything is parsed.
 pub const LARGEST: usize = 64 * 1024;
+/// More paste than any dish holds.
+const MOST_PASTE_UG: i64 = 10_000 * 1_000_000;
 /// Deepest nesting of an ask.
 const DEEPEST: usize = 16;
 
@@ -22,7 +28,7 @@ pub enum Wanted {
 }
 
 /// Asks that only read.
-#[derive(Debug, PartialEq, Eq)]
+#[derive(Debug, PartialEq)]
 pub enum Read {
     /// How the service is doing.
     Status,
@@ -35,6 +41,19 @@ pub enum Read {
         /// Which.
         id: String,
     },
+    /// What helps now: at a bench, or about a specimen.
+    Advice {
+        /// The bench.
+        bench: Option<BenchName>,
+        /// The specimen, wherever it is worked on.
+        specimen: Option<SpecimenId>,
+        /// What the client knows besides.
+        wish: Wish,
+    },
+    /// What is drying.
+    Shelf,
+    /// Loose weighings and counts.
+    Loose,
     /// Facts after a number.
     FactsAfter {
         /// The number.
@@ -98,8 +117,40 @@ fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
             seq: object.get("seq").and_then(Value::as_u64).ok_or("\"facts_after\" needs a whole number \"seq\"")?,
             limit: object.get("limit").and_then(Value::as_u64).unwrap_or(100).min(1_000) as usize,
         },
+        "advice" => advice(object)?,
+        "shelf" => Read::Shelf,
+        "loose" => Read::Loose,
         _ => return Ok(None),
     }))
+}
+
+fn advice(object: &Map<String, Value>) -> Result<Read, String> {
+    fn name<T: FromStr<Err = NameError>>(object: &Map<String, Value>, member: &str) -> Result<Option<T>, String> {
+        let Some(value) = object.get(member).filter(|v| !v.is_null()) else { return Ok(None) };
+        let text = value.as_str().ok_or_else(|| format!("\"{member}\" is a text"))?;
+        text.parse().map(Some).map_err(|e| format!("\"{member}\": {e}"))
+    }
+    let paste = match object.get("paste_g").filter(|v| !v.is_null()) {
+        None => None,
+        Some(value) => {
+            let text = value.as_str().map_or_else(|| value.to_string(), String::from);
+            let mass = Mass::parse(&text, MassUnit::Gram).map_err(|e| format!("\"paste_g\" is a mass in grams: {e}"))?;
+            let believable = mass > Mass::ZERO && mass <= Mass::from_ug(MOST_PASTE_UG);
+            Some(mass)
+                .filter(|_| believable)
+                .ok_or("\"paste_g\" is the mass of the paste, more than 0 and at most 10000 g")?
+                .into()
+        }
+    };
+    let drops = match object.get("drops").filter(|v| !v.is_null()) {
+        None => None,
+        Some(value) => {
+            let drops = value.as_u64().and_then(|d| u32::try_from(d).ok()).filter(|d| (1..=500).contains(d));
+            Some(drops.ok_or("\"drops\" is a whole number between 1 and 500")?)
+        }
+    };
+    let wish = Wish { paste, drops, slope: None };
+    Ok(Read::Advice { bench: name(object, "bench")?, specimen: name(object, "specimen")?, wish })
 }
 
 /// Deepest bracket of a JSON text, brackets inside texts not counted.

@@ -34,6 +34,7 @@ pub fn sheet(trials: Vec<Trial>) -> Sheet {
         clay_percent: None,
         answers: Vec::new(),
         reviewed: false,
+        wanted: Vec::new(),
     }
 }
 

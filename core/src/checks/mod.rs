@@ -53,6 +53,8 @@ pub const LIQUID_LIMIT: &str = "liquid limit";
 pub const PLASTIC_LIMIT: &str = "plastic limit";
 /// … the plasticity index.
 pub const PLASTICITY_INDEX: &str = "plasticity index";
+/// … the natural water content.
+pub const NATURAL_WATER: &str = "natural water content";
 /// … the specimen as a whole.
 pub const SPECIMEN: &str = "specimen";
 

@@ -17,6 +17,7 @@ mod count;
 pub mod guide;
 mod link;
 pub mod loose;
+mod near;
 mod oven;
 mod result;
 pub mod shelf;
@@ -217,6 +218,8 @@ pub struct Lab {
     benches: BTreeMap<BenchName, Bench>,
     instruments: BTreeMap<InstrumentName, Instrument>,
     loose: BTreeMap<Seq, Loose>,
+    /// Counters whose run goes on, and since when. Heard, not decided: it is in no document.
+    running: BTreeMap<InstrumentName, Stamp>,
 }
 
 impl Lab {
@@ -231,7 +234,14 @@ impl Lab {
             benches,
             instruments,
             loose: BTreeMap::new(),
+            running: BTreeMap::new(),
         }
+    }
+
+    /// Tells which counters are in a run, and since when; said before an ask or a code is taken, since a card
+    /// that gives a run up may be read before its pause is over.
+    pub fn counting(&mut self, runs: impl IntoIterator<Item = (InstrumentName, Stamp)>) {
+        self.running = runs.into_iter().collect();
     }
 
     /// Takes an input: decides, applies, follows up. Nothing has changed when it is refused.

@@ -196,6 +196,14 @@ impl Ear {
         self.published = (self.understood, self.last_heard);
     }
 
+    /// Since when a run of its cup goes on.
+    pub fn running(&self) -> Option<Stamp> {
+        match &self.sense {
+            Sense::Counter(count) => count.began(),
+            _ => None,
+        }
+    }
+
     /// Lets time pass for the sense.
     pub fn tick(&mut self, now: &Stamp) -> Option<Happening> {
         match &mut self.sense {

@@ -20,7 +20,7 @@ mod views;
 pub use group::{Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
-pub use views::limits as limits_payload;
+pub use views::{limits as limits_payload, loose as loose_payload, shelf as shelf_payload};
 
 use crate::asks;
 use crate::ledger::{Ledger, LedgerError, Reader};
@@ -388,6 +388,11 @@ impl Desk {
     fn try_decide(&mut self, input: Input, at: Stamp) -> Result<(), tarecup_core::lab::Refusal> {
         for id in self.lab.wants(&input) {
             self.fetch_specimen(&id);
+        }
+        if matches!(input, Input::Ask(_) | Input::Code { .. }) {
+            let runs = self.ears.iter().zip(&self.setup.instruments);
+            let runs = runs.filter_map(|(ear, i)| ear.running().map(|since| (i.name.clone(), since)));
+            self.lab.counting(runs.collect::<Vec<_>>());
         }
         let Outcome { facts, touched } = self.lab.take(input, at, self.next_seq)?;
         self.next_seq += facts.len() as u64;

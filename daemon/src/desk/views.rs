@@ -5,8 +5,8 @@ use super::Desk;
 use crate::asks::{Read, refusal};
 use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
-use tarecup_core::lab::Lab;
 use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
+use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish};
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
@@ -34,7 +34,7 @@ fn grams(mass: Mass) -> Value {
 /// A bench: who, in hand, intention, slice owed, what comes next.
 pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
     let guide = lab.guide(&bench.name);
-    let loose = lab.loose_things().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
+    let loose = lab.loose_open().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
     json!({
         "v": V, "seq": seq, "at": (bench.active != Stamp::default()).then(|| bench.active.rfc3339()), "bench": bench.name,
         "signed_in": bench.signed_in,
@@ -49,7 +49,35 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "loose": loose,
         "next": guide.as_ref().map(|g| g.next.as_str()),
         "urgent": guide.as_ref().is_some_and(|g| g.urgent),
+        "caution": guide.as_ref().and_then(|g| g.caution).map(|c| c.says),
+        "action": guide.as_ref().and_then(|g| g.action.clone()),
+        "next_since": guide.as_ref().and_then(|g| g.since).map(|s| s.rfc3339()),
     })
+}
+
+/// What is drying, and what comes next for it.
+pub fn shelf(lab: &Lab, now: &Stamp) -> Vec<Value> {
+    let one = |s: &OnShelf| {
+        json!({
+            "container": s.container, "specimen": s.specimen, "trial": s.trial.kind, "no": s.trial.no, "standing": s.standing,
+            "wet_g": s.wet.map(grams), "dry_g": s.dry.map(grams), "since": s.since.rfc3339(), "recorded": s.recorded,
+            "celsius": s.celsius, "hours": s.hours, "hours_since_dry": s.hours_since_dry, "hours_wanted": s.hours_wanted,
+            "ready": s.ready, "ready_in_hours": s.ready_in_hours, "overdue": s.overdue, "wrong_heat": s.wrong_heat, "next": s.next,
+        })
+    };
+    lab.shelf(now).iter().map(one).collect()
+}
+
+/// Loose weighings and counts.
+pub fn loose(lab: &Lab) -> Vec<Value> {
+    let one = |l: LooseThing| {
+        json!({
+            "seq": l.seq, "bench": l.bench, "instrument": l.instrument, "mass_g": l.mass.map(grams), "drops": l.drops,
+            "why": l.why, "explained": l.explained, "at": l.at.rfc3339(),
+            "first_input": l.inputs.map(|i| i[0]), "input": l.inputs.map(|i| i[1]),
+        })
+    };
+    lab.loose_list().map(one).collect()
 }
 
 /// A container: where it stands.
@@ -161,6 +189,9 @@ impl Desk {
             Read::Latest(bench) => self.read_latest(bench),
             Read::Document { kind, id } => self.read_document(kind, id),
             Read::FactsAfter { seq, limit } => self.read_facts(*seq, *limit),
+            Read::Advice { bench, specimen, wish } => self.read_advice(bench.as_ref(), specimen.as_ref(), wish),
+            Read::Shelf => json!({"ok": true, "shelf": shelf(&self.lab, now)}).to_string(),
+            Read::Loose => json!({"ok": true, "loose": loose(&self.lab)}).to_string(),
         }
     }
 
@@ -176,6 +207,21 @@ impl Desk {
         });
         let guide = self.lab.guide(&bench.name);
         json!({"ok": true, "latest": latest, "next": guide.map(|g| g.next)}).to_string()
+    }
+
+    fn read_advice(&self, bench: Option<&BenchName>, specimen: Option<&SpecimenId>, wish: &Wish) -> String {
+        let (advice, about) = match (bench, specimen) {
+            (_, Some(id)) => (self.lab.advice_for(id, wish), format!("there is no specimen {id}, or it is finished")),
+            (Some(name), None) if self.lab.bench(name).is_none() => (None, format!("there is no bench {name}")),
+            (Some(name), None) => {
+                (self.lab.advice(name, wish), format!("no limit is in work at bench {name}: name the specimen"))
+            }
+            (None, None) => (None, String::from("name a bench or a specimen")),
+        };
+        match advice {
+            Some(advice) => json!({"ok": true, "advice": advice}).to_string(),
+            None => refusal(&about),
+        }
     }
 
     fn read_document(&self, kind: &str, id: &str) -> String {
@@ -211,7 +257,7 @@ impl Desk {
             "v": V, "at": now.rfc3339(), "program": env!("CARGO_PKG_VERSION"), "station": self.setup.station,
             "not_recording": self.not_recording, "ledger": tail.id.to_string(), "epoch": tail.epoch, "seq": tail.last_seq,
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
-            "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
+            "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_open().count(),
             "instruments": instruments, "benches": benches,
         })
     }

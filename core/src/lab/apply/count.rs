@@ -66,12 +66,18 @@ impl Lab {
 
     fn count_belongs(&mut self, mut count: Count, id: &SpecimenId, bench: &BenchName, r: &Recorded, touched: &mut Touched) {
         let seq = count.seq;
+        let stands = count.set_aside.is_none();
         count.bench = Some(bench.clone());
         let Some(specimen) = self.specimens.get_mut(id) else { return };
         let place = specimen.counts.partition_point(|c| c.seq < seq);
         specimen.counts.insert(place, count);
         touched.insert(Entity::Specimen(id.clone()));
-        if let Some(state) = self.benches.get_mut(bench) {
+        if let Some(state) = self.benches.get_mut(bench).filter(|_| !stands) {
+            // It leaves what was owed before as it is.
+            (state.active, state.refusal, state.failed) = (r.at, None, None);
+            touched.insert(Entity::Bench(bench.clone()));
+        } else if let Some(state) = self.benches.get_mut(bench) {
+            state.failed = None;
             let mut counts = state.owed.take().filter(|o| o.specimen == *id).map_or(Vec::new(), |o| o.counts);
             counts.push(seq);
             counts.sort_unstable();
@@ -161,6 +167,8 @@ impl Lab {
 
 fn new_count(counted: &Counted, r: &Recorded) -> Count {
     let run = counted.run.as_ref();
+    let failed = counted.failed.as_ref();
+    let aside = failed.map(|f| Said { by: f.by.clone(), why: f.why.clone(), seq: r.seq });
     Count {
         seq: r.seq,
         drops: counted.drops,
@@ -172,12 +180,12 @@ fn new_count(counted: &Counted, r: &Recorded) -> Count {
         at: run.map_or(r.at, |r| r.at),
         typed: run.is_none(),
         superseded: None,
-        set_aside: None,
+        set_aside: aside,
         corrected: None,
         by: r.who.clone(),
         bench: counted.bench.clone(),
         run: run.map(|r| (r.first_input, r.began)),
-        failed: None,
+        failed: failed.map(|f| f.fault),
     }
 }
 

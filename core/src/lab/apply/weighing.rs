@@ -1,7 +1,7 @@
 //! Facts about weighings change the state.
 
 use super::{Lab, Touched};
-use crate::fact::{Link, Recorded, TrialRef, Weighed};
+use crate::fact::{ClosureFault, Link, Recorded, TrialRef, Weighed};
 use crate::lab::entities::{
     Bench, Container, DryRecord, Entity, Holding, Latest, Loose, LooseWhat, OvenClock, Pan, Released, Said, TareUse, TrialRecord,
     Weighing,
@@ -363,13 +363,13 @@ impl Lab {
         }
     }
 
-    pub(super) fn apply_set_aside(&mut self, what: Seq, said: Said, touched: &mut Touched) {
+    pub(super) fn apply_set_aside(&mut self, what: Seq, fault: Option<ClosureFault>, said: Said, touched: &mut Touched) {
         if self.loose.remove(&what).is_some() {
             touched.insert(Entity::Loose(what));
         }
         let mut was_count = false;
         self.with_count(what, touched, |c| {
-            c.set_aside = Some(said);
+            (c.set_aside, c.failed) = (Some(said), fault);
             was_count = true;
         });
         if was_count {
@@ -452,7 +452,7 @@ fn tare_for(container: &Container, wet: Seq) -> Option<Weighing> {
     before.or_else(|| container.tares.first()).cloned()
 }
 
-fn used(container: &mut Container, tare: Seq, specimen: &SpecimenId) {
+pub(super) fn used(container: &mut Container, tare: Seq, specimen: &SpecimenId) {
     let known = container.tare_uses.iter().any(|u| u.tare == tare && u.specimen == *specimen);
     if !known && container.tares.iter().any(|t| t.seq == tare) {
         container.tare_uses.push(TareUse { tare, specimen: specimen.clone() });
