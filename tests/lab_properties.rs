@@ -121,8 +121,19 @@ fn input(play: &Play, op: &Op, line: u64) -> Option<Input> {
             let (mass, at) = (Mass::from_ug(*ug), play.now);
             let (step, span) = (Mass::from_ug(10_000), Mass::ZERO);
             let (first_input, readings, zero) = (line, 8, None);
-            let taken =
-                MassTaken { mass, step, basis: *basis, printed: *printed, input: line, first_input, readings, span, zero, at };
+            let taken = MassTaken {
+                mass,
+                step,
+                basis: *basis,
+                printed: *printed,
+                input: line,
+                first_input,
+                readings,
+                span,
+                zero,
+                at,
+                trace: None,
+            };
             Input::Mass { balance: named("pan", *pan), taken }
         }
         Op::Lift(pan) => Input::Unloaded { balance: named("pan", *pan), input: line },
@@ -487,7 +498,7 @@ fn memory_stays_bounded_whatever_a_balance_or_counter_repeats() {
         take(&mut play, Input::Count { cup: instrument("cup-n"), run }, at);
         let (mass, step, basis, span) = (g("21.43"), Mass::from_ug(10_000), Basis::Unmarked, Mass::ZERO);
         let (printed, input, first_input, readings, zero) = (false, n, n, 8, None);
-        let taken = MassTaken { mass, step, basis, printed, input, first_input, readings, span, zero, at };
+        let taken = MassTaken { mass, step, basis, printed, input, first_input, readings, span, zero, at, trace: None };
         take(&mut play, Input::Mass { balance: instrument("pan-s"), taken }, at);
         play.forget_finished();
     }

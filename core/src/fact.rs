@@ -147,6 +147,26 @@ pub enum Fact {
         /// Which balance.
         balance: InstrumentName,
     },
+    /// A mass drifted while it lay on the pan, more than the balance's steps can hide.
+    PanWatched {
+        /// Which balance.
+        balance: InstrumentName,
+        /// The weighing.
+        weighing: Seq,
+        /// Slope from the mass taken until it was lifted, µg a second.
+        drift_ug_per_s: i64,
+        /// Time watched, ms.
+        watched_ms: u32,
+    },
+    /// The empty pan shows something else after a weighing than before.
+    LeftOnPan {
+        /// Which balance.
+        balance: InstrumentName,
+        /// The weighing.
+        weighing: Seq,
+        /// What it shows now, less what it showed before.
+        left: Mass,
+    },
     /// A weighing was tied to a container, or to another one than before.
     WeighingTied {
         /// The weighing.
@@ -522,6 +542,8 @@ impl Fact {
             Fact::Weighed(_) => "weighed",
             Fact::SlipRepeated { .. } => "slip_repeated",
             Fact::PanCleared { .. } => "pan_cleared",
+            Fact::PanWatched { .. } => "pan_watched",
+            Fact::LeftOnPan { .. } => "left_on_pan",
             Fact::WeighingTied { .. } => "weighing_tied",
             Fact::Counted(_) => "counted",
             Fact::CountTied { .. } => "count_tied",

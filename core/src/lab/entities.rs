@@ -6,7 +6,7 @@ use crate::lab::role::Role;
 use crate::limits::Limits;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::Mass;
-use crate::sense::InputNo;
+use crate::sense::{InputNo, Trace};
 use crate::sheet::{Kind, Seq};
 use crate::stamp::{Basis, Stamp};
 use alloc::boxed::Box;
@@ -47,6 +47,35 @@ pub struct Weighing {
     /// The latest correction.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub corrected: Option<Said>,
+    /// What the balance showed around it, for checks; none when typed or printed on a key.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub seen: Option<Seen>,
+}
+
+/// What a balance showed around a mass taken.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Seen {
+    /// The empty pan before.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub zero: Option<Mass>,
+    /// How the load settled.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub trace: Option<Trace>,
+    /// Drift until it was lifted, where it was more than the balance's steps can hide.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub stay: Option<Drift>,
+    /// What lay on the pan afterwards that did not before (negative: something went with the load).
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub left: Option<Mass>,
+}
+
+/// A drift over some time.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Drift {
+    /// µg a second; rising: positive.
+    pub drift_ug_per_s: i64,
+    /// Over so long, ms.
+    pub watched_ms: u32,
 }
 
 /// A person's word: who, why, in which fact.

@@ -27,7 +27,7 @@ use crate::fact::{Connection, Fact, Recorded};
 use crate::method::Method;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::Mass;
-use crate::sense::{CountRun, InputNo, MassTaken};
+use crate::sense::{CountRun, InputNo, LeftOnPan, MassTaken, Stayed};
 use crate::sheet::Seq;
 use crate::stamp::{SECOND_US, Stamp};
 use alloc::boxed::Box;
@@ -108,6 +108,22 @@ pub enum Input {
         balance: InstrumentName,
         /// The line that showed it.
         input: InputNo,
+    },
+    /// How a mass drifted until it was lifted.
+    PanWatched {
+        /// Which balance.
+        balance: InstrumentName,
+        /// What was seen.
+        stayed: Stayed,
+        /// The line that showed the empty pan.
+        input: InputNo,
+    },
+    /// The empty pan shows something else than before the mass.
+    LeftOnPan {
+        /// Which balance.
+        balance: InstrumentName,
+        /// What was seen.
+        left: LeftOnPan,
     },
     /// A count run ended.
     Count {
@@ -260,6 +276,8 @@ impl Lab {
         Ok(match input {
             Input::Mass { balance, taken } => self.mass_taken(&balance, taken),
             Input::Unloaded { balance, input } => self.unloaded(&balance, input),
+            Input::PanWatched { balance, stayed, input } => self.pan_watched(balance, &stayed, input),
+            Input::LeftOnPan { balance, left } => self.left_on_pan(balance, &left),
             Input::Count { cup, run } => self.count_ended(&cup, run),
             Input::Code { scanner, text, input } => self.code_read(&scanner, &text, at, input),
             Input::CodeUnread { scanner, input } => self.code_unread(&scanner, input),

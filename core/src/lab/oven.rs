@@ -305,6 +305,7 @@ mod tests {
             by: None,
             typed: false,
             corrected: None,
+            seen: None,
         };
         DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }
     }

@@ -273,11 +273,22 @@ impl Desk {
                 self.group.senses.insert(index);
                 self.decide(Input::Mass { balance: name, taken }, taken.at);
             }
-            Happening::Unloaded { input, at } => {
+            Happening::Unloaded { input, at, stayed } => {
                 let before = self.group.facts.len();
+                if let Some(stayed) = stayed {
+                    self.decide(Input::PanWatched { balance: name.clone(), stayed, input }, at);
+                }
                 self.decide(Input::Unloaded { balance: name.clone(), input }, at);
                 if self.group.facts.len() > before {
                     self.ears[index].remember_unloaded(input);
+                    self.group.senses.insert(index);
+                }
+            }
+            Happening::LeftOnPan(left) => {
+                let before = self.group.facts.len();
+                self.decide(Input::LeftOnPan { balance: name, left }, left.at);
+                if self.group.facts.len() > before {
+                    self.ears[index].remember_unloaded(left.zero.input);
                     self.group.senses.insert(index);
                 }
             }

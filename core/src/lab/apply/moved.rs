@@ -2,7 +2,7 @@
 
 use super::{Lab, Touched, said};
 use crate::fact::{Fact, Recorded, TrialRef};
-use crate::lab::entities::{Count, Entity, Holding, Moved, Said, TrialRecord};
+use crate::lab::entities::{Count, Drift, Entity, Holding, Loose, LooseWhat, Moved, Said, TrialRecord, Weighing};
 use crate::names::SpecimenId;
 use crate::sheet::Seq;
 use alloc::vec::Vec;
@@ -19,6 +19,48 @@ impl Lab {
                 bench.refusal = None;
                 touched.insert(Entity::Bench(bench.name.clone()));
             }
+        }
+    }
+
+    /// What the balance showed later belongs to the weighing, wherever that is by now.
+    pub(super) fn apply_seen(&mut self, r: &Recorded, touched: &mut Touched) {
+        match r.fact {
+            Fact::PanWatched { weighing, drift_ug_per_s, watched_ms, .. } => self.with_weighing(weighing, touched, |w| {
+                w.seen.get_or_insert_default().stay = Some(Drift { drift_ug_per_s, watched_ms });
+            }),
+            Fact::LeftOnPan { weighing, left, .. } => self.with_weighing(weighing, touched, |w| {
+                w.seen.get_or_insert_default().left = Some(left);
+            }),
+            _ => (),
+        }
+    }
+
+    /// Changes a weighing everywhere it stands.
+    fn with_weighing(&mut self, seq: Seq, touched: &mut Touched, change: impl Fn(&mut Weighing)) {
+        let each = |w: &mut Weighing| {
+            let mine = w.seq == seq;
+            if mine {
+                change(w);
+            }
+            mine
+        };
+        for specimen in self.specimens.values_mut() {
+            for trial in &mut specimen.trials {
+                let dries = trial.dries.iter_mut().map(|d| &mut d.weighing);
+                let all = trial.tare.iter_mut().chain(&mut trial.wets).chain(&mut trial.repeats).chain(dries);
+                if all.map(each).fold(false, |a, b| a | b) {
+                    touched.insert(Entity::Specimen(specimen.id.clone()));
+                }
+            }
+        }
+        for container in self.containers.values_mut() {
+            if container.tares.iter_mut().chain(&mut container.with_lid).map(each).fold(false, |a, b| a | b) {
+                touched.insert(Entity::Container(container.id.clone()));
+            }
+        }
+        if let Some(Loose { what: LooseWhat::Weighing { weighing, .. }, .. }) = self.loose.get_mut(&seq) {
+            each(weighing);
+            touched.insert(Entity::Loose(seq));
         }
     }
 

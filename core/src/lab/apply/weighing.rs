@@ -3,8 +3,8 @@
 use super::{Lab, Touched};
 use crate::fact::{ClosureFault, Link, Recorded, TrialRef, Weighed};
 use crate::lab::entities::{
-    Bench, Container, DryRecord, Entity, Holding, Latest, Loose, LooseWhat, OvenClock, Pan, Released, Said, TareUse, TrialRecord,
-    Weighing,
+    Bench, Container, DryRecord, Entity, Holding, Latest, Loose, LooseWhat, OvenClock, Pan, Released, Said, Seen, TareUse,
+    TrialRecord, Weighing,
 };
 use crate::lab::oven::work_hours;
 use crate::lab::role::Role;
@@ -53,7 +53,9 @@ impl Lab {
         let mass = weighed.link.as_ref().map_or(weighed.mass_ug, |l| l.gross);
         let at = weighed.taken.map_or(r.at, |t| t.at);
         let (typed, by) = (weighed.taken.is_none(), r.who.clone());
-        let weighing = Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, corrected: None };
+        let seen = weighed.taken.map(|t| Seen { zero: t.zero.map(|z| z.mass), trace: t.trace, ..Seen::default() });
+        let seen = seen.filter(|s| *s != Seen::default());
+        let weighing = Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, corrected: None, seen };
         self.lies_on_pan(weighed, r.seq, touched);
         match &weighed.link {
             Some(link) => self.apply_link(&weighing, link, touched),
