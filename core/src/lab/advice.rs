@@ -26,6 +26,9 @@ use alloc::string::String;
 use alloc::vec::Vec;
 use serde::Serialize;
 
+/// More drops than a count has.
+const MOST_DROPS: u32 = 500;
+
 /// Fall of water content for ten times the drops, and where it is from.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct Slope {
@@ -128,6 +131,8 @@ pub struct Advice {
     pub count: Option<CountNow>,
     /// Windows of the method.
     pub windows: Vec<Window>,
+    /// Drops that would fill a window, from–to: with several ways to give trials to windows, more than the open ones.
+    pub wanted_drops: Vec<[u32; 2]>,
     /// Drops to aim at next.
     pub aim: Option<[u32; 2]>,
     /// What brings the paste there.
@@ -183,6 +188,7 @@ impl Lab {
             threads: [begun(Kind::Thread), if wants_plastic(specimen) { threads_needed(method) as u32 } else { 0 }],
             count,
             windows,
+            wanted_drops: helpful(&known),
             aim,
             water,
             says: Vec::new(),
@@ -254,6 +260,10 @@ fn fit(known: &Known, drops: u32, slice_owed: bool) -> Fit {
     let before = open_count(known, None);
     let after = open_count(known, Some(drops).filter(|_| slice_owed));
     let lacking = known.drops.len() < liquid_trials_needed(known.method);
+    if known.method.liquid.how == LiquidHow::OnePoint && slice_owed {
+        let inside = known.method.liquid.windows.iter().any(|[from, to]| (*from..=*to).contains(&drops));
+        return if inside && lacking { Fit::Wanted } else { Fit::Spare };
+    }
     let helps = after < before || (known.method.liquid.windows.is_empty() && lacking) || (before == 0 && lacking);
     if helps || !slice_owed { Fit::Wanted } else { Fit::Spare }
 }
@@ -272,10 +282,18 @@ fn aim(known: &Known, windows: &[Window], count: &CountNow) -> Option<[u32; 2]> 
     }
     let liquid = &known.method.liquid;
     let lacking = known.drops.len() < liquid_trials_needed(known.method);
+    let far = |from: f64, w: &[u32; 2]| libm::fabs(libm::log10(f64::from(middle(*w)).max(1.0)) - libm::log10(from.max(1.0)));
+    let near_now = |a: &[u32; 2], b: &[u32; 2]| far(f64::from(count.drops), a).total_cmp(&far(f64::from(count.drops), b));
     let open: Vec<[u32; 2]> = windows.iter().filter(|w| w.open).map(|w| [w.from, w.to]).collect();
-    let far = |w: &[u32; 2]| libm::fabs(decades(count.drops, middle(*w)));
-    if let Some(nearest) = open.into_iter().min_by(|a, b| far(a).total_cmp(&far(b))) {
-        return Some(nearest);
+    match open.len() {
+        0 => (),
+        // The last one: of the places that fill a window, the one that spreads the line most.
+        1 if liquid.how == LiquidHow::FlowLine && !known.drops.is_empty() => {
+            let spread = |w: &[u32; 2]| known.drops.iter().map(|&d| far(d, w)).fold(f64::INFINITY, f64::min);
+            let places = windows.iter().flat_map(|w| helpful(known).into_iter().filter_map(|h| both([w.from, w.to], h)));
+            return places.max_by(|a, b| spread(a).total_cmp(&spread(b)).then_with(|| near_now(b, a)));
+        }
+        _ => return open.into_iter().min_by(near_now),
     }
     let [low, high] = liquid.drops;
     let below = known.drops.iter().any(|&d| d < 25.0);
@@ -286,6 +304,32 @@ fn aim(known: &Known, windows: &[Window], count: &CountNow) -> Option<[u32; 2]> 
         _ if lacking || count.slice_owed => Some([low, high]),
         _ => None,
     }
+}
+
+/// Drops that would fill a window, as ranges.
+fn helpful(known: &Known) -> Vec<[u32; 2]> {
+    let all = &known.method.liquid.windows;
+    let (Some(low), Some(high)) = (all.iter().map(|w| w[0]).min(), all.iter().map(|w| w[1]).max()) else { return Vec::new() };
+    let before = open_count(known, None);
+    let fills = |drops: u32| match known.method.liquid.how {
+        LiquidHow::FlowLine => open_count(known, Some(drops)) < before,
+        LiquidHow::OnePoint => before > 0 && all.iter().any(|[from, to]| (*from..=*to).contains(&drops)),
+    };
+    let mut ranges: Vec<[u32; 2]> = Vec::new();
+    // A method's file may hold any number; more drops than this are never counted.
+    for drops in (low..=high.min(MOST_DROPS)).filter(|&d| fills(d)) {
+        match ranges.last_mut().filter(|r| r[1] + 1 == drops) {
+            Some(range) => range[1] = drops,
+            None => ranges.push([drops, drops]),
+        }
+    }
+    ranges
+}
+
+/// What two ranges have in common.
+fn both(a: [u32; 2], b: [u32; 2]) -> Option<[u32; 2]> {
+    let both = [a[0].max(b[0]), a[1].min(b[1])];
+    (both[0] <= both[1]).then_some(both)
 }
 
 fn middle([from, to]: [u32; 2]) -> u32 {
@@ -433,7 +477,7 @@ fn about_water(step: &WaterStep) -> String {
 
 fn about_windows(advice: &Advice) -> Option<String> {
     let left = advice.trials_wanted.saturating_sub(advice.trials);
-    let open: Vec<String> = advice.windows.iter().filter(|w| w.open).map(|w| format!("{}–{}", w.from, w.to)).collect();
+    let open = &advice.wanted_drops;
     if advice.trials_wanted == 0 || (left == 0 && open.is_empty()) {
         return None;
     }
@@ -444,6 +488,12 @@ fn about_windows(advice: &Advice) -> Option<String> {
     };
     Some(match open.is_empty() {
         true => format!("{trials}, of {}", advice.trials_wanted),
-        false => format!("{trials}, of {}; windows that want one: {} drops", advice.trials_wanted, open.join(", ")),
+        false => format!("{trials}, of {}; a window wants one of {} drops", advice.trials_wanted, ranges_text(open)),
     })
+}
+
+/// `15–25, 30–35`.
+pub(super) fn ranges_text(ranges: &[[u32; 2]]) -> String {
+    let texts: Vec<String> = ranges.iter().map(|[from, to]| format!("{from}–{to}")).collect();
+    texts.join(", ")
 }

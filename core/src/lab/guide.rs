@@ -1,7 +1,7 @@
 //! What comes next at a bench: one sentence, one action, and the caution that belongs to it.
 
 use super::Lab;
-use super::advice::{Fit, Wish};
+use super::advice::{Fit, Wish, ranges_text};
 use super::entities::{Bench, Hand, LooseWhat, Owed, Standing};
 use super::role::Role;
 use crate::fact::Intention;
@@ -219,8 +219,7 @@ impl Lab {
     fn liquid_next(&self, bench: &BenchName, specimen: &SpecimenId) -> Guide {
         let advice = self.advice(bench, &Wish::default());
         let (done, wanted) = advice.as_ref().map_or((0, 0), |a| (a.trials, a.trials_wanted));
-        let open = advice.iter().flat_map(|a| &a.windows).filter(|w| w.open).map(|w| format!("{}–{}", w.from, w.to));
-        let open = open.reduce(|a, b| format!("{a}, {b}"));
+        let open = advice.map(|a| ranges_text(&a.wanted_drops)).filter(|t| !t.is_empty());
         let windows = open.as_ref().filter(|_| done > 0).map_or(String::new(), |w| format!("; drops still wanted: {w}"));
         let next = match done < wanted || (wanted > 0 && open.is_some()) {
             true if done < wanted => {

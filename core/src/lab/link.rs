@@ -187,14 +187,22 @@ impl Lab {
             format!("{} belongs to specimen {}, which could not be read from the ledger", container.id, holding.specimen)
         })?;
         let Some(wet) = trial.wets.last() else { return Ok(None) };
+        let finished = self.finished(holding, trial);
+        let oven = &holding.oven;
+        let again = trial.dries.last().is_some_and(|d| {
+            let since = |s: &Stamp| s.since(&d.weighing.at).us >= 0;
+            let by_record = oven.since.as_ref().is_some_and(since) || oven.stays.iter().any(|s| since(&s.from));
+            by_record || (!oven.recorded && at.since(&d.weighing.at).us >= OVERNIGHT_US)
+        });
         Ok(Some(Held {
             kind: trial.kind,
             wet: wet.mass,
             dry: trial.dries.last().map(|d| d.weighing.mass),
-            finished: self.finished(holding, trial),
+            finished,
             set_aside: trial.set_aside.is_some(),
             been_in_oven: holding.oven.recorded || at.since(&holding.oven.wet_at).us >= OVERNIGHT_US,
             oven_recorded: holding.oven.recorded,
+            dried_on: again && !finished,
         }))
     }
 

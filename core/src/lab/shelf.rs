@@ -56,6 +56,8 @@ pub struct OnShelf {
     pub ready_in_hours: f64,
     /// It has stood for days.
     pub overdue: bool,
+    /// Its determination was set aside: there is nothing to weigh.
+    pub set_aside: bool,
     /// The stated temperature lies outside the method's.
     pub wrong_heat: bool,
     /// What comes next.
@@ -73,7 +75,9 @@ impl Lab {
     fn on_shelf(&self, container: &Container, now: &Stamp) -> Option<OnShelf> {
         let holding = container.holding.as_ref()?;
         let trial = self.held_trial(holding)?;
-        if !matches!(container.standing, Standing::Wet | Standing::InOven | Standing::Drying) || trial.set_aside.is_some() {
+        let dries = matches!(container.standing, Standing::Wet | Standing::InOven | Standing::Drying);
+        // What was set aside still lies in the oven until somebody takes it out.
+        if !dries || (trial.set_aside.is_some() && container.standing != Standing::InOven) {
             return None;
         }
         let method = self.method_of(&holding.specimen)?;
@@ -133,7 +137,8 @@ fn worked(container: &Container, holding: &Holding, trial: &TrialRecord, method:
         hours_since_dry,
         basis,
         hours_wanted: drying.hours,
-        ready: ready_in_hours <= 0.0,
+        ready: ready_in_hours <= 0.0 && trial.set_aside.is_none(),
+        set_aside: trial.set_aside.is_some(),
         ready_in_hours: ready_in_hours.max(0.0),
         overdue: standing_hours >= OVERDUE_HOURS,
         wrong_heat,
@@ -163,6 +168,7 @@ fn next(item: &OnShelf, drying: &Drying) -> String {
     let days = if item.overdue { format!("; it has stood since {}", day(&item.since)) } else { String::new() };
     let id = &item.container;
     let step = match (item.standing, item.ready) {
+        _ if item.set_aside => format!("{id}: its determination was set aside: take it out"),
         (Standing::Wet, false) if !item.recorded => format!("{id}: put it into the oven and say so"),
         (Standing::Wet, _) if item.recorded => format!("{id}: out of the oven and not weighed: weigh it when cool"),
         (Standing::Drying, false) => {

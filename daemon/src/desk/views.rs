@@ -62,7 +62,7 @@ pub fn shelf(lab: &Lab, now: &Stamp) -> Vec<Value> {
             "container": s.container, "specimen": s.specimen, "trial": s.trial.kind, "no": s.trial.no, "standing": s.standing,
             "wet_g": s.wet.map(grams), "dry_g": s.dry.map(grams), "since": s.since.rfc3339(), "recorded": s.recorded,
             "celsius": s.celsius, "hours": s.hours, "hours_since_dry": s.hours_since_dry, "hours_wanted": s.hours_wanted,
-            "ready": s.ready, "ready_in_hours": s.ready_in_hours, "overdue": s.overdue, "wrong_heat": s.wrong_heat, "next": s.next,
+            "ready": s.ready, "ready_in_hours": s.ready_in_hours, "overdue": s.overdue, "set_aside": s.set_aside, "wrong_heat": s.wrong_heat, "next": s.next,
         })
     };
     lab.shelf(now).iter().map(one).collect()
