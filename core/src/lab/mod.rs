@@ -41,6 +41,7 @@ use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 pub use advice::{Advice, Slope, Wish};
 pub use guide::Guide;
 pub use loose::LooseThing;
+pub use near::{meant, nearest};
 pub use oven::dried;
 pub use shelf::OnShelf;
 

@@ -9,8 +9,8 @@ use alloc::vec::Vec;
 /// More names than this are not looked through: a refusal must stay cheap.
 const LOOKED_AT: usize = 5_000;
 
-/// `: did you mean …?` for the known name nearest to what was written, if one is near.
-pub(super) fn meant<'n>(written: &str, known: impl Iterator<Item = &'n str>) -> String {
+/// ` (did you mean …?)` for the known name nearest to what was written, if one is near; else nothing.
+pub fn meant<'n>(written: &str, known: impl Iterator<Item = &'n str>) -> String {
     nearest(written, known).map_or(String::new(), |name| format!(" (did you mean {name}?)"))
 }
 
@@ -45,7 +45,7 @@ fn distance(a: &str, b: &str, most: usize) -> usize {
 }
 
 impl Lab {
-    /// `: did you mean …?` for the container nearest to what was written.
+    /// ` (did you mean …?)` for the container nearest to what was written.
     pub(super) fn container_meant(&self, written: &ContainerId) -> String {
         match self.containers.contains_key(written) {
             true => String::new(),

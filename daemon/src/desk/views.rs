@@ -6,7 +6,7 @@ use crate::asks::{Read, refusal};
 use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
 use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
-use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish};
+use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish, meant};
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
@@ -197,7 +197,8 @@ impl Desk {
 
     fn read_latest(&self, bench: &str) -> String {
         let Some(bench) = BenchName::new(bench).ok().and_then(|b| self.lab.bench(&b)) else {
-            return refusal(&format!("there is no bench {bench}"));
+            let hint = meant(bench, self.lab.benches().map(|b| b.name.as_str()));
+            return refusal(&format!("there is no bench {bench}{hint}"));
         };
         let latest = bench.latest.as_ref().map(|l| {
             json!({
@@ -211,8 +212,14 @@ impl Desk {
 
     fn read_advice(&self, bench: Option<&BenchName>, specimen: Option<&SpecimenId>, wish: &Wish) -> String {
         let (advice, about) = match (bench, specimen) {
-            (_, Some(id)) => (self.lab.advice_for(id, wish), format!("there is no specimen {id}, or it is finished")),
-            (Some(name), None) if self.lab.bench(name).is_none() => (None, format!("there is no bench {name}")),
+            (_, Some(id)) => {
+                let hint = meant(id.as_str(), self.lab.specimens().map(|s| s.id.as_str()).filter(|s| *s != id.as_str()));
+                (self.lab.advice_for(id, wish), format!("there is no specimen {id}{hint}, or it is finished"))
+            }
+            (Some(name), None) if self.lab.bench(name).is_none() => {
+                let hint = meant(name.as_str(), self.lab.benches().map(|b| b.name.as_str()));
+                (None, format!("there is no bench {name}{hint}"))
+            }
             (Some(name), None) => {
                 (self.lab.advice(name, wish), format!("no limit is in work at bench {name}: name the specimen"))
             }
@@ -230,7 +237,16 @@ impl Desk {
         }
         match self.reader.document(kind, id) {
             Err(e) => refusal(&e.to_string()),
-            Ok(None) => refusal(&format!("there is no {kind} {id}")),
+            Ok(None) => {
+                let hint = match kind {
+                    "specimen" => meant(id, self.lab.specimens().map(|s| s.id.as_str())),
+                    "container" => meant(id, self.lab.containers().map(|c| c.id.as_str())),
+                    "bench" => meant(id, self.lab.benches().map(|b| b.name.as_str())),
+                    "instrument" => meant(id, self.lab.instruments().map(|i| i.name.as_str())),
+                    _ => String::new(),
+                };
+                refusal(&format!("there is no {kind} {id}{hint}"))
+            }
             Ok(Some(stored)) => {
                 let document: Value = serde_json::from_slice(&stored.body).unwrap_or_default();
                 json!({"ok": true, "kind": kind, "id": id, "seq": stored.seq, "document": document}).to_string()
