@@ -50,6 +50,8 @@ pub enum Read {
         /// What the client knows besides.
         wish: Wish,
     },
+    /// Which of these asks would be refused, if they were made one after the other. Nothing is done.
+    Would(Vec<Ask>),
     /// What is drying.
     Shelf,
     /// Loose weighings and counts.
@@ -118,6 +120,7 @@ fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
             limit: object.get("limit").and_then(Value::as_u64).unwrap_or(100).min(1_000) as usize,
         },
         "advice" => advice(object)?,
+        "would" => would(object)?,
         "shelf" => nothing_else(object, word, Read::Shelf)?,
         "loose" => nothing_else(object, word, Read::Loose)?,
         _ => return Ok(None),
@@ -125,7 +128,7 @@ fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
 }
 
 /// Asks that only read; the others are variants of [`Ask`].
-const READS: [&str; 7] = ["status", "latest", "document", "facts_after", "advice", "shelf", "loose"];
+const READS: [&str; 8] = ["status", "latest", "document", "facts_after", "advice", "would", "shelf", "loose"];
 
 /// What serde says of an ask, in the words of who wrote it, with what was meant.
 fn in_words(object: &Map<String, Value>, error: &str) -> String {
@@ -175,6 +178,22 @@ fn only(object: &Map<String, Value>, word: &str, known: &[&str]) -> Result<(), S
 
 fn nothing_else(object: &Map<String, Value>, word: &str, read: Read) -> Result<Read, String> {
     only(object, word, &[]).map(|()| read)
+}
+
+/// Most asks that are tried at once.
+const MOST_TRIED: usize = 200;
+
+fn would(object: &Map<String, Value>) -> Result<Read, String> {
+    only(object, "would", &["asks"])?;
+    let asks = object.get("asks").and_then(Value::as_array).ok_or("\"would\" needs a list \"asks\"")?;
+    if asks.len() > MOST_TRIED {
+        return Err(format!("at most {MOST_TRIED} asks are tried at once"));
+    }
+    let one = |(n, ask): (usize, &Value)| {
+        let members = ask.as_object().cloned().unwrap_or_default();
+        serde_json::from_value(ask.clone()).map_err(|e| format!("ask {n}: {}", in_words(&members, &e.to_string())))
+    };
+    asks.iter().enumerate().map(one).collect::<Result<_, String>>().map(Read::Would)
 }
 
 fn advice(object: &Map<String, Value>) -> Result<Read, String> {

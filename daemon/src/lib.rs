@@ -10,6 +10,7 @@ pub mod clock;
 pub mod command;
 pub mod desk;
 pub mod heard;
+pub mod import;
 pub mod ledger;
 pub mod publish;
 pub mod service;

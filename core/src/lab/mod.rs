@@ -272,6 +272,20 @@ impl Lab {
         Ok(outcome)
     }
 
+    /// Which of these asks would be refused if they were made one after the other; nothing changes.
+    pub fn would_refuse(&self, asks: &[Ask], at: &Stamp, next_seq: Seq) -> Vec<(usize, Refusal)> {
+        let mut trial = self.clone();
+        let mut next = next_seq;
+        let mut refused = Vec::new();
+        for (n, ask) in asks.iter().enumerate() {
+            match trial.take(Input::Ask(ask.clone()), *at, next) {
+                Ok(outcome) => next = next.saturating_add(outcome.facts.len() as Seq),
+                Err(refusal) => refused.push((n, refusal)),
+            }
+        }
+        refused
+    }
+
     /// What an input means, as facts.
     fn decide(&self, input: Input, at: &Stamp) -> Result<Vec<New>, Refusal> {
         Ok(match input {

@@ -17,6 +17,7 @@ mod ask;
 mod check;
 mod demo;
 mod files;
+mod import;
 mod ports;
 mod run;
 mod status;
@@ -74,6 +75,8 @@ enum Verb {
     Work(work::WorkArgs),
     /// Ask the running service for something.
     Ask(ask::AskArgs),
+    /// Take a register of containers, or the day's specimens, from a table with commas.
+    Import(import::ImportArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
     /// List serial ports by their stable paths.
@@ -104,6 +107,7 @@ pub fn main() -> ExitCode {
         Verb::Check(args) => check::run(&args),
         Verb::Work(args) => work::run(&args),
         Verb::Ask(args) => ask::run(&args),
+        Verb::Import(args) => import::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
     })

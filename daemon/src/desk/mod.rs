@@ -168,6 +168,10 @@ impl Desk {
                     if self.group.has_facts() {
                         self.commit(effects);
                     }
+                    if let asks::Read::Would(asks) = &read {
+                        let bodies: Vec<String> = asks.iter().filter_map(|a| serde_json::to_string(a).ok()).collect();
+                        bodies.iter().for_each(|body| self.fetch_named(body));
+                    }
                     let answer = self.read(&read, now);
                     effects.replies.push((reply, answer));
                 }

@@ -190,6 +190,11 @@ impl Desk {
             Read::Document { kind, id } => self.read_document(kind, id),
             Read::FactsAfter { seq, limit } => self.read_facts(*seq, *limit),
             Read::Advice { bench, specimen, wish } => self.read_advice(bench.as_ref(), specimen.as_ref(), wish),
+            Read::Would(asks) => {
+                let refused = self.lab.would_refuse(asks, now, self.next_seq);
+                let refused: Vec<Value> = refused.iter().map(|(n, r)| json!({"n": n, "says": r.0})).collect();
+                json!({"ok": true, "refused": refused}).to_string()
+            }
             Read::Shelf => json!({"ok": true, "shelf": shelf(&self.lab, now)}).to_string(),
             Read::Loose => json!({"ok": true, "loose": loose(&self.lab)}).to_string(),
         }
