@@ -82,6 +82,12 @@ fn time_in_which_the_oven_was_off_does_not_dry() {
     assert!((item.hours - 9.0).abs() < 1e-6 && !item.ready, "{item:?}");
     play.wait(3 * HOUR);
     assert!(on_shelf(&play, "C1").ready);
+    // On again just now: told without its end.
+    let from = play.now.plus_us(-HOUR).rfc3339();
+    play.ask(&format!(r#"{{"ask":"oven_off","from":"{from}","who":"AB","why":"the door stood open"}}"#));
+    assert!((on_shelf(&play, "C1").hours - 11.0).abs() < 1e-6);
+    let later = play.now.plus_us(HOUR).rfc3339();
+    assert!(play.refused(&format!(r#"{{"ask":"oven_off","from":"{later}","who":"AB","why":"x"}}"#)).contains("both past"));
 }
 
 #[test]

@@ -169,8 +169,14 @@ pub enum Ask {
         #[serde(default)]
         who: Option<Operator>,
     },
-    /// The oven was off.
-    OvenOff { from: String, to: String, who: Operator, why: String },
+    /// The oven was off; left out `to`: it is on again just now.
+    OvenOff {
+        from: String,
+        #[serde(default)]
+        to: Option<String>,
+        who: Operator,
+        why: String,
+    },
     /// A limit cannot be obtained.
     NotObtainable {
         specimen: SpecimenId,
@@ -535,8 +541,9 @@ fn worked_on(specimen: &Specimen) -> impl Iterator<Item = &Operator> {
     let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref()).chain(moved);
     let stated = specimen.liquid_not_obtainable.iter().chain(&specimen.plastic_not_obtainable);
     let said = aside.chain(stated).filter_map(|s| s.by.as_ref());
+    let given_up = specimen.counts.iter().filter_map(|c| c.set_aside.as_ref()).filter_map(|s| s.by.as_ref());
     let answered = specimen.answers.iter().filter_map(|a| a.by.as_ref());
-    weighings.chain(counts).chain(said).chain(answered)
+    weighings.chain(counts).chain(given_up).chain(said).chain(answered)
 }
 
 /// A number of drops that a person states.

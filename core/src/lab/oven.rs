@@ -214,7 +214,8 @@ impl Lab {
                     parse_rfc3339(t).ok_or_else(|| no(format!("\"{t}\" is not a time; write it like 2026-03-02T08:14:05Z")))
                 };
                 needs_words(&why)?;
-                let (from_utc_us, to_utc_us) = (time(&from)?, time(&to)?);
+                let from_utc_us = time(&from)?;
+                let to_utc_us = to.as_deref().map(time).transpose()?.unwrap_or(at.utc_us);
                 if from_utc_us >= to_utc_us || to_utc_us > at.utc_us {
                     return Err(no(String::from("the oven was off from a time to a later one, both past")));
                 }

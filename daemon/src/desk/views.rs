@@ -51,6 +51,7 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "urgent": guide.as_ref().is_some_and(|g| g.urgent),
         "caution": guide.as_ref().and_then(|g| g.caution).map(|c| c.says),
         "action": guide.as_ref().and_then(|g| g.action.clone()),
+        "advice": lab.advice(&bench.name, &Wish::default()).map_or(Vec::new(), |a| a.says),
         "next_since": guide.as_ref().and_then(|g| g.since).map(|s| s.rfc3339()),
     })
 }
