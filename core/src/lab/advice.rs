@@ -167,7 +167,8 @@ impl Lab {
 
     fn advice_on(&self, id: &SpecimenId, bench: Option<&Bench>, wish: &Wish) -> Option<Advice> {
         let specimen = self.specimens.get(id)?;
-        let method = self.setup.methods.get(&specimen.method)?;
+        // Drops are advised on; a method that counts none has no use for it.
+        let method = self.setup.methods.get(&specimen.method).filter(|m| counts_drops(m))?;
         let sheet = sheet(specimen);
         let worked = determine(&sheet, method);
         let known = known(method, &worked);
@@ -208,6 +209,10 @@ pub(super) fn wants_plastic(specimen: &Specimen) -> bool {
     specimen.plastic_not_obtainable.is_none() && specimen.wants(Intention::Plastic)
 }
 
+fn counts_drops(method: &Method) -> bool {
+    matches!(method.liquid.how, LiquidHow::FlowLine | LiquidHow::OnePoint)
+}
+
 fn known<'a>(method: &'a Method, worked: &[Determined]) -> Known<'a> {
     let liquid = || worked.iter().filter(|t| t.counts_as(Kind::Liquid));
     Known {
@@ -221,10 +226,11 @@ fn known<'a>(method: &'a Method, worked: &[Determined]) -> Known<'a> {
 fn windows(known: &Known) -> Vec<Window> {
     let liquid = &known.method.liquid;
     let all = &liquid.windows[..liquid.windows.len().min(MOST_WINDOWS)];
-    let mut open = match liquid.how {
-        LiquidHow::FlowLine => missing(all, &known.drops),
-        LiquidHow::OnePoint if known.drops.len() < liquid_trials_needed(known.method) => all.to_vec(),
-        LiquidHow::OnePoint => Vec::new(),
+    let lacking = known.drops.len() < liquid_trials_needed(known.method);
+    let mut open = match liquid.how == LiquidHow::OnePoint {
+        false => missing(all, &known.drops),
+        true if lacking => all.to_vec(),
+        true => Vec::new(),
     };
     let mut window = |&[from, to]: &[u32; 2]| {
         let at = open.iter().position(|w| *w == [from, to]);
@@ -311,9 +317,9 @@ fn helpful(known: &Known) -> Vec<[u32; 2]> {
     let all = &known.method.liquid.windows;
     let (Some(low), Some(high)) = (all.iter().map(|w| w[0]).min(), all.iter().map(|w| w[1]).max()) else { return Vec::new() };
     let before = open_count(known, None);
-    let fills = |drops: u32| match known.method.liquid.how {
-        LiquidHow::FlowLine => open_count(known, Some(drops)) < before,
-        LiquidHow::OnePoint => before > 0 && all.iter().any(|[from, to]| (*from..=*to).contains(&drops)),
+    let fills = |drops: u32| match known.method.liquid.how == LiquidHow::OnePoint {
+        false => open_count(known, Some(drops)) < before,
+        true => before > 0 && all.iter().any(|[from, to]| (*from..=*to).contains(&drops)),
     };
     let mut ranges: Vec<[u32; 2]> = Vec::new();
     // A method's file may hold any number; more drops than this are never counted.

@@ -218,7 +218,7 @@ impl Lab {
 
     fn liquid_next(&self, bench: &BenchName, specimen: &SpecimenId) -> Guide {
         let advice = self.advice(bench, &Wish::default());
-        let (done, wanted) = advice.as_ref().map_or((0, 0), |a| (a.trials, a.trials_wanted));
+        let (done, wanted) = advice.as_ref().map_or_else(|| self.begun(specimen), |a| (a.trials, a.trials_wanted));
         let open = advice.map(|a| ranges_text(&a.wanted_drops)).filter(|t| !t.is_empty());
         let windows = open.as_ref().filter(|_| done > 0).map_or(String::new(), |w| format!("; drops still wanted: {w}"));
         let next = match done < wanted || (wanted > 0 && open.is_some()) {
@@ -229,6 +229,13 @@ impl Lab {
             false => format!("Liquid limit of {specimen}: {done} trials are in; go on to the plastic limit, or count another"),
         };
         Guide { caution: Some(CAM), ..plain(next, Some(ActionHint::StartCup { specimen: specimen.clone() }), None) }
+    }
+
+    /// Trials of the liquid limit begun, and wanted, where no drops are advised on.
+    fn begun(&self, specimen: &SpecimenId) -> (u32, u32) {
+        let trials = self.specimens.get(specimen).into_iter().flat_map(|s| &s.trials);
+        let of_limit = trials.filter(|t| !matches!(t.kind, Kind::Thread | Kind::Natural) && t.set_aside.is_none());
+        (of_limit.count() as u32, self.method_of(specimen).map_or(0, |m| m.liquid.trials))
     }
 
     fn hand_next(&self, bench: &Bench, hand: &Hand) -> Guide {
