@@ -338,6 +338,15 @@ fn soil_that_slid_does_not_stand() {
     assert_eq!(play.bench("north").owed.as_ref().unwrap().counts, [first], "the closure before still waits for its slice");
     play.ask(r#"{"ask":"slid","bench":"north","why":"slid on a pebble","who":"CD"}"#);
     assert!(play.bench("north").owed.is_none());
+    // The card was read by mistake: the count is tied again, and its slice is owed again.
+    let back =
+        format!(r#"{{"ask":"tie_count","count":{second},"bench":"north","specimen":"S-1","who":"AB","why":"wrong card"}}"#);
+    play.ask(&back);
+    let count = play.specimen("S-1").count(second).unwrap();
+    assert!(count.failed.is_none() && count.set_aside.is_none());
+    assert_eq!(play.bench("north").owed.as_ref().unwrap().counts, [second]);
+    play.set_aside(second);
+    assert!(play.refused(&back).contains("was set aside"), "what was set aside for another reason stays so");
     assert!(play.refused(r#"{"ask":"slid","bench":"north"}"#).contains("set that trial aside"));
     assert!(play.refused(r#"{"ask":"slid","bench":"nroth"}"#).contains("did you mean north?"));
 }

@@ -346,7 +346,8 @@ impl Lab {
                 if of.trials.iter().any(|t| t.counts.contains(&count)) {
                     return Err(no(format!("a slice of count {count} was weighed for {}: take that weighing back first", of.id)));
                 }
-                if c.set_aside.is_some() {
+                // One of a groove that did not fail after all comes back; what else was set aside stays so.
+                if c.set_aside.is_some() && c.failed.is_none() {
                     return Err(no(format!("count {count} was set aside; enter its drops by hand if it counts after all")));
                 }
                 c

@@ -97,6 +97,9 @@ impl Lab {
         };
         if let Some(mut count) = loose {
             count.superseded = None;
+            if count.failed.take().is_some() {
+                count.set_aside = None;
+            }
             count.by = count.by.or_else(|| r.who.clone());
             self.count_belongs(count, id, bench, r, touched);
         }
