@@ -8,7 +8,7 @@ use proptest::prelude::*;
 use std::collections::{BTreeMap, BTreeSet};
 use tarecup_core::fact::Fact;
 use tarecup_core::lab::entities::{LooseWhat, TrialRecord};
-use tarecup_core::lab::{Input, Lab, Setup};
+use tarecup_core::lab::{Input, Lab, Setup, Wish};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountRun, MassTaken};
 use tarecup_core::signal::Basis;
@@ -70,7 +70,7 @@ fn op() -> impl Strategy<Value = Op> {
             .prop_map(|(pan, ug, printed, basis)| Op::Mass { pan, ug, printed, basis }),
         4 => (0usize..2).prop_map(Op::Lift),
         4 => (0usize..2, 0u32..60, prop::bool::weighted(0.2)).prop_map(|(cup, drops, told_again)| Op::Count { cup, drops, told_again }),
-        9 => (0usize..24, 0u64..60, 0usize..5, 0..ROLES.len()).prop_map(|(a, s, c, r)| Op::Ask(a, s, c, r)),
+        10 => (0usize..30, 0u64..60, 0usize..5, 0..ROLES.len()).prop_map(|(a, s, c, r)| Op::Ask(a, s, c, r)),
         3 => prop::sample::select(vec![SECOND, 12 * SECOND, 6 * MINUTE, 20 * MINUTE, 3 * HOUR, 16 * HOUR, -HOUR]).prop_map(Op::Wait),
         1 => stamp.prop_map(Op::Jump),
         1 => Just(Op::Due),
@@ -109,6 +109,14 @@ fn ask_text(play: &Play, (kind, seq, c, r): (usize, u64, usize, usize)) -> Strin
         ),
         21 => format!(r#"{{"ask":"not_obtainable","specimen":"{specimen}","limit":"plastic","because":"crumbles"}}"#),
         22 => format!(r#"{{"ask":"register_container","container":"{container}","lid_g":"{mass}"}}"#),
+        23 => format!(r#"{{"ask":"register_container","container":"{container}","tare_g":"{mass}","who":"AB"}}"#),
+        24 | 25 => {
+            let to = ["S-2", "S-1", "S-2", "S-1", "S-9"][c];
+            format!(r#"{{"ask":"move_trial","specimen":"{specimen}","kind":"{trial}","no":{},"to":"{to}",{who}}}"#, r % 4)
+        }
+        26 => format!(r#"{{"ask":"explain","what":{seq},{who}}}"#),
+        27 => format!(r#"{{"ask":"slid",{at}}}"#),
+        28 => format!(r#"{{"ask":"groove_tore",{at}}}"#),
         _ => format!(r#"{{"ask":"review","specimen":"{specimen}","who":"CD"}}"#),
     }
 }
@@ -121,8 +129,19 @@ fn input(play: &Play, op: &Op, line: u64) -> Option<Input> {
             let (mass, at) = (Mass::from_ug(*ug), play.now);
             let (step, span) = (Mass::from_ug(10_000), Mass::ZERO);
             let (first_input, readings, zero) = (line, 8, None);
-            let taken =
-                MassTaken { mass, step, basis: *basis, printed: *printed, input: line, first_input, readings, span, zero, at };
+            let taken = MassTaken {
+                mass,
+                step,
+                basis: *basis,
+                printed: *printed,
+                input: line,
+                first_input,
+                readings,
+                span,
+                zero,
+                at,
+                trace: None,
+            };
             Input::Mass { balance: named("pan", *pan), taken }
         }
         Op::Lift(pan) => Input::Unloaded { balance: named("pan", *pan), input: line },
@@ -253,7 +272,10 @@ proptest! {
         prop_assert_ne!(play.lab.due_in_us(&now), Some(0), "what was due has been said");
         for bench in ["north", "south"] {
             prop_assert!(!play.next_step(bench).is_empty());
+            let advice = play.lab.advice(&bench_name(bench), &Wish { paste: Some(Mass::from_ug(1)), ..Wish::default() });
+            prop_assert!(advice.is_none_or(|a| a.says.iter().all(|s| !s.contains("NaN") && !s.contains("inf "))));
         }
+        prop_assert!(play.lab.shelf(&now).iter().all(|s| s.hours >= 0.0 && !s.next.is_empty()));
     }
 
     #[test]
@@ -493,7 +515,7 @@ fn memory_stays_bounded_whatever_a_balance_or_counter_repeats() {
         take(&mut play, Input::Count { cup: instrument("cup-n"), run }, at);
         let (mass, step, basis, span) = (g("21.43"), Mass::from_ug(10_000), Basis::Unmarked, Mass::ZERO);
         let (printed, input, first_input, readings, zero) = (false, n, n, 8, None);
-        let taken = MassTaken { mass, step, basis, printed, input, first_input, readings, span, zero, at };
+        let taken = MassTaken { mass, step, basis, printed, input, first_input, readings, span, zero, at, trace: None };
         take(&mut play, Input::Mass { balance: instrument("pan-s"), taken }, at);
         play.forget_finished();
     }

@@ -3,7 +3,7 @@
 use proptest::prelude::*;
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::settle::Settle;
-use tarecup_core::sense::{Happening, InputNo, MassTaken, SettleLimits, Talks, Zero};
+use tarecup_core::sense::{Happening, InputNo, LeftOnPan, MassTaken, SettleLimits, Stayed, Talks, Trace, Zero};
 use tarecup_core::signal::{Basis, Mark, Reading};
 use tarecup_core::stamp::{Boot, Stamp};
 
@@ -47,6 +47,7 @@ fn short(happened: &[Happening]) -> Vec<String> {
         .map(|h| match h {
             Happening::MassTaken(t) => format!("T {}@{}", t.mass.ug() / 1_000, t.input),
             Happening::Unloaded { input, .. } => format!("U@{input}"),
+            Happening::LeftOnPan(LeftOnPan { left, zero, .. }) => format!("L {}@{}", left.ug() / 1_000, zero.input),
             other => panic!("a balance cannot tell {other:?}"),
         })
         .collect()
@@ -167,8 +168,64 @@ fn a_mass_says_what_it_rests_on() {
         span: Mass::from_ug(2_000),
         zero: Some(Zero { mass: Mass::from_ug(120_000), input: 2 }),
         at: ms(1_100),
+        // Five steady lines after the pan was loaded; the first of the eight that agree came 700 ms before the last.
+        trace: Some(Trace { settling_ms: 800, watched_ms: 700, drift_ug_per_s: -1_428 }),
     };
     assert_eq!(happened, vec![Happening::MassTaken(want)]);
+}
+
+/// How a mass drifted until it was lifted, by the unload it was told with.
+fn stays(happened: &[Happening]) -> Vec<Option<Stayed>> {
+    happened.iter().filter_map(|h| if let Happening::Unloaded { stayed, .. } = h { Some(*stayed) } else { None }).collect()
+}
+
+#[test]
+fn a_mass_that_drifts_while_it_lies_there_says_so_when_it_is_lifted() {
+    let limits = SettleLimits { change_from: Mass::from_ug(500_000), ..SettleLimits::default() };
+    // One line every 100 ms: a step of 1 mg every 500 ms is 2 mg a second; the hand that lifts it comes last.
+    let creeping = |sign: i64| -> Vec<Reading> {
+        let on: Vec<Reading> = (0..100).map(|n| steady(23_400 + sign * (n / 5))).collect();
+        [times(3, steady(0)), times(8, steady(23_400)), on, vec![steady(23_300), moving(21_000)], times(4, steady(0))].concat()
+    };
+    for (sign, want) in [(1, 1_900..=2_100), (-1, -2_100..=-1_900), (0, 0..=0)] {
+        let stay = stays(&feed(limits, &creeping(sign)))[0].expect("watched for ten seconds");
+        assert!(want.contains(&stay.drift_ug_per_s), "{sign}: {stay:?}");
+        assert!((9_500..=10_100).contains(&stay.watched_ms) && stay.readings >= 95, "{stay:?}");
+        assert_eq!(stay.taken_at, ms(1_100), "tells which mass it was");
+    }
+    let short = [times(3, steady(0)), times(9, steady(23_400)), times(2, steady(0))].concat();
+    assert_eq!(stays(&feed(limits, &short)), [None], "nothing is told of what was not watched");
+    let slips = SettleLimits { talks: Talks::PrintOnKey, ..limits };
+    assert!(masses(&feed(slips, &creeping(1))).iter().all(|t| t.trace.is_none()), "a print key shows nothing in between");
+}
+
+#[test]
+fn what_is_left_on_the_pan_is_told_once() {
+    let with = |after: Vec<Reading>| {
+        short(&feed(SettleLimits::default(), &[times(3, steady(4)), times(8, steady(23_457)), after].concat()))
+    };
+    assert_eq!(with(times(9, steady(64))), ["T 23457@11", "U@12", "L 60@13"]);
+    assert_eq!(with(times(9, steady(-30))), ["T 23457@11", "U@12", "L -34@13"]);
+    assert_eq!(with(times(9, steady(5))), ["T 23457@11", "U@12"], "a step of the display is nothing");
+    assert_eq!(with([times(1, steady(-9_000)), times(9, steady(64))].concat()), ["T 23457@11", "U@12"], "tared in between");
+    let unseen = [times(8, steady(23_457)), times(9, steady(64))].concat();
+    assert_eq!(short(&feed(SettleLimits::default(), &unseen)), ["T 23457@8", "U@9"], "nobody saw the pan before");
+}
+
+#[test]
+fn a_sense_that_is_resumed_sees_the_same() {
+    let drifting: Vec<Reading> = (0..60).map(|n| steady(23_457 + n / 5)).collect();
+    let lines = [times(3, steady(0)), times(8, steady(23_457)), drifting, times(3, steady(70))].concat();
+    let limits = SettleLimits::default();
+    let all = feed(limits, &lines);
+    let taken = masses(&all)[0];
+    let mut again = Settle::resume(limits, Some(taken));
+    assert_eq!(feed_from(&mut again, &lines[11..], 12), all[1..], "after the mass");
+    let mut lifted = Settle::new(limits);
+    feed_from(&mut lifted, &lines[..72], 1);
+    let mut again = Settle::resume(limits, None).lifted(lifted.before());
+    assert_eq!(feed_from(&mut again, &lines[72..], 73), all[2..], "after it was lifted");
+    assert_eq!(short(&all), ["T 23457@11", "U@72", "L 70@73"]);
 }
 
 #[test]
@@ -428,6 +485,7 @@ proptest! {
                     prop_assert!(loaded.is_some());
                     loaded = None;
                 }
+                Some(Happening::LeftOnPan(_)) => prop_assert!(loaded.is_none()),
                 Some(other) => prop_assert!(false, "{:?}", other),
                 None => {}
             }

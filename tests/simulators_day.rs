@@ -65,7 +65,7 @@ fn one_specimen_is_played_in_the_order_of_the_bench() {
     only.natural[0].set_aside = Some("spilt".into());
     only.liquid[0].slice.dry_ug.clear();
     only.liquid[0].slice.set_aside = Some("groove slipped".into());
-    only.not_obtainable = Some(NotObtainable { limit: Limit::Plastic, because: "crumbles".into() });
+    only.not_obtainable = vec![NotObtainable { limit: Limit::Plastic, because: "crumbles".into() }];
     only.clay_percent = Some(31.0);
     let steps = schedule(&day(vec![only])).unwrap();
     assert_eq!(
@@ -213,7 +213,7 @@ fn any_day() -> impl Strategy<Value = Day> {
             .map(|(i, (trials, fixed, not))| {
                 let mut s = Specimen { id: format!("S{i}"), method: "m".into(), ..Specimen::default() };
                 s.bench = benches.get(usize::from(fixed)).map(|b| b.name.clone());
-                s.not_obtainable = not.then(|| NotObtainable { limit: Limit::Liquid, because: "too sandy".into() });
+                s.not_obtainable.extend(not.then(|| NotObtainable { limit: Limit::Liquid, because: "too sandy".into() }));
                 let mut taken = BTreeSet::new();
                 for (kind, (index, dries, aside, cg, drops)) in trials {
                     let container = format!("C{}", index.index(pool));

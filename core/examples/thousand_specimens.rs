@@ -62,6 +62,7 @@ fn sheet(n: u32) -> Sheet {
     });
     let threads = (1..=3).map(|no| trial(Kind::Thread, no, None, at / 2.0 + f64::from(no) / 10.0));
     Sheet {
+        wanted: Vec::new(),
         specimen: SpecimenId::new(&format!("S-{n}")).expect("a name"),
         trials: liquid.chain(threads).chain([trial(Kind::Natural, 1, None, at * 0.7)]).collect(),
         liquid_not_obtainable: None,

@@ -147,6 +147,26 @@ pub enum Fact {
         /// Which balance.
         balance: InstrumentName,
     },
+    /// A mass drifted while it lay on the pan, more than the balance's steps can hide.
+    PanWatched {
+        /// Which balance.
+        balance: InstrumentName,
+        /// The weighing.
+        weighing: Seq,
+        /// Slope from the mass taken until it was lifted, µg a second.
+        drift_ug_per_s: i64,
+        /// Time watched, ms.
+        watched_ms: u32,
+    },
+    /// The empty pan shows something else after a weighing than before.
+    LeftOnPan {
+        /// Which balance.
+        balance: InstrumentName,
+        /// The weighing.
+        weighing: Seq,
+        /// What it shows now, less what it showed before.
+        left: Mass,
+    },
     /// A weighing was tied to a container, or to another one than before.
     WeighingTied {
         /// The weighing.
@@ -190,6 +210,44 @@ pub enum Fact {
     SetAside {
         /// The weighing or count.
         what: Seq,
+        /// How the groove failed to close, when that is why.
+        #[serde(default, skip_serializing_if = "Option::is_none")]
+        fault: Option<ClosureFault>,
+        /// Why.
+        why: String,
+    },
+    /// A groove failed before there was a count: in a run that still goes on, or when it was cut.
+    ClosureFailed {
+        /// Where.
+        bench: BenchName,
+        /// The specimen in work.
+        specimen: SpecimenId,
+        /// How.
+        fault: ClosureFault,
+        /// A run was going on: its count does not stand.
+        running: bool,
+        /// Why.
+        why: String,
+    },
+    /// A loose weighing or count was explained by a person; it stays loose.
+    Explained {
+        /// The weighing or count.
+        what: Seq,
+        /// What it was.
+        says: String,
+    },
+    /// A determination was begun for the wrong specimen and moved to another, with its counts.
+    TrialMoved {
+        /// The specimen it was begun for.
+        specimen: SpecimenId,
+        /// Liquid, thread or natural.
+        trial: Kind,
+        /// Its number there.
+        no: u32,
+        /// The specimen it belongs to.
+        to: SpecimenId,
+        /// Its number there.
+        to_no: u32,
         /// Why.
         why: String,
     },
@@ -363,10 +421,13 @@ pub struct SpecimenOpened {
     /// Liquid limit of the same soil dried in the oven before the test, percent.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub liquid_limit_oven_dried: Option<f64>,
+    /// What is wanted of it; empty: liquid and plastic limit.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub wanted: Vec<Intention>,
 }
 
 /// What a bench works on.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Serialize, Deserialize)]
 #[serde(rename_all = "snake_case")]
 pub enum Intention {
     /// Liquid limit: counts belong to the specimen.
@@ -375,6 +436,16 @@ pub enum Intention {
     Plastic,
     /// Natural water content.
     Natural,
+}
+
+/// How a groove failed to close as it should.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum ClosureFault {
+    /// The soil slid on the cup instead of flowing together.
+    Slid,
+    /// The sides of the groove tore.
+    Tore,
 }
 
 /// A limit.
@@ -456,6 +527,21 @@ pub struct Counted {
     /// Why it is loose, and what to do.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub loose: Option<String>,
+    /// A person had said of the run, before it was over, that it does not stand.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub failed: Option<RunFailed>,
+}
+
+/// A run that does not stand.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct RunFailed {
+    /// How.
+    pub fault: ClosureFault,
+    /// Who said so.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub by: Option<Operator>,
+    /// Why.
+    pub why: String,
 }
 
 impl Fact {
@@ -479,12 +565,17 @@ impl Fact {
             Fact::Weighed(_) => "weighed",
             Fact::SlipRepeated { .. } => "slip_repeated",
             Fact::PanCleared { .. } => "pan_cleared",
+            Fact::PanWatched { .. } => "pan_watched",
+            Fact::LeftOnPan { .. } => "left_on_pan",
             Fact::WeighingTied { .. } => "weighing_tied",
             Fact::Counted(_) => "counted",
             Fact::CountTied { .. } => "count_tied",
             Fact::CountSuperseded { .. } => "count_superseded",
             Fact::SliceOverdue { .. } => "slice_overdue",
             Fact::SetAside { .. } => "set_aside",
+            Fact::ClosureFailed { .. } => "closure_failed",
+            Fact::Explained { .. } => "explained",
+            Fact::TrialMoved { .. } => "trial_moved",
             Fact::TrialSetAside { .. } => "trial_set_aside",
             Fact::MassAmended { .. } => "mass_amended",
             Fact::DropsAmended { .. } => "drops_amended",

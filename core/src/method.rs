@@ -207,6 +207,17 @@ pub struct Liquid {
     /// Wet soil of a slice, grams, at least.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub mass_from_g: Option<f64>,
+    /// Fall of water content for ten times the drops, percent of dry mass: what is
+    /// supposed of a soil of which nothing is known yet, for advice at the bench alone.
+    #[serde(default)]
+    pub slope_per_decade: Option<f64>,
+    /// Standard deviation of that fall from soil to soil.
+    #[serde(default)]
+    pub slope_sd: Option<f64>,
+    /// Water content of a paste near the liquid limit, percent of dry mass, from–to, while it is
+    /// not known; for advice alone.
+    #[serde(default)]
+    pub paste_water_percent: Option<[f64; 2]>,
 }
 
 /// Plastic limit by rolling threads.

@@ -1,6 +1,7 @@
 //! What is known of one specimen, ready to be computed: the common form of a
 //! running test, a scenario file and an old paper sheet.
 
+use crate::fact::Intention;
 use crate::names::{ContainerId, InstrumentName, Operator, SpecimenId};
 use crate::quantity::Mass;
 use crate::stamp;
@@ -31,6 +32,18 @@ pub struct Sheet {
     pub answers: Vec<Answer>,
     /// A second person has reviewed the result as it stands.
     pub reviewed: bool,
+    /// What is wanted; empty: liquid and plastic limit.
+    pub wanted: Vec<Intention>,
+}
+
+impl Sheet {
+    /// Whether this is wanted of the specimen.
+    pub fn wants(&self, what: Intention) -> bool {
+        match self.wanted.is_empty() {
+            true => what != Intention::Natural,
+            false => self.wanted.contains(&what),
+        }
+    }
 }
 
 /// A person's answer to a check.

@@ -5,10 +5,16 @@
 //! belongs to the ask.
 
 use serde_json::{Map, Value, json};
+use std::str::FromStr;
 use tarecup_core::lab::ask::Ask;
+use tarecup_core::lab::{Wish, meant, nearest};
+use tarecup_core::names::{BenchName, NameError, SpecimenId};
+use tarecup_core::quantity::{Mass, MassUnit};
 
 /// Largest ask, in bytes. Checked before anything is parsed.
 pub const LARGEST: usize = 64 * 1024;
+/// More paste than any dish holds.
+const MOST_PASTE_UG: i64 = 10_000 * 1_000_000;
 /// Deepest nesting of an ask.
 const DEEPEST: usize = 16;
 
@@ -22,7 +28,7 @@ pub enum Wanted {
 }
 
 /// Asks that only read.
-#[derive(Debug, PartialEq, Eq)]
+#[derive(Debug, PartialEq)]
 pub enum Read {
     /// How the service is doing.
     Status,
@@ -35,6 +41,21 @@ pub enum Read {
         /// Which.
         id: String,
     },
+    /// What helps now: at a bench, or about a specimen.
+    Advice {
+        /// The bench.
+        bench: Option<BenchName>,
+        /// The specimen, wherever it is worked on.
+        specimen: Option<SpecimenId>,
+        /// What the client knows besides.
+        wish: Wish,
+    },
+    /// Which of these asks would be refused, if they were made one after the other. Nothing is done.
+    Would(Vec<Ask>),
+    /// What is drying.
+    Shelf,
+    /// Loose weighings and counts.
+    Loose,
     /// Facts after a number.
     FactsAfter {
         /// The number.
@@ -80,7 +101,7 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
         Some(read) => Wanted::Read(read),
-        None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| format!("the ask cannot be done: {e}"))?),
+        None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| in_words(&object, &e.to_string()))?),
     };
     Ok(Asked { id, wanted, body })
 }
@@ -98,8 +119,111 @@ fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
             seq: object.get("seq").and_then(Value::as_u64).ok_or("\"facts_after\" needs a whole number \"seq\"")?,
             limit: object.get("limit").and_then(Value::as_u64).unwrap_or(100).min(1_000) as usize,
         },
+        "advice" => advice(object)?,
+        "would" => would(object)?,
+        "shelf" => nothing_else(object, word, Read::Shelf)?,
+        "loose" => nothing_else(object, word, Read::Loose)?,
         _ => return Ok(None),
     }))
+}
+
+/// Asks that only read; the others are variants of [`Ask`].
+const READS: [&str; 8] = ["status", "latest", "document", "facts_after", "advice", "would", "shelf", "loose"];
+
+/// What serde says of an ask, in the words of who wrote it, with what was meant.
+fn in_words(object: &Map<String, Value>, error: &str) -> String {
+    let word = object.get("ask").and_then(Value::as_str).unwrap_or_default();
+    let quoted: Vec<&str> = error.split('`').skip(1).step_by(2).collect();
+    let (written, known) = quoted.split_first().map_or(("", &[][..]), |(first, rest)| (*first, rest));
+    let printable = |text: &str| -> String { text.chars().take(60).flat_map(char::escape_default).collect() };
+    if error.starts_with("unknown variant") && known.contains(&"open_specimen") {
+        let shown = printable(word);
+        let all = known.iter().copied().chain(READS);
+        let hint = nearest(word, all).map_or_else(
+            || String::from("the asks are listed in the handbook, README.md, under \"At the bench\""),
+            |near| format!("did you mean \"{near}\"?"),
+        );
+        return format!("the ask cannot be done: there is no ask \"{shown}\"; {hint}");
+    }
+    let shown = printable(written);
+    if error.starts_with("unknown variant") {
+        let hint = meant(written, known.iter().copied());
+        return format!("the ask cannot be done: \"{shown}\" is not known here{hint}; it is one of {}", known.join(", "));
+    }
+    if error.starts_with("unknown field") {
+        return format!("the ask cannot be done: {}", no_member(word, &shown, known));
+    }
+    if error.starts_with("missing field") {
+        return format!("the ask cannot be done: \"{word}\" needs the member \"{shown}\"");
+    }
+    format!("the ask cannot be done: {error}")
+}
+
+fn no_member(word: &str, written: &str, known: &[&str]) -> String {
+    let hint = meant(written, known.iter().copied());
+    let members = if known.is_empty() { String::from("it has none") } else { format!("it has {}", known.join(", ")) };
+    format!("\"{word}\" has no member \"{written}\"{hint}; {members}")
+}
+
+/// An ask that reads and has these members only.
+fn only(object: &Map<String, Value>, word: &str, known: &[&str]) -> Result<(), String> {
+    match object.keys().find(|k| *k != "ask" && !known.contains(&k.as_str())) {
+        None => Ok(()),
+        Some(other) => {
+            let shown: String = other.chars().take(60).flat_map(char::escape_default).collect();
+            Err(no_member(word, &shown, known))
+        }
+    }
+}
+
+fn nothing_else(object: &Map<String, Value>, word: &str, read: Read) -> Result<Read, String> {
+    only(object, word, &[]).map(|()| read)
+}
+
+/// Most asks that are tried at once.
+const MOST_TRIED: usize = 200;
+
+fn would(object: &Map<String, Value>) -> Result<Read, String> {
+    only(object, "would", &["asks"])?;
+    let asks = object.get("asks").and_then(Value::as_array).ok_or("\"would\" needs a list \"asks\"")?;
+    if asks.len() > MOST_TRIED {
+        return Err(format!("at most {MOST_TRIED} asks are tried at once"));
+    }
+    let one = |(n, ask): (usize, &Value)| {
+        let members = ask.as_object().cloned().unwrap_or_default();
+        serde_json::from_value(ask.clone()).map_err(|e| format!("ask {n}: {}", in_words(&members, &e.to_string())))
+    };
+    asks.iter().enumerate().map(one).collect::<Result<_, String>>().map(Read::Would)
+}
+
+fn advice(object: &Map<String, Value>) -> Result<Read, String> {
+    fn name<T: FromStr<Err = NameError>>(object: &Map<String, Value>, member: &str) -> Result<Option<T>, String> {
+        let Some(value) = object.get(member).filter(|v| !v.is_null()) else { return Ok(None) };
+        let text = value.as_str().ok_or_else(|| format!("\"{member}\" is a text"))?;
+        text.parse().map(Some).map_err(|e| format!("\"{member}\": {e}"))
+    }
+    only(object, "advice", &["bench", "specimen", "paste_g", "drops"])?;
+    let paste = match object.get("paste_g").filter(|v| !v.is_null()) {
+        None => None,
+        Some(value) => {
+            let text = value.as_str().map_or_else(|| value.to_string(), String::from);
+            let mass = Mass::parse(&text, MassUnit::Gram).map_err(|e| format!("\"paste_g\" is a mass in grams: {e}"))?;
+            let believable = mass > Mass::ZERO && mass <= Mass::from_ug(MOST_PASTE_UG);
+            Some(mass)
+                .filter(|_| believable)
+                .ok_or("\"paste_g\" is the mass of the paste, more than 0 and at most 10000 g")?
+                .into()
+        }
+    };
+    let drops = match object.get("drops").filter(|v| !v.is_null()) {
+        None => None,
+        Some(value) => {
+            let drops = value.as_u64().and_then(|d| u32::try_from(d).ok()).filter(|d| (1..=500).contains(d));
+            Some(drops.ok_or("\"drops\" is a whole number between 1 and 500")?)
+        }
+    };
+    let wish = Wish { paste, drops, slope: None };
+    Ok(Read::Advice { bench: name(object, "bench")?, specimen: name(object, "specimen")?, wish })
 }
 
 /// Deepest bracket of a JSON text, brackets inside texts not counted.
@@ -135,6 +259,57 @@ mod tests {
         assert!(matches!(asked.wanted, Wanted::Read(Read::Document { .. })));
         let asked = parse(r#"{"ask":"facts_after","seq":3}"#).expect("an ask");
         assert!(matches!(asked.wanted, Wanted::Read(Read::FactsAfter { seq: 3, limit: 100 })));
+    }
+
+    #[test]
+    fn advice_is_asked_with_what_the_client_knows() {
+        let read = |text: &str| match parse(text).map(|a| a.wanted) {
+            Ok(Wanted::Read(read)) => Ok(read),
+            Ok(Wanted::Write(ask)) => panic!("{ask:?}"),
+            Err(says) => Err(says),
+        };
+        let asked = read(r#"{"ask":"advice","bench":"north","paste_g":182.5,"drops":40}"#).expect("an ask");
+        let wish = Wish { paste: Some(Mass::from_ug(182_500_000)), drops: Some(40), slope: None };
+        assert_eq!(asked, Read::Advice { bench: BenchName::new("north").ok(), specimen: None, wish });
+        assert!(matches!(read(r#"{"ask":"advice","specimen":"S-1","paste_g":"182.5"}"#), Ok(Read::Advice { .. })));
+        assert_eq!(read(r#"{"ask":"shelf"}"#), Ok(Read::Shelf));
+        for (text, words) in [
+            (r#"{"ask":"advice","bench":"north","paste_g":0}"#, "more than 0"),
+            (r#"{"ask":"advice","bench":"north","paste_g":"x"}"#, "mass in grams"),
+            (r#"{"ask":"advice","bench":"north","paste_g":1e300}"#, "mass in grams"),
+            (r#"{"ask":"advice","bench":"north","paste_g":20000}"#, "at most 10000"),
+            (r#"{"ask":"advice","bench":"north","drops":0}"#, "between 1 and 500"),
+            (r#"{"ask":"advice","bench":7}"#, "is a text"),
+            (r#"{"ask":"advice","bench":"a b"}"#, "cannot stand in a name"),
+            (r#"{"ask":"advice","bnech":"north"}"#, "did you mean bench?"),
+            (r#"{"ask":"loose","bench":"north"}"#, "has no member \"bench\"; it has none"),
+        ] {
+            let says = read(text).expect_err(text);
+            assert!(says.contains(words), "{text}: {says}");
+        }
+    }
+
+    #[test]
+    fn what_was_meant_is_named() {
+        for (text, words) in [
+            (r#"{"ask":"sign_inn","bench":"north"}"#, "there is no ask \"sign_inn\"; did you mean \"sign_in\"?"),
+            (r#"{"ask":"statsu"}"#, "did you mean \"status\"?"),
+            (r#"{"ask":"fly"}"#, "README.md"),
+            (
+                r#"{"ask":"sign_in","bench":"north","opertor":"AB"}"#,
+                "has no member \"opertor\" (did you mean operator?); it has bench, operator",
+            ),
+            (r#"{"ask":"sign_in","bench":"north"}"#, "\"sign_in\" needs the member \"operator\""),
+            (r#"{"ask":"intend","bench":"north","specimen":"S-1","intention":"plastics"}"#, "did you mean plastic?"),
+            (
+                r#"{"ask":"intend","bench":"north","specimen":"S-1","intention":"flying"}"#,
+                "it is one of liquid, plastic, natural",
+            ),
+            (r#"{"ask":"a`b`c"}"#, "there is no ask"),
+        ] {
+            let says = parse(text).expect_err(text);
+            assert!(says.contains(words), "{text}: {says}");
+        }
     }
 
     #[test]

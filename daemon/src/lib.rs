@@ -12,6 +12,7 @@ pub mod command;
 pub mod desk;
 pub mod drill;
 pub mod heard;
+pub mod import;
 pub mod keys;
 pub mod ledger;
 pub mod proof;

@@ -72,8 +72,8 @@ pub struct Specimen {
     pub plastic: Vec<Weighed>,
     /// Natural water contents in order.
     pub natural: Vec<Weighed>,
-    /// A limit that cannot be obtained, and why.
-    pub not_obtainable: Option<NotObtainable>,
+    /// Limits that cannot be obtained, and why.
+    pub not_obtainable: Vec<NotObtainable>,
 }
 
 /// One liquid-limit trial.

@@ -202,7 +202,7 @@ impl<'a> Plan<'a> {
         }
         let name = self.bench(bench).name.as_str();
         self.ask(bench, Some(specimen), json!({"ask": "intend_nothing", "bench": name}), "has nothing more in mind".into());
-        if let Some(not) = &specimen.not_obtainable {
+        for not in &specimen.not_obtainable {
             let limit = match not.limit {
                 Limit::Liquid => "liquid",
                 Limit::Plastic => "plastic",
@@ -358,6 +358,10 @@ fn open_ask(specimen: &Specimen) -> Value {
         if let Some(value) = value {
             ask[key] = value;
         }
+    }
+    // Only its water content as it came is to be determined.
+    if specimen.liquid.is_empty() && specimen.plastic.is_empty() && specimen.not_obtainable.is_empty() {
+        ask["wanted"] = json!(["natural"]);
     }
     ask
 }

@@ -227,6 +227,7 @@ impl Play {
             span: Mass::ZERO,
             zero: None,
             at: self.now,
+            trace: None,
         };
         self.take(Input::Mass { balance: instrument(pan), taken })
     }

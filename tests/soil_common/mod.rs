@@ -39,6 +39,7 @@ pub fn sheet(trials: Vec<Trial>) -> Sheet {
         liquid_limit_oven_dried: None,
         answers: Vec::new(),
         reviewed: false,
+        wanted: Vec::new(),
     }
 }
 

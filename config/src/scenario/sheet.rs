@@ -1,6 +1,7 @@
 //! From a row of the file to the common form that is computed.
 
 use super::{LiquidRow, ScenarioSpecimen, Water, Weighed};
+use tarecup_core::fact::Intention;
 use tarecup_core::sheet::{Closure, DryWeighing, Kind, Penetration, Reading, Sheet, Trial};
 
 /// The sheet of one specimen, as a person typed it: no clocks, no facts, no
@@ -31,7 +32,15 @@ pub fn to_sheet(specimen: &ScenarioSpecimen) -> Sheet {
         liquid_limit_oven_dried: specimen.liquid_limit_oven_dried,
         answers: Vec::new(),
         reviewed: false,
+        wanted: wanted(specimen),
     }
+}
+
+/// A file that gives natural water contents alone wants nothing else.
+fn wanted(specimen: &ScenarioSpecimen) -> Vec<Intention> {
+    let limits = !specimen.liquid.is_empty() || !specimen.plastic.is_empty();
+    let stated = specimen.liquid_not_obtainable.is_some() || specimen.plastic_not_obtainable.is_some();
+    if limits || stated { Vec::new() } else { vec![Intention::Natural] }
 }
 
 fn closures(row: &LiquidRow) -> Vec<Closure> {

@@ -197,6 +197,7 @@ impl Method {
         let rate = (self.device() == Device::Cup).then_some(("liquid.rate_per_s", self.liquid.rate_per_s));
         for (key, [low, high]) in rate
             .into_iter()
+            .chain(self.liquid.paste_water_percent.map(|range| ("liquid.paste_water_percent", range)))
             .chain([("plastic.thread_mm", self.plastic.thread_mm), ("drying.oven_celsius", self.drying.oven_celsius)])
         {
             if !(low > 0.0 && low <= high && high.is_finite()) {
@@ -220,6 +221,8 @@ impl Method {
             ("precision.plastic_one_operator_percent", precision.map(|p| p.plastic_one_operator_percent)),
             ("precision.plastic_two_laboratories_percent", precision.map(|p| p.plastic_two_laboratories_percent)),
             ("liquid.balance_reads_g", Some(self.liquid.balance_reads_g)),
+            ("liquid.slope_per_decade", self.liquid.slope_per_decade),
+            ("liquid.slope_sd", self.liquid.slope_sd),
             ("plastic.mass_from_g", self.plastic.mass_from_g),
             ("plastic.agree_within_percent", self.plastic.agree_within_percent),
             ("drying.hours", Some(self.drying.hours)),
@@ -264,6 +267,9 @@ impl Method {
             ("liquid.exponent", self.liquid.exponent.is_some()),
             ("liquid.exponent_from_50_percent", self.liquid.exponent_from_50_percent.is_some()),
             ("liquid.mass_from_g", self.liquid.mass_from_g.is_some()),
+            ("liquid.slope_per_decade", self.liquid.slope_per_decade.is_some()),
+            ("liquid.slope_sd", self.liquid.slope_sd.is_some()),
+            ("liquid.paste_water_percent", self.liquid.paste_water_percent.is_some()),
             ("plastic.mass_from_g", self.plastic.mass_from_g.is_some()),
             ("plastic.agree_within_percent", self.plastic.agree_within_percent.is_some()),
         ];

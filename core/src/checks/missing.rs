@@ -1,6 +1,7 @@
 //! What is not there yet. Keeps the result provisional.
 
-use super::{LIQUID_LIMIT, PLASTIC_LIMIT, Worked, container_text, count_text, facts, list_text, note};
+use super::{LIQUID_LIMIT, NATURAL_WATER, PLASTIC_LIMIT, Worked, container_text, count_text, facts, list_text, note};
+use crate::fact::Intention;
 use crate::limits::CheckRow;
 use crate::method::Device;
 use crate::sheet::{Kind, Trial};
@@ -21,6 +22,7 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
     }
     liquid_limit(worked, rows);
     plastic_limit(worked, rows);
+    natural_water(worked, rows);
 }
 
 /// What a determination lacks, apart from a tare owed, which has its own check.
@@ -56,7 +58,7 @@ fn next(trial: &Trial) -> &'static str {
 
 fn liquid_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
     let (sheet, begun) = (worked.sheet, worked.of(worked.method.limit_kind()).count());
-    let spared = sheet.plastic_not_obtainable.is_some() && begun == 0;
+    let spared = begun == 0 && (sheet.plastic_not_obtainable.is_some() || !sheet.wants(Intention::Liquid));
     if sheet.liquid_not_obtainable.is_some() || spared {
         return;
     }
@@ -78,7 +80,7 @@ fn liquid_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
 
 fn plastic_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
     let (sheet, begun) = (worked.sheet, worked.of(Kind::Thread).count());
-    let spared = sheet.liquid_not_obtainable.is_some() && begun == 0;
+    let spared = begun == 0 && (sheet.liquid_not_obtainable.is_some() || !sheet.wants(Intention::Plastic));
     if sheet.plastic_not_obtainable.is_some() || spared {
         return;
     }
@@ -92,4 +94,17 @@ fn plastic_limit(worked: &Worked, rows: &mut Vec<CheckRow>) {
         );
         rows.push(note("missing", PLASTIC_LIMIT, says, worked.facts_of(Kind::Thread)));
     }
+}
+
+fn natural_water(worked: &Worked, rows: &mut Vec<CheckRow>) {
+    let finished = worked.of(Kind::Natural).any(|t| t.water().is_some());
+    if !worked.sheet.wants(Intention::Natural) || finished {
+        return;
+    }
+    let next = match worked.of(Kind::Natural).next() {
+        Some(_) => "finish what is begun",
+        None => "weigh some of the soil as it came",
+    };
+    let says = format!("the natural water content is wanted and not determined yet; {next}.");
+    rows.push(note("missing", NATURAL_WATER, says, worked.facts_of(Kind::Natural)));
 }

@@ -35,7 +35,7 @@ mod tare_owed;
 mod threads;
 mod typed;
 mod u_line;
-mod windows;
+pub(crate) mod windows;
 
 use crate::limits::{CheckRow, LiquidLimit, PlasticLimit, PlasticityIndex, Severity};
 use crate::method::Method;
@@ -55,6 +55,8 @@ pub const LIQUID_LIMIT: &str = "liquid limit";
 pub const PLASTIC_LIMIT: &str = "plastic limit";
 /// … the plasticity index.
 pub const PLASTICITY_INDEX: &str = "plasticity index";
+/// … the natural water content.
+pub const NATURAL_WATER: &str = "natural water content";
 /// … the specimen as a whole.
 pub const SPECIMEN: &str = "specimen";
 

@@ -1,7 +1,7 @@
 //! What persons ask for. One closed set, the same for every way in.
 
 use super::entities::{Bench, Container, Latest, LooseWhat, Specimen};
-use super::oven::STAYS_KEPT;
+use super::near::meant;
 use super::role::Role;
 use super::{Lab, New, Refusal};
 use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
@@ -10,7 +10,7 @@ use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
 use crate::quantity::{Mass, MassUnit};
 use crate::sheet::{Kind, Seq};
 use crate::signal::Basis;
-use crate::stamp::{Stamp, parse_rfc3339};
+use crate::stamp::Stamp;
 use alloc::collections::{BTreeMap, BTreeSet};
 use alloc::format;
 use alloc::string::String;
@@ -20,8 +20,6 @@ use serde::{Deserialize, Serialize};
 
 /// Longest text of a reason or description, in characters.
 const LONGEST_WORDS: usize = 1_000;
-/// Most containers in one ask.
-const AT_ONCE: usize = 500;
 
 /// An ask that may write. Reading asks are answered without the laboratory.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -43,6 +41,9 @@ pub enum Ask {
         passing_75um_percent: Option<f64>,
         #[serde(default)]
         clay_percent: Option<f64>,
+        /// What is wanted; left out: liquid and plastic limit.
+        #[serde(default)]
+        wanted: Vec<Intention>,
         #[serde(default)]
         liquid_limit_oven_dried: Option<f64>,
         #[serde(default)]
@@ -83,6 +84,10 @@ pub enum Ask {
     TieCount { count: Seq, bench: BenchName, specimen: SpecimenId, who: Operator, why: String },
     /// A weighing or count does not count.
     SetAside { what: Seq, who: Operator, why: String },
+    /// A loose weighing or count is what these words say: it stays loose and needs nobody any more.
+    Explain { what: Seq, who: Operator, why: String },
+    /// A determination was begun for the wrong specimen.
+    MoveTrial { specimen: SpecimenId, kind: Kind, no: u32, to: SpecimenId, who: Operator, why: String },
     /// A determination does not count.
     SetAsideTrial { specimen: SpecimenId, kind: Kind, no: u32, who: Operator, why: String },
     /// Correct a mass.
@@ -119,6 +124,22 @@ pub enum Ask {
         #[serde(default)]
         why: Option<String>,
     },
+    /// The soil slid in the groove: the latest count, or the run that goes on, does not stand.
+    Slid {
+        bench: BenchName,
+        #[serde(default)]
+        who: Option<Operator>,
+        #[serde(default)]
+        why: Option<String>,
+    },
+    /// The groove tore: the latest count, or the run that goes on, does not stand.
+    GrooveTore {
+        bench: BenchName,
+        #[serde(default)]
+        who: Option<Operator>,
+        #[serde(default)]
+        why: Option<String>,
+    },
     /// Take back the latest weighing or count of a bench.
     Undo {
         bench: BenchName,
@@ -130,8 +151,11 @@ pub enum Ask {
     /// Enter a container in the register.
     RegisterContainer {
         container: ContainerId,
-        #[serde(default)]
+        #[serde(default, deserialize_with = "mass_text_option")]
         lid_g: Option<String>,
+        /// Its empty mass as it stands in a register: typed, and marked so for ever.
+        #[serde(default, deserialize_with = "mass_text_option")]
+        tare_g: Option<String>,
         #[serde(default)]
         who: Option<Operator>,
     },
@@ -151,8 +175,14 @@ pub enum Ask {
         #[serde(default)]
         who: Option<Operator>,
     },
-    /// The oven was off.
-    OvenOff { from: String, to: String, who: Operator, why: String },
+    /// The oven was off; left out `to`: it is on again just now.
+    OvenOff {
+        from: String,
+        #[serde(default)]
+        to: Option<String>,
+        who: Operator,
+        why: String,
+    },
     /// A limit cannot be obtained.
     NotObtainable {
         specimen: SpecimenId,
@@ -167,7 +197,7 @@ pub enum Ask {
     Review { specimen: SpecimenId, who: Operator },
 }
 
-fn no(words: String) -> Refusal {
+pub(super) fn no(words: String) -> Refusal {
     Refusal(words)
 }
 
@@ -202,7 +232,7 @@ impl Lab {
             }
             Ask::SayRole { .. } | Ask::Tie { .. } | Ask::TieCount { .. } => self.ask_tie(ask),
             Ask::TypeMass { .. } | Ask::TypeDrops { .. } | Ask::TypePenetration { .. } => self.ask_typed(ask, at),
-            Ask::RegisterContainer { .. } | Ask::FreeContainer { .. } => self.ask_container(ask),
+            Ask::RegisterContainer { .. } | Ask::FreeContainer { .. } => self.ask_container(ask, at),
             Ask::IntoOven { .. } | Ask::OutOfOven { .. } | Ask::OvenOff { .. } => self.ask_oven(ask, at),
             Ask::NotObtainable { .. } | Ask::AnswerCheck { .. } | Ask::Review { .. } => self.ask_result(ask),
             Ask::SetAside { .. }
@@ -210,20 +240,28 @@ impl Lab {
             | Ask::AmendMass { .. }
             | Ask::AmendDrops { .. }
             | Ask::AmendPenetration { .. }
+            | Ask::Explain { .. }
+            | Ask::MoveTrial { .. }
             | Ask::NewPaste { .. }
+            | Ask::Slid { .. }
+            | Ask::GrooveTore { .. }
             | Ask::Undo { .. } => self.ask_correction(ask),
         }
     }
 
-    pub(super) fn bench_there(&self, bench: &BenchName) -> Result<&super::entities::Bench, Refusal> {
+    pub(super) fn bench_there(&self, bench: &BenchName) -> Result<&Bench, Refusal> {
         self.benches.get(bench).ok_or_else(|| {
             let names: Vec<&str> = self.benches.keys().map(BenchName::as_str).collect();
-            no(format!("there is no bench {bench}; the benches are {}", names.join(", ")))
+            let hint = meant(bench.as_str(), names.iter().copied());
+            no(format!("there is no bench {bench}{hint}; the benches are {}", names.join(", ")))
         })
     }
 
-    pub(super) fn specimen_there(&self, specimen: &SpecimenId) -> Result<&super::entities::Specimen, Refusal> {
-        self.specimens.get(specimen).ok_or_else(|| no(format!("there is no specimen {specimen}; open it first")))
+    pub(super) fn specimen_there(&self, specimen: &SpecimenId) -> Result<&Specimen, Refusal> {
+        self.specimens.get(specimen).ok_or_else(|| {
+            let hint = meant(specimen.as_str(), self.specimens.keys().map(SpecimenId::as_str));
+            no(format!("there is no specimen {specimen}{hint}; open it first"))
+        })
     }
 
     fn open_specimen(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
@@ -236,11 +274,14 @@ impl Lab {
             passing_75um_percent,
             clay_percent,
             liquid_limit_oven_dried,
+            mut wanted,
             who,
         } = ask
         else {
             return Ok(vec![]);
         };
+        wanted.sort_unstable();
+        wanted.dedup();
         if self.specimens.contains_key(&specimen) {
             return Err(no(format!("specimen {specimen} is open already; give a new one another identifier")));
         }
@@ -253,7 +294,8 @@ impl Lab {
         let name = method.unwrap_or_else(|| self.setup.default_method.clone());
         let Some(method) = self.setup.methods.get(&name) else {
             let names: Vec<&str> = self.setup.methods.keys().map(MethodName::as_str).collect();
-            return Err(no(format!("there is no method {name}; the methods are {}", names.join(", "))));
+            let hint = meant(name.as_str(), names.iter().copied());
+            return Err(no(format!("there is no method {name}{hint}; the methods are {}", names.join(", "))));
         };
         for (what, percent) in [("passing 0.075 mm", passing_75um_percent), ("clay", clay_percent)] {
             if percent.is_some_and(|p| !(0.0..=100.0).contains(&p)) {
@@ -276,6 +318,7 @@ impl Lab {
             passing_75um_percent,
             clay_percent,
             liquid_limit_oven_dried,
+            wanted,
         };
         Ok(vec![New::by(who, Fact::SpecimenOpened(opened))])
     }
@@ -322,7 +365,8 @@ impl Lab {
                 if of.trials.iter().any(|t| t.counts.contains(&count)) {
                     return Err(no(format!("a slice of count {count} was weighed for {}: take that weighing back first", of.id)));
                 }
-                if c.set_aside.is_some() {
+                // One of a groove that did not fail after all comes back; what else was set aside stays so.
+                if c.set_aside.is_some() && c.failed.is_none() {
                     return Err(no(format!("count {count} was set aside; enter its drops by hand if it counts after all")));
                 }
                 c
@@ -404,6 +448,7 @@ impl Lab {
             instruments: BTreeMap::new(),
             loose: BTreeMap::new(),
             statistics: self.statistics,
+            running: BTreeMap::new(),
         }
     }
 
@@ -430,7 +475,7 @@ impl Lab {
                 self.room_for_count(&bench).map_err(Refusal)?;
                 let mut facts = self.late_slice(&bench, &specimen, at);
                 let (bench, specimen) = (Some(bench), Some(specimen));
-                let counted = Counted { drops, bench, cup: None, run: None, specimen, replaces: None, loose: None };
+                let counted = Counted { drops, bench, cup: None, run: None, specimen, replaces: None, loose: None, failed: None };
                 facts.push(New::by(Some(who), Fact::Counted(counted)));
                 Ok(facts)
             }
@@ -439,79 +484,29 @@ impl Lab {
         }
     }
 
-    fn ask_container(&self, ask: Ask) -> Result<Vec<New>, Refusal> {
+    fn ask_container(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
         match ask {
-            Ask::RegisterContainer { container, lid_g, who } => {
+            Ask::RegisterContainer { container, lid_g, tare_g, who } => {
                 let lid = lid_g.as_deref().map(typed_mass).transpose()?;
+                let tare = tare_g.as_deref().map(typed_mass).transpose()?;
                 if SpecimenId::new(container.as_str()).is_ok_and(|s| self.specimens.contains_key(&s)) {
                     return Err(no(format!(
                         "{container} is a specimen: a code can mean only one thing, so number the container otherwise"
                     )));
                 }
-                Ok(vec![New::by(who, Fact::ContainerRegistered { container, lid })])
+                let typed = tare.map(|t| self.typed_tare(&container, t, who.as_ref(), at)).transpose()?.flatten();
+                let registered = New::by(who.clone(), Fact::ContainerRegistered { container, lid });
+                Ok([registered].into_iter().chain(typed.map(|fact| New::by(who, fact))).collect())
             }
             Ask::FreeContainer { container, who, why } => {
                 needs_words(&why)?;
                 match self.containers.get(&container) {
                     Some(c) if c.holding.is_some() => Ok(vec![New::by(Some(who), Fact::ContainerFreed { container, why })]),
-                    _ => Err(no(format!("{container} holds nothing"))),
+                    Some(_) => Err(no(format!("{container} holds nothing"))),
+                    None => Err(no(format!("there is no container {container}{}", self.container_meant(&container)))),
                 }
             }
             _ => Ok(vec![]),
-        }
-    }
-
-    fn ask_oven(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
-        match ask {
-            Ask::IntoOven { containers, celsius, who } => {
-                self.all_hold(&containers)?;
-                if celsius.is_some_and(|c| !(20.0..=300.0).contains(&c)) {
-                    return Err(no(String::from("an oven temperature lies between 20 and 300 °C")));
-                }
-                Ok(vec![New::by(who, Fact::IntoOven { containers, celsius })])
-            }
-            Ask::OutOfOven { containers, who } => {
-                self.all_hold(&containers)?;
-                Ok(vec![New::by(who, Fact::OutOfOven { containers })])
-            }
-            Ask::OvenOff { from, to, who, why } => {
-                let time = |t: &str| {
-                    parse_rfc3339(t).ok_or_else(|| no(format!("\"{t}\" is not a time; write it like 2026-03-02T08:14:05Z")))
-                };
-                needs_words(&why)?;
-                let (from_utc_us, to_utc_us) = (time(&from)?, time(&to)?);
-                if from_utc_us >= to_utc_us || to_utc_us > at.utc_us {
-                    return Err(no(String::from("the oven was off from a time to a later one, both past")));
-                }
-                self.room_in_oven(&self.wet_before(to_utc_us))?;
-                Ok(vec![New::by(Some(who), Fact::OvenOff { from_utc_us, to_utc_us, why })])
-            }
-            _ => Ok(vec![]),
-        }
-    }
-
-    fn all_hold(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
-        if containers.is_empty() {
-            return Err(no(String::from("name the containers")));
-        }
-        if containers.len() > AT_ONCE {
-            return Err(no(format!("at most {AT_ONCE} containers go in or out at once")));
-        }
-        self.room_in_oven(containers)?;
-        match containers.iter().find(|c| self.containers.get(*c).is_none_or(|c| c.holding.is_none())) {
-            Some(empty) => Err(no(format!("{empty} holds nothing that was weighed wet; weigh it first, or leave it out"))),
-            None => Ok(()),
-        }
-    }
-
-    fn room_in_oven(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
-        let holding = |id: &&ContainerId| self.containers.get(*id).and_then(|c| c.holding.as_ref());
-        let full = |id: &&ContainerId| holding(id).is_some_and(|h| h.oven.stays.len().max(h.oven.off.len()) >= STAYS_KEPT);
-        match containers.iter().find(full) {
-            Some(id) => {
-                Err(no(format!("{id} has been in and out of the oven {STAYS_KEPT} times: weigh it dry, or leave it out")))
-            }
-            None => Ok(()),
         }
     }
 
@@ -520,7 +515,7 @@ impl Lab {
             Ask::NotObtainable { specimen, limit, because, who } => {
                 needs_words(&because)?;
                 self.specimen_there(&specimen)?;
-                let at_work = |b: &&super::entities::Bench| b.intention.as_ref().is_some_and(|w| w.specimen == specimen);
+                let at_work = |b: &&Bench| b.intention.as_ref().is_some_and(|w| w.specimen == specimen);
                 let signed_in = || self.benches.values().filter(at_work).find_map(|b| b.signed_in.clone());
                 let who = who.or_else(signed_in).ok_or_else(|| no(String::from("say who states it: the result rests on it")))?;
                 Ok(vec![New::by(Some(who), Fact::NotObtainable { specimen, limit, because })])
@@ -569,11 +564,13 @@ impl Lab {
 fn worked_on(specimen: &Specimen) -> impl Iterator<Item = &Operator> {
     let weighings = specimen.weighings().flat_map(|w| w.by.iter().chain(w.corrected.iter().filter_map(|c| c.by.as_ref())));
     let counts = specimen.counts.iter().flat_map(|c| c.by.iter().chain(c.corrected.iter().filter_map(|s| s.by.as_ref())));
-    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref());
+    let moved = specimen.trials.iter().filter_map(|t| t.moved.as_ref()).map(|m| &m.said);
+    let aside = specimen.trials.iter().filter_map(|t| t.set_aside.as_ref()).chain(moved);
     let stated = specimen.liquid_not_obtainable.iter().chain(&specimen.plastic_not_obtainable);
     let said = aside.chain(stated).filter_map(|s| s.by.as_ref());
+    let given_up = specimen.counts.iter().filter_map(|c| c.set_aside.as_ref()).filter_map(|s| s.by.as_ref());
     let answered = specimen.answers.iter().filter_map(|a| a.by.as_ref());
-    weighings.chain(counts).chain(said).chain(answered)
+    weighings.chain(counts).chain(given_up).chain(said).chain(answered)
 }
 
 /// A number of drops that a person states.
@@ -600,11 +597,17 @@ fn mass_text<'de, D: serde::Deserializer<'de>>(from: D) -> Result<String, D::Err
         Text(String),
         Number(f64),
     }
-    Ok(match Given::deserialize(from).map_err(|_| serde::de::Error::custom("mass_g is a mass in grams, such as \"21.43\""))? {
+    Ok(match Given::deserialize(from).map_err(|_| serde::de::Error::custom("a mass is written in grams, such as \"21.43\""))? {
         Given::Text(text) => text,
         // The shortest text that reads back as this number: 21.43 stays 21.43.
         Given::Number(number) => format!("{number}"),
     })
+}
+
+fn mass_text_option<'de, D: serde::Deserializer<'de>>(from: D) -> Result<Option<String>, D::Error> {
+    #[derive(Deserialize)]
+    struct Given(#[serde(deserialize_with = "mass_text")] String);
+    Ok(Option::<Given>::deserialize(from)?.map(|Given(text)| text))
 }
 
 /// A mass that a person typed, in grams.

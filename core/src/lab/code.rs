@@ -121,13 +121,15 @@ impl Lab {
             "natural" => return intend(Intention::Natural),
             "nothing" => Ask::IntendNothing { bench: bench.clone(), who },
             "undo" => Ask::Undo { bench: bench.clone(), who, why: None },
+            "slid" => Ask::Slid { bench: bench.clone(), who, why: None },
+            "tore" => Ask::GrooveTore { bench: bench.clone(), who, why: None },
             "new-paste" => Ask::NewPaste { bench: bench.clone(), who, why: None },
             "sign-out" => Ask::SignOut { bench: bench.clone() },
             other => match other.strip_prefix("by-").map(Operator::new) {
                 Some(Ok(operator)) => Ask::SignIn { bench: bench.clone(), operator },
                 _ => {
                     return Err(format!(
-                        "no card is called \"+{}\": the cards are +liquid, +plastic, +natural, +nothing, +undo, +new-paste, +sign-out and +by-INITIALS",
+                        "no card is called \"+{}\": the cards are +liquid, +plastic, +natural, +nothing, +undo, +new-paste, +slid, +tore, +sign-out and +by-INITIALS",
                         printable(other)
                     ));
                 }

@@ -3,8 +3,8 @@
 use super::ask::{Ask, depth_believable, drops_believable, needs_words, typed_mass};
 use super::entities::{LooseWhat, Specimen, Weighing};
 use super::{Lab, New, Refusal};
-use crate::fact::{Fact, TrialRef};
-use crate::names::SpecimenId;
+use crate::fact::{ClosureFault, Fact, TrialRef};
+use crate::names::{BenchName, Operator, SpecimenId};
 use crate::sheet::Seq;
 use crate::soil::determined::about;
 use alloc::format;
@@ -18,13 +18,26 @@ impl Lab {
             Ask::SetAside { what, who, why } => {
                 needs_words(&why)?;
                 self.may_be_set_aside(what)?;
-                Ok(vec![New::by(Some(who), Fact::SetAside { what, why })])
+                Ok(vec![New::by(Some(who), Fact::SetAside { what, fault: None, why })])
             }
             Ask::SetAsideTrial { specimen, kind, no, who, why } => {
                 needs_words(&why)?;
                 self.trial_counts(&specimen, TrialRef { kind, no })?;
                 Ok(vec![New::by(Some(who), Fact::TrialSetAside { specimen, trial: kind, no, why })])
             }
+            Ask::Explain { what, who, why } => {
+                needs_words(&why)?;
+                match self.loose.contains_key(&what) {
+                    true => Ok(vec![New::by(Some(who), Fact::Explained { what, says: why })]),
+                    false => Err(Refusal(format!("nothing loose has the number {what}: it was tied or set aside, or never was"))),
+                }
+            }
+            Ask::MoveTrial { specimen, kind, no, to, who, why } => {
+                needs_words(&why)?;
+                self.move_trial(specimen, TrialRef { kind, no }, to, who, why)
+            }
+            Ask::Slid { bench, who, why } => self.closure_failed(bench, ClosureFault::Slid, who, why),
+            Ask::GrooveTore { bench, who, why } => self.closure_failed(bench, ClosureFault::Tore, who, why),
             Ask::AmendMass { weighing, mass_g, who, why } => {
                 needs_words(&why)?;
                 let mass = typed_mass(&mass_g)?;
@@ -76,10 +89,68 @@ impl Lab {
                 self.may_be_set_aside(what)?;
                 let why = why.unwrap_or_else(|| String::from("taken back at the bench"));
                 needs_words(&why)?;
-                Ok(vec![New::by(who, Fact::SetAside { what, why })])
+                Ok(vec![New::by(who, Fact::SetAside { what, fault: None, why })])
             }
             _ => Ok(vec![]),
         }
+    }
+
+    /// The run that goes on at a bench, or its latest count whose slice is owed, does not stand.
+    fn closure_failed(
+        &self,
+        bench: BenchName,
+        fault: ClosureFault,
+        who: Option<Operator>,
+        why: Option<String>,
+    ) -> Result<Vec<New>, Refusal> {
+        let state = self.bench_there(&bench)?;
+        let who = who.or_else(|| state.signed_in.clone());
+        let (usual, word) = match fault {
+            ClosureFault::Slid => ("the soil slid in the groove", "slide"),
+            ClosureFault::Tore => ("the groove tore", "tear"),
+        };
+        let why = why.unwrap_or_else(|| String::from(usual));
+        needs_words(&why)?;
+        let specimen = self.liquid_at(&bench).cloned();
+        let mut cups = self.running.keys().filter(|cup| self.benches_of(cup).contains(&bench));
+        if let Some(specimen) = specimen.clone().filter(|_| cups.next().is_some()) {
+            return Ok(vec![New::by(who, Fact::ClosureFailed { bench, specimen, fault, running: true, why })]);
+        }
+        let owed = state.owed.as_ref().and_then(|o| o.counts.last().copied());
+        match (owed, specimen) {
+            (Some(what), _) => Ok(vec![New::by(who, Fact::SetAside { what, fault: Some(fault), why })]),
+            // A groove may tear while it is cut, before there is a count.
+            (None, Some(specimen)) if fault == ClosureFault::Tore => {
+                Ok(vec![New::by(who, Fact::ClosureFailed { bench, specimen, fault, running: false, why })])
+            }
+            _ => Err(Refusal(format!(
+                "no count of bench {bench} waits for its slice, so nothing could {word}; when the slice was weighed already, set that trial aside"
+            ))),
+        }
+    }
+
+    /// A determination belongs to another specimen, with its counts and weighings.
+    fn move_trial(
+        &self,
+        specimen: SpecimenId,
+        which: TrialRef,
+        to: SpecimenId,
+        who: Operator,
+        why: String,
+    ) -> Result<Vec<New>, Refusal> {
+        let trial = self.specimen_there(&specimen)?.trial(which);
+        let name = about(which.kind, which.no);
+        if trial.is_none() {
+            return Err(Refusal(format!("{specimen} has no determination {name}")));
+        }
+        let target = self.specimen_there(&to)?;
+        if to == specimen {
+            return Err(Refusal(format!("{name} belongs to {to} already")));
+        }
+        self.room_for_moved(target)?;
+        let to_no = target.next_no(which.kind);
+        let (trial, no) = (which.kind, which.no);
+        Ok(vec![New::by(Some(who), Fact::TrialMoved { specimen, trial, no, to, to_no, why })])
     }
 
     fn may_be_set_aside(&self, what: Seq) -> Result<(), Refusal> {

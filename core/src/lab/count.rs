@@ -3,7 +3,7 @@
 use super::ask::depth_believable;
 use super::entities::{Count, Loose, LooseWhat, Owed, Specimen};
 use super::{Lab, New, Refusal};
-use crate::fact::{Counted, Fact, Intention};
+use crate::fact::{Counted, Fact, Intention, RunFailed};
 use crate::method::Device;
 use crate::names::{BenchName, InstrumentName, Operator, SpecimenId};
 use crate::sense::CountRun;
@@ -58,10 +58,11 @@ impl Lab {
             let (bench, replaces) = (first.bench.clone(), Some(first.seq));
             let who = first.by.clone().or_else(|| self.signed_in(bench.as_ref()));
             let specimen = Some(specimen.id.clone());
-            let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose: None };
+            let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose: None, failed: None };
             return vec![New::by(who, Fact::Counted(counted)).through(through)];
         }
         let replaces = self.loose_before(cup, &run);
+        let again = self.failed_before(cup, &run);
         let benches: Vec<&BenchName> = self.benches_of(cup).iter().collect();
         let (bench, specimen) = self.count_for(&benches);
         let bench = bench.or_else(|| self.only_bench(cup));
@@ -74,7 +75,8 @@ impl Lab {
             Ok(specimen) => (Some(specimen), None),
             Err(why) => (None, Some(why)),
         };
-        let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose };
+        let failed = specimen.as_ref().and_then(|_| again.or_else(|| self.failed_at(bench.as_ref(), &run)));
+        let counted = Counted { drops, bench, cup: cup_, run: Some(run), specimen, replaces, loose, failed };
         facts.push(New::by(who, Fact::Counted(counted)).through(through));
         facts
     }
@@ -88,6 +90,22 @@ impl Lab {
         let sliced = specimen.trials.iter().any(|t| t.counts.contains(&latest.seq));
         let same = latest.bench.is_some() && (began_with(latest, run) || !sliced);
         same.then_some((specimen, latest))
+    }
+
+    /// A run that a person said does not stand is told again: it still does not.
+    fn failed_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<RunFailed> {
+        let counts = self.specimens.values().flat_map(|s| &s.counts);
+        let same = |c: &&Count| c.cup.as_ref() == Some(cup) && c.run == Some((run.first_input, run.began));
+        let count = counts.filter(same).max_by_key(|c| c.seq)?;
+        let (fault, said) = (count.failed?, count.set_aside.as_ref()?);
+        Some(RunFailed { fault, by: said.by.clone(), why: said.why.clone() })
+    }
+
+    /// A person said of the run that goes on at a bench that it does not stand.
+    fn failed_at(&self, bench: Option<&BenchName>, run: &CountRun) -> Option<RunFailed> {
+        let failed = self.benches.get(bench?)?.failed.as_ref()?;
+        let began_before = run.began.since(&failed.at).us <= 0;
+        began_before.then(|| RunFailed { fault: failed.fault, by: failed.said.by.clone(), why: failed.said.why.clone() })
     }
 
     fn loose_before(&self, cup: &InstrumentName, run: &CountRun) -> Option<Seq> {
@@ -110,7 +128,7 @@ impl Lab {
         }
     }
 
-    fn liquid_at(&self, bench: &BenchName) -> Option<&SpecimenId> {
+    pub(super) fn liquid_at(&self, bench: &BenchName) -> Option<&SpecimenId> {
         let work = self.benches.get(bench)?.intention.as_ref()?;
         (work.intention == Intention::Liquid).then_some(&work.specimen)
     }

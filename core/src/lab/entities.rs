@@ -1,12 +1,12 @@
 //! What the laboratory's state is made of. Each entity is stored as one
 //! versioned document.
 
-use crate::fact::{Connection, Intention, TrialRef};
+use crate::fact::{ClosureFault, Connection, Intention, TrialRef};
 use crate::lab::role::Role;
 use crate::limits::Limits;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::Mass;
-use crate::sense::InputNo;
+use crate::sense::{InputNo, Trace};
 use crate::sheet::{Kind, Seq};
 use crate::stamp::{Basis, Stamp};
 use alloc::boxed::Box;
@@ -52,6 +52,35 @@ pub struct Weighing {
     /// The latest correction.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub corrected: Option<Said>,
+    /// What the balance showed around it, for checks; none when typed or printed on a key.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub seen: Option<Seen>,
+}
+
+/// What a balance showed around a mass taken.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Seen {
+    /// The empty pan before.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub zero: Option<Mass>,
+    /// How the load settled.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub trace: Option<Trace>,
+    /// Drift until it was lifted, where it was more than the balance's steps can hide.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub stay: Option<Drift>,
+    /// What lay on the pan afterwards that did not before (negative: something went with the load).
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub left: Option<Mass>,
+}
+
+/// A drift over some time.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Drift {
+    /// µg a second; rising: positive.
+    pub drift_ug_per_s: i64,
+    /// Over so long, ms.
+    pub watched_ms: u32,
 }
 
 /// A person's word: who, why, in which fact.
@@ -138,6 +167,9 @@ pub struct OvenClock {
     pub recorded: bool,
     /// Where nobody did: when the wet weighing was.
     pub wet_at: Stamp,
+    /// Oven temperature stated when it went in last, °C.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub celsius: Option<f64>,
 }
 
 /// A stay in the oven.
@@ -210,6 +242,9 @@ pub struct Specimen {
     pub reviewed: Option<(u32, Option<Operator>)>,
     /// The latest result.
     pub limits: Option<Limits>,
+    /// What is wanted of it; empty: liquid and plastic limit.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub wanted: Vec<Intention>,
 }
 
 /// A count run of a specimen, or a penetration of its cone.
@@ -252,6 +287,9 @@ pub struct Count {
     /// First line of the run, and when it began: tells a run that is told again.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub run: Option<(InputNo, Stamp)>,
+    /// Set aside because the groove did not close as it should.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub failed: Option<ClosureFault>,
 }
 
 /// One determination.
@@ -276,6 +314,20 @@ pub struct TrialRecord {
     pub dries: Vec<DryRecord>,
     /// Set aside by a person.
     pub set_aside: Option<Said>,
+    /// It was begun for another specimen and moved here.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub moved: Option<Moved>,
+}
+
+/// A determination that was begun for another specimen.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Moved {
+    /// For which.
+    pub from: SpecimenId,
+    /// Its number there.
+    pub no: u32,
+    /// Who moved it, and why.
+    pub said: Said,
 }
 
 /// One dry weighing with its oven time.
@@ -328,6 +380,20 @@ pub struct Bench {
     /// The latest code of a container read here, by its fact.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub code: Option<Seq>,
+    /// The run that goes on at the cup does not stand.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub failed: Option<FailedRun>,
+}
+
+/// A person said of a run that it does not stand, before it was over.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct FailedRun {
+    /// What happened.
+    pub fault: ClosureFault,
+    /// Who, and why.
+    pub said: Said,
+    /// When.
+    pub at: Stamp,
 }
 
 /// What a bench works on.
@@ -404,6 +470,12 @@ pub struct Loose {
     pub why: String,
     /// When.
     pub at: Stamp,
+    /// First and last line of its instrument that it rests on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub inputs: Option<[InputNo; 2]>,
+    /// A person said what it was; it stays loose and needs nobody any more.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub explained: Option<Said>,
 }
 
 /// What is loose.
@@ -497,6 +569,7 @@ impl Count {
             by,
             bench: None,
             run: None,
+            failed: None,
         }
     }
 }
@@ -514,6 +587,7 @@ impl Bench {
             refusal: None,
             active: Stamp::default(),
             code: None,
+            failed: None,
         }
     }
 }
@@ -557,6 +631,13 @@ impl Specimen {
     /// The number the next determination of this kind gets.
     pub fn next_no(&self, kind: Kind) -> u32 {
         self.trials.iter().filter(|t| t.kind == kind).map(|t| t.no).max().unwrap_or(0) + 1
+    }
+    /// Whether this is wanted of it.
+    pub fn wants(&self, what: Intention) -> bool {
+        match self.wanted.is_empty() {
+            true => what != Intention::Natural,
+            false => self.wanted.contains(&what),
+        }
     }
     /// Whether work is still to be done on it.
     pub fn open(&self) -> bool {

@@ -3,9 +3,9 @@
 use super::apply::Untied;
 use super::entities::{Bench, Container, Holding, Specimen, TrialRecord};
 use super::role::{Before, Held, Role, role};
-use super::{Lab, oven};
-use crate::fact::{Intention, Link, TrialRef};
-use crate::names::{BenchName, ContainerId, SpecimenId};
+use super::{Lab, Refusal, oven};
+use crate::fact::{Fact, Intention, Link, TrialRef, Weighed};
+use crate::names::{BenchName, ContainerId, Operator, SpecimenId};
 use crate::quantity::{LARGEST, Mass};
 use crate::sheet::{Kind, Seq};
 use crate::signal::Basis;
@@ -80,6 +80,32 @@ impl Lab {
             (role, _) => role,
         };
         self.link_as(state, role, gross, &wet_for)
+    }
+
+    /// An empty mass that a person typed from a register, as a weighing that was never on a balance.
+    pub(super) fn typed_tare(
+        &self,
+        container: &ContainerId,
+        tare: Mass,
+        who: Option<&Operator>,
+        at: &Stamp,
+    ) -> Result<Option<Fact>, Refusal> {
+        let unknown = Container::new(container.clone());
+        let state = self.containers.get(container).unwrap_or(&unknown);
+        if who.is_none() {
+            return Err(Refusal(String::from("say who read the empty mass from the register: results rest on it")));
+        }
+        if state.tare().is_some_and(|t| t.mass == tare) {
+            return Ok(None);
+        }
+        if state.holding.is_some() && state.tare().is_some() {
+            return Err(Refusal(format!("{container} holds soil: correct its empty weighing, or register it when it is empty")));
+        }
+        let held = self.held(state, at).map_err(Refusal)?;
+        may_be(state, Role::Tare, tare, held.as_ref()).map_err(Refusal)?;
+        let link = Some(self.link_as(state, Role::Tare, tare, &[]).map_err(Refusal)?);
+        let weighed = Weighed { mass_ug: tare, bench: None, or_at: vec![], balance: None, taken: None, link, loose: None };
+        Ok(Some(Fact::Weighed(weighed)))
     }
 
     fn link_as(&self, state: &Container, role: Role, gross: Mass, wet_for: &[WetFor]) -> Result<Link, String> {
@@ -162,14 +188,22 @@ impl Lab {
             format!("{} belongs to specimen {}, which could not be read from the ledger", container.id, holding.specimen)
         })?;
         let Some(wet) = trial.wets.last() else { return Ok(None) };
+        let finished = self.finished(holding, trial);
+        let oven = &holding.oven;
+        let again = trial.dries.last().is_some_and(|d| {
+            let since = |s: &Stamp| s.since(&d.weighing.at).us >= 0;
+            let by_record = oven.since.as_ref().is_some_and(since) || oven.stays.iter().any(|s| since(&s.from));
+            by_record || (!oven.recorded && at.since(&d.weighing.at).us >= OVERNIGHT_US)
+        });
         Ok(Some(Held {
             kind: trial.kind,
             wet: wet.mass,
             dry: trial.dries.last().map(|d| d.weighing.mass),
-            finished: self.finished(holding, trial),
+            finished,
             set_aside: trial.set_aside.is_some(),
             been_in_oven: holding.oven.recorded || at.since(&holding.oven.wet_at).us >= OVERNIGHT_US,
             oven_recorded: holding.oven.recorded,
+            dried_on: again && !finished,
         }))
     }
 
@@ -181,6 +215,16 @@ impl Lab {
     pub(super) fn finished(&self, holding: &Holding, trial: &TrialRecord) -> bool {
         let method = self.specimens.get(&holding.specimen).and_then(|s| self.setup.methods.get(&s.method));
         trial.set_aside.is_some() || method.is_some_and(|m| oven::dried_record(&m.drying, trial))
+    }
+}
+
+impl Lab {
+    /// Room in a specimen for a determination that is moved to it.
+    pub(super) fn room_for_moved(&self, to: &Specimen) -> Result<(), Refusal> {
+        match to.trials.len() >= TRIALS_OF_SPECIMEN {
+            true => Err(Refusal(format!("{} has {TRIALS_OF_SPECIMEN} determinations already: open another specimen", to.id))),
+            false => Ok(()),
+        }
     }
 }
 

@@ -10,21 +10,25 @@ pub mod entities;
 pub mod role;
 pub mod statistics;
 
+pub mod advice;
 mod apply;
 mod code;
 mod correct;
 mod count;
-mod guide;
+pub mod guide;
 mod link;
+pub mod loose;
+mod near;
 mod oven;
 mod result;
+pub mod shelf;
 mod weigh;
 
 use crate::fact::{Connection, Fact, Recorded};
 use crate::method::Method;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::Mass;
-use crate::sense::{CountRun, InputNo, MassTaken};
+use crate::sense::{CountRun, InputNo, LeftOnPan, MassTaken, Stayed};
 use crate::sheet::Seq;
 use crate::soil::uncertainty::Balance;
 use crate::stamp::{SECOND_US, Stamp};
@@ -37,8 +41,12 @@ use ask::Ask;
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 use statistics::Statistics;
 
+pub use advice::{Advice, Slope, Wish};
 pub use guide::Guide;
+pub use loose::LooseThing;
+pub use near::{meant, nearest};
 pub use oven::dried;
+pub use shelf::OnShelf;
 
 /// Loose things kept at hand; older ones stay in the ledger.
 const LOOSE_AT_HAND: usize = 1_000;
@@ -106,6 +114,22 @@ pub enum Input {
         balance: InstrumentName,
         /// The line that showed it.
         input: InputNo,
+    },
+    /// How a mass drifted until it was lifted.
+    PanWatched {
+        /// Which balance.
+        balance: InstrumentName,
+        /// What was seen.
+        stayed: Stayed,
+        /// The line that showed the empty pan.
+        input: InputNo,
+    },
+    /// The empty pan shows something else than before the mass.
+    LeftOnPan {
+        /// Which balance.
+        balance: InstrumentName,
+        /// What was seen.
+        left: LeftOnPan,
     },
     /// A count run ended.
     Count {
@@ -217,6 +241,8 @@ pub struct Lab {
     instruments: BTreeMap<InstrumentName, Instrument>,
     loose: BTreeMap<Seq, Loose>,
     statistics: Statistics,
+    /// Counters whose run goes on, and since when. Heard, not decided: it is in no document.
+    running: BTreeMap<InstrumentName, Stamp>,
 }
 
 impl Lab {
@@ -232,7 +258,14 @@ impl Lab {
             instruments,
             loose: BTreeMap::new(),
             statistics: Statistics::default(),
+            running: BTreeMap::new(),
         }
+    }
+
+    /// Tells which counters are in a run, and since when; said before an ask or a code is taken, since a card
+    /// that gives a run up may be read before its pause is over.
+    pub fn counting(&mut self, runs: impl IntoIterator<Item = (InstrumentName, Stamp)>) {
+        self.running = runs.into_iter().collect();
     }
 
     /// Takes an input: decides, applies, follows up. Nothing has changed when it is refused.
@@ -246,11 +279,27 @@ impl Lab {
         Ok(outcome)
     }
 
+    /// Which of these asks would be refused if they were made one after the other; nothing changes.
+    pub fn would_refuse(&self, asks: &[Ask], at: &Stamp, next_seq: Seq) -> Vec<(usize, Refusal)> {
+        let mut trial = self.clone();
+        let mut next = next_seq;
+        let mut refused = Vec::new();
+        for (n, ask) in asks.iter().enumerate() {
+            match trial.take(Input::Ask(ask.clone()), *at, next) {
+                Ok(outcome) => next = next.saturating_add(outcome.facts.len() as Seq),
+                Err(refusal) => refused.push((n, refusal)),
+            }
+        }
+        refused
+    }
+
     /// What an input means, as facts.
     fn decide(&self, input: Input, at: &Stamp) -> Result<Vec<New>, Refusal> {
         Ok(match input {
             Input::Mass { balance, taken } => self.mass_taken(&balance, taken),
             Input::Unloaded { balance, input } => self.unloaded(&balance, input),
+            Input::PanWatched { balance, stayed, input } => self.pan_watched(balance, &stayed, input),
+            Input::LeftOnPan { balance, left } => self.left_on_pan(balance, &left),
             Input::Count { cup, run } => self.count_ended(&cup, run),
             Input::Code { scanner, text, input } => self.code_read(&scanner, &text, at, input),
             Input::CodeUnread { scanner, input } => self.code_unread(&scanner, input),

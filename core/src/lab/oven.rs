@@ -1,11 +1,18 @@
 //! Time in the oven, and when a container counts as dry.
 
-use super::Lab;
+use super::ask::{Ask, needs_words, no};
 use super::entities::{Container, DryRecord, Holding, OvenClock, Standing, Stay, TrialRecord};
+use super::{Lab, New, Refusal};
+use crate::fact::Fact;
 use crate::method::Drying;
+use crate::names::ContainerId;
 use crate::quantity::Mass;
 use crate::sheet::{DryWeighing, Seq};
-use crate::stamp::{Basis, HOUR_US, Stamp};
+use crate::stamp::{Basis, HOUR_US, Stamp, parse_rfc3339};
+use alloc::collections::BTreeSet;
+use alloc::format;
+use alloc::string::String;
+use alloc::vec;
 use alloc::vec::Vec;
 
 /// Stays and times off that a container keeps; asks beyond are refused.
@@ -14,7 +21,7 @@ pub(super) const STAYS_KEPT: usize = 200;
 impl OvenClock {
     /// Starts with the wet weighing; a record of the oven makes it true.
     pub(super) fn new(wet_at: Stamp) -> Self {
-        Self { since: None, stays: Vec::new(), off: Vec::new(), recorded: false, wet_at }
+        Self { since: None, stays: Vec::new(), off: Vec::new(), recorded: false, wet_at, celsius: None }
     }
 
     /// Time in the oven up to a moment, µs, and the clock it rests on.
@@ -103,7 +110,12 @@ impl OvenClock {
     }
 }
 
-fn hours(us: i64) -> f64 {
+/// When the latest stay in the oven began.
+pub(super) fn last_stay(oven: &OvenClock) -> Option<Stamp> {
+    oven.stays.last().map(|s| s.from)
+}
+
+pub(super) fn hours(us: i64) -> f64 {
     us.max(0) as f64 / HOUR_US as f64
 }
 
@@ -176,6 +188,105 @@ impl Lab {
     }
 }
 
+/// Most containers in one ask.
+const AT_ONCE: usize = 500;
+
+impl Lab {
+    pub(super) fn ask_oven(&self, ask: Ask, at: &Stamp) -> Result<Vec<New>, Refusal> {
+        match ask {
+            Ask::IntoOven { containers, celsius, who } => {
+                let containers = once_each(containers);
+                self.all_hold(&containers)?;
+                if celsius.is_some_and(|c| !(20.0..=300.0).contains(&c)) {
+                    return Err(no(String::from("an oven temperature lies between 20 and 300 °C")));
+                }
+                self.none_in(&containers)?;
+                Ok(vec![New::by(who, Fact::IntoOven { containers, celsius })])
+            }
+            Ask::OutOfOven { containers, who } => {
+                let containers = once_each(containers);
+                self.all_hold(&containers)?;
+                self.none_out(&containers)?;
+                Ok(vec![New::by(who, Fact::OutOfOven { containers })])
+            }
+            Ask::OvenOff { from, to, who, why } => {
+                let time = |t: &str| {
+                    parse_rfc3339(t).ok_or_else(|| no(format!("\"{t}\" is not a time; write it like 2026-03-02T08:14:05Z")))
+                };
+                needs_words(&why)?;
+                let from_utc_us = time(&from)?;
+                let to_utc_us = to.as_deref().map(time).transpose()?.unwrap_or(at.utc_us);
+                if from_utc_us >= to_utc_us || to_utc_us > at.utc_us {
+                    return Err(no(String::from("the oven was off from a time to a later one, both past")));
+                }
+                self.room_in_oven(&self.wet_before(to_utc_us))?;
+                Ok(vec![New::by(Some(who), Fact::OvenOff { from_utc_us, to_utc_us, why })])
+            }
+            _ => Ok(vec![]),
+        }
+    }
+
+    /// A container goes in once: asked again, its clock would seem to begin anew.
+    fn none_in(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        let since = |id: &&ContainerId| self.containers.get(*id).and_then(|c| c.holding.as_ref()).and_then(|h| h.oven.since);
+        let inside: Vec<String> =
+            containers.iter().filter_map(|id| since(&id).map(|s| format!("{id} since {}", s.rfc3339()))).collect();
+        match inside.is_empty() {
+            true => Ok(()),
+            false => {
+                Err(no(format!("in the oven already: {}; leave them out, or take them out of the oven first", inside.join(", "))))
+            }
+        }
+    }
+
+    /// Said twice that it came out: the second time may mean another container. One that was
+    /// weighed dry since is out by that, and saying so changes nothing.
+    fn none_out(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        let out = |id: &&ContainerId| {
+            let oven = self.containers.get(*id).and_then(|c| c.holding.as_ref()).map(|h| &h.oven);
+            oven.is_some_and(|o| o.since.is_none() && o.stays.last().is_some_and(|s| s.ended_by.is_none()))
+        };
+        let out: Vec<&str> = containers.iter().filter(out).map(ContainerId::as_str).collect();
+        match out.is_empty() {
+            true => Ok(()),
+            false => Err(no(format!("out of the oven already: {}; leave them out, or read the code again", out.join(", ")))),
+        }
+    }
+
+    fn all_hold(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        if containers.is_empty() {
+            return Err(no(String::from("name the containers")));
+        }
+        if containers.len() > AT_ONCE {
+            return Err(no(format!("at most {AT_ONCE} containers go in or out at once")));
+        }
+        self.room_in_oven(containers)?;
+        match containers.iter().find(|c| self.containers.get(*c).is_none_or(|c| c.holding.is_none())) {
+            Some(empty) => {
+                let hint = self.container_meant(empty);
+                Err(no(format!("{empty} holds nothing that was weighed wet{hint}; weigh it first, or leave it out")))
+            }
+            None => Ok(()),
+        }
+    }
+
+    fn room_in_oven(&self, containers: &[ContainerId]) -> Result<(), Refusal> {
+        let holding = |id: &&ContainerId| self.containers.get(*id).and_then(|c| c.holding.as_ref());
+        let full = |id: &&ContainerId| holding(id).is_some_and(|h| h.oven.stays.len().max(h.oven.off.len()) >= STAYS_KEPT);
+        match containers.iter().find(full) {
+            Some(id) => {
+                Err(no(format!("{id} has been in and out of the oven {STAYS_KEPT} times: weigh it dry, or leave it out")))
+            }
+            None => Ok(()),
+        }
+    }
+}
+
+fn once_each(containers: Vec<ContainerId>) -> Vec<ContainerId> {
+    let mut seen = BTreeSet::new();
+    containers.into_iter().filter(|c| seen.insert(c.clone())).collect()
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -196,6 +307,7 @@ mod tests {
             typed: false,
             step: None,
             corrected: None,
+            seen: None,
         };
         DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }
     }

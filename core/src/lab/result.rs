@@ -28,7 +28,9 @@ impl Lab {
     fn new_result(&self, specimen: &Specimen, causes: &[String]) -> Option<Fact> {
         let method = self.setup.methods.get(&specimen.method)?;
         let sheet = sheet(specimen);
-        if sheet.trials.is_empty() && sheet.liquid_not_obtainable.is_none() && sheet.plastic_not_obtainable.is_none() {
+        let stated = sheet.liquid_not_obtainable.is_some() || sheet.plastic_not_obtainable.is_some();
+        // Once there was a result, the specimen must not keep it when its determinations go.
+        if sheet.trials.is_empty() && !stated && specimen.limits.is_none() {
             return None;
         }
         let mut limits = evaluate_with(&sheet, method, &self.record_without(specimen, method));
@@ -131,7 +133,10 @@ fn cause(r: &Recorded) -> Option<String> {
         Fact::PenetrationAmended { penetration, was_mm, penetration_mm, why } => {
             format!("penetration {penetration} corrected, {was_mm} → {penetration_mm} mm: {why}")
         }
-        Fact::SetAside { what, why } => format!("fact {what} set aside: {why}"),
+        Fact::SetAside { what, why, .. } => format!("fact {what} set aside: {why}"),
+        Fact::TrialMoved { specimen, trial, no, to, to_no, why } => {
+            format!("{} of {specimen} moved to {to} as {}: {why}", about(*trial, *no), about(*trial, *to_no))
+        }
         Fact::TrialSetAside { trial, no, why, .. } => format!("{} set aside: {why}", about(*trial, *no)),
         Fact::WeighingTied { weighing, link, why, .. } => format!("weighing {weighing} tied to {}: {why}", link.container),
         Fact::CountTied { count, why, .. } => format!("count {count} tied: {why}"),
@@ -168,6 +173,7 @@ pub fn sheet(specimen: &Specimen) -> Sheet {
         liquid_limit_oven_dried: specimen.liquid_limit_oven_dried,
         answers: specimen.answers.iter().map(answer).collect(),
         reviewed: false,
+        wanted: specimen.wanted.clone(),
     }
 }
 

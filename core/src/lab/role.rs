@@ -60,6 +60,8 @@ pub struct Held {
     pub been_in_oven: bool,
     /// Somebody recorded the oven.
     pub oven_recorded: bool,
+    /// Weighed dry before the method's time, and in the oven again since.
+    pub dried_on: bool,
 }
 
 /// Decides the role of a gross mass, or says why a person has to.
@@ -155,6 +157,10 @@ fn dried_role(held: &Held, dry: Mass, tare: Option<Mass>, before: &Before, mass:
     // little moisture from the air. Both are small against what it has lost.
     let little = Mass::from_ug((held.wet - dry).ug().max(0) / 4);
     let a_little_off = (mass - dry).abs() <= little && tare.is_none_or(|t| mass > t + near);
+    // Weighed too early, it loses as much as it still held.
+    if held.dried_on && mass < dry && tare.is_none_or(|t| mass > t + near) {
+        return Ok(Role::FurtherDry);
+    }
     if a_little_off && mass < dry {
         return match held.finished && before.wet_open {
             true => Err(format!(
@@ -218,6 +224,7 @@ mod tests {
             set_aside: false,
             been_in_oven: false,
             oven_recorded: false,
+            dried_on: false,
         };
         Before { tare: tare.map(g), lid: None, held: Some(held), wet_open: false }
     }
@@ -309,6 +316,16 @@ mod tests {
         for mass in [33.30, 33.50, 34.50] {
             assert!(role(&before, g(mass), NEAR).is_err(), "{mass}");
         }
+    }
+
+    #[test]
+    fn soil_weighed_too_early_may_lose_much_once_it_was_back_in_the_oven() {
+        let mut before = held(Some(21.43), 38.22, Some(37.90), Kind::Liquid);
+        before.held.as_mut().unwrap().finished = false;
+        assert!(role(&before, g(33.39), NEAR).is_err(), "it was not back in the oven: another container?");
+        before.held.as_mut().unwrap().dried_on = true;
+        assert_eq!(role(&before, g(33.39), NEAR), Ok(Role::FurtherDry));
+        assert!(role(&before, g(21.44), NEAR).is_err() && role(&before, g(20.00), NEAR).is_err());
     }
 
     #[test]

@@ -1,15 +1,19 @@
 //! A mass was taken: whose is it?
 
-use super::entities::Hand;
+use super::entities::{Hand, LooseWhat, Specimen, Weighing};
 use super::{Lab, New};
 use crate::fact::{Fact, Link, Weighed};
 use crate::names::{BenchName, InstrumentName};
-use crate::sense::{InputNo, MassTaken};
+use crate::sense::{InputNo, LeftOnPan, MassTaken, Stayed};
 use crate::sheet::Seq;
+use crate::stamp::Stamp;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
+
+/// A drift over less time tells nothing (common practice, no source).
+const WATCHED_MS: u32 = 3_000;
 
 /// A container in hand whose mass a balance may take.
 struct Reach<'a> {
@@ -81,6 +85,35 @@ impl Lab {
             facts.push(New::plain(Fact::PanCleared { balance: balance.clone() }).through(input));
         }
         facts
+    }
+
+    /// A drift is told when it was watched for a while and is more than two steps of the
+    /// balance: less can be the display alone.
+    pub(super) fn pan_watched(&self, balance: InstrumentName, stayed: &Stayed, input: InputNo) -> Vec<New> {
+        let Stayed { taken_at, step, watched_ms, drift_ug_per_s, .. } = *stayed;
+        let change = drift_ug_per_s.unsigned_abs().saturating_mul(u64::from(watched_ms)) / 1_000;
+        let told = watched_ms >= WATCHED_MS && change >= step.ug().unsigned_abs().saturating_mul(2).max(1);
+        let weighing = self.taken_at(&balance, &taken_at).filter(|_| told);
+        let fact = |weighing| Fact::PanWatched { balance, weighing, drift_ug_per_s, watched_ms };
+        weighing.map(|w| New::plain(fact(w)).through(input)).into_iter().collect()
+    }
+
+    pub(super) fn left_on_pan(&self, balance: InstrumentName, seen: &LeftOnPan) -> Vec<New> {
+        let weighing = self.taken_at(&balance, &seen.taken_at);
+        let fact = |weighing| Fact::LeftOnPan { balance, weighing, left: seen.left };
+        weighing.map(|w| New::plain(fact(w)).through(seen.zero.input)).into_iter().collect()
+    }
+
+    /// The weighing that a balance took at a moment, wherever it stands.
+    fn taken_at(&self, balance: &InstrumentName, at: &Stamp) -> Option<Seq> {
+        let here = |w: &&Weighing| w.at == *at && w.balance.as_ref() == Some(balance);
+        let loose = self.loose.values().rev().filter_map(|l| match &l.what {
+            LooseWhat::Weighing { weighing, .. } => Some(weighing),
+            LooseWhat::Count(_) => None,
+        });
+        let of_containers = self.containers.values().flat_map(|c| c.tares.iter().chain(&c.with_lid));
+        let of_trials = self.specimens.values().flat_map(Specimen::weighings);
+        loose.chain(of_containers).chain(of_trials).find(here).map(|w| w.seq)
     }
 
     /// The weighing of which this slip is a second print.

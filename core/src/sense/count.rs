@@ -277,6 +277,11 @@ impl Count {
         }
     }
 
+    /// When the run under way began.
+    pub fn began(&self) -> Option<Stamp> {
+        self.run.as_ref().map(|run| run.began)
+    }
+
     /// When the run under way will be over if no drop comes.
     pub fn deadline(&self) -> Option<Stamp> {
         self.run.as_ref().map(|run| later(&run.alive, ms(self.limits.pause_ms)))

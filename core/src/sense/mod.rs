@@ -85,7 +85,11 @@ pub enum Happening {
         input: InputNo,
         /// When.
         at: Stamp,
+        /// What the balance showed while the mass taken lay on it, when it was watched long enough.
+        stayed: Option<Stayed>,
     },
+    /// The empty pan shows something else than before the mass was put on it.
+    LeftOnPan(LeftOnPan),
     /// A drop fell in a run that goes on (for live display; never a fact).
     Drops {
         /// Drops so far.
@@ -121,6 +125,51 @@ pub struct MassTaken {
     /// What the empty pan showed before loading, if it was seen, and on which line.
     pub zero: Option<Zero>,
     /// When the line was heard.
+    pub at: Stamp,
+    /// How the load settled; none with a print key.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub trace: Option<Trace>,
+}
+
+/// How a load settled before its mass was taken. A container that is still warm
+/// reads low and rises while it cools; wet soil that loses water falls.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Trace {
+    /// From the first loaded line of the placement to the line taken, ms.
+    pub settling_ms: u32,
+    /// From the first of the agreeing lines to the line taken, ms.
+    pub watched_ms: u32,
+    /// Change over these lines, µg a second, from the first and the last of them. One
+    /// printed step within the time watched is the least that can show.
+    pub drift_ug_per_s: i64,
+}
+
+/// What the balance showed from the mass taken until it was lifted, by a line
+/// fitted to all agreeing readings in between.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Stayed {
+    /// When the mass was taken: tells which weighing it was.
+    pub taken_at: Stamp,
+    /// One printed step of the balance.
+    pub step: Mass,
+    /// Readings that it rests on.
+    pub readings: u32,
+    /// From the mass taken to the last of these readings, ms.
+    pub watched_ms: u32,
+    /// Slope of the line, µg a second.
+    pub drift_ug_per_s: i64,
+}
+
+/// What lay on the pan after a mass was lifted, against what lay there before.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct LeftOnPan {
+    /// When the mass was taken: tells which weighing it was.
+    pub taken_at: Stamp,
+    /// What the empty pan shows now, less what it showed before.
+    pub left: Mass,
+    /// What it shows now, and on which line.
+    pub zero: Zero,
+    /// When.
     pub at: Stamp,
 }
 

@@ -86,7 +86,7 @@ fn ask_text(words: &[String]) -> Result<String, String> {
 }
 
 fn member_value(name: &str, value: &str) -> Result<Value, String> {
-    if name == "containers" {
+    if name == "containers" || name == "wanted" {
         return Ok(Value::Array(value.split(',').map(|c| Value::String(c.trim().into())).collect()));
     }
     if NUMBERS.contains(&name) && !(name == "limit" && value.parse::<f64>().is_err()) {

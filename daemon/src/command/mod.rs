@@ -19,6 +19,7 @@ mod check;
 mod demo;
 mod drill;
 mod files;
+mod import;
 mod ports;
 mod run;
 mod status;
@@ -80,6 +81,8 @@ enum Verb {
     Validate(validate::ValidateArgs),
     /// Ask the running service for something.
     Ask(ask::AskArgs),
+    /// Take a register of containers, or the day's specimens, from a table with commas.
+    Import(import::ImportArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
     /// Drill: what does this set-up catch? Simulated laboratories make mistakes at a known rate.
@@ -119,6 +122,7 @@ pub fn main() -> ExitCode {
         Verb::Work(args) => work::run(&args),
         Verb::Validate(args) => validate::run(&args),
         Verb::Ask(args) => ask::run(&args),
+        Verb::Import(args) => import::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
         Verb::Verify(args) => verify::run(&args),

@@ -45,7 +45,7 @@ pub fn line(r: &Recorded) -> Option<String> {
             }
         }
         Fact::WeighingTied { link, why, .. } => format!("         {}  (tied: {why})", linked(link)),
-        Fact::SetAside { what, why } => format!("         fact {what} set aside: {why}"),
+        Fact::SetAside { what, why, .. } => format!("         fact {what} set aside: {why}"),
         Fact::TrialSetAside { specimen, trial, no, why } => {
             format!("         {specimen} {} {no} set aside: {why}", format!("{trial:?}").to_lowercase())
         }
@@ -91,6 +91,9 @@ fn short(l: &Limits) -> String {
     let number = |v: Option<f64>| v.map_or_else(|| String::from("-"), |v| format!("{v:.2}"));
     if l.plasticity_index.non_plastic {
         return String::from("NP (non-plastic)");
+    }
+    if let (None, None, Some(water)) = (&l.liquid_limit, &l.plastic_limit, l.natural_water_percent) {
+        return format!("natural water content {water:.2} %");
     }
     format!(
         "LL {}  PL {}  PI {}  {}",
@@ -139,6 +142,11 @@ pub fn table(results: &[Limits]) -> String {
             l.group.as_deref().unwrap_or("-"),
             format!("{:?}", l.state).to_lowercase(),
         );
+    }
+    for l in results.iter() {
+        if let Some(water) = l.natural_water_percent {
+            out += &format!("{:<14} natural water content {water:.2}\n", l.specimen.as_str());
+        }
     }
     out += "water contents in percent of dry mass; as reported in brackets\n";
     for l in results {

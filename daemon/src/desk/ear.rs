@@ -7,7 +7,7 @@ use serde::{Deserialize, Serialize};
 use std::collections::BTreeMap;
 use tarecup_core::fact::Connection;
 use tarecup_core::sense::count::Count;
-use tarecup_core::sense::settle::Settle;
+use tarecup_core::sense::settle::{Before, Settle};
 use tarecup_core::sense::{CountRun, Happening, MassTaken};
 use tarecup_core::signal::{Reading, Signal};
 use tarecup_core::stamp::{SECOND_US, Stamp};
@@ -29,6 +29,9 @@ pub struct SenseState {
     pub taken: Option<MassTaken>,
     /// The last count run.
     pub run: Option<CountRun>,
+    /// What the pan showed before the load that was lifted last.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub before: Option<Before>,
 }
 
 enum Sense {
@@ -72,7 +75,7 @@ impl Ear {
     /// The ear of an instrument whose sense stood at `state`.
     pub fn new(setup: &InstrumentSetup, state: SenseState) -> Self {
         let sense = match setup.kind {
-            Kind::Balance => Sense::Balance(Box::new(Settle::resume(setup.settle, state.taken))),
+            Kind::Balance => Sense::Balance(Box::new(Settle::resume(setup.settle, state.taken).lifted(state.before))),
             Kind::Counter => Sense::Counter(Box::new(Count::resume(setup.count, state.run.as_ref()))),
             Kind::Scanner => Sense::Scanner,
         };
@@ -196,6 +199,14 @@ impl Ear {
         self.published = (self.understood, self.last_heard);
     }
 
+    /// Since when a run of its cup goes on.
+    pub fn running(&self) -> Option<Stamp> {
+        match &self.sense {
+            Sense::Counter(count) => count.began(),
+            _ => None,
+        }
+    }
+
     /// Lets time pass for the sense.
     pub fn tick(&mut self, now: &Stamp) -> Option<Happening> {
         match &mut self.sense {
@@ -227,12 +238,15 @@ impl Ear {
 
     /// A mass was taken: this is where the sense stands.
     pub fn remember_taken(&mut self, taken: MassTaken) {
-        (self.state.through, self.state.taken) = (taken.input, Some(taken));
+        (self.state.through, self.state.taken, self.state.before) = (taken.input, Some(taken), None);
     }
 
     /// The pan is empty again, and a fact says so.
     pub fn remember_unloaded(&mut self, input: u64) {
         (self.state.through, self.state.taken) = (input, None);
+        if let Sense::Balance(settle) = &self.sense {
+            self.state.before = settle.before();
+        }
     }
 
     /// A run ended: this is where the sense stands.

@@ -332,8 +332,10 @@ impl Desk {
     /// Brings back what an ask names.
     pub(super) fn fetch_named(&mut self, body: &str) {
         let Ok(Value::Object(ask)) = serde_json::from_str::<Value>(body) else { return };
-        if let Some(id) = ask.get("specimen").and_then(Value::as_str).and_then(|s| SpecimenId::new(s).ok()) {
-            self.fetch_specimen(&id);
+        for member in ["specimen", "to"] {
+            if let Some(id) = ask.get(member).and_then(Value::as_str).and_then(|s| SpecimenId::new(s).ok()) {
+                self.fetch_specimen(&id);
+            }
         }
         if let Some(text) = ask.get("text").and_then(Value::as_str) {
             self.fetch_code(text);
@@ -369,7 +371,20 @@ impl Desk {
             Ok(Fact::CountTied { specimen, .. } | Fact::PenetrationEntered { specimen, .. }) => Some(specimen),
             _ => None,
         };
-        ties.iter().filter_map(specimen).collect()
+        let mut all: Vec<SpecimenId> = ties.iter().filter_map(specimen).collect();
+        // A determination may have been moved since, and moved on from there.
+        let mut n = 0;
+        while let Some(from) = all.get(n).cloned() {
+            let moves = self.reader.moves_from(from.as_str()).unwrap_or_default();
+            let to = moves.iter().filter_map(|stored| match serde_json::from_slice::<Fact>(&stored.body) {
+                Ok(Fact::TrialMoved { to, .. }) => Some(to),
+                _ => None,
+            });
+            let new: Vec<SpecimenId> = to.filter(|id| !all.contains(id)).collect();
+            all.extend(new);
+            n += 1;
+        }
+        all
     }
 
     /// Brings back the specimens that a weighing or count belongs to.

@@ -22,7 +22,7 @@ pub use group::{Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
 pub(crate) use views::STATISTICS;
-pub use views::limits as limits_payload;
+pub use views::{limits as limits_payload, loose as loose_payload, shelf as shelf_payload};
 
 use crate::asks;
 use crate::ledger::{Ledger, LedgerError, Reader};
@@ -176,6 +176,10 @@ impl Desk {
                     if self.group.has_facts() {
                         self.commit(effects);
                     }
+                    if let asks::Read::Would(asks) = &read {
+                        let bodies: Vec<String> = asks.iter().filter_map(|a| serde_json::to_string(a).ok()).collect();
+                        bodies.iter().for_each(|body| self.fetch_named(body));
+                    }
                     let answer = self.read(&read, now);
                     effects.replies.push((reply, answer));
                 }
@@ -281,11 +285,22 @@ impl Desk {
                 self.group.senses.insert(index);
                 self.decide(Input::Mass { balance: name, taken }, taken.at);
             }
-            Happening::Unloaded { input, at } => {
+            Happening::Unloaded { input, at, stayed } => {
                 let before = self.group.facts.len();
+                if let Some(stayed) = stayed {
+                    self.decide(Input::PanWatched { balance: name.clone(), stayed, input }, at);
+                }
                 self.decide(Input::Unloaded { balance: name.clone(), input }, at);
                 if self.group.facts.len() > before {
                     self.ears[index].remember_unloaded(input);
+                    self.group.senses.insert(index);
+                }
+            }
+            Happening::LeftOnPan(left) => {
+                let before = self.group.facts.len();
+                self.decide(Input::LeftOnPan { balance: name, left }, left.at);
+                if self.group.facts.len() > before {
+                    self.ears[index].remember_unloaded(left.zero.input);
                     self.group.senses.insert(index);
                 }
             }
@@ -396,6 +411,11 @@ impl Desk {
     fn try_decide(&mut self, input: Input, at: Stamp) -> Result<(), tarecup_core::lab::Refusal> {
         for id in self.lab.wants(&input) {
             self.fetch_specimen(&id);
+        }
+        if matches!(input, Input::Ask(_) | Input::Code { .. }) {
+            let runs = self.ears.iter().zip(&self.setup.instruments);
+            let runs = runs.filter_map(|(ear, i)| ear.running().map(|since| (i.name.clone(), since)));
+            self.lab.counting(runs.collect::<Vec<_>>());
         }
         let Outcome { facts, touched } = self.lab.take(input, at, self.next_seq)?;
         self.next_seq += facts.len() as u64;

@@ -6,9 +6,9 @@ use crate::asks::{Read, refusal};
 use crate::keys::hex;
 use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
-use tarecup_core::lab::Lab;
 use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
 use tarecup_core::lab::statistics::Sums;
+use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish, meant};
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
 use tarecup_core::quantity::Mass;
@@ -39,7 +39,7 @@ fn grams(mass: Mass) -> Value {
 /// A bench: who, in hand, intention, slice owed, what comes next.
 pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
     let guide = lab.guide(&bench.name);
-    let loose = lab.loose_things().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
+    let loose = lab.loose_open().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
     json!({
         "v": V, "seq": seq, "at": (bench.active != Stamp::default()).then(|| bench.active.rfc3339()), "bench": bench.name,
         "signed_in": bench.signed_in,
@@ -54,7 +54,36 @@ pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "loose": loose,
         "next": guide.as_ref().map(|g| g.next.as_str()),
         "urgent": guide.as_ref().is_some_and(|g| g.urgent),
+        "caution": guide.as_ref().and_then(|g| g.caution).map(|c| c.says),
+        "action": guide.as_ref().and_then(|g| g.action.clone()),
+        "advice": lab.advice(&bench.name, &Wish::default()).map_or(Vec::new(), |a| a.says),
+        "next_since": guide.as_ref().and_then(|g| g.since).map(|s| s.rfc3339()),
     })
+}
+
+/// What is drying, and what comes next for it.
+pub fn shelf(lab: &Lab, now: &Stamp) -> Vec<Value> {
+    let one = |s: &OnShelf| {
+        json!({
+            "container": s.container, "specimen": s.specimen, "trial": s.trial.kind, "no": s.trial.no, "standing": s.standing,
+            "wet_g": s.wet.map(grams), "dry_g": s.dry.map(grams), "since": s.since.rfc3339(), "recorded": s.recorded,
+            "celsius": s.celsius, "hours": s.hours, "hours_since_dry": s.hours_since_dry, "hours_wanted": s.hours_wanted,
+            "ready": s.ready, "ready_in_hours": s.ready_in_hours, "overdue": s.overdue, "set_aside": s.set_aside, "wrong_heat": s.wrong_heat, "next": s.next,
+        })
+    };
+    lab.shelf(now).iter().map(one).collect()
+}
+
+/// Loose weighings and counts.
+pub fn loose(lab: &Lab) -> Vec<Value> {
+    let one = |l: LooseThing| {
+        json!({
+            "seq": l.seq, "bench": l.bench, "instrument": l.instrument, "mass_g": l.mass.map(grams), "drops": l.drops,
+            "why": l.why, "explained": l.explained, "at": l.at.rfc3339(),
+            "first_input": l.inputs.map(|i| i[0]), "input": l.inputs.map(|i| i[1]),
+        })
+    };
+    lab.loose_list().map(one).collect()
 }
 
 /// A container: where it stands.
@@ -180,12 +209,21 @@ impl Desk {
             Read::Latest(bench) => self.read_latest(bench),
             Read::Document { kind, id } => self.read_document(kind, id),
             Read::FactsAfter { seq, limit } => self.read_facts(*seq, *limit),
+            Read::Advice { bench, specimen, wish } => self.read_advice(bench.as_ref(), specimen.as_ref(), wish),
+            Read::Would(asks) => {
+                let refused = self.lab.would_refuse(asks, now, self.next_seq);
+                let refused: Vec<Value> = refused.iter().map(|(n, r)| json!({"n": n, "says": r.0})).collect();
+                json!({"ok": true, "refused": refused}).to_string()
+            }
+            Read::Shelf => json!({"ok": true, "shelf": shelf(&self.lab, now)}).to_string(),
+            Read::Loose => json!({"ok": true, "loose": loose(&self.lab)}).to_string(),
         }
     }
 
     fn read_latest(&self, bench: &str) -> String {
         let Some(bench) = BenchName::new(bench).ok().and_then(|b| self.lab.bench(&b)) else {
-            return refusal(&format!("there is no bench {bench}"));
+            let hint = meant(bench, self.lab.benches().map(|b| b.name.as_str()));
+            return refusal(&format!("there is no bench {bench}{hint}"));
         };
         let latest = bench.latest.as_ref().map(|l| {
             json!({
@@ -197,13 +235,43 @@ impl Desk {
         json!({"ok": true, "latest": latest, "next": guide.map(|g| g.next)}).to_string()
     }
 
+    fn read_advice(&self, bench: Option<&BenchName>, specimen: Option<&SpecimenId>, wish: &Wish) -> String {
+        let (advice, about) = match (bench, specimen) {
+            (_, Some(id)) => {
+                let hint = meant(id.as_str(), self.lab.specimens().map(|s| s.id.as_str()).filter(|s| *s != id.as_str()));
+                (self.lab.advice_for(id, wish), format!("there is no specimen {id}{hint}, or it is finished"))
+            }
+            (Some(name), None) if self.lab.bench(name).is_none() => {
+                let hint = meant(name.as_str(), self.lab.benches().map(|b| b.name.as_str()));
+                (None, format!("there is no bench {name}{hint}"))
+            }
+            (Some(name), None) => {
+                (self.lab.advice(name, wish), format!("no limit is in work at bench {name}: name the specimen"))
+            }
+            (None, None) => (None, String::from("name a bench or a specimen")),
+        };
+        match advice {
+            Some(advice) => json!({"ok": true, "advice": advice}).to_string(),
+            None => refusal(&about),
+        }
+    }
+
     fn read_document(&self, kind: &str, id: &str) -> String {
         if !["specimen", "container", "bench", "instrument", "loose", "statistics"].contains(&kind) {
             return refusal("a document is of the kind specimen, container, bench, instrument, loose or statistics");
         }
         match self.reader.document(kind, id) {
             Err(e) => refusal(&e.to_string()),
-            Ok(None) => refusal(&format!("there is no {kind} {id}")),
+            Ok(None) => {
+                let hint = match kind {
+                    "specimen" => meant(id, self.lab.specimens().map(|s| s.id.as_str())),
+                    "container" => meant(id, self.lab.containers().map(|c| c.id.as_str())),
+                    "bench" => meant(id, self.lab.benches().map(|b| b.name.as_str())),
+                    "instrument" => meant(id, self.lab.instruments().map(|i| i.name.as_str())),
+                    _ => String::new(),
+                };
+                refusal(&format!("there is no {kind} {id}{hint}"))
+            }
             Ok(Some(stored)) => {
                 let document: Value = serde_json::from_slice(&stored.body).unwrap_or_default();
                 json!({"ok": true, "kind": kind, "id": id, "seq": stored.seq, "document": document}).to_string()
@@ -230,7 +298,7 @@ impl Desk {
             "v": V, "at": now.rfc3339(), "program": env!("CARGO_PKG_VERSION"), "station": self.setup.station,
             "not_recording": self.not_recording, "ledger": tail.id.to_string(), "epoch": tail.epoch, "seq": tail.last_seq,
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
-            "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
+            "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_open().count(),
             "backup": crate::backup::Note::read(std::path::Path::new(&self.setup.state_dir)).view(),
             "instruments": instruments, "benches": benches, "own_scatter": own_scatter(&self.lab),
         })

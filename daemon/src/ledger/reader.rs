@@ -226,6 +226,15 @@ impl Reader {
         self.list(&sql, (signed(seq),), fact)
     }
 
+    /// Facts that moved a determination away from a specimen.
+    pub fn moves_from(&self, specimen: &str) -> Result<Vec<FactStored>, LedgerError> {
+        let sql = format!(
+            "SELECT {RAW_FACT} FROM fact WHERE kind = 'trial_moved'
+             AND CAST(body AS TEXT) ->> '$.fact.specimen' = ?1 ORDER BY seq LIMIT {MOST_ROWS}"
+        );
+        self.list(&sql, (specimen,), fact)
+    }
+
     /// The latest fact of a kind.
     pub fn latest_fact(&self, kind: &str) -> Result<Option<FactStored>, LedgerError> {
         let sql = format!("SELECT {RAW_FACT} FROM fact WHERE kind = ?1 ORDER BY seq DESC LIMIT 1");

@@ -20,7 +20,10 @@ impl Lab {
             _ => {
                 let why = counted.loose.clone().unwrap_or_default();
                 let (at, what) = (count.at, LooseWhat::Count(count));
-                self.loose.insert(r.seq, Loose { seq: r.seq, bench: counted.bench.clone(), what, why: why.clone(), at });
+                self.loose.insert(r.seq, {
+                    let inputs = counted.run.as_ref().map(|r| [r.first_input, r.last_input]);
+                    Loose { seq: r.seq, bench: counted.bench.clone(), what, why: why.clone(), at, inputs, explained: None }
+                });
                 touched.insert(Entity::Loose(r.seq));
                 if let Some(state) = counted.bench.as_ref().and_then(|b| self.benches.get_mut(b)) {
                     state.refusal = Some(why);
@@ -86,12 +89,18 @@ impl Lab {
 
     fn count_belongs(&mut self, mut count: Count, id: &SpecimenId, bench: &BenchName, r: &Recorded, touched: &mut Touched) {
         let seq = count.seq;
+        let stands = count.set_aside.is_none();
         count.bench = Some(bench.clone());
         let Some(specimen) = self.specimens.get_mut(id) else { return };
         let place = specimen.counts.partition_point(|c| c.seq < seq);
         specimen.counts.insert(place, count);
         touched.insert(Entity::Specimen(id.clone()));
-        if let Some(state) = self.benches.get_mut(bench) {
+        if let Some(state) = self.benches.get_mut(bench).filter(|_| !stands) {
+            // It leaves what was owed before as it is.
+            (state.active, state.refusal, state.failed) = (r.at, None, None);
+            touched.insert(Entity::Bench(bench.clone()));
+        } else if let Some(state) = self.benches.get_mut(bench) {
+            state.failed = None;
             let mut counts = state.owed.take().filter(|o| o.specimen == *id).map_or(Vec::new(), |o| o.counts);
             counts.push(seq);
             counts.sort_unstable();
@@ -111,6 +120,9 @@ impl Lab {
         };
         if let Some(mut count) = loose {
             count.superseded = None;
+            if count.failed.take().is_some() {
+                count.set_aside = None;
+            }
             count.by = count.by.or_else(|| r.who.clone());
             self.count_belongs(count, id, bench, r, touched);
         }
@@ -181,6 +193,8 @@ impl Lab {
 
 fn new_count(counted: &Counted, r: &Recorded) -> Count {
     let run = counted.run.as_ref();
+    let failed = counted.failed.as_ref();
+    let aside = failed.map(|f| Said { by: f.by.clone(), why: f.why.clone(), seq: r.seq });
     Count {
         drops: counted.drops,
         rate_per_s: run.and_then(|r| r.rate_per_s),
@@ -190,6 +204,8 @@ fn new_count(counted: &Counted, r: &Recorded) -> Count {
         cup: counted.cup.clone(),
         at: run.map_or(r.at, |r| r.at),
         typed: run.is_none(),
+        set_aside: aside,
+        failed: failed.map(|f| f.fault),
         bench: counted.bench.clone(),
         run: run.map(|r| (r.first_input, r.began)),
         ..Count::typed(r.seq, r.at, r.who.clone())

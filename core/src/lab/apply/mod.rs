@@ -2,10 +2,11 @@
 //! and the state is looked at: facts read back give the same state.
 
 mod count;
+mod moved;
 mod weighing;
 
 use super::Lab;
-use super::entities::{CheckAnswer, Container, Entity, Hand, OvenClock, Said, Specimen, TrialRecord, Work};
+use super::entities::{CheckAnswer, Container, Entity, FailedRun, Hand, OvenClock, Said, Specimen, TrialRecord, Work};
 use super::oven::work_hours;
 use super::statistics::Statistics;
 use crate::fact::{Fact, Limit, Recorded, SpecimenOpened, TrialRef};
@@ -52,7 +53,11 @@ impl Lab {
                 self.apply_penetration_amended(*penetration, *penetration_mm, &said(r, why), touched);
             }
             Fact::CountSuperseded { count, why } => self.apply_superseded(*count, why, touched),
-            Fact::SetAside { what, why } => self.apply_set_aside(*what, said(r, why), touched),
+            Fact::SetAside { what, fault, why } => self.apply_set_aside(*what, *fault, said(r, why), touched),
+            Fact::ClosureFailed { bench, .. } => self.apply_bench(bench, r, touched),
+            Fact::PanWatched { .. } | Fact::LeftOnPan { .. } => self.apply_seen(r, touched),
+            Fact::Explained { what, says } => self.apply_explained(*what, said(r, says), touched),
+            Fact::TrialMoved { .. } => self.apply_moved(r, touched),
             Fact::TrialSetAside { specimen, trial, no, why } => {
                 self.with_trial(specimen, TrialRef { kind: *trial, no: *no }, touched, |t| t.set_aside = Some(said(r, why)));
             }
@@ -107,6 +112,7 @@ impl Lab {
             revision: 0,
             reviewed: None,
             limits: None,
+            wanted: o.wanted,
         };
         self.specimens.insert(o.specimen.clone(), specimen);
         touched.insert(Entity::Specimen(o.specimen));
@@ -127,6 +133,10 @@ impl Lab {
                 state.code = Some(r.seq);
             }
             Fact::HandEmptied { .. } => state.hand = None,
+            Fact::ClosureFailed { fault, running, why, .. } => {
+                let failed = FailedRun { fault: *fault, said: said(r, why), at: r.at };
+                state.failed = running.then_some(failed);
+            }
             Fact::Refused { says, .. } => state.refusal = Some(says.clone()),
             Fact::SliceOverdue { .. } => {
                 if let Some(owed) = &mut state.owed {
@@ -147,9 +157,12 @@ impl Lab {
 
     fn apply_oven(&mut self, r: &Recorded, touched: &mut Touched) {
         match &r.fact {
-            Fact::IntoOven { containers, .. } => {
+            Fact::IntoOven { containers, celsius } => {
                 for id in containers {
-                    self.with_oven(id, touched, |oven, last_dry| oven.put_in(r.at, last_dry));
+                    self.with_oven(id, touched, |oven, last_dry| {
+                        oven.put_in(r.at, last_dry);
+                        oven.celsius = *celsius;
+                    });
                 }
             }
             Fact::OutOfOven { containers } => {

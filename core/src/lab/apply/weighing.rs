@@ -1,10 +1,10 @@
 //! Facts about weighings change the state.
 
 use super::{Lab, Touched};
-use crate::fact::{Link, Recorded, TrialRef, Weighed};
+use crate::fact::{ClosureFault, Link, Recorded, TrialRef, Weighed};
 use crate::lab::entities::{
-    Bench, Container, DryRecord, Entity, Holding, Latest, Loose, LooseWhat, OvenClock, Pan, Released, Said, TareUse, TrialRecord,
-    Weighing,
+    Bench, Container, DryRecord, Entity, Holding, Latest, Loose, LooseWhat, OvenClock, Pan, Released, Said, Seen, TareUse,
+    TrialRecord, Weighing,
 };
 use crate::lab::oven::work_hours;
 use crate::lab::role::Role;
@@ -54,14 +54,19 @@ impl Lab {
         let at = weighed.taken.map_or(r.at, |t| t.at);
         let (typed, by) = (weighed.taken.is_none(), r.who.clone());
         let step = weighed.taken.map(|t| t.step);
-        let weighing = Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, step, corrected: None };
+        let seen = weighed.taken.map(|t| Seen { zero: t.zero.map(|z| z.mass), trace: t.trace, ..Seen::default() });
+        let seen = seen.filter(|s| *s != Seen::default());
+        let weighing =
+            Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, step, corrected: None, seen };
         self.lies_on_pan(weighed, r.seq, touched);
         match &weighed.link {
             Some(link) => self.apply_link(&weighing, link, touched),
             None => {
                 let why = weighed.loose.clone().unwrap_or_default();
                 let what = LooseWhat::Weighing { weighing, basis };
-                self.loose.insert(r.seq, Loose { seq: r.seq, bench: weighed.bench.clone(), what, why, at });
+                let inputs = weighed.taken.map(|t| [t.first_input, t.input]);
+                let (seq, bench) = (r.seq, weighed.bench.clone());
+                self.loose.insert(seq, Loose { seq, bench, what, why, at, inputs, explained: None });
                 touched.insert(Entity::Loose(r.seq));
             }
         }
@@ -278,6 +283,7 @@ impl Lab {
             repeats: Vec::new(),
             dries: Vec::new(),
             set_aside: None,
+            moved: None,
         };
         let place = specimen.trials.partition_point(|t| t.wets.first().is_some_and(|w| w.seq < weighing.seq));
         specimen.trials.insert(place, record);
@@ -361,13 +367,13 @@ impl Lab {
         }
     }
 
-    pub(super) fn apply_set_aside(&mut self, what: Seq, said: Said, touched: &mut Touched) {
+    pub(super) fn apply_set_aside(&mut self, what: Seq, fault: Option<ClosureFault>, said: Said, touched: &mut Touched) {
         if self.loose.remove(&what).is_some() {
             touched.insert(Entity::Loose(what));
         }
         let mut was_count = false;
         self.with_count(what, touched, |c| {
-            c.set_aside = Some(said);
+            (c.set_aside, c.failed) = (Some(said), fault);
             was_count = true;
         });
         if was_count {
@@ -450,7 +456,7 @@ fn tare_for(container: &Container, wet: Seq) -> Option<Weighing> {
     before.or_else(|| container.tares.first()).cloned()
 }
 
-fn used(container: &mut Container, tare: Seq, specimen: &SpecimenId) {
+pub(super) fn used(container: &mut Container, tare: Seq, specimen: &SpecimenId) {
     let known = container.tare_uses.iter().any(|u| u.tare == tare && u.specimen == *specimen);
     if !known && container.tares.iter().any(|t| t.seq == tare) {
         container.tare_uses.push(TareUse { tare, specimen: specimen.clone() });

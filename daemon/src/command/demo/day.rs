@@ -83,7 +83,9 @@ fn specimen(s: &ScenarioSpecimen, method: String) -> Specimen {
         plastic: s.plastic.iter().map(weighed).collect(),
         natural: s.natural.iter().map(weighed).collect(),
         not_obtainable: stated(Limit::Liquid, &s.liquid_not_obtainable)
-            .or_else(|| stated(Limit::Plastic, &s.plastic_not_obtainable)),
+            .into_iter()
+            .chain(stated(Limit::Plastic, &s.plastic_not_obtainable))
+            .collect(),
     }
 }
 
