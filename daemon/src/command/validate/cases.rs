@@ -134,7 +134,7 @@ pub(super) fn work(sheets: &str, cases: &str, methods: &Methods) -> Result<Vec<C
     cases.line.iter().try_for_each(|case| worked_line(case, &mut all))?;
     for case in &cases.student {
         for (&freedom, &t) in case.freedom.iter().zip(&case.t) {
-            let what = format!("t, {} two-sided, {freedom} degrees of freedom", case.confidence);
+            let what = format!("t, {} two-sided, degrees of freedom {freedom}", case.confidence);
             all.push(number("Student", &what, &case.source, (t, case.within), student::two_sided(case.confidence, freedom)));
         }
     }
