@@ -119,7 +119,7 @@ fn every_key_of_an_instrument_arrives() {
     };
     assert_eq!(pan.settle, settle);
     assert_eq!((cup.port.path.as_str(), cup.port.baud), ("/dev/serial/by-id/usb-3", 9600));
-    assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170 });
+    assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170, polled: false });
     assert_eq!((wand.kind, wand.profile.as_str()), (InstrumentKind::Scanner, "plain-code"));
     assert_eq!(wand.settle, SettleLimits::default());
 }

@@ -150,8 +150,8 @@ struct Instrument {
     kind: Kind,
     /// The bench it serves; a balance may serve several.
     bench: Option<OneOrList<Name>>,
-    /// Absolute path of a serial port, such as "/dev/serial/by-id/…".
-    #[schemars(regex(pattern = r"^/"))]
+    /// Absolute path of a serial port, such as "/dev/serial/by-id/…"; for Modbus also tcp://HOST:PORT.
+    #[schemars(regex(pattern = r"^(/|tcp://)"))]
     port: String,
     /// Speed in baud; default 9600.
     #[schemars(range(min = 50, max = 4_000_000))]

@@ -11,6 +11,7 @@ pub mod command;
 pub mod desk;
 pub mod heard;
 pub mod ledger;
+mod opening;
 pub mod publish;
 pub mod service;
 pub mod signals;

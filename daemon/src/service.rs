@@ -6,7 +6,7 @@ use crate::desk::{Desk, DeskSetup, Effects, InstrumentSetup, Kind, LiveOut, Seat
 use crate::heard::Heard;
 use crate::ledger::{FactStored, LedgerError, OpenOptions, Reader};
 use crate::publish::{self, Courier, CourierEvent, CourierSettings, Live, Login, Outgoing, Past, TlsSettings};
-use crate::{asks, socket};
+use crate::{asks, opening, socket};
 use bytes::{BufMut, Bytes, BytesMut};
 use serde_json::json;
 use std::collections::BTreeMap;
@@ -21,7 +21,7 @@ use tarecup_core::lab::{Linking, Setup};
 use tarecup_core::sense::Talks;
 use tarecup_core::stamp::{SECOND_US, Stamp};
 use tarecup_drivers::heard::{Clock, Deliver};
-use tarecup_drivers::port::serial::{self, PortTask};
+use tarecup_drivers::port::serial::PortTask;
 use tarecup_drivers::profile::Profile;
 use tokio::runtime::{Handle, Runtime};
 
@@ -391,7 +391,8 @@ fn instrument(i: &Instrument, profile: &Arc<Profile>, time_passes: bool) -> Inst
         port: i.port.path.clone(),
         settle: i.settle,
         count: i.count,
-        streams: time_passes && i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous,
+        streams: time_passes
+            && (profile.modbus().is_some() || (i.kind == InstrumentKind::Balance && i.settle.talks == Talks::Continuous)),
         decode: Box::new(move |bytes| decoder.decode(bytes)),
     }
 }
@@ -645,7 +646,7 @@ fn open_ports(
     for (id, instrument) in station.instruments.iter().enumerate() {
         if let Some(profile) = profiles.get(instrument.profile.as_str()) {
             let out: Arc<dyn Deliver> = inbox.clone();
-            ports.push(serial::spawn(runtime, id as u16, instrument.port.clone(), Arc::clone(profile), Arc::clone(&clock), out));
+            ports.push(opening::open(runtime, id as u16, instrument, profile, Arc::clone(&clock), out));
         }
     }
     ports

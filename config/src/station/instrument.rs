@@ -49,7 +49,7 @@ fn one(table: &Table<'_>, known: &Known<'_>, taken: &mut Taken) -> Option<Instru
     let profile = profile(table, kind, known);
     let usual = profile.map(|p| p.usual).unwrap_or_default();
     let port = port(table, taken, usual);
-    let (settle, count) = (settle(table, usual), count(table));
+    let (settle, count) = (settle(table, usual), count(table, usual));
     if let Some(kind) = kind {
         not_of_this_kind(table, kind);
     }
@@ -115,7 +115,7 @@ fn port(table: &Table<'_>, taken: &mut Taken, usual: Usual) -> Option<PortSettin
         None => Some(usual.flow.unwrap_or_default()),
     };
     let entry = entry?;
-    let path = address::port(&entry)?;
+    let path = address::port(&entry, usual.modbus)?;
     if let Some(first) = taken.ports.iter().find(|t| t.value == path) {
         let says = format!("is the port of the instrument in line {} too", first.at.line);
         entry.fault(&says, "a port of its own for each instrument", "`tarecup ports`, which lists the ports there are");
@@ -198,8 +198,8 @@ fn settle(table: &Table<'_>, usual: Usual) -> SettleLimits {
     limits
 }
 
-fn count(table: &Table<'_>) -> CountLimits {
-    let mut limits = CountLimits::default();
+fn count(table: &Table<'_>, usual: Usual) -> CountLimits {
+    let mut limits = CountLimits { polled: usual.modbus, ..CountLimits::default() };
     if let Some(ms) = table.get("debounce_ms").and_then(|e| e.whole(1..=400, "milliseconds, less than two drops are apart")) {
         limits.debounce_ms = ms;
     }

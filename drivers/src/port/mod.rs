@@ -3,8 +3,10 @@
 mod ask;
 mod hold;
 pub mod list;
+pub mod modbus;
 mod open;
 pub mod serial;
+mod tape;
 
 use serde::{Deserialize, Serialize};
 
