@@ -77,14 +77,14 @@ fn a_mass_and_a_count_read_over_modbus_reach_the_record() {
         std::thread::sleep(Duration::from_millis(250));
     }
     until("the count is over", LONG, || !of_kind(&state, "counted").is_empty());
-    let counted = &of_kind(&state, "counted")[0]["fact"];
+    let counted = &of_kind(&state, "counted")[0]["fact"]["run"];
     assert_eq!((&counted["drops"], &counted["gaps"], &counted["doubles"]), (&json!(12), &json!(0), &json!(0)), "{counted}");
     // The motor went on to turn nothing: the total stands, and no second run comes of it.
     std::thread::sleep(Duration::from_secs(2));
     assert_eq!(of_kind(&state, "counted").len(), 1);
     let state_of = |name: &str| {
         let instruments = status(&state).expect("a status")["instruments"].clone();
-        instruments.as_array().and_then(|all| all.iter().find(|i| i["name"] == name).cloned()).expect(name)["state"].clone()
+        instruments.as_array().and_then(|all| all.iter().find(|i| i["instrument"] == name).cloned()).expect(name)["state"].clone()
     };
     assert_eq!((state_of("pan-1"), state_of("cup-1")), (json!("speaking"), json!("speaking")));
     // A counter that no longer answers is told, as a balance would be.
@@ -97,7 +97,7 @@ fn a_mass_and_a_count_read_over_modbus_reach_the_record() {
     let service = run(&path, &state);
     weigh(&pan, &state, 2_295, "C2");
     let weighed = of_kind(&state, "weighed");
-    let masses: Vec<i64> = weighed.iter().filter_map(|f| f["fact"]["gross"].as_i64()).collect();
+    let masses: Vec<i64> = weighed.iter().filter_map(|f| f["fact"]["mass_ug"].as_i64()).collect();
     assert_eq!(masses, [19_810_000, 22_950_000], "{weighed:?}");
     drop(service);
 
@@ -105,7 +105,7 @@ fn a_mass_and_a_count_read_over_modbus_reach_the_record() {
     let reader = Reader::open(&state).expect("a ledger");
     let profile = bus::profile(MASS);
     for (fact, ug) in weighed.iter().zip(masses) {
-        let no = fact["fact"]["input"].as_u64().expect("the line it rests on");
+        let no = fact["fact"]["taken"]["input"].as_u64().expect("the line it rests on");
         let input = &reader.inputs_from(no, 1, Some("pan-1")).expect("an input")[0];
         assert_eq!((input.no, input.bytes.len()), (no, 11));
         assert!(matches!(profile.decode(&input.bytes), What::Signal(Signal::Mass(r)) if r.mass.ug() == ug));

@@ -10,6 +10,7 @@ pub mod clock;
 pub mod command;
 pub mod desk;
 pub mod heard;
+pub mod labels;
 pub mod ledger;
 mod opening;
 pub mod publish;

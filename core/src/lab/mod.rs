@@ -34,6 +34,7 @@ use alloc::vec::Vec;
 use ask::Ask;
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 
+pub use code::CARDS;
 pub use guide::Guide;
 pub use oven::dried;
 

@@ -17,6 +17,7 @@ mod ask;
 mod check;
 mod demo;
 mod files;
+mod labels;
 mod ports;
 mod run;
 mod status;
@@ -78,6 +79,8 @@ enum Verb {
     Status(status::StatusArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
+    /// Write sheets of labels and cards to print.
+    Labels(labels::LabelsArgs),
 }
 
 /// Where things lie.
@@ -106,6 +109,7 @@ pub fn main() -> ExitCode {
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
+        Verb::Labels(args) => labels::run(&args),
     })
 }
 
