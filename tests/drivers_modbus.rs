@@ -196,7 +196,8 @@ fn a_port_of_another_program_is_refused_by_name() {
         .spawn()
         .expect("flock of util-linux");
     let mut line = String::new();
-    std::io::BufRead::read_line(&mut std::io::BufReader::new(holder.stdout.take().expect("its output")), &mut line).expect("a line");
+    std::io::BufRead::read_line(&mut std::io::BufReader::new(holder.stdout.take().expect("its output")), &mut line)
+        .expect("a line");
     let service = Service::start(&cable.here(), MASS);
     let says = service.refused();
     assert!(says.contains("uses it") && says.contains(&cable.here().display().to_string()), "{says}");

@@ -208,8 +208,11 @@ impl Drop for Server {
     }
 }
 
+/// The bytes of a frame, and what they meant.
+pub type Told = (Vec<u8>, What);
+
 #[derive(Default)]
-struct Sink(Mutex<(Vec<(Vec<u8>, What)>, Vec<PortState>)>);
+struct Sink(Mutex<(Vec<Told>, Vec<PortState>)>);
 
 impl Deliver for Sink {
     fn heard(&self, batch: Batch) -> Result<(), Batch> {
@@ -256,7 +259,7 @@ impl Service {
     }
 
     /// All frames so far.
-    pub fn all(&self) -> Vec<(Vec<u8>, What)> {
+    pub fn all(&self) -> Vec<Told> {
         self.sink.0.lock().expect("sink").0.clone()
     }
 
@@ -266,7 +269,7 @@ impl Service {
     }
 
     /// The frame before the latest mass.
-    pub fn last_but_one(&self) -> (Vec<u8>, What) {
+    pub fn last_but_one(&self) -> Told {
         let all = self.all();
         let last = all.iter().rposition(|(_, what)| mass(what).is_some()).expect("a mass");
         all[last - 1].clone()
@@ -277,7 +280,7 @@ impl Service {
     }
 
     /// Waits for a frame that comes from now on.
-    pub fn next(&self, wanted: impl Fn(&What) -> bool) -> (Vec<u8>, What) {
+    pub fn next(&self, wanted: impl Fn(&What) -> bool) -> Told {
         let (began, before) = (Instant::now(), self.frames());
         loop {
             let all = self.all();

@@ -47,14 +47,14 @@ fn containers_and_specimens_read_as_they_were_named() {
     let folder = tempfile::tempdir().expect("a folder");
     let mut wanted: BTreeSet<String> = (1..=40).map(|n| format!("C{n}")).collect();
     wanted.extend(set(["T-007", "S-101", "x_9.b"]));
-    for (out, symbol, format, identifier) in
-        [("a.svg", "code128", "Code128", "]C"), ("b.pdf", "code128", "Code128", "]C"), ("c.svg", "qr", "QRCode", "]Q"), ("d.pdf", "qr", "QRCode", "]Q")]
-    {
-        let files = printed(
-            folder.path(),
-            out,
-            &["--containers", "C1..C40,T-007,x_9.b", "--specimens", "S-101", "--symbol", symbol],
-        );
+    for (out, symbol, format, identifier) in [
+        ("a.svg", "code128", "Code128", "]C"),
+        ("b.pdf", "code128", "Code128", "]C"),
+        ("c.svg", "qr", "QRCode", "]Q"),
+        ("d.pdf", "qr", "QRCode", "]Q"),
+    ] {
+        let files =
+            printed(folder.path(), out, &["--containers", "C1..C40,T-007,x_9.b", "--specimens", "S-101", "--symbol", symbol]);
         let read = read(&files, false);
         assert_eq!(texts(&read), wanted, "{out}");
         for code in read["codes"].as_array().into_iter().flatten() {
@@ -98,7 +98,8 @@ fn the_paper_and_the_line_of_a_hundred_millimetres_are_true() {
     for (paper, wanted) in [("a4", [210.0, 297.0]), ("letter", [215.9, 279.4])] {
         for out in [format!("{paper}.pdf"), format!("{paper}.svg")] {
             let files = printed(folder.path(), &out, &["--containers", "C1", "--paper", paper]);
-            let page: Vec<f64> = read(&files, false)["pages"][0].as_array().expect("a page").iter().filter_map(Value::as_f64).collect();
+            let page: Vec<f64> =
+                read(&files, false)["pages"][0].as_array().expect("a page").iter().filter_map(Value::as_f64).collect();
             assert!((page[0] - wanted[0]).abs() < 0.3 && (page[1] - wanted[1]).abs() < 0.3, "{out}: {page:?}");
             assert!((page[2] - 100.0).abs() < 0.3, "{out}: the line is {} mm long", page[2]);
         }

@@ -19,13 +19,16 @@ const LONG: Duration = Duration::from_secs(30);
 
 /// A profile's tables as they stand in a configuration file.
 fn named(name: &str, text: &str) -> String {
-    let text = text.replace("[[modbus.", &format!("[[profile.{name}.modbus.")).replace("[modbus]", &format!("[profile.{name}.modbus]"));
+    let text =
+        text.replace("[[modbus.", &format!("[[profile.{name}.modbus.")).replace("[modbus]", &format!("[profile.{name}.modbus]"));
     format!("[profile.{name}]\n{}", text.trim_start())
 }
 
 fn config(pan: &Path, cup: &str) -> String {
     let instrument = |name: &str, kind: &str, port: &str, profile: &str| {
-        format!("[[instrument]]\nname = \"{name}\"\nkind = \"{kind}\"\nbench = \"north\"\nport = \"{port}\"\nprofile = \"{profile}\"\n")
+        format!(
+            "[[instrument]]\nname = \"{name}\"\nkind = \"{kind}\"\nbench = \"north\"\nport = \"{port}\"\nprofile = \"{profile}\"\n"
+        )
     };
     format!(
         "[broker]\nlisten = \"127.0.0.1:{}\"\n[[bench]]\nname = \"north\"\n{}{}{}{}",

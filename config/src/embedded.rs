@@ -12,5 +12,5 @@ pub(crate) const METHODS: &[(&str, &str)] = files!("methods": "d4318-multipoint"
 /// File name and text of every shipped profile.
 pub(crate) const PROFILES: &[(&str, &str)] = files!(
     "profiles": "signed-steady", "plain-stream", "slip-gross-net", "asked-long", "comma-stream", "framed-xor",
-    "print-line", "drop-line", "running-total", "byte-per-drop", "plain-code",
+    "print-line", "drop-line", "running-total", "byte-per-drop", "contact-closure", "plain-code", "framed-code",
 );

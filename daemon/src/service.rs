@@ -403,7 +403,7 @@ fn settings_text(station: &Station) -> String {
         .instruments
         .iter()
         .map(|i| {
-            json!({"name": i.name, "kind": i.kind.word(), "benches": i.benches, "port": i.port, "profile": i.profile,
+            json!({"name": i.name, "kind": i.kind.word(), "benches": i.benches, "port": i.port, "pulse": i.pulse, "profile": i.profile,
                    "settle": i.settle, "count": i.count})
         })
         .collect();

@@ -7,3 +7,4 @@ pub mod intake;
 pub mod modbus;
 pub mod port;
 pub mod profile;
+pub mod pulse;

@@ -211,7 +211,9 @@ impl Plan {
         let function = block.table.function();
         match pdu {
             [f, code] if *f == function | 0x80 => Ok(Answer::Exception(*code)),
-            [f, n, data @ ..] if *f == function && usize::from(*n) == data.len() && data.len() == 2 * usize::from(block.count) => {
+            [f, n, data @ ..]
+                if *f == function && usize::from(*n) == data.len() && data.len() == 2 * usize::from(block.count) =>
+            {
                 Ok(Answer::Registers(data))
             }
             _ => Err(Reject::NoPattern),

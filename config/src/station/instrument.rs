@@ -9,8 +9,12 @@ use std::collections::BTreeSet;
 use tarecup_core::names::{BenchName, InstrumentName, ProfileName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
+use tarecup_drivers::port::pulse::PulseSettings;
 use tarecup_drivers::port::{CharFrame, Flow, PortSettings};
+use tarecup_drivers::pulse::{self, ModemLine};
 
+/// The profile of what the program writes for a switch.
+const CONTACT: &str = "contact-closure";
 /// More instruments than one station can listen to in a sensible way.
 const MOST_INSTRUMENTS: usize = 200;
 
@@ -46,14 +50,19 @@ fn one(table: &Table<'_>, known: &Known<'_>, taken: &mut Taken) -> Option<Instru
         .need("kind", "balance, counter or scanner", "kind = \"balance\" below [[instrument]]")
         .and_then(|e| e.one_of(&InstrumentKind::WORDS));
     let benches = at_benches(table, known.benches, kind);
-    let profile = profile(table, kind, known);
+    let pulse = pulse(table);
+    // A line that is named wrongly is a switch all the same.
+    let switch = table.get("pulse").is_some() && kind.is_none_or(|k| k == InstrumentKind::Counter);
+    let profile = if switch { contact(table, known) } else { profile(table, kind, known) };
     let usual = profile.map(|p| p.usual).unwrap_or_default();
     let port = port(table, taken, usual);
     let (settle, count) = (settle(table, usual), count(table, usual));
     if let Some(kind) = kind {
         not_of_this_kind(table, kind);
     }
-    Some(Instrument { name: name?, kind: kind?, benches: benches?, port: port?, profile: profile?.name.clone(), settle, count })
+    let pulse = pulse.and_then(|line| contact_settings(table, line, count));
+    let (name, kind, benches, port, profile) = (name?, kind?, benches?, port?, profile?.name.clone());
+    Some(Instrument { name, kind, benches, port, pulse, profile, settle, count })
 }
 
 fn name(table: &Table<'_>, taken: &mut Taken) -> Option<InstrumentName> {
@@ -160,6 +169,45 @@ fn profile<'p>(table: &Table<'_>, kind: Option<InstrumentKind>, known: &Known<'p
         return None;
     }
     Some(found)
+}
+
+/// The line that a switch closes, if there is one.
+fn pulse(table: &Table<'_>) -> Option<ModemLine> {
+    let line = table.get("pulse");
+    if let (None, Some(entry)) = (&line, table.get("bounce_ms")) {
+        entry.fault_of_key(
+            "is of a switch, and there is no pulse",
+            "pulse = \"cts\" with it",
+            "naming the line, or taking this line out",
+        );
+    }
+    line.and_then(|e| e.one_of(&ModemLine::WORDS))
+}
+
+/// A switch speaks one language, that of the program itself.
+fn contact<'p>(table: &Table<'_>, known: &Known<'p>) -> Option<&'p ProfileSource> {
+    if let Some(entry) = table.get("profile").filter(|e| e.quiet_text() != Some(CONTACT)) {
+        entry.fault_of_key("says how lines are read, and a switch sends none", "no profile beside pulse", "taking this line out");
+    }
+    if let Some(entry) = table.get("flow").filter(|e| e.quiet_text() == Some("hardware")) {
+        entry.fault("waits for the very line that the switch closes", "\"none\"", "taking this line out");
+    }
+    known.profiles.values().find(|p| p.name.as_str() == CONTACT)
+}
+
+fn contact_settings(table: &Table<'_>, line: ModemLine, count: CountLimits) -> Option<PulseSettings> {
+    let bounce_ms = match table.get("bounce_ms") {
+        Some(entry) => {
+            let ms: u32 = entry.whole(1..=100, "milliseconds that the switch bounces")?;
+            if ms >= count.debounce_ms {
+                let says = format!("is {ms} ms, no less than debounce_ms ({} ms)", count.debounce_ms);
+                entry.fault(&says, "less than debounce_ms", "20, which is long for a microswitch");
+            }
+            ms
+        }
+        None => pulse::BOUNCE_MS,
+    };
+    Some(PulseSettings { line, bounce_ms })
 }
 
 /// Keys that mean nothing for this kind of instrument.

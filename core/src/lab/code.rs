@@ -152,7 +152,12 @@ impl Lab {
                     return Err(format!(
                         "no card is called \"+{}\": the cards are {} and +by-INITIALS",
                         printable(other),
-                        CARDS.map(|(card, _)| card).into_iter().filter(|card| !card.ends_with('-')).collect::<Vec<_>>().join(", ")
+                        CARDS
+                            .map(|(card, _)| card)
+                            .into_iter()
+                            .filter(|card| !card.ends_with('-'))
+                            .collect::<Vec<_>>()
+                            .join(", ")
                     ));
                 }
             },

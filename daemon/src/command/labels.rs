@@ -108,20 +108,16 @@ fn drawn(args: &LabelsArgs) -> Result<Vec<Page>, String> {
     }
     let (labels, cards) = (labels(args)?, cards(args)?);
     if labels.is_empty() && cards.is_empty() {
-        return Err(String::from("there is nothing to print: name --containers C1..C40, --registered, --specimens, --cards or --operators"));
+        return Err(String::from(
+            "there is nothing to print: name --containers C1..C40, --registered, --specimens, --cards or --operators",
+        ));
     }
     let paper = match args.paper {
         Paper::A4 => (210.0, 297.0),
         Paper::Letter => (215.9, 279.4),
     };
-    let layout = Layout {
-        paper,
-        label: args.size,
-        margin: args.margin,
-        gap: args.gap,
-        outline: !args.no_outline,
-        kind: args.symbol,
-    };
+    let layout =
+        Layout { paper, label: args.size, margin: args.margin, gap: args.gap, outline: !args.no_outline, kind: args.symbol };
     let mut all = pages(&labels, &layout).map_err(|e| e.to_string())?;
     all.extend(pages(&cards, &Layout { label: args.card_size, ..layout }).map_err(|e| e.to_string())?);
     Ok(all)
@@ -139,7 +135,9 @@ fn labels(args: &LabelsArgs) -> Result<Vec<Label>, String> {
     }
     let specimens = read("specimens", &args.specimens)?;
     if let Some(both) = specimens.iter().find(|s| containers.contains(s)) {
-        return Err(format!("\"{both}\" would be a container and a specimen: one code means one thing; give one of them another name"));
+        return Err(format!(
+            "\"{both}\" would be a container and a specimen: one code means one thing; give one of them another name"
+        ));
     }
     if containers.len() + specimens.len() > MOST_LABELS {
         return Err(format!("more than {MOST_LABELS} labels at once; print them in parts"));

@@ -87,7 +87,9 @@ pub enum LabelFault {
     #[error("a label of {0} does not fit on this paper with its margins; choose a smaller --size or a smaller --margin")]
     Paper(String),
     /// The code does not fit on a label.
-    #[error("\"{code}\" does not fit as {kind} on a label of {size}: its lines would be too thin or too short to be read; {try_this}")]
+    #[error(
+        "\"{code}\" does not fit as {kind} on a label of {size}: its lines would be too thin or too short to be read; {try_this}"
+    )]
     Code {
         /// Which code.
         code: String,
@@ -184,11 +186,8 @@ fn place(symbol: &Symbol, (left, top, width, height): (f64, f64, f64, f64), mark
     }
     let module = dots * DOT;
     let x0 = left + (width - modules * module) / 2.0 + quiet as f64 * module;
-    let (y0, tall) = if square {
-        (top + (height - modules * module) / 2.0 + quiet as f64 * module, module)
-    } else {
-        (top, height.min(20.0))
-    };
+    let (y0, tall) =
+        if square { (top + (height - modules * module) / 2.0 + quiet as f64 * module, module) } else { (top, height.min(20.0)) };
     for run in &symbol.runs {
         let (x, y) = (x0 + run.from as f64 * module, y0 + run.row as f64 * module);
         marks.push(Mark::Bar(x, y, run.len as f64 * module, tall));

@@ -16,7 +16,7 @@ pub fn page(page: &Page) -> String {
             Mark::Bar(x, y, w, h) => writeln!(out, "<rect x=\"{x:.4}\" y=\"{y:.4}\" width=\"{w:.4}\" height=\"{h:.4}\"/>"),
             Mark::Edge(x, y, w, h) => writeln!(
                 out,
-                "<rect x=\"{x:.4}\" y=\"{y:.4}\" width=\"{w:.4}\" height=\"{h:.4}\" fill=\"none\" stroke=\"#888\" stroke-width=\"0.1\"/>"
+                "<rect x=\"{x:.4}\" y=\"{y:.4}\" width=\"{w:.4}\" height=\"{h:.4}\" fill=\"none\" stroke=\"#888\" stroke-width=\"0.15\" shape-rendering=\"auto\"/>"
             ),
             Mark::Text { x, y, size, bold, text } => {
                 let weight = if *bold { " font-weight=\"bold\"" } else { "" };

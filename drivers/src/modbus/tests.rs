@@ -100,7 +100,10 @@ fn counts_come_with_two_tables_and_two_requests() {
                 [[modbus.read]]\nwhat = \"status\"\nregister = 40001\nerror_bit = 0\n";
     let profile = compiled(text).expect("a profile");
     let blocks = profile.modbus().expect("registers").blocks().to_vec();
-    assert_eq!(blocks.iter().map(|b| (b.table, b.start, b.count)).collect::<Vec<_>>(), [(Table::Holding, 0, 1), (Table::Input, 7, 2)]);
+    assert_eq!(
+        blocks.iter().map(|b| (b.table, b.start, b.count)).collect::<Vec<_>>(),
+        [(Table::Holding, 0, 1), (Table::Input, 7, 2)]
+    );
     let poll = |bits: u8, total: u32| {
         let [a, b, c, d] = total.to_be_bytes();
         [answer(&[3, 3, 2, 0, bits]), answer(&[3, 4, 4, a, b, c, d])].concat()
@@ -143,7 +146,8 @@ fn mistakes_are_named_with_their_key() {
         let says = compiled(&text).expect_err(&text);
         assert!(says.contains(words), "{text}\n{says}");
     }
-    let unit = |n: u8, framing: &str| compiled(&mass(plain).replace("unit = 17\n", &format!("unit = {n}\nframing = \"{framing}\"\n")));
+    let unit =
+        |n: u8, framing: &str| compiled(&mass(plain).replace("unit = 17\n", &format!("unit = {n}\nframing = \"{framing}\"\n")));
     assert!(unit(0, "rtu").is_err_and(|e| e.contains("1 to 247")));
     assert!(unit(255, "tcp").is_ok());
 }

@@ -214,7 +214,9 @@ fn place(read: &ReadText, key: &str) -> Result<(Table, u16), ProfileFault> {
                 Ok,
             )
         }
-        (Some(_), None, Some(_)) => fault(format!("{key}.table"), "the register's first digit already says it; leave 'table' out"),
+        (Some(_), None, Some(_)) => {
+            fault(format!("{key}.table"), "the register's first digit already says it; leave 'table' out")
+        }
         (Some(_), Some(_), _) => fault(format!("{key}.address"), "'register' and 'address' say the same place; leave one out"),
         (None, Some(address), table) => Ok((table.unwrap_or_default(), address)),
         (None, None, _) => fault(key, "it has no place; write register = 40001 or address = 0"),
@@ -304,7 +306,8 @@ fn blocks(values: &[Value]) -> Result<Vec<Block>, ProfileFault> {
     }
     let block = |(table, start, end): (Table, u16, u32)| {
         let count = u16::try_from(end - u32::from(start)).ok().filter(|n| *n <= MOST_REGISTERS);
-        count.map_or_else(|| fault("modbus.read", "too many registers for one request"), |count| Ok(Block { table, start, count }))
+        count
+            .map_or_else(|| fault("modbus.read", "too many registers for one request"), |count| Ok(Block { table, start, count }))
     };
     blocks.into_iter().map(block).collect()
 }

@@ -5,6 +5,7 @@ mod hold;
 pub mod list;
 pub mod modbus;
 mod open;
+pub mod pulse;
 pub mod serial;
 mod tape;
 
