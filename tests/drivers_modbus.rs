@@ -232,3 +232,35 @@ fn over_tcp_as_through_a_gateway_and_as_modbus_tcp() {
         service.stop();
     }
 }
+
+#[test]
+fn a_gateway_that_went_without_a_word_is_called_again() {
+    let _alone = alone();
+    let listener = std::net::TcpListener::bind("127.0.0.1:0").expect("a port");
+    let path = format!("tcp://{}", listener.local_addr().expect("an address"));
+    let service = Service::start(std::path::Path::new(&path), MASS);
+    let (first, _) = listener.accept().expect("a call");
+    let began = Instant::now();
+    let (_second, _) = listener.accept().expect("another call");
+    assert!(began.elapsed() > Duration::from_secs(5), "silence alone is no reason to hang up at once");
+    assert_eq!((service.frames(), service.states()), (0, vec![PortState::Opened]));
+    drop(first);
+    service.stop();
+}
+
+#[test]
+fn a_line_that_never_stops_talking_is_bounded_and_no_mass() {
+    let _alone = alone();
+    let listener = std::net::TcpListener::bind("127.0.0.1:0").expect("a port");
+    let path = format!("tcp://{}", listener.local_addr().expect("an address"));
+    let service = Service::start(std::path::Path::new(&path), MASS);
+    let (mut line, _) = listener.accept().expect("a call");
+    let noise: Vec<u8> = (0..=255).cycle().take(64 * 1024).collect();
+    std::io::Write::write_all(&mut line, &noise).expect("said");
+    service.next(|w| matches!(w, What::Reject(_)));
+    std::thread::sleep(Duration::from_millis(500));
+    let all = service.all();
+    assert_eq!(all.iter().map(|(bytes, _)| bytes.len()).sum::<usize>(), noise.len(), "every byte is kept once");
+    assert!(all.iter().all(|(bytes, what)| bytes.len() <= 1_280 && matches!(what, What::Reject(_))));
+    service.stop();
+}
