@@ -39,6 +39,9 @@ const HOLDER_EVERY: Duration = Duration::from_secs(10);
 /// Bytes that nobody asked for are one frame when so long nothing follows, or when they are so many.
 const STRAY: (Duration, usize) = (Duration::from_millis(50), 256);
 
+/// Longest frame: more than the answers of any profile.
+const FRAME_MAX: usize = 1_024;
+
 /// Starts the port of an instrument whose profile has a `[modbus]` table on the
 /// runtime `rt` (with I/O and time). The path is that of a serial port, or
 /// `tcp://HOST:PORT` of a gateway or of the instrument itself.
@@ -175,13 +178,13 @@ impl Port {
         }
     }
 
-    /// One frame, decoded as a stored one would be.
+    /// One frame, decoded as a stored one would be. Only noise is longer than a frame may be.
     fn deliver(&mut self, bytes: Vec<u8>) {
-        let Ok(end) = u32::try_from(bytes.len()) else { return };
-        if end > 0 {
-            let frames = vec![Frame { end, at: self.clock.now(), what: self.profile.decode(&bytes) }];
+        for bytes in bytes.chunks(FRAME_MAX) {
+            let end = u32::try_from(bytes.len()).unwrap_or(u32::MAX);
+            let frames = vec![Frame { end, at: self.clock.now(), what: self.profile.decode(bytes) }];
             let read_at = Some(std::time::Instant::now());
-            self.hold.deliver(Batch { instrument: self.id, bytes, frames, read_at }, &*self.out);
+            self.hold.deliver(Batch { instrument: self.id, bytes: bytes.to_vec(), frames, read_at }, &*self.out);
         }
     }
 

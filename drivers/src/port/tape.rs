@@ -9,8 +9,9 @@ use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use std::task::{Context, Poll};
 use tokio::io::{AsyncRead, AsyncWrite, ReadBuf};
 
-/// The most that is kept of one answer. The longest frame has 260 bytes.
-const HEARD_MAX: usize = 1_024;
+/// The most that is kept of what came for one request. The longest answer has
+/// 260 bytes; beyond it is noise, of which the library reads 8 KiB at once.
+const HEARD_MAX: usize = 32 * 1_024;
 
 /// A serial port or a connection.
 pub(super) trait Line: AsyncRead + AsyncWrite + Send + Unpin {}
