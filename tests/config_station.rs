@@ -8,6 +8,7 @@ use tarecup_config::station::{self, InstrumentKind, LogFormat, LogLevel, Scheme,
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
 use tarecup_drivers::port::Flow;
+use tarecup_drivers::pulse::ModemLine;
 
 fn read(text: &str) -> Station {
     station::parse("it.toml", text).unwrap_or_else(|f| panic!("{f}"))
@@ -123,7 +124,7 @@ fn every_key_of_an_instrument_arrives() {
     assert_eq!((pan.weighs.repeatability_g, pan.weighs.linearity_g), (Some(0.008), Some(0.0)));
     assert_eq!(wand.weighs, tarecup_core::soil::uncertainty::Balance::default());
     assert_eq!((cup.port.path.as_str(), cup.port.baud), ("/dev/serial/by-id/usb-3", 9600));
-    assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170 });
+    assert_eq!(cup.count, CountLimits { debounce_ms: 200, pause_ms: 4000, gap_percent: 170, polled: false });
     assert_eq!((wand.kind, wand.profile.as_str()), (InstrumentKind::Scanner, "plain-code"));
     assert_eq!(wand.settle, SettleLimits::default());
 }
@@ -201,6 +202,62 @@ fn wrong_instruments_are_pointed_at() {
     for (key, words) in [("port", &["tarecup ports"][..]), ("profile", &["signed-steady", "[profile.NAME]", "`tarecup check`"])] {
         let lacking = format!("@@{}", balance(key, ""));
         expect_fault(&lacking, &[&[key, "is missing"], words].concat(), |t| station::parse("it.toml", t));
+    }
+}
+
+/// A counter on a switch, with one line more.
+fn switch(more: &str) -> String {
+    format!("[[instrument]]\nname = \"cup-1\"\nkind = \"counter\"\nport = \"/dev/ttyS0\"\npulse = \"dcd\"\n{more}\n")
+}
+
+#[test]
+fn a_switch_on_a_line_is_a_counter_without_a_profile() {
+    let one = |more: &str| read(&switch(more)).instruments.remove(0);
+    let cup = one("");
+    let pulse = cup.pulse.expect("a switch");
+    assert_eq!((pulse.line, pulse.bounce_ms, cup.profile.as_str()), (ModemLine::Dcd, 20, "contact-closure"));
+    assert_eq!(one("bounce_ms = 35").pulse.expect("a switch").bounce_ms, 35);
+    for (line, words) in [
+        ("@@profile = \"drop-line\"", &["no profile beside pulse", "taking this line out"][..]),
+        ("flow = @@\"hardware\"", &["the very line that the switch closes"]),
+        ("bounce_ms = @@0", &["is 0", "1 to 100"]),
+        ("debounce_ms = 30\nbounce_ms = @@40", &["no less than debounce_ms (30 ms)"]),
+    ] {
+        expect_fault(&switch(line), words, |t| station::parse("it.toml", t));
+    }
+    let wrong = switch("").replace("pulse = \"dcd\"", "pulse = @@\"dtr\"");
+    expect_fault(&wrong, &["cts, dsr, dcd, ri"], |t| station::parse("it.toml", t));
+    let lonely = switch("profile = \"drop-line\"\n@@bounce_ms = 20").replace("pulse = \"dcd\"\n", "");
+    expect_fault(&lonely, &["there is no pulse"], |t| station::parse("it.toml", t));
+    expect_fault(&balance("pulse", "@@pulse = \"cts\""), &["for a counter only"], |t| station::parse("it.toml", t));
+}
+
+/// A counter that is read over Modbus, at this port and with this scale of nothing.
+fn registers(port: &str, read: &str) -> String {
+    format!(
+        "[[instrument]]\nname = \"cup-1\"\nkind = \"counter\"\nport = {port}\nprofile = \"bus\"\n\
+         [profile.bus]\nkind = \"counter\"\n[profile.bus.modbus]\nunit = 1\nevery_ms = 200\n[[profile.bus.modbus.read]]\nwhat = \"total\"\n{read}\n"
+    )
+}
+
+#[test]
+fn registers_are_read_from_a_line_or_from_the_network() {
+    let port = |port: &str| {
+        let cup = read(&registers(port, "address = 0")).instruments.remove(0);
+        assert!(cup.count.polled, "the same total again is no double");
+        cup.port.path
+    };
+    assert_eq!(port("\"/dev/ttyS0\""), "/dev/ttyS0");
+    assert_eq!(port("\"tcp://10.0.0.9\""), "tcp://10.0.0.9:502");
+    assert_eq!(port("\"tcp://gateway-2:4001\""), "tcp://gateway-2:4001");
+    assert_eq!(port("\"tcp://[fe80::1]:4001\""), "tcp://[fe80::1]:4001");
+    for (at, read, words) in [
+        ("@@\"tcp://\"", "address = 0", &["not a host", "1 to 65535"][..]),
+        ("@@\"tcp://h:0\"", "address = 0", &["not a host"]),
+        ("\"/dev/ttyS0\"", "@@register = 12", &["12 is no register", "40001"]),
+        ("\"/dev/ttyS0\"", "address = 0\n@@scales = \"1\"", &["\"scales\"", "did you mean"]),
+    ] {
+        expect_fault(&registers(at, read), words, |t| station::parse("it.toml", t));
     }
 }
 

@@ -25,7 +25,9 @@ fn shipped() -> Vec<Arc<Profile>> {
         "drop-line",
         "running-total",
         "byte-per-drop",
+        "contact-closure",
         "plain-code",
+        "framed-code",
     );
     texts.iter().map(|t| compiled(t)).collect()
 }

@@ -26,7 +26,9 @@ shipped!(
     "drop-line",
     "running-total",
     "byte-per-drop",
+    "contact-closure",
     "plain-code",
+    "framed-code",
 );
 
 fn profile(name: &str) -> Arc<Profile> {
@@ -303,6 +305,8 @@ fn plain_code() {
             ("C11\n", "code C11"),
             ("C11\r\nC12\r\n", "code C11; code C12; nothing"),
             ("]C1C11\r", "code C11"),
+            ("]Q1C11\t\r", "code C11"),
+            ("]Q1+by-AB\r", "code +by-AB"),
             ("+plastic\r", "code +plastic"),
             ("\r\n", "nothing; nothing"),
             ("C\x0711\r", "code"),
@@ -320,6 +324,39 @@ fn plain_code() {
     assert_eq!(heard(&profile, b"C\xff11\r"), ["code"]);
 }
 
+#[test]
+fn framed_code() {
+    check(
+        "framed-code",
+        &[
+            ("\x02C11\x03", "code C11"),
+            ("\x02]C1C11\x03", "code C11"),
+            ("\x02]Q1+oven-in\x03\r\n", "code +oven-in; nothing"),
+            ("\x02C11\x03\x02C12\x03", "code C11; code C12"),
+            // Half a code is none, before or after the whole one.
+            ("11\x03\x02C12\x03", "no_pattern; code C12"),
+            ("\x02C1\x02C12\x03", "no_pattern; code C12"),
+            ("\x02\x03", "nothing"),
+            ("\x02+   23.4571 g  S\x03", "wrong_kind"),
+        ],
+    );
+}
+
+#[test]
+fn contact_closure() {
+    check(
+        "contact-closure",
+        &[
+            ("CTS closed\nDSR closed\nDCD closed\nRI closed\n", "drop; drop; drop; drop"),
+            ("CTS opened, 3 edges\n", "nothing"),
+            ("CTS chatters\n", "not ready"),
+            ("CTS unwatched for 45 ms\n", "not ready"),
+            ("CTS close\n", "no_pattern"),
+            ("DTR closed\n", "no_pattern"),
+        ],
+    );
+}
+
 /// Lines of every dialect that carry a mass, a count or a code.
 const SPOKEN: &[(&str, Kind, &str)] = &[
     ("signed-steady", Kind::Balance, "+   23.4571 g  S\r\n"),
@@ -332,7 +369,9 @@ const SPOKEN: &[(&str, Kind, &str)] = &[
     ("drop-line", Kind::Counter, "tick\r\n"),
     ("running-total", Kind::Counter, "DROP 17\r\nSTOP 17\r\n"),
     ("byte-per-drop", Kind::Counter, "***=3\r\n"),
+    ("contact-closure", Kind::Counter, "CTS closed\nCTS opened, 3 edges\n"),
     ("plain-code", Kind::Scanner, "C11\r\n"),
+    ("framed-code", Kind::Scanner, "\x02C11\x03"),
 ];
 
 #[test]
@@ -358,7 +397,7 @@ fn no_mass_becomes_a_count_and_no_count_a_mass() {
             }
         }
     }
-    assert_eq!(understood, 15);
+    assert_eq!(understood, 17);
 }
 
 fn is_reject(words: &str) -> bool {

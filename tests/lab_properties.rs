@@ -34,7 +34,7 @@ enum Op {
     Stop,
 }
 
-const CODES: [&str; 14] = [
+const CODES: [&str; 17] = [
     "C1",
     "C2",
     "C3",
@@ -48,6 +48,9 @@ const CODES: [&str; 14] = [
     "+new-paste",
     "+nothing",
     "+by-AB",
+    "+oven-in",
+    "+oven-out",
+    "+no-plastic-limit",
     "a b\u{7}",
 ];
 const ROLES: [&str; 9] = ["tare", "tare_check", "tare_with_lid", "wet", "repeat", "grown", "dry", "further_dry", "emptied"];

@@ -355,6 +355,23 @@ fn across_a_start_of_the_machine_wall_time_counts() {
     assert_eq!((run.drops, run.rate_per_s, run.duration_us, run.interrupted), (5, None, 4_000_000, None));
 }
 
+#[test]
+fn a_polled_total_said_again_is_neither_a_double_nor_a_run() {
+    let day = |polled: bool| {
+        let mut sense = Count::new(CountLimits { polled, ..CountLimits::default() });
+        // A run of one drop, then one of three: each number asked for five times a drop.
+        let totals = [1; 60].into_iter().chain([0; 5]).chain([1, 2, 3].into_iter().flat_map(|n| [n; 5])).chain([3; 60]);
+        let mut happened = Vec::new();
+        for (no, n) in totals.enumerate() {
+            happened.extend(sense.hear(&Total(n), no as u64, ms(no as i64 * 100)).into_iter().flatten());
+        }
+        runs(&happened).iter().map(|r| (r.drops, r.gaps, r.doubles)).collect::<Vec<_>>()
+    };
+    assert_eq!(day(true), [(1, 0, 0), (3, 0, 0)]);
+    // The control: without the word that it is polled, the same lines are doubles.
+    assert!(day(false).iter().all(|(_, _, doubles)| *doubles > 0));
+}
+
 fn any_event() -> impl Strategy<Value = Event> {
     prop_oneof![
         8 => Just(Line(Drop)),
@@ -454,7 +471,7 @@ proptest! {
         day in prop::collection::vec((any_event(), prop_oneof![0i64..20_000_000, any::<i64>(), Just(i64::MIN), Just(i64::MAX)], 0u32..3), 0..100),
         limits in (prop_oneof![Just(0), Just(150), any::<u32>()], prop_oneof![Just(0), Just(5_000), any::<u32>()], any::<u32>()),
     ) {
-        let limits = CountLimits { debounce_ms: limits.0, pause_ms: limits.1, gap_percent: limits.2 };
+        let limits = CountLimits { debounce_ms: limits.0, pause_ms: limits.1, gap_percent: limits.2, polled: day.len() % 2 == 0 };
         let mut sense = Count::new(limits);
         for (no, (event, us, boot)) in day.iter().enumerate() {
             let at = Stamp { utc_us: *us, mono_us: us.rotate_left(7), boot: Boot(*boot) };

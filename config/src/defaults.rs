@@ -11,6 +11,8 @@ pub const SCREEN_LISTEN: SocketAddr = SocketAddr::new(IpAddr::V4(Ipv4Addr::LOCAL
 pub const MQTT_PORT: u16 = 1_883;
 /// Port of MQTT over TLS (registered with IANA as `secure-mqtt`).
 pub const MQTTS_PORT: u16 = 8_883;
+/// Port of Modbus TCP (registered with IANA as `mbap`).
+pub const MODBUS_PORT: u16 = 502;
 /// Topic root.
 pub const ROOT: &str = "tarecup/v1";
 /// Days that a finished specimen stays among the retained topics.

@@ -15,5 +15,5 @@ pub(crate) const METHODS: &[(&str, &str)] = files!(
 /// File name and text of every shipped profile.
 pub(crate) const PROFILES: &[(&str, &str)] = files!(
     "profiles": "signed-steady", "plain-stream", "slip-gross-net", "asked-long", "comma-stream", "framed-xor",
-    "print-line", "drop-line", "running-total", "byte-per-drop", "plain-code",
+    "print-line", "drop-line", "running-total", "byte-per-drop", "contact-closure", "plain-code", "framed-code",
 );

@@ -44,12 +44,14 @@ pub(crate) const INSTRUMENT: &[&str] = &[
     "debounce_ms",
     "pause_ms",
     "gap_percent",
+    "pulse",
+    "bounce_ms",
 ];
 /// Keys of an instrument that only a balance has.
 pub(crate) const SETTLE: &[&str] =
     &["talks", "steady_readings", "steady_span_g", "load_from_g", "change_from_g", "steady_ms", "repeatability_g", "linearity_g"];
 /// Keys of an instrument that only a cup counter has.
-pub(crate) const COUNT: &[&str] = &["debounce_ms", "pause_ms", "gap_percent"];
+pub(crate) const COUNT: &[&str] = &["debounce_ms", "pause_ms", "gap_percent", "pulse", "bounce_ms"];
 pub(crate) const LINKING: &[&str] =
     &["near_g", "slice_minutes", "code_after_s", "repeat_print_s", "intention_hours", "slice_aloud_minutes"];
 pub(crate) const LOG: &[&str] = &["level", "format"];

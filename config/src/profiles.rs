@@ -42,6 +42,8 @@ pub struct Usual {
     pub flow: Option<Flow>,
     /// How a balance tells a weighing.
     pub talks: Option<Talks>,
+    /// It is read over Modbus.
+    pub modbus: bool,
 }
 
 impl From<&ProfileText> for Usual {
@@ -51,7 +53,7 @@ impl From<&ProfileText> for Usual {
             profile::Talks::Stream | profile::Talks::Asked => Talks::Continuous,
         });
         let serial = text.serial.clone().unwrap_or_default();
-        Self { baud: serial.baud, frame: serial.frame, flow: serial.flow, talks }
+        Self { baud: serial.baud, frame: serial.frame, flow: serial.flow, talks, modbus: text.modbus.is_some() }
     }
 }
 

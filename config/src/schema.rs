@@ -166,6 +166,17 @@ enum Talks {
     PrintOnKey,
 }
 
+/// Modem-control lines.
+#[derive(JsonSchema)]
+#[schemars(rename_all = "kebab-case")]
+#[expect(dead_code, reason = "only its shape is used")]
+enum Pulse {
+    Cts,
+    Dsr,
+    Dcd,
+    Ri,
+}
+
 /// A balance, cup counter or scanner.
 #[derive(JsonSchema)]
 #[schemars(deny_unknown_fields)]
@@ -178,8 +189,8 @@ struct Instrument {
     kind: Kind,
     /// The bench it serves; a balance may serve several.
     bench: Option<OneOrList<Name>>,
-    /// Absolute path of a serial port, such as "/dev/serial/by-id/…".
-    #[schemars(regex(pattern = r"^/"))]
+    /// Absolute path of a serial port, such as "/dev/serial/by-id/…"; for Modbus also tcp://HOST:PORT.
+    #[schemars(regex(pattern = r"^(/|tcp://)"))]
     port: String,
     /// Speed in baud; default 9600.
     #[schemars(range(min = 50, max = 4_000_000))]
@@ -189,8 +200,8 @@ struct Instrument {
     frame: Option<String>,
     /// Flow control; default "none".
     flow: Option<Flow>,
-    /// What it speaks: a shipped profile or one of [profile.NAME].
-    profile: Name,
+    /// What it speaks: a shipped profile or one of [profile.NAME]; not with pulse.
+    profile: Option<Name>,
     /// How a balance tells a weighing.
     talks: Option<Talks>,
     /// Readings in a row that must agree.
@@ -220,6 +231,11 @@ struct Instrument {
     /// An interval of this many percent of the usual one is a gap.
     #[schemars(range(min = 110, max = 1_000))]
     gap_percent: Option<u32>,
+    /// The modem-control line that a switch at the cam closes at each drop.
+    pulse: Option<Pulse>,
+    /// The switch is at rest after so long without a change, milliseconds; default 20.
+    #[schemars(range(min = 1, max = 100))]
+    bounce_ms: Option<u32>,
 }
 
 /// How weighings find their container.

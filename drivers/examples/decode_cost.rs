@@ -10,6 +10,35 @@ use tarecup_drivers::profile::{Profile, ProfileText};
 
 const ROUNDS: u32 = 500_000;
 
+const MASS: &str = r#"
+kind = "balance"
+about = "a mass and its status in one answer"
+[modbus]
+unit = 1
+every_ms = 200
+[[modbus.read]]
+what = "mass"
+register = 40001
+width = 32
+scale = "0.01"
+unit = "g"
+[[modbus.read]]
+what = "status"
+register = 40003
+steady_bit = 0
+"#;
+
+const TOTAL: &str = r#"
+kind = "counter"
+about = "a total"
+[modbus]
+unit = 1
+every_ms = 200
+[[modbus.read]]
+what = "total"
+register = 30001
+"#;
+
 fn main() -> Result<(), Box<dyn std::error::Error>> {
     let cases = [
         (include_str!("../../config/profiles/signed-steady.toml"), "+   23.4571 g  S\r\n"),
@@ -33,6 +62,19 @@ fn main() -> Result<(), Box<dyn std::error::Error>> {
             profile.name(),
             line.trim_end()
         );
+    }
+    polls()
+}
+
+/// Answers over Modbus: a mass of 32 bits and a status, a total.
+fn polls() -> Result<(), Box<dyn std::error::Error>> {
+    for (toml, body) in [(MASS, &[1, 3, 6, 0, 0, 0x09, 0x2A, 0, 1][..]), (TOTAL, &[1, 4, 2, 0, 17])] {
+        let profile = Arc::new(Profile::compile(toml::from_str::<ProfileText>(toml)?)?);
+        let mut decoder = profile.decoder();
+        let mut frame = body.to_vec();
+        frame.extend(tarecup_drivers::modbus::crc(body).to_le_bytes());
+        let decode = cost(|| drop(black_box(decoder.decode(black_box(&frame)))));
+        println!("{:<16} {:<38} decode {decode:>4.0} ns   {}", "modbus", format!("{frame:02x?}"), profile.about());
     }
     Ok(())
 }

@@ -4,5 +4,7 @@
 pub mod frame;
 pub mod heard;
 pub mod intake;
+pub mod modbus;
 pub mod port;
 pub mod profile;
+pub mod pulse;

@@ -14,6 +14,9 @@
 //! | `end` | counter | present when the line ends the count |
 //! | `code` | scanner | the text that was read |
 //!
+//! An instrument that is read over Modbus has a table of registers instead of
+//! lines: see [`crate::modbus`].
+//!
 //! A dialect with only one of the two marks means the other by its absence.
 //! A pattern must match the whole line, without terminator.
 
@@ -27,6 +30,7 @@ pub use text::ProfileText;
 
 use crate::frame::{Framing, How, Parts, Piece};
 use crate::heard::{Reject, What};
+use crate::modbus::Plan;
 use regex::bytes::{CaptureLocations, Regex};
 use serde::{Deserialize, Serialize};
 use std::sync::Arc;
@@ -93,6 +97,7 @@ pub struct Profile {
     largest: Mass,
     talks: Talks,
     ask: Option<Ask>,
+    modbus: Option<Plan>,
     text: ProfileText,
 }
 
@@ -173,6 +178,10 @@ impl Profile {
     pub fn ask(&self) -> Option<&Ask> {
         self.ask.as_ref()
     }
+    /// Registers to ask for, of an instrument that is read over Modbus.
+    pub fn modbus(&self) -> Option<&Plan> {
+        self.modbus.as_ref()
+    }
     /// How frames begin and end.
     pub fn framing(&self) -> &Framing {
         &self.framing
@@ -192,6 +201,9 @@ impl Profile {
     }
 
     fn decode_in<'a>(&self, frame: &[u8], at: impl Iterator<Item = (&'a Regex, &'a mut CaptureLocations)>) -> What {
+        if let Some(plan) = &self.modbus {
+            return plan.decode(frame, self.largest);
+        }
         let Some(parts) = self.framing.parts(frame) else {
             return self.unknown(frame);
         };

@@ -125,9 +125,22 @@ pub(super) fn topic_root(entry: &Entry<'_>) -> Option<String> {
 /// What an instrument's port looks like.
 pub(super) const PORT: &str = "the absolute path of a serial port, such as \"/dev/serial/by-id/…\"";
 
-/// Reads an instrument's port: an absolute path.
-pub(super) fn port(entry: &Entry<'_>) -> Option<String> {
+/// The address of a Modbus gateway or instrument on the network.
+fn gateway(entry: &Entry<'_>, text: &str, host: &str) -> Option<String> {
+    let Some((host, port)) = host_port(host, defaults::MODBUS_PORT) else {
+        let says = format!("is {}, which is not a host with a port", quote(text));
+        entry.fault(&says, "tcp://HOST:PORT", "the host's name or address, ':' and a port of 1 to 65535");
+        return None;
+    };
+    Some(if host.contains(':') { format!("tcp://[{host}]:{port}") } else { format!("tcp://{host}:{port}") })
+}
+
+/// Reads an instrument's port: an absolute path, or for Modbus also an address.
+pub(super) fn port(entry: &Entry<'_>, modbus: bool) -> Option<String> {
     let text = entry.text()?;
+    if modbus && let Some(host) = text.strip_prefix("tcp://") {
+        return gateway(entry, text, host);
+    }
     if text.get(..6).is_some_and(|scheme| scheme.eq_ignore_ascii_case("tcp://")) {
         entry.fault(
             "is on the network, and instruments on the network come with a later version",

@@ -10,8 +10,12 @@ use tarecup_core::names::{BenchName, InstrumentName, ProfileName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
 use tarecup_core::soil::uncertainty::Balance;
+use tarecup_drivers::port::pulse::PulseSettings;
 use tarecup_drivers::port::{CharFrame, Flow, PortSettings};
+use tarecup_drivers::pulse::{self, ModemLine};
 
+/// The profile of what the program writes for a switch.
+const CONTACT: &str = "contact-closure";
 /// More instruments than one station can listen to in a sensible way.
 const MOST_INSTRUMENTS: usize = 200;
 
@@ -47,10 +51,13 @@ fn one(table: &Table<'_>, known: &Known<'_>, taken: &mut Taken) -> Option<Instru
         .need("kind", "balance, counter or scanner", "kind = \"balance\" below [[instrument]]")
         .and_then(|e| e.one_of(&InstrumentKind::WORDS));
     let benches = at_benches(table, known.benches, kind);
-    let profile = profile(table, kind, known);
+    let pulse = pulse(table);
+    // A line that is named wrongly is a switch all the same.
+    let switch = table.get("pulse").is_some() && kind.is_none_or(|k| k == InstrumentKind::Counter);
+    let profile = if switch { contact(table, known) } else { profile(table, kind, known) };
     let usual = profile.map(|p| p.usual).unwrap_or_default();
     let port = port(table, taken, usual);
-    let (settle, count) = (settle(table, usual), count(table));
+    let (settle, count) = (settle(table, usual), count(table, usual));
     let grams = |key: &str, what: &str| table.get(key).and_then(|e| e.number(0.0..=10.0, what));
     let weighs = Balance {
         repeatability_g: grams("repeatability_g", "the standard deviation of repeated readings in grams"),
@@ -59,16 +66,9 @@ fn one(table: &Table<'_>, known: &Known<'_>, taken: &mut Taken) -> Option<Instru
     if let Some(kind) = kind {
         not_of_this_kind(table, kind);
     }
-    Some(Instrument {
-        name: name?,
-        kind: kind?,
-        benches: benches?,
-        port: port?,
-        profile: profile?.name.clone(),
-        settle,
-        count,
-        weighs,
-    })
+    let pulse = pulse.and_then(|line| contact_settings(table, line, count));
+    let (name, kind, benches, port, profile) = (name?, kind?, benches?, port?, profile?.name.clone());
+    Some(Instrument { name, kind, benches, port, pulse, profile, settle, count, weighs })
 }
 
 fn name(table: &Table<'_>, taken: &mut Taken) -> Option<InstrumentName> {
@@ -130,7 +130,7 @@ fn port(table: &Table<'_>, taken: &mut Taken, usual: Usual) -> Option<PortSettin
         None => Some(usual.flow.unwrap_or_default()),
     };
     let entry = entry?;
-    let path = address::port(&entry)?;
+    let path = address::port(&entry, usual.modbus)?;
     if let Some(first) = taken.ports.iter().find(|t| t.value == path) {
         let says = format!("is the port of the instrument in line {} too", first.at.line);
         entry.fault(&says, "a port of its own for each instrument", "`tarecup ports`, which lists the ports there are");
@@ -177,6 +177,45 @@ fn profile<'p>(table: &Table<'_>, kind: Option<InstrumentKind>, known: &Known<'p
     Some(found)
 }
 
+/// The line that a switch closes, if there is one.
+fn pulse(table: &Table<'_>) -> Option<ModemLine> {
+    let line = table.get("pulse");
+    if let (None, Some(entry)) = (&line, table.get("bounce_ms")) {
+        entry.fault_of_key(
+            "is of a switch, and there is no pulse",
+            "pulse = \"cts\" with it",
+            "naming the line, or taking this line out",
+        );
+    }
+    line.and_then(|e| e.one_of(&ModemLine::WORDS))
+}
+
+/// A switch speaks one language, that of the program itself.
+fn contact<'p>(table: &Table<'_>, known: &Known<'p>) -> Option<&'p ProfileSource> {
+    if let Some(entry) = table.get("profile").filter(|e| e.quiet_text() != Some(CONTACT)) {
+        entry.fault_of_key("says how lines are read, and a switch sends none", "no profile beside pulse", "taking this line out");
+    }
+    if let Some(entry) = table.get("flow").filter(|e| e.quiet_text() == Some("hardware")) {
+        entry.fault("waits for the very line that the switch closes", "\"none\"", "taking this line out");
+    }
+    known.profiles.values().find(|p| p.name.as_str() == CONTACT)
+}
+
+fn contact_settings(table: &Table<'_>, line: ModemLine, count: CountLimits) -> Option<PulseSettings> {
+    let bounce_ms = match table.get("bounce_ms") {
+        Some(entry) => {
+            let ms: u32 = entry.whole(1..=100, "milliseconds that the switch bounces")?;
+            if ms >= count.debounce_ms {
+                let says = format!("is {ms} ms, no less than debounce_ms ({} ms)", count.debounce_ms);
+                entry.fault(&says, "less than debounce_ms", "20, which is long for a microswitch");
+            }
+            ms
+        }
+        None => pulse::BOUNCE_MS,
+    };
+    Some(PulseSettings { line, bounce_ms })
+}
+
 /// Keys that mean nothing for this kind of instrument.
 fn not_of_this_kind(table: &Table<'_>, kind: InstrumentKind) {
     let foreign: [(&[&str], InstrumentKind); 2] =
@@ -213,8 +252,8 @@ fn settle(table: &Table<'_>, usual: Usual) -> SettleLimits {
     limits
 }
 
-fn count(table: &Table<'_>) -> CountLimits {
-    let mut limits = CountLimits::default();
+fn count(table: &Table<'_>, usual: Usual) -> CountLimits {
+    let mut limits = CountLimits { polled: usual.modbus, ..CountLimits::default() };
     if let Some(ms) = table.get("debounce_ms").and_then(|e| e.whole(1..=400, "milliseconds, less than two drops are apart")) {
         limits.debounce_ms = ms;
     }

@@ -17,6 +17,7 @@ use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits};
 use tarecup_core::soil::uncertainty::Balance;
 use tarecup_drivers::port::PortSettings;
+use tarecup_drivers::port::pulse::PulseSettings;
 
 pub use address::{BrokerUrl, Scheme};
 
@@ -144,6 +145,8 @@ pub struct Instrument {
     pub benches: Vec<BenchName>,
     /// Its port; what the file leaves out is as the profile says.
     pub port: PortSettings,
+    /// The line that a switch closes at each drop (cup counters).
+    pub pulse: Option<PulseSettings>,
     /// What it speaks.
     pub profile: ProfileName,
     /// When a mass is taken (balances).

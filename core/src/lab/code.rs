@@ -3,7 +3,7 @@
 use super::ask::Ask;
 use super::entities::{Bench, Loose, LooseWhat, Pan};
 use super::{Lab, New};
-use crate::fact::{Fact, Intention};
+use crate::fact::{Fact, Intention, Limit};
 use crate::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
 use crate::sense::InputNo;
 use crate::stamp::Stamp;
@@ -11,6 +11,25 @@ use alloc::format;
 use alloc::string::String;
 use alloc::vec;
 use alloc::vec::Vec;
+
+/// Every card that stands for an ask, with what it does in plain words. That of
+/// `+by-` ends with somebody's initials.
+pub const CARDS: [(&str, &str); 14] = [
+    ("+liquid", "this bench works on the liquid limit"),
+    ("+plastic", "this bench works on the plastic limit"),
+    ("+natural", "this bench works on the natural water content"),
+    ("+nothing", "this bench works on nothing in particular"),
+    ("+new-paste", "new paste: no slice was taken of the counts so far"),
+    ("+slid", "the soil slid in the groove: the count does not stand"),
+    ("+tore", "the groove tore: the count does not stand"),
+    ("+undo", "takes back the latest weighing or count"),
+    ("+oven-in", "the container just read goes into the oven"),
+    ("+oven-out", "the container just read comes out of the oven"),
+    ("+no-liquid-limit", "the liquid limit of this specimen is not obtainable"),
+    ("+no-plastic-limit", "the plastic limit of this specimen is not obtainable"),
+    ("+by-", "signs in"),
+    ("+sign-out", "signs out"),
+];
 
 impl Lab {
     pub(super) fn code_read(&self, scanner: &InstrumentName, text: &str, at: &Stamp, input: InputNo) -> Vec<New> {
@@ -112,7 +131,7 @@ impl Lab {
         let current = self.benches.get(bench).and_then(|b| b.intention.as_ref()).map(|w| w.specimen.clone());
         let intend = |intention| match &current {
             Some(specimen) => Ok(self.intend(bench, specimen, intention, None)),
-            None => Err(String::from("no specimen is in work here: read the specimen's code first")),
+            None => Err(no_specimen()),
         };
         let who = self.signed_in(Some(bench));
         let ask = match card {
@@ -125,17 +144,48 @@ impl Lab {
             "tore" => Ask::GrooveTore { bench: bench.clone(), who, why: None },
             "new-paste" => Ask::NewPaste { bench: bench.clone(), who, why: None },
             "sign-out" => Ask::SignOut { bench: bench.clone() },
+            "oven-in" | "oven-out" => return self.oven_card(bench, card == "oven-in", who, at),
+            "no-liquid-limit" | "no-plastic-limit" => {
+                let specimen = current.ok_or_else(no_specimen)?;
+                let limit = if card == "no-liquid-limit" { Limit::Liquid } else { Limit::Plastic };
+                Ask::NotObtainable { specimen, limit, because: String::from("said by its card"), who }
+            }
             other => match other.strip_prefix("by-").map(Operator::new) {
                 Some(Ok(operator)) => Ask::SignIn { bench: bench.clone(), operator },
                 _ => {
                     return Err(format!(
-                        "no card is called \"+{}\": the cards are +liquid, +plastic, +natural, +nothing, +undo, +new-paste, +slid, +tore, +sign-out and +by-INITIALS",
-                        printable(other)
+                        "no card is called \"+{}\": the cards are {} and +by-INITIALS",
+                        printable(other),
+                        CARDS
+                            .map(|(card, _)| card)
+                            .into_iter()
+                            .filter(|card| !card.ends_with('-'))
+                            .collect::<Vec<_>>()
+                            .join(", ")
                     ));
                 }
             },
         };
         self.asked(ask, at).map_err(|r| r.0)
+    }
+
+    /// The container in hand goes into the oven or comes out, and is in hand no longer.
+    fn oven_card(&self, bench: &BenchName, inside: bool, who: Option<Operator>, at: &Stamp) -> Result<Vec<New>, String> {
+        let hand = self.benches.get(bench).and_then(|b| b.hand.as_ref());
+        let Some(hand) = hand else {
+            return Err(String::from("no container is in hand here: read its code first, then the card of the oven"));
+        };
+        let containers = vec![hand.container.clone()];
+        let (ask, why) = match inside {
+            true => (Ask::IntoOven { containers, celsius: None, who: who.clone() }, "it went into the oven"),
+            false => (Ask::OutOfOven { containers, who: who.clone() }, "it came out of the oven"),
+        };
+        let mut facts = self.asked(ask, at).map_err(|r| r.0)?;
+        // What lies on the pan leaves the hand when it is taken off.
+        if hand.weighing.is_none() {
+            facts.push(New::by(who, Fact::HandEmptied { bench: bench.clone(), why: String::from(why) }));
+        }
+        Ok(facts)
     }
 
     pub(super) fn intend(
@@ -152,6 +202,10 @@ impl Lab {
         let who = who.or_else(|| self.signed_in(Some(bench)));
         vec![New::by(who, Fact::IntentionSet { bench: bench.clone(), specimen: specimen.clone(), intention })]
     }
+}
+
+fn no_specimen() -> String {
+    String::from("no specimen is in work here: read the specimen's code first")
 }
 
 /// A text that may hold anything, made fit to be shown.

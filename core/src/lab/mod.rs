@@ -42,6 +42,7 @@ use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 use statistics::Statistics;
 
 pub use advice::{Advice, Slope, Wish};
+pub use code::CARDS;
 pub use guide::Guide;
 pub use loose::LooseThing;
 pub use near::{meant, nearest};

@@ -7,7 +7,8 @@
 //! **Running totals** are believed: a total is the count. The next number counts,
 //! the same number is a double, a jump is so many skipped numbers, a lower number
 //! ends the run by restart and begins the next with that same line, and zero ends
-//! the run. Gaps are told by number alone.
+//! the run. Gaps are told by number alone. Of a counter that is polled, the same
+//! number is no double: it was asked more often than the cup dropped.
 //!
 //! **An end line** ends the run; its final count is believed over what was heard,
 //! and the difference is noted as gaps or doubles. A final count of zero after
@@ -152,7 +153,7 @@ impl Run {
     }
 
     /// A running total that is not below the number so far.
-    fn total_heard(&mut self, n: u32, input: InputNo, at: Stamp) -> Option<Happening> {
+    fn total_heard(&mut self, limits: &CountLimits, n: u32, input: InputNo, at: Stamp) -> Option<Happening> {
         self.last_input = input;
         let covers = self.interrupted.take().is_some();
         // Numbers on both sides of the hole give the drops in between, and so
@@ -160,7 +161,7 @@ impl Run {
         self.holed |= covers && !self.numbered;
         if n == self.number {
             // After an unnumbered drop its number is news, not a double.
-            let again = self.numbered && !covers;
+            let again = self.numbered && !covers && !limits.polled;
             self.doubles = self.doubles.saturating_add(u32::from(again));
             self.numbered = true;
             return None;
@@ -337,7 +338,7 @@ impl Count {
         }
         if let Some(run) = &mut self.run {
             self.listening = None;
-            return run.total_heard(n, input, at);
+            return run.total_heard(&self.limits, n, input, at);
         }
         if self.ended.as_ref().is_some_and(|ended| self.is_repeat(ended, n, &at)) {
             return None;
@@ -382,7 +383,7 @@ impl Count {
     /// polled counter repeats itself within the pause; one that speaks only at a
     /// drop says `1` after a pause because it dropped once more.
     fn is_repeat(&self, ended: &CountRun, n: u32, at: &Stamp) -> bool {
-        let anew = n == 1 && ended.doubles == 0 && passed(&ended.at, at) >= ms(self.limits.pause_ms);
+        let anew = n == 1 && ended.doubles == 0 && !self.limits.polled && passed(&ended.at, at) >= ms(self.limits.pause_ms);
         n == ended.drops && ended.interrupted.is_none() && !anew
     }
 

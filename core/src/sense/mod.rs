@@ -66,11 +66,14 @@ pub struct CountLimits {
     pub pause_ms: u32,
     /// An interval this many percent of the usual one is a gap.
     pub gap_percent: u32,
+    /// The counter is asked in a rhythm of its own: the same total again says nothing.
+    #[serde(skip_serializing_if = "core::ops::Not::not")]
+    pub polled: bool,
 }
 
 impl Default for CountLimits {
     fn default() -> Self {
-        Self { debounce_ms: 150, pause_ms: 5_000, gap_percent: 160 }
+        Self { debounce_ms: 150, pause_ms: 5_000, gap_percent: 160, polled: false }
     }
 }
 

@@ -20,6 +20,7 @@ mod demo;
 mod drill;
 mod files;
 mod import;
+mod labels;
 mod ports;
 mod run;
 mod status;
@@ -95,6 +96,8 @@ enum Verb {
     Verify(verify::VerifyArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
+    /// Write sheets of labels and cards to print.
+    Labels(labels::LabelsArgs),
 }
 
 /// Where things lie.
@@ -129,6 +132,7 @@ pub fn main() -> ExitCode {
         Verb::Drill(args) => drill::run(&args),
         Verb::Backup(args) => backup::backup(&args),
         Verb::Restore(args) => backup::restore(&args),
+        Verb::Labels(args) => labels::run(&args),
     })
 }
 

@@ -3,12 +3,13 @@
 use super::{Profiles, StartError};
 use crate::clock::BootClock;
 use crate::desk::inbox::Inbox;
+use crate::opening;
 use std::sync::Arc;
 use std::time::Duration;
 use tarecup_config::station::Station;
 use tarecup_core::stamp::Stamp;
 use tarecup_drivers::heard::{Clock, Deliver};
-use tarecup_drivers::port::serial::{self, PortTask};
+use tarecup_drivers::port::serial::PortTask;
 use tokio::runtime::Handle;
 
 /// After lines came, the ports are looked at again after this time: lines of
@@ -68,7 +69,7 @@ pub(super) fn open_ports(
     for (id, instrument) in station.instruments.iter().enumerate() {
         if let Some(profile) = profiles.get(instrument.profile.as_str()) {
             let out: Arc<dyn Deliver> = inbox.clone();
-            ports.push(serial::spawn(runtime, id as u16, instrument.port.clone(), Arc::clone(profile), Arc::clone(&clock), out));
+            ports.push(opening::open(runtime, id as u16, instrument, profile, Arc::clone(&clock), out));
         }
     }
     ports

@@ -18,6 +18,7 @@ use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
 use tarecup_core::soil::uncertainty::Balance;
 use tarecup_core::stamp::SECOND_US;
 use tarecup_drivers::port::PortSettings;
+use tarecup_drivers::port::pulse::PulseSettings;
 use tarecup_drivers::profile::{Profile, ProfileText};
 
 /// Compiled profiles by name.
@@ -50,6 +51,8 @@ struct InstrumentKept {
     kind: String,
     benches: Vec<BenchName>,
     port: PortSettings,
+    #[serde(default)]
+    pulse: Option<PulseSettings>,
     profile: String,
     settle: SettleLimits,
     count: CountLimits,
@@ -78,6 +81,7 @@ impl Kept {
             kind: i.kind.word().into(),
             benches: i.benches.clone(),
             port: i.port.clone(),
+            pulse: i.pulse,
             profile: i.profile.as_str().into(),
             settle: i.settle,
             count: i.count,
@@ -154,7 +158,7 @@ impl InstrumentKept {
             port: self.port.path.clone(),
             settle: self.settle,
             count: self.count,
-            streams: time_passes && balance && self.settle.talks == Talks::Continuous,
+            streams: time_passes && (profile.modbus().is_some() || (balance && self.settle.talks == Talks::Continuous)),
             decode: Box::new(move |bytes| decoder.decode(bytes)),
         }
     }

@@ -3,8 +3,11 @@
 mod ask;
 mod hold;
 pub mod list;
+pub mod modbus;
 mod open;
+pub mod pulse;
 pub mod serial;
+mod tape;
 
 use serde::{Deserialize, Serialize};
 

@@ -44,6 +44,10 @@ pub struct PortTask {
 }
 
 impl PortTask {
+    /// A task that ends when `stop` says so.
+    pub(super) fn new(stop: watch::Sender<bool>, task: JoinHandle<()>) -> Self {
+        Self { stop, task }
+    }
     /// Asks the port to close. What was read is still delivered.
     pub fn stop(&self) {
         self.stop.send_replace(true);
@@ -272,7 +276,7 @@ impl Port {
 }
 
 /// Returns when the task is to stop, also because nobody can stop it any more.
-async fn stopped(stop: &mut watch::Receiver<bool>) {
+pub(super) async fn stopped(stop: &mut watch::Receiver<bool>) {
     let _ = stop.wait_for(|stop| *stop).await;
 }
 

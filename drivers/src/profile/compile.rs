@@ -1,8 +1,9 @@
 //! From a profile as written to one that can be run, or a pointed fault.
 
-use super::text::{BasisWord, LineText, Means, ProfileText};
+use super::text::{BasisWord, FrameText, LineText, Means, ProfileText};
 use super::{Ask, Groups, Kind, Line, LineMeans, Profile, Talks, guess};
 use crate::frame::{Framing, LONGEST_DEFAULT};
+use crate::modbus;
 use regex::bytes::{Regex, RegexBuilder};
 use tarecup_core::names;
 use tarecup_core::quantity::{LARGEST, Mass, MassUnit, UG_PER_G};
@@ -35,11 +36,18 @@ pub(super) fn compile(text: ProfileText) -> Result<Profile, ProfileFault> {
     if let Some(name) = &text.name {
         names::check(name).map_err(|e| ProfileFault { key: "name".into(), says: e.to_string() })?;
     }
+    let unit = unit(&text)?;
+    let largest = largest(&text)?;
+    if let Some(modbus) = &text.modbus {
+        no_lines(&text)?;
+        let plan = modbus::text::compile(modbus, text.kind, unit)?;
+        let (framing, talks) = (framing_unused()?, talks(&text, true)?);
+        serial(&text)?;
+        return Ok(Profile { framing, lines: vec![], unit, largest, talks, ask: None, modbus: Some(plan), text });
+    }
     let framing = framing(&text)?;
     let ask = ask(&text)?;
     let talks = talks(&text, ask.is_some())?;
-    let unit = unit(&text)?;
-    let largest = largest(&text)?;
     check_digits(&text)?;
     if text.line.is_empty() {
         return fault("line", "there is no line pattern; add a [[line]] with a pattern");
@@ -59,12 +67,32 @@ pub(super) fn compile(text: ProfileText) -> Result<Profile, ProfileFault> {
         };
         return fault("line", format!("no line says what a {} is for; it needs {wants}", text.kind.word()));
     }
-    if let Some(serial) = &text.serial
-        && serial.baud == Some(0)
-    {
-        return fault("serial.baud", "0 baud would hang up; write the instrument's speed, such as 9600");
+    serial(&text)?;
+    Ok(Profile { framing, lines, unit, largest, talks, ask, modbus: None, text })
+}
+
+/// Keys of an instrument that sends lines.
+fn no_lines(text: &ProfileText) -> Result<(), ProfileFault> {
+    let of_lines = [
+        ("line", !text.line.is_empty()),
+        ("frame", text.frame != FrameText::default()),
+        ("ask", text.ask.is_some()),
+        ("check", text.check.is_some()),
+        ("basis", !text.basis.is_empty()),
+    ];
+    match of_lines.into_iter().find(|(_, given)| *given) {
+        Some((key, _)) => fault(key, "an instrument that is read over [modbus] sends no lines; leave it out"),
+        None => Ok(()),
     }
-    Ok(Profile { framing, lines, unit, largest, talks, ask, text })
+}
+
+fn serial(text: &ProfileText) -> Result<(), ProfileFault> {
+    match &text.serial {
+        Some(serial) if serial.baud == Some(0) => {
+            fault("serial.baud", "0 baud would hang up; write the instrument's speed, such as 9600")
+        }
+        _ => Ok(()),
+    }
 }
 
 fn framing(text: &ProfileText) -> Result<Framing, ProfileFault> {
@@ -77,6 +105,12 @@ fn framing(text: &ProfileText) -> Result<Framing, ProfileFault> {
     }
     let longest = frame.longest.unwrap_or(LONGEST_DEFAULT);
     Framing::new(&ends, frame.starts.as_bytes(), frame.single.as_bytes(), frame.tail, longest)
+        .map_err(|e| ProfileFault { key: "frame".into(), says: e.to_string() })
+}
+
+/// A profile without lines never cuts frames.
+fn framing_unused() -> Result<Framing, ProfileFault> {
+    Framing::new(&[b"\n".to_vec()], b"", b"", 0, LONGEST_DEFAULT)
         .map_err(|e| ProfileFault { key: "frame".into(), says: e.to_string() })
 }
 

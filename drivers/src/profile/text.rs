@@ -1,6 +1,7 @@
 //! A profile as it is written in a file. Unknown keys are refused by the reader.
 
 use super::{Kind, Talks};
+use crate::modbus::text::ModbusText;
 use crate::port::{CharFrame, Flow};
 use serde::{Deserialize, Serialize};
 use std::collections::BTreeMap;
@@ -30,9 +31,14 @@ pub struct ProfileText {
     #[serde(default, skip_serializing_if = "BTreeMap::is_empty")]
     pub basis: BTreeMap<String, BasisWord>,
     /// How frames begin and end.
+    #[serde(default, skip_serializing_if = "FrameText::is_default")]
     pub frame: FrameText,
     /// Line patterns, tried in order.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub line: Vec<LineText>,
+    /// Registers, for an instrument that is read over Modbus instead of sending lines.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub modbus: Option<ModbusText>,
     /// Check digits after the terminator.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub check: Option<CheckText>,
@@ -63,6 +69,12 @@ pub struct FrameText {
     /// Longest frame in bytes; by default 256.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub longest: Option<usize>,
+}
+
+impl FrameText {
+    fn is_default(&self) -> bool {
+        *self == Self::default()
+    }
 }
 
 /// A line pattern, as written.
