@@ -174,7 +174,7 @@ fn wrong_instruments_are_pointed_at() {
         ("bench", "bench = [\"bench-1\", @@\"bench-1\"]", &["twice"]),
         ("bench", "bench = @@[]", &["empty list"]),
         ("port", "port = @@\"ttyUSB0\"", &["not an absolute path", "tarecup ports"]),
-        ("port", "port = @@\"tcp://10.0.0.9:4001\"", &["later version", "socat", "port = \"/run/pan-1\""]),
+        ("port", "port = @@\"tcp://10.0.0.9\"", &["no host with a port", "tcp://HOST:PORT", "tcp://10.0.0.7:4001"]),
         ("port", "port = @@\"TCP://\"", &["later version", "socat"]),
         ("baud", "baud = @@0", &["is 0", "50 to 4000000"]),
         ("baud", "baud = @@\"9600\"", &["a text in quotes", "without point or quotes"]),

@@ -1,10 +1,14 @@
 //! Ports: open, read, lose, reopen.
 
 mod ask;
+mod doubt;
 mod hold;
+mod link;
 pub mod list;
 mod open;
+pub mod place;
 pub mod serial;
+pub mod tcp;
 
 use serde::{Deserialize, Serialize};
 
@@ -71,7 +75,7 @@ pub enum Flow {
 /// Where an instrument is connected and how its line is set.
 #[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
 pub struct PortSettings {
-    /// Path of the port.
+    /// Path of the port, or `tcp://host:port`.
     pub path: String,
     /// Speed in baud.
     pub baud: u32,
