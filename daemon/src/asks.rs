@@ -19,6 +19,8 @@ pub enum Wanted {
     Write(Ask),
     /// Something that only reads.
     Read(Read),
+    /// A person says that the instrument behind a port in doubt is the one of this name.
+    Confirm(String),
 }
 
 /// Asks that only read.
@@ -80,9 +82,32 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
         Some(read) => Wanted::Read(read),
+        None if object.get("ask").is_some_and(|word| word == CONFIRM) => Wanted::Confirm(confirm(&object)?),
         None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| format!("the ask cannot be done: {e}"))?),
     };
     Ok(Asked { id, wanted, body })
+}
+
+const CONFIRM: &str = "confirm_port";
+
+/// Which instrument a confirming ask names.
+fn confirm(object: &Map<String, Value>) -> Result<String, String> {
+    if let Some(other) = object.keys().find(|k| !["ask", "instrument", "who"].contains(&k.as_str())) {
+        return Err(format!("\"{CONFIRM}\" has instrument and who, and no \"{other}\""));
+    }
+    let text = |name: &str| object.get(name).and_then(Value::as_str).filter(|t| !t.is_empty() && t.len() <= 64);
+    match (text("instrument"), text("who")) {
+        (Some(instrument), Some(_)) => Ok(instrument.to_owned()),
+        _ => Err(format!("\"{CONFIRM}\" needs the texts \"instrument\" and \"who\"")),
+    }
+}
+
+/// The instrument that the body of an ask confirms, if it is such an ask.
+pub fn confirmed(body: &str) -> Option<String> {
+    match serde_json::from_str(body) {
+        Ok(Value::Object(object)) if object.get("ask").is_some_and(|word| word == CONFIRM) => confirm(&object).ok(),
+        _ => None,
+    }
 }
 
 fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
@@ -148,6 +173,8 @@ mod tests {
             (r#"{"ask":"sign_in","bench":"north","operator":"AB","pin":"1234"}"#, "cannot be done"),
             (r#"{"ask":"facts_after","seq":-1}"#, "whole number"),
             (r#"{"ask":"status","ask_id":""}"#, "1 to 64"),
+            (r#"{"ask":"confirm_port","instrument":"pan-1"}"#, "\"who\""),
+            (r#"{"ask":"confirm_port","instrument":"pan-1","who":"AB","pin":"1"}"#, "no \"pin\""),
         ] {
             let says = parse(text).expect_err(text);
             assert!(says.contains(words), "{text}: {says}");

@@ -18,6 +18,7 @@ mod check;
 mod demo;
 mod files;
 mod ports;
+mod replay;
 mod run;
 mod status;
 mod tell;
@@ -78,6 +79,8 @@ enum Verb {
     Status(status::StatusArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
+    /// Play a recording through the whole program, in the time of the recording.
+    Replay(replay::ReplayArgs),
 }
 
 /// Where things lie.
@@ -106,6 +109,7 @@ pub fn main() -> ExitCode {
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
+        Verb::Replay(args) => replay::run(&args, cli.log),
     })
 }
 

@@ -140,9 +140,23 @@ impl Desk {
             "state": ear.connection, "port_open": ear.port_open, "detail": state.and_then(|s| s.detail.clone()),
             "since": state.and_then(|s| s.since).map(|s| s.rfc3339()),
             "last_heard": ear.last_heard.map(|s| s.rfc3339()),
+            "stale": ear.stale(), "unconfirmed": ear.unconfirmed,
+            "live": ear.reading.map(|(reading, at)| json!({
+                "mass_g": reading.mass.grams(), "steady": reading.mark, "basis": reading.basis, "at": at.rfc3339(), "stale": ear.stale(),
+            })),
             "lines": ear.understood, "rejects": ear.rejects, "last_reject": ear.last_reject,
             "overrun_lines": state.map_or(0, |s| s.overrun_lines),
         })
+    }
+
+    /// Ports that are there and that no instrument of the settings has.
+    pub(super) fn offer_view(&self, at: &Stamp) -> Value {
+        let ports = self.beside.get(super::OFFERS).cloned().unwrap_or_else(|| json!([]));
+        json!({"v": V, "seq": self.next_seq - 1, "at": at.rfc3339(), "ports": ports})
+    }
+
+    pub(super) fn offer_topic(&self, at: &Stamp) -> super::Publish {
+        super::Publish { topic: String::from("offer"), payload: Some(super::group::payload(&self.offer_view(at))) }
     }
 
     /// Presence, as it is published.
@@ -213,6 +227,7 @@ impl Desk {
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_things().count(),
             "instruments": instruments, "benches": benches,
+            "offers": self.beside.get(super::OFFERS), "recording": self.beside.get("recording"), "unread": self.beside.get("unread"),
         })
     }
 }

@@ -1,10 +1,13 @@
 //! Puts the parts together: ports, desk, ledger, broker, courier, local socket.
 
 mod broker;
+mod offers;
 mod outlet;
 mod ports;
 
 pub use broker::fact_payload;
+pub use offers::told_of;
+pub use ports::Beside;
 
 use crate::clock::{BootClock, boot_id};
 use crate::desk::inbox::Inbox;
@@ -16,7 +19,7 @@ use crate::{asks, socket};
 use broker::{SharedCourier, courier_settings, start_courier};
 use bytes::Bytes;
 use outlet::Outlet;
-use ports::{PortsThread, open_ports};
+use ports::{Aids, Doors, PortsThread, open_ports};
 use serde_json::json;
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
@@ -76,6 +79,9 @@ pub enum StartError {
         /// Why.
         error: std::io::Error,
     },
+    /// A folder to record to.
+    #[error("{0}")]
+    Record(String),
     /// The system.
     #[error("the system gives no thread or timer: {0}")]
     System(std::io::Error),
@@ -102,6 +108,8 @@ pub struct Plan {
     pub tap: Option<Tap>,
     /// Sees facts.
     pub told: Option<Told>,
+    /// What goes on beside the ports.
+    pub beside: Beside,
 }
 
 /// The running service.
@@ -119,12 +127,13 @@ pub struct Service {
     broker_name: String,
     clock: Arc<dyn BootClock>,
     state_dir: PathBuf,
+    aids: Aids,
 }
 
 impl Service {
     /// Starts everything. Nothing runs when it fails.
     pub fn start(plan: Plan) -> Result<Service, StartError> {
-        let Plan { station, state_dir, clock, time_passes, any_broker_port, tap, told } = plan;
+        let Plan { station, state_dir, clock, time_passes, any_broker_port, tap, told, beside } = plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
         let inbox = Inbox::new();
@@ -137,6 +146,7 @@ impl Service {
             clock.set_boot(boot);
             clock.now()
         };
+        let settings_text = setup.settings.clone();
         let (desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
@@ -147,6 +157,8 @@ impl Service {
         let broker_name = format!("{}:{}", settings.host, settings.port);
         let courier: SharedCourier = Arc::default();
         start_courier(settings.clone(), &desk, &state_dir, &inbox, &courier, &net_runtime)?;
+        let aids = Aids::start(beside, &station, &settings_text, &state_dir, &clock, &inbox, time_passes)?;
+        let doors = Doors::default();
         let outlet = Outlet {
             settings,
             ledger: desk.ledger_name(),
@@ -155,6 +167,7 @@ impl Service {
             tap,
             told,
             clock: clock.clone(),
+            doors: doors.clone(),
         };
         outlet.hand_on(&desk, first);
         let listener = {
@@ -165,7 +178,7 @@ impl Service {
         let seat_settings = SeatSettings { clock: clock.clone(), time_passes };
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
-        let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox);
+        let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox, &aids, &doors);
         Ok(Service {
             seat,
             ports,
@@ -183,6 +196,7 @@ impl Service {
             broker_name,
             clock,
             state_dir,
+            aids,
         })
     }
 
@@ -252,6 +266,7 @@ impl Service {
     /// Stops in order: ports close, the desk stores what it has, the broker hears of it.
     pub fn stop(self) -> bool {
         self.ports_thread.stop(self.ports);
+        self.aids.stop();
         let desk = self.seat.stop();
         let orderly = desk.as_ref().is_some_and(Desk::stopped);
         let presence = desk.as_ref().map(|d| Bytes::from(d.presence("stopped", &self.clock.now()).to_string()));

@@ -86,6 +86,11 @@ impl PortTask {
     pub fn confirm(&self) {
         self.confirm.send_modify(|n| *n += 1);
     }
+    /// What [`PortTask::confirm`] does, for whoever does not own the task.
+    pub fn confirmer(&self) -> impl Fn() + Send + Sync + 'static {
+        let confirm = self.confirm.clone();
+        move || confirm.send_modify(|n| *n += 1)
+    }
     /// Asks the port to close. What was read is still delivered.
     pub fn stop(&self) {
         self.stop.send_replace(true);
@@ -152,8 +157,8 @@ pub fn spawn_with(
     PortTask { stop, confirm, task: rt.spawn(port.run()) }
 }
 
-/// The longest line of the dialect, half as long again, in the time of its speed.
-fn unended(settings: &PortSettings, profile: &Profile) -> Duration {
+/// How long a line without its end is waited for: the longest of the dialect, half as long again, in the time of its speed.
+pub fn unended(settings: &PortSettings, profile: &Profile) -> Duration {
     let bits = 15 * profile.framing().longest() as u64;
     UNENDED.max(Duration::from_millis(bits * 1_000 / u64::from(settings.baud.max(1))))
 }

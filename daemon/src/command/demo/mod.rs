@@ -150,6 +150,7 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
         any_broker_port: args.mqtt.is_none(),
         tap: args.json.then(json_tap),
         told: Some(teller(args.json, Arc::clone(&results))),
+        beside: Default::default(),
     };
     let service = Service::start(plan).map_err(|e| e.to_string())?;
     greet(args, &scenario, &service);
