@@ -57,7 +57,8 @@ fn what_cannot_be_connected_says_what_to_try() {
     ] {
         ports.push(service.port(id, path, &signed_steady()));
         service.sink.until("a refusal in words", |t| {
-            let says = |s: &PortState| matches!(s, PortState::Refused(w) if w.starts_with(path) && words.iter().all(|x| w.contains(x)));
+            let says =
+                |s: &PortState| matches!(s, PortState::Refused(w) if w.starts_with(path) && words.iter().all(|x| w.contains(x)));
             t.states.iter().any(|s| s.0 == id && says(&s.1))
         });
     }

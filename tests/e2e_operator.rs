@@ -115,9 +115,14 @@ impl Station {
     }
 
     pub fn start(&self) {
+        self.start_with(&[]);
+    }
+
+    /// Starts with more arguments.
+    pub fn start_with(&self, more: &[&str]) {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
         let mut command = self.command();
-        *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
+        *self.child.lock().expect("child") = Some(Running::start(command.args(more).stdout(Stdio::null()).stderr(log)));
     }
 
     pub fn kill9(&self) {

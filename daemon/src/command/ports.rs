@@ -1,9 +1,9 @@
 //! `tarecup ports`: which serial ports are there, and who uses them?
 
 use crate::service::told_of;
-use tarecup_drivers::port::place::Machine;
-use tarecup_drivers::port::list::{Found, list_on};
 use std::path::PathBuf;
+use tarecup_drivers::port::list::{Found, list_on};
+use tarecup_drivers::port::place::Machine;
 
 /// Arguments of `ports`.
 #[derive(clap::Args)]

@@ -83,7 +83,12 @@ fn compare(lines: &[String], expected: &str) -> u8 {
         return 0;
     };
     let line = |text: Option<&str>| text.unwrap_or("(nothing more)").to_owned();
-    eprintln!("line {} is different\n  expected {}\n  played   {}", n + 1, line(expected.get(n).copied()), line(lines.get(n).map(String::as_str)));
+    eprintln!(
+        "line {} is different\n  expected {}\n  played   {}",
+        n + 1,
+        line(expected.get(n).copied()),
+        line(lines.get(n).map(String::as_str))
+    );
     FAILED
 }
 

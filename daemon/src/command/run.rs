@@ -69,7 +69,11 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         Ok(service) => service,
         Err(e) => {
             eprintln!("{e}");
-            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_) | StartError::Record(_)) { WRONG_INPUT } else { FAILED };
+            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_) | StartError::Record(_)) {
+                WRONG_INPUT
+            } else {
+                FAILED
+            };
         }
     };
     tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), "recording");

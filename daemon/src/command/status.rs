@@ -112,7 +112,8 @@ fn beside(s: &Value) -> String {
     }
     for port in s["offers"].as_array().into_iter().flatten() {
         let holder = port["held_by"].as_str().map(|h| format!(" · in use by {h}")).unwrap_or_default();
-        out += &format!("not in use   {} {}{holder}\n", port["port"].as_str().unwrap_or("-"), port["about"].as_str().unwrap_or(""));
+        out +=
+            &format!("not in use   {} {}{holder}\n", port["port"].as_str().unwrap_or("-"), port["about"].as_str().unwrap_or(""));
     }
     out
 }

@@ -27,7 +27,8 @@ const STRANGE_FEW: u32 = 2;
 const CRACKLE: usize = 2;
 
 /// Said of a balance that should speak all the time.
-const NOTHING_CAME: &str = "its port is open and nothing has come; is it switched on, is the cable whole, and does it send without being asked?";
+const NOTHING_CAME: &str =
+    "its port is open and nothing has come; is it switched on, is the cable whole, and does it send without being asked?";
 
 /// Where a sense stood after its last fact; stored with that fact.
 #[derive(Clone, Debug, Default, Serialize, Deserialize)]
@@ -316,7 +317,13 @@ impl Ear {
             _ => None,
         };
         let flood = self.flood.due_in_us(now).filter(|_| self.flood.owes());
-        pause.into_iter().chain(self.silent_in_us(now)).chain(self.strange_in_us(now)).chain(self.nothing_in_us(now)).chain(flood).min()
+        pause
+            .into_iter()
+            .chain(self.silent_in_us(now))
+            .chain(self.strange_in_us(now))
+            .chain(self.nothing_in_us(now))
+            .chain(flood)
+            .min()
     }
 
     /// A mass was taken: this is where the sense stands.

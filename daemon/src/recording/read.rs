@@ -108,7 +108,10 @@ impl Recording {
         let fault = |says: String| ReadFault { path: path.clone(), says };
         let head: Head = serde_json::from_str(&text(&path)?).map_err(|e| fault(format!("is no head of a recording: {e}")))?;
         if head.format != FORMAT || head.v != VERSION {
-            return Err(fault(format!("is '{}' version {}; this program plays '{FORMAT}' version {VERSION}", head.format, head.v)));
+            return Err(fault(format!(
+                "is '{}' version {}; this program plays '{FORMAT}' version {VERSION}",
+                head.format, head.v
+            )));
         }
         let settings: Settings = Settings::deserialize(&head.settings).map_err(|e| fault(format!("settings: {e}")))?;
         if settings.instruments.len() > MOST {

@@ -83,7 +83,12 @@ mod tests {
 
     fn grams(g: i64) -> Batch {
         let step = Mass::from_ug(1_000);
-        batch(What::Signal(Signal::Mass(Reading { mass: Mass::from_ug(g * 1_000_000), step, mark: Mark::Unmarked, basis: Basis::Unmarked })))
+        batch(What::Signal(Signal::Mass(Reading {
+            mass: Mass::from_ug(g * 1_000_000),
+            step,
+            mark: Mark::Unmarked,
+            basis: Basis::Unmarked,
+        })))
     }
 
     #[test]

@@ -46,7 +46,8 @@ pub fn list_on(machine: &Machine) -> Vec<Found> {
 
 /// Changes whenever a port may have come or gone; cheap enough to be asked every second.
 pub fn mark(machine: &Machine) -> [Option<std::time::SystemTime>; 3] {
-    ["", "serial/by-id", "serial/by-path"].map(|folder| std::fs::metadata(machine.dev.join(folder)).and_then(|m| m.modified()).ok())
+    ["", "serial/by-id", "serial/by-path"]
+        .map(|folder| std::fs::metadata(machine.dev.join(folder)).and_then(|m| m.modified()).ok())
 }
 
 fn about(kind: &SerialPortType) -> String {

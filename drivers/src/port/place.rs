@@ -112,7 +112,9 @@ mod tests {
     #[test]
     fn numbers_are_believed_only_when_nobody_shares_them() {
         let root = tempfile::tempdir().expect("a folder");
-        for (name, socket, number) in [("a", "1", Some("77\n")), ("b", "2", Some("0001")), ("c", "3", Some("0001")), ("d", "4", None)] {
+        for (name, socket, number) in
+            [("a", "1", Some("77\n")), ("b", "2", Some("0001")), ("c", "3", Some("0001")), ("d", "4", None)]
+        {
             plug(root.path(), name, socket, number);
         }
         let machine = Machine::below(root.path());

@@ -149,11 +149,25 @@ mod tests {
 
     #[test]
     fn addresses_are_read_strictly() {
-        let good = [("tcp://pan-1.lab:4001", ("pan-1.lab", 4001)), ("tcp://[::1]:9", ("::1", 9)), ("tcp://10.0.0.7:65535", ("10.0.0.7", 65535))];
+        let good = [
+            ("tcp://pan-1.lab:4001", ("pan-1.lab", 4001)),
+            ("tcp://[::1]:9", ("::1", 9)),
+            ("tcp://10.0.0.7:65535", ("10.0.0.7", 65535)),
+        ];
         for (path, wanted) in good {
             assert_eq!(host_port(path), Some(wanted), "{path}");
         }
-        for path in ["tcp://host", "tcp://:1", "tcp://h:0", "tcp://h:65536", "tcp://h:+1", "tcp://::1:9", "tcp://[x]:9", "udp://h:1", "tcp://u@h:1"] {
+        for path in [
+            "tcp://host",
+            "tcp://:1",
+            "tcp://h:0",
+            "tcp://h:65536",
+            "tcp://h:+1",
+            "tcp://::1:9",
+            "tcp://[x]:9",
+            "udp://h:1",
+            "tcp://u@h:1",
+        ] {
             assert_eq!(host_port(path), None, "{path}");
         }
     }
