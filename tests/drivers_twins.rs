@@ -28,7 +28,7 @@ fn open(
     let sink = Arc::clone(&learned);
     let extras = Extras {
         machine: Machine::below(bench.root.path()),
-        socket: known.map(String::from),
+        known_by: known.map(String::from),
         learned: Some(Arc::new(move |_, socket| sink.lock().expect("sockets").push(socket.into()))),
         unguarded,
         ..Extras::default()
@@ -139,7 +139,14 @@ fn an_adapter_with_a_number_of_its_own_may_move_and_twins_are_listed_by_socket()
     bench.unplug("left");
     bench.plug("third", "77");
     bench.claim("third");
-    service.sink.until("moved", |_| learned.lock().expect("sockets").last().is_some_and(|s| s == "third"));
-    service.sink.until_state(1, &PortState::Opened);
+    let opened = |t: &Took| t.states.iter().filter(|s| s.1 == PortState::Opened).count();
+    service.sink.until("opened again without a question", |t| opened(t) == 2);
+    assert_eq!(*learned.lock().expect("adapters"), ["number 77"]);
+    // Control: another number under the same name is asked about.
+    bench.plug("left", "88");
+    bench.claim("left");
+    bench.unplug("third");
+    let asked = |s: &PortState| matches!(s, PortState::Unconfirmed(w) if w.contains("number 77") && w.contains("number 88"));
+    service.sink.until("the question", |t| t.states.last().is_some_and(|s| asked(&s.1)));
     service.stop(vec![port]);
 }

@@ -182,7 +182,7 @@ fn made(bench: Bench, known: Option<&str>) -> Made {
     std::fs::write(&path, config).expect("written");
     std::fs::create_dir_all(&state).expect("a folder");
     if let Some(socket) = known {
-        std::fs::write(state.join("sockets.json"), json!({"pan-1": socket}).to_string()).expect("written");
+        std::fs::write(state.join("adapters.json"), json!({"pan-1": socket}).to_string()).expect("written");
     }
     let mut command = Command::new(TARECUP);
     command.args(["run", "--config"]).arg(&path).arg("--state").arg(&state).arg("--machine").arg(bench.root.path());
@@ -229,7 +229,7 @@ fn a_twin_at_another_socket_is_asked_about_across_a_restart_and_records_nothing_
     assert_eq!(made.weighed(), 0, "the print that confirmed is no weighing");
     made.bench.say("right", b"G      23.46 g\r\n");
     until("a mass", PATIENCE, || made.weighed() == 1);
-    let kept = || std::fs::read_to_string(made.state.join("sockets.json")).unwrap_or_default();
+    let kept = || std::fs::read_to_string(made.state.join("adapters.json")).unwrap_or_default();
     until("remembered", PATIENCE, || kept().contains("right"));
     // Control: where nothing is in doubt, there is nothing to confirm.
     let again = tarecup(&confirm);

@@ -1,5 +1,5 @@
 //! Looks after what lies beside the ports: which ports are there that nobody
-//! uses, and at which socket each instrument's adapter was last accepted.
+//! uses, and what each instrument's adapter was known by when it was accepted.
 
 use crate::desk::OFFERS;
 use crate::desk::inbox::Inbox;
@@ -23,20 +23,20 @@ const AGAIN: Duration = Duration::from_secs(30);
 /// More ports than that are not told one by one.
 const MOST: usize = 64;
 
-/// The file of sockets in the state directory.
-pub(super) struct Sockets {
+/// The file of what adapters are known by, in the state directory.
+pub(super) struct Adapters {
     path: PathBuf,
     names: Vec<String>,
     known: BTreeMap<String, String>,
 }
 
-impl Sockets {
+impl Adapters {
     /// What was known when the service last ran. Without the file, each adapter is taken as it is found.
     pub(super) fn load(state_dir: &Path, names: Vec<String>) -> Self {
-        let path = state_dir.join("sockets.json");
+        let path = state_dir.join("adapters.json");
         let known = match std::fs::read(&path) {
             Ok(text) => serde_json::from_slice(&text).unwrap_or_else(|e| {
-                tracing::warn!(path = %path.display(), error = %e, "the sockets of adapters without serial numbers are forgotten");
+                tracing::warn!(path = %path.display(), error = %e, "what adapters were known by is forgotten; each is taken as it is found");
                 BTreeMap::new()
             }),
             Err(_) => BTreeMap::new(),
@@ -48,11 +48,11 @@ impl Sockets {
         self.known.get(name).cloned()
     }
 
-    fn learn(&mut self, id: InstrumentId, socket: String) {
+    fn learn(&mut self, id: InstrumentId, known_by: String) {
         if let Some(name) = self.names.get(usize::from(id)) {
-            self.known.insert(name.clone(), socket);
+            self.known.insert(name.clone(), known_by);
             if let Err(e) = self.store() {
-                tracing::warn!(path = %self.path.display(), error = %e, "where an adapter is plugged in could not be kept");
+                tracing::warn!(path = %self.path.display(), error = %e, "what an adapter is known by could not be kept");
             }
         }
     }
@@ -65,23 +65,23 @@ impl Sockets {
 }
 
 /// The thread that looks after them; it ends when nobody can tell it anything any more.
-pub(super) fn start(machine: Machine, ports: Vec<String>, sockets: Sockets, inbox: &Arc<Inbox>) -> std::io::Result<Learned> {
+pub(super) fn start(machine: Machine, ports: Vec<String>, adapters: Adapters, inbox: &Arc<Inbox>) -> std::io::Result<Learned> {
     let (tell, told) = channel();
     let inbox = Arc::clone(inbox);
-    let watch = Watch { machine, ports, sockets, inbox };
+    let watch = Watch { machine, ports, adapters, inbox };
     std::thread::Builder::new().name("offers".into()).spawn(move || watch.work(&told))?;
     Ok(learned(tell))
 }
 
-/// How ports tell of a socket, from whichever thread they run on.
+/// How ports tell of an adapter, from whichever thread they run on.
 fn learned(tell: Sender<(InstrumentId, String)>) -> Learned {
-    Arc::new(move |id, socket| drop(tell.send((id, socket.to_owned()))))
+    Arc::new(move |id, known_by| drop(tell.send((id, known_by.to_owned()))))
 }
 
 struct Watch {
     machine: Machine,
     ports: Vec<String>,
-    sockets: Sockets,
+    adapters: Adapters,
     inbox: Arc<Inbox>,
 }
 
@@ -100,7 +100,7 @@ impl Watch {
                 self.offer(&mut offered);
             }
             match told.recv_timeout(LOOK) {
-                Ok((id, socket)) => self.sockets.learn(id, socket),
+                Ok((id, known_by)) => self.adapters.learn(id, known_by),
                 Err(RecvTimeoutError::Timeout) => (),
                 Err(RecvTimeoutError::Disconnected) => return,
             }

@@ -1,6 +1,6 @@
 //! The thread that drives all ports, and what is opened on it.
 
-use super::offers::{self, Sockets};
+use super::offers::{self, Adapters};
 use super::{Profiles, StartError};
 use crate::clock::BootClock;
 use crate::desk::inbox::Inbox;
@@ -72,11 +72,11 @@ pub struct Beside {
     pub machine: Machine,
 }
 
-/// Recordings, offers, and what is known of sockets.
+/// Recordings, offers, and what is known of adapters.
 pub(super) struct Aids {
     recorders: Vec<Arc<Recorder>>,
     machine: Machine,
-    sockets: Vec<Option<String>>,
+    adapters: Vec<Option<String>>,
     learned: Option<Learned>,
 }
 
@@ -101,13 +101,13 @@ impl Aids {
         if let Some(recorder) = recorders.first().cloned() {
             inbox.overhear(Box::new(move |client, body| recorder.asked(client, body)));
         }
-        let sockets = Sockets::load(state_dir, names.clone());
-        let known = names.iter().map(|n| sockets.of(n)).collect();
+        let adapters = Adapters::load(state_dir, names.clone());
+        let known = names.iter().map(|n| adapters.of(n)).collect();
         let ports = station.instruments.iter().map(|i| i.port.path.clone()).collect();
         // A virtual day has simulated instruments only.
-        let learned = time_passes.then(|| offers::start(beside.machine.clone(), ports, sockets, inbox)).transpose();
+        let learned = time_passes.then(|| offers::start(beside.machine.clone(), ports, adapters, inbox)).transpose();
         let learned = learned.map_err(StartError::System)?;
-        Ok(Self { recorders, machine: beside.machine, sockets: known, learned })
+        Ok(Self { recorders, machine: beside.machine, adapters: known, learned })
     }
 
     fn extras(&self, id: usize) -> Extras {
@@ -115,7 +115,7 @@ impl Aids {
         Extras {
             overhear: all.map(|r| r as Arc<dyn Overhear>),
             machine: self.machine.clone(),
-            socket: self.sockets.get(id).cloned().flatten(),
+            known_by: self.adapters.get(id).cloned().flatten(),
             learned: self.learned.clone(),
             unguarded: false,
         }

@@ -1,5 +1,6 @@
 //! A port that may be another instrument than the one meant: an adapter
-//! without a serial number that came back at another socket. It is listened
+//! without a serial number that came back at another socket, or one with
+//! another number under the same name. It is listened
 //! to, and nothing it says is passed on, until a person has said that it is
 //! the one and it was seen to answer to that person's hand.
 
@@ -17,8 +18,8 @@ const CHANGE: Mass = Mass::from_ug(500_000);
 /// What is in doubt.
 #[derive(Debug)]
 pub(super) struct Doubt {
-    /// The socket it is at now.
-    pub socket: String,
+    /// What it is known by now.
+    pub known_by: String,
     /// The balance sends without being touched: a line alone proves nothing.
     streams: bool,
     window: Option<Window>,
@@ -31,8 +32,8 @@ struct Window {
 }
 
 impl Doubt {
-    pub(super) fn new(socket: &str, streams: bool) -> Self {
-        Self { socket: socket.into(), streams, window: None }
+    pub(super) fn new(known_by: &str, streams: bool) -> Self {
+        Self { known_by: known_by.into(), streams, window: None }
     }
 
     /// A person says that this is the one, and touches it next.
@@ -65,7 +66,7 @@ impl Doubt {
 /// What is said of such a port; the way to confirm it is added by whoever knows the instrument's name.
 pub(super) fn words(before: &str, now: &str) -> String {
     format!(
-        "its adapter has no serial number and was plugged in at {before}; one of the same kind is now at {now}. \
+        "its adapter was known by {before}, and there is now one known by {now}: it may be another instrument. \
          Nothing is taken from it until it is confirmed, or plugged in where it was"
     )
 }

@@ -83,10 +83,14 @@ struct Usb {
 }
 
 impl Place {
-    /// The socket it was moved to, when it could be another adapter for that.
-    pub fn moved<'a>(&'a self, before: Option<&str>) -> Option<&'a str> {
-        let now = self.socket.as_deref().filter(|_| self.number.is_none())?;
-        before.is_some_and(|b| b != now).then_some(now)
+    /// What the adapter is known by: its number, else its socket.
+    pub fn known_by(&self) -> Option<String> {
+        self.number.as_ref().map(|n| format!("number {n}")).or_else(|| self.socket.clone())
+    }
+
+    /// What it is known by now, when that is not what it was known by before: it may be another adapter.
+    pub fn other_than(&self, before: Option<&str>) -> Option<String> {
+        self.known_by().filter(|now| before.is_some_and(|b| b != now))
     }
 }
 
@@ -123,9 +127,10 @@ mod tests {
         for (name, socket) in [("b", "bus-2"), ("c", "bus-3"), ("d", "bus-4")] {
             assert_eq!(place(name), Place { number: None, socket: Some(socket.into()) });
         }
-        assert_eq!(place("d").moved(Some("bus-3")), Some("bus-4"));
-        for (name, before) in [("d", Some("bus-4")), ("d", None), ("a", Some("bus-9")), ("nowhere", Some("bus-1"))] {
-            assert_eq!(place(name).moved(before), None, "{name} {before:?}");
+        assert_eq!(place("d").other_than(Some("bus-3")), Some("bus-4".into()));
+        assert_eq!(place("a").other_than(Some("number 78")), Some("number 77".into()));
+        for (name, before) in [("d", Some("bus-4")), ("d", None), ("a", Some("number 77")), ("nowhere", Some("bus-1"))] {
+            assert_eq!(place(name).other_than(before), None, "{name} {before:?}");
         }
     }
 }

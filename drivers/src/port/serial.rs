@@ -63,7 +63,7 @@ pub trait Overhear: Send + Sync {
     fn said(&self, instrument: InstrumentId, bytes: &[u8], quiet: Option<bool>, at: Stamp);
 }
 
-/// Remembers the socket that an instrument's adapter was accepted at.
+/// Remembers what an instrument's adapter was known by when it was accepted.
 pub type Learned = Arc<dyn Fn(InstrumentId, &str) + Send + Sync>;
 
 /// What a port may be given beside the usual.
@@ -73,8 +73,8 @@ pub struct Extras {
     pub overhear: Option<Arc<dyn Overhear>>,
     /// Where devices and their descriptions lie.
     pub machine: Machine,
-    /// The socket that the adapter was at when it was last accepted.
-    pub socket: Option<String>,
+    /// What the adapter was known by when it was last accepted: [`super::place::Place::known_by`].
+    pub known_by: Option<String>,
     /// Is told when that changes.
     pub learned: Option<Learned>,
     /// Twins are taken for one another without a word: for a test's control only.
@@ -283,25 +283,25 @@ impl Port {
     fn recognise(&mut self, place: Place) {
         self.doubt = None;
         self.confirmed.mark_unchanged();
-        let before = self.extras.socket.as_deref().filter(|_| !self.extras.unguarded);
-        match (place.moved(before), before) {
+        let before = self.extras.known_by.as_deref().filter(|_| !self.extras.unguarded);
+        match (place.other_than(before), before) {
             (Some(now), Some(before)) => {
-                let words = doubt::words(before, now);
-                self.doubt = Some(Doubt::new(now, self.profile.talks() != Talks::PrintOnKey && is_balance(&self.profile)));
+                let words = doubt::words(before, &now);
+                self.doubt = Some(Doubt::new(&now, self.profile.talks() != Talks::PrintOnKey && is_balance(&self.profile)));
                 self.say(PortState::Unconfirmed(words));
             }
             _ => {
-                self.learn(place.socket);
+                self.learn(place.known_by());
                 self.say(PortState::Opened);
             }
         }
     }
 
-    fn learn(&mut self, socket: Option<String>) {
-        if socket.is_some() && socket != self.extras.socket {
-            self.extras.socket = socket;
-            if let (Some(learned), Some(socket)) = (&self.extras.learned, &self.extras.socket) {
-                learned(self.id, socket);
+    fn learn(&mut self, known_by: Option<String>) {
+        if known_by.is_some() && known_by != self.extras.known_by {
+            self.extras.known_by = known_by;
+            if let (Some(learned), Some(known_by)) = (&self.extras.learned, &self.extras.known_by) {
+                learned(self.id, known_by);
             }
         }
     }
@@ -406,9 +406,9 @@ impl Port {
     fn pass_on(&mut self, batch: Batch) {
         let Some(doubt) = &mut self.doubt else { return self.deliver(batch) };
         if doubt.settled_by(&batch, Instant::now()) {
-            let socket = std::mem::take(&mut doubt.socket);
+            let known_by = std::mem::take(&mut doubt.known_by);
             self.doubt = None;
-            self.learn(Some(socket));
+            self.learn(Some(known_by));
             self.say(PortState::Opened);
         }
     }
