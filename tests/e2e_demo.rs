@@ -340,7 +340,7 @@ fn lines_are_messages_and_facts_come_in_order() {
         kinds.insert(kind);
     }
     assert!(expected > 40, "{expected} facts");
-    assert_eq!(kinds, names(&["presence", "instrument", "bench", "live", "fact", "container", "specimen", "head"]));
+    assert_eq!(kinds, names(&["presence", "instrument", "bench", "live", "fact", "container", "specimen", "head", "offer"]));
     // Control: a member that went or came is noticed.
     let mut limits = last_limits(&lines, "E4");
     assert!(limits["ledger"]["hash"].is_string());

@@ -124,11 +124,18 @@ impl Station {
         self.start_with(&[]);
     }
 
-    pub fn start_with(&self, environment: &[(&str, &std::ffi::OsStr)]) {
+    /// Starts in another environment.
+    pub fn start_in(&self, environment: &[(&str, &std::ffi::OsStr)]) {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
         let mut command = self.command();
         command.envs(environment.iter().copied());
         *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
+    }
+    /// Starts with more arguments.
+    pub fn start_with(&self, more: &[&str]) {
+        let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
+        let mut command = self.command();
+        *self.child.lock().expect("child") = Some(Running::start(command.args(more).stdout(Stdio::null()).stderr(log)));
     }
 
     pub fn kill9(&self) {

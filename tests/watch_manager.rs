@@ -29,7 +29,7 @@ fn the_service_manager_hears_of_readiness_life_and_the_end() {
     let station = Station::new(&format!("[broker]\nlisten = \"127.0.0.1:{}\"", free_port()));
     let path = station.dir.path().join("notify");
     let socket = UnixDatagram::bind(&path).expect("a socket");
-    station.start_with(&[("NOTIFY_SOCKET", path.as_os_str())]);
+    station.start_in(&[("NOTIFY_SOCKET", path.as_os_str())]);
     let first = told(&socket, Duration::from_secs(6));
     assert!(has(&first, "READY=1") && has(&first, "WATCHDOG=1") && has(&first, "STATUS=recording"), "{first:?}");
 

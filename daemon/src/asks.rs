@@ -25,6 +25,8 @@ pub enum Wanted {
     Write(Ask),
     /// Something that only reads.
     Read(Read),
+    /// A person says that the instrument behind a port in doubt is the one of this name.
+    Confirm(String),
 }
 
 /// Asks that only read.
@@ -101,9 +103,32 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
         Some(read) => Wanted::Read(read),
+        None if object.get("ask").is_some_and(|word| word == CONFIRM) => Wanted::Confirm(confirm(&object)?),
         None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| in_words(&object, &e.to_string()))?),
     };
     Ok(Asked { id, wanted, body })
+}
+
+const CONFIRM: &str = "confirm_port";
+
+/// Which instrument a confirming ask names.
+fn confirm(object: &Map<String, Value>) -> Result<String, String> {
+    if let Some(other) = object.keys().find(|k| !["ask", "instrument", "who"].contains(&k.as_str())) {
+        return Err(format!("\"{CONFIRM}\" has instrument and who, and no \"{other}\""));
+    }
+    let text = |name: &str| object.get(name).and_then(Value::as_str).filter(|t| !t.is_empty() && t.len() <= 64);
+    match (text("instrument"), text("who")) {
+        (Some(instrument), Some(_)) => Ok(instrument.to_owned()),
+        _ => Err(format!("\"{CONFIRM}\" needs the texts \"instrument\" and \"who\"")),
+    }
+}
+
+/// The instrument that the body of an ask confirms, if it is such an ask.
+pub fn confirmed(body: &str) -> Option<String> {
+    match serde_json::from_str(body) {
+        Ok(Value::Object(object)) if object.get("ask").is_some_and(|word| word == CONFIRM) => confirm(&object).ok(),
+        _ => None,
+    }
 }
 
 fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
@@ -265,7 +290,7 @@ mod tests {
     fn advice_is_asked_with_what_the_client_knows() {
         let read = |text: &str| match parse(text).map(|a| a.wanted) {
             Ok(Wanted::Read(read)) => Ok(read),
-            Ok(Wanted::Write(ask)) => panic!("{ask:?}"),
+            Ok(other) => panic!("{other:?}"),
             Err(says) => Err(says),
         };
         let asked = read(r#"{"ask":"advice","bench":"north","paste_g":182.5,"drops":40}"#).expect("an ask");
@@ -323,6 +348,8 @@ mod tests {
             (r#"{"ask":"sign_in","bench":"north","operator":"AB","pin":"1234"}"#, "cannot be done"),
             (r#"{"ask":"facts_after","seq":-1}"#, "whole number"),
             (r#"{"ask":"status","ask_id":""}"#, "1 to 64"),
+            (r#"{"ask":"confirm_port","instrument":"pan-1"}"#, "\"who\""),
+            (r#"{"ask":"confirm_port","instrument":"pan-1","who":"AB","pin":"1"}"#, "no \"pin\""),
         ] {
             let says = parse(text).expect_err(text);
             assert!(says.contains(words), "{text}: {says}");

@@ -19,6 +19,7 @@ pub mod ledger;
 mod opening;
 pub mod proof;
 pub mod publish;
+pub mod recording;
 pub mod service;
 pub mod signals;
 pub mod socket;

@@ -3,7 +3,7 @@
 use std::sync::Arc;
 use tarecup_config::station::Instrument;
 use tarecup_drivers::heard::{Clock, Deliver, InstrumentId};
-use tarecup_drivers::port::serial::{self, PortTask};
+use tarecup_drivers::port::serial::{self, Extras, PortTask};
 use tarecup_drivers::port::{modbus, pulse};
 use tarecup_drivers::profile::Profile;
 use tokio::runtime::Handle;
@@ -16,11 +16,12 @@ pub fn open(
     profile: &Arc<Profile>,
     clock: Arc<dyn Clock>,
     out: Arc<dyn Deliver>,
+    extras: Extras,
 ) -> PortTask {
     let (settings, profile) = (instrument.port.clone(), Arc::clone(profile));
     match (instrument.pulse, profile.modbus()) {
         (Some(line), _) => pulse::spawn(runtime, id, (settings, line), profile, clock, out),
         (None, Some(_)) => modbus::spawn(runtime, id, settings, profile, clock, out),
-        (None, None) => serial::spawn(runtime, id, settings, profile, clock, out),
+        (None, None) => serial::spawn_with(runtime, id, settings, profile, clock, out, extras),
     }
 }

@@ -80,6 +80,8 @@ pub enum How {
     Broken,
     /// The port was lost before the terminator came.
     CutOff,
+    /// No terminator came in much more time than the longest frame takes.
+    Unended,
 }
 
 impl Framing {
@@ -284,6 +286,20 @@ impl Framer {
             take(Piece { bytes: &self.open, how: How::CutOff });
         }
         self.opened(false);
+    }
+
+    /// A frame has begun and is not at its end: more is there than the rest of the previous terminator.
+    pub fn in_frame(&self) -> bool {
+        self.open.len() > self.lead
+    }
+
+    /// No end of the open frame has come for too long: it goes to `take`, and
+    /// what follows is believed from the next terminator on.
+    pub fn stalled(&mut self, mut take: impl FnMut(Piece<'_>)) {
+        if self.in_frame() {
+            take(Piece { bytes: &self.open, how: How::Unended });
+            self.opened(false);
+        }
     }
 
     /// A byte with a duty, or one that does not fit any more.

@@ -66,6 +66,8 @@ pub enum Reject {
     CutOff,
     /// A frame of an instrument of another kind.
     WrongKind,
+    /// Bytes without a line end, for longer than any line takes.
+    Unended,
 }
 
 impl Reject {
@@ -82,10 +84,11 @@ impl Reject {
             Self::FirstPartial => "first_partial",
             Self::CutOff => "cut_off",
             Self::WrongKind => "wrong_kind",
+            Self::Unended => "unended",
         }
     }
     /// All reasons.
-    pub const ALL: [Reject; 10] = [
+    pub const ALL: [Reject; 11] = [
         Self::NoPattern,
         Self::Checksum,
         Self::TooLong,
@@ -96,6 +99,7 @@ impl Reject {
         Self::FirstPartial,
         Self::CutOff,
         Self::WrongKind,
+        Self::Unended,
     ];
     /// The reason with this word.
     pub fn from_word(word: &str) -> Option<Self> {
@@ -114,6 +118,8 @@ pub enum PortState {
     Lost,
     /// Cannot be opened, because …, with what to try.
     Refused(String),
+    /// Open, but perhaps not the instrument that is meant, because …: nothing is taken from it until a person has confirmed it.
+    Unconfirmed(String),
 }
 
 /// Takes what ports deliver. Implementations never block: they take it or say that they are full.

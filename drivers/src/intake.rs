@@ -52,6 +52,19 @@ impl Intake {
         (!frames.is_empty()).then_some(Batch { instrument: self.instrument, bytes, frames, read_at: None })
     }
 
+    /// A frame has begun whose end has not come.
+    pub fn in_frame(&self) -> bool {
+        self.framer.in_frame()
+    }
+
+    /// No end has come for too long: the begun frame, as one that is not understood.
+    pub fn stalled(&mut self, at: Stamp) -> Option<Batch> {
+        let (mut bytes, mut frames) = (Vec::new(), Vec::new());
+        let decoder = &mut self.decoder;
+        self.framer.stalled(|piece| keep(decoder, piece, at, &mut bytes, &mut frames));
+        (!frames.is_empty()).then_some(Batch { instrument: self.instrument, bytes, frames, read_at: None })
+    }
+
     /// Bytes skipped so far because their frame was too long.
     pub fn skipped(&self) -> u64 {
         self.framer.skipped()

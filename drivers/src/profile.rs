@@ -365,6 +365,7 @@ impl Decoder {
             How::Whole => self.decode(piece.bytes),
             How::FirstPartial => lost(Reject::FirstPartial),
             How::CutOff => lost(Reject::CutOff),
+            How::Unended => lost(Reject::Unended),
             How::Broken => self.profile.unknown(piece.bytes),
             How::TooLong => What::Reject(Reject::TooLong),
         }

@@ -123,7 +123,7 @@ pub(super) fn topic_root(entry: &Entry<'_>) -> Option<String> {
 }
 
 /// What an instrument's port looks like.
-pub(super) const PORT: &str = "the absolute path of a serial port, such as \"/dev/serial/by-id/…\"";
+pub(super) const PORT: &str = "the absolute path of a serial port, such as \"/dev/serial/by-id/…\", or tcp://HOST:PORT";
 
 /// The address of a Modbus gateway or instrument on the network.
 fn gateway(entry: &Entry<'_>, text: &str, host: &str) -> Option<String> {
@@ -142,13 +142,18 @@ pub(super) fn port(entry: &Entry<'_>, modbus: bool) -> Option<String> {
         return gateway(entry, text, host);
     }
     if text.get(..6).is_some_and(|scheme| scheme.eq_ignore_ascii_case("tcp://")) {
-        entry.fault(
-            "is on the network, and instruments on the network come with a later version",
-            PORT,
-            "a bridge to a serial port of this machine, such as `socat pty,raw,echo=0,link=/run/pan-1 tcp:HOST:PORT`, \
-             and port = \"/run/pan-1\"",
-        );
-        return None;
+        let rest = text[6..].strip_suffix('/').unwrap_or(&text[6..]);
+        let Some((host, port)) = host_port(rest, 0).filter(|(_, port)| *port > 0) else {
+            let says = format!("is {}, which names no host with a port", quote(text));
+            entry.fault(
+                &says,
+                "tcp://HOST:PORT, the address and data port of a serial device server",
+                "\"tcp://10.0.0.7:4001\" or, with IPv6, \"tcp://[fd00::7]:4001\"",
+            );
+            return None;
+        };
+        let host = host.to_ascii_lowercase();
+        return Some(if host.contains(':') { format!("tcp://[{host}]:{port}") } else { format!("tcp://{host}:{port}") });
     }
     if !text.starts_with('/') || text.len() > 4_000 || text.chars().any(char::is_control) {
         let says = format!("is {}, which is not an absolute path", quote(text));

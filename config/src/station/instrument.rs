@@ -131,6 +131,12 @@ fn port(table: &Table<'_>, taken: &mut Taken, usual: Usual) -> Option<PortSettin
     };
     let entry = entry?;
     let path = address::port(&entry, usual.modbus)?;
+    if path.starts_with("tcp://") {
+        for entry in ["baud", "frame", "flow"].iter().filter_map(|k| table.get(k)) {
+            let says = "is set at the device server, not here: the port is on the network";
+            entry.fault_of_key(says, "no such key for a port on the network", "taking this line out");
+        }
+    }
     if let Some(first) = taken.ports.iter().find(|t| t.value == path) {
         let says = format!("is the port of the instrument in line {} too", first.at.line);
         entry.fault(&says, "a port of its own for each instrument", "`tarecup ports`, which lists the ports there are");

@@ -22,6 +22,7 @@ mod files;
 mod import;
 mod labels;
 mod ports;
+mod replay;
 mod run;
 mod status;
 mod tell;
@@ -98,6 +99,8 @@ enum Verb {
     Ports(ports::PortsArgs),
     /// Write sheets of labels and cards to print.
     Labels(labels::LabelsArgs),
+    /// Play a recording through the whole program, in the time of the recording.
+    Replay(replay::ReplayArgs),
 }
 
 /// Where things lie.
@@ -133,6 +136,7 @@ pub fn main() -> ExitCode {
         Verb::Backup(args) => backup::backup(&args),
         Verb::Restore(args) => backup::restore(&args),
         Verb::Labels(args) => labels::run(&args),
+        Verb::Replay(args) => replay::run(&args, cli.log),
     })
 }
 

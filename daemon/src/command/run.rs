@@ -3,12 +3,13 @@
 use super::{FAILED, LogForm, StateArg, WRONG_INPUT, files, start_log};
 use crate::clock::MachineClock;
 use crate::keys::{self, Key};
-use crate::service::{Plan, Service, StartError};
+use crate::service::{Beside, Plan, Service, StartError};
 use crate::{signals, watch};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::time::Duration;
 use tarecup_config::station::LogFormat;
+use tarecup_drivers::port::place::Machine;
 
 /// How often the parts of the service are looked after.
 const LOOK_AFTER: Duration = Duration::from_secs(2);
@@ -21,6 +22,15 @@ pub struct RunArgs {
     config: Option<PathBuf>,
     #[command(flatten)]
     state: StateArg,
+    /// Record what ports say and what is asked, to play it again with `tarecup replay`. A new folder; at most 1 GB.
+    #[arg(long, value_name = "DIR")]
+    record: Option<PathBuf>,
+    /// Record what was not understood, as material for a profile. A new folder; at most 16 MB.
+    #[arg(long, value_name = "DIR")]
+    record_unread: Option<PathBuf>,
+    /// Look for ports below this folder in place of the root: for tests.
+    #[arg(long, value_name = "DIR", hide = true)]
+    machine: Option<PathBuf>,
 }
 
 /// The key that heads are signed with; made at the first start.
@@ -73,12 +83,21 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         key: Some(key),
         tap: None,
         told: None,
+        beside: Beside {
+            record: args.record,
+            record_unread: args.record_unread,
+            machine: args.machine.map(|root| Machine::below(&root)).unwrap_or_default(),
+        },
     };
     let service = match Service::start(plan) {
         Ok(service) => service,
         Err(e) => {
             eprintln!("{e}");
-            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_)) { WRONG_INPUT } else { FAILED };
+            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_) | StartError::Record(_)) {
+                WRONG_INPUT
+            } else {
+                FAILED
+            };
         }
     };
     tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), "recording");

@@ -65,7 +65,7 @@ fn told(s: &Value) -> String {
         out += &format!(
             "{:<12} {:<14} heard {} · {} lines, {rejects} not understood",
             text(&i["instrument"]),
-            text(&i["state"]),
+            connection(i),
             text(&i["last_heard"]),
             i["lines"]
         );
@@ -87,7 +87,42 @@ fn told(s: &Value) -> String {
         }
     }
     for b in s["benches"].as_array().into_iter().flatten() {
-        out += &format!("bench {:<8} {} · {}\n", text(&b["bench"]), text(&b["signed_in"]), text(&b["next"]));
+        let urgent = if b["urgent"] == true { "! " } else { "" };
+        let loose = b["loose"].as_u64().filter(|n| *n > 0).map(|n| format!(" · {n} loose")).unwrap_or_default();
+        out += &format!("bench {:<8} {} · {urgent}{}{loose}\n", text(&b["bench"]), text(&b["signed_in"]), text(&b["next"]));
+    }
+    out + &beside(s)
+}
+
+/// How an instrument is connected. Of one that is silent the last time it was heard, beside it, says since when.
+fn connection(instrument: &Value) -> String {
+    match instrument["state"].as_str() {
+        _ if instrument["unconfirmed"] == true => String::from("unconfirmed"),
+        Some("silent") => String::from("silent since"),
+        Some("wrong_language") => String::from("wrong language"),
+        Some("port_lost") => String::from("port lost"),
+        other => other.unwrap_or("-").to_owned(),
+    }
+}
+
+/// Recordings, and ports that nobody uses.
+fn beside(s: &Value) -> String {
+    let mut out = String::new();
+    for (name, what) in [("recording", "recorded to"), ("unread", "what is not understood is recorded to")] {
+        let Some(folder) = s[name]["folder"].as_str() else { continue };
+        out += &format!("{what} {folder}");
+        if let Some(trouble) = s[name]["trouble"].as_str() {
+            out += &format!(" · TROUBLE: {trouble}");
+        }
+        if let Some(lost) = s[name]["lost"].as_u64().filter(|n| *n > 0) {
+            out += &format!(" · {lost} reads lost");
+        }
+        out.push('\n');
+    }
+    for port in s["offers"].as_array().into_iter().flatten() {
+        let holder = port["held_by"].as_str().map(|h| format!(" · in use by {h}")).unwrap_or_default();
+        out +=
+            &format!("not in use   {} {}{holder}\n", port["port"].as_str().unwrap_or("-"), port["about"].as_str().unwrap_or(""));
     }
     out
 }

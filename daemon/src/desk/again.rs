@@ -46,6 +46,7 @@ impl Again {
             last_fact_input: 1,
             cleaned: Stamp::default(),
             signed: None,
+            beside: Default::default(),
             delivered: 0,
             delivered_stored: 0,
             broker: None,

@@ -19,6 +19,16 @@ const SILENT_US: i64 = 5 * SECOND_US;
 const SHOWN_AGAIN_US: i64 = 15 * SECOND_US;
 /// So many lines in a row that nobody understands are another language.
 const STRANGE_LINES: u32 = 4;
+/// Fewer are one, too, when nothing is understood for this long after the first of them: …
+const STRANGE_US: i64 = 3 * SECOND_US;
+/// … so few where a line was understood since the port was opened, and a single one where none was.
+const STRANGE_FEW: u32 = 2;
+/// Bytes without a line end that are more than the crackle of a plug.
+const CRACKLE: usize = 2;
+
+/// Said of a balance that should speak all the time.
+const NOTHING_CAME: &str =
+    "its port is open and nothing has come; is it switched on, is the cable whole, and does it send without being asked?";
 
 /// Where a sense stood after its last fact; stored with that fact.
 #[derive(Clone, Debug, Default, Serialize, Deserialize)]
@@ -58,11 +68,22 @@ pub struct Ear {
     pub rejects: BTreeMap<&'static str, u64>,
     /// The latest line not understood.
     pub last_reject: Option<String>,
+    /// Lines in a row that were not understood, and when the first of them came.
     strange: u32,
+    strange_since: Option<Stamp>,
+    /// When its port was opened, and whether a line was understood since.
+    opened: Option<Stamp>,
+    proved: bool,
+    /// It has been said that nothing comes.
+    pub nothing_said: bool,
+    /// It may be another instrument than the one meant; a person has to say.
+    pub unconfirmed: bool,
     /// The latest reading and whether it was shown.
     pub reading: Option<(Reading, Stamp)>,
     /// What was last shown live, and when.
     pub shown: Option<(Reading, Stamp)>,
+    /// A reading was shown live, and not yet taken back as stale.
+    pub on_show: bool,
     /// Counters have changed since they were published.
     pub counters_changed: bool,
     /// Lines understood, and when the last was heard, as they were last published.
@@ -90,8 +111,14 @@ impl Ear {
             rejects: BTreeMap::new(),
             last_reject: None,
             strange: 0,
+            strange_since: None,
+            opened: None,
+            proved: false,
+            nothing_said: false,
+            unconfirmed: false,
             reading: None,
             shown: None,
+            on_show: false,
             counters_changed: false,
             published: (0, None),
             flood: Flood::default(),
@@ -99,24 +126,67 @@ impl Ear {
     }
 
     /// Notes that a frame came; says when the connection is seen differently for it.
-    pub fn heard(&mut self, what: &What, at: &Stamp) -> Option<Connection> {
+    pub fn heard(&mut self, what: &What, bytes: &[u8], at: &Stamp) -> Option<Connection> {
         self.last_heard = Some(*at);
         let now = match what {
-            What::Signal(_) | What::Nothing => {
-                self.strange = 0;
+            What::Signal(_) => {
+                (self.strange, self.strange_since, self.proved) = (0, None, true);
                 self.understood += 1;
                 Connection::Speaking
             }
+            What::Nothing => {
+                self.understood += 1;
+                // A blank line is one in every language.
+                if self.strange > 0 || self.connection != Connection::Silent {
+                    return None;
+                }
+                Connection::Speaking
+            }
             What::Reject(Reject::FirstPartial | Reject::CutOff) => return None,
-            What::Reject(_) => {
+            What::Reject(reason) => {
                 self.strange = self.strange.saturating_add(1);
-                if self.strange < STRANGE_LINES {
+                self.strange_since.get_or_insert(*at);
+                let tells = match reason {
+                    Reject::WrongKind | Reject::TooLong => true,
+                    Reject::Unended => bytes.len() > CRACKLE,
+                    _ => false,
+                };
+                if !tells && self.strange < STRANGE_LINES {
                     return None;
                 }
                 Connection::WrongLanguage
             }
         };
         (now != self.connection).then_some(now)
+    }
+
+    /// What is said of a connection that has changed.
+    pub fn words(&self, state: Connection) -> Option<String> {
+        if state != Connection::WrongLanguage {
+            return None;
+        }
+        let line = self.last_reject.as_deref().unwrap_or_default();
+        Some(format!(
+            "what comes is not understood, at last \"{line}\"; are two cables exchanged, or is the speed another than the instrument's?"
+        ))
+    }
+
+    /// The connection is seen so from now on. What lies on the pan, and a run
+    /// that is under way, cannot be trusted across another language.
+    pub fn connected(&mut self, state: Connection) {
+        if state == Connection::WrongLanguage && self.connection != state {
+            match &mut self.sense {
+                Sense::Balance(settle) => settle.disturbed(),
+                Sense::Counter(count) => count.interrupted("what came during the run was not understood"),
+                Sense::Scanner => (),
+            }
+        }
+        self.connection = state;
+    }
+
+    /// Whether what was last read is not what the instrument shows now.
+    pub fn stale(&self) -> bool {
+        self.connection != Connection::Speaking
     }
 
     /// Counts a frame that was not understood.
@@ -130,12 +200,12 @@ impl Ear {
     pub(super) fn sift(&mut self, batch: Batch, changes: &mut Vec<(Connection, Stamp)>) -> (Batch, Option<Swallowed>) {
         let mut flood = std::mem::take(&mut self.flood);
         let sifted = flood.sift(batch, |frame, bytes| {
-            changes.extend(self.heard(&frame.what, &frame.at).map(|c| (c, frame.at)));
             if let What::Reject(reason) = frame.what {
                 self.reject(reason, bytes);
             }
-            if let Some((change, _)) = changes.last() {
-                self.connection = *change;
+            if let Some(change) = self.heard(&frame.what, bytes, &frame.at) {
+                changes.push((change, frame.at));
+                self.connected(change);
             }
         });
         self.flood = flood;
@@ -162,8 +232,11 @@ impl Ear {
 
     /// The port came or went.
     pub fn port(&mut self, state: &PortState, at: Stamp) {
-        self.strange = 0;
+        (self.strange, self.strange_since, self.proved) = (0, None, false);
         self.port_open = *state == PortState::Opened;
+        self.nothing_said = false;
+        self.opened = self.port_open.then_some(at);
+        self.unconfirmed = matches!(state, PortState::Unconfirmed(_));
         match (&mut self.sense, state) {
             (Sense::Balance(settle), PortState::Lost) => settle.disturbed(),
             // A run that was over by its pause already is not marked: `hear` and `tick` come first.
@@ -215,15 +288,37 @@ impl Ear {
         }
     }
 
-    /// Whether a streaming balance has fallen silent.
-    pub fn silence(&self, now: &Stamp) -> Option<Connection> {
-        (self.silent_in_us(now)? <= 0).then_some(Connection::Silent)
+    /// What time alone says of the connection: silence, nothing at all, or lines that nobody understands.
+    pub fn changed_by_time(&self, now: &Stamp) -> Option<(Connection, Option<String>)> {
+        let due = |us: Option<i64>| us.is_some_and(|us| us <= 0);
+        if due(self.strange_in_us(now)) {
+            Some((Connection::WrongLanguage, self.words(Connection::WrongLanguage)))
+        } else if due(self.silent_in_us(now)) {
+            Some((Connection::Silent, None))
+        } else if due(self.nothing_in_us(now)) {
+            Some((Connection::Waiting, Some(String::from(NOTHING_CAME))))
+        } else {
+            None
+        }
+    }
+
+    fn strange_in_us(&self, now: &Stamp) -> Option<i64> {
+        let few = if self.proved { STRANGE_FEW } else { 1 };
+        let since = self.strange_since.filter(|_| self.strange >= few && self.connection != Connection::WrongLanguage)?;
+        Some(STRANGE_US - now.since(&since).us)
     }
 
     fn silent_in_us(&self, now: &Stamp) -> Option<i64> {
         let talking = self.streams && self.connection == Connection::Speaking;
         let last = self.last_heard.filter(|_| talking)?;
         Some(SILENT_US - now.since(&last).us)
+    }
+
+    /// A streaming balance of which nothing has come since its port was opened.
+    fn nothing_in_us(&self, now: &Stamp) -> Option<i64> {
+        let waits = self.streams && self.connection == Connection::Waiting && !self.nothing_said;
+        let opened = self.opened.filter(|_| waits)?;
+        Some(SILENT_US - now.since(&self.last_heard.unwrap_or(opened)).us.min(now.since(&opened).us))
     }
 
     /// Microseconds until time alone leads to something.
@@ -233,7 +328,13 @@ impl Ear {
             _ => None,
         };
         let flood = self.flood.due_in_us(now).filter(|_| self.flood.owes());
-        pause.into_iter().chain(self.silent_in_us(now)).chain(flood).min()
+        pause
+            .into_iter()
+            .chain(self.silent_in_us(now))
+            .chain(self.strange_in_us(now))
+            .chain(self.nothing_in_us(now))
+            .chain(flood)
+            .min()
     }
 
     /// A mass was taken: this is where the sense stands.

@@ -10,7 +10,7 @@ use serde::Serialize;
 use serde_json::Value;
 use std::collections::{BTreeMap, BTreeSet};
 use std::time::Instant;
-use tarecup_core::fact::{Fact, Recorded, VERSION};
+use tarecup_core::fact::{Connection, Fact, Recorded, VERSION};
 use tarecup_core::lab::entities::Entity;
 use tarecup_core::names::InstrumentName;
 use tarecup_core::signal::Reading;
@@ -65,6 +65,8 @@ pub(super) struct Group {
     /// Instruments whose sense has moved on.
     pub senses: BTreeSet<usize>,
     pub lines: usize,
+    /// Ports whose instrument a person has confirmed.
+    pub confirmed: Vec<InstrumentId>,
     /// When the first fact was decided.
     pub first_fact: Option<Instant>,
     /// Something cannot wait for company.
@@ -117,6 +119,17 @@ pub enum LiveOut {
         /// When.
         at: Stamp,
     },
+    /// What was last shown of a balance is not what it shows now.
+    Stale {
+        /// Which balance.
+        instrument: InstrumentName,
+        /// How it is connected now.
+        state: Connection,
+        /// When it was last heard.
+        last_heard: Option<Stamp>,
+        /// When that was noticed.
+        at: Stamp,
+    },
 }
 
 /// Something to publish and keep at its topic: path below the station's root, and what stands there.
@@ -143,6 +156,8 @@ pub struct Effects {
     pub replies: Vec<(Reply, String)>,
     /// Bytes taken, by instrument.
     pub heard: Vec<(InstrumentId, u64)>,
+    /// Ports whose instrument a person has confirmed.
+    pub confirmed: Vec<InstrumentId>,
     /// Whether recording began or ceased.
     pub presence: bool,
 }
@@ -276,6 +291,7 @@ impl Desk {
         self.held_since = None;
         self.sign_when_due(&group);
         let seq = self.next_seq - 1;
+        effects.confirmed.append(&mut group.confirmed);
         effects.retained.extend(self.topics(&group));
         self.live_masses(&mut group.live);
         effects.live.extend(group.live.into_iter().map(|l| (l, seq)));
@@ -354,7 +370,7 @@ impl Desk {
         const APART_US: i64 = 190_000;
         const AGAIN_US: i64 = 1_000_000;
         for (index, ear) in self.ears.iter_mut().enumerate() {
-            let Some((reading, at)) = ear.reading else { continue };
+            let Some((reading, at)) = ear.reading.filter(|_| !ear.stale()) else { continue };
             let due = match &ear.shown {
                 None => true,
                 Some((shown, when)) => {
@@ -363,7 +379,7 @@ impl Desk {
                 }
             };
             if due {
-                ear.shown = Some((reading, at));
+                (ear.shown, ear.on_show) = (Some((reading, at)), true);
                 live.push(LiveOut::Mass { instrument: self.setup.instruments[index].name.clone(), reading, at });
             }
         }

@@ -1,7 +1,7 @@
 //! The bounded queue in front of the desk.
 
 use std::sync::atomic::{AtomicBool, Ordering};
-use std::sync::{Arc, Condvar, Mutex, MutexGuard, PoisonError};
+use std::sync::{Arc, Condvar, Mutex, MutexGuard, OnceLock, PoisonError};
 use std::time::{Duration, Instant};
 use tarecup_core::stamp::Stamp;
 use tarecup_drivers::heard::{Batch, Deliver, InstrumentId, PortState};
@@ -48,6 +48,13 @@ pub enum Incoming {
     Delivered(u64),
     /// Whether a broker is connected, and why not.
     Broker(Option<String>),
+    /// Another part of the service has something to say, for the status.
+    Note {
+        /// About what.
+        what: &'static str,
+        /// What.
+        says: serde_json::Value,
+    },
     /// Look at the clock; tell when that is done, with the reason when nothing is being recorded.
     Tick(Reply),
     /// Stop in order.
@@ -70,7 +77,11 @@ pub struct Inbox {
     state: Mutex<State>,
     wake: Condvar,
     lines_wait: AtomicBool,
+    overheard: OnceLock<Overheard>,
 }
+
+/// Hears every ask as it comes in: client and text.
+pub type Overheard = Box<dyn Fn(&str, &str) + Send + Sync>;
 
 impl Inbox {
     /// An empty queue.
@@ -93,6 +104,9 @@ impl Inbox {
         if state.asks >= ASKS_MOST {
             drop(state);
             return reply(crate::asks::refusal("too many asks are waiting; ask again in a moment"));
+        }
+        if let Some(overheard) = self.overheard.get() {
+            overheard(&client, &body);
         }
         state.asks += 1;
         state.items.push(Incoming::Ask { client, body, reply });
@@ -118,6 +132,16 @@ impl Inbox {
     /// Tells how the broker is doing.
     pub fn broker(&self, trouble: Option<String>) {
         self.push(Incoming::Broker(trouble));
+    }
+
+    /// Tells what another part of the service has to say.
+    pub fn note(&self, what: &'static str, says: serde_json::Value) {
+        self.push(Incoming::Note { what, says });
+    }
+
+    /// From now on, asks are overheard. The first who asks for it stays.
+    pub fn overhear(&self, by: Overheard) {
+        let _ = self.overheard.set(by);
     }
 
     /// Asks for an orderly stop.

@@ -108,6 +108,7 @@ impl Desk {
             broker: None,
             not_recording: None,
             stopped: false,
+            beside: std::collections::BTreeMap::new(),
         };
         desk.load(now)?;
         let mut effects = Effects::default();
@@ -274,6 +275,9 @@ impl Desk {
         if input.no <= self.ears[index].state.through {
             return;
         }
+        if matches!(input.kind, InputKind::Line | InputKind::Reject) {
+            self.ears[index].last_heard = Some(input.at);
+        }
         match input.kind {
             InputKind::Line => {
                 if let What::Signal(signal) = (self.setup.instruments[index].decode)(&input.bytes) {
@@ -417,6 +421,7 @@ impl Desk {
             put(format!("instrument/{}", self.setup.instruments[index].name), &self.instrument_view(index));
         }
         put(String::from("head"), &self.head_view(now));
+        put(String::from("offer"), &self.offer_view(now));
         for bench in self.lab.benches() {
             put(format!("bench/{}", bench.name), &views::bench(&self.lab, bench, seq));
         }

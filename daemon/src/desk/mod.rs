@@ -30,6 +30,7 @@ use ear::Ear;
 use group::{Group, Held};
 use inbox::{Incoming, Reply};
 use serde_json::json;
+use std::collections::BTreeMap;
 use std::time::{Duration, Instant};
 use tarecup_core::fact::Connection;
 use tarecup_core::lab::{Input, Lab, Outcome};
@@ -45,6 +46,9 @@ const COMPANY: Duration = Duration::from_millis(20);
 const LINES_BETWEEN_FACTS: u64 = 200_000;
 /// Lines that led to nothing are stored when so many are held.
 const HOLD_LINES: usize = 4_000;
+
+/// Ports that are there and not in use, among what other parts have to say.
+pub const OFFERS: &str = "offers";
 
 /// The desk.
 pub struct Desk {
@@ -65,6 +69,8 @@ pub struct Desk {
     broker: Option<String>,
     not_recording: Option<String>,
     stopped: bool,
+    /// What other parts of the service have to say: ports that are offered, how a recording does.
+    beside: BTreeMap<&'static str, serde_json::Value>,
     /// When results were last looked through for those to be taken down.
     cleaned: Stamp,
     /// The latest head that was signed.
@@ -122,11 +128,20 @@ impl Desk {
             Incoming::Ask { client, body, reply } => self.take_ask(client, &body, reply, now, effects),
             Incoming::Delivered(through) => self.delivered = self.delivered.max(through),
             Incoming::Broker(trouble) => self.broker = trouble,
+            Incoming::Note { what, says } => self.note(what, says, now, effects),
             Incoming::Tick(reply) => effects.replies.push((reply, String::new())),
             Incoming::Stop => {
                 self.absorb(Held::Stop { at: *now });
                 self.group.urgent = true;
             }
+        }
+    }
+
+    /// Another part of the service has something to say. What ports are offered stands at a topic too.
+    fn note(&mut self, what: &'static str, says: serde_json::Value, now: &Stamp, effects: &mut Effects) {
+        self.beside.insert(what, says);
+        if what == OFFERS {
+            effects.retained.push(self.offer_topic(now));
         }
     }
 
@@ -138,7 +153,8 @@ impl Desk {
             self.absorb(Held::Flood { instrument: index as u16, swallowed });
         }
         for (change, at) in changes {
-            self.connection(index, change, None, at);
+            let detail = self.ears[index].words(change);
+            self.connection(index, change, detail, at);
         }
         if !batch.frames.is_empty() {
             self.absorb(Held::Batch { batch });
@@ -183,11 +199,24 @@ impl Desk {
                     let answer = self.read(&read, now);
                     effects.replies.push((reply, answer));
                 }
-                asks::Wanted::Write(_) => {
+                asks::Wanted::Confirm(name) if !self.in_doubt(&name) => {
+                    let says = format!("the port of '{name}' is not in doubt; there is nothing to confirm");
+                    effects.replies.push((reply, asks::refusal(&says)));
+                }
+                asks::Wanted::Write(_) | asks::Wanted::Confirm(_) => {
                     self.absorb(Held::Ask { client, id: asked.id, body: asked.body.to_string(), reply: Some(reply), at: *now });
                 }
             },
         }
+    }
+
+    /// Whether a person has to say that the instrument is the one meant.
+    fn in_doubt(&self, name: &str) -> bool {
+        self.place_of(name).is_some_and(|index| self.ears[index].unconfirmed)
+    }
+
+    fn place_of(&self, name: &str) -> Option<usize> {
+        self.setup.instruments.iter().position(|i| i.name.as_str() == name)
     }
 
     /// Takes one thing: decides what it means and holds it until it is stored.
@@ -248,14 +277,17 @@ impl Desk {
             let bytes = begin..frame.end as usize;
             begin = frame.end as usize;
             self.group.lines += 1;
-            if let Some(change) = self.ears[index].heard(&frame.what, &frame.at) {
-                self.connection(index, change, None, frame.at);
+            if let What::Reject(reason) = frame.what {
+                self.ears[index].reject(reason, &batch.bytes[bytes.clone()]);
+            }
+            if let Some(change) = self.ears[index].heard(&frame.what, &batch.bytes[bytes], &frame.at) {
+                let detail = self.ears[index].words(change);
+                self.connection(index, change, detail, frame.at);
             }
             match &frame.what {
                 What::Signal(signal) => self.signal(index, signal, input, frame.at),
                 What::Nothing => (),
-                What::Reject(reason) => {
-                    self.ears[index].reject(*reason, &batch.bytes[bytes]);
+                What::Reject(_) => {
                     if self.setup.instruments[index].kind == Kind::Scanner {
                         let scanner = self.setup.instruments[index].name.clone();
                         self.decide(Input::CodeUnread { scanner, input }, frame.at);
@@ -321,20 +353,37 @@ impl Desk {
         if let Some(happening) = self.ears[index].tick(&at) {
             self.happened(index, happening);
         }
+        let was_lost = self.ears[index].connection == Connection::PortLost;
         self.ears[index].port(state, at);
         self.ears[index].counters_changed = true;
         let (connection, detail) = match state {
             PortState::Waiting => (Connection::Waiting, Some(String::from("its port is not there"))),
             PortState::Opened => (Connection::Waiting, None),
             PortState::Lost => (Connection::PortLost, None),
+            // A port that was lost stays lost until it is back; why it is not says what to try.
+            PortState::Refused(why) if was_lost => (Connection::PortLost, Some(why.clone())),
             PortState::Refused(why) => (Connection::Waiting, Some(why.clone())),
+            PortState::Unconfirmed(why) => (Connection::Waiting, Some(self.to_confirm(index, why))),
         };
         self.connection(index, connection, detail, at);
     }
 
+    fn to_confirm(&self, index: usize, why: &str) -> String {
+        let name = &self.setup.instruments[index].name;
+        format!(
+            "{why}: tarecup ask confirm_port instrument={name} who=INITIALS, and then, within a minute, press PRINT on the one you \
+             mean or put something on its pan"
+        )
+    }
+
     fn connection(&mut self, index: usize, state: Connection, detail: Option<String>, at: Stamp) {
-        self.ears[index].connection = state;
+        let ear = &mut self.ears[index];
+        ear.connected(state);
+        ear.nothing_said |= state == Connection::Waiting && detail.is_some();
         let instrument = self.setup.instruments[index].name.clone();
+        if ear.stale() && std::mem::take(&mut ear.on_show) {
+            self.group.live.push(LiveOut::Stale { instrument: instrument.clone(), state, last_heard: ear.last_heard, at });
+        }
         self.decide(Input::Instrument { instrument, state, detail }, at);
     }
 
@@ -360,7 +409,13 @@ impl Desk {
         self.fetch_named(body);
         self.next_input += 1;
         let before = self.group.facts.len();
+        let confirmed = asks::confirmed(body).and_then(|name| Some((self.place_of(&name)?, name)));
         let answer = match serde_json::from_str(body) {
+            _ if let Some((index, name)) = confirmed => {
+                self.group.confirmed.push(index as u16);
+                let next = format!("press PRINT on {name}, or put something on its pan, within a minute");
+                json!({"ok": true, "facts": [], "next": next}).to_string()
+            }
             Err(e) => asks::refusal(&format!("the ask cannot be done: {e}")),
             Ok(ask) => match self.try_decide(Input::Ask(ask), at) {
                 Err(refusal) => asks::refusal(&refusal.0),
@@ -384,8 +439,8 @@ impl Desk {
             if let Some(happening) = self.ears[index].tick(&at) {
                 self.happened(index, happening);
             }
-            if let Some(change) = self.ears[index].silence(&at) {
-                self.connection(index, change, None, at);
+            if let Some((change, detail)) = self.ears[index].changed_by_time(&at) {
+                self.connection(index, change, detail, at);
             }
         }
         self.decide(Input::Due, at);

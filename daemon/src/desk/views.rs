@@ -188,9 +188,23 @@ impl Desk {
             "state": ear.connection, "port_open": ear.port_open, "detail": state.and_then(|s| s.detail.clone()),
             "since": state.and_then(|s| s.since).map(|s| s.rfc3339()),
             "last_heard": ear.last_heard.map(|s| s.rfc3339()),
+            "stale": ear.stale(), "unconfirmed": ear.unconfirmed,
+            "live": ear.reading.map(|(reading, at)| json!({
+                "mass_g": reading.mass.grams(), "steady": reading.mark, "basis": reading.basis, "at": at.rfc3339(), "stale": ear.stale(),
+            })),
             "lines": ear.understood, "rejects": ear.rejects, "last_reject": ear.last_reject,
             "overrun_lines": state.map_or(0, |s| s.overrun_lines),
         })
+    }
+
+    /// Ports that are there and that no instrument of the settings has.
+    pub(super) fn offer_view(&self, at: &Stamp) -> Value {
+        let ports = self.beside.get(super::OFFERS).cloned().unwrap_or_else(|| json!([]));
+        json!({"v": V, "seq": self.next_seq - 1, "at": at.rfc3339(), "ports": ports})
+    }
+
+    pub(super) fn offer_topic(&self, at: &Stamp) -> super::Publish {
+        super::Publish { topic: String::from("offer"), payload: Some(super::group::payload(&self.offer_view(at))) }
     }
 
     /// Presence, as it is published.
@@ -301,6 +315,7 @@ impl Desk {
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_open().count(),
             "backup": crate::backup::Note::read(std::path::Path::new(&self.setup.state_dir)).view(),
             "instruments": instruments, "benches": benches, "own_scatter": own_scatter(&self.lab),
+            "offers": self.beside.get(super::OFFERS), "recording": self.beside.get("recording"), "unread": self.beside.get("unread"),
         })
     }
 }

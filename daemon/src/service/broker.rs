@@ -104,7 +104,9 @@ pub(super) fn courier_event(event: CourierEvent, inbox: &Arc<Inbox>, answers: &S
         }
         CourierEvent::Delivered { through } => inbox.delivered(through),
         CourierEvent::Asked { client, payload, correlation } => asked_by_mqtt(client, &payload, correlation, inbox, answers),
-        other => tracing::warn!(?other, "the broker"),
+        CourierEvent::AskIgnored { why } => tracing::warn!(%why, "an ask over MQTT is not passed on"),
+        CourierEvent::TooLarge { what, .. } => tracing::warn!(?what, "too large for the broker, and not sent"),
+        other => tracing::warn!(event = ?other, "the broker refuses something"),
     }
 }
 

@@ -1,12 +1,15 @@
 //! Puts the parts together: ports, desk, ledger, broker, courier, local socket.
 
 mod broker;
+mod offers;
 mod outlet;
 mod ports;
 mod settings;
 
 pub use broker::fact_payload;
-pub use settings::{Profiles, setup_of};
+pub use offers::told_of;
+pub use ports::Beside;
+pub use settings::{Profiles, Restored, settings_of, setup_of};
 
 use crate::backup::{self, Keeper};
 use crate::clock::{BootClock, boot_id};
@@ -20,7 +23,7 @@ use crate::{asks, socket};
 use broker::{SharedCourier, courier_settings, start_courier};
 use bytes::Bytes;
 use outlet::Outlet;
-use ports::{PortsThread, open_ports};
+use ports::{Aids, Doors, PortsThread, open_ports};
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
 use std::sync::{Arc, PoisonError};
@@ -75,6 +78,9 @@ pub enum StartError {
         /// Why.
         error: std::io::Error,
     },
+    /// A folder to record to.
+    #[error("{0}")]
+    Record(String),
     /// The system.
     #[error("the system gives no thread or timer: {0}")]
     System(std::io::Error),
@@ -103,6 +109,8 @@ pub struct Plan {
     pub tap: Option<Tap>,
     /// Sees facts.
     pub told: Option<Told>,
+    /// What goes on beside the ports.
+    pub beside: Beside,
 }
 
 /// The running service.
@@ -121,12 +129,13 @@ pub struct Service {
     clock: Arc<dyn BootClock>,
     state_dir: PathBuf,
     backups: Option<Keeper>,
+    aids: Aids,
 }
 
 impl Service {
     /// Starts everything. Nothing runs when it fails.
     pub fn start(plan: Plan) -> Result<Service, StartError> {
-        let Plan { station, state_dir, clock, time_passes, any_broker_port, key, tap, told } = plan;
+        let Plan { station, state_dir, clock, time_passes, any_broker_port, key, tap, told, beside } = plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
         let inbox = Inbox::new();
@@ -139,6 +148,7 @@ impl Service {
             clock.set_boot(boot);
             clock.now()
         };
+        let settings_text = setup.settings.clone();
         let (desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
@@ -149,6 +159,8 @@ impl Service {
         let broker_name = format!("{}:{}", settings.host, settings.port);
         let courier: SharedCourier = Arc::default();
         start_courier(settings.clone(), &desk, &state_dir, &inbox, &courier, &net_runtime)?;
+        let aids = Aids::start(beside, &station, &settings_text, &state_dir, &clock, &inbox, time_passes)?;
+        let doors = Doors::default();
         let outlet = Outlet {
             settings,
             ledger: desk.ledger_name(),
@@ -157,6 +169,7 @@ impl Service {
             tap,
             told,
             clock: clock.clone(),
+            doors: doors.clone(),
         };
         outlet.hand_on(&desk, first);
         let listener = {
@@ -167,7 +180,7 @@ impl Service {
         let seat_settings = SeatSettings { clock: clock.clone(), time_passes };
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
-        let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox);
+        let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox, &aids, &doors);
         let backups = keep_backups(&station, &state_dir, &clock)?;
         Ok(Service {
             backups,
@@ -187,6 +200,7 @@ impl Service {
             broker_name,
             clock,
             state_dir,
+            aids,
         })
     }
 
@@ -259,6 +273,7 @@ impl Service {
             backups.stop();
         }
         self.ports_thread.stop(self.ports);
+        self.aids.stop();
         let desk = self.seat.stop();
         let orderly = desk.as_ref().is_some_and(Desk::stopped);
         let presence = desk.as_ref().map(|d| Bytes::from(d.presence("stopped", &self.clock.now()).to_string()));

@@ -1,6 +1,7 @@
 //! What may leave, turned into messages.
 
 use super::broker::{SharedCourier, fact_payload};
+use super::ports::Doors;
 use super::{Tap, Told};
 use crate::clock::BootClock;
 use crate::desk::{Desk, Effects, LiveOut};
@@ -19,6 +20,7 @@ pub(super) struct Outlet {
     pub(super) tap: Option<Tap>,
     pub(super) told: Option<Told>,
     pub(super) clock: Arc<dyn BootClock>,
+    pub(super) doors: Doors,
 }
 
 impl Outlet {
@@ -44,6 +46,7 @@ impl Outlet {
         for (reply, answer) in effects.replies {
             reply(answer);
         }
+        self.doors.confirm(&effects.confirmed);
         self.heard.add(&effects.heard);
     }
 
@@ -56,7 +59,13 @@ impl Outlet {
             LiveOut::Mass { instrument, reading, at } => Live::Newest {
                 topic: self.settings.topic(&format!("live/{instrument}")),
                 payload: text(
-                    &json!({"v": 1, "seq": seq, "at": at.rfc3339(), "mass_g": reading.mass.grams(), "steady": reading.mark, "basis": reading.basis}),
+                    &json!({"v": 1, "seq": seq, "at": at.rfc3339(), "mass_g": reading.mass.grams(), "steady": reading.mark, "basis": reading.basis, "stale": false}),
+                ),
+            },
+            LiveOut::Stale { instrument, state, last_heard, at } => Live::Newest {
+                topic: self.settings.topic(&format!("live/{instrument}")),
+                payload: text(
+                    &json!({"v": 1, "seq": seq, "at": at.rfc3339(), "stale": true, "state": state, "last_heard": last_heard.map(|s| s.rfc3339())}),
                 ),
             },
         }

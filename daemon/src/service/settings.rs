@@ -164,18 +164,45 @@ impl InstrumentKept {
     }
 }
 
-/// The desk's setup that a row of settings in the ledger stands for.
+/// Settings read back from where they were kept.
+pub struct Restored {
+    /// The desk's setup.
+    pub setup: DeskSetup,
+    /// Names of the instruments, in the order of their numbers.
+    pub names: Vec<InstrumentName>,
+    /// Their profiles.
+    pub profiles: Vec<Arc<Profile>>,
+    /// How their ports were set.
+    pub ports: Vec<PortSettings>,
+}
+
+/// Reads kept settings back.
 ///
 /// # Errors
-/// What in the row this program does not understand.
-pub fn setup_of(text: &str) -> Result<DeskSetup, String> {
-    let kept: Kept = serde_json::from_str(text).map_err(|e| format!("the settings in the ledger cannot be read: {e}"))?;
-    let mut profiles = Profiles::new();
+/// What in them this program does not understand.
+pub fn settings_of(text: &str) -> Result<Restored, String> {
+    let kept: Kept = serde_json::from_str(text).map_err(|e| format!("the settings cannot be read: {e}"))?;
+    let mut compiled = Profiles::new();
     for (name, profile) in &kept.profiles {
         let mut profile = profile.clone();
         profile.name.get_or_insert_with(|| name.clone());
-        let compiled = Profile::compile(profile).map_err(|e| format!("profile \"{name}\" in the ledger: {e}"))?;
-        profiles.insert(name.clone(), Arc::new(compiled));
+        let profile = Profile::compile(profile).map_err(|e| format!("settings: profile '{name}': {e}"))?;
+        compiled.insert(name.clone(), Arc::new(profile));
     }
-    Ok(kept.setup(&profiles, text.into(), String::new()))
+    let of = |i: &InstrumentKept| {
+        let found = compiled.get(i.profile.as_str()).cloned();
+        found.ok_or_else(|| format!("settings: there is no profile '{}'", i.profile))
+    };
+    let profiles = kept.instruments.iter().map(of).collect::<Result<Vec<_>, _>>()?;
+    let setup = kept.setup(&compiled, text.into(), String::new());
+    let names = kept.instruments.iter().map(|i| i.name.clone()).collect();
+    Ok(Restored { setup, names, profiles, ports: kept.instruments.into_iter().map(|i| i.port).collect() })
+}
+
+/// The desk's setup that kept settings stand for.
+///
+/// # Errors
+/// What in them this program does not understand.
+pub fn setup_of(text: &str) -> Result<DeskSetup, String> {
+    settings_of(text).map(|restored| restored.setup)
 }

@@ -1,10 +1,10 @@
 //! Asking an instrument that speaks only when asked. Writes never wait.
 
+use super::link::Link;
 use crate::profile::Ask;
 use std::io::ErrorKind;
 use std::time::Duration;
 use tokio::time::Instant;
-use tokio_serial::{ClearBuffer, SerialPort, SerialStream};
 
 /// A request that could not be written for so long is given up.
 pub(super) const WRITE_TIMEOUT: Duration = Duration::from_secs(1);
@@ -43,8 +43,13 @@ impl Asker {
         self.next
     }
 
+    /// The next request waits until then.
+    pub(super) fn not_before(&mut self, at: Instant) {
+        self.next = self.next.max(at);
+    }
+
     /// Writes the request, or what is left of it.
-    pub(super) fn act(&mut self, port: &mut SerialStream, now: Instant) -> Asking {
+    pub(super) fn act(&mut self, port: &mut Link, now: Instant) -> Asking {
         let (mut done, give_up) = self.writing.unwrap_or((0, now + WRITE_TIMEOUT));
         while done < self.ask.send.len() {
             match port.try_write(&self.ask.send[done..]) {
@@ -59,14 +64,14 @@ impl Asker {
         Asking::Sent
     }
 
-    fn blocked(&mut self, port: &SerialStream, done: usize, give_up: Instant, now: Instant) -> Asking {
+    fn blocked(&mut self, port: &Link, done: usize, give_up: Instant, now: Instant) -> Asking {
         if now < give_up {
             self.writing = Some((done, give_up));
             self.next = now + AGAIN;
             return Asking::Blocked;
         }
         // Old requests that nobody took would all be answered at once later.
-        let _ = port.clear(ClearBuffer::Output);
+        port.forget_written();
         self.finished(now);
         Asking::GivenUp
     }

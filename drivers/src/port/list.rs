@@ -1,5 +1,7 @@
 //! The serial ports of this machine, by names that stay the same.
 
+use super::open::holder;
+use super::place::Machine;
 use serialport::SerialPortType;
 use std::collections::BTreeMap;
 use std::path::{Path, PathBuf};
@@ -13,14 +15,39 @@ pub struct Found {
     pub device: String,
     /// What the adapter says of itself; empty when it says nothing.
     pub about: String,
+    /// The socket it is plugged into, where the machine names it.
+    pub socket: Option<String>,
+    /// Its adapter can be told from another of its kind by the socket only.
+    pub twin: bool,
+}
+
+impl Found {
+    /// The program that has it open, if one has. The port is not opened for that.
+    pub fn holder(&self) -> Option<String> {
+        let pid = holder(Path::new(&self.device))?;
+        let name = std::fs::read_to_string(format!("/proc/{pid}/comm")).unwrap_or_default();
+        Some(format!("'{}' (process {pid})", name.trim()))
+    }
 }
 
 /// All serial ports that can be found. No port is opened.
 pub fn list() -> Vec<Found> {
-    // The library stops the program on machines without this folder.
-    let known = if Path::new("/sys/class/tty").is_dir() { serialport::available_ports().unwrap_or_default() } else { Vec::new() };
+    list_on(&Machine::default())
+}
+
+/// All serial ports of a machine. No port is opened.
+pub fn list_on(machine: &Machine) -> Vec<Found> {
+    // The library stops the program on machines without this folder, and knows only the one it runs on.
+    let own = *machine == Machine::default() && machine.sys.is_dir();
+    let known = if own { serialport::available_ports().unwrap_or_default() } else { Vec::new() };
     let known = known.into_iter().map(|p| (PathBuf::from(p.port_name), about(&p.port_type))).collect();
-    list_in(Path::new("/dev"), Path::new("/sys/class/tty"), known)
+    list_in(machine, known)
+}
+
+/// Changes whenever a port may have come or gone; cheap enough to be asked every second.
+pub fn mark(machine: &Machine) -> [Option<std::time::SystemTime>; 3] {
+    ["", "serial/by-id", "serial/by-path"]
+        .map(|folder| std::fs::metadata(machine.dev.join(folder)).and_then(|m| m.modified()).ok())
 }
 
 fn about(kind: &SerialPortType) -> String {
@@ -39,7 +66,8 @@ fn about(kind: &SerialPortType) -> String {
     }
 }
 
-fn list_in(dev: &Path, sys: &Path, mut known: BTreeMap<PathBuf, String>) -> Vec<Found> {
+fn list_in(machine: &Machine, mut known: BTreeMap<PathBuf, String>) -> Vec<Found> {
+    let Machine { dev, sys } = machine;
     // Names by identity first: two adapters without serial numbers share one,
     // and the second is then told apart by the socket it is plugged into.
     let mut stable: BTreeMap<PathBuf, PathBuf> = BTreeMap::new();
@@ -61,15 +89,18 @@ fn list_in(dev: &Path, sys: &Path, mut known: BTreeMap<PathBuf, String>) -> Vec<
     }
     known.retain(|device, _| exists(device, sys));
     let text = |path: &Path| path.to_string_lossy().into_owned();
-    let found = known.into_iter().map(|(device, about)| Found {
-        stable: text(stable.get(&device).unwrap_or(&device)),
-        device: text(&device),
-        about,
+    let found = known.into_iter().map(|(device, about)| {
+        let place = machine.place_of(&device);
+        let twin = machine.is_usb(&device) && place.number.is_none();
+        // What two adapters may claim is no name to keep: the socket is.
+        let by_path = place.socket.as_ref().map(|s| dev.join("serial/by-path").join(s)).filter(|p| twin && p.exists());
+        let lasting = by_path.as_ref().or(stable.get(&device)).unwrap_or(&device);
+        Found { stable: text(lasting), device: text(&device), about, socket: place.socket, twin }
     });
     found.collect()
 }
 
-fn entries(folder: &Path) -> Vec<PathBuf> {
+pub(super) fn entries(folder: &Path) -> Vec<PathBuf> {
     let mut paths: Vec<PathBuf> = std::fs::read_dir(folder).into_iter().flatten().flatten().map(|e| e.path()).collect();
     paths.sort();
     paths
@@ -104,7 +135,7 @@ mod tests {
         symlink("../../ttyUSB1", dev.join("serial/by-path/socket-2")).expect("a link");
         symlink("../../ttyUSB9", dev.join("serial/by-id/unplugged")).expect("a link");
         let known = BTreeMap::from([(dev.join("ttyS0"), "built-in port".to_owned()), (dev.join("ttyS1"), String::new())]);
-        let found = list_in(&dev, &sys, known);
+        let found = list_in(&Machine { dev: dev.clone(), sys }, known);
         let names: Vec<(&str, &str)> = found
             .iter()
             .map(|f| {

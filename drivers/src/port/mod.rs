@@ -1,13 +1,17 @@
 //! Ports: open, read, lose, reopen.
 
 mod ask;
+mod doubt;
 mod hold;
+mod link;
 pub mod list;
 pub mod modbus;
 mod open;
+pub mod place;
 pub mod pulse;
 pub mod serial;
 mod tape;
+pub mod tcp;
 
 use serde::{Deserialize, Serialize};
 
@@ -74,7 +78,7 @@ pub enum Flow {
 /// Where an instrument is connected and how its line is set.
 #[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
 pub struct PortSettings {
-    /// Path of the port.
+    /// Path of the port, or `tcp://host:port`.
     pub path: String,
     /// Speed in baud.
     pub baud: u32,

@@ -24,12 +24,6 @@ pub(super) enum OpenFault {
 /// Needs a runtime with I/O around it.
 pub(super) fn open(settings: &PortSettings) -> Result<SerialStream, OpenFault> {
     let path = settings.path.as_str();
-    if path.starts_with("tcp://") {
-        return Err(refused(
-            path,
-            "ports over TCP are not supported yet; connect the instrument to a serial port of this machine",
-        ));
-    }
     if settings.baud == 0 {
         return Err(refused(path, "0 baud would hang up; write the instrument's speed, such as 9600"));
     }
@@ -192,7 +186,7 @@ pub(super) fn busy(path: &str) -> String {
 }
 
 /// The process that holds the lock on the port, else one that has it open.
-fn holder(path: &Path) -> Option<u32> {
+pub(super) fn holder(path: &Path) -> Option<u32> {
     let locks = std::fs::read_to_string("/proc/locks").unwrap_or_default();
     let stat = rustix::fs::stat(path).ok()?;
     let place = format!("{:02x}:{:02x}:{}", rustix::fs::major(stat.st_dev), rustix::fs::minor(stat.st_dev), stat.st_ino);
@@ -233,7 +227,7 @@ mod tests {
 
     #[test]
     fn what_is_not_a_port_is_refused_in_words() {
-        for (path, word) in [("/dev/null", "not a serial port"), ("/", "folder"), ("tcp://10.0.0.7:4001", "TCP")] {
+        for (path, word) in [("/dev/null", "not a serial port"), ("/", "folder")] {
             match open(&settings(path)) {
                 Err(OpenFault::Refused(says)) => assert!(says.contains(word) && says.starts_with(path), "{says}"),
                 other => panic!("{path}: {other:?}"),

@@ -153,6 +153,7 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
         key: Key::random().ok(),
         tap: args.json.then(json_tap),
         told: Some(teller(args.json, Arc::clone(&results))),
+        beside: Default::default(),
     };
     let service = Service::start(plan).map_err(|e| e.to_string())?;
     greet(args, &scenario, &service);
