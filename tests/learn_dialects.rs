@@ -231,6 +231,8 @@ fn what_is_ambiguous_is_refused_with_what_is_missing() {
         (lines(&["1.00 g A", "1.00 g B", "1.00 g A", "1.00 g B", "5.00 g B", "5.00 g A", "5.00 g A", "5.00 g B"]), "'A' and 'B'"),
         (lines(&["-1.00 g", "-1.00 g", "-2.00 g", "-3.00 g"]), "minus sign"),
         (lines(&["1.00 g 2.00 g", "1.50 g 2.50 g", "1.75 g 3.00 g"]), "gross from net"),
+        (lines(&["G 33.39 N 11.96 g", "G 33.40 N 11.97 g", "G 40.00 N 18.57 g", "G 41.00 N 19.57 g"]), "share one unit"),
+        (lines(&["N 17 12.34 g", "N 17 12.34 g", "N 17 25.00 g", "N 17 25.00 g"]), "'N' before another number"),
         (lines(&["C1", "C2", "C3", "C4"]), "--kind"),
         (lines(&["1042", "1042", "3071", "2215"]), "--kind"),
         (lines(&["1.00 oz", "2.00 oz", "2.00 oz", "3.00 oz"]), "unit"),
@@ -342,6 +344,17 @@ fn numbers_beside_the_mass_are_left_alone() {
         let want: Vec<_> = LOADS.iter().map(|(h, _)| (*h, None, Basis::Unmarked)).collect();
         assert!(read(&learned) == want || read(&learned) == want[1..], "{} {learned:#?}", say(1, 2346));
     }
+}
+
+#[test]
+fn a_slip_that_lost_a_line_still_gives_gross_masses_only() {
+    let slip = |g: i64, t: i64| {
+        format!("GROSS {:>8} g\r\nTARE  {:>8} g\r\nNET   {:>8} g\r\n\r\n", decimal(g), decimal(t), decimal(g - t))
+    };
+    let all = [slip(3339, 2143), slip(4518, 2143), slip(5120, 2143), slip(2800, 2143)].concat();
+    let lost = all.replacen("TARE     21.43 g", "#\u{7f}!", 1);
+    assert_ne!(lost, all);
+    assert_eq!(read(&of(lost.as_bytes())), [3339, 4518, 5120, 2800].map(|h| (h, None, Basis::Gross)));
 }
 
 #[test]

@@ -86,7 +86,8 @@ fn proven(tallies: &BTreeMap<&[u8], Tally>, steady: &[&[u8]], moving: &[&[u8]]) 
     let (s_lines, s_still, s_alone) = (sum(steady, |t| t.lines), sum(steady, |t| t.still), sum(steady, |t| t.alone));
     let (m_lines, m_still, m_alone) = (sum(moving, |t| t.lines), sum(moving, |t| t.still), sum(moving, |t| t.alone));
     // Movement may creep at its end, a balance may call a value steady a line late or early.
-    let speaks_against = s_alone * 8 > s_lines || m_still * 5 > m_lines;
+    let clear = s_alone == 0 && m_alone >= 3;
+    let speaks_against = s_alone * 8 > s_lines || m_still * if clear { 3 } else { 5 } > m_lines;
     let spoken_for = s_still >= 2 && (m_alone >= 1 || m_lines >= 2);
     let single = m_lines == 1 && m_still == 0 && s_still >= 4;
     let each = steady.iter().all(|w| tallies[w].still > 0);

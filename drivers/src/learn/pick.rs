@@ -83,6 +83,10 @@ fn ordinal(members: &[&Line]) -> Result<(usize, bool), Refusal> {
     let refuse = |says: &str| Err(Refusal::new(Some(Kind::Balance), 6, says));
     match named[..] {
         [] => refuse("which number of a line is the mass cannot be told: load and unload the pan once more"),
+        // `G 33.39 N 11.96 g`: the unit is that of both.
+        [one] if members.iter().all(|l| shares_unit(l, one)) => {
+            refuse("several masses of a line share one unit: set the balance to send one mass only")
+        }
         [one] => Ok((one, false)),
         _ => {
             if let Some(found) = by_label(members, &named) {
@@ -104,6 +108,17 @@ fn ordinal(members: &[&Line]) -> Result<(usize, bool), Refusal> {
             }
         }
     }
+}
+
+/// Whether another number is labelled and printed as the mass is.
+fn shares_unit(line: &Line, mass: usize) -> bool {
+    let places = |n: &Num| {
+        let text = line.text(n.token);
+        text.iter().position(|b| matches!(b, b'.' | b',')).map(|at| text.len() - at)
+    };
+    let own = places(&line.numbers[mass]);
+    let others = line.numbers.iter().enumerate().filter(|(i, _)| *i != mass);
+    own.is_some() && others.into_iter().any(|(_, n)| n.label.is_some() && places(n) == own)
 }
 
 /// Of several masses the gross one, else the only net one.
