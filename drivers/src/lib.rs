@@ -4,6 +4,7 @@
 pub mod frame;
 pub mod heard;
 pub mod intake;
+pub mod learn;
 pub mod modbus;
 pub mod port;
 pub mod profile;

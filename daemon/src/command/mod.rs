@@ -21,6 +21,7 @@ mod drill;
 mod files;
 mod import;
 mod labels;
+mod learn;
 mod ports;
 mod replay;
 mod run;
@@ -101,6 +102,8 @@ enum Verb {
     Labels(labels::LabelsArgs),
     /// Play a recording through the whole program, in the time of the recording.
     Replay(replay::ReplayArgs),
+    /// Work out a profile by listening to an instrument; nothing is sent to it.
+    Learn(learn::LearnArgs),
 }
 
 /// Where things lie.
@@ -137,6 +140,7 @@ pub fn main() -> ExitCode {
         Verb::Restore(args) => backup::restore(&args),
         Verb::Labels(args) => labels::run(&args),
         Verb::Replay(args) => replay::run(&args, cli.log),
+        Verb::Learn(args) => learn::run(&args),
     })
 }
 

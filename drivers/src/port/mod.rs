@@ -5,6 +5,7 @@ mod doubt;
 mod hold;
 mod link;
 pub mod list;
+pub mod listen;
 pub mod modbus;
 mod open;
 pub mod place;
