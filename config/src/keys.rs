@@ -9,6 +9,7 @@ pub(crate) const STATION: &[&str] = &[
     "lab",
     "mqtt",
     "broker",
+    "screen",
     "bench",
     "instrument",
     "linking",
@@ -19,6 +20,7 @@ pub(crate) const STATION: &[&str] = &[
 pub(crate) const LAB: &[&str] = &["name", "station"];
 pub(crate) const MQTT: &[&str] = &["url", "user", "password_file", "ca_file", "root", "retain_days"];
 pub(crate) const BROKER: &[&str] = &["listen", "password_file"];
+pub(crate) const SCREEN: &[&str] = &["enabled", "listen", "hosts", "secret_file", "certificate_file", "key_file"];
 pub(crate) const BENCH: &[&str] = &["name"];
 pub(crate) const INSTRUMENT: &[&str] = &[
     "name",

@@ -39,6 +39,8 @@ struct Config {
     mqtt: Option<Mqtt>,
     /// The built-in broker.
     broker: Option<Broker>,
+    /// The bench screen and the HTTP interface.
+    screen: Option<Screen>,
     /// Benches: places with a balance and a cup counter.
     bench: Option<Vec<Bench>>,
     /// Balances, cup counters, scanners.
@@ -97,6 +99,26 @@ struct Broker {
     listen: Option<String>,
     /// File of users and passwords, relative to this file; required beyond loopback.
     password_file: Option<String>,
+}
+
+/// The bench screen and the HTTP interface.
+#[derive(JsonSchema)]
+#[schemars(deny_unknown_fields)]
+#[expect(dead_code, reason = "only its shape is used")]
+struct Screen {
+    /// Whether there is one; default true.
+    enabled: Option<bool>,
+    /// Where it listens; default "127.0.0.1:8470".
+    listen: Option<String>,
+    /// Names and addresses under which browsers reach it, beside its own address.
+    #[schemars(inner(length(min = 1, max = 253)))]
+    hosts: Option<OneOrList<String>>,
+    /// File whose first line a browser presents once, relative to this file; required beyond loopback.
+    secret_file: Option<String>,
+    /// File with the certificate chain (PEM), relative to this file; with it the screen speaks TLS.
+    certificate_file: Option<String>,
+    /// File with the key of the certificate (PEM), relative to this file.
+    key_file: Option<String>,
 }
 
 /// A bench.
@@ -264,6 +286,7 @@ mod tests {
             ("Lab", keys::LAB),
             ("Mqtt", keys::MQTT),
             ("Broker", keys::BROKER),
+            ("Screen", keys::SCREEN),
             ("Bench", keys::BENCH),
             ("Instrument", keys::INSTRUMENT),
             ("Linking", keys::LINKING),

@@ -11,7 +11,9 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::time::Instant;
 use tarecup_core::fact::{Fact, Recorded, VERSION};
 use tarecup_core::lab::entities::Entity;
+use tarecup_core::lab::{Lab, Loaded};
 use tarecup_core::names::InstrumentName;
+use tarecup_core::sheet::Seq;
 use tarecup_core::signal::Reading;
 use tarecup_core::stamp::Stamp;
 use tarecup_drivers::heard::{Batch, InstrumentId, PortState, What};
@@ -144,6 +146,19 @@ pub struct Effects {
     pub heard: Vec<(InstrumentId, u64)>,
     /// Whether recording began or ceased.
     pub presence: bool,
+    /// What was touched, as it stands now; nothing unless the desk is mirrored.
+    pub changed: Vec<Changed>,
+}
+
+/// A part of the laboratory that was touched, for a mirror of it.
+#[derive(Clone, Debug)]
+pub enum Changed {
+    /// Everything: the state was read anew.
+    Whole(Box<Lab>),
+    /// An entity as it stands now.
+    Entity(Loaded),
+    /// A loose thing is tied or set aside.
+    NoLonger(Seq),
 }
 
 #[derive(Serialize)]
@@ -282,7 +297,24 @@ impl Desk {
         }
         let replies = group.answers.into_iter().filter_map(|a| a.reply.map(|r| (r, a.answer)));
         effects.replies.extend(replies);
+        if self.mirrored {
+            effects.changed.extend(group.touched.iter().filter_map(|e| self.changed(e)));
+        }
         self.lab.forget_finished();
+    }
+
+    fn changed(&self, entity: &Entity) -> Option<Changed> {
+        let lab = &self.lab;
+        Some(Changed::Entity(match entity {
+            Entity::Specimen(id) => Loaded::Specimen(Box::new(lab.specimen(id)?.clone())),
+            Entity::Container(id) => Loaded::Container(lab.container(id)?.clone()),
+            Entity::Bench(name) => Loaded::Bench(lab.bench(name)?.clone()),
+            Entity::Instrument(name) => Loaded::Instrument(lab.instrument(name)?.clone()),
+            Entity::Loose(seq) => match lab.loose(*seq) {
+                Some(loose) => Loaded::Loose(loose.clone()),
+                None => return Some(Changed::NoLonger(*seq)),
+            },
+        }))
     }
 
     /// Topics that have changed with the group.

@@ -104,6 +104,7 @@ impl Desk {
             broker: None,
             not_recording: None,
             stopped: false,
+            mirrored: false,
         };
         desk.load(now)?;
         let mut effects = Effects::default();

@@ -17,7 +17,7 @@ mod load;
 mod seat;
 mod views;
 
-pub use group::{Effects, LiveOut, Publish};
+pub use group::{Changed, Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
 pub use views::limits as limits_payload;
@@ -65,6 +65,8 @@ pub struct Desk {
     stopped: bool,
     /// When results were last looked through for those to be taken down.
     cleaned: Stamp,
+    /// What is touched is told with the effects.
+    mirrored: bool,
 }
 
 impl Desk {
@@ -76,6 +78,22 @@ impl Desk {
     /// Whether an orderly stop has been stored.
     pub fn stopped(&self) -> bool {
         self.stopped
+    }
+
+    /// The laboratory as it stands, and from now on what is touched is told with the effects.
+    pub fn mirror(&mut self) -> Lab {
+        self.mirrored = true;
+        self.lab.clone()
+    }
+
+    /// The ledger's last fact.
+    pub fn last_seq(&self) -> u64 {
+        self.ledger.tail().last_seq
+    }
+
+    /// How each instrument is doing, as it is published.
+    pub fn instrument_views(&self) -> Vec<serde_json::Value> {
+        (0..self.ears.len()).map(|i| self.instrument_view(i)).collect()
     }
 
     /// Takes what waits and stores it. What may leave is added to `effects`
@@ -438,6 +456,9 @@ impl Desk {
                 self.not_recording = None;
                 self.commit(effects);
                 effects.presence = true;
+                if self.mirrored {
+                    effects.changed.insert(0, Changed::Whole(Box::new(self.lab.clone())));
+                }
                 // What was stored in the moment of trouble was never announced.
                 match self.standing_topics(now) {
                     Ok(topics) => effects.retained.splice(0..0, topics).for_each(drop),
