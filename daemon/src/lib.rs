@@ -12,6 +12,7 @@ pub mod desk;
 pub mod heard;
 pub mod ledger;
 pub mod publish;
+pub mod screen;
 pub mod service;
 pub mod signals;
 pub mod socket;

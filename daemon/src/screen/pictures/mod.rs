@@ -1,0 +1,1 @@
+//! Pictures: SVG from numbers.
