@@ -12,6 +12,22 @@ pub const LARGEST: usize = 64 * 1024;
 /// Deepest nesting of an ask.
 const DEEPEST: usize = 16;
 
+/// Members that are numbers; everything else is text.
+const NUMBERS: [&str; 12] = [
+    "seq",
+    "limit",
+    "no",
+    "drops",
+    "weighing",
+    "count",
+    "what",
+    "celsius",
+    "passing_75um_percent",
+    "clay_percent",
+    "revision",
+    "kind_no",
+];
+
 /// What is asked for.
 #[derive(Debug)]
 pub enum Wanted {
@@ -100,6 +116,20 @@ fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {
         },
         _ => return Ok(None),
     }))
+}
+
+/// A member of an ask that came as text: which members are numbers or lists is known by their names.
+pub fn member(name: &str, value: &str) -> Result<Value, String> {
+    if name == "containers" {
+        return Ok(Value::Array(value.split(',').map(|c| Value::String(c.trim().into())).collect()));
+    }
+    if NUMBERS.contains(&name) && !(name == "limit" && value.parse::<f64>().is_err()) {
+        return value
+            .parse::<serde_json::Number>()
+            .map(Value::Number)
+            .map_err(|_| format!("{name}={value}: a number is expected"));
+    }
+    Ok(Value::String(value.into()))
 }
 
 /// Deepest bracket of a JSON text, brackets inside texts not counted.

@@ -2,6 +2,7 @@
 
 use super::{FAILED, LogForm, StateArg, WRONG_INPUT, files, start_log};
 use crate::clock::MachineClock;
+use crate::screen::ScreenFault;
 use crate::service::{Plan, Service, StartError};
 use crate::signals;
 use std::path::PathBuf;
@@ -47,6 +48,8 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         clock: Arc::new(MachineClock::new()),
         time_passes: true,
         any_broker_port: false,
+        any_screen_port: false,
+        hand: None,
         tap: None,
         told: None,
     };
@@ -54,10 +57,15 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         Ok(service) => service,
         Err(e) => {
             eprintln!("{e}");
-            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_)) { WRONG_INPUT } else { FAILED };
+            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_) | StartError::Screen(ScreenFault::Settings(_)))
+            {
+                WRONG_INPUT
+            } else {
+                FAILED
+            };
         }
     };
-    tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), "recording");
+    tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), screen = service.screen_url().unwrap_or("none"), "recording");
     let Ok((_, stop)) = signals else {
         eprintln!("the system gives no signals; stopping");
         return FAILED;

@@ -61,7 +61,15 @@ impl Page {
 }
 
 /// A page as one person sees it: who is signed in at the screen shows on it.
-pub type Seen = (Page, Option<String>);
+#[derive(Clone, Debug, PartialEq, Eq, PartialOrd, Ord)]
+pub struct Seen {
+    /// The page.
+    pub page: Page,
+    /// Who is signed in at the screen.
+    pub who: Option<String>,
+    /// Their PIN was given a short time ago.
+    pub proven: bool,
+}
 
 /// A part of a page.
 #[derive(Clone, Debug)]
@@ -74,6 +82,13 @@ pub struct Region {
     pub version: u64,
     /// The fact it reflects.
     pub seq: u64,
+}
+
+impl Region {
+    /// The id of its element.
+    pub fn id(&self) -> String {
+        format!("region-{}", self.name)
+    }
 }
 
 /// A page that somebody watches.
@@ -188,6 +203,11 @@ impl Board {
         said.or_else(|| silent.then(|| String::from("the desk does not answer; look at the log and at the disk")))
     }
 
+    /// Whether anybody watches a page.
+    pub fn is_watched(&self) -> bool {
+        lock(&self.watched).values().any(|w| Arc::strong_count(w) > 1)
+    }
+
     /// Notes whether the desk answers.
     pub fn desk_answers(&self, answers: bool) {
         let was = self.silent.swap(!answers, Ordering::Relaxed);
@@ -201,7 +221,7 @@ impl Board {
         let silent = self.silent.load(Ordering::Relaxed);
         let not_recording =
             mirror.not_recording.clone().or_else(|| silent.then(|| String::from("the desk does not answer; look at the log")));
-        let bench = match &seen.0 {
+        let bench = match &seen.page {
             Page::Bench(name) => Some(name.to_string()),
             _ => None,
         };
@@ -210,8 +230,8 @@ impl Board {
                 lab: self.fixed.lab.clone(),
                 station: self.fixed.station.clone(),
                 bench,
-                who: seen.1.clone(),
-                asks_pin: true,
+                who: seen.who.clone(),
+                asks_pin: !seen.proven,
                 not_recording,
                 seq: mirror.seq,
                 now: self.clock.now().rfc3339(),
@@ -224,7 +244,7 @@ impl Board {
     /// The parts of a page; `None` when there is no such page.
     fn parts(&self, mirror: &Mirror, seen: &Seen) -> Option<Vec<(&'static str, Markup)>> {
         let (around, now, words) = (self.around(mirror, seen), self.clock.now(), &ENGLISH);
-        Some(match &seen.0 {
+        Some(match &seen.page {
             Page::Bench(name) => pages::regions::bench(&fill::bench(&mirror.lab, name, &now, &around)?, words),
             Page::Shelf => pages::regions::shelf(&fill::shelf(&mirror.lab, &now, &around), words),
             Page::Loose => pages::regions::loose(&fill::loose(&mirror.lab, &now, &around), words),

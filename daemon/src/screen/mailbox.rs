@@ -54,7 +54,8 @@ impl Mailbox {
 
     /// Takes what the screen needs of the effects. Called in the desk's thread after each commit.
     pub fn put(&self, desk: &Desk, effects: &mut Effects) {
-        let instruments = effects.retained.iter().filter_map(|p| Some((p.topic.strip_prefix("instrument/")?, p.payload.clone()?)));
+        let instruments =
+            effects.retained.iter().filter_map(|p| Some((p.topic.strip_prefix("instrument/")?, p.payload.clone()?)));
         let instruments: Vec<(String, Bytes)> = instruments.map(|(name, payload)| (name.to_string(), payload)).collect();
         if effects.changed.is_empty() && effects.live.is_empty() && instruments.is_empty() && !effects.presence {
             return;

@@ -12,6 +12,9 @@ use crate::desk::{Desk, DeskSetup, InstrumentSetup, Kind, Seat, SeatSettings};
 use crate::heard::Heard;
 use crate::ledger::{LedgerError, OpenOptions};
 use crate::publish::{self, Courier};
+use crate::screen::board::{Board, Fixed};
+use crate::screen::hand::Hand;
+use crate::screen::{self, Screen, ScreenFault};
 use crate::{asks, socket};
 use broker::{SharedCourier, courier_settings, start_courier};
 use bytes::Bytes;
@@ -21,6 +24,7 @@ use serde_json::json;
 use std::collections::BTreeMap;
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::{Arc, PoisonError};
 use std::time::Duration;
 use tarecup_config::profiles::ProfileSource;
@@ -76,6 +80,9 @@ pub enum StartError {
         /// Why.
         error: std::io::Error,
     },
+    /// The bench screen.
+    #[error(transparent)]
+    Screen(#[from] ScreenFault),
     /// The system.
     #[error("the system gives no thread or timer: {0}")]
     System(std::io::Error),
@@ -98,6 +105,10 @@ pub struct Plan {
     pub time_passes: bool,
     /// When the built-in broker's address is taken, take a free one.
     pub any_broker_port: bool,
+    /// When the screen's address is taken, take a free one.
+    pub any_screen_port: bool,
+    /// The demo's hand at a simulated bench.
+    pub hand: Option<Arc<dyn Hand>>,
     /// Sees messages.
     pub tap: Option<Tap>,
     /// Sees facts.
@@ -119,14 +130,17 @@ pub struct Service {
     broker_name: String,
     clock: Arc<dyn BootClock>,
     state_dir: PathBuf,
+    screen: Option<Screen>,
+    time_passes: Arc<AtomicBool>,
 }
 
 impl Service {
     /// Starts everything. Nothing runs when it fails.
     pub fn start(plan: Plan) -> Result<Service, StartError> {
-        let Plan { station, state_dir, clock, time_passes, any_broker_port, tap, told } = plan;
+        let Plan { station, state_dir, clock, time_passes, any_broker_port, any_screen_port, hand, tap, told } = plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
+        let screen = screen::Prepared::new(&station.screen, any_screen_port)?;
         let inbox = Inbox::new();
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
@@ -137,7 +151,7 @@ impl Service {
             clock.set_boot(boot);
             clock.now()
         };
-        let (desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
+        let (mut desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
         #[cfg(feature = "broker")]
@@ -147,7 +161,9 @@ impl Service {
         let broker_name = format!("{}:{}", settings.host, settings.port);
         let courier: SharedCourier = Arc::default();
         start_courier(settings.clone(), &desk, &state_dir, &inbox, &courier, &net_runtime)?;
+        let board = screen.is_some().then(|| board(&station, &mut desk, &clock)).transpose()?;
         let outlet = Outlet {
+            board: board.clone(),
             settings,
             ledger: desk.ledger_name(),
             courier: Arc::clone(&courier),
@@ -162,10 +178,14 @@ impl Service {
             socket::listen(&state_dir).map_err(|error| StartError::Socket { state_dir: state_dir.clone(), error })?
         };
         net_runtime.spawn(socket::serve(listener, Arc::clone(&inbox)));
-        let seat_settings = SeatSettings { clock: clock.clone(), time_passes };
+        let time_passes = Arc::new(AtomicBool::new(time_passes));
+        let seat_settings = SeatSettings { clock: clock.clone(), time_passes: Arc::clone(&time_passes) };
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
         let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox);
+        let screen =
+            screen.zip(board).map(|(prepared, board)| Screen::start(prepared, board, Arc::clone(&inbox), &state_dir, hand));
+        let screen = screen.transpose().map_err(StartError::System)?;
         Ok(Service {
             seat,
             ports,
@@ -183,7 +203,20 @@ impl Service {
             broker_name,
             clock,
             state_dir,
+            screen,
+            time_passes,
         })
+    }
+
+    /// The virtual day is over: from now on time passes by itself.
+    pub fn let_time_pass(&self) {
+        self.time_passes.store(true, Ordering::Relaxed);
+        self.inbox.tick(Box::new(|_| ()));
+    }
+
+    /// Where the bench screen is, as a person types it.
+    pub fn screen_url(&self) -> Option<&str> {
+        self.screen.as_ref().map(Screen::url)
     }
 
     /// The queue in front of the desk.
@@ -251,6 +284,9 @@ impl Service {
 
     /// Stops in order: ports close, the desk stores what it has, the broker hears of it.
     pub fn stop(self) -> bool {
+        if let Some(screen) = self.screen {
+            screen.stop();
+        }
         self.ports_thread.stop(self.ports);
         let desk = self.seat.stop();
         let orderly = desk.as_ref().is_some_and(Desk::stopped);
@@ -277,6 +313,14 @@ fn make_state_dir(path: &Path) -> Result<(), StartError> {
     use std::os::unix::fs::DirBuilderExt;
     let made = std::fs::DirBuilder::new().recursive(true).mode(0o700).create(path);
     made.map_err(|error| StartError::StateDir { path: path.to_path_buf(), error })
+}
+
+/// What the screen shows, as it stands at the start.
+fn board(station: &Station, desk: &mut Desk, clock: &Arc<dyn BootClock>) -> Result<Arc<Board>, StartError> {
+    let start = screen::session::random().map_err(|e| StartError::System(std::io::Error::other(e)))?;
+    let fixed = Fixed { lab: station.lab.name.clone(), station: station.lab.station.to_string(), start: start[..12].to_string() };
+    let lab = desk.mirror();
+    Ok(Board::new(fixed, lab, desk.instrument_views(), desk.last_seq(), Arc::clone(clock)))
 }
 
 fn runtime(name: &str) -> Result<Runtime, StartError> {
