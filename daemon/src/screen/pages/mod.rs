@@ -1,49 +1,77 @@
 //! The pages: view in, HTML out. Pure functions.
+//!
+//! What guided the layout, from public descriptions of them: ANSI/ISA-101.01
+//! (grey while all is normal, colour only for what needs a person),
+//! ISO 9241-110 (self-descriptive, forgiving of slips), MIL-STD-1472 (keys for
+//! a gloved finger at least 19 mm across, here 72 CSS pixels), WCAG 2.2.
+//!
+//! No page carries a script or a style of its own, so that the policy of the
+//! server can forbid both.
 
 pub mod regions;
 
+mod advice;
+mod bench;
+mod correct;
+mod door;
+mod import;
+mod keys;
+mod laboratory;
+mod loose;
+mod parts;
+mod shelf;
+mod shell;
+mod specimen;
+#[cfg(test)]
+mod tests;
+mod work;
+
+pub use specimen::short_code;
+
 use super::view;
 use super::words::Words;
-use maud::{Markup, html};
+use maud::Markup;
 
-/// A page under way: its heading alone until the page is filled in.
-fn heading(title: &str) -> Markup {
-    html! { h1 { (title) } }
-}
+/// Style sheet, at `/assets/style.css`.
+pub const STYLE: &str = include_str!("../assets/style.css");
+/// Script, at `/assets/script.js`.
+pub const SCRIPT: &str = include_str!("../assets/script.js");
+/// Icon of the pages, at `/assets/icon.svg`.
+pub const ICON: &str = include_str!("../assets/icon.svg");
 
 /// The bench page.
-pub fn bench(view: &view::Bench, _words: &Words) -> Markup {
-    heading(&view.name)
+pub fn bench(view: &view::Bench, words: &Words) -> Markup {
+    bench::page(view, words)
 }
 /// The oven shelf.
-pub fn shelf(view: &view::Shelf, _words: &Words) -> Markup {
-    heading(&view.frame.station)
+pub fn shelf(view: &view::Shelf, words: &Words) -> Markup {
+    shelf::page(view, words)
 }
 /// Things tied to nothing.
-pub fn loose(view: &view::LoosePage, _words: &Words) -> Markup {
-    heading(&view.frame.station)
+pub fn loose(view: &view::LoosePage, words: &Words) -> Markup {
+    loose::page(view, words)
 }
 /// A correction of a weighing, a count or a determination.
-pub fn correct(view: &view::Correction, _words: &Words) -> Markup {
-    heading(&view.frame.station)
+pub fn correct(view: &view::Correction, words: &Words) -> Markup {
+    correct::page(view, words)
 }
 /// A specimen; prints on A4 or Letter.
-pub fn specimen(view: &view::SpecimenPage, _words: &Words) -> Markup {
-    heading(&view.id)
+pub fn specimen(view: &view::SpecimenPage, words: &Words) -> Markup {
+    specimen::page(view, words)
 }
 /// The laboratory.
-pub fn laboratory(view: &view::Laboratory, _words: &Words) -> Markup {
-    heading(&view.frame.lab)
+pub fn laboratory(view: &view::Laboratory, words: &Words) -> Markup {
+    laboratory::page(view, words)
 }
 /// What an imported file would do.
-pub fn import(view: &view::Import, _words: &Words) -> Markup {
-    heading(&view.what)
+pub fn import(view: &view::Import, words: &Words) -> Markup {
+    import::page(view, words)
 }
 /// Sign-in.
-pub fn sign_in(view: &view::SignIn, _words: &Words) -> Markup {
-    heading(&view.frame.lab)
+pub fn sign_in(view: &view::SignIn, words: &Words) -> Markup {
+    door::sign_in(view, words)
 }
 /// Something went wrong.
-pub fn problem(view: &view::Problem, _words: &Words) -> Markup {
-    heading(&view.says)
+pub fn problem(view: &view::Problem, words: &Words) -> Markup {
+    door::problem(view, words)
 }

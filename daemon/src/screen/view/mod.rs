@@ -119,3 +119,7 @@ pub struct SignIn {
     /// No try is taken before this moment.
     pub locked_until: Option<Time>,
 }
+
+#[cfg(test)]
+#[allow(missing_docs)]
+pub(crate) mod sample;
