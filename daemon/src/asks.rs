@@ -81,9 +81,7 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     if text.len() > LARGEST {
         return Err(format!("the ask is {} bytes long; at most {LARGEST} fit", text.len()));
     }
-    if depth(text) > DEEPEST {
-        return Err(format!("the ask is nested more than {DEEPEST} deep"));
-    }
+    not_too_deep(text)?;
     let value: Value = serde_json::from_str(text).map_err(|e| format!("the ask is not JSON: {e}"))?;
     let Value::Object(mut object) = value else {
         return Err(String::from("an ask is one JSON object with a member \"ask\""));
@@ -130,6 +128,14 @@ pub fn member(name: &str, value: &str) -> Result<Value, String> {
             .map_err(|_| format!("{name}={value}: a number is expected"));
     }
     Ok(Value::String(value.into()))
+}
+
+/// Refuses what is nested too deep, before anything is parsed.
+pub fn not_too_deep(text: &str) -> Result<(), String> {
+    match depth(text) > DEEPEST {
+        true => Err(format!("the ask is nested more than {DEEPEST} deep")),
+        false => Ok(()),
+    }
 }
 
 /// Deepest bracket of a JSON text, brackets inside texts not counted.

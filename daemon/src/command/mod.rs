@@ -17,8 +17,10 @@ mod ask;
 mod check;
 mod demo;
 mod files;
+mod operator;
 mod ports;
 mod run;
+mod secret;
 mod status;
 mod tell;
 mod work;
@@ -76,6 +78,10 @@ enum Verb {
     Ask(ask::AskArgs),
     /// How the running service is doing.
     Status(status::StatusArgs),
+    /// Operators and their PINs, for corrections and reviews on the screen.
+    Operator(operator::OperatorArgs),
+    /// Secrets of this station.
+    Secret(secret::SecretArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
 }
@@ -105,6 +111,8 @@ pub fn main() -> ExitCode {
         Verb::Work(args) => work::run(&args),
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
+        Verb::Operator(args) => operator::run(&args),
+        Verb::Secret(args) => secret::run(&args),
         Verb::Ports(args) => ports::run(&args),
     })
 }

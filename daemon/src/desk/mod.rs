@@ -15,7 +15,7 @@ mod group;
 pub mod inbox;
 mod load;
 mod seat;
-mod views;
+pub(crate) mod views;
 
 pub use group::{Changed, Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};

@@ -105,7 +105,10 @@ async fn name(
             let proven = app.prove(ends, &named, &pin).await;
             Some(proven.map_err(|denied| (status_of(&denied), denied.to_string()))?)
         }
-        None if who.proven && said.as_ref().is_none_or(|s| Some(s) == here.as_ref()) => here.clone(),
+        // A proof ends with the PIN: whoever was removed meanwhile is proven no more.
+        None if who.proven && said.as_ref().is_none_or(|s| Some(s) == here.as_ref()) => {
+            here.clone().filter(|h| PROVEN.contains(&word) && app.operators().iter().any(|o| o == h.as_str()))
+        }
         None => None,
     };
     if PROVEN.contains(&word) && proven.is_none() {

@@ -85,9 +85,9 @@ pub struct Region {
 }
 
 impl Region {
-    /// The id of its element.
-    pub fn id(&self) -> String {
-        format!("region-{}", self.name)
+    /// Its element has this behind `region-` as id.
+    pub fn id(&self) -> &'static str {
+        self.name
     }
 }
 

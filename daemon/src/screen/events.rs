@@ -3,13 +3,13 @@
 //! `GET /events?bench=NAME` or `?page=shelf`, `loose`, `laboratory`,
 //! `?specimen=ID`. Events:
 //!
-//! * `region` `{"id","html","seq"}`: put this into the element of that id;
+//! * `region` `{"id","html","seq"}`: put this into the element `region-ID`;
 //! * `live` `{"instrument",…}`: a reading or a drop, the latest only;
 //! * `beat` `{"now","seq","recording","why"}`: each second, so that silence means trouble.
 //!
 //! The id of an event is `START-VERSION`. A browser that comes back with it as
 //! `Last-Event-ID` gets what has changed since; after a restart of the service,
-//! everything. A slow one skips what lay between: nothing is queued for it.
+//! everything that is not older than the fact named in `&after=SEQ`. A slow one skips what lay between: nothing is queued for it.
 
 use super::app::App;
 use super::board::{Page, Seen, Watched};
@@ -38,6 +38,9 @@ pub(super) struct Which {
     bench: Option<String>,
     specimen: Option<String>,
     page: Option<String>,
+    /// The fact that the page reflects already.
+    #[serde(default)]
+    after: u64,
 }
 
 impl Which {
@@ -90,6 +93,7 @@ pub(super) async fn events(
         newest,
         live,
         version,
+        after: which.after,
         live_version: version,
         beat: tokio::time::interval(BEAT),
         ready: VecDeque::new(),
@@ -110,6 +114,7 @@ struct Watch {
     newest: watch::Receiver<u64>,
     live: watch::Receiver<u64>,
     version: u64,
+    after: u64,
     live_version: u64,
     beat: Interval,
     ready: VecDeque<Event>,
@@ -142,6 +147,9 @@ impl Watch {
         newer.sort_by_key(|r| r.version);
         for region in newer {
             self.version = self.version.max(region.version);
+            if region.seq < self.after {
+                continue;
+            }
             let data = json!({"id": region.id(), "html": &*region.html, "seq": region.seq}).to_string();
             self.ready.push_back(self.event("region", &data).id(format!("{}-{}", self.app.board.fixed.start, region.version)));
         }

@@ -23,7 +23,7 @@ const POLICY: &str = "default-src 'none'; script-src 'self'; style-src 'self'; i
                       form-action 'self'; frame-ancestors 'none'; base-uri 'none'";
 
 /// Why a request is not taken.
-#[derive(Debug, PartialEq, Eq)]
+#[derive(Clone, Debug, PartialEq, Eq)]
 pub struct Refused {
     /// The status.
     pub status: StatusCode,
@@ -41,7 +41,6 @@ impl Refused {
 /// Passes a request on, or refuses it.
 pub(super) async fn guard(State(app): State<Arc<App>>, mut request: Request, next: Next) -> Response {
     let api = site::wants_json(request.uri().path());
-    let head = request.method() == Method::HEAD;
     let answer = match admit(&app, &mut request) {
         Err(refused) => site::refusal(&app, api, &refused),
         Ok(Admitted::Enter) => site::to_enter(request.uri(), api),
@@ -53,8 +52,33 @@ pub(super) async fn guard(State(app): State<Arc<App>>, mut request: Request, nex
             }
         },
     };
-    let _ = head;
-    with_headers(answer)
+    with_headers(in_words(&app, api, answer))
+}
+
+/// A refusal that the framework made, in the words and the form of all others.
+fn in_words(app: &App, api: bool, answer: Response) -> Response {
+    let plain = answer.extensions().get::<Refused>().cloned();
+    let says = match (plain, answer.status()) {
+        (Some(refused), _) => refused.says,
+        (None, StatusCode::PAYLOAD_TOO_LARGE) => String::from("the request is too large: 64 kB fit, and 1 MB for a list"),
+        (None, StatusCode::METHOD_NOT_ALLOWED) => String::from("this address is not asked like that; /api/openapi.json says how"),
+        (None, StatusCode::UNSUPPORTED_MEDIA_TYPE) if !api => String::from("a form is sent as application/x-www-form-urlencoded"),
+        (None, status) if status.is_client_error() && !typed(&answer) => String::from("the request cannot be understood"),
+        _ => return answer,
+    };
+    let status = answer.status();
+    let allow = answer.headers().get(header::ALLOW).cloned();
+    let mut told = site::refusal(app, api, &Refused::new(status, says));
+    if let Some(allow) = allow {
+        told.headers_mut().insert(header::ALLOW, allow);
+    }
+    told
+}
+
+/// Whether a body is ours already: the framework's own are plain text.
+fn typed(answer: &Response) -> bool {
+    let kind = answer.headers().get(header::CONTENT_TYPE).and_then(|v| v.to_str().ok()).unwrap_or_default();
+    !kind.is_empty() && !kind.starts_with("text/plain")
 }
 
 enum Admitted {
@@ -170,7 +194,10 @@ fn with_headers(mut answer: Response) -> Response {
 
 impl IntoResponse for Refused {
     fn into_response(self) -> Response {
-        (self.status, self.says).into_response()
+        // Whoever passes the answer on puts it into the form that was asked for.
+        let mut answer = self.status.into_response();
+        answer.extensions_mut().insert(self);
+        answer
     }
 }
 

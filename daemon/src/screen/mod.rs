@@ -4,6 +4,7 @@
 //! It has threads of its own, which yield to the desk, and everything that it
 //! holds for a browser is bounded.
 
+mod api;
 pub mod app;
 mod asking;
 pub mod board;
@@ -13,13 +14,17 @@ mod guard;
 pub mod hand;
 pub mod import;
 pub mod mailbox;
+mod openapi;
 pub mod operators;
 pub mod pages;
 pub mod pictures;
 mod routes;
 mod server;
 pub mod session;
+mod shapes;
+mod shapes_ask;
 mod site;
+mod subject;
 pub mod view;
 pub mod words;
 

@@ -154,7 +154,8 @@ pub struct Who {
 
 struct Session {
     operator: String,
-    proven: Instant,
+    /// When the PIN was given; `None`: the person is named, not proven.
+    proven: Option<Instant>,
     used: Instant,
 }
 
@@ -185,20 +186,20 @@ impl Sessions {
             return Who::default();
         }
         session.used = now;
-        let proven = now - session.proven <= PROOF;
+        let proven = session.proven.is_some_and(|at| now - at <= PROOF);
         Who { operator: Some(session.operator.clone()), proven, session: hex(&key[..8]) }
     }
 
     /// The PIN of a session was used: it stands for a while longer.
     pub fn used(&self, headers: &HeaderMap, cookies: &Cookies) {
         let Some(key) = cookie(headers, &cookies.session).map(digest) else { return };
-        if let Some(session) = self.lock().get_mut(&key).filter(|s| s.proven.elapsed() <= PROOF) {
-            session.proven = Instant::now();
+        if let Some(session) = self.lock().get_mut(&key).filter(|s| s.proven.is_some_and(|at| at.elapsed() <= PROOF)) {
+            session.proven = Some(Instant::now());
         }
     }
 
-    /// Begins a session; gives its cookie.
-    pub fn begin(&self, operator: &str, cookies: &Cookies) -> Result<HeaderValue, String> {
+    /// Begins a session of a person, proven by a PIN or only named; gives its cookie.
+    pub fn begin(&self, operator: &str, proven: bool, cookies: &Cookies) -> Result<HeaderValue, String> {
         let value = random()?;
         let now = Instant::now();
         let mut all = self.lock();
@@ -207,7 +208,7 @@ impl Sessions {
             let Some(oldest) = all.iter().min_by_key(|(_, s)| s.used).map(|(k, _)| *k) else { break };
             all.remove(&oldest);
         }
-        all.insert(digest(&value), Session { operator: operator.into(), proven: now, used: now });
+        all.insert(digest(&value), Session { operator: operator.into(), proven: proven.then_some(now), used: now });
         Ok(cookies.set(&cookies.session, &value, None))
     }
 
@@ -217,11 +218,6 @@ impl Sessions {
             self.lock().remove(&digest(value));
         }
         cookies.set(&cookies.session, "", Some(0))
-    }
-
-    /// Ends every session of a person: they were removed, or got another PIN.
-    pub fn end_of(&self, operator: &str) {
-        self.lock().retain(|_, s| s.operator != operator);
     }
 }
 
@@ -239,7 +235,7 @@ mod tests {
     #[test]
     fn a_session_names_a_person_until_it_ends() {
         let (sessions, cookies) = (Sessions::default(), Cookies::new(8470, false));
-        let set = sessions.begin("AB", &cookies).expect("a session");
+        let set = sessions.begin("AB", true, &cookies).expect("a session");
         for part in ["HttpOnly", "SameSite=Strict", "Path=/"] {
             assert!(set.to_str().expect("text").contains(part));
         }
@@ -257,14 +253,12 @@ mod tests {
     #[test]
     fn sessions_are_bounded() {
         let (sessions, cookies) = (Sessions::default(), Cookies::new(8470, true));
-        let first = sessions.begin("AB", &cookies).expect("a session");
+        let first = sessions.begin("AB", true, &cookies).expect("a session");
         assert!(first.to_str().expect("text").contains("Secure") && first.to_str().expect("text").starts_with("__Host-"));
         for _ in 0..SESSIONS_MOST {
-            sessions.begin("KL", &cookies).expect("a session");
+            sessions.begin("KL", true, &cookies).expect("a session");
         }
         assert_eq!(sessions.lock().len(), SESSIONS_MOST);
-        sessions.end_of("KL");
-        assert!(sessions.lock().len() <= 1);
     }
 
     #[test]

@@ -5,6 +5,7 @@ use super::asking::{self, Answered};
 use super::board::{Page, Seen};
 use super::fill::{self, Around};
 use super::guard::Refused;
+use super::import::{self, Read, What};
 use super::server::Ends;
 use super::session::Who;
 use super::words::ENGLISH;
@@ -152,6 +153,54 @@ pub(super) async fn specimen(State(app): State<Arc<App>>, Extension(who): Extens
     })
 }
 
+/// `GET /correct/SEQ`
+pub(super) async fn correct(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Path(seq): Path<u64>,
+    headers: HeaderMap,
+) -> Made {
+    correction(&app, &who, &headers, |lab| super::subject::of_fact(lab, seq))
+}
+
+/// `GET /correct/SPECIMEN/KIND/NO`
+pub(super) async fn correct_trial(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Path((specimen, kind, no)): Path<(String, String, u32)>,
+    headers: HeaderMap,
+) -> Made {
+    let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such determination");
+    let id = SpecimenId::new(&specimen).map_err(|_| none())?;
+    at_hand(&app, &id).await;
+    correction(&app, &who, &headers, |lab| super::subject::of_trial(lab, &id, &kind, no))
+}
+
+fn correction(
+    app: &App,
+    who: &Who,
+    headers: &HeaderMap,
+    subject: impl FnOnce(&tarecup_core::lab::Lab) -> Option<view::Subject>,
+) -> Made {
+    let from = came_from(headers).unwrap_or_else(|| String::from("/laboratory"));
+    let frame = frame(app, who);
+    let view = app.board.look(|m| {
+        let open = m.lab.specimens().filter(|s| s.open());
+        Some(view::Correction {
+            subject: subject(&m.lab)?,
+            specimens: open
+                .map(|s| view::SpecimenKey { id: s.id.to_string(), description: s.description.clone(), chosen: false })
+                .collect(),
+            containers: m.lab.containers().map(|c| c.id.to_string()).collect(),
+            then: then(&Members::from([(String::from("then"), from)])),
+            frame,
+        })
+    });
+    let none =
+        || problem(app, who, StatusCode::NOT_FOUND, "no weighing or count has this number, or its specimen is not at hand");
+    view.map(|v| Html(pages::correct(&v, &ENGLISH).into_string())).ok_or_else(none)
+}
+
 /// A finished specimen comes from the ledger when it is named.
 pub(super) async fn at_hand(app: &App, id: &SpecimenId) {
     if app.board.look(|m| m.lab.specimen(id).is_some()) {
@@ -264,17 +313,20 @@ pub(super) async fn sign_in_with(
     Extension(ends): Extension<Ends>,
     Form(mut members): Form<Members>,
 ) -> Response {
-    let named = ["operator", "who"].into_iter().find_map(|n| members.get(n)).cloned().unwrap_or_default();
-    members.insert("operator".into(), named.trim().to_string());
+    // The code of a badge names its owner as the card does.
+    let named = members.get("operator").map_or("", |o| o.trim()).trim_start_matches("+by-").to_string();
+    members.insert("operator".into(), named.clone());
     let refused = |status, says: String| sign_in_page(&app, &who, &members, status, Some(says));
-    let operator = match Operator::new(named.trim()) {
+    let operator = match Operator::new(&named) {
         Ok(operator) => operator,
         Err(e) => return refused(StatusCode::BAD_REQUEST, format!("initials: {e}")),
     };
     let pin = members.get("pin").map_or("", String::as_str);
-    match app.prove(&ends, &operator, pin).await {
+    // Without a PIN a person is named, not proven: weighings carry the name, corrections still ask for the PIN.
+    let judged = if pin.is_empty() { Ok(operator) } else { app.prove(&ends, &operator, pin).await };
+    match judged {
         Err(denied) => refused(asking::status_of(&denied), denied.to_string()),
-        Ok(operator) => match app.sessions.begin(operator.as_str(), &app.cookies) {
+        Ok(operator) => match app.sessions.begin(operator.as_str(), !pin.is_empty(), &app.cookies) {
             Err(says) => refused(StatusCode::INTERNAL_SERVER_ERROR, says),
             Ok(cookie) => {
                 let to = then(&members);
@@ -303,6 +355,76 @@ pub(super) async fn sign_out(State(app): State<Arc<App>>, headers: HeaderMap, Fo
 fn with_cookie(mut answer: Response, cookie: HeaderValue) -> Response {
     answer.headers_mut().append(header::SET_COOKIE, cookie);
     answer
+}
+
+/// `POST /import`
+pub(super) async fn import(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Form(members): Form<Members>,
+) -> Response {
+    match read_list(&app, &members) {
+        Ok((what, read)) => import_page(&app, &who, StatusCode::OK, what.word(), &members, Ok(read)),
+        Err(says) => {
+            let what = members.get("what").map_or("", String::as_str);
+            import_page(&app, &who, StatusCode::UNPROCESSABLE_ENTITY, what, &members, Err(says))
+        }
+    }
+}
+
+/// `POST /import/take`
+pub(super) async fn import_take(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Extension(ends): Extension<Ends>,
+    Form(members): Form<Members>,
+) -> Response {
+    let (what, mut read) = match read_list(&app, &members) {
+        Ok(read) => read,
+        Err(says) => return problem(&app, &who, StatusCode::UNPROCESSABLE_ENTITY, &says),
+    };
+    let by = members.get("who").map(|w| w.trim()).filter(|w| !w.is_empty());
+    let mut by = by.map(String::from);
+    if let Some(pin) = members.get("pin").filter(|p| !p.is_empty()) {
+        let named = by.clone().or(who.operator.clone()).and_then(|n| Operator::new(&n).ok());
+        let Some(named) = named else { return problem(&app, &who, StatusCode::FORBIDDEN, "say whose PIN it is") };
+        match app.prove(&ends, &named, pin).await {
+            Ok(proven) => by = Some(proven.to_string()),
+            Err(denied) => return problem(&app, &who, asking::status_of(&denied), &denied.to_string()),
+        }
+    }
+    super::api::taken(&app, &ends, &who, &mut read, by.as_deref()).await;
+    if read.lines.iter().all(|l| l.refused.is_none()) {
+        return Redirect::to("/laboratory").into_response();
+    }
+    // What was not taken stays on the page, to be mended and brought again.
+    read.lines.retain(|l| l.refused.is_some());
+    let says = String::from("every other line was taken; these were not");
+    let view = view::Import {
+        frame: frame(&app, &who),
+        what: what.word().into(),
+        lines: read.lines,
+        refused: Some(says),
+        ..Default::default()
+    };
+    (StatusCode::UNPROCESSABLE_ENTITY, Html(pages::import(&view, &ENGLISH).into_string())).into_response()
+}
+
+fn read_list(app: &App, members: &Members) -> Result<(What, Read), String> {
+    let what = members.get("what").and_then(|w| What::named(w)).ok_or("a list is of containers or of specimens")?;
+    let text = members.get("text").map_or("", String::as_str);
+    app.board.look(|m| import::read(what, text, &m.lab)).map(|read| (what, read))
+}
+
+fn import_page(app: &App, who: &Who, status: StatusCode, what: &str, members: &Members, read: Result<Read, String>) -> Response {
+    let text = members.get("text").cloned().unwrap_or_default();
+    let what = if what == "specimens" { "specimens" } else { "containers" };
+    let (lines, refused) = match read {
+        Ok(read) => (read.lines, None),
+        Err(says) => (Vec::new(), Some(says)),
+    };
+    let view = view::Import { frame: frame(app, who), what: what.into(), text, lines, refused };
+    (status, Html(pages::import(&view, &ENGLISH).into_string())).into_response()
 }
 
 /// `GET /enter`

@@ -140,7 +140,9 @@ impl Service {
         let Plan { station, state_dir, clock, time_passes, any_broker_port, any_screen_port, hand, tap, told } = plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
-        let screen = screen::Prepared::new(&station.screen, any_screen_port)?;
+        if station.screen.enabled {
+            screen::check(&station.screen)?;
+        }
         let inbox = Inbox::new();
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
@@ -152,6 +154,7 @@ impl Service {
             clock.now()
         };
         let (mut desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
+        let screen = screen::Prepared::new(&station.screen, any_screen_port)?;
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
         #[cfg(feature = "broker")]
