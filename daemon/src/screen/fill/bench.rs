@@ -212,12 +212,12 @@ pub(super) fn choices(lab: &Lab) -> (Vec<SpecimenKey>, Vec<String>) {
     (specimens(lab, None), lab.containers().take(OFFERED).map(|c| c.id.to_string()).collect())
 }
 
-/// Where a trial or count is looked for by others.
+/// Weighings of a determination with their roles; its tare left out, which is the container's.
 pub(super) fn trial_roles(t: &TrialRecord) -> impl Iterator<Item = (&Weighing, &'static str)> {
     of_trial(t).map(|(_, w, role)| (w, role))
 }
 
-/// Never asked for a kind that has no page.
+/// Kind and number of a determination, for a page.
 pub(super) fn trial_of(t: &TrialRecord) -> Option<(view::Kind, u32)> {
     super::kind(t.kind).map(|k| (k, t.no))
 }

@@ -5,16 +5,16 @@
 mod advice;
 mod bench;
 mod history;
+mod import;
 mod laboratory;
 mod loose;
 mod shelf;
 mod specimen;
-#[cfg(test)]
-mod tests;
 
 pub use advice::water;
 pub use bench::bench;
 pub use history::history;
+pub use import::import;
 pub use laboratory::laboratory;
 pub use loose::{correction, loose, trial_correction};
 pub use shelf::shelf;

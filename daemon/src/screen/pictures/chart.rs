@@ -30,7 +30,8 @@ pub fn plasticity_chart(specimen: &str, chart: &Chart, w: &Words) -> Markup {
     let ll_to = finite().map(|(ll, _)| ll * 1.05).fold(LL_TO, f64::max).min(1_000.0);
     let pi_to = finite().map(|(_, pi)| pi * 1.05).fold(PI_TO, f64::max).min(1_000.0);
     let (x, y) = (Axis::linear(0.0, ll_to, LEFT, RIGHT), Axis::linear(0.0, pi_to, BOTTOM, TOP));
-    let said = match chart.this {
+    let this = chart.this.filter(|(ll, pi)| ll.is_finite() && pi.is_finite());
+    let said = match this {
         Some((ll, pi)) => fill(w.chart_said, &[specimen, &format!("{ll:.0}"), &format!("{pi:.0}")]),
         None => fill(w.chart_said_none, &[specimen]),
     };
@@ -41,7 +42,7 @@ pub fn plasticity_chart(specimen: &str, chart: &Chart, w: &Words) -> Markup {
             @for (id, ll, pi) in chart.others.iter().filter(|o| o.1.is_finite() && o.2.is_finite()) {
                 circle.other cx=(p(x.place(*ll))) cy=(p(y.place(*pi))) r="4" { title { (id) } }
             }
-            @if let Some((ll, pi)) = chart.this.filter(|t| t.0.is_finite() && t.1.is_finite()) {
+            @if let Some((ll, pi)) = this {
                 path.here d=(format!("M{} {}l8 8 -8 8 -8 -8Z", p(x.place(ll)), p(y.place(pi) - 8.0))) {}
                 text.value x=(p(x.place(ll) + 12.0)) y=(p(y.place(pi) - 6.0)) { (specimen) }
             }
