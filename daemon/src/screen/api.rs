@@ -3,13 +3,13 @@
 use super::app::App;
 use super::asking::{self, Answered};
 use super::guard::Refused;
-use super::import::{self, What};
 use super::server::Ends;
 use super::session::Who;
 use super::shapes::{
     Bench, Benches, Container, Containers, Facts, Imported, ImportedLine, Instruments, Limits, Loose, LooseThings, Session,
     SignIn, Specimen, Specimens, Status,
 };
+use super::view::ImportLine;
 use super::{openapi, site};
 use crate::desk::views;
 use crate::ledger::Reader;
@@ -22,6 +22,7 @@ use serde::de::DeserializeOwned;
 use serde::{Deserialize, Serialize};
 use serde_json::{Map, Value, json};
 use std::sync::Arc;
+use tarecup_core::lab::ask::Ask;
 use tarecup_core::lab::entities::LooseWhat;
 use tarecup_core::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
 
@@ -249,27 +250,35 @@ pub(super) async fn import(
         let says = "the body is a list: send it with Content-Type: text/csv";
         return Err(Refused::new(StatusCode::UNSUPPORTED_MEDIA_TYPE, says));
     }
-    let what = What::named(&what).ok_or_else(|| none("list; there are containers and specimens"))?;
-    let text = std::str::from_utf8(&body).map_err(|_| Refused::new(StatusCode::BAD_REQUEST, "the list is not UTF-8"))?;
-    let read = app.board.look(|m| import::read(what, text, &m.lab));
-    let mut read = read.map_err(|says| Refused::new(StatusCode::UNPROCESSABLE_ENTITY, says))?;
-    if take.take {
-        taken(&app, &ends, &who, &mut read, None).await;
+    if !["containers", "specimens"].contains(&what.as_str()) {
+        return Err(none("list of that kind; there are containers and specimens"));
     }
-    let line = |l: super::view::ImportLine| ImportedLine { line: l.no, fields: l.fields, refused: l.refused, note: l.note };
+    let text = std::str::from_utf8(&body).map_err(|_| Refused::new(StatusCode::BAD_REQUEST, "the list is not UTF-8"))?;
+    let (mut read, asks) = site::read_list(&app, &who, &what, text);
+    if let Some(says) = read.refused {
+        return Err(Refused::new(StatusCode::UNPROCESSABLE_ENTITY, says));
+    }
+    if take.take {
+        taken(&app, &ends, &who, &mut read.lines, asks, None).await;
+    }
+    let line = |l: ImportLine| ImportedLine { line: l.no, fields: l.fields, refused: l.refused, note: l.note };
     send(&Imported { taken: take.take, lines: read.lines.into_iter().map(line).collect() })
 }
 
 /// Takes the lines of a list that can be taken; what the desk refuses is told at its line.
-pub(super) async fn taken(app: &App, ends: &Ends, who: &Who, read: &mut import::Read, by: Option<&str>) {
-    for (no, mut ask) in std::mem::take(&mut read.asks) {
-        if let Some(by) = by {
-            ask.insert("who".into(), json!(by));
-        }
-        let refusal = asking::ask(app, ends, who, ask).await.refusal();
-        if let Some(line) = read.lines.iter_mut().find(|l| l.no == no) {
-            line.refused = refusal;
-        }
+pub(super) async fn taken(
+    app: &App,
+    ends: &Ends,
+    who: &Who,
+    lines: &mut [ImportLine],
+    asks: Vec<Ask>,
+    by: Option<&str>,
+) {
+    // Lines that were not refused and asks are in the same order.
+    for (line, ask) in lines.iter_mut().filter(|l| l.refused.is_none()).zip(asks) {
+        let Ok(Value::Object(mut ask)) = serde_json::to_value(ask) else { continue };
+        ask.insert("who".into(), json!(by));
+        line.refused = asking::ask(app, ends, who, ask).await.refusal();
     }
 }
 

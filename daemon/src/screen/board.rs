@@ -8,12 +8,14 @@
 use super::fill::{self, Around, Heard};
 use super::mailbox::{Mailbox, News};
 use super::words::ENGLISH;
+use super::record::{self, Record};
 use super::{pages, view};
 use crate::clock::BootClock;
 use crate::desk::{Changed, LiveOut};
 use maud::Markup;
 use serde_json::{Value, json};
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
+use std::path::PathBuf;
 use std::sync::atomic::{AtomicBool, AtomicU64, Ordering};
 use std::sync::{Arc, Mutex, MutexGuard, PoisonError, RwLock};
 use std::time::Duration;
@@ -30,6 +32,9 @@ const PACE: Duration = Duration::from_millis(95);
 const TIME_SHOWS: Duration = Duration::from_secs(5);
 /// Finished specimens that the mirror keeps at hand.
 const FINISHED_KEPT: usize = 300;
+
+/// Specimens whose record is kept at hand.
+const RECORDS_KEPT: usize = 20;
 
 /// A page that changes while it is open.
 #[derive(Clone, Debug, PartialEq, Eq, PartialOrd, Ord)]
@@ -139,6 +144,8 @@ pub struct Fixed {
     pub station: String,
     /// Tells this start from others.
     pub start: String,
+    /// Where the ledger lies.
+    pub state_dir: PathBuf,
 }
 
 /// The board.
@@ -153,6 +160,10 @@ pub struct Board {
     live_newest: watch::Sender<u64>,
     version: AtomicU64,
     clock: Arc<dyn BootClock>,
+    /// What the ledger tells of the specimens whose pages are open.
+    records: Mutex<BTreeMap<SpecimenId, Record>>,
+    /// Oven temperature for the next containers.
+    celsius: Mutex<Option<f64>>,
     /// The desk has not answered for a while.
     silent: AtomicBool,
 }
@@ -177,6 +188,8 @@ impl Board {
             live_newest: watch::Sender::new(0),
             version: AtomicU64::new(1),
             clock,
+            records: Mutex::default(),
+            celsius: Mutex::default(),
             silent: AtomicBool::new(false),
         })
     }
@@ -208,6 +221,50 @@ impl Board {
         lock(&self.watched).values().any(|w| Arc::strong_count(w) > 1)
     }
 
+    /// From now on containers go into an oven of this temperature unless somebody says otherwise.
+    pub fn set_celsius(&self, celsius: f64) {
+        *lock(&self.celsius) = Some(celsius);
+    }
+
+    /// Reads what the ledger tells of a specimen, unless that is known already.
+    pub async fn read_record(&self, id: &SpecimenId) -> Record {
+        let (seq, begins) = self.look(|m| (m.seq, m.lab.specimen(id).and_then(record::begins)));
+        if let Some(known) = lock(&self.records).get(id).filter(|r| r.through >= seq) {
+            return known.clone();
+        }
+        let (dir, key, now) = (self.fixed.state_dir.clone(), id.clone(), self.clock.now());
+        let read = tokio::task::spawn_blocking(move || record::read(&dir, &key, begins, &now)).await;
+        let record = match read {
+            Ok(Ok(record)) => record,
+            Ok(Err(says)) => {
+                tracing::warn!(%says, "the history of {id} could not be read");
+                return Record::default();
+            }
+            Err(_) => return Record::default(),
+        };
+        let mut records = lock(&self.records);
+        while records.len() >= RECORDS_KEPT {
+            records.pop_first();
+        }
+        records.insert(id.clone(), record.clone());
+        record
+    }
+
+    /// Specimens whose pages are open, each with its record brought up to date.
+    async fn read_records(&self) {
+        let open: BTreeSet<SpecimenId> = lock(&self.watched)
+            .iter()
+            .filter(|(_, w)| Arc::strong_count(w) > 1)
+            .filter_map(|(s, _)| match &s.page {
+                Page::Specimen(id) => Some(id.clone()),
+                _ => None,
+            })
+            .collect();
+        for id in &open {
+            self.read_record(id).await;
+        }
+    }
+
     /// Notes whether the desk answers.
     pub fn desk_answers(&self, answers: bool) {
         let was = self.silent.swap(!answers, Ordering::Relaxed);
@@ -225,6 +282,10 @@ impl Board {
             Page::Bench(name) => Some(name.to_string()),
             _ => None,
         };
+        let record = match &seen.page {
+            Page::Specimen(id) => lock(&self.records).get(id).cloned().unwrap_or_default(),
+            _ => Record::default(),
+        };
         Around {
             frame: view::Frame {
                 lab: self.fixed.lab.clone(),
@@ -238,6 +299,10 @@ impl Board {
                 ..view::Frame::default()
             },
             instruments: mirror.heard.clone(),
+            history: record.history,
+            head: record.head,
+            celsius: *lock(&self.celsius),
+            ..Around::default()
         }
     }
 
@@ -368,7 +433,10 @@ impl Board {
                     due |= news.shows();
                     self.take(news);
                 }
-                _ = time.tick() => due = true,
+                _ = time.tick() => {
+                    self.read_records().await;
+                    due = true;
+                }
                 () = tokio::time::sleep_until(next), if due => (),
             }
             if due && Instant::now() >= next {

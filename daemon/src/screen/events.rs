@@ -69,6 +69,10 @@ pub(super) async fn events(
         let says = "say which page: ?bench=NAME, ?specimen=ID or ?page=shelf, loose or laboratory";
         return Refused::new(StatusCode::BAD_REQUEST, says).into_response();
     };
+    if let Page::Specimen(id) = &page {
+        super::site::at_hand(&app, id).await;
+        app.board.read_record(id).await;
+    }
     let Some(watched) = app.board.watch(Seen { page: page.clone(), who: who.operator.clone(), proven: who.proven }) else {
         return Refused::new(StatusCode::NOT_FOUND, "there is no such page").into_response();
     };

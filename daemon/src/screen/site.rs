@@ -5,7 +5,6 @@ use super::asking::{self, Answered};
 use super::board::{Page, Seen};
 use super::fill::{self, Around};
 use super::guard::Refused;
-use super::import::{self, Read, What};
 use super::server::Ends;
 use super::session::Who;
 use super::words::ENGLISH;
@@ -19,9 +18,12 @@ use maud::{Markup, html};
 use serde_json::{Map, Value};
 use std::collections::BTreeMap;
 use std::sync::Arc;
+use tarecup_core::fact::TrialRef;
 use tarecup_core::lab::Loaded;
+use tarecup_core::lab::ask::Ask;
 use tarecup_core::lab::entities::Specimen;
 use tarecup_core::names::{BenchName, Operator, SpecimenId};
+use tarecup_core::sheet::Kind;
 
 /// Members of a form.
 pub type Members = BTreeMap<String, String>;
@@ -113,10 +115,10 @@ pub(super) async fn bench(
 ) -> Made {
     let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such bench");
     let name = BenchName::new(&name).map_err(|_| none())?;
+    let paste_g: Option<String> = query.get("paste_g").map(|g| g.chars().take(12).collect());
     let page = shown(&app, &who, Page::Bench(name.clone()), |lab, around| {
-        let mut view = fill::bench(lab, &name, &app.board.now(), around)?;
-        view.advice.paste_g = query.get("paste_g").map(|g| g.chars().take(12).collect());
-        Some(pages::bench(&view, &ENGLISH))
+        let around = Around { paste_g, ..around.clone() };
+        Some(pages::bench(&fill::bench(lab, &name, &app.board.now(), &around)?, &ENGLISH))
     })?;
     Ok(match app.hand.as_ref().filter(|h| h.bench() == name.as_str()) {
         Some(hand) => {
@@ -127,7 +129,18 @@ pub(super) async fn bench(
 }
 
 /// `GET /shelf`
-pub(super) async fn shelf(State(app): State<Arc<App>>, Extension(who): Extension<Who>) -> Made {
+pub(super) async fn shelf(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Query(query): Query<Members>,
+    headers: HeaderMap,
+) -> Made {
+    let celsius = query.get("celsius").and_then(|c| c.trim().replace(',', ".").parse().ok());
+    let from_here = headers.get("sec-fetch-site").is_none_or(|v| v == "same-origin");
+    // A link from elsewhere may show the shelf, not set the oven.
+    if let Some(celsius) = celsius.filter(|c| (20.0..=300.0).contains(c) && from_here) {
+        app.board.set_celsius(celsius);
+    }
     shown(&app, &who, Page::Shelf, |lab, around| Some(pages::shelf(&fill::shelf(lab, &app.board.now(), around), &ENGLISH)))
 }
 
@@ -148,6 +161,7 @@ pub(super) async fn specimen(State(app): State<Arc<App>>, Extension(who): Extens
     let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such specimen");
     let id = SpecimenId::new(&id).map_err(|_| none())?;
     at_hand(&app, &id).await;
+    app.board.read_record(&id).await;
     shown(&app, &who, Page::Specimen(id.clone()), |lab, around| {
         Some(pages::specimen(&fill::specimen(lab, &id, &app.board.now(), around)?, &ENGLISH))
     })
@@ -160,7 +174,15 @@ pub(super) async fn correct(
     Path(seq): Path<u64>,
     headers: HeaderMap,
 ) -> Made {
-    correction(&app, &who, &headers, |lab| super::subject::of_fact(lab, seq))
+    let mut around = correction_around(&app, &who, &headers);
+    let find = |around: &Around| app.board.look(|m| fill::correction(&m.lab, seq, &app.board.now(), around));
+    let of = find(&around).and_then(|c| SpecimenId::new(&c.subject.specimen?).ok());
+    if let Some(id) = of {
+        around.history = super::record::corrections(&app.board.read_record(&id).await, seq);
+    }
+    let none = "no weighing or count has this number, or its specimen is not at hand";
+    let view = find(&around).ok_or_else(|| problem(&app, &who, StatusCode::NOT_FOUND, none))?;
+    Ok(Html(pages::correct(&view, &ENGLISH).into_string()))
 }
 
 /// `GET /correct/SPECIMEN/KIND/NO`
@@ -172,33 +194,18 @@ pub(super) async fn correct_trial(
 ) -> Made {
     let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such determination");
     let id = SpecimenId::new(&specimen).map_err(|_| none())?;
+    let kind: Kind = serde_json::from_value(Value::String(kind)).map_err(|_| none())?;
     at_hand(&app, &id).await;
-    correction(&app, &who, &headers, |lab| super::subject::of_trial(lab, &id, &kind, no))
+    let around = correction_around(&app, &who, &headers);
+    let trial = TrialRef { kind, no };
+    let view = app.board.look(|m| fill::trial_correction(&m.lab, &id, trial, &app.board.now(), &around)).ok_or_else(none)?;
+    Ok(Html(pages::correct(&view, &ENGLISH).into_string()))
 }
 
-fn correction(
-    app: &App,
-    who: &Who,
-    headers: &HeaderMap,
-    subject: impl FnOnce(&tarecup_core::lab::Lab) -> Option<view::Subject>,
-) -> Made {
+fn correction_around(app: &App, who: &Who, headers: &HeaderMap) -> Around {
     let from = came_from(headers).unwrap_or_else(|| String::from("/laboratory"));
-    let frame = frame(app, who);
-    let view = app.board.look(|m| {
-        let open = m.lab.specimens().filter(|s| s.open());
-        Some(view::Correction {
-            subject: subject(&m.lab)?,
-            specimens: open
-                .map(|s| view::SpecimenKey { id: s.id.to_string(), description: s.description.clone(), chosen: false })
-                .collect(),
-            containers: m.lab.containers().map(|c| c.id.to_string()).collect(),
-            then: then(&Members::from([(String::from("then"), from)])),
-            frame,
-        })
-    });
-    let none =
-        || problem(app, who, StatusCode::NOT_FOUND, "no weighing or count has this number, or its specimen is not at hand");
-    view.map(|v| Html(pages::correct(&v, &ENGLISH).into_string())).ok_or_else(none)
+    let around = app.board.look(|m| app.board.around(m, &seen(Page::Loose, who)));
+    Around { then: then(&Members::from([(String::from("then"), from)])), ..around }
 }
 
 /// A finished specimen comes from the ledger when it is named.
@@ -357,19 +364,21 @@ fn with_cookie(mut answer: Response, cookie: HeaderValue) -> Response {
     answer
 }
 
+/// What a list would do, and the asks of its good lines.
+pub(super) fn read_list(app: &App, who: &Who, what: &str, text: &str) -> (view::Import, Vec<Ask>) {
+    app.board.look(|m| fill::import(&m.lab, what, text, &app.board.now(), &app.board.around(m, &seen(Page::Laboratory, who))))
+}
+
 /// `POST /import`
-pub(super) async fn import(
-    State(app): State<Arc<App>>,
-    Extension(who): Extension<Who>,
-    Form(members): Form<Members>,
-) -> Response {
-    match read_list(&app, &members) {
-        Ok((what, read)) => import_page(&app, &who, StatusCode::OK, what.word(), &members, Ok(read)),
-        Err(says) => {
-            let what = members.get("what").map_or("", String::as_str);
-            import_page(&app, &who, StatusCode::UNPROCESSABLE_ENTITY, what, &members, Err(says))
-        }
-    }
+pub(super) async fn import(State(app): State<Arc<App>>, Extension(who): Extension<Who>, Form(members): Form<Members>) -> Response {
+    let (view, _) = list_of(&app, &who, &members);
+    let status = if view.refused.is_some() { StatusCode::UNPROCESSABLE_ENTITY } else { StatusCode::OK };
+    (status, Html(pages::import(&view, &ENGLISH).into_string())).into_response()
+}
+
+fn list_of(app: &App, who: &Who, members: &Members) -> (view::Import, Vec<Ask>) {
+    let member = |name: &str| members.get(name).map_or("", String::as_str);
+    read_list(app, who, member("what"), member("text"))
 }
 
 /// `POST /import/take`
@@ -379,52 +388,29 @@ pub(super) async fn import_take(
     Extension(ends): Extension<Ends>,
     Form(members): Form<Members>,
 ) -> Response {
-    let (what, mut read) = match read_list(&app, &members) {
-        Ok(read) => read,
-        Err(says) => return problem(&app, &who, StatusCode::UNPROCESSABLE_ENTITY, &says),
-    };
-    let by = members.get("who").map(|w| w.trim()).filter(|w| !w.is_empty());
-    let mut by = by.map(String::from);
-    if let Some(pin) = members.get("pin").filter(|p| !p.is_empty()) {
-        let named = by.clone().or(who.operator.clone()).and_then(|n| Operator::new(&n).ok());
-        let Some(named) = named else { return problem(&app, &who, StatusCode::FORBIDDEN, "say whose PIN it is") };
-        match app.prove(&ends, &named, pin).await {
-            Ok(proven) => by = Some(proven.to_string()),
-            Err(denied) => return problem(&app, &who, asking::status_of(&denied), &denied.to_string()),
+    let by = members.get("who").map(|w| w.trim().to_string()).filter(|w| !w.is_empty());
+    let by = match members.get("pin").filter(|p| !p.is_empty()) {
+        None => by,
+        Some(pin) => {
+            let named = by.or(who.operator.clone()).and_then(|n| Operator::new(&n).ok());
+            let Some(named) = named else { return problem(&app, &who, StatusCode::FORBIDDEN, "say whose PIN it is") };
+            match app.prove(&ends, &named, pin).await {
+                Ok(proven) => Some(proven.to_string()),
+                Err(denied) => return problem(&app, &who, asking::status_of(&denied), &denied.to_string()),
+            }
         }
-    }
-    super::api::taken(&app, &ends, &who, &mut read, by.as_deref()).await;
-    if read.lines.iter().all(|l| l.refused.is_none()) {
-        return Redirect::to("/laboratory").into_response();
-    }
-    // What was not taken stays on the page, to be mended and brought again.
-    read.lines.retain(|l| l.refused.is_some());
-    let says = String::from("every other line was taken; these were not");
-    let view = view::Import {
-        frame: frame(&app, &who),
-        what: what.word().into(),
-        lines: read.lines,
-        refused: Some(says),
-        ..Default::default()
     };
+    let (mut view, asks) = list_of(&app, &who, &members);
+    if view.refused.is_none() {
+        super::api::taken(&app, &ends, &who, &mut view.lines, asks, by.as_deref()).await;
+        view.lines.retain(|l| l.refused.is_some());
+        if view.lines.is_empty() {
+            return Redirect::to("/laboratory").into_response();
+        }
+        // What was not taken stays on the page, to be mended and brought again.
+        view.refused = Some(String::from("every other line was taken; these were not"));
+    }
     (StatusCode::UNPROCESSABLE_ENTITY, Html(pages::import(&view, &ENGLISH).into_string())).into_response()
-}
-
-fn read_list(app: &App, members: &Members) -> Result<(What, Read), String> {
-    let what = members.get("what").and_then(|w| What::named(w)).ok_or("a list is of containers or of specimens")?;
-    let text = members.get("text").map_or("", String::as_str);
-    app.board.look(|m| import::read(what, text, &m.lab)).map(|read| (what, read))
-}
-
-fn import_page(app: &App, who: &Who, status: StatusCode, what: &str, members: &Members, read: Result<Read, String>) -> Response {
-    let text = members.get("text").cloned().unwrap_or_default();
-    let what = if what == "specimens" { "specimens" } else { "containers" };
-    let (lines, refused) = match read {
-        Ok(read) => (read.lines, None),
-        Err(says) => (Vec::new(), Some(says)),
-    };
-    let view = view::Import { frame: frame(app, who), what: what.into(), text, lines, refused };
-    (status, Html(pages::import(&view, &ENGLISH).into_string())).into_response()
 }
 
 /// `GET /enter`

@@ -164,7 +164,7 @@ impl Service {
         let broker_name = format!("{}:{}", settings.host, settings.port);
         let courier: SharedCourier = Arc::default();
         start_courier(settings.clone(), &desk, &state_dir, &inbox, &courier, &net_runtime)?;
-        let board = screen.is_some().then(|| board(&station, &mut desk, &clock)).transpose()?;
+        let board = screen.is_some().then(|| board(&station, &mut desk, &clock, &state_dir)).transpose()?;
         let outlet = Outlet {
             board: board.clone(),
             settings,
@@ -319,9 +319,9 @@ fn make_state_dir(path: &Path) -> Result<(), StartError> {
 }
 
 /// What the screen shows, as it stands at the start.
-fn board(station: &Station, desk: &mut Desk, clock: &Arc<dyn BootClock>) -> Result<Arc<Board>, StartError> {
+fn board(station: &Station, desk: &mut Desk, clock: &Arc<dyn BootClock>, state_dir: &Path) -> Result<Arc<Board>, StartError> {
     let start = screen::session::random().map_err(|e| StartError::System(std::io::Error::other(e)))?;
-    let fixed = Fixed { lab: station.lab.name.clone(), station: station.lab.station.to_string(), start: start[..12].to_string() };
+    let fixed = Fixed { lab: station.lab.name.clone(), station: station.lab.station.to_string(), start: start[..12].to_string(), state_dir: state_dir.to_path_buf() };
     let lab = desk.mirror();
     Ok(Board::new(fixed, lab, desk.instrument_views(), desk.last_seq(), Arc::clone(clock)))
 }

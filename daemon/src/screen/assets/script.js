@@ -330,4 +330,6 @@
   passing();
   listen();
   home();
+  // The field is ready, and the page still begins at its top.
+  if (!location.hash) scrollTo(0, 0);
 })();

@@ -12,6 +12,9 @@ use maud::{Markup, html};
 /// Entries shown under the latest one.
 const SHOWN: usize = 5;
 
+/// A sentence longer than this is set smaller.
+const LONG: usize = 100;
+
 /// The page.
 pub fn page(view: &Bench, w: &Words) -> Markup {
     let page = Page {
@@ -67,7 +70,7 @@ fn next(view: &Bench, w: &Words) -> Markup {
         div.next-step.urgent[view.next.urgent] data-step=(shape) {
             (icon(if view.next.urgent { "alarm" } else { shape }))
             div {
-                p.sentence { (view.next.sentence) }
+                p.sentence.long[view.next.sentence.chars().count() > LONG] { (view.next.sentence) }
                 @if let Some(owed) = view.owed.as_ref().filter(|o| o.overdue) {
                     p.owed data-owed="overdue" { (w.owed_overdue) " " time datetime=(owed.since) data-time="ago" { (owed.since.get(11..16).unwrap_or("")) } }
                 }
@@ -87,7 +90,7 @@ fn code(view: &Bench, w: &Words) -> Markup {
         div.entry {
             input #code name="text" type="text" autocomplete="off" autocapitalize="characters" spellcheck="false" autofocus enterkeyhint="send" maxlength="64" placeholder=(w.code_hint) aria-describedby="code-ready";
             (parts::pad_key("code", w))
-            button.primary[view.next.step == Step::Scan].enter type="submit" { (w.enter) }
+            button.enter.primary[view.next.step == Step::Scan] type="submit" { (w.enter) }
         }
         p #code-ready .code-ready { (icon("scan")) span data-ready=(w.code_ready) data-away=(w.code_away) { (w.code_ready) } }
     })
@@ -137,8 +140,9 @@ fn drops(cup: &Cup, readings: bool, w: &Words) -> Markup {
             data-rate-from=[cup.rate_wanted.map(|r| r[0])] data-rate-to=[cup.rate_wanted.map(|r| r[1])]
             aria-label=(fill(w.cup_named, &[&cup.name])) {
             h2 { (icon("cup")) span { (cup.name) } (trust(&cup.freshness, cup.connected, w)) }
-            p.digits { span.mass data-slot="drops" { (count.map_or(String::from("–"), |d| d.to_string())) } span.unit { (w.drops) } }
+            p.digits { span.mass data-slot="drops" { (count.map_or(String::from("–"), |d| d.to_string())) } }
             p.rest {
+                span { (w.drops) }
                 span data-slot="rate" data-number=[rate.map(|r| format!("{r:.2}"))] { (rate.map_or(String::from("–"), |r| format!("{r:.2}"))) }
                 span { (w.per_second) }
                 @if let Some([from, to]) = cup.rate_wanted { span.wanted { (fill(w.rate_wanted, &[&from.to_string(), &to.to_string()])) } }
@@ -174,7 +178,7 @@ fn recorded(view: &Bench, w: &Words) -> Markup {
                         button.key type="submit" { (icon("undo")) span { (w.undo) } }
                     }))
                 }
-                @if let Some(why) = &latest.loose { p.detail.attention { (why) } }
+                @if let Some(why) = latest.loose.as_ref().filter(|why| **why != view.next.sentence) { p.detail.attention { (why) } }
                 ol.earlier aria-label=(w.earlier) { @for one in earlier.iter().take(SHOWN) { li { (entry(one, w)) } } }
             }
         }

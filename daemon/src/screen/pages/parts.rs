@@ -34,11 +34,6 @@ pub fn grams(text: &str, w: &Words) -> Markup {
     html! { (number(text)) span.unit { " " (w.gram) } }
 }
 
-/// A percentage with one decimal, as a working value.
-pub fn percent(value: f64, w: &Words) -> Markup {
-    html! { (number(&decimals(value, 1))) span.unit { " " (w.percent) } }
-}
-
 /// A number with so many decimals; what is not finite is a dash.
 pub fn decimals(value: f64, places: usize) -> String {
     if value.is_finite() { format!("{value:.places$}") } else { String::from("–") }

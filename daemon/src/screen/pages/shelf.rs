@@ -89,7 +89,7 @@ fn times(row: &Drying, w: &Words) -> Markup {
             (match row.place { Place::In => w.in_since, Place::Wet => w.wet_since, _ => w.out_since }) " " (parts::day_and_time(since, w)) ". "
         }
         @if row.place != Place::Wet { (hours) " " }
-        @if !row.recorded && row.place != Place::Wet { span.attention { (w.oven_not_recorded) } " " }
+        @if !row.recorded && row.place != Place::Wet { (icon("caution")) " " (w.oven_not_recorded) " " }
         @if row.due == Due::NotYet && row.place == Place::In {
             @if let Some(ready) = &row.ready_at { (w.ready_at) " " (parts::day_and_time(ready, w)) }
         }

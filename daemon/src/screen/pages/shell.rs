@@ -36,8 +36,10 @@ pub fn document(page: &Page, frame: &Frame, strip: Markup, main: Markup, w: &Wor
             body class=(page.class) data-page=(page.name) data-connection="live" data-seq=(frame.seq) data-now=(frame.now)
                 data-events=[events] data-bench=[frame.bench.as_deref()] data-token=(frame.token) {
                 a.skip href="#main" { (w.skip) }
-                (lost(w))
-                div #region-alarm role="alert" { (alarm(frame, w)) }
+                div.heads {
+                    (lost(w))
+                    div #region-alarm role="alert" { (alarm(frame, w)) }
+                }
                 header.strip { (strip) (sound(w)) }
                 (ways(page, frame, w))
                 main #main tabindex="-1" {

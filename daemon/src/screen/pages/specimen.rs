@@ -131,7 +131,7 @@ fn trials(view: &SpecimenPage, w: &Words) -> Markup {
                 table.trials {
                     thead { tr {
                         th { (w.trial) } th.num { (w.drops_head) } th.num { (w.rate) } th { (w.container) } th.num { (w.tare_g) } th.num { (w.wet_g) }
-                        th.num { (w.dry_g) } th.num { (w.water) } th { (w.used) } th.no-print { (w.correct) }
+                        th.num { (w.dry_g) } th.num { (w.water) } th { (w.used_head) } th.no-print { (w.correct) }
                     } }
                     tbody { @for t in &view.trials { (trial(view, t, w)) } }
                 }

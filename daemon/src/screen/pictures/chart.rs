@@ -30,7 +30,8 @@ pub fn plasticity_chart(specimen: &str, chart: &Chart, w: &Words) -> Markup {
     let ll_to = finite().map(|(ll, _)| ll * 1.05).fold(LL_TO, f64::max).min(1_000.0);
     let pi_to = finite().map(|(_, pi)| pi * 1.05).fold(PI_TO, f64::max).min(1_000.0);
     let (x, y) = (Axis::linear(0.0, ll_to, LEFT, RIGHT), Axis::linear(0.0, pi_to, BOTTOM, TOP));
-    let said = match chart.this {
+    let this = chart.this.filter(|(ll, pi)| ll.is_finite() && pi.is_finite());
+    let said = match this {
         Some((ll, pi)) => fill(w.chart_said, &[specimen, &format!("{ll:.0}"), &format!("{pi:.0}")]),
         None => fill(w.chart_said_none, &[specimen]),
     };
@@ -41,8 +42,8 @@ pub fn plasticity_chart(specimen: &str, chart: &Chart, w: &Words) -> Markup {
             @for (id, ll, pi) in chart.others.iter().filter(|o| o.1.is_finite() && o.2.is_finite()) {
                 circle.other cx=(p(x.place(*ll))) cy=(p(y.place(*pi))) r="4" { title { (id) } }
             }
-            @if let Some((ll, pi)) = chart.this.filter(|t| t.0.is_finite() && t.1.is_finite()) {
-                path.here d=(format!("M{} {}l8 8 -8 8 -8 -8Z", p(x.place(ll)), p(y.place(pi) - 8.0)));
+            @if let Some((ll, pi)) = this {
+                path.here d=(format!("M{} {}l8 8 -8 8 -8 -8Z", p(x.place(ll)), p(y.place(pi) - 8.0))) {}
                 text.value x=(p(x.place(ll) + 12.0)) y=(p(y.place(pi) - 6.0)) { (specimen) }
             }
         }
@@ -52,13 +53,13 @@ pub fn plasticity_chart(specimen: &str, chart: &Chart, w: &Words) -> Markup {
 fn grid(x: &Axis, y: &Axis, ll_to: f64, pi_to: f64, w: &Words) -> Markup {
     html! {
         @for pi in ticks(0.0, pi_to, 6) {
-            path.rule d=(format!("M{LEFT} {}H{RIGHT}", p(y.place(pi))));
+            path.rule d=(format!("M{LEFT} {}H{RIGHT}", p(y.place(pi)))) {}
             text.scale x=(p(LEFT - 7.0)) y=(p(y.place(pi) + 4.5)) text-anchor="end" { (label(pi)) }
         }
         @for ll in ticks(0.0, ll_to, 10) {
             text.scale x=(p(x.place(ll))) y=(p(BOTTOM + 17.0)) text-anchor="middle" { (label(ll)) }
         }
-        path.frame d=(format!("M{LEFT} {TOP}V{BOTTOM}H{RIGHT}"));
+        path.frame d=(format!("M{LEFT} {TOP}V{BOTTOM}H{RIGHT}")) {}
         text.scale x=(p((LEFT + RIGHT) / 2.0)) y=(p(HEIGHT - 6.0)) text-anchor="middle" { (w.chart_x) }
         text.scale x="13" y=(p((TOP + BOTTOM) / 2.0)) text-anchor="middle" transform=(format!("rotate(-90 13 {})", p((TOP + BOTTOM) / 2.0))) { (w.chart_y) }
     }
@@ -76,10 +77,10 @@ fn lines(x: &Axis, y: &Axis, ll_to: f64, pi_to: f64, w: &Words) -> Markup {
     let corner = 4.0 / 0.73 + 20.0;
     let flat = 7.0 / 0.73 + 20.0;
     html! {
-        path.a-line d=(format!("M{}L{}L{}", at(8.0 + 4.0 / 0.9, 4.0), at(corner, 4.0), at(a_end, a_line(a_end))));
-        path.a-line d=(format!("M{}L{}", at(8.0 + 7.0 / 0.9, 7.0), at(flat, 7.0)));
-        path.u-line d=(format!("M{}L{}L{}", at(16.0, 0.0), at(16.0, u_line(16.0)), at(u_end, u_line(u_end))));
-        path.mark d=(format!("M{} {TOP}V{BOTTOM}", p(x.place(50.0))));
+        path.a-line d=(format!("M{}L{}L{}", at(8.0 + 4.0 / 0.9, 4.0), at(corner, 4.0), at(a_end, a_line(a_end)))) {}
+        path.a-line d=(format!("M{}L{}", at(8.0 + 7.0 / 0.9, 7.0), at(flat, 7.0))) {}
+        path.u-line d=(format!("M{}L{}L{}", at(16.0, 0.0), at(16.0, u_line(16.0)), at(u_end, u_line(u_end)))) {}
+        path.mark d=(format!("M{} {TOP}V{BOTTOM}", p(x.place(50.0)))) {}
         text.scale x=(p(x.place(a_end) - 4.0)) y=(p(y.place(a_line(a_end)) + 26.0)) text-anchor="end" { (w.a_line) }
         text.scale x=(p(x.place(u_end) - 26.0)) y=(p(y.place(u_line(u_end)) + 16.0)) text-anchor="end" { (w.u_line) }
         @for (name, ll, pi) in GROUPS { text.zone x=(p(x.place(ll))) y=(p(y.place(pi))) text-anchor="middle" { (name) } }

@@ -55,12 +55,12 @@ pub fn flow_line(specimen: &str, flow: &Flow, w: &Words) -> Markup {
             (grid(&axes, w))
             @if let Some(fit) = &flow.fit { (line(fit, &axes, at_25)) }
             @for d in flow.waiting.iter().filter(|d| axes.x.holds(**d)) {
-                path.waiting d=(format!("M{} {}v10", p(axes.x.place(*d)), p(BOTTOM - 10.0)));
+                path.waiting d=(format!("M{} {}v10", p(axes.x.place(*d)), p(BOTTOM - 10.0))) {}
             }
             @for point in &flow.points {
                 @let (x, y) = (p(axes.x.place(point.drops)), p(axes.y.place(point.water_percent)));
-                @if point.used { circle.point cx=(x) cy=(y) r="5.5"; }
-                @else { path.aside d=(format!("M{x} {y}m-5 -5l10 10m0 -10l-10 10")); }
+                @if point.used { circle.point cx=(x) cy=(y) r="5.5" {} }
+                @else { path.aside d=(format!("M{x} {y}m-5 -5l10 10m0 -10l-10 10")) {} }
             }
         }
     }
@@ -71,16 +71,16 @@ fn grid(axes: &Axes, w: &Words) -> Markup {
     html! {
         @for tick in ticks(axes.span.0, axes.span.1, 4) {
             @let y = axes.y.place(tick);
-            path.rule d=(format!("M{LEFT} {}H{RIGHT}", p(y)));
+            path.rule d=(format!("M{LEFT} {}H{RIGHT}", p(y))) {}
             text.scale x=(p(LEFT - 7.0)) y=(p(y + 4.5)) text-anchor="end" { (label(tick)) }
         }
         @for drops in LABELLED.iter().filter(|d| axes.x.holds(**d)) {
             @let x = axes.x.place(*drops);
-            @if *drops != 25.0 { path.rule d=(format!("M{} {TOP}V{BOTTOM}", p(x))); }
+            @if *drops != 25.0 { path.rule d=(format!("M{} {TOP}V{BOTTOM}", p(x))) {} }
             text.scale.strong[*drops == 25.0] x=(p(x)) y=(p(BOTTOM + 17.0)) text-anchor="middle" { (label(*drops)) }
         }
-        path.mark d=(format!("M{} {TOP}V{BOTTOM}", p(x25)));
-        path.frame d=(format!("M{LEFT} {TOP}V{BOTTOM}H{RIGHT}"));
+        path.mark d=(format!("M{} {TOP}V{BOTTOM}", p(x25))) {}
+        path.frame d=(format!("M{LEFT} {TOP}V{BOTTOM}H{RIGHT}")) {}
         text.scale x=(p((LEFT + RIGHT) / 2.0)) y=(p(HEIGHT - 6.0)) text-anchor="middle" { (w.flow_x) }
         text.scale x="13" y=(p((TOP + BOTTOM) / 2.0)) text-anchor="middle" transform=(format!("rotate(-90 13 {})", p((TOP + BOTTOM) / 2.0))) { (w.flow_y) }
     }
@@ -99,12 +99,12 @@ fn line(fit: &super::super::view::Fit, axes: &Axes, at_25: Option<f64>) -> Marku
     let inside: Vec<String> =
         along.filter(|(_, v)| (TOP..=BOTTOM).contains(v)).map(|(x, v)| format!("{},{}", p(x), p(v))).collect();
     html! {
-        @if band.len() > 2 { polygon.band points=(band.join(" ")); }
-        @if inside.len() > 1 { polyline.line points=(inside.join(" ")); }
+        @if band.len() > 2 { polygon.band points=(band.join(" ")) {} }
+        @if inside.len() > 1 { polyline.line points=(inside.join(" ")) {} }
         @if let Some(v) = at_25 {
             @let (x, y) = (axes.x.place(25.0), axes.y.place(v));
-            path.read d=(format!("M{} {}H{LEFT}", p(x), p(y)));
-            path.here d=(format!("M{} {}l7 7 -7 7 -7 -7Z", p(x), p(y - 7.0)));
+            path.read d=(format!("M{} {}H{LEFT}", p(x), p(y))) {}
+            path.here d=(format!("M{} {}l7 7 -7 7 -7 -7Z", p(x), p(y - 7.0))) {}
             text.value x=(p(x + 11.0)) y=(p(y - 9.0)) data-number=(format!("{v:.1}")) { (format!("{v:.1}")) }
         }
     }

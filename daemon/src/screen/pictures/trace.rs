@@ -24,10 +24,10 @@ pub fn trace(trace: &Trace, w: &Words) -> Markup {
     let said = fill(w.trace_said, &[&format!("{from:.0}"), &format!("{to:.0}"), &format!("{low:.2}"), &format!("{high:.2}")]);
     html! {
         svg.picture.trace viewBox=(format!("0 0 {WIDTH} {HEIGHT}")) role="img" aria-label=(said) {
-            path.frame d=(format!("M6 {0}H{1}", HEIGHT - 16.0, WIDTH - 6.0));
-            @if line.len() > 1 { polyline.line points=(line.join(" ")); }
-            path.mark d=(format!("M{:.1} 4V{}", x.place(0.0), HEIGHT - 16.0));
-            circle.point cx=(format!("{:.1}", x.place(0.0))) cy=(format!("{:.1}", y.place(trace.taken_g))) r="4.5";
+            path.frame d=(format!("M6 {0}H{1}", HEIGHT - 16.0, WIDTH - 6.0)) {}
+            @if line.len() > 1 { polyline.line points=(line.join(" ")) {} }
+            path.mark d=(format!("M{:.1} 4V{}", x.place(0.0), HEIGHT - 16.0)) {}
+            circle.point cx=(format!("{:.1}", x.place(0.0))) cy=(format!("{:.1}", y.place(trace.taken_g))) r="4.5" {}
             text.scale x="6" y=(HEIGHT - 3.0) { (format!("{from:.0} ")) (w.second) }
             text.scale x=(WIDTH - 6.0) y=(HEIGHT - 3.0) text-anchor="end" { (format!("+{to:.0} ")) (w.second) }
         }

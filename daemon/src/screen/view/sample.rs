@@ -119,11 +119,8 @@ fn recorded(seq: u64, mass: &str, container: &str, role: &str, clock: &str) -> R
 pub fn bench() -> Bench {
     let mut flow = flow();
     flow.points.truncate(2);
-    flow.waiting = vec![18.0];
     let mut trials = trials();
-    trials.truncate(3);
-    trials[2].dry = None;
-    trials[2].water_percent = None;
+    trials.truncate(2);
     Bench {
         frame: frame(),
         name: "north".into(),
@@ -165,7 +162,7 @@ pub fn bench() -> Bench {
         }),
         recorded: vec![
             Recorded { drops: Some(27), mass_g: None, container: None, role: None, ..recorded(411, "", "", "", "10:41:50") },
-            recorded(405, "40.58", "C3", "wet", "10:30:12"),
+            recorded(405, "38.19", "C2", "wet", "10:30:12"),
             Recorded {
                 drops: Some(18),
                 mass_g: None,
@@ -174,7 +171,7 @@ pub fn bench() -> Bench {
                 typed: true,
                 ..recorded(404, "", "", "", "10:29:40")
             },
-            recorded(398, "38.19", "C2", "wet", "10:14:02"),
+            recorded(398, "32.18", "C1", "wet", "10:14:02"),
         ],
         specimens: vec![
             SpecimenKey { id: "S-101".into(), description: s("brown lean clay"), chosen: true },
