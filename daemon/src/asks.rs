@@ -67,9 +67,14 @@ pub struct Asked {
     pub id: Option<String>,
     /// What is wanted.
     pub wanted: Wanted,
-    /// The ask without its id, as stored.
+    /// The ask without its envelope.
     pub body: Value,
+    /// Who asks has given the PIN of `who`. Only the screen may say so.
+    pub proven: bool,
 }
+
+/// Member of the envelope by which the screen says that a PIN was given. The input keeps it.
+pub const PROVEN: &str = "proven";
 
 /// A refusal as JSON.
 pub fn refusal(says: &str) -> String {
@@ -91,12 +96,17 @@ pub fn parse(text: &str) -> Result<Asked, String> {
         Some(Value::String(id)) if !id.is_empty() && id.len() <= 64 => Some(id),
         Some(_) => return Err(String::from("\"ask_id\" is a text of 1 to 64 characters")),
     };
+    let proven = match object.remove(PROVEN) {
+        None => false,
+        Some(Value::String(how)) if how == "pin" => true,
+        Some(_) => return Err(format!("\"{PROVEN}\" is said by the screen alone")),
+    };
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
         Some(read) => Wanted::Read(read),
         None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| format!("the ask cannot be done: {e}"))?),
     };
-    Ok(Asked { id, wanted, body })
+    Ok(Asked { id, wanted, body, proven })
 }
 
 fn read(object: &Map<String, Value>) -> Result<Option<Read>, String> {

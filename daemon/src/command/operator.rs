@@ -1,9 +1,9 @@
 //! `tarecup operator`: who may correct and review on the screen.
 
-use super::{FAILED, StateArg, WRONG_INPUT, files};
+use super::{FAILED, WRONG_INPUT, files};
 use crate::screen::operators;
 use std::io::{BufRead, IsTerminal, Write};
-use std::path::Path;
+use std::path::{Path, PathBuf};
 use tarecup_core::names::Operator;
 
 /// Arguments of `operator`.
@@ -11,8 +11,9 @@ use tarecup_core::names::Operator;
 pub struct OperatorArgs {
     #[command(subcommand)]
     verb: Verb,
-    #[command(flatten)]
-    state: StateArg,
+    /// State directory of the service. Default: the service manager's, else the user's data folder.
+    #[arg(long, value_name = "DIR", global = true)]
+    state: Option<PathBuf>,
 }
 
 #[derive(clap::Subcommand)]
@@ -38,7 +39,7 @@ enum Verb {
 
 /// Runs `operator`.
 pub fn run(args: &OperatorArgs) -> u8 {
-    let dir = match files::state_dir(args.state.state.as_deref(), None) {
+    let dir = match files::state_dir(args.state.as_deref(), None) {
         Ok(dir) if dir.is_dir() => dir,
         Ok(dir) => {
             eprintln!("{} is not there; start the service once, or name its state directory with --state DIR", dir.display());

@@ -3,6 +3,7 @@
 use super::flood::Swallowed;
 use super::inbox::Reply;
 use super::{Desk, InstrumentSetup, views};
+use crate::asks;
 use crate::ledger::{AnswerRow, Digest, DocumentRow, FactRow, Group as Rows, InputKind, InputRow};
 use bytes::Bytes;
 use serde::Serialize;
@@ -29,7 +30,7 @@ pub(super) enum Held {
     /// A port's state.
     Port { instrument: InstrumentId, state: PortState, at: Stamp },
     /// An ask that may write.
-    Ask { client: String, id: Option<String>, body: String, reply: Option<Reply>, at: Stamp },
+    Ask { client: String, id: Option<String>, body: String, proven: bool, reply: Option<Reply>, at: Stamp },
     /// A look at the clock that led to something.
     Timer { at: Stamp },
     /// Settings in full.
@@ -237,6 +238,8 @@ impl Desk {
         self.held
             .iter()
             .map(|h| match h {
+                // That the PIN was given is part of what was asked.
+                Held::Ask { body, proven: true, .. } => format!("{{\"{}\":\"pin\",{}", asks::PROVEN, &body[1..]),
                 Held::Batch { .. } | Held::Ask { .. } | Held::Settings { .. } => String::new(),
                 Held::Flood { swallowed: s, .. } => {
                     serde_json::json!({"lines": s.lines, "bytes": s.bytes, "sha256": s.sha256, "sample": s.sample}).to_string()
@@ -401,6 +404,7 @@ fn input_rows<'a>(
                 reason = Some(swallowed.reason.word());
                 (InputKind::Flood, &swallowed.at, Some(*instrument), text.as_bytes())
             }
+            Held::Ask { proven: true, at, .. } => (InputKind::Ask, at, None, text.as_bytes()),
             Held::Ask { body, at, .. } => (InputKind::Ask, at, None, body.as_bytes()),
             Held::Timer { at } => (InputKind::Timer, at, None, text.as_bytes()),
             Held::Settings { text, at } => (InputKind::Settings, at, None, text.as_bytes()),

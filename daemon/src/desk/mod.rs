@@ -179,6 +179,10 @@ impl Desk {
             return effects.replies.push((reply, asks::refusal(&says)));
         }
         match asks::parse(text) {
+            Ok(asked) if asked.proven && !client.starts_with(crate::screen::CLIENT) => {
+                let says = format!("\"{}\" is said by the screen alone", asks::PROVEN);
+                effects.replies.push((reply, asks::refusal(&says)));
+            }
             Err(says) => effects.replies.push((reply, asks::refusal(&says))),
             Ok(asked) => match asked.wanted {
                 asks::Wanted::Read(read) => {
@@ -190,7 +194,8 @@ impl Desk {
                     effects.replies.push((reply, answer));
                 }
                 asks::Wanted::Write(_) => {
-                    self.absorb(Held::Ask { client, id: asked.id, body: asked.body.to_string(), reply: Some(reply), at: *now });
+                    let (id, body, proven) = (asked.id, asked.body.to_string(), asked.proven);
+                    self.absorb(Held::Ask { client, id, body, proven, reply: Some(reply), at: *now });
                 }
             },
         }
@@ -218,7 +223,7 @@ impl Desk {
                 self.absorb_port(usize::from(*instrument), state, *at);
                 true
             }
-            Held::Ask { client, id, body, reply, at } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
+            Held::Ask { client, id, body, reply, at, .. } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
             Held::Timer { at } => self.absorb_timer(*at),
             Held::Settings { text, at } => {
                 let input = self.next_input;

@@ -58,6 +58,8 @@ pub async fn ask(app: &App, ends: &Ends, who: &Who, mut object: Map<String, Valu
         Some(Value::String(pin)) => Some(pin),
         Some(_) => return Answered::refused(StatusCode::BAD_REQUEST, "\"pin\" is a text"),
     };
+    // Said by us alone, below.
+    object.remove(asks::PROVEN);
     let word = object.get("ask").and_then(Value::as_str).unwrap_or_default().to_string();
     if let Err((status, says)) = name(app, ends, who, &word, &mut object, pin).await {
         return Answered::refused(status, &says);
@@ -67,7 +69,7 @@ pub async fn ask(app: &App, ends: &Ends, who: &Who, mut object: Map<String, Valu
     if let Err(says) = asks::parse(&text) {
         return Answered::refused(StatusCode::BAD_REQUEST, &says);
     }
-    let client = if who.session.is_empty() { String::from("screen") } else { format!("screen-{}", who.session) };
+    let client = if who.session.is_empty() { String::from(super::CLIENT) } else { format!("{}-{}", super::CLIENT, who.session) };
     let json = app.ask(client, text).await;
     let mut answered = Answered { status: StatusCode::OK, json };
     if let Some(says) = answered.refusal() {
@@ -118,6 +120,9 @@ async fn name(
             "this needs the PIN of whoever says it; give it with your initials, or sign in first"
         };
         return Err((StatusCode::FORBIDDEN, String::from(says)));
+    }
+    if proven.is_some() {
+        object.insert(asks::PROVEN.into(), "pin".into());
     }
     let typed = matches!(word, "type_mass" | "type_drops");
     let name = proven.or(said).or(here).or_else(|| typed.then(|| at_bench(app, object)).flatten());
