@@ -28,6 +28,9 @@ const NUMBERS: [&str; 12] = [
     "kind_no",
 ];
 
+/// What the names of the screen's clients begin with.
+pub const SCREEN: &str = "screen";
+
 /// What is asked for.
 #[derive(Debug)]
 pub enum Wanted {

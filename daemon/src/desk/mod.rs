@@ -179,7 +179,7 @@ impl Desk {
             return effects.replies.push((reply, asks::refusal(&says)));
         }
         match asks::parse(text) {
-            Ok(asked) if asked.proven && !client.starts_with(crate::screen::CLIENT) => {
+            Ok(asked) if asked.proven && !client.starts_with(asks::SCREEN) => {
                 let says = format!("\"{}\" is said by the screen alone", asks::PROVEN);
                 effects.replies.push((reply, asks::refusal(&says)));
             }

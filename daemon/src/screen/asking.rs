@@ -69,7 +69,7 @@ pub async fn ask(app: &App, ends: &Ends, who: &Who, mut object: Map<String, Valu
     if let Err(says) = asks::parse(&text) {
         return Answered::refused(StatusCode::BAD_REQUEST, &says);
     }
-    let client = if who.session.is_empty() { String::from(super::CLIENT) } else { format!("{}-{}", super::CLIENT, who.session) };
+    let client = if who.session.is_empty() { String::from(asks::SCREEN) } else { format!("{}-{}", asks::SCREEN, who.session) };
     let json = app.ask(client, text).await;
     let mut answered = Answered { status: StatusCode::OK, json };
     if let Some(says) = answered.refusal() {

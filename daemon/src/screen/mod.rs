@@ -45,8 +45,6 @@ use tokio::runtime::Runtime;
 use tokio::sync::{Semaphore, oneshot};
 use tokio_rustls::TlsAcceptor;
 
-/// What the names of its clients begin with, at the desk.
-pub const CLIENT: &str = "screen";
 /// How much the screen's threads yield to all others.
 const YIELDS: i32 = 5;
 /// The desk answers within this time, or that is said.

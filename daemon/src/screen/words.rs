@@ -168,7 +168,7 @@ words! {
     code_label: "Code";
     code_hint: "Scan or type";
     code_ready: "Ready for a scan";
-    code_away: "Scans do not arrive here now: press Escape or touch this field";
+    code_away: "Scans go elsewhere now: press Escape";
     enter: "Enter";
     no_instruments: "No instrument is configured.";
     balance_named: "Balance {}";

@@ -23,6 +23,7 @@
   const clock = new Intl.DateTimeFormat(undefined, { hour: "2-digit", minute: "2-digit" });
   const exact = new Intl.DateTimeFormat(undefined, { hour: "2-digit", minute: "2-digit", second: "2-digit" });
   const both = new Intl.DateTimeFormat(undefined, { month: "short", day: "numeric", hour: "2-digit", minute: "2-digit" });
+  const full = new Intl.DateTimeFormat(undefined, { year: "numeric", month: "short", day: "numeric", hour: "2-digit", minute: "2-digit", timeZoneName: "short" });
   let ahead = Date.parse(body.dataset.now) - Date.now() || 0; // how far the station's clock is ahead
   const now = () => Date.now() + ahead;
   const dress = (root) => {
@@ -31,7 +32,7 @@
     for (const e of root.querySelectorAll("time[data-time]")) {
       const at = new Date(e.dateTime);
       if (isNaN(at)) continue;
-      e.textContent = e.dataset.time === "both" ? both.format(at) : clock.format(at);
+      e.textContent = ({ both, full }[e.dataset.time] || clock).format(at);
       e.title = at.toISOString();
     }
   };
@@ -96,6 +97,7 @@
     const e = instrument(name), v = lives.get(name);
     if (!e || !v) return;
     if (v.mass_g !== undefined) {
+      slot(e, "mass").classList.toggle("many", String(v.mass_g).length > 6);
       put(slot(e, "mass"), String(v.mass_g));
       e.dataset.steady = v.steady;
       slot(e, "steady").textContent = words[v.steady] || "";
@@ -202,7 +204,7 @@
     if (!source || Date.now() - beat <= 2500) return;
     connected(false);
     // A source that gave up does not come back by itself.
-    if (source.readyState === 2 || Date.now() - beat > 15000) { source.close(); beat = Date.now() - 2600; listen(); }
+    if (source.readyState === 2 || Date.now() - beat > 5000) { source.close(); beat = Date.now() - 2600; listen(); }
   }, 250);
 
   // ---- asks ----
@@ -224,36 +226,52 @@
     }
     return ask;
   };
+  const post = async (ask) => {
+    const headers = { "Content-Type": "application/json", "X-Tarecup": "screen" };
+    if (body.dataset.token) headers["X-Token"] = body.dataset.token;
+    const reply = await fetch("/api/ask", { method: "POST", headers, body: JSON.stringify(ask), signal: AbortSignal.timeout(8000) });
+    const said = await reply.json();
+    if (!said.ok) throw new Error((said.error && said.error.says) || reply.statusText);
+  };
+  const refused = (e) => {
+    tell(e instanceof TypeError || e.name === "TimeoutError" || e.name === "SyntaxError" ? words.unreachable : e.message, false);
+    beep(false);
+  };
   const send = async (form) => {
     if (form.dataset.busy) return;
     form.dataset.busy = "1";
     tell(words.sending, true);
     try {
-      const ask = members(form);
-      const headers = { "Content-Type": "application/json", "X-Tarecup": "screen" };
-      if (body.dataset.token) headers["X-Token"] = body.dataset.token;
-      const reply = await fetch("/api/ask", { method: "POST", headers, body: JSON.stringify(ask), signal: AbortSignal.timeout(8000) });
-      const said = await reply.json();
-      if (!said.ok) throw new Error((said.error && said.error.says) || reply.statusText);
+      await post(members(form));
       tell(words.done, true);
       form.reset();
-      if (ask.ask !== "code") beep(true);
+      beep(true);
       const sheet = form.closest("details[open]");
       if (sheet) sheet.open = false;
       if (body.dataset.page === "correct") location.href = document.querySelector("main > .row a.key").href;
     } catch (e) {
-      tell(e instanceof TypeError || e.name === "TimeoutError" ? words.unreachable : e.message, false);
-      beep(false);
+      refused(e);
     } finally {
       delete form.dataset.busy;
       home();
     }
   };
+  // A scanner does not wait for an answer: the field is free again at once, and codes go one after the other.
+  let codes = Promise.resolve();
+  const sendCode = (form) => {
+    const ask = members(form);
+    const field = form.elements.text;
+    if (field.type !== "hidden") field.value = "";
+    const sheet = form.closest("details[open]");
+    if (sheet) sheet.open = false;
+    home();
+    if (ask.text) codes = codes.then(() => post(ask)).then(() => tell("", true), refused);
+  };
   document.addEventListener("submit", (event) => {
     if (!event.target.dataset.ask) return;
     event.preventDefault();
-    if (event.target.dataset.ask === "code" && event.target.elements.text.value.trim() === "") return home();
-    send(event.target);
+    pad.hidden = true;
+    if (event.target.dataset.ask === "code") sendCode(event.target); else send(event.target);
   });
 
   // ---- the code field is always ready ----
@@ -296,20 +314,34 @@
   // ---- keys on the screen, offers, and the few local things ----
   const pad = byId("pad"), padShows = byId("pad-shows");
   let target;
-  const showPad = () => { padShows.textContent = target ? (target.type === "password" ? "•".repeat(target.value.length) : target.value) : ""; };
+  const showPad = () => {
+    const label = target.labels && target.labels[0] ? `${target.labels[0].textContent}: ` : "";
+    padShows.textContent = label + (target.type === "password" ? "•".repeat(target.value.length) : target.value);
+    pad.classList.toggle("numeric", target.inputMode === "numeric" || target.inputMode === "decimal");
+  };
+  const press = (pressed) => {
+    if (pressed === "Close" || !target || !target.isConnected) { pad.hidden = true; return; }
+    if (pressed === "Enter") {
+      if (target === code) return target.form.requestSubmit();
+      // On to the next field that is still empty; recording is a tap of its own.
+      const next = [...target.form.elements].find((f) => f !== target && f.required && (f.type === "text" || f.type === "password") && f.value === "");
+      if (next) next.focus(); else pad.hidden = true;
+      return;
+    }
+    target.value = pressed === "Back" ? target.value.slice(0, -1) : target.value + (pressed === "Space" ? " " : pressed);
+    target.dispatchEvent(new Event("input", { bubbles: true }));
+    showPad();
+  };
+  document.addEventListener("focusin", (event) => {
+    if (!pad.hidden && event.target.tagName === "INPUT") { target = event.target; showPad(); }
+  });
   document.addEventListener("click", (event) => {
     const hit = event.target.closest("[data-pad-for], [data-key], [data-fill], [data-print]");
     if (!hit) return;
     if (hit.dataset.padFor) { target = byId(hit.dataset.padFor); pad.hidden = !pad.hidden; target.focus(); showPad(); }
     if (hit.dataset.fill) { const into = byId(hit.dataset.into); into.value = hit.dataset.fill; into.dispatchEvent(new Event("input", { bubbles: true })); }
     if ("print" in hit.dataset) print();
-    if (!hit.dataset.key || !target || !target.isConnected) { if (hit.dataset.key) pad.hidden = true; return; }
-    const pressed = hit.dataset.key;
-    if (pressed === "Close") { pad.hidden = true; return; }
-    if (pressed === "Enter") { pad.hidden = true; target.form.requestSubmit(); return; }
-    target.value = pressed === "Back" ? target.value.slice(0, -1) : target.value + (pressed === "Space" ? " " : pressed);
-    target.dispatchEvent(new Event("input", { bubbles: true }));
-    showPad();
+    if (hit.dataset.key) press(hit.dataset.key);
   });
   document.addEventListener("input", (event) => {
     if (event.target.dataset.local !== "water") return;

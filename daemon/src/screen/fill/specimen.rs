@@ -78,7 +78,7 @@ fn trial(s: &Specimen, t: &TrialRecord) -> Option<Trial> {
         no: t.no,
         container: Some(t.container.to_string()),
         drops: counts.clone().map(|c| (c.drops, c.seq)).collect(),
-        rate_per_s: counts.clone().last().and_then(|c| c.rate_per_s),
+        rate_per_s: counts.clone().next_back().and_then(|c| c.rate_per_s),
         tare: t.tare.as_ref().map(weighed),
         wet: t.wets.last().map(weighed),
         dry: t.dries.last().map(|d| weighed(&d.weighing)),

@@ -12,6 +12,8 @@ use maud::{Markup, html};
 /// Entries shown under the latest one.
 const SHOWN: usize = 5;
 
+/// Figures of a mass that fit in full size.
+const FIT: usize = 6;
 /// A sentence longer than this is set smaller.
 const LONG: usize = 100;
 
@@ -121,13 +123,13 @@ fn pan(balance: &Balance, readings: bool, w: &Words) -> Markup {
         section.instrument.balance data-instrument=(balance.name) data-state=(word_of(&balance.freshness)) data-steady=(steady)
             aria-label=(fill(w.balance_named, &[&balance.name])) {
             h2 { (icon("weigh")) span { (balance.name) } (trust(&balance.freshness, balance.connected, w)) }
-            p.digits { span.mass data-slot="mass" data-number=[reading.map(|r| r.mass_g.as_str())] { (reading.map_or("–", |r| r.mass_g.as_str())) } span.unit { (w.gram) } }
+            p.digits { span.mass.many[reading.is_some_and(|r| r.mass_g.len() > FIT)] data-slot="mass" data-number=[reading.map(|r| r.mass_g.as_str())] { (reading.map_or("–", |r| r.mass_g.as_str())) } span.unit { (w.gram) } }
             p.rest {
                 span.shape-steady { (icon("steady")) } span.shape-moving { (icon("moving")) } span.shape-unmarked { (icon("unmarked")) }
                 span data-slot="steady" { (word) }
+                @if !balance.shared_with.is_empty() { span.detail { (fill(w.shared_with, &[&balance.shared_with.join(", ")])) } }
             }
             @if let Some(detail) = &balance.detail { p.detail.attention[attention(balance.connected)] { (detail) } }
-            @if !balance.shared_with.is_empty() { p.detail { (fill(w.shared_with, &[&balance.shared_with.join(", ")])) } }
         }
     }
 }
@@ -140,9 +142,8 @@ fn drops(cup: &Cup, readings: bool, w: &Words) -> Markup {
             data-rate-from=[cup.rate_wanted.map(|r| r[0])] data-rate-to=[cup.rate_wanted.map(|r| r[1])]
             aria-label=(fill(w.cup_named, &[&cup.name])) {
             h2 { (icon("cup")) span { (cup.name) } (trust(&cup.freshness, cup.connected, w)) }
-            p.digits { span.mass data-slot="drops" { (count.map_or(String::from("–"), |d| d.to_string())) } }
+            p.digits { span.mass data-slot="drops" { (count.map_or(String::from("–"), |d| d.to_string())) } span.unit { (w.drops) } }
             p.rest {
-                span { (w.drops) }
                 span data-slot="rate" data-number=[rate.map(|r| format!("{r:.2}"))] { (rate.map_or(String::from("–"), |r| format!("{r:.2}"))) }
                 span { (w.per_second) }
                 @if let Some([from, to]) = cup.rate_wanted { span.wanted { (fill(w.rate_wanted, &[&from.to_string(), &to.to_string()])) } }

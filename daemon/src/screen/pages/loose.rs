@@ -67,7 +67,7 @@ pub fn subject_line(subject: &Subject, w: &Words) -> Markup {
 /// When, where, by which instrument, who.
 pub fn origin(subject: &Subject, w: &Words) -> Markup {
     html! {
-        @if !subject.at.is_empty() { (parts::day_and_time(&subject.at, w)) " " }
+        @if !subject.at.is_empty() { (parts::dated(&subject.at, w)) " " }
         @if let Some(instrument) = &subject.instrument { (fill(w.by_instrument, &[instrument])) " " }
         @if let Some(bench) = &subject.bench { (fill(w.at_bench, &[bench])) " " }
         @match &subject.by { Some(by) => { (fill(w.by_person, &[by])) } None => { (w.by_nobody) } }

@@ -15,6 +15,11 @@ pub fn day_and_time(at: &str, w: &Words) -> Markup {
     html! { time datetime=(at) data-time="both" { (day(at)) " " (clock(at)) " " (w.utc) } }
 }
 
+/// A moment with year and zone, as a record and a printed sheet need it.
+pub fn dated(at: &str, w: &Words) -> Markup {
+    html! { time datetime=(at) data-time="full" { (day(at)) " " (clock(at)) " " (w.utc) } }
+}
+
 /// `08:14` of an RFC 3339 time; an empty text of anything else.
 fn clock(at: &str) -> &str {
     at.get(11..16).unwrap_or("")

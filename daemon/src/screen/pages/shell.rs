@@ -125,12 +125,12 @@ pub fn badge(count: usize, about: &str) -> Markup {
 
 /// Keys on the screen, for a panel without a keyboard. The script opens it.
 fn pad(w: &Words) -> Markup {
-    let rows = ["1234567890", "QWERTYUIOP", "ASDFGHJKL-", "ZXCVBNM.+"];
+    let rows = ["1234567890.", "QWERTYUIOP", "ASDFGHJKL-", "ZXCVBNM+"];
     html! {
         section #pad hidden aria-label=(w.pad) {
             output #pad-shows {}
             @for row in rows {
-                div.pad-row {
+                div.pad-row.letters[!row.starts_with('1')] {
                     @for key in row.chars() { button type="button" data-key=(key) { (key) } }
                     @if row.starts_with('Z') {
                         button type="button" data-key="Space" aria-label=(w.pad_space) { "␣" }

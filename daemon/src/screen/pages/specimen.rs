@@ -51,7 +51,7 @@ fn about(view: &SpecimenPage, w: &Words) -> Markup {
                 p.about {
                     (view.method) ", " (view.edition) ". "
                     @if let Some(text) = &view.preparation { (text) ". " }
-                    (w.opened) " " (parts::day_and_time(&view.opened, w))
+                    (w.opened) " " (parts::dated(&view.opened, w))
                 }
             }
             p.standing-of {
@@ -183,7 +183,7 @@ fn mass(weighed: Option<&Weighed>, none: &str) -> Markup {
 
 fn pictures(view: &SpecimenPage, w: &Words) -> Markup {
     html! {
-        div.pictures {
+        div.picture-row {
             figure {
                 (flow_line(&view.id, &view.flow, w))
                 figcaption { (w.flow_caption) @if view.flow.fit.as_ref().is_some_and(|f| !f.band.is_empty()) { " " (w.flow_band) } }
@@ -222,7 +222,7 @@ pub fn changes(all: &[Change], w: &Words) -> Markup {
         ol.history {
             @for c in all {
                 li.correction[c.correction] {
-                    span.when { (parts::day_and_time(&c.at, w)) }
+                    span.when { (parts::dated(&c.at, w)) }
                     span {
                         @if c.correction { span.state { (icon("hand")) (w.correction) } " " }
                         (c.what)
@@ -241,7 +241,7 @@ pub fn changes(all: &[Change], w: &Words) -> Markup {
 fn head(view: &SpecimenPage, w: &Words) -> Markup {
     html! {
         @if let Some(head) = &view.head {
-            footer.head { (w.ledger_head) " " strong.code { (short_code(head)) } " " (parts::day_and_time(&head.at, w)) " " (view.frame.lab) ", " (view.frame.station) }
+            footer.head { (w.ledger_head) " " strong.code { (short_code(head)) } " " (parts::dated(&head.at, w)) " " (view.frame.lab) ", " (view.frame.station) }
         }
     }
 }

@@ -164,7 +164,7 @@ pub fn bench() -> Bench {
             Recorded { drops: Some(27), mass_g: None, container: None, role: None, ..recorded(411, "", "", "", "10:41:50") },
             recorded(405, "38.19", "C2", "wet", "10:30:12"),
             Recorded {
-                drops: Some(18),
+                drops: Some(25),
                 mass_g: None,
                 container: None,
                 role: None,
