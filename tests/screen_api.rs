@@ -168,7 +168,7 @@ fn lists(station: &Station, described: &mut Described) {
     for (path, text, status) in [
         ("/api/import/containers", "", 422),
         ("/api/import/containers", "colour\nred\n", 422),
-                ("/api/import/ovens", "container\nC1\n", 404),
+        ("/api/import/ovens", "container\nC1\n", 404),
     ] {
         let answer = send(path, text);
         assert_eq!(answer.status, status, "{path} {text}: {}", answer.body);

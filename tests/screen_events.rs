@@ -30,7 +30,7 @@ fn two_browsers_at_a_bench_see_the_same() {
     assert!(a.data["seq"].as_u64() >= Some(seq), "{a:?}");
     assert_eq!((&a.data, &a.id), (&b.data, &b.id));
     // Readings and drops of the bench's own instruments come as they fall.
-    station.weigh(33.33);
+    station.shows(33.33);
     let live = one.wait("a reading", |e| e.name == "live" && e.data["mass_g"] == "33.33");
     assert_eq!((&live.data["instrument"], &live.data["steady"]), (&json!("pan-1"), &json!("steady")));
     station.count(7);
@@ -71,9 +71,13 @@ fn when_nothing_can_be_stored_the_pages_say_so() {
     other.execute_batch("BEGIN EXCLUSIVE").expect("locked");
     let began = Instant::now();
     station.weigh(20.0);
-    let beat = events.wait("not recording", |e| e.name == "beat" && e.data["recording"] == false);
-    assert!(beat.data["why"].is_string() && began.elapsed() < Duration::from_secs(5), "{beat:?} after {:?}", began.elapsed());
-    region(&mut events, "the alarm", "not-recording");
+    let (mut beat, mut alarm) = (false, false);
+    events.wait("not recording", |e| {
+        beat |= e.name == "beat" && e.data["recording"] == false && e.data["why"].is_string();
+        alarm |= e.name == "region" && e.data["html"].as_str().is_some_and(|h| h.contains("not-recording"));
+        beat && alarm
+    });
+    assert!(began.elapsed() < Duration::from_secs(5), "{:?}", began.elapsed());
     assert_eq!(station.post("/api/ask", &json!({"ask": "code", "bench": "north", "text": "C1"})).status, 503);
     assert_eq!(station.get("/api/status").status, 503);
     assert!(station.get("/bench/north").body.contains("not-recording"));

@@ -168,6 +168,15 @@ impl Station {
         }
     }
 
+    /// The pan shows this for a while.
+    pub fn shows(&self, grams: f64) {
+        let mut pan = self.pan.lock().expect("the pan");
+        for _ in 0..8 {
+            pan.write(format!("+{grams:10.2} g  S\r\n").as_bytes()).expect("written");
+            std::thread::sleep(Duration::from_millis(50));
+        }
+    }
+
     /// The cup drops so often.
     pub fn count(&self, drops: u32) {
         let mut cup = self.cup.lock().expect("the cup");

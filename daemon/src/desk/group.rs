@@ -157,7 +157,7 @@ pub enum Changed {
     /// Everything: the state was read anew.
     Whole(Box<Lab>),
     /// An entity as it stands now.
-    Entity(Loaded),
+    Entity(Box<Loaded>),
     /// A loose thing is tied or set aside.
     NoLonger(Seq),
 }
@@ -308,7 +308,7 @@ impl Desk {
 
     fn changed(&self, entity: &Entity) -> Option<Changed> {
         let lab = &self.lab;
-        Some(Changed::Entity(match entity {
+        Some(Changed::Entity(Box::new(match entity {
             Entity::Specimen(id) => Loaded::Specimen(Box::new(lab.specimen(id)?.clone())),
             Entity::Container(id) => Loaded::Container(lab.container(id)?.clone()),
             Entity::Bench(name) => Loaded::Bench(lab.bench(name)?.clone()),
@@ -317,7 +317,7 @@ impl Desk {
                 Some(loose) => Loaded::Loose(loose.clone()),
                 None => return Some(Changed::NoLonger(*seq)),
             },
-        }))
+        })))
     }
 
     /// Topics that have changed with the group.

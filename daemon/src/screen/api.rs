@@ -266,14 +266,7 @@ pub(super) async fn import(
 }
 
 /// Takes the lines of a list that can be taken; what the desk refuses is told at its line.
-pub(super) async fn taken(
-    app: &App,
-    ends: &Ends,
-    who: &Who,
-    lines: &mut [ImportLine],
-    asks: Vec<Ask>,
-    by: Option<&str>,
-) {
+pub(super) async fn taken(app: &App, ends: &Ends, who: &Who, lines: &mut [ImportLine], asks: Vec<Ask>, by: Option<&str>) {
     // Lines that were not refused and asks are in the same order.
     for (line, ask) in lines.iter_mut().filter(|l| l.refused.is_none()).zip(asks) {
         let Ok(Value::Object(mut ask)) = serde_json::to_value(ask) else { continue };

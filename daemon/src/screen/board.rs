@@ -7,8 +7,8 @@
 
 use super::fill::{self, Around, Heard};
 use super::mailbox::{Mailbox, News};
-use super::words::ENGLISH;
 use super::record::{self, Record};
+use super::words::ENGLISH;
 use super::{pages, view};
 use crate::clock::BootClock;
 use crate::desk::{Changed, LiveOut};
@@ -393,7 +393,7 @@ impl Board {
         }
         for changed in news.entities.into_values() {
             match changed {
-                Changed::Entity(loaded) => mirror.lab.load(loaded),
+                Changed::Entity(loaded) => mirror.lab.load(*loaded),
                 Changed::NoLonger(seq) => mirror.lab.unload_loose(seq),
                 Changed::Whole(_) => (),
             }

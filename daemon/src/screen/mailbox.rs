@@ -103,10 +103,12 @@ fn key(changed: &Changed) -> Option<Entity> {
     Some(match changed {
         Changed::Whole(_) => return None,
         Changed::NoLonger(seq) => Entity::Loose(*seq),
-        Changed::Entity(Loaded::Specimen(s)) => Entity::Specimen(s.id.clone()),
-        Changed::Entity(Loaded::Container(c)) => Entity::Container(c.id.clone()),
-        Changed::Entity(Loaded::Bench(b)) => Entity::Bench(b.name.clone()),
-        Changed::Entity(Loaded::Instrument(i)) => Entity::Instrument(i.name.clone()),
-        Changed::Entity(Loaded::Loose(l)) => Entity::Loose(l.seq),
+        Changed::Entity(loaded) => match loaded.as_ref() {
+            Loaded::Specimen(s) => Entity::Specimen(s.id.clone()),
+            Loaded::Container(c) => Entity::Container(c.id.clone()),
+            Loaded::Bench(b) => Entity::Bench(b.name.clone()),
+            Loaded::Instrument(i) => Entity::Instrument(i.name.clone()),
+            Loaded::Loose(l) => Entity::Loose(l.seq),
+        },
     })
 }

@@ -90,11 +90,11 @@ fn seen(page: Page, who: &Who) -> Seen {
     Seen { page, who: who.operator.clone(), proven: who.proven }
 }
 
-type Made = Result<Html<String>, Response>;
+type Made = Result<Html<String>, Refused>;
 
 fn shown(app: &App, who: &Who, page: Page, make: impl FnOnce(&tarecup_core::lab::Lab, &Around) -> Option<Markup>) -> Made {
     let made = app.board.look(|m| make(&m.lab, &app.board.around(m, &seen(page, who))));
-    made.map(|m| Html(m.into_string())).ok_or_else(|| problem(app, who, StatusCode::NOT_FOUND, "there is no such page"))
+    made.map(|m| Html(m.into_string())).ok_or_else(|| Refused::new(StatusCode::NOT_FOUND, "there is no such page"))
 }
 
 /// `GET /`
@@ -113,7 +113,7 @@ pub(super) async fn bench(
     Path(name): Path<String>,
     Query(query): Query<Members>,
 ) -> Made {
-    let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such bench");
+    let none = || Refused::new(StatusCode::NOT_FOUND, "there is no such bench");
     let name = BenchName::new(&name).map_err(|_| none())?;
     let paste_g: Option<String> = query.get("paste_g").map(|g| g.chars().take(12).collect());
     let page = shown(&app, &who, Page::Bench(name.clone()), |lab, around| {
@@ -158,7 +158,7 @@ pub(super) async fn laboratory(State(app): State<Arc<App>>, Extension(who): Exte
 
 /// `GET /specimen/ID`
 pub(super) async fn specimen(State(app): State<Arc<App>>, Extension(who): Extension<Who>, Path(id): Path<String>) -> Made {
-    let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such specimen");
+    let none = || Refused::new(StatusCode::NOT_FOUND, "there is no such specimen");
     let id = SpecimenId::new(&id).map_err(|_| none())?;
     at_hand(&app, &id).await;
     app.board.read_record(&id).await;
@@ -181,7 +181,7 @@ pub(super) async fn correct(
         around.history = super::record::corrections(&app.board.read_record(&id).await, seq);
     }
     let none = "no weighing or count has this number, or its specimen is not at hand";
-    let view = find(&around).ok_or_else(|| problem(&app, &who, StatusCode::NOT_FOUND, none))?;
+    let view = find(&around).ok_or_else(|| Refused::new(StatusCode::NOT_FOUND, none))?;
     Ok(Html(pages::correct(&view, &ENGLISH).into_string()))
 }
 
@@ -192,7 +192,7 @@ pub(super) async fn correct_trial(
     Path((specimen, kind, no)): Path<(String, String, u32)>,
     headers: HeaderMap,
 ) -> Made {
-    let none = || problem(&app, &who, StatusCode::NOT_FOUND, "there is no such determination");
+    let none = || Refused::new(StatusCode::NOT_FOUND, "there is no such determination");
     let id = SpecimenId::new(&specimen).map_err(|_| none())?;
     let kind: Kind = serde_json::from_value(Value::String(kind)).map_err(|_| none())?;
     at_hand(&app, &id).await;
@@ -370,7 +370,11 @@ pub(super) fn read_list(app: &App, who: &Who, what: &str, text: &str) -> (view::
 }
 
 /// `POST /import`
-pub(super) async fn import(State(app): State<Arc<App>>, Extension(who): Extension<Who>, Form(members): Form<Members>) -> Response {
+pub(super) async fn import(
+    State(app): State<Arc<App>>,
+    Extension(who): Extension<Who>,
+    Form(members): Form<Members>,
+) -> Response {
     let (view, _) = list_of(&app, &who, &members);
     let status = if view.refused.is_some() { StatusCode::UNPROCESSABLE_ENTITY } else { StatusCode::OK };
     (status, Html(pages::import(&view, &ENGLISH).into_string())).into_response()

@@ -321,7 +321,12 @@ fn make_state_dir(path: &Path) -> Result<(), StartError> {
 /// What the screen shows, as it stands at the start.
 fn board(station: &Station, desk: &mut Desk, clock: &Arc<dyn BootClock>, state_dir: &Path) -> Result<Arc<Board>, StartError> {
     let start = screen::session::random().map_err(|e| StartError::System(std::io::Error::other(e)))?;
-    let fixed = Fixed { lab: station.lab.name.clone(), station: station.lab.station.to_string(), start: start[..12].to_string(), state_dir: state_dir.to_path_buf() };
+    let fixed = Fixed {
+        lab: station.lab.name.clone(),
+        station: station.lab.station.to_string(),
+        start: start[..12].to_string(),
+        state_dir: state_dir.to_path_buf(),
+    };
     let lab = desk.mirror();
     Ok(Board::new(fixed, lab, desk.instrument_views(), desk.last_seq(), Arc::clone(clock)))
 }
