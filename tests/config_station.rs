@@ -202,7 +202,7 @@ fn wrong_instruments_are_pointed_at() {
 
 #[test]
 fn wrong_tables_are_pointed_at() {
-    let cases: [(&str, &[&str]); 37] = [
+    let cases: [(&str, &[&str]); 44] = [
         ("[lab]\nstation = @@\"wet room\"", &["lab: station", "' ' cannot stand"]),
         ("[lab]\n@@stations = \"x\"", &["\"station\": did you mean"]),
         ("[lab]\nname = @@\"a\\u0000b\"", &["control character"]),
