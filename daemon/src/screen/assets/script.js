@@ -177,6 +177,8 @@
       }
     }
   };
+  // A slice that is owed for long calls out until somebody comes.
+  setInterval(() => { if (body.dataset.connection === "live" && document.querySelector('[data-owed="overdue"]')) beep(false); }, 20000);
   const parse = (event) => { try { return JSON.parse(event.data); } catch { return null; } };
   const listen = () => {
     if (!body.dataset.events) return;
@@ -216,10 +218,10 @@
     clearTimeout(clearing);
     clearing = setTimeout(() => { answer.textContent = ""; }, good ? 4000 : 15000);
   };
-  const members = (form) => {
+  const members = (form, pressed) => {
     const ask = { ask_id: crypto.randomUUID ? crypto.randomUUID() : `${Date.now()}-${Math.random()}` };
     for (const f of form.elements) {
-      if (!f.name || f.name === "token" || f.disabled || (f.type === "radio" && !f.checked)) continue;
+      if (!f.name || f.name === "token" || f.disabled || (f.type === "radio" && !f.checked) || (f.type === "submit" && f !== pressed)) continue;
       const text = f.value.trim();
       if (text === "") continue;
       ask[f.name] = { number: () => Number(text.replace(",", ".")), list: () => text.split(",").map((t) => t.trim()).filter(Boolean), time: () => new Date(text).toISOString() }[f.dataset.type]?.() ?? text;
@@ -258,10 +260,9 @@
   };
   // A scanner does not wait for an answer: the field is free again at once, and codes go one after the other.
   let codes = Promise.resolve();
-  const sendCode = (form) => {
-    const ask = members(form);
-    const field = form.elements.text;
-    if (field.type !== "hidden") field.value = "";
+  const sendCode = (form, pressed) => {
+    const ask = members(form, pressed);
+    if (form.contains(code)) code.value = "";
     const sheet = form.closest("details[open]");
     if (sheet) sheet.open = false;
     home();
@@ -271,7 +272,7 @@
     if (!event.target.dataset.ask) return;
     event.preventDefault();
     pad.hidden = true;
-    if (event.target.dataset.ask === "code") sendCode(event.target); else send(event.target);
+    if (event.target.dataset.ask === "code") sendCode(event.target, event.submitter); else send(event.target);
   });
 
   // ---- the code field is always ready ----

@@ -1,7 +1,7 @@
 //! The big keys of the bench: the few intentions, and what only a person sees.
 
 use super::super::pictures::icon;
-use super::super::view::{Bench, ContainerKey};
+use super::super::view::Bench;
 use super::super::words::Words;
 use super::bench::by_hand;
 use super::parts::{self, Form};
@@ -49,28 +49,29 @@ fn specimens(view: &Bench, w: &Words) -> Markup {
     html! {
         @if view.specimens.is_empty() { p.note { (w.no_specimen_open) } }
         div.choices {
-            @for one in &view.specimens {
-                (Form::new(&view.frame, "code").at(&view.name).with("text", one.id.as_str()).around(html! {
-                    button.key type="submit" aria-pressed=(one.chosen) {
+            (Form::new(&view.frame, "code").at(&view.name).around(html! {
+                @for one in &view.specimens {
+                    button.key type="submit" name="text" value=(one.id) aria-pressed=(one.chosen) {
                         span { strong { (one.id) } @if let Some(about) = &one.description { " " span.about { (about) } } }
                     }
-                }))
-            }
+                }
+            }))
             a.key href="/laboratory#open-specimen" { (icon("list")) span { (w.open_another) } }
         }
     }
 }
 
 fn containers(view: &Bench, w: &Words) -> Markup {
-    let key = |one: &ContainerKey| {
-        Form::new(&view.frame, "code").at(&view.name).with("text", one.id.as_str()).around(html! {
-            button.key type="submit" { span { strong { (one.id) } " " span.about { (w.standing(&one.standing)) } } }
-        })
-    };
     html! {
         p { (w.choose_container_says) }
         (parts::caution(w.caution_hot))
-        div.choices { @for one in &view.containers { (key(one)) } }
+        div.choices {
+            (Form::new(&view.frame, "code").at(&view.name).around(html! {
+                @for one in &view.containers {
+                    button.key type="submit" name="text" value=(one.id) { span { strong { (one.id) } " " span.about { (w.standing(&one.standing)) } } }
+                }
+            }))
+        }
         @if view.containers.is_empty() { p.note { (w.no_containers) } }
     }
 }

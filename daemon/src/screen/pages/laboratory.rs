@@ -47,22 +47,22 @@ pub fn regions(view: &Laboratory, w: &Words) -> Regions {
 fn open(view: &Laboratory, w: &Words) -> Markup {
     html! {
         h2 { (w.open_specimens) }
-        @if view.open.is_empty() { p.note { (w.no_specimen_open) } } @else { (specimens(&view.open, w)) }
+        @if view.open.is_empty() { p.note { (w.no_specimen_open) } } @else { (specimens(&view.open, w.open_specimens, w)) }
     }
 }
 
 fn day(view: &Laboratory, w: &Words) -> Markup {
     html! {
         h2 { (w.results_of_day) }
-        @if view.results.is_empty() { p.note { (w.no_results) } } @else { (specimens(&view.results, w)) }
+        @if view.results.is_empty() { p.note { (w.no_results) } } @else { (specimens(&view.results, w.results_of_day, w)) }
     }
 }
 
-fn specimens(rows: &[SpecimenRow], w: &Words) -> Markup {
+fn specimens(rows: &[SpecimenRow], about: &str, w: &Words) -> Markup {
     let of = |(done, wanted): (u32, u32)| fill(w.so_many_of, &[&done.to_string(), &wanted.to_string()]);
     let number = |text: &Option<String>| html! { @if let Some(t) = text { (parts::number(t)) } };
     html! {
-        div.wide-table tabindex="0" role="region" aria-label=(w.specimen) {
+        div.wide-table tabindex="0" role="region" aria-label=(about) {
             table {
                 thead { tr { th { (w.specimen) } th { (w.state) } th.num { (w.liquid_trials) } th.num { (w.threads) } th.num { (w.ll) } th.num { (w.pl) } th.num { (w.pi) } th { (w.group) } } }
                 tbody {
