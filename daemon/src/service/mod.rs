@@ -11,7 +11,9 @@ use crate::desk::inbox::Inbox;
 use crate::desk::{Desk, DeskSetup, InstrumentSetup, Kind, Seat, SeatSettings};
 use crate::heard::Heard;
 use crate::ledger::{LedgerError, OpenOptions};
-use crate::publish::{self, Courier};
+#[cfg(feature = "broker")]
+use crate::publish;
+use crate::publish::Courier;
 use crate::screen::board::{Board, Fixed};
 use crate::screen::hand::Hand;
 use crate::screen::{self, Screen, ScreenFault};
