@@ -263,7 +263,7 @@ fn registers_are_read_from_a_line_or_from_the_network() {
 
 #[test]
 fn wrong_tables_are_pointed_at() {
-    let cases: [(&str, &[&str]); 37] = [
+    let cases: [(&str, &[&str]); 44] = [
         ("[lab]\nstation = @@\"wet room\"", &["lab: station", "' ' cannot stand"]),
         ("[lab]\n@@stations = \"x\"", &["\"station\": did you mean"]),
         ("[lab]\nname = @@\"a\\u0000b\"", &["control character"]),
@@ -291,6 +291,13 @@ fn wrong_tables_are_pointed_at() {
         ("[broker]\nlisten = @@\"0.0.0.0:18883\"", &["other machines can reach", "password_file"]),
         ("[broker]\nlisten = @@\"127.0.0.1\"", &["not an address and port", "127.0.0.1:18883"]),
         ("[broker]\nlisten = @@\"127.0.0.1:0\"", &["1 to 65535"]),
+        ("[screen]\nlisten = @@\"0.0.0.0:8470\"", &["other machines can reach", "tarecup secret new"]),
+        ("[screen]\nlisten = @@\"8470\"", &["not an address and port"]),
+        ("[screen]\nenabled = @@\"yes\"", &["true or false"]),
+        ("[screen]\n@@certificate_file = \"a\"", &["key_file"]),
+        ("[screen]\n@@key_file = \"a\"", &["certificate_file"]),
+        ("[screen]\nhosts = [\"pc\", @@\"http://pc:1\"]", &["not the name or address", "bench-pc.example"]),
+        ("[screen]\n@@port = 1", &["port"]),
         ("[[bench]]\nname = \"n\"\n[[bench]]\nname = @@\"n\"", &["as a bench above"]),
         ("@@[[bench]]\n", &["bench 1: name", "is missing", "name = \"north\""]),
         ("default_method = @@\"d4318-multi-point\"", &["no such method", "\"d4318-multipoint\": did you mean"]),
@@ -311,6 +318,10 @@ fn wrong_tables_are_pointed_at() {
 fn a_listener_beyond_loopback_is_right_with_passwords() {
     let s = read("[broker]\nlisten = \"0.0.0.0:18883\"\npassword_file = \"users\"\n");
     assert!(!s.broker.listen.ip().is_loopback());
+    let s = read("[screen]\nlisten = \"0.0.0.0:80\"\nsecret_file = \"s\"\nhosts = \"PC.example\"\n").screen;
+    assert!(s.enabled && s.listen.port() == 80 && s.secret_file == Some("s".into()) && s.hosts == ["pc.example"], "{s:?}");
+    assert_eq!(read("").screen.listen.to_string(), "127.0.0.1:8470");
+    assert!(!read("[screen]\nenabled = false\n").screen.enabled);
     assert_eq!(read("[broker]\nlisten = \"localhost:9\"").broker.listen.to_string(), "127.0.0.1:9");
     assert_eq!(read("[broker]\nlisten = \"[::1]:9\"").broker.listen.to_string(), "[::1]:9");
     let v6 = read("[mqtt]\nurl = \"mqtt://[fe80::1]:1884/\"").mqtt.url.expect("a url");

@@ -33,7 +33,7 @@ fn cup_of(no: usize) -> Cup {
 }
 
 fn station() -> Station {
-    Station::new(&format!("[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port()))
+    Station::new(&format!("[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port()))
 }
 
 /// Starts and kills the service so many times; returns the times from start to answer.

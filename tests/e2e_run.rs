@@ -91,7 +91,7 @@ fn the_bench_of_the_readme_works_as_it_says() {
     let python = blocks(&readme, "python").remove(0);
     let config = config.replace("/tmp/bench", &dir.path().display().to_string());
     // The usual port may be taken on the machine that runs this.
-    let config = format!("{config}\n[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port());
+    let config = format!("{config}\n[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port());
     let path = dir.path().join("bench.toml");
     std::fs::write(&path, &config).expect("written");
     let checked = tarecup(&["check", "--config", &path.display().to_string()]);
@@ -136,7 +136,7 @@ fn the_bench_of_the_readme_works_as_it_says() {
 }
 
 fn station() -> Station {
-    Station::new(&format!("[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port()))
+    Station::new(&format!("[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{}\"\n", free_port()))
 }
 
 fn rejects(instrument: &Value) -> u64 {
@@ -262,7 +262,7 @@ fn a_second_service_on_the_same_ledger_leaves_at_once_naming_the_first() {
 #[test]
 fn an_orderly_stop_says_so_and_loses_nothing() {
     let port = free_port();
-    let station = Station::new(&format!("[broker]\nlisten = \"127.0.0.1:{port}\"\n"));
+    let station = Station::new(&format!("[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{port}\"\n"));
     station.start();
     wait_up(&station.state, PORTS);
     std::thread::sleep(Duration::from_millis(260));

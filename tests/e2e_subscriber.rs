@@ -169,7 +169,7 @@ fn a_subscriber_of_a_demonstration_played_once_gets_the_results() {
 fn a_broker_killed_in_mid_scenario_loses_nothing() {
     let mut broker = Mosquitto::start();
     let sheets = sheets();
-    let station = Station::new(&format!("[mqtt]\nurl = \"mqtt://127.0.0.1:{}\"\n", broker.port));
+    let station = Station::new(&format!("[screen]\nenabled = false\n[mqtt]\nurl = \"mqtt://127.0.0.1:{}\"\n", broker.port));
     station.start();
     let (sub, rust) = (MosquittoSub::on(broker.port, "#"), RustSub::on(broker.port, ALL));
     wait_up(&station.state, PORTS);
@@ -229,7 +229,7 @@ fn a_broker_killed_in_mid_scenario_loses_nothing() {
 #[test]
 fn a_service_killed_is_told_as_lost_by_the_broker() {
     let broker = Mosquitto::start();
-    let station = Station::new(&format!("[mqtt]\nurl = \"mqtt://127.0.0.1:{}\"\n", broker.port));
+    let station = Station::new(&format!("[screen]\nenabled = false\n[mqtt]\nurl = \"mqtt://127.0.0.1:{}\"\n", broker.port));
     let sub = MosquittoSub::on(broker.port, "tarecup/v1/+/presence");
     let says = |state: &str| last(&sub.got).values().any(|p| p.contains(&format!("\"state\":\"{state}\"")));
     station.start();

@@ -5,8 +5,8 @@ use std::net::{IpAddr, Ipv4Addr, SocketAddr};
 
 /// Where the built-in MQTT broker listens: 127.0.0.1:18883.
 pub const BROKER_LISTEN: SocketAddr = SocketAddr::new(IpAddr::V4(Ipv4Addr::LOCALHOST), 18_883);
-/// Where the bench screen listens: 127.0.0.1:18080.
-pub const SCREEN_LISTEN: SocketAddr = SocketAddr::new(IpAddr::V4(Ipv4Addr::LOCALHOST), 18_080);
+/// Where the bench screen listens: 127.0.0.1:8470.
+pub const SCREEN_LISTEN: SocketAddr = SocketAddr::new(IpAddr::V4(Ipv4Addr::LOCALHOST), 8_470);
 /// Port of MQTT without TLS (registered with IANA as `mqtt`).
 pub const MQTT_PORT: u16 = 1_883;
 /// Port of MQTT over TLS (registered with IANA as `secure-mqtt`).

@@ -11,6 +11,7 @@ pub(crate) const STATION: &[&str] = &[
     "broker",
     "record",
     "backup",
+    "screen",
     "bench",
     "instrument",
     "linking",
@@ -23,6 +24,7 @@ pub(crate) const MQTT: &[&str] = &["url", "user", "password_file", "ca_file", "r
 pub(crate) const BROKER: &[&str] = &["listen", "password_file"];
 pub(crate) const RECORD: &[&str] = &["signing_key_file"];
 pub(crate) const BACKUP: &[&str] = &["folder", "every_hours", "keep"];
+pub(crate) const SCREEN: &[&str] = &["enabled", "listen", "hosts", "secret_file", "certificate_file", "key_file"];
 pub(crate) const BENCH: &[&str] = &["name"];
 pub(crate) const INSTRUMENT: &[&str] = &[
     "name",

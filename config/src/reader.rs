@@ -369,6 +369,15 @@ impl<'a> Entry<'a> {
         found
     }
 
+    /// Yes or no.
+    pub(crate) fn truth(&self) -> Option<bool> {
+        let DeValue::Boolean(value) = self.value else {
+            self.wrong_kind("true or false", "true or false, without quotes");
+            return None;
+        };
+        Some(*value)
+    }
+
     /// A whole number within bounds.
     pub(crate) fn whole(&self, bounds: RangeInclusive<u32>, what: &str) -> Option<u32> {
         let expected = format!("{what}, {} to {}", bounds.start(), bounds.end());

@@ -43,6 +43,8 @@ struct Config {
     record: Option<Record>,
     /// Backups made while the service runs.
     backup: Option<Backup>,
+    /// The bench screen and the HTTP interface.
+    screen: Option<Screen>,
     /// Benches: places with a balance and a cup counter.
     bench: Option<Vec<Bench>>,
     /// Balances, cup counters, scanners.
@@ -125,6 +127,26 @@ struct Backup {
     /// Backups that are kept; default 14.
     #[schemars(range(min = 1, max = 1000))]
     keep: Option<u32>,
+}
+
+/// The bench screen and the HTTP interface.
+#[derive(JsonSchema)]
+#[schemars(deny_unknown_fields)]
+#[expect(dead_code, reason = "only its shape is used")]
+struct Screen {
+    /// Whether there is one; default true.
+    enabled: Option<bool>,
+    /// Where it listens; default "127.0.0.1:8470".
+    listen: Option<String>,
+    /// Names and addresses under which browsers reach it, beside its own address.
+    #[schemars(inner(length(min = 1, max = 253)))]
+    hosts: Option<OneOrList<String>>,
+    /// File whose first line a browser presents once, relative to this file; required beyond loopback.
+    secret_file: Option<String>,
+    /// File with the certificate chain (PEM), relative to this file; with it the screen speaks TLS.
+    certificate_file: Option<String>,
+    /// File with the key of the certificate (PEM), relative to this file.
+    key_file: Option<String>,
 }
 
 /// A bench.
@@ -316,6 +338,7 @@ mod tests {
             ("Broker", keys::BROKER),
             ("Record", keys::RECORD),
             ("Backup", keys::BACKUP),
+            ("Screen", keys::SCREEN),
             ("Bench", keys::BENCH),
             ("Instrument", keys::INSTRUMENT),
             ("Linking", keys::LINKING),

@@ -18,6 +18,27 @@ const MOST_PASTE_UG: i64 = 10_000 * 1_000_000;
 /// Deepest nesting of an ask.
 const DEEPEST: usize = 16;
 
+/// Members that are numbers; everything else is text.
+const NUMBERS: [&str; 14] = [
+    "seq",
+    "limit",
+    "no",
+    "drops",
+    "weighing",
+    "count",
+    "what",
+    "celsius",
+    "passing_75um_percent",
+    "clay_percent",
+    "liquid_limit_oven_dried",
+    "penetration_mm",
+    "revision",
+    "kind_no",
+];
+
+/// What the names of the screen's clients begin with.
+pub const SCREEN: &str = "screen";
+
 /// What is asked for.
 #[derive(Debug)]
 pub enum Wanted {
@@ -74,9 +95,14 @@ pub struct Asked {
     pub id: Option<String>,
     /// What is wanted.
     pub wanted: Wanted,
-    /// The ask without its id, as stored.
+    /// The ask without its envelope.
     pub body: Value,
+    /// Who asks has given the PIN of `who`. Only the screen may say so.
+    pub proven: bool,
 }
+
+/// Member of the envelope by which the screen says that a PIN was given. The input keeps it.
+pub const PROVEN: &str = "proven";
 
 /// A refusal as JSON.
 pub fn refusal(says: &str) -> String {
@@ -88,9 +114,7 @@ pub fn parse(text: &str) -> Result<Asked, String> {
     if text.len() > LARGEST {
         return Err(format!("the ask is {} bytes long; at most {LARGEST} fit", text.len()));
     }
-    if depth(text) > DEEPEST {
-        return Err(format!("the ask is nested more than {DEEPEST} deep"));
-    }
+    not_too_deep(text)?;
     let value: Value = serde_json::from_str(text).map_err(|e| format!("the ask is not JSON: {e}"))?;
     let Value::Object(mut object) = value else {
         return Err(String::from("an ask is one JSON object with a member \"ask\""));
@@ -100,13 +124,18 @@ pub fn parse(text: &str) -> Result<Asked, String> {
         Some(Value::String(id)) if !id.is_empty() && id.len() <= 64 => Some(id),
         Some(_) => return Err(String::from("\"ask_id\" is a text of 1 to 64 characters")),
     };
+    let proven = match object.remove(PROVEN) {
+        None => false,
+        Some(Value::String(how)) if how == "pin" => true,
+        Some(_) => return Err(format!("\"{PROVEN}\" is said by the screen alone")),
+    };
     let body = Value::Object(object.clone());
     let wanted = match read(&object)? {
         Some(read) => Wanted::Read(read),
         None if object.get("ask").is_some_and(|word| word == CONFIRM) => Wanted::Confirm(confirm(&object)?),
         None => Wanted::Write(serde_json::from_value(body.clone()).map_err(|e| in_words(&object, &e.to_string()))?),
     };
-    Ok(Asked { id, wanted, body })
+    Ok(Asked { id, wanted, body, proven })
 }
 
 const CONFIRM: &str = "confirm_port";
@@ -249,6 +278,28 @@ fn advice(object: &Map<String, Value>) -> Result<Read, String> {
     };
     let wish = Wish { paste, drops, slope: None };
     Ok(Read::Advice { bench: name(object, "bench")?, specimen: name(object, "specimen")?, wish })
+}
+
+/// A member of an ask that came as text: which members are numbers or lists is known by their names.
+pub fn member(name: &str, value: &str) -> Result<Value, String> {
+    if name == "containers" || name == "wanted" {
+        return Ok(Value::Array(value.split(',').map(|c| Value::String(c.trim().into())).collect()));
+    }
+    if NUMBERS.contains(&name) && !(name == "limit" && value.parse::<f64>().is_err()) {
+        return value
+            .parse::<serde_json::Number>()
+            .map(Value::Number)
+            .map_err(|_| format!("{name}={value}: a number is expected"));
+    }
+    Ok(Value::String(value.into()))
+}
+
+/// Refuses what is nested too deep, before anything is parsed.
+pub fn not_too_deep(text: &str) -> Result<(), String> {
+    match depth(text) > DEEPEST {
+        true => Err(format!("the ask is nested more than {DEEPEST} deep")),
+        false => Ok(()),
+    }
 }
 
 /// Deepest bracket of a JSON text, brackets inside texts not counted.

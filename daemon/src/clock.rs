@@ -1,6 +1,8 @@
 //! Where stamps come from: the machine's clocks, or a virtual day.
 
+use std::sync::OnceLock;
 use std::sync::atomic::{AtomicI64, AtomicU32, Ordering};
+use std::time::Instant;
 use tarecup_core::stamp::{Boot, Stamp};
 use tarecup_drivers::heard::Clock;
 
@@ -47,16 +49,25 @@ impl Clock for MachineClock {
 pub struct VirtualClock {
     utc_us: AtomicI64,
     boot: AtomicU32,
+    runs_since: OnceLock<Instant>,
 }
 
 impl VirtualClock {
     /// Starts at a moment.
     pub fn new(utc_us: i64) -> Self {
-        Self { utc_us: AtomicI64::new(utc_us), boot: AtomicU32::new(0) }
+        Self { utc_us: AtomicI64::new(utc_us), boot: AtomicU32::new(0), runs_since: OnceLock::new() }
     }
     /// Moves on; never back.
     pub fn set(&self, utc_us: i64) {
         self.utc_us.fetch_max(utc_us, Ordering::Relaxed);
+    }
+    /// From now on it goes as fast as any clock.
+    pub fn run(&self) {
+        self.runs_since.get_or_init(Instant::now);
+    }
+    /// Leaps ahead.
+    pub fn leap(&self, us: i64) {
+        self.utc_us.fetch_add(us, Ordering::Relaxed);
     }
 }
 
@@ -68,7 +79,8 @@ impl BootClock for VirtualClock {
 
 impl Clock for VirtualClock {
     fn now(&self) -> Stamp {
-        let utc_us = self.utc_us.load(Ordering::Relaxed);
+        let ran = self.runs_since.get().map_or(0, |since| i64::try_from(since.elapsed().as_micros()).unwrap_or(0));
+        let utc_us = self.utc_us.load(Ordering::Relaxed) + ran;
         Stamp { utc_us, mono_us: utc_us, boot: Boot(self.boot.load(Ordering::Relaxed)) }
     }
 }

@@ -20,6 +20,7 @@ mod opening;
 pub mod proof;
 pub mod publish;
 pub mod recording;
+pub mod screen;
 pub mod service;
 pub mod signals;
 pub mod socket;

@@ -101,6 +101,22 @@ pub(super) fn listen(entry: &Entry<'_>) -> Option<SocketAddr> {
     }
 }
 
+/// Reads a name or address, without a port, under which a browser reaches the screen.
+pub(super) fn host(entry: &Entry<'_>) -> Option<String> {
+    let text = entry.text()?;
+    let name = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'.' | b'-' | b'_');
+    let named = !text.is_empty() && text.len() <= 253 && text.bytes().all(name);
+    if named || text.parse::<IpAddr>().is_ok() {
+        return Some(text.to_ascii_lowercase());
+    }
+    entry.fault(
+        &format!("is {}, which is not the name or address of a machine", quote(text)),
+        "a name or address without scheme and port",
+        "\"bench-pc.example\" or \"192.0.2.7\"",
+    );
+    None
+}
+
 /// Reads the topic root.
 pub(super) fn topic_root(entry: &Entry<'_>) -> Option<String> {
     let text = entry.text()?;

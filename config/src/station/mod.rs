@@ -37,6 +37,8 @@ pub struct Station {
     pub signing_key_file: Option<PathBuf>,
     /// Backups made while the service runs; `None`: only those a person asks for.
     pub backup: Option<Backup>,
+    /// The bench screen and the HTTP interface.
+    pub screen: Screen,
     /// Where the ledger lies; without it, where the service manager says.
     pub state_dir: Option<PathBuf>,
     /// The benches; at least one.
@@ -99,6 +101,36 @@ pub struct Backup {
     pub every_hours: u32,
     /// How many are kept.
     pub keep: u32,
+}
+
+/// The bench screen and the HTTP interface.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Screen {
+    /// Whether there is one.
+    pub enabled: bool,
+    /// Where it listens.
+    pub listen: SocketAddr,
+    /// Names and addresses under which browsers reach it, beside its own address.
+    pub hosts: Vec<String>,
+    /// File whose first line a browser has to present once; beyond loopback it is required.
+    pub secret_file: Option<PathBuf>,
+    /// File with its certificate chain (PEM); with it, the screen speaks TLS.
+    pub certificate_file: Option<PathBuf>,
+    /// File with the key of the certificate (PEM).
+    pub key_file: Option<PathBuf>,
+}
+
+impl Default for Screen {
+    fn default() -> Self {
+        Self {
+            enabled: true,
+            listen: defaults::SCREEN_LISTEN,
+            hosts: Vec::new(),
+            secret_file: None,
+            certificate_file: None,
+            key_file: None,
+        }
+    }
 }
 
 /// One place with a balance and a cup counter.
@@ -237,7 +269,7 @@ pub enum LogFormat {
 
 /// Reads a configuration file from disk, with the method files that it names.
 ///
-/// A relative `state_dir`, `signing_key_file`, backup `folder`, `password_file`, `ca_file` or member of
+/// A relative `state_dir`, `secret_file`, `certificate_file`, `key_file`, `signing_key_file`, backup `folder`, `password_file`, `ca_file` or member of
 /// `method_files` lies in the folder of the configuration file (of the path it
 /// is named by, where that is a link), not in the one the program was started
 /// from: a service manager starts it from anywhere.
@@ -252,12 +284,16 @@ pub fn load(path: &Path) -> Result<Station, Faults> {
         text::read_file(&path).map(|text| (path.display().to_string(), text))
     })?;
     let mqtt = &mut station.mqtt;
+    let screen = &mut station.screen;
     let paths = [
         &mut station.state_dir,
         &mut station.signing_key_file,
         &mut mqtt.password_file,
         &mut mqtt.ca_file,
         &mut station.broker.password_file,
+        &mut screen.secret_file,
+        &mut screen.certificate_file,
+        &mut screen.key_file,
     ];
     if let Some(backup) = &mut station.backup {
         backup.folder = beside.join(&backup.folder);
@@ -309,7 +345,7 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
     let default_method = default_method(root, &methods, &broken);
     // Everything is read before anything is missed, so that all faults are told.
     let (lab, mqtt, broker) = (tables::lab(root), tables::mqtt(root), tables::broker(root));
-    let (linking, log) = (tables::linking(root), tables::log(root));
+    let (linking, log, screen) = (tables::linking(root), tables::log(root), tables::screen(root));
     let state_dir = root.get("state_dir").and_then(|e| tables::path(&e));
     let (signing_key_file, backup) = (tables::signing_key_file(root), tables::backup(root));
     let (lab, default_method) = (lab?, default_method?);
@@ -317,6 +353,7 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
         lab,
         mqtt,
         broker,
+        screen,
         signing_key_file,
         backup,
         state_dir,

@@ -1,6 +1,6 @@
 //! The plain tables of the configuration file.
 
-use super::{Backup, Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, address};
+use super::{Backup, Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, Screen, address};
 use crate::reader::{Entry, Table};
 use crate::{defaults, keys};
 use std::path::PathBuf;
@@ -140,6 +140,40 @@ pub(super) fn backup(root: &Table<'_>) -> Option<Backup> {
         backup.keep = keep;
     }
     Some(backup)
+}
+
+/// Names under which a browser may reach the screen.
+const MOST_HOSTS: usize = 20;
+
+pub(super) fn screen(root: &Table<'_>) -> Screen {
+    let mut screen = Screen::default();
+    let Some(table) = open(root, "screen", keys::SCREEN) else { return screen };
+    if let Some(enabled) = table.get("enabled").and_then(|e| e.truth()) {
+        screen.enabled = enabled;
+    }
+    screen.secret_file = table.get("secret_file").and_then(|e| path(&e));
+    screen.certificate_file = table.get("certificate_file").and_then(|e| path(&e));
+    screen.key_file = table.get("key_file").and_then(|e| path(&e));
+    for (one, other) in [("certificate_file", "key_file"), ("key_file", "certificate_file")] {
+        if let (Some(entry), None) = (table.get(one), table.get(other)) {
+            let says = format!("has no {other} beside it");
+            entry.fault_of_key(&says, "certificate_file and key_file together", &format!("{other} = \"a PEM file\" in [screen]"));
+        }
+    }
+    if let Some(list) = table.get("hosts").filter(|e| e.at_most(MOST_HOSTS)) {
+        screen.hosts = list.one_or_list().iter().filter_map(address::host).collect();
+    }
+    let Some(entry) = table.get("listen") else { return screen };
+    let Some(listen) = address::listen(&entry) else { return screen };
+    if screen.enabled && !listen.ip().is_loopback() && table.get("secret_file").is_none() {
+        entry.fault(
+            "is an address that other machines can reach, and without a secret any of them could use the bench",
+            "127.0.0.1 or ::1, or a secret that browsers have to present",
+            "`tarecup secret new FILE`, and secret_file = \"FILE\" in [screen]; or listen = \"127.0.0.1:8470\"",
+        );
+    }
+    screen.listen = listen;
+    screen
 }
 
 pub(super) fn benches(root: &Table<'_>) -> Vec<Bench> {

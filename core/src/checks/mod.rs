@@ -37,6 +37,8 @@ mod typed;
 mod u_line;
 pub(crate) mod windows;
 
+pub use windows::missing as windows_missing;
+
 use crate::limits::{CheckRow, LiquidLimit, PlasticLimit, PlasticityIndex, Severity};
 use crate::method::Method;
 use crate::sheet::{Kind, Seq, Sheet, Trial};

@@ -46,7 +46,7 @@ fn uncovered(worked: &Worked, windows: &[[u32; 2]], rows: &mut Vec<CheckRow>) {
 /// Windows that are left when every trial is given to one window, as many as
 /// possible. Trials in ascending order, each to the window that ends first:
 /// for windows on a line this leaves the fewest uncovered.
-pub(crate) fn missing(windows: &[[u32; 2]], counted: &[f64]) -> Vec<[u32; 2]> {
+pub fn missing(windows: &[[u32; 2]], counted: &[f64]) -> Vec<[u32; 2]> {
     let mut counted = counted.to_vec();
     counted.sort_by(f64::total_cmp);
     let mut covered = vec![false; windows.len()];

@@ -438,6 +438,11 @@ impl Lab {
         }
     }
 
+    /// Takes a loose thing out of place: it was tied or set aside.
+    pub fn unload_loose(&mut self, seq: Seq) {
+        self.loose.remove(&seq);
+    }
+
     /// Forgets finished specimens that no container holds and no bench works on; they come back from the ledger when named.
     pub fn forget_finished(&mut self) {
         let needed = self.needed();

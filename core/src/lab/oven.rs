@@ -25,7 +25,7 @@ impl OvenClock {
     }
 
     /// Time in the oven up to a moment, µs, and the clock it rests on.
-    pub(super) fn total(&self, now: &Stamp) -> (i64, Basis) {
+    pub fn total(&self, now: &Stamp) -> (i64, Basis) {
         if !self.recorded && self.stays.is_empty() {
             return self.heated(&self.wet_at, now);
         }

@@ -1,27 +1,10 @@
 //! `tarecup ask`: ask the running service for something.
 
 use super::{FAILED, NOBODY, StateArg, WRONG_INPUT, files};
+use crate::asks;
 use crate::socket::{self, ClientError};
 use serde_json::{Map, Value};
 use std::time::Duration;
-
-/// Members that are numbers; everything else is text.
-const NUMBERS: [&str; 14] = [
-    "seq",
-    "limit",
-    "no",
-    "drops",
-    "weighing",
-    "count",
-    "what",
-    "celsius",
-    "passing_75um_percent",
-    "clay_percent",
-    "liquid_limit_oven_dried",
-    "penetration_mm",
-    "revision",
-    "kind_no",
-];
 
 /// Arguments of `ask`.
 #[derive(clap::Args)]
@@ -80,22 +63,9 @@ fn ask_text(words: &[String]) -> Result<String, String> {
     ask.insert("ask".into(), Value::String(word.clone()));
     for member in members {
         let (name, value) = member.split_once('=').ok_or_else(|| format!("\"{member}\" is not NAME=VALUE"))?;
-        ask.insert(name.into(), member_value(name, value)?);
+        ask.insert(name.into(), asks::member(name, value)?);
     }
     Ok(Value::Object(ask).to_string())
-}
-
-fn member_value(name: &str, value: &str) -> Result<Value, String> {
-    if name == "containers" || name == "wanted" {
-        return Ok(Value::Array(value.split(',').map(|c| Value::String(c.trim().into())).collect()));
-    }
-    if NUMBERS.contains(&name) && !(name == "limit" && value.parse::<f64>().is_err()) {
-        return value
-            .parse::<serde_json::Number>()
-            .map(Value::Number)
-            .map_err(|_| format!("{name}={value}: a number is expected"));
-    }
-    Ok(Value::String(value.into()))
 }
 
 #[cfg(test)]

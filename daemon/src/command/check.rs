@@ -28,6 +28,10 @@ pub fn run(args: &CheckArgs) -> u8 {
             return WRONG_INPUT;
         }
     };
+    if let (true, Err(e)) = (station.screen.enabled, crate::screen::check(&station.screen)) {
+        eprintln!("{e}");
+        return WRONG_INPUT;
+    }
     match path {
         Some(path) => say!("{} is right.", path.display()),
         None => say!("There is no config file; the defaults are in force. Name one with --config FILE."),

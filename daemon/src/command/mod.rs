@@ -22,9 +22,11 @@ mod files;
 mod import;
 mod labels;
 mod learn;
+mod operator;
 mod ports;
 mod replay;
 mod run;
+mod secret;
 mod status;
 mod tell;
 mod validate;
@@ -96,6 +98,10 @@ enum Verb {
     Restore(backup::RestoreArgs),
     /// Prove that a ledger is as it was written.
     Verify(verify::VerifyArgs),
+    /// Operators and their PINs, for corrections and reviews on the screen.
+    Operator(operator::OperatorArgs),
+    /// Secrets of this station.
+    Secret(secret::SecretArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
     /// Write sheets of labels and cards to print.
@@ -133,6 +139,8 @@ pub fn main() -> ExitCode {
         Verb::Ask(args) => ask::run(&args),
         Verb::Import(args) => import::run(&args),
         Verb::Status(args) => status::run(&args),
+        Verb::Operator(args) => operator::run(&args),
+        Verb::Secret(args) => secret::run(&args),
         Verb::Ports(args) => ports::run(&args),
         Verb::Verify(args) => verify::run(&args),
         Verb::Drill(args) => drill::run(&args),

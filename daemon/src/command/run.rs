@@ -3,6 +3,7 @@
 use super::{FAILED, LogForm, StateArg, WRONG_INPUT, files, start_log};
 use crate::clock::MachineClock;
 use crate::keys::{self, Key};
+use crate::screen::ScreenFault;
 use crate::service::{Beside, Plan, Service, StartError};
 use crate::{signals, watch};
 use std::path::{Path, PathBuf};
@@ -81,6 +82,8 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         time_passes: true,
         any_broker_port: false,
         key: Some(key),
+        any_screen_port: false,
+        hand: None,
         tap: None,
         told: None,
         beside: Beside {
@@ -93,14 +96,17 @@ pub fn run(args: RunArgs, log: Option<LogForm>) -> u8 {
         Ok(service) => service,
         Err(e) => {
             eprintln!("{e}");
-            return if matches!(e, StartError::Profile { .. } | StartError::Mqtt(_) | StartError::Record(_)) {
-                WRONG_INPUT
-            } else {
-                FAILED
-            };
+            let wrong_settings = matches!(
+                e,
+                StartError::Profile { .. }
+                    | StartError::Mqtt(_)
+                    | StartError::Record(_)
+                    | StartError::Screen(ScreenFault::Settings(_))
+            );
+            return if wrong_settings { WRONG_INPUT } else { FAILED };
         }
     };
-    tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), "recording");
+    tracing::info!(state = %service.state_dir().display(), broker = %service.broker_name(), screen = service.screen_url().unwrap_or("none"), "recording");
     watch::ready();
     let Ok((_, stop)) = signals else {
         eprintln!("the system gives no signals; stopping");

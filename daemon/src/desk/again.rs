@@ -4,6 +4,7 @@
 use super::ear::Ear;
 use super::group::{Group, stored};
 use super::{Desk, DeskSetup};
+use crate::asks;
 use crate::ledger::{InputKind, InputStored, Ledger, LedgerError, OpenOptions, Reader};
 use bytes::Bytes;
 use std::path::Path;
@@ -46,6 +47,7 @@ impl Again {
             last_fact_input: 1,
             cleaned: Stamp::default(),
             signed: None,
+            mirrored: false,
             beside: Default::default(),
             delivered: 0,
             delivered_stored: 0,
@@ -91,7 +93,10 @@ impl Again {
         match input.kind {
             InputKind::Line | InputKind::Reject => self.line(input)?,
             InputKind::Ask => {
-                self.desk.absorb_ask("", None, &String::from_utf8_lossy(&input.bytes), &mut None, input.at);
+                // What the screen said of a PIN stands before the ask.
+                let text = String::from_utf8_lossy(&input.bytes).into_owned();
+                let body = asks::parse(&text).map_or(text, |asked| asked.body.to_string());
+                self.desk.absorb_ask("", None, &body, &mut None, input.at);
             }
             InputKind::Port => self.port(input)?,
             InputKind::Timer => drop(self.desk.absorb_timer(input.at)),

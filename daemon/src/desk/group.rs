@@ -3,6 +3,7 @@
 use super::flood::Swallowed;
 use super::inbox::Reply;
 use super::{Desk, InstrumentSetup, views};
+use crate::asks;
 use crate::keys::HeadText;
 use crate::ledger::{AnswerRow, Digest, DocumentRow, FactRow, Group as Rows, InputKind, InputRow};
 use bytes::Bytes;
@@ -12,7 +13,9 @@ use std::collections::{BTreeMap, BTreeSet};
 use std::time::Instant;
 use tarecup_core::fact::{Connection, Fact, Recorded, VERSION};
 use tarecup_core::lab::entities::Entity;
+use tarecup_core::lab::{Lab, Loaded};
 use tarecup_core::names::InstrumentName;
+use tarecup_core::sheet::Seq;
 use tarecup_core::signal::Reading;
 use tarecup_core::stamp::Stamp;
 use tarecup_drivers::heard::{Batch, InstrumentId, PortState, What};
@@ -28,7 +31,7 @@ pub(super) enum Held {
     /// A port's state.
     Port { instrument: InstrumentId, state: PortState, at: Stamp },
     /// An ask that may write.
-    Ask { client: String, id: Option<String>, body: String, reply: Option<Reply>, at: Stamp },
+    Ask { client: String, id: Option<String>, body: String, proven: bool, reply: Option<Reply>, at: Stamp },
     /// A look at the clock that led to something.
     Timer { at: Stamp },
     /// Settings in full.
@@ -160,6 +163,19 @@ pub struct Effects {
     pub confirmed: Vec<InstrumentId>,
     /// Whether recording began or ceased.
     pub presence: bool,
+    /// What was touched, as it stands now; nothing unless the desk is mirrored.
+    pub changed: Vec<Changed>,
+}
+
+/// A part of the laboratory that was touched, for a mirror of it.
+#[derive(Clone, Debug)]
+pub enum Changed {
+    /// Everything: the state was read anew.
+    Whole(Box<Lab>),
+    /// An entity as it stands now.
+    Entity(Box<Loaded>),
+    /// A loose thing is tied or set aside.
+    NoLonger(Seq),
 }
 
 #[derive(Serialize)]
@@ -238,6 +254,8 @@ impl Desk {
         self.held
             .iter()
             .map(|h| match h {
+                // That the PIN was given is part of what was asked.
+                Held::Ask { body, proven: true, .. } => format!("{{\"{}\":\"pin\",{}", asks::PROVEN, &body[1..]),
                 Held::Batch { .. } | Held::Ask { .. } | Held::Settings { .. } => String::new(),
                 Held::Flood { swallowed: s, .. } => {
                     serde_json::json!({"lines": s.lines, "bytes": s.bytes, "sha256": s.sha256, "sample": s.sample}).to_string()
@@ -301,6 +319,9 @@ impl Desk {
         }
         let replies = group.answers.into_iter().filter_map(|a| a.reply.map(|r| (r, a.answer)));
         effects.replies.extend(replies);
+        if self.mirrored {
+            effects.changed.extend(group.touched.iter().filter_map(|e| self.changed(e)));
+        }
         self.lab.forget_finished();
     }
 
@@ -324,6 +345,21 @@ impl Desk {
             tracing::warn!(error = %e, "a signed head could not be kept; the next one vouches for everything before it as well");
         }
         self.signed = Some(signed);
+    }
+
+    fn changed(&self, entity: &Entity) -> Option<Changed> {
+        let lab = &self.lab;
+        Some(Changed::Entity(Box::new(match entity {
+            Entity::Specimen(id) => Loaded::Specimen(Box::new(lab.specimen(id)?.clone())),
+            Entity::Container(id) => Loaded::Container(lab.container(id)?.clone()),
+            Entity::Bench(name) => Loaded::Bench(lab.bench(name)?.clone()),
+            Entity::Instrument(name) => Loaded::Instrument(lab.instrument(name)?.clone()),
+            Entity::Statistics => Loaded::Statistics(*lab.statistics()),
+            Entity::Loose(seq) => match lab.loose(*seq) {
+                Some(loose) => Loaded::Loose(loose.clone()),
+                None => return Some(Changed::NoLonger(*seq)),
+            },
+        })))
     }
 
     /// Topics that have changed with the group.
@@ -410,6 +446,7 @@ fn input_rows<'a>(
                 reason = Some(swallowed.reason.word());
                 (InputKind::Flood, &swallowed.at, Some(*instrument), text.as_bytes())
             }
+            Held::Ask { proven: true, at, .. } => (InputKind::Ask, at, None, text.as_bytes()),
             Held::Ask { body, at, .. } => (InputKind::Ask, at, None, body.as_bytes()),
             Held::Timer { at } => (InputKind::Timer, at, None, text.as_bytes()),
             Held::Settings { text, at } => (InputKind::Settings, at, None, text.as_bytes()),

@@ -109,6 +109,7 @@ impl Desk {
             not_recording: None,
             stopped: false,
             beside: std::collections::BTreeMap::new(),
+            mirrored: false,
         };
         desk.load(now)?;
         let mut effects = Effects::default();

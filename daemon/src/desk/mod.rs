@@ -16,9 +16,9 @@ mod group;
 pub mod inbox;
 mod load;
 mod seat;
-mod views;
+pub(crate) mod views;
 
-pub use group::{Effects, LiveOut, Publish};
+pub use group::{Changed, Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
 pub(crate) use views::STATISTICS;
@@ -75,6 +75,8 @@ pub struct Desk {
     cleaned: Stamp,
     /// The latest head that was signed.
     signed: Option<crate::ledger::SignedHead>,
+    /// What is touched is told with the effects.
+    mirrored: bool,
 }
 
 impl Desk {
@@ -86,6 +88,22 @@ impl Desk {
     /// Whether an orderly stop has been stored.
     pub fn stopped(&self) -> bool {
         self.stopped
+    }
+
+    /// The laboratory as it stands, and from now on what is touched is told with the effects.
+    pub fn mirror(&mut self) -> Lab {
+        self.mirrored = true;
+        self.lab.clone()
+    }
+
+    /// The ledger's last fact.
+    pub fn last_seq(&self) -> u64 {
+        self.ledger.tail().last_seq
+    }
+
+    /// How each instrument is doing, as it is published.
+    pub fn instrument_views(&self) -> Vec<serde_json::Value> {
+        (0..self.ears.len()).map(|i| self.instrument_view(i)).collect()
     }
 
     /// Takes what waits and stores it. What may leave is added to `effects`
@@ -185,6 +203,10 @@ impl Desk {
             return effects.replies.push((reply, asks::refusal(&says)));
         }
         match asks::parse(text) {
+            Ok(asked) if asked.proven && !client.starts_with(asks::SCREEN) => {
+                let says = format!("\"{}\" is said by the screen alone", asks::PROVEN);
+                effects.replies.push((reply, asks::refusal(&says)));
+            }
             Err(says) => effects.replies.push((reply, asks::refusal(&says))),
             Ok(asked) => match asked.wanted {
                 asks::Wanted::Read(read) => {
@@ -204,7 +226,8 @@ impl Desk {
                     effects.replies.push((reply, asks::refusal(&says)));
                 }
                 asks::Wanted::Write(_) | asks::Wanted::Confirm(_) => {
-                    self.absorb(Held::Ask { client, id: asked.id, body: asked.body.to_string(), reply: Some(reply), at: *now });
+                    let (id, body, proven) = (asked.id, asked.body.to_string(), asked.proven);
+                    self.absorb(Held::Ask { client, id, body, proven, reply: Some(reply), at: *now });
                 }
             },
         }
@@ -241,7 +264,7 @@ impl Desk {
                 self.absorb_port(usize::from(*instrument), state, *at);
                 true
             }
-            Held::Ask { client, id, body, reply, at } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
+            Held::Ask { client, id, body, reply, at, .. } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
             Held::Timer { at } => self.absorb_timer(*at),
             Held::Settings { text, at } => {
                 let input = self.next_input;
@@ -521,6 +544,9 @@ impl Desk {
                 self.not_recording = None;
                 self.commit(effects);
                 effects.presence = true;
+                if self.mirrored {
+                    effects.changed.insert(0, Changed::Whole(Box::new(self.lab.clone())));
+                }
                 // What was stored in the moment of trouble was never announced.
                 match self.standing_topics(now) {
                     Ok(topics) => effects.retained.splice(0..0, topics).for_each(drop),

@@ -5,6 +5,7 @@ use super::group::Effects;
 use super::inbox::{Inbox, Incoming};
 use crate::asks;
 use std::sync::Arc;
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::thread::JoinHandle;
 use std::time::{Duration, Instant};
 use tarecup_drivers::heard::Clock;
@@ -20,8 +21,8 @@ const FAR: Duration = Duration::from_secs(3_600);
 pub struct SeatSettings {
     /// Where stamps come from.
     pub clock: Arc<dyn Clock>,
-    /// Time passes by itself; false in a virtual day, whose clock is set from outside.
-    pub time_passes: bool,
+    /// Time passes by itself; false in a virtual day, whose clock is set from outside. It may begin to.
+    pub time_passes: Arc<AtomicBool>,
 }
 
 /// The desk at work in its thread.
@@ -109,7 +110,7 @@ fn wait_until(desk: &Desk, settings: &SeatSettings) -> Option<Instant> {
     if desk.not_recording().is_some() {
         return Some(now);
     }
-    let due = desk.due_in_us(&settings.clock.now()).map(|us| match settings.time_passes {
+    let due = desk.due_in_us(&settings.clock.now()).map(|us| match settings.time_passes.load(Ordering::Relaxed) {
         // A little later than due, so that it is due indeed.
         true => now + Duration::from_micros(us.unsigned_abs()) + Duration::from_millis(1),
         false => now + if us == 0 { Duration::ZERO } else { FAR },

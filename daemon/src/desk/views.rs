@@ -37,7 +37,7 @@ fn grams(mass: Mass) -> Value {
 }
 
 /// A bench: who, in hand, intention, slice owed, what comes next.
-pub(super) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
+pub(crate) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
     let guide = lab.guide(&bench.name);
     let loose = lab.loose_open().filter(|l| l.bench.as_ref() == Some(&bench.name)).count();
     json!({
@@ -87,7 +87,7 @@ pub fn loose(lab: &Lab) -> Vec<Value> {
 }
 
 /// A container: where it stands.
-pub(super) fn container(lab: &Lab, c: &Container, seq: u64) -> Value {
+pub(crate) fn container(lab: &Lab, c: &Container, seq: u64) -> Value {
     let at = c.tares.last().map(|t| t.at.rfc3339());
     let holding = c.holding.as_ref().map(|h| {
         let trial = lab.specimen(&h.specimen).and_then(|s| s.trial(h.trial));
@@ -106,7 +106,7 @@ pub(super) fn container(lab: &Lab, c: &Container, seq: u64) -> Value {
 }
 
 /// A specimen: what is done, what is missing.
-pub(super) fn specimen(s: &Specimen, seq: u64) -> Value {
+pub(crate) fn specimen(s: &Specimen, seq: u64) -> Value {
     let trials: Vec<Value> = s
         .trials
         .iter()

@@ -18,7 +18,12 @@ use crate::desk::{Desk, DeskSetup, Seat, SeatSettings};
 use crate::heard::Heard;
 use crate::keys::Key;
 use crate::ledger::{LedgerError, OpenOptions};
-use crate::publish::{self, Courier};
+#[cfg(feature = "broker")]
+use crate::publish;
+use crate::publish::Courier;
+use crate::screen::board::{Board, Fixed};
+use crate::screen::hand::Hand;
+use crate::screen::{self, Screen, ScreenFault};
 use crate::{asks, socket};
 use broker::{SharedCourier, courier_settings, start_courier};
 use bytes::Bytes;
@@ -26,6 +31,7 @@ use outlet::Outlet;
 use ports::{Aids, Doors, PortsThread, open_ports};
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::{Arc, PoisonError};
 use std::time::Duration;
 use tarecup_config::profiles::ProfileSource;
@@ -81,6 +87,9 @@ pub enum StartError {
     /// A folder to record to.
     #[error("{0}")]
     Record(String),
+    /// The bench screen.
+    #[error(transparent)]
+    Screen(#[from] ScreenFault),
     /// The system.
     #[error("the system gives no thread or timer: {0}")]
     System(std::io::Error),
@@ -105,6 +114,10 @@ pub struct Plan {
     pub any_broker_port: bool,
     /// Signs heads.
     pub key: Option<Key>,
+    /// When the screen's address is taken, take a free one.
+    pub any_screen_port: bool,
+    /// The demo's hand at a simulated bench.
+    pub hand: Option<Arc<dyn Hand>>,
     /// Sees messages.
     pub tap: Option<Tap>,
     /// Sees facts.
@@ -130,14 +143,20 @@ pub struct Service {
     state_dir: PathBuf,
     backups: Option<Keeper>,
     aids: Aids,
+    screen: Option<Screen>,
+    time_passes: Arc<AtomicBool>,
 }
 
 impl Service {
     /// Starts everything. Nothing runs when it fails.
     pub fn start(plan: Plan) -> Result<Service, StartError> {
-        let Plan { station, state_dir, clock, time_passes, any_broker_port, key, tap, told, beside } = plan;
+        let Plan { station, state_dir, clock, time_passes, any_broker_port, any_screen_port, hand, key, tap, told, beside } =
+            plan;
         let profiles = compile_profiles(&station)?;
         make_state_dir(&state_dir)?;
+        if station.screen.enabled {
+            screen::check(&station.screen)?;
+        }
         let inbox = Inbox::new();
         let ports_runtime = PortsThread::start(&inbox, time_passes)?;
         let net_runtime = runtime("net")?;
@@ -149,7 +168,8 @@ impl Service {
             clock.now()
         };
         let settings_text = setup.settings.clone();
-        let (desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
+        let (mut desk, first) = Desk::open(&state_dir, options, setup, stamp)?;
+        let screen = screen::Prepared::new(&station.screen, any_screen_port)?;
         let mut settings = courier_settings(&station)?;
         settings.will = Bytes::from(desk.presence("lost", &clock.now()).to_string());
         #[cfg(feature = "broker")]
@@ -161,7 +181,9 @@ impl Service {
         start_courier(settings.clone(), &desk, &state_dir, &inbox, &courier, &net_runtime)?;
         let aids = Aids::start(beside, &station, &settings_text, &state_dir, &clock, &inbox, time_passes)?;
         let doors = Doors::default();
+        let board = screen.is_some().then(|| board(&station, &mut desk, &clock, &state_dir)).transpose()?;
         let outlet = Outlet {
+            board: board.clone(),
             settings,
             ledger: desk.ledger_name(),
             courier: Arc::clone(&courier),
@@ -177,11 +199,15 @@ impl Service {
             socket::listen(&state_dir).map_err(|error| StartError::Socket { state_dir: state_dir.clone(), error })?
         };
         net_runtime.spawn(socket::serve(listener, Arc::clone(&inbox)));
-        let seat_settings = SeatSettings { clock: clock.clone(), time_passes };
+        let time_passes = Arc::new(AtomicBool::new(time_passes));
+        let seat_settings = SeatSettings { clock: clock.clone(), time_passes: Arc::clone(&time_passes) };
         let seat = Seat::take(desk, Arc::clone(&inbox), seat_settings, move |desk, effects| outlet.hand_on(desk, effects))
             .map_err(StartError::System)?;
         let ports = open_ports(&station, &profiles, &ports_runtime.handle, &clock, &inbox, &aids, &doors);
         let backups = keep_backups(&station, &state_dir, &clock)?;
+        let screen =
+            screen.zip(board).map(|(prepared, board)| Screen::start(prepared, board, Arc::clone(&inbox), &state_dir, hand));
+        let screen = screen.transpose().map_err(StartError::System)?;
         Ok(Service {
             backups,
             seat,
@@ -201,7 +227,20 @@ impl Service {
             clock,
             state_dir,
             aids,
+            screen,
+            time_passes,
         })
+    }
+
+    /// The virtual day is over: from now on time passes by itself.
+    pub fn let_time_pass(&self) {
+        self.time_passes.store(true, Ordering::Relaxed);
+        self.inbox.tick(Box::new(|_| ()));
+    }
+
+    /// Where the bench screen is, as a person types it.
+    pub fn screen_url(&self) -> Option<&str> {
+        self.screen.as_ref().map(Screen::url)
     }
 
     /// The queue in front of the desk.
@@ -272,6 +311,9 @@ impl Service {
         if let Some(backups) = self.backups {
             backups.stop();
         }
+        if let Some(screen) = self.screen {
+            screen.stop();
+        }
         self.ports_thread.stop(self.ports);
         self.aids.stop();
         let desk = self.seat.stop();
@@ -310,6 +352,19 @@ fn make_state_dir(path: &Path) -> Result<(), StartError> {
     use std::os::unix::fs::DirBuilderExt;
     let made = std::fs::DirBuilder::new().recursive(true).mode(0o700).create(path);
     made.map_err(|error| StartError::StateDir { path: path.to_path_buf(), error })
+}
+
+/// What the screen shows, as it stands at the start.
+fn board(station: &Station, desk: &mut Desk, clock: &Arc<dyn BootClock>, state_dir: &Path) -> Result<Arc<Board>, StartError> {
+    let start = screen::session::random().map_err(|e| StartError::System(std::io::Error::other(e)))?;
+    let fixed = Fixed {
+        lab: station.lab.name.clone(),
+        station: station.lab.station.to_string(),
+        start: start[..12].to_string(),
+        state_dir: state_dir.to_path_buf(),
+    };
+    let lab = desk.mirror();
+    Ok(Board::new(fixed, lab, desk.instrument_views(), desk.last_seq(), Arc::clone(clock)))
 }
 
 fn runtime(name: &str) -> Result<Runtime, StartError> {

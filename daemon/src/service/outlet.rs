@@ -7,12 +7,14 @@ use crate::clock::BootClock;
 use crate::desk::{Desk, Effects, LiveOut};
 use crate::heard::Heard;
 use crate::publish::{CourierSettings, Live, Outgoing};
+use crate::screen::board::Board;
 use bytes::Bytes;
 use serde_json::json;
 use std::sync::{Arc, PoisonError};
 
 /// Turns what may leave into messages.
 pub(super) struct Outlet {
+    pub(super) board: Option<Arc<Board>>,
     pub(super) settings: CourierSettings,
     pub(super) ledger: (String, u64),
     pub(super) courier: SharedCourier,
@@ -24,7 +26,10 @@ pub(super) struct Outlet {
 }
 
 impl Outlet {
-    pub(super) fn hand_on(&self, desk: &Desk, effects: Effects) {
+    pub(super) fn hand_on(&self, desk: &Desk, mut effects: Effects) {
+        if let Some(board) = &self.board {
+            board.mailbox.put(desk, &mut effects);
+        }
         let mut outgoing = Outgoing::default();
         if effects.presence {
             let presence = desk.presence("up", &self.clock.now()).to_string();

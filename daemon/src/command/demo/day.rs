@@ -2,6 +2,7 @@
 //! config of the station that the day is played at.
 
 use std::net::SocketAddr;
+use std::path::Path;
 use tarecup_config::scenario::{LiquidRow, Scenario, ScenarioSpecimen, Water, Weighed};
 use tarecup_core::names::MethodName;
 use tarecup_simulators::balance::Settings;
@@ -113,11 +114,22 @@ fn weighed(w: &Weighed) -> SimWeighed {
     }
 }
 
+/// The config of one instrument.
+pub fn config_of(name: &str, kind: &str, bench: &str, port: &Path, profile: &str) -> String {
+    let port = port.display().to_string();
+    format!(
+        "[[instrument]]\nname = \"{name}\"\nkind = \"{kind}\"\nbench = \"{bench}\"\nport = {port:?}\nprofile = \"{profile}\"\n"
+    )
+}
+
 /// The config of the station, as a person would write it.
-pub fn config(day: &Day, instruments: &Instruments, mqtt: Option<SocketAddr>) -> String {
+pub fn config(day: &Day, instruments: &Instruments, mqtt: Option<SocketAddr>, listen: Option<SocketAddr>) -> String {
     let mut text = String::from("[lab]\nname = \"Mosswick materials laboratory\"\nstation = \"wet-room\"\n");
     if let Some(address) = mqtt {
         text += &format!("[broker]\nlisten = \"{address}\"\n");
+    }
+    if let Some(address) = listen {
+        text += &format!("[screen]\nlisten = \"{address}\"\n");
     }
     for bench in &day.benches {
         text += &format!("[[bench]]\nname = \"{}\"\n", bench.name);
@@ -130,10 +142,7 @@ pub fn config(day: &Day, instruments: &Instruments, mqtt: Option<SocketAddr>) ->
         ];
         for (name, kind, profile) in each {
             let port = instruments.links().find(|(n, _)| n == name).map(|(_, p)| p.display().to_string()).unwrap_or_default();
-            text += &format!(
-                "[[instrument]]\nname = \"{name}\"\nkind = \"{kind}\"\nbench = \"{}\"\nport = {port:?}\nprofile = \"{profile}\"\n",
-                bench.name
-            );
+            text += &config_of(name, kind, &bench.name, Path::new(&port), profile);
         }
     }
     text

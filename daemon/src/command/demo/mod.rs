@@ -2,11 +2,13 @@
 //! pseudo-terminals, played in virtual time through the whole program.
 
 mod day;
+mod visitor;
 mod world;
 
 use super::{FAILED, LogForm, NOT_COMPLETE, WRONG_INPUT, start_log, tell};
 use crate::clock::VirtualClock;
 use crate::keys::Key;
+use crate::screen::hand::Hand;
 use crate::service::{Plan, Service, Tap, Told};
 use crate::signals;
 use std::io::Write;
@@ -19,6 +21,7 @@ use tarecup_config::{methods, station, text};
 use tarecup_core::fact::Fact;
 use tarecup_core::limits::{Limits, State};
 use tarecup_simulators::operator::{Instruments, Play, play};
+use visitor::Visitor;
 
 /// The day that is played when no scenario is named.
 const OWN_DAY: &str = include_str!("../../../../config/scenarios/day.toml");
@@ -47,8 +50,8 @@ pub struct DemoArgs {
     /// Print each published message as one line of JSON.
     #[arg(long)]
     json: bool,
-    /// Address of the bench screen (comes with a later version).
-    #[arg(long, value_name = "ADDR", hide = true)]
+    /// Address of the bench screen. Default: 127.0.0.1:8470, or a free one when that is taken.
+    #[arg(long, value_name = "ADDR")]
     listen: Option<SocketAddr>,
     /// Address of the built-in broker. Default: 127.0.0.1:18883, or a free one when that is taken.
     #[arg(long, value_name = "ADDR")]
@@ -77,9 +80,6 @@ struct Prepared {
 
 /// Everything that can be wrong with the input is found before anything starts.
 fn prepared(args: &DemoArgs) -> Result<Prepared, String> {
-    if args.listen.is_some() {
-        eprintln!("--listen has no effect yet: the bench screen comes with a later version");
-    }
     if args.speed.is_some_and(|s| !(s.is_finite() && s > 0.0)) {
         return Err(String::from("--speed: a number above 0 is expected, such as 240"));
     }
@@ -142,7 +142,11 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
     let mut instruments = Instruments::open(&folder.path.join("ports"), &day).map_err(|e| e.to_string())?;
     let clock = Arc::new(VirtualClock::new(day.start_utc_us));
     let results: Results = Arc::default();
-    let config = day::config(&day, &instruments, args.mqtt);
+    let ports = folder.path.join("ports");
+    let visitor = if args.once { None } else { Some(Visitor::open(&ports, &day, clock.clone()).map_err(|e| e.to_string())?) };
+    let mut config = day::config(&day, &instruments, args.mqtt, args.listen);
+    config += &visitor.as_ref().map(|v| v.config(&ports)).unwrap_or_default();
+    let pin = visitor.as_ref().and_then(|_| operators(&folder.path, &day));
     let plan = Plan {
         station: station::parse("(demo)", &config).map_err(|f| f.to_string())?,
         state_dir: folder.path.clone(),
@@ -151,16 +155,22 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
         any_broker_port: args.mqtt.is_none(),
         // A demonstration's record is thrown away; its key with it.
         key: Key::random().ok(),
+        any_screen_port: args.listen.is_none(),
+        hand: visitor.clone().map(|v| v as Arc<dyn Hand>),
         tap: args.json.then(json_tap),
         told: Some(teller(args.json, Arc::clone(&results))),
         beside: Default::default(),
     };
     let service = Service::start(plan).map_err(|e| e.to_string())?;
-    greet(args, &scenario, &service);
+    greet(args, &scenario, &service, pin.as_deref());
     let settings = Play { speed: if args.once { None } else { Some(args.speed.unwrap_or(SPEED)) }, ..Play::default() };
-    world::wait_for_ports(&service, instruments.links().count())?;
+    let theirs = visitor.as_ref().map_or(0, |_| Visitor::PORTS);
+    world::wait_for_ports(&service, instruments.links().count() + theirs)?;
+    if let Some(visitor) = &visitor {
+        visitor.begin(service.inbox());
+    }
     let began = Instant::now();
-    let mut world = world::DemoWorld::new(&service, &day, clock, stop.clone());
+    let mut world = world::DemoWorld::new(&service, &day, clock.clone(), stop.clone());
     let played = play(&day, &mut instruments, &settings, &mut world);
     let took = began.elapsed();
     let delivered = played.is_ok() && service.wait_delivered(DELIVERY);
@@ -177,10 +187,20 @@ fn at_work(args: &DemoArgs, prepared: Prepared) -> Result<u8, String> {
         std::thread::sleep(LINGER);
     }
     if !args.once && played.is_ok() && !stop.asked() {
+        clock.run();
+        service.let_time_pass();
+        if let Some(visitor) = &visitor {
+            visitor.day_over();
+        }
         if !args.json {
-            say!("\nThe broker stays up; look around. Ctrl-C ends the demo.");
+            let screen = service.screen_url().map(|url| format!("{url}/bench/")).unwrap_or_default();
+            let at = visitor.as_ref().map_or("", |v| v.bench());
+            say!("\nScreen and broker stay up; look around, or work yourself at {screen}{at}. Ctrl-C ends the demo.");
         }
         let _ = stopped.recv();
+    }
+    if let Some(visitor) = &visitor {
+        visitor.close();
     }
     service.stop();
     Ok(code)
@@ -212,7 +232,27 @@ fn teller(json: bool, results: Results) -> Told {
     })
 }
 
-fn greet(args: &DemoArgs, scenario: &Scenario, service: &Service) {
+/// Gives whoever works at the benches one PIN, drawn anew, unless somebody has one here already.
+fn operators(state_dir: &Path, day: &tarecup_simulators::day::Day) -> Option<String> {
+    use crate::screen::operators;
+    if !operators::load(state_dir).ok()?.operators.is_empty() {
+        return None;
+    }
+    let mut random = [0u8; 4];
+    getrandom::fill(&mut random).ok()?;
+    let pin = format!("{:04}", 1_000 + u32::from_le_bytes(random) % 9_000);
+    let mut names: Vec<&str> = day.benches.iter().map(|b| b.operator.as_str()).chain(["VR"]).collect();
+    names.sort_unstable();
+    names.dedup();
+    for name in names {
+        let name = tarecup_core::names::Operator::new(name).ok()?;
+        // The few PINs that are refused for being guessed first are drawn once in a thousand starts.
+        operators::add(state_dir, &name, &pin).ok()?;
+    }
+    Some(pin)
+}
+
+fn greet(args: &DemoArgs, scenario: &Scenario, service: &Service, pin: Option<&str>) {
     if args.json {
         return;
     }
@@ -222,6 +262,12 @@ fn greet(args: &DemoArgs, scenario: &Scenario, service: &Service) {
         scenario.specimens.len(),
         service.state_dir().join("ports").display()
     );
+    if let Some(url) = service.screen_url() {
+        say!("bench screen: {url}");
+    }
+    if let Some(pin) = pin {
+        say!("corrections and reviews on the screen ask for a PIN: that of everybody here is {pin}; a visitor is VR");
+    }
     if let Some(at) = service.broker_address() {
         say!("MQTT on {at}: for example  mosquitto_sub -h {} -p {} -v -t 'tarecup/v1/#'", at.ip(), at.port());
     }
