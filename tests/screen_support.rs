@@ -66,6 +66,8 @@ impl Station {
             any_broker_port: true,
             any_screen_port: false,
             hand: None,
+            key: None,
+            beside: Default::default(),
             tap: None,
             told,
         };

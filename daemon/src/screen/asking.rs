@@ -11,10 +11,13 @@ use serde_json::{Map, Value};
 use tarecup_core::names::{BenchName, Operator};
 
 /// Asks that change what is recorded, or speak for a result: only who gave a PIN makes them.
-pub const PROVEN: [&str; 11] = [
+pub const PROVEN: [&str; 14] = [
     "tie",
     "tie_count",
     "set_aside",
+    "explain",
+    "move_trial",
+    "amend_penetration",
     "set_aside_trial",
     "amend_mass",
     "amend_drops",
@@ -25,7 +28,8 @@ pub const PROVEN: [&str; 11] = [
     "review",
 ];
 /// Asks that name nobody beside whom they are about.
-const NAMELESS: [&str; 7] = ["sign_in", "sign_out", "code", "status", "latest", "document", "facts_after"];
+const NAMELESS: [&str; 11] =
+    ["sign_in", "sign_out", "code", "status", "latest", "document", "facts_after", "advice", "would", "shelf", "loose"];
 
 /// What came of an ask.
 pub struct Answered {

@@ -51,6 +51,9 @@ pub enum AskShape {
         preparation: Option<String>,
         passing_75um_percent: Option<f64>,
         clay_percent: Option<f64>,
+        #[serde(default)]
+        wanted: Vec<Intention>,
+        liquid_limit_oven_dried: Option<f64>,
         who: Option<String>,
     },
     SignIn {
@@ -96,6 +99,19 @@ pub enum AskShape {
         who: Option<String>,
         why: String,
     },
+    Explain {
+        what: u64,
+        who: Option<String>,
+        why: String,
+    },
+    MoveTrial {
+        specimen: String,
+        kind: Kind,
+        no: u32,
+        to: String,
+        who: Option<String>,
+        why: String,
+    },
     SetAside {
         what: u64,
         who: Option<String>,
@@ -120,6 +136,12 @@ pub enum AskShape {
         who: Option<String>,
         why: String,
     },
+    AmendPenetration {
+        what: u64,
+        penetration_mm: f64,
+        who: Option<String>,
+        why: String,
+    },
     TypeMass {
         bench: String,
         container: String,
@@ -131,6 +153,21 @@ pub enum AskShape {
         bench: String,
         drops: u32,
         who: Option<String>,
+    },
+    TypePenetration {
+        bench: String,
+        penetration_mm: f64,
+        who: Option<String>,
+    },
+    Slid {
+        bench: String,
+        who: Option<String>,
+        why: Option<String>,
+    },
+    GrooveTore {
+        bench: String,
+        who: Option<String>,
+        why: Option<String>,
     },
     NewPaste {
         bench: String,
@@ -145,6 +182,7 @@ pub enum AskShape {
     RegisterContainer {
         container: String,
         lid_g: Option<String>,
+        tare_g: Option<String>,
         who: Option<String>,
     },
     FreeContainer {
@@ -163,7 +201,7 @@ pub enum AskShape {
     },
     OvenOff {
         from: String,
-        to: String,
+        to: Option<String>,
         who: Option<String>,
         why: String,
     },
@@ -207,7 +245,7 @@ mod tests {
     /// One ask of each kind with every member.
     fn every() -> Vec<Value> {
         let mut all = vec![
-            json!({"ask":"open_specimen","specimen":"S","method":"m","edition":"e","description":"d","preparation":"p","passing_75um_percent":1.0,"clay_percent":1.0,"who":"AB"}),
+            json!({"ask":"open_specimen","specimen":"S","method":"m","edition":"e","description":"d","preparation":"p","passing_75um_percent":1.0,"clay_percent":1.0,"wanted":["liquid"],"liquid_limit_oven_dried":31.0,"who":"AB"}),
             json!({"ask":"sign_in","bench":"b","operator":"AB"}),
             json!({"ask":"sign_out","bench":"b"}),
             json!({"ask":"intend","bench":"b","specimen":"S","intention":"plastic","who":"AB"}),
@@ -222,9 +260,15 @@ mod tests {
             json!({"ask":"amend_drops","count":1,"drops":25,"who":"AB","why":"w"}),
             json!({"ask":"type_mass","bench":"b","container":"C1","mass_g":"21.43","role":"emptied","who":"AB"}),
             json!({"ask":"type_drops","bench":"b","drops":25,"who":"AB"}),
+            json!({"ask":"explain","what":1,"who":"AB","why":"w"}),
+            json!({"ask":"move_trial","specimen":"S","kind":"thread","no":1,"to":"T","who":"AB","why":"w"}),
+            json!({"ask":"amend_penetration","what":1,"penetration_mm":18.5,"who":"AB","why":"w"}),
+            json!({"ask":"type_penetration","bench":"b","penetration_mm":18.5,"who":"AB"}),
+            json!({"ask":"slid","bench":"b","who":"AB","why":"w"}),
+            json!({"ask":"groove_tore","bench":"b","who":"AB","why":"w"}),
             json!({"ask":"new_paste","bench":"b","who":"AB","why":"w"}),
             json!({"ask":"undo","bench":"b","who":"AB","why":"w"}),
-            json!({"ask":"register_container","container":"C1","lid_g":"4.1","who":"AB"}),
+            json!({"ask":"register_container","container":"C1","lid_g":"4.1","tare_g":"21.4","who":"AB"}),
             json!({"ask":"free_container","container":"C1","who":"AB","why":"w"}),
             json!({"ask":"into_oven","containers":["C1"],"celsius":110.0,"who":"AB"}),
             json!({"ask":"out_of_oven","containers":["C1"],"who":"AB"}),
@@ -241,11 +285,13 @@ mod tests {
     fn described(ask: &Ask) -> usize {
         use Ask::*;
         match ask {
-            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 25,
-            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 25,
-            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 25,
-            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 25,
-            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 25,
+            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 31,
+            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 31,
+            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 31,
+            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 31,
+            Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 31,
+            Slid { .. } | GrooveTore { .. } => 31,
+            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 31,
         }
     }
 

@@ -18,8 +18,8 @@ pub fn keys(view: &Bench, w: &Words) -> Markup {
             (parts::sheet("pick-container", "key", face("tin", w.key_container), w.choose_container, containers(view, w), w))
         }
         div.keys role="group" aria-label=(w.person_sees) {
-            @for (why, shape, text) in [(w.why_slid, "slid", w.key_slid), (w.why_tore, "tore", w.key_tore), (w.why_new_paste, "paste", w.key_new_paste)] {
-                (Form::new(&view.frame, "new_paste").at(&view.name).with("why", why).around(html! {
+            @for (ask, why, shape, text) in [("slid", w.why_slid, "slid", w.key_slid), ("groove_tore", w.why_tore, "tore", w.key_tore), ("new_paste", w.why_new_paste, "paste", w.key_new_paste)] {
+                (Form::new(&view.frame, ask).at(&view.name).with("why", why).around(html! {
                     button.key type="submit" disabled[view.owed.is_none()] title=[view.owed.is_none().then_some(w.after_a_count)] { (face(shape, text)) }
                 }))
             }
