@@ -31,7 +31,7 @@ fn config(pan: &Path, cup: &str) -> String {
         )
     };
     format!(
-        "[broker]\nlisten = \"127.0.0.1:{}\"\n[[bench]]\nname = \"north\"\n{}{}{}{}",
+        "[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{}\"\n[[bench]]\nname = \"north\"\n{}{}{}{}",
         free_port(),
         instrument("pan-1", "balance", &pan.display().to_string(), "pan-bus"),
         instrument("cup-1", "counter", cup, "cup-bus") + "pause_ms = 1500\n",

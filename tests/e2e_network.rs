@@ -20,7 +20,7 @@ impl Lab {
     fn new(port: u16) -> Self {
         let dir = tempfile::tempdir().expect("a folder");
         let config = format!(
-            "[lab]\nname = \"test\"\nstation = \"wet-room\"\n[broker]\nlisten = \"127.0.0.1:{}\"\n[[instrument]]\nname = \"pan-1\"\nkind = \"balance\"\nport = \"tcp://127.0.0.1:{port}\"\nprofile = \"signed-steady\"\n",
+            "[lab]\nname = \"test\"\nstation = \"wet-room\"\n[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{}\"\n[[instrument]]\nname = \"pan-1\"\nkind = \"balance\"\nport = \"tcp://127.0.0.1:{port}\"\nprofile = \"signed-steady\"\n",
             free_port()
         );
         std::fs::write(dir.path().join("config.toml"), config).expect("written");

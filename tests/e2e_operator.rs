@@ -94,8 +94,10 @@ impl Station {
             )
         };
         let (fast, quick) = ("steady_readings = 3\n", "debounce_ms = 5\npause_ms = 1000\n");
+        // These stations are looked at by other ways than their screen.
+        let screen = if mqtt.contains("[screen]") { "" } else { "[screen]\nenabled = false\n" };
         let config = format!(
-            "[lab]\nname = \"test\"\nstation = \"wet-room\"\n{mqtt}\n[[bench]]\nname = \"north\"\n[[bench]]\nname = \"south\"\n{}{}{}{}{}",
+            "[lab]\nname = \"test\"\nstation = \"wet-room\"\n{screen}{mqtt}\n[[bench]]\nname = \"north\"\n[[bench]]\nname = \"south\"\n{}{}{}{}{}",
             instrument("pan-1", "balance", "north", "signed-steady", fast),
             instrument("cup-1", "counter", "north", "running-total", quick),
             instrument("scan-1", "scanner", "north", "plain-code", ""),

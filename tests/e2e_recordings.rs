@@ -256,11 +256,11 @@ fn a_recording_on_a_full_disk_stops_nothing_and_is_told() {
     let station = station();
     let disk = station.dir.path().join("disk");
     std::fs::create_dir(&disk).expect("a folder");
-    // A disk of its own of 64 kB, seen by the service alone.
+    // A disk of its own of 192 kB, seen by the service alone.
     let run = station.command();
     let words: Vec<String> = run.get_args().map(|a| a.to_string_lossy().into_owned()).collect();
     let script =
-        format!("mount -t tmpfs -o size=64k none {0} && exec '{TARECUP}' {1} --record {0}/r", disk.display(), words.join(" "));
+        format!("mount -t tmpfs -o size=192k none {0} && exec '{TARECUP}' {1} --record {0}/r", disk.display(), words.join(" "));
     let mut command = Command::new("unshare");
     command.args(["-rm", "sh", "-c", &script]).stdin(Stdio::null()).stderr(Stdio::null());
     let _service = Running::start(&mut command);
@@ -268,7 +268,7 @@ fn a_recording_on_a_full_disk_stops_nothing_and_is_told() {
     std::thread::sleep(Duration::from_millis(300));
     let recording = || status(&station.state).map(|s| s["recording"].clone()).unwrap_or_default();
     assert!(recording()["trouble"].is_null(), "control: at first there is room: {}", recording());
-    for _ in 0..40 {
+    for _ in 0..120 {
         station.say("pan-2", &"+      0.00 g  S\r\n".repeat(100));
         std::thread::sleep(Duration::from_millis(20));
     }

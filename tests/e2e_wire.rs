@@ -175,7 +175,7 @@ struct Made {
 fn made(bench: Bench, known: Option<&str>) -> Made {
     let (state, broker) = (bench.at("state"), free_port());
     let config = format!(
-        "[lab]\nname = \"test\"\nstation = \"wet-room\"\n[broker]\nlisten = \"127.0.0.1:{broker}\"\n[[instrument]]\nname = \"pan-1\"\nkind = \"balance\"\nport = \"{}\"\nprofile = \"print-line\"\n",
+        "[lab]\nname = \"test\"\nstation = \"wet-room\"\n[screen]\nenabled = false\n[broker]\nlisten = \"127.0.0.1:{broker}\"\n[[instrument]]\nname = \"pan-1\"\nkind = \"balance\"\nport = \"{}\"\nprofile = \"print-line\"\n",
         bench.at("dev/serial/by-id/adapter").display()
     );
     let path = bench.at("config.toml");
