@@ -4,6 +4,7 @@ use super::chain::{Digest, FactFields, InputDigest, InputFields, LedgerId, fact_
 use super::error::LedgerError;
 use super::lock::{FileMark, Lock};
 use super::reader::{self, Reader};
+use super::room::{Reserve, Room};
 use super::rows::{AnswerRow, Columns, DocumentRow, FactRow, Group, InputRow, agree, signed};
 use super::schema;
 use super::verify::{Place, RAW_FACT, RawFact, Stop, digest_inputs, raw_facts_after};
@@ -31,12 +32,14 @@ pub struct OpenOptions {
     /// The most pages (4 KiB each) the file may have. Beyond it a commit fails
     /// as it does on a full disk.
     pub max_pages: Option<u32>,
+    /// Room kept back on the disk, bytes; 0 for none.
+    pub reserve_bytes: u64,
 }
 
 impl OpenOptions {
     /// Opens or makes a ledger in this boot, at this time.
     pub fn new(boot_id: &str, utc_us: i64) -> Self {
-        Self { boot_id: boot_id.into(), utc_us, new_id: None, max_pages: None }
+        Self { boot_id: boot_id.into(), utc_us, new_id: None, max_pages: None, reserve_bytes: 0 }
     }
 }
 
@@ -74,6 +77,7 @@ pub struct Ledger {
     path: PathBuf,
     options: OpenOptions,
     lock: Lock,
+    reserve: Reserve,
     tail: Tail,
     /// `None` after a failed commit, until it is reopened.
     open: Option<Open>,
@@ -105,15 +109,51 @@ impl Ledger {
         make_folder(&path)?;
         let lock = Lock::take(&path)?;
         let (open, tail) = Open::new(&path, &options, None)?;
-        Ok(Self { path, options, lock, tail, open: Some(open) })
+        let mut reserve = Reserve::beside(&path, options.reserve_bytes);
+        if let Err(e) = reserve.make() {
+            tracing::warn!(error = %e, "no room can be kept back on the disk for the case that it fills");
+        }
+        Ok(Self { path, options, lock, reserve, tail, open: Some(open) })
     }
 
     /// Opens the file again after a failed commit, by the same steps as a
     /// start, without letting go of the lock. The failed commit may have
     /// landed all the same: [`Self::contains_input`] tells. May be tried as
-    /// often as it takes.
+    /// often as it takes. A reserve that was given up must be there again.
     pub fn reopen(&mut self) -> Result<Tail, LedgerError> {
         self.open = None;
+        self.remake_reserve()?;
+        self.open_again()
+    }
+
+    /// Gives the reserve up, when there is one, and opens the file again: there
+    /// is room for what is in progress. `None` when there was no reserve.
+    pub fn reopen_on_reserve(&mut self) -> Option<Result<Tail, LedgerError>> {
+        self.open = None;
+        self.reserve.give_up().then(|| self.open_again())
+    }
+
+    /// Keeps room back again, if it was given up.
+    pub fn remake_reserve(&mut self) -> Result<(), LedgerError> {
+        self.reserve.demand().map_err(|e| LedgerError::io(&self.path, &e))
+    }
+
+    /// Whether something could be stored now, without storing anything: the file is the one at its path and nobody
+    /// else keeps it locked. Tells the room on its disk. After an error, [`Self::reopen`] is due.
+    pub fn look(&mut self) -> Result<Option<Room>, LedgerError> {
+        let Some(open) = self.open.take() else {
+            return Err(LedgerError::Poisoned { path: self.path.clone() });
+        };
+        if open.file.is_none() || FileMark::at(&self.path) != open.file || !self.lock.still_there() {
+            return Err(LedgerError::Moved { path: self.path.clone() });
+        }
+        let tried = open.conn.execute_batch("BEGIN IMMEDIATE; ROLLBACK");
+        tried.map_err(|e| LedgerError::sql(&self.path, "looking whether it can be written", &e))?;
+        self.open = Some(open);
+        Ok(Room::of(&self.path))
+    }
+
+    fn open_again(&mut self) -> Result<Tail, LedgerError> {
         if !self.lock.still_there() {
             self.lock = Lock::take(&self.path)?;
         }
