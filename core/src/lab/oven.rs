@@ -390,7 +390,7 @@ mod tests {
         let mut clock = OvenClock::new(at(10));
         let later = Stamp { utc_us: 0, mono_us: 0, boot: Boot(2) };
         clock.put_in(at(11), None);
-        assert_eq!(clock.total(&later, &ClockRecord::default()), (0, Basis::Wall));
+        assert_eq!(clock.total(&later, &ClockRecord::default()).0, 0);
         clock.weighed(later, 1);
         assert_eq!(clock.since, None, "weighed later, though the clock says earlier");
     }

@@ -20,6 +20,9 @@ const TAIL_INPUTS: i64 = 200_000;
 /// Bytes stored after which an idle moment is used to tidy the log.
 const TIDY_BYTES: u64 = 1 << 20;
 
+/// Takes the lock for writing and lets go of it; writes nothing.
+const TRY_LOCK: &str = "BEGIN IMMEDIATE; ROLLBACK";
+
 /// How to open a ledger.
 #[derive(Clone, Debug)]
 pub struct OpenOptions {
@@ -147,13 +150,20 @@ impl Ledger {
         if open.file.is_none() || FileMark::at(&self.path) != open.file || !self.lock.still_there() {
             return Err(LedgerError::Moved { path: self.path.clone() });
         }
-        let tried = open.conn.execute_batch("BEGIN IMMEDIATE; ROLLBACK");
+        let tried = open.conn.execute_batch(TRY_LOCK);
         tried.map_err(|e| LedgerError::sql(&self.path, "looking whether it can be written", &e))?;
         self.open = Some(open);
         Ok(Room::of(&self.path))
     }
 
     fn open_again(&mut self) -> Result<Tail, LedgerError> {
+        // A ledger that is being put back may stand there before its log does. Opened like that, a new log would be
+        // begun in the place of the one to come.
+        let log = schema::beside(&self.path, "-wal");
+        let no_log = std::fs::metadata(&log).map_or(true, |m| m.len() == 0);
+        if no_log && self.path.exists() && schema::last_input_in_file(&self.path)? < self.tail.last_input {
+            return Err(LedgerError::Moved { path: self.path.clone() });
+        }
         if !self.lock.still_there() {
             self.lock = Lock::take(&self.path)?;
         }
@@ -277,6 +287,8 @@ impl Open {
             checkpoint(&conn, "PASSIVE").map_err(sql)?;
         }
         let boot = number_boot(&mut conn, options).map_err(sql)?;
+        // What is read may be readable and yet be locked for writing.
+        conn.execute_batch(TRY_LOCK).map_err(sql)?;
         let (tail, pending) = read_tail(&conn, boot).map_err(|stop| match stop {
             Stop::Bad(fault) => LedgerError::Chain { path: path.to_path_buf(), seq: fault.seq, why: fault.why },
             Stop::Sql(e) => sql(e),
