@@ -134,6 +134,22 @@ impl Station {
         *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
     }
 
+    /// Starts under `strace`, which writes what it saw to a file. The service is the child; whoever watches it stands beside.
+    pub fn start_traced(&self, arguments: &[&str], seen: &std::path::Path) {
+        let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
+        let own = self.command();
+        let mut command = Command::new("strace");
+        command.args(["-D", "-f", "-qq", "--seccomp-bpf", "-o"]).arg(seen).args(arguments).arg(own.get_program()).args(own.get_args());
+        command.envs(own.get_envs().filter_map(|(k, v)| v.map(|v| (k, v)))).stdin(Stdio::null());
+        *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
+    }
+
+    /// Whether the service has ended by itself.
+    pub fn has_died(&self) -> bool {
+        let mut child = self.child.lock().expect("child");
+        child.as_mut().is_some_and(|c| c.0.try_wait().expect("waited").is_some())
+    }
+
     pub fn kill9(&self) {
         self.kills.fetch_add(1, Ordering::SeqCst);
         *self.child.lock().expect("child") = None;

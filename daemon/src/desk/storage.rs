@@ -72,7 +72,7 @@ impl Desk {
         if self.watched.on_reserve.is_some_and(|until| Instant::now() >= until) {
             self.close_reserve(effects);
         }
-        if self.not_recording.is_none() && Instant::now() >= self.look_due() {
+        if self.not_recording.is_none() && self.watched.looked.is_none_or(|looked| looked.elapsed() >= LOOK) {
             self.watched.looked = Some(Instant::now());
             match self.ledger.look() {
                 Ok(room) => self.note_room(room, effects),
