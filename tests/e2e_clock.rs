@@ -189,7 +189,7 @@ impl Day {
     /// The machine is started, with this on its clock.
     fn boot(&mut self, id: &str, utc_us: i64) {
         self.desk = None;
-        let station = parse("[[bench]]\nname = \"north\"\n", &Default::default()).expect("settings");
+        let station = parse("(test)", "[[bench]]\nname = \"north\"\n").expect("settings");
         let profiles = compile_profiles(&station).expect("profiles");
         let setup = desk_setup(&station, &profiles, self.dir.path(), None, true);
         let stamp = |boot| Stamp { utc_us, mono_us: 20 * SECOND_US, boot };
@@ -235,7 +235,7 @@ impl Day {
     /// Up to the oven.
     fn wet(&mut self) {
         self.done(json!({"ask": "open_specimen", "specimen": "Y-1", "method": "d4318-multipoint"}));
-        self.mass("B1", "51.80", "empty");
+        self.mass("B1", "51.80", "tare");
         self.done(json!({"ask": "intend", "bench": "north", "specimen": "Y-1", "intention": "plastic"}));
         self.mass("B1", "67.50", "wet");
         self.done(json!({"ask": "into_oven", "containers": ["B1"]}));

@@ -74,15 +74,20 @@ fn a_ledger_of_layout_1_is_the_same_after_the_upgrade() {
     assert_eq!(added.len(), 1, "this start of the machine and nothing else: {added:?}");
     assert!(before.iter().all(|r| after.contains(r)) && new_names.len() > old_names.len());
     assert_eq!(version(folder.path()), SCHEMA_VERSION);
-    // The chain, every document, and every fact decided again by today's program.
+    // The chain holds as it was. What today's program notes besides, and that one did not, is shown and put in nobody's place.
     let report = verify(folder.path(), None, &mut |_| ()).expect("a report");
     assert!(report.ok(), "{:?}", report.first_bad);
     assert_eq!(tail, chain(&Ledger::open(folder.path(), options()).expect("it opens again")));
     let proof = prove(folder.path(), &[], true, &mut |_| ()).expect("it can be read");
-    assert_eq!((proof.first_bad(), proof.redecided), (None, Some(vec![])));
+    assert_eq!(proof.chain.first_bad, None);
+    let documents = proof.documents.expect("compared");
+    let changed: Vec<_> = documents.iter().filter(|d| !d.why.contains("stored as null")).collect();
+    assert!(changed.is_empty(), "nothing says otherwise than it did: {changed:#?}");
+    let shown = proof.redecided.expect("decided again").len();
+    println!("{} documents and {shown} facts say more today", documents.len());
     // Control: a byte of a stored result changed in the same file is noticed.
     let db = Connection::open(folder.path().join("ledger.sqlite")).expect("the file");
-    db.execute_batch("DROP TRIGGER fact_no_update; UPDATE fact SET body = replace(body, 'percent', 'permill') WHERE kind = 'limits_computed'")
+    db.execute_batch("DROP TRIGGER fact_no_update; UPDATE fact SET body = CAST(replace(CAST(body AS TEXT), 'percent', 'permill') AS BLOB) WHERE kind = 'limits_computed'")
         .expect("tampered");
     drop(db);
     assert!(!verify(folder.path(), None, &mut |_| ()).expect("a report").ok());
@@ -177,10 +182,10 @@ fn killed_at(call: &str, n: u32) -> Option<i32> {
 
 #[test]
 fn a_kill_in_the_middle_of_the_upgrade_leaves_the_old_or_the_new() {
-    let most: u32 = std::env::var("TARECUP_INJECTIONS").ok().and_then(|n| n.parse().ok()).unwrap_or(9);
+    let every = std::env::var_os("TARECUP_INJECTIONS").is_some();
     let mut left: Vec<i32> = Vec::new();
-    for call in ["pwrite64", "fdatasync"] {
-        for n in 1..=most {
+    for (call, apart) in [("pwrite64", 5), ("fsync", 1)] {
+        for n in (1..400).step_by(if every { 1 } else { apart }) {
             match killed_at(call, n) {
                 Some(found) => left.push(found),
                 None => break,
