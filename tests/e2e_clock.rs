@@ -229,7 +229,9 @@ impl Day {
 
     fn mass(&mut self, container: &str, grams: &str, role: &str) {
         let bench = "north";
-        self.done(json!({"ask": "type_mass", "bench": bench, "container": container, "mass_g": grams, "role": role, "who": "AB"}));
+        self.done(
+            json!({"ask": "type_mass", "bench": bench, "container": container, "mass_g": grams, "role": role, "who": "AB"}),
+        );
     }
 
     /// Up to the oven.

@@ -4,8 +4,8 @@
 
 mod e2e_support;
 
-use e2e_support::oracle::{Hearing, Kept, judge};
 use e2e_support::operator::{Cup, DROP, Dice, Operator, PORTS, Station, essence, limits_of};
+use e2e_support::oracle::{Hearing, Kept, judge};
 use e2e_support::*;
 use serde_json::{Value, json};
 use std::collections::{BTreeMap, BTreeSet};

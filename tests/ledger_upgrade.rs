@@ -35,7 +35,10 @@ fn rows(folder: &Path) -> (Vec<String>, Vec<String>) {
     for (table, columns) in [
         ("ledger", "quote(id) || quote(epoch) || quote(created_utc_us)"),
         ("boot", "quote(ordinal) || quote(boot_id)"),
-        ("input", "quote(no) || quote(at_utc_us) || quote(mono_us) || quote(boot) || quote(kind) || quote(bytes) || quote(reason)"),
+        (
+            "input",
+            "quote(no) || quote(at_utc_us) || quote(mono_us) || quote(boot) || quote(kind) || quote(bytes) || quote(reason)",
+        ),
         ("fact", "quote(seq) || quote(body) || quote(hash) || quote(inputs_digest)"),
         ("document", "quote(kind) || quote(id) || quote(seq) || quote(body)"),
         ("answer", "quote(client) || quote(ask_id) || quote(answer)"),
@@ -111,7 +114,8 @@ fn work_begun_before_the_upgrade_is_finished_after_it() {
     until("the service answers", PATIENCE, || status(&state).is_some());
     assert_eq!(limits(&state), before, "a result that was reported stays");
     let done = |bench: &str, container: &str, grams: &str| {
-        let wanted = json!({"ask": "type_mass", "bench": bench, "container": container, "mass_g": grams, "role": "dry", "who": "AB"});
+        let wanted =
+            json!({"ask": "type_mass", "bench": bench, "container": container, "mass_g": grams, "role": "dry", "who": "AB"});
         let answer = ask(&state, &wanted).expect("an answer");
         assert_eq!(answer["ok"], true, "{wanted}: {answer}");
     };
@@ -193,7 +197,11 @@ fn a_kill_in_the_middle_of_the_upgrade_leaves_the_old_or_the_new() {
         }
     }
     let old = left.iter().filter(|v| **v == 1).count();
-    println!("killed {} times while it was brought up to date: {old} times the old layout, {} times the new one", left.len(), left.len() - old);
+    println!(
+        "killed {} times while it was brought up to date: {old} times the old layout, {} times the new one",
+        left.len(),
+        left.len() - old
+    );
     // Control: the kills fell on both sides of the one moment at which it changes.
     assert!(old > 0 && old < left.len(), "{left:?}");
 }

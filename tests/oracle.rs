@@ -115,7 +115,9 @@ fn heard(instrument: &str, written: &[String], kept: &Kept, hearing: Hearing, wr
             for (n, line) in stored.iter().enumerate() {
                 // A line cut by a kill is stored as what was left of it.
                 if !left.by_ref().any(|w| w == line || (!line.is_empty() && w.ends_with(line))) {
-                    return wrong.push(format!("{instrument}: stored line {n}, {line:?}, was not written, or not so often, or not there"));
+                    return wrong.push(format!(
+                        "{instrument}: stored line {n}, {line:?}, was not written, or not so often, or not there"
+                    ));
                 }
             }
         }
@@ -201,7 +203,8 @@ fn told(kept: &Kept, published: &[Value], wrong: &mut Vec<String>) {
             wrong.push(format!("fact {next} was not published before fact {seq}"));
         }
         let stored = usize::try_from(seq).ok().and_then(|n| kept.facts.get(n.wrapping_sub(1)));
-        let same = stored.is_some_and(|s| ["seq", "at", "kind", "fact", "who", "through"].iter().all(|m| s.get(m) == message.get(m)));
+        let same =
+            stored.is_some_and(|s| ["seq", "at", "kind", "fact", "who", "through"].iter().all(|m| s.get(m) == message.get(m)));
         if !same {
             wrong.push(format!("fact {seq} was published as something that is not stored"));
         }

@@ -40,7 +40,9 @@ impl Watched {
     /// What people should know of the room on the disk.
     pub fn says(&self) -> Option<String> {
         if self.on_reserve.is_some() {
-            return Some("the disk is full; what is in progress is stored from a reserve, and then nothing more: free space".into());
+            return Some(
+                "the disk is full; what is in progress is stored from a reserve, and then nothing more: free space".into(),
+            );
         }
         let mb = |bytes: u64| bytes as f64 / 1e6;
         self.low.map(|r| {
@@ -98,7 +100,11 @@ impl Desk {
         if low.is_some() != self.watched.low.is_some() {
             match &low {
                 Some(room) => {
-                    tracing::warn!(free_bytes = room.free_bytes, total_bytes = room.total_bytes, "less than a tenth of the ledger's disk is free: free space");
+                    tracing::warn!(
+                        free_bytes = room.free_bytes,
+                        total_bytes = room.total_bytes,
+                        "less than a tenth of the ledger's disk is free: free space"
+                    );
                 }
                 None => tracing::info!("more than a tenth of the ledger's disk is free again"),
             }

@@ -31,17 +31,8 @@ pub enum InputKind {
 
 impl InputKind {
     /// All kinds.
-    pub const ALL: [InputKind; 9] = [
-        Self::Line,
-        Self::Reject,
-        Self::Ask,
-        Self::Port,
-        Self::Timer,
-        Self::Settings,
-        Self::Start,
-        Self::Flood,
-        Self::Clock,
-    ];
+    pub const ALL: [InputKind; 9] =
+        [Self::Line, Self::Reject, Self::Ask, Self::Port, Self::Timer, Self::Settings, Self::Start, Self::Flood, Self::Clock];
 
     /// The word stored in the file.
     pub fn word(self) -> &'static str {
