@@ -1,10 +1,11 @@
 //! Killed with -9 at random moments of a day's work: after each restart the
 //! operator repeats what was not confirmed, and everything is as if nothing had
-//! happened. `TARECUP_SEED` repeats a run.
+//! happened. `TARECUP_SEED` repeats a run, `TARECUP_KILLS` makes it longer.
 
 mod e2e_support;
 
 use e2e_support::operator::{Cup, DROP, Dice, Operator, PORTS, Station, essence, limits_of};
+use e2e_support::oracle::{Hearing, Kept, judge};
 use e2e_support::*;
 use serde_json::{Value, json};
 use std::collections::{BTreeMap, BTreeSet};
@@ -125,6 +126,8 @@ fn record_is_sound(station: &Station, told: &[Value]) -> (u64, u64) {
         let heard = lines.get(instrument).copied().unwrap_or(0);
         assert!(heard <= *written, "{instrument}: {heard} lines stored, {written} written");
     }
+    let wrong = judge(&station.done.lock().expect("done"), &Kept::read(&station.state), None, Hearing::InOrder);
+    assert!(wrong.is_empty(), "by the independent model: {wrong:#?}");
     let inputs: Vec<u64> = stored.iter().filter_map(|f| f["fact"]["taken"]["input"].as_u64()).collect();
     assert_eq!(inputs.iter().collect::<BTreeSet<_>>().len(), inputs.len(), "each line is one weighing at most");
     let runs: Vec<(Value, Value)> = stored
@@ -167,6 +170,11 @@ fn works(station: &Station, cup: Cup, first: usize, want: &Value, over: &AtomicB
     worked
 }
 
+/// How often the service is killed.
+fn kills_wanted() -> u32 {
+    std::env::var("TARECUP_KILLS").ok().and_then(|n| n.parse().ok()).unwrap_or(50)
+}
+
 #[test]
 fn killed_fifty_times_the_results_are_those_of_an_undisturbed_day() {
     let want = undisturbed();
@@ -175,7 +183,7 @@ fn killed_fifty_times_the_results_are_those_of_an_undisturbed_day() {
     let (never, over) = (AtomicBool::new(false), AtomicBool::new(false));
     let began = Instant::now();
     let (up, north, south) = std::thread::scope(|scope| {
-        let killer = scope.spawn(|| killer(&station, &mut dice, 50, 1_100, &never));
+        let killer = scope.spawn(|| killer(&station, &mut dice, kills_wanted(), 1_100, &never));
         until("the service is up", PATIENCE, || status(&station.state).is_some());
         let north = scope.spawn(|| works(&station, Cup::Numbered, 1, &want, &over));
         let south = scope.spawn(|| works(&station, Cup::Unnumbered, 2, &want, &over));
@@ -184,7 +192,7 @@ fn killed_fifty_times_the_results_are_those_of_an_undisturbed_day() {
         (up, north.join().expect("north"), south.join().expect("south"))
     });
     let kills = station.kills.load(Ordering::SeqCst);
-    assert!(kills >= 50, "{kills}");
+    assert!(kills >= u64::from(kills_wanted()), "{kills}");
     assert_eq!((north.silent.clone(), south.silent.clone()), (vec![], vec![]), "a count is never wrong without a word");
     assert_eq!(station.term(), Some(0), "{}", station.log());
     record_is_sound(&station, &north.facts);

@@ -6,6 +6,9 @@
 
 #[path = "e2e_operator.rs"]
 pub mod operator;
+#[path = "oracle.rs"]
+pub mod oracle;
+
 #[path = "e2e_listeners.rs"]
 pub mod subscriber;
 

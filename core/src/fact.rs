@@ -76,6 +76,23 @@ pub enum Fact {
         /// How many since the fact before.
         lines: u64,
     },
+    /// The wall clock moved against the one that only runs forward: it was set, or it jumped.
+    ClockStepped {
+        /// By so much, µs; negative when it was set back.
+        by_us: i64,
+        /// It can be right where it is now.
+        trusted: bool,
+    },
+    /// The wall clock is earlier than it can be.
+    ClockUntrusted {
+        /// It cannot be earlier than this, UTC µs.
+        not_before_utc_us: i64,
+    },
+    /// Nothing speaks against the wall clock any more.
+    ClockTrusted {
+        /// Why.
+        why: String,
+    },
     /// A specimen's tests began.
     SpecimenOpened(SpecimenOpened),
     /// A person signed in at a bench.
@@ -554,6 +571,9 @@ impl Fact {
             Fact::InstrumentChanged { .. } => "instrument_changed",
             Fact::LinesOverrun { .. } => "lines_overrun",
             Fact::LinesKept { .. } => "lines_kept",
+            Fact::ClockStepped { .. } => "clock_stepped",
+            Fact::ClockUntrusted { .. } => "clock_untrusted",
+            Fact::ClockTrusted { .. } => "clock_trusted",
             Fact::SpecimenOpened(_) => "specimen_opened",
             Fact::SignedIn { .. } => "signed_in",
             Fact::SignedOut { .. } => "signed_out",

@@ -32,6 +32,8 @@ pub enum Basis {
     Monotonic,
     /// The machine was started in between, so only wall time is left.
     Wall,
+    /// The machine was started in between and something is known against its wall clock: only what is proven counts.
+    Doubtful,
 }
 
 /// A duration and the clock it rests on.
@@ -55,6 +57,11 @@ impl Elapsed {
 }
 
 impl Stamp {
+    /// Whether this happened at that moment or later, whatever the wall clock said.
+    pub fn not_before(&self, that: &Stamp) -> bool {
+        (self.boot, self.mono_us) >= (that.boot, that.mono_us)
+    }
+
     /// Time passed from `earlier` to this moment.
     pub fn since(&self, earlier: &Stamp) -> Elapsed {
         if self.boot == earlier.boot {

@@ -38,11 +38,17 @@ impl BootClock for MachineClock {
 
 impl Clock for MachineClock {
     fn now(&self) -> Stamp {
-        let utc = rustix::time::clock_gettime(rustix::time::ClockId::Realtime);
-        let mono = rustix::time::clock_gettime(rustix::time::ClockId::Monotonic);
-        let us = |t: rustix::time::Timespec| t.tv_sec.saturating_mul(1_000_000).saturating_add(t.tv_nsec / 1_000);
-        Stamp { utc_us: us(utc), mono_us: us(mono), boot: Boot(self.boot.load(Ordering::Relaxed)) }
+        // The clock that also counts while the machine sleeps: an oven does not sleep with it.
+        let mono = rustix::time::clock_gettime(rustix::time::ClockId::Boottime);
+        let mono_us = mono.tv_sec.saturating_mul(1_000_000).saturating_add(mono.tv_nsec / 1_000);
+        Stamp { utc_us: wall_us(), mono_us, boot: Boot(self.boot.load(Ordering::Relaxed)) }
     }
+}
+
+/// Wall time, asked by way of the C library: so it can be put wrong for tests without putting the machine's clock wrong.
+fn wall_us() -> i64 {
+    let us = |d: std::time::Duration| i64::try_from(d.as_micros()).unwrap_or(i64::MAX);
+    std::time::SystemTime::now().duration_since(std::time::UNIX_EPOCH).map_or_else(|before| -us(before.duration()), us)
 }
 
 /// A clock that stands still until it is set: the demo's virtual day.

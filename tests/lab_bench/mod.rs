@@ -90,7 +90,8 @@ pub fn documents(lab: &Lab) -> BTreeMap<String, String> {
     let instruments = lab.instruments().map(|i| (format!("instrument {}", i.name), json(i)));
     let loose = lab.loose_things().map(|l| (format!("loose {}", l.seq), json(l)));
     let statistics = [(String::from("statistics"), json(lab.statistics()))];
-    specimens.chain(containers).chain(benches).chain(instruments).chain(loose).chain(statistics).collect()
+    let clock = [(String::from("clock"), json(lab.clock()))];
+    specimens.chain(containers).chain(benches).chain(instruments).chain(loose).chain(statistics).chain(clock).collect()
 }
 
 mod erased {
@@ -116,6 +117,7 @@ pub fn reloaded(lab: &Lab) -> Lab {
     lab.instruments().for_each(|i| new.load(Loaded::Instrument(again::<Instrument>(i))));
     lab.loose_things().for_each(|l| new.load(Loaded::Loose(again::<Loose>(l))));
     new.load(Loaded::Statistics(again(lab.statistics())));
+    new.load(Loaded::Clock(again(lab.clock())));
     new
 }
 
@@ -180,6 +182,7 @@ impl Play {
             Entity::Instrument(id) => format!("instrument {id}"),
             Entity::Loose(seq) => format!("loose {seq}"),
             Entity::Statistics => String::from("statistics"),
+            Entity::Clock => String::from("clock"),
         };
         let named: Vec<String> = outcome.touched.iter().map(key).collect();
         for id in before.keys().chain(after.keys()) {

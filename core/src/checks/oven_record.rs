@@ -29,4 +29,12 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
         );
         rows.push(note("oven_clock", SPECIMEN, says, Vec::new()));
     }
+    let doubtful = which(|d| d.basis == Some(Basis::Doubtful));
+    if !doubtful.is_empty() {
+        let says = format!(
+            "the machine was started again while {} dried, and its clock was wrong: only the hours since that start are counted; weigh again later, or say what the hours were.",
+            list_text(&doubtful)
+        );
+        rows.push(note("oven_clock", SPECIMEN, says, Vec::new()));
+    }
 }

@@ -183,6 +183,8 @@ pub enum Ask {
         who: Operator,
         why: String,
     },
+    /// The clock of the machine is right: what seemed later before was the error.
+    ClockRight { who: Operator, why: String },
     /// A limit cannot be obtained.
     NotObtainable {
         specimen: SpecimenId,
@@ -234,6 +236,7 @@ impl Lab {
             Ask::TypeMass { .. } | Ask::TypeDrops { .. } | Ask::TypePenetration { .. } => self.ask_typed(ask, at),
             Ask::RegisterContainer { .. } | Ask::FreeContainer { .. } => self.ask_container(ask, at),
             Ask::IntoOven { .. } | Ask::OutOfOven { .. } | Ask::OvenOff { .. } => self.ask_oven(ask, at),
+            Ask::ClockRight { who, why } => self.ask_clock_right(who, why),
             Ask::NotObtainable { .. } | Ask::AnswerCheck { .. } | Ask::Review { .. } => self.ask_result(ask),
             Ask::SetAside { .. }
             | Ask::SetAsideTrial { .. }
@@ -448,6 +451,7 @@ impl Lab {
             instruments: BTreeMap::new(),
             loose: BTreeMap::new(),
             statistics: self.statistics,
+            clock: self.clock.clone(),
             running: BTreeMap::new(),
         }
     }

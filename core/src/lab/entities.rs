@@ -29,6 +29,8 @@ pub enum Entity {
     Loose(Seq),
     /// What all finished results say together.
     Statistics,
+    /// What is known of the wall clock.
+    Clock,
 }
 
 /// One weighing as it is used.

@@ -12,6 +12,7 @@ pub mod statistics;
 
 pub mod advice;
 mod apply;
+pub mod clock;
 mod code;
 mod correct;
 mod count;
@@ -38,6 +39,7 @@ use alloc::string::String;
 use alloc::sync::Arc;
 use alloc::vec::Vec;
 use ask::Ask;
+use clock::{ClockRecord, ClockSeen};
 use entities::{Bench, Container, Entity, Instrument, Loose, Specimen};
 use statistics::Statistics;
 
@@ -192,6 +194,8 @@ pub enum Input {
         /// SHA-256 of its text.
         digest: String,
     },
+    /// Something was noticed of the wall clock.
+    Clock(ClockSeen),
     /// The service goes down in order.
     Stopping,
     /// Time has passed.
@@ -242,6 +246,7 @@ pub struct Lab {
     instruments: BTreeMap<InstrumentName, Instrument>,
     loose: BTreeMap<Seq, Loose>,
     statistics: Statistics,
+    clock: ClockRecord,
     /// Counters whose run goes on, and since when. Heard, not decided: it is in no document.
     running: BTreeMap<InstrumentName, Stamp>,
 }
@@ -259,6 +264,7 @@ impl Lab {
             instruments,
             loose: BTreeMap::new(),
             statistics: Statistics::default(),
+            clock: ClockRecord::default(),
             running: BTreeMap::new(),
         }
     }
@@ -312,6 +318,7 @@ impl Lab {
             }
             Input::LinesKept { lines } => alloc::vec![New::plain(Fact::LinesKept { lines })],
             Input::Settings { input, digest } => alloc::vec![New::plain(Fact::SettingsTaken { input, digest })],
+            Input::Clock(seen) => self.clock_seen(&seen),
             Input::Stopping => self.stopping(),
             Input::Due => self.due(at),
         })
@@ -419,6 +426,7 @@ impl Lab {
         lab.containers = self.containers;
         lab.loose = self.loose;
         lab.statistics = self.statistics;
+        lab.clock = self.clock;
         self.benches.into_values().for_each(|b| lab.load(Loaded::Bench(b)));
         self.instruments.into_values().for_each(|i| lab.load(Loaded::Instrument(i)));
         lab
@@ -433,6 +441,7 @@ impl Lab {
             Loaded::Instrument(i) if self.instruments.contains_key(&i.name) => drop(self.instruments.insert(i.name.clone(), i)),
             Loaded::Loose(l) => drop(self.loose.insert(l.seq, l)),
             Loaded::Statistics(s) => self.statistics = s,
+            Loaded::Clock(c) => self.clock = c,
             // A bench or instrument that the settings no longer have stays in the ledger only.
             Loaded::Bench(_) | Loaded::Instrument(_) => (),
         }
@@ -555,4 +564,6 @@ pub enum Loaded {
     Loose(Loose),
     /// What all finished results say together.
     Statistics(Statistics),
+    /// What is known of the wall clock.
+    Clock(ClockRecord),
 }

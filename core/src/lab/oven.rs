@@ -1,6 +1,7 @@
 //! Time in the oven, and when a container counts as dry.
 
 use super::ask::{Ask, needs_words, no};
+use super::clock::ClockRecord;
 use super::entities::{Container, DryRecord, Holding, OvenClock, Standing, Stay, TrialRecord};
 use super::{Lab, New, Refusal};
 use crate::fact::Fact;
@@ -8,7 +9,7 @@ use crate::method::Drying;
 use crate::names::ContainerId;
 use crate::quantity::Mass;
 use crate::sheet::{DryWeighing, Seq};
-use crate::stamp::{Basis, HOUR_US, Stamp, parse_rfc3339};
+use crate::stamp::{Basis, Elapsed, HOUR_US, Stamp, parse_rfc3339};
 use alloc::collections::BTreeSet;
 use alloc::format;
 use alloc::string::String;
@@ -25,26 +26,34 @@ impl OvenClock {
     }
 
     /// Time in the oven up to a moment, µs, and the clock it rests on.
-    pub fn total(&self, now: &Stamp) -> (i64, Basis) {
+    pub fn total(&self, now: &Stamp, clock: &ClockRecord) -> (i64, Basis) {
         if !self.recorded && self.stays.is_empty() {
-            return self.heated(&self.wet_at, now);
+            return self.heated(&self.wet_at, now, clock);
         }
-        let over = self.stays.iter().map(|s| (s.from, if now.since(&s.to).us >= 0 { s.to } else { *now }));
+        let over = self.stays.iter().map(|s| (s.from, if now.not_before(&s.to) { s.to } else { *now }));
         let running = self.since.iter().map(|since| (*since, *now));
         let mut all = (0i64, Basis::Monotonic);
         for (from, to) in over.chain(running) {
-            let (us, basis) = self.heated(&from, &to);
+            let (us, basis) = self.heated(&from, &to, clock);
             all.0 = all.0.saturating_add(us);
-            if basis == Basis::Wall && us > 0 {
-                all.1 = Basis::Wall;
-            }
+            // The weakest of the clocks that the sum rests on.
+            all.1 = match (all.1, basis) {
+                (_, Basis::Doubtful) | (Basis::Doubtful, _) => Basis::Doubtful,
+                (_, Basis::Wall) if us > 0 => Basis::Wall,
+                (before, _) => before,
+            };
         }
         all
     }
 
     /// From one moment to another, without the time in which the oven was off.
-    fn heated(&self, from: &Stamp, to: &Stamp) -> (i64, Basis) {
-        let passed = to.since(from);
+    fn heated(&self, from: &Stamp, to: &Stamp, clock: &ClockRecord) -> (i64, Basis) {
+        let mut passed = to.since(from);
+        if passed.basis == Basis::Wall && clock.doubtful(from, to) {
+            // What is proven is that the machine has been up so long since it was started, and that was later than `from`.
+            let proven = if to.boot > from.boot { to.mono_us.max(0) } else { 0 };
+            passed = Elapsed { us: proven, basis: Basis::Doubtful };
+        }
         let overlap = |&(a, b): &(i64, i64)| b.min(to.utc_us).saturating_sub(a.max(from.utc_us)).max(0);
         let off = self.off.iter().map(overlap).fold(0i64, i64::saturating_add);
         (passed.us.saturating_sub(off).max(0), passed.basis)
@@ -88,7 +97,7 @@ impl OvenClock {
 
     /// Weighed dry: it is out of the oven now, whether or not that was recorded.
     pub(super) fn weighed(&mut self, at: Stamp, seq: Seq) {
-        if let Some(from) = self.since.take_if(|since| at.since(since).us >= 0) {
+        if let Some(from) = self.since.take_if(|since| at.not_before(since)) {
             self.stays.push(Stay { from, to: at, recorded: true, ended_by: Some(seq) });
         }
     }
@@ -103,7 +112,7 @@ impl OvenClock {
 
     /// Somebody recorded every stay that began before a moment.
     fn recorded_before(&self, now: &Stamp) -> bool {
-        let began = |from: &Stamp| now.since(from).us >= 0;
+        let began = |from: &Stamp| now.not_before(from);
         let mut stays = self.stays.iter().filter(|s| began(&s.from)).peekable();
         let any = stays.peek().is_some() || self.since.as_ref().is_some_and(began);
         self.recorded && any && stays.all(|s| s.recorded)
@@ -120,10 +129,10 @@ pub(super) fn hours(us: i64) -> f64 {
 }
 
 /// Works the hours of a determination's dry weighings anew from the oven's record.
-pub(super) fn work_hours(dries: &mut [DryRecord], oven: &OvenClock) {
+pub(super) fn work_hours(dries: &mut [DryRecord], oven: &OvenClock, clock: &ClockRecord) {
     let mut previous: Option<i64> = None;
     for dry in dries {
-        let (total, basis) = oven.total(&dry.weighing.at);
+        let (total, basis) = oven.total(&dry.weighing.at, clock);
         dry.oven_hours = hours(total);
         dry.since_previous_hours = previous.map(|before| hours(total.saturating_sub(before)));
         dry.oven_recorded = oven.recorded_before(&dry.weighing.at);
@@ -315,7 +324,7 @@ mod tests {
     /// Hours, hours since the previous one, and whether recorded, of dry weighings at these hours.
     fn worked(clock: &OvenClock, dries: &[i64]) -> Vec<(f64, Option<f64>, bool)> {
         let mut dries: Vec<DryRecord> = dries.iter().map(|&h| dry(h)).collect();
-        work_hours(&mut dries, clock);
+        work_hours(&mut dries, clock, &ClockRecord::default());
         dries.iter().map(|d| (d.oven_hours, d.since_previous_hours, d.oven_recorded)).collect()
     }
 
@@ -363,7 +372,7 @@ mod tests {
         assert_eq!(worked(&clock, &[17]), [(6.0, None, true)]);
         let mut late = OvenClock::new(at(5));
         late.was_off(0, 4 * HOUR_US);
-        assert_eq!(late.total(&at(16)).0, 11 * HOUR_US);
+        assert_eq!(late.total(&at(16), &ClockRecord::default()).0, 11 * HOUR_US);
     }
 
     #[test]
@@ -381,7 +390,35 @@ mod tests {
         let mut clock = OvenClock::new(at(10));
         let later = Stamp { utc_us: 0, mono_us: 0, boot: Boot(2) };
         clock.put_in(at(11), None);
-        assert_eq!(clock.total(&later).0, 0);
+        assert_eq!(clock.total(&later, &ClockRecord::default()).0, 0);
+        clock.weighed(later, 1);
+        assert_eq!(clock.since, None, "weighed later, though the clock says earlier");
+    }
+
+    #[test]
+    fn across_a_start_with_a_wrong_clock_only_what_the_machine_proves_counts() {
+        let mut oven = OvenClock::new(at(10));
+        oven.put_in(at(11), None);
+        let up = |hours: i64, utc: i64| Stamp { utc_us: utc * HOUR_US, mono_us: hours * HOUR_US, boot: Boot(2) };
+        let mut clock = ClockRecord::default();
+        clock.apply(&Fact::ClockUntrusted { not_before_utc_us: 12 * HOUR_US }, up(0, 0));
+        assert_eq!(oven.total(&up(3, 3), &clock), (3 * HOUR_US, Basis::Doubtful));
+        // Set right, by years: the hours before it are no more known than they were.
+        clock.apply(&Fact::ClockStepped { by_us: 500_000 * HOUR_US, trusted: true }, up(4, 500_004));
+        assert_eq!(oven.total(&up(5, 500_005), &clock), (5 * HOUR_US, Basis::Doubtful));
+        // Control: without the guard the step would be time in the oven.
+        assert_eq!(oven.total(&up(5, 500_005), &ClockRecord::default()), (499_994 * HOUR_US, Basis::Wall));
+    }
+
+    #[test]
+    fn within_a_start_no_step_of_the_clock_makes_an_hour() {
+        let mut oven = OvenClock::new(at(10));
+        oven.put_in(at(11), None);
+        let mut clock = ClockRecord::default();
+        let stepped = Stamp { utc_us: 900 * HOUR_US, ..at(12) };
+        clock.apply(&Fact::ClockStepped { by_us: 888 * HOUR_US, trusted: true }, stepped);
+        let later = Stamp { utc_us: 903 * HOUR_US, ..at(15) };
+        assert_eq!(oven.total(&later, &clock), (4 * HOUR_US, Basis::Monotonic));
     }
 
     #[test]

@@ -1,6 +1,7 @@
 //! The oven shelf: what is drying, since when, and what comes next for it.
 
 use super::Lab;
+use super::clock::ClockRecord;
 use super::entities::{Container, Holding, Standing, TrialRecord};
 use super::guide::Early;
 use super::oven::{hours, last_stay};
@@ -81,7 +82,7 @@ impl Lab {
             return None;
         }
         let method = self.method_of(&holding.specimen)?;
-        Some(worked(container, holding, trial, method, now))
+        Some(worked(container, holding, trial, method, (now, &self.clock)))
     }
 
     pub(super) fn method_of(&self, specimen: &SpecimenId) -> Option<&Method> {
@@ -113,9 +114,15 @@ impl Lab {
     }
 }
 
-fn worked(container: &Container, holding: &Holding, trial: &TrialRecord, method: &Method, now: &Stamp) -> OnShelf {
+fn worked(
+    container: &Container,
+    holding: &Holding,
+    trial: &TrialRecord,
+    method: &Method,
+    (now, clock): (&Stamp, &ClockRecord),
+) -> OnShelf {
     let (drying, oven) = (&method.drying, &holding.oven);
-    let (us, basis) = oven.total(now);
+    let (us, basis) = oven.total(now, clock);
     let so_far = hours(us);
     let hours_since_dry = trial.dries.last().map(|d| (so_far - d.oven_hours).max(0.0));
     let ready_in_hours = ready_in(drying, so_far, hours_since_dry, oven.since.is_some(), trial);

@@ -56,6 +56,11 @@ fn told(s: &Value) -> String {
         s["seq"],
         s["inputs"]
     );
+    for (what, says) in [("room", &s["room"]), ("clock", &s["clock"])] {
+        if let Some(says) = says.as_str() {
+            out += &format!("{what}: {says}\n");
+        }
+    }
     out += &match s["broker_trouble"].as_str() {
         Some(why) => format!("broker: {why}\n"),
         None => format!("broker: delivered through fact {}\n", s["delivered_through"]),

@@ -54,6 +54,8 @@ impl Again {
             broker: None,
             not_recording: None,
             stopped: false,
+            clock_watch: Default::default(),
+            watched: Default::default(),
         };
         Ok(Self { desk })
     }
@@ -105,6 +107,11 @@ impl Again {
                 self.desk.decide(Input::Settings { input: input.no, digest }, input.at);
             }
             InputKind::Start => self.start(input, source, settings)?,
+            InputKind::Clock => {
+                let seen = serde_json::from_slice(&input.bytes);
+                let seen = seen.map_err(|e| format!("input {} about the clock cannot be read: {e}", input.no))?;
+                self.desk.decide(Input::Clock(seen), input.at);
+            }
             // The lines of a flood are not kept: what they said of the connection is not decided again.
             InputKind::Flood => (),
         }

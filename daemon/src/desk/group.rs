@@ -12,6 +12,7 @@ use serde_json::Value;
 use std::collections::{BTreeMap, BTreeSet};
 use std::time::Instant;
 use tarecup_core::fact::{Connection, Fact, Recorded, VERSION};
+use tarecup_core::lab::clock::ClockSeen;
 use tarecup_core::lab::entities::Entity;
 use tarecup_core::lab::{Lab, Loaded};
 use tarecup_core::names::InstrumentName;
@@ -36,6 +37,8 @@ pub(super) enum Held {
     Timer { at: Stamp },
     /// Settings in full.
     Settings { text: String, at: Stamp },
+    /// Something noticed of the wall clock.
+    Clock { seen: ClockSeen, at: Stamp },
     /// The service came up.
     Start { after_orderly_stop: bool, at: Stamp },
     /// The service goes down in order.
@@ -263,6 +266,7 @@ impl Desk {
                 Held::Overrun { lines, .. } => format!("{{\"overrun_lines\":{lines}}}"),
                 Held::Port { state, instrument: i, .. } => format!("{} {state:?}", instrument(i)),
                 Held::Timer { .. } => String::from("due"),
+                Held::Clock { seen, .. } => serde_json::to_string(seen).unwrap_or_default(),
                 Held::Start { after_orderly_stop, .. } => format!("start, after an orderly stop: {after_orderly_stop}"),
                 Held::Stop { .. } => String::from("stop"),
             })
@@ -294,6 +298,7 @@ impl Desk {
                 let loose = lab.loose(*seq);
                 doc("loose", &format!("{seq:020}"), loose.is_some(), json(&loose))
             }
+            Entity::Clock => doc("clock", views::CLOCK, true, json(lab.clock())),
             Entity::Statistics => doc("statistics", views::STATISTICS, true, json(lab.statistics())),
         }
     }
@@ -310,6 +315,7 @@ impl Desk {
         self.sign_when_due(&group);
         let seq = self.next_seq - 1;
         effects.confirmed.append(&mut group.confirmed);
+        effects.presence |= group.touched.contains(&Entity::Clock);
         effects.retained.extend(self.topics(&group));
         self.live_masses(&mut group.live);
         effects.live.extend(group.live.into_iter().map(|l| (l, seq)));
@@ -355,6 +361,7 @@ impl Desk {
             Entity::Bench(name) => Loaded::Bench(lab.bench(name)?.clone()),
             Entity::Instrument(name) => Loaded::Instrument(lab.instrument(name)?.clone()),
             Entity::Statistics => Loaded::Statistics(*lab.statistics()),
+            Entity::Clock => Loaded::Clock(lab.clock().clone()),
             Entity::Loose(seq) => match lab.loose(*seq) {
                 Some(loose) => Loaded::Loose(loose.clone()),
                 None => return Some(Changed::NoLonger(*seq)),
@@ -371,7 +378,7 @@ impl Desk {
                 topics.insert(topic, Some(payload(&view)));
             }
         }
-        let moved = |e: &Entity| matches!(e, Entity::Specimen(_) | Entity::Container(_));
+        let moved = |e: &Entity| matches!(e, Entity::Specimen(_) | Entity::Container(_) | Entity::Clock);
         if group.touched.iter().any(moved) {
             for bench in self.lab.benches() {
                 let view = views::bench(&self.lab, bench, seq);
@@ -448,6 +455,7 @@ fn input_rows<'a>(
             }
             Held::Ask { proven: true, at, .. } => (InputKind::Ask, at, None, text.as_bytes()),
             Held::Ask { body, at, .. } => (InputKind::Ask, at, None, body.as_bytes()),
+            Held::Clock { at, .. } => (InputKind::Clock, at, None, text.as_bytes()),
             Held::Timer { at } => (InputKind::Timer, at, None, text.as_bytes()),
             Held::Settings { text, at } => (InputKind::Settings, at, None, text.as_bytes()),
             Held::Start { at, .. } | Held::Stop { at } => (InputKind::Start, at, None, text.as_bytes()),

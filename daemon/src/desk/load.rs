@@ -110,6 +110,8 @@ impl Desk {
             stopped: false,
             beside: std::collections::BTreeMap::new(),
             mirrored: false,
+            clock_watch: Default::default(),
+            watched: Default::default(),
         };
         desk.load(now)?;
         let mut effects = Effects::default();
@@ -143,8 +145,16 @@ impl Desk {
 
     fn started(&mut self, now: Stamp) {
         let last = self.reader.facts_after((self.next_seq - 1).saturating_sub(1), 1).ok().and_then(|f| f.into_iter().next());
+        let latest = self.reader.inputs_from((self.next_input - 1).max(1), 1, None).ok().and_then(|i| i.first().map(|i| i.at));
         let after_orderly_stop = last.is_none_or(|f| f.kind == "service_stopped");
         self.absorb(Held::Start { after_orderly_stop, at: now });
+        self.settings_taken(now);
+        if let Some(seen) = self.clock_watch.start(latest, &now, self.lab.clock()) {
+            self.absorb(Held::Clock { seen, at: now });
+        }
+    }
+
+    fn settings_taken(&mut self, now: Stamp) {
         let digest = Digest::of(self.setup.settings.as_bytes()).to_string();
         let before = self.reader.latest_fact("settings_taken").ok().flatten();
         if before.is_none_or(|f| !String::from_utf8_lossy(&f.body).contains(&digest)) {
@@ -167,6 +177,7 @@ impl Desk {
             ("bench", Which::All),
             ("instrument", Which::All),
             ("loose", Which::Open),
+            ("clock", Which::All),
         ] {
             self.each_document(kind, which, |desk, stored| desk.load_one(&stored))?;
         }
@@ -226,6 +237,7 @@ impl Desk {
             "bench" => read(stored).map(Loaded::Bench),
             "instrument" => read(stored).map(Loaded::Instrument),
             "statistics" => read(stored).map(Loaded::Statistics),
+            "clock" => read(stored).map(Loaded::Clock),
             "loose" => read(stored).map(|l: Loose| Loaded::Loose(l)),
             _ => None,
         };
@@ -294,7 +306,9 @@ impl Desk {
     /// Ledger and state anew, then what is held is taken again unless the commit landed after all.
     pub(super) fn reload_and_retake(&mut self, now: Stamp) -> Result<(), LedgerError> {
         let first = self.first_held();
-        self.ledger.reopen()?;
+        if !self.reopened_on_reserve()? {
+            self.ledger.reopen()?;
+        }
         self.reader = self.ledger.reader()?;
         let answers = std::mem::take(&mut self.group.answers);
         let held = std::mem::take(&mut self.held);

@@ -16,12 +16,14 @@ mod group;
 pub mod inbox;
 mod load;
 mod seat;
+mod storage;
+mod time;
 pub(crate) mod views;
 
 pub use group::{Changed, Effects, LiveOut, Publish};
 pub use load::{DeskSetup, InstrumentSetup, Kind};
 pub use seat::{Seat, SeatSettings};
-pub(crate) use views::STATISTICS;
+pub(crate) use views::{CLOCK, STATISTICS};
 pub use views::{limits as limits_payload, loose as loose_payload, shelf as shelf_payload};
 
 use crate::asks;
@@ -32,11 +34,13 @@ use inbox::{Incoming, Reply};
 use serde_json::json;
 use std::collections::BTreeMap;
 use std::time::{Duration, Instant};
+use storage::Watched;
 use tarecup_core::fact::Connection;
 use tarecup_core::lab::{Input, Lab, Outcome};
 use tarecup_core::sense::Happening;
 use tarecup_core::stamp::{HOUR_US, Stamp};
 use tarecup_drivers::heard::{Batch, PortState, What};
+use time::ClockWatch;
 
 /// Lines that led to nothing are stored after this time at the latest.
 const HOLD: Duration = Duration::from_millis(200);
@@ -77,6 +81,8 @@ pub struct Desk {
     signed: Option<crate::ledger::SignedHead>,
     /// What is touched is told with the effects.
     mirrored: bool,
+    clock_watch: ClockWatch,
+    watched: Watched,
 }
 
 impl Desk {
@@ -109,6 +115,11 @@ impl Desk {
     /// Takes what waits and stores it. What may leave is added to `effects`
     /// only after it is stored.
     pub fn step(&mut self, incoming: &mut Vec<Incoming>, now: &Stamp, effects: &mut Effects) {
+        if self.not_recording.is_none()
+            && let Some(seen) = self.clock_watch.look(now, self.lab.clock())
+        {
+            self.absorb(Held::Clock { seen, at: *now });
+        }
         for item in incoming.drain(..) {
             self.take(item, now, effects);
         }
@@ -122,6 +133,7 @@ impl Desk {
         if self.should_commit() {
             self.commit(effects);
         }
+        self.look_after_storage(now, effects);
         if now.since(&self.cleaned).us >= 24 * HOUR_US {
             self.cleaned = *now;
             self.sign_head(now);
@@ -266,6 +278,11 @@ impl Desk {
             }
             Held::Ask { client, id, body, reply, at, .. } => self.absorb_ask(client, id.as_deref(), body, reply, *at),
             Held::Timer { at } => self.absorb_timer(*at),
+            Held::Clock { seen, at } => {
+                self.next_input += 1;
+                self.decide(Input::Clock(seen.clone()), *at);
+                true
+            }
             Held::Settings { text, at } => {
                 let input = self.next_input;
                 self.next_input += 1;
@@ -516,7 +533,7 @@ impl Desk {
     pub fn hold_until(&self) -> Option<Instant> {
         let lines = self.held_since.map(|since| since + HOLD);
         let facts = self.group.first_fact.map(|since| since + COMPANY);
-        lines.into_iter().chain(facts).min()
+        lines.into_iter().chain(facts).chain(self.watched.reserve_until()).min()
     }
 
     fn should_commit(&self) -> bool {
@@ -557,7 +574,8 @@ impl Desk {
         }
     }
 
-    fn note_not_recording(&mut self, error: &LedgerError, effects: &mut Effects) {
+    pub(super) fn note_not_recording(&mut self, error: &LedgerError, effects: &mut Effects) {
+        self.watched.failed(error);
         let why = error.to_string();
         if self.not_recording.as_deref() != Some(why.as_str()) {
             tracing::error!(reason = %why, "NOT RECORDING");

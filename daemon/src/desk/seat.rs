@@ -115,7 +115,8 @@ fn wait_until(desk: &Desk, settings: &SeatSettings) -> Option<Instant> {
         true => now + Duration::from_micros(us.unsigned_abs()) + Duration::from_millis(1),
         false => now + if us == 0 { Duration::ZERO } else { FAR },
     });
-    due.into_iter().chain(desk.hold_until()).min()
+    let look = settings.time_passes.load(Ordering::Relaxed).then(|| desk.look_due());
+    due.into_iter().chain(desk.hold_until()).chain(look).min()
 }
 
 fn refuse(desk: &Desk, urgent: Vec<Incoming>, effects: &mut Effects) {

@@ -17,6 +17,9 @@ use tarecup_core::stamp::{Stamp, rfc3339};
 /// Name of the one document of what all results say together.
 pub(crate) const STATISTICS: &str = "all";
 
+/// Name of the one document of what is known of the wall clock.
+pub(crate) const CLOCK: &str = "wall";
+
 /// Version of the payloads.
 const V: u32 = 1;
 
@@ -28,7 +31,7 @@ pub(super) fn of(lab: &Lab, entity: &Entity, seq: u64) -> Option<(String, Value)
         Entity::Bench(name) => lab.bench(name).map(|b| (format!("bench/{name}"), bench(lab, b, seq))),
         // Its counters are the desk's: the desk fills it in.
         Entity::Instrument(name) => Some((format!("instrument/{name}"), Value::Null)),
-        Entity::Loose(_) | Entity::Statistics => None,
+        Entity::Loose(_) | Entity::Statistics | Entity::Clock => None,
     }
 }
 
@@ -57,6 +60,7 @@ pub(crate) fn bench(lab: &Lab, bench: &Bench, seq: u64) -> Value {
         "caution": guide.as_ref().and_then(|g| g.caution).map(|c| c.says),
         "action": guide.as_ref().and_then(|g| g.action.clone()),
         "advice": lab.advice(&bench.name, &Wish::default()).map_or(Vec::new(), |a| a.says),
+        "clock": lab.clock().says(),
         "next_since": guide.as_ref().and_then(|g| g.since).map(|s| s.rfc3339()),
     })
 }
@@ -212,6 +216,7 @@ impl Desk {
         let tail = self.ledger.tail();
         json!({
             "v": V, "seq": tail.last_seq, "at": at.rfc3339(), "state": state, "not_recording": self.not_recording,
+            "room": self.watched.says(), "clock": self.lab.clock().says(),
             "ledger": tail.id.to_string(), "epoch": tail.epoch, "program": env!("CARGO_PKG_VERSION"),
         })
     }
@@ -310,6 +315,7 @@ impl Desk {
         let specimens: Vec<&SpecimenId> = self.lab.specimens().filter(|s| s.open()).map(|s| &s.id).collect();
         json!({
             "v": V, "at": now.rfc3339(), "program": env!("CARGO_PKG_VERSION"), "station": self.setup.station,
+            "room": self.watched.says(), "clock": self.lab.clock().says(),
             "not_recording": self.not_recording, "ledger": tail.id.to_string(), "epoch": tail.epoch, "seq": tail.last_seq,
             "hash": tail.last_hash.to_string(), "inputs": tail.last_input, "delivered_through": self.delivered, "broker_trouble": self.broker,
             "state_dir": self.setup.state_dir, "open_specimens": specimens, "loose": self.lab.loose_open().count(),

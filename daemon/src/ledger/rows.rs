@@ -25,12 +25,14 @@ pub enum InputKind {
     Start,
     /// Many identical rejects as one row: count, digest and a sample.
     Flood,
+    /// Something noticed of the wall clock.
+    Clock,
 }
 
 impl InputKind {
     /// All kinds.
-    pub const ALL: [InputKind; 8] =
-        [Self::Line, Self::Reject, Self::Ask, Self::Port, Self::Timer, Self::Settings, Self::Start, Self::Flood];
+    pub const ALL: [InputKind; 9] =
+        [Self::Line, Self::Reject, Self::Ask, Self::Port, Self::Timer, Self::Settings, Self::Start, Self::Flood, Self::Clock];
 
     /// The word stored in the file.
     pub fn word(self) -> &'static str {
@@ -43,6 +45,7 @@ impl InputKind {
             Self::Settings => "settings",
             Self::Start => "start",
             Self::Flood => "flood",
+            Self::Clock => "clock",
         }
     }
 

@@ -191,11 +191,28 @@ pub(crate) fn inspect(path: &Path) -> Result<(), LedgerError> {
         return Ok(());
     }
     let still = OpenFlags::SQLITE_OPEN_READ_ONLY | OpenFlags::SQLITE_OPEN_URI;
-    check_made_by_us(&connect_to(&immutable_uri(path), path, still)?, path)?;
-    if length(&beside(path, "-wal")) > 0 {
+    let log = length(&beside(path, "-wal")) > 0;
+    match connect_to(&immutable_uri(path), path, still).and_then(|conn| check_made_by_us(&conn, path)) {
+        // A disk that filled while the log was being copied into the file leaves a part of it: only both together say what it is.
+        Err(LedgerError::Damaged { .. }) if log => (),
+        looked => drop(looked?),
+    }
+    if log {
         check_made_by_us(&connect(path, OpenFlags::SQLITE_OPEN_READ_ONLY)?, path)?;
     }
     Ok(())
+}
+
+/// The last input in the file itself, its log left aside; looks without making anything beside it.
+pub(crate) fn last_input_in_file(path: &Path) -> Result<u64, LedgerError> {
+    check_is_file(path)?;
+    let still = OpenFlags::SQLITE_OPEN_READ_ONLY | OpenFlags::SQLITE_OPEN_URI;
+    let conn = connect_to(&immutable_uri(path), path, still)?;
+    if check_made_by_us(&conn, path)? == 0 {
+        return Ok(0);
+    }
+    let last = conn.query_row("SELECT ifnull(max(no), 0) FROM input", [], |row| row.get::<_, i64>(0));
+    last.map(i64::unsigned_abs).map_err(|e| LedgerError::sql(path, "looking at its end", &e))
 }
 
 /// A folder, a pipe or a device in the ledger's place would otherwise look

@@ -4,6 +4,7 @@ use super::chain::{Digest, FactFields, InputDigest, InputFields, LedgerId, fact_
 use super::error::LedgerError;
 use super::lock::{FileMark, Lock};
 use super::reader::{self, Reader};
+use super::room::{Reserve, Room};
 use super::rows::{AnswerRow, Columns, DocumentRow, FactRow, Group, InputRow, agree, signed};
 use super::schema;
 use super::verify::{Place, RAW_FACT, RawFact, Stop, digest_inputs, raw_facts_after};
@@ -19,6 +20,9 @@ const TAIL_INPUTS: i64 = 200_000;
 /// Bytes stored after which an idle moment is used to tidy the log.
 const TIDY_BYTES: u64 = 1 << 20;
 
+/// Takes the lock for writing and lets go of it; writes nothing.
+const TRY_LOCK: &str = "BEGIN IMMEDIATE; ROLLBACK";
+
 /// How to open a ledger.
 #[derive(Clone, Debug)]
 pub struct OpenOptions {
@@ -31,12 +35,14 @@ pub struct OpenOptions {
     /// The most pages (4 KiB each) the file may have. Beyond it a commit fails
     /// as it does on a full disk.
     pub max_pages: Option<u32>,
+    /// Room kept back on the disk, bytes; 0 for none.
+    pub reserve_bytes: u64,
 }
 
 impl OpenOptions {
     /// Opens or makes a ledger in this boot, at this time.
     pub fn new(boot_id: &str, utc_us: i64) -> Self {
-        Self { boot_id: boot_id.into(), utc_us, new_id: None, max_pages: None }
+        Self { boot_id: boot_id.into(), utc_us, new_id: None, max_pages: None, reserve_bytes: 0 }
     }
 }
 
@@ -74,6 +80,7 @@ pub struct Ledger {
     path: PathBuf,
     options: OpenOptions,
     lock: Lock,
+    reserve: Reserve,
     tail: Tail,
     /// `None` after a failed commit, until it is reopened.
     open: Option<Open>,
@@ -105,15 +112,58 @@ impl Ledger {
         make_folder(&path)?;
         let lock = Lock::take(&path)?;
         let (open, tail) = Open::new(&path, &options, None)?;
-        Ok(Self { path, options, lock, tail, open: Some(open) })
+        let mut reserve = Reserve::beside(&path, options.reserve_bytes);
+        if let Err(e) = reserve.make() {
+            tracing::warn!(error = %e, "no room can be kept back on the disk for the case that it fills");
+        }
+        Ok(Self { path, options, lock, reserve, tail, open: Some(open) })
     }
 
     /// Opens the file again after a failed commit, by the same steps as a
     /// start, without letting go of the lock. The failed commit may have
     /// landed all the same: [`Self::contains_input`] tells. May be tried as
-    /// often as it takes.
+    /// often as it takes. A reserve that was given up must be there again.
     pub fn reopen(&mut self) -> Result<Tail, LedgerError> {
         self.open = None;
+        self.remake_reserve()?;
+        self.open_again()
+    }
+
+    /// Gives the reserve up, when there is one, and opens the file again: there
+    /// is room for what is in progress. `None` when there was no reserve.
+    pub fn reopen_on_reserve(&mut self) -> Option<Result<Tail, LedgerError>> {
+        self.open = None;
+        self.reserve.give_up().then(|| self.open_again())
+    }
+
+    /// Keeps room back again, if it was given up.
+    pub fn remake_reserve(&mut self) -> Result<(), LedgerError> {
+        self.reserve.demand().map_err(|e| LedgerError::io(&self.path, &e))
+    }
+
+    /// Whether something could be stored now, without storing anything: the file is the one at its path and nobody
+    /// else keeps it locked. Tells the room on its disk. After an error, [`Self::reopen`] is due.
+    pub fn look(&mut self) -> Result<Option<Room>, LedgerError> {
+        let Some(open) = self.open.take() else {
+            return Err(LedgerError::Poisoned { path: self.path.clone() });
+        };
+        if open.file.is_none() || FileMark::at(&self.path) != open.file || !self.lock.still_there() {
+            return Err(LedgerError::Moved { path: self.path.clone() });
+        }
+        let tried = open.conn.execute_batch(TRY_LOCK);
+        tried.map_err(|e| LedgerError::sql(&self.path, "looking whether it can be written", &e))?;
+        self.open = Some(open);
+        Ok(Room::of(&self.path))
+    }
+
+    fn open_again(&mut self) -> Result<Tail, LedgerError> {
+        // A ledger that is being put back may stand there before its log does. Opened like that, a new log would be
+        // begun in the place of the one to come.
+        let log = schema::beside(&self.path, "-wal");
+        let no_log = std::fs::metadata(&log).map_or(true, |m| m.len() == 0);
+        if no_log && self.path.exists() && schema::last_input_in_file(&self.path)? < self.tail.last_input {
+            return Err(LedgerError::Moved { path: self.path.clone() });
+        }
         if !self.lock.still_there() {
             self.lock = Lock::take(&self.path)?;
         }
@@ -237,6 +287,8 @@ impl Open {
             checkpoint(&conn, "PASSIVE").map_err(sql)?;
         }
         let boot = number_boot(&mut conn, options).map_err(sql)?;
+        // What is read may be readable and yet be locked for writing.
+        conn.execute_batch(TRY_LOCK).map_err(sql)?;
         let (tail, pending) = read_tail(&conn, boot).map_err(|stop| match stop {
             Stop::Bad(fault) => LedgerError::Chain { path: path.to_path_buf(), seq: fault.seq, why: fault.why },
             Stop::Sql(e) => sql(e),

@@ -4,7 +4,7 @@
 //! does not follow from the facts shows something nobody decided.
 
 use super::{Difference, MOST_DIFFERENCES};
-use crate::desk::STATISTICS;
+use crate::desk::{CLOCK, STATISTICS};
 use crate::ledger::{FactStored, LedgerError, Reader, Which};
 use crate::service::setup_of;
 use serde_json::Value;
@@ -18,7 +18,7 @@ use tarecup_core::names::{MethodName, Operator};
 const PAGE: usize = 1_000;
 /// The kinds of document that follow from facts alone; the others are the
 /// senses', which follow from lines.
-const KINDS: [&str; 6] = ["bench", "container", "instrument", "loose", "specimen", "statistics"];
+const KINDS: [&str; 7] = ["bench", "clock", "container", "instrument", "loose", "specimen", "statistics"];
 
 /// A stored fact as the laboratory takes it.
 pub(crate) fn recorded(stored: &FactStored) -> Result<Recorded, String> {
@@ -149,6 +149,7 @@ fn made_anew(lab: &Lab, entity: &Entity) -> Option<(&'static str, String, Value)
         Entity::Container(id) => ("container", id.as_str().into(), json(serde_json::to_value(lab.container(id)))),
         Entity::Bench(name) => ("bench", name.as_str().into(), json(serde_json::to_value(lab.bench(name)?))),
         Entity::Instrument(name) => ("instrument", name.as_str().into(), json(serde_json::to_value(lab.instrument(name)?))),
+        Entity::Clock => ("clock", CLOCK.into(), json(serde_json::to_value(lab.clock()))),
         Entity::Statistics => ("statistics", STATISTICS.into(), json(serde_json::to_value(lab.statistics()))),
         Entity::Loose(seq) => ("loose", format!("{seq:020}"), json(serde_json::to_value(lab.loose(*seq)))),
     })

@@ -11,7 +11,7 @@ use serde_json::{Map, Value};
 use tarecup_core::names::{BenchName, Operator};
 
 /// Asks that change what is recorded, or speak for a result: only who gave a PIN makes them.
-pub const PROVEN: [&str; 14] = [
+pub const PROVEN: [&str; 15] = [
     "tie",
     "tie_count",
     "set_aside",
@@ -23,6 +23,7 @@ pub const PROVEN: [&str; 14] = [
     "amend_drops",
     "free_container",
     "oven_off",
+    "clock_right",
     "not_obtainable",
     "answer_check",
     "review",

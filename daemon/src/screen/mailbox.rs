@@ -110,6 +110,7 @@ fn key(changed: &Changed) -> Option<Entity> {
             Loaded::Instrument(i) => Entity::Instrument(i.name.clone()),
             Loaded::Loose(l) => Entity::Loose(l.seq),
             Loaded::Statistics(_) => Entity::Statistics,
+            Loaded::Clock(_) => Entity::Clock,
         },
     })
 }

@@ -205,6 +205,10 @@ pub enum AskShape {
         who: Option<String>,
         why: String,
     },
+    ClockRight {
+        who: Option<String>,
+        why: String,
+    },
     NotObtainable {
         specimen: String,
         limit: Limit,
@@ -273,6 +277,7 @@ mod tests {
             json!({"ask":"into_oven","containers":["C1"],"celsius":110.0,"who":"AB"}),
             json!({"ask":"out_of_oven","containers":["C1"],"who":"AB"}),
             json!({"ask":"oven_off","from":"f","to":"t","who":"AB","why":"w"}),
+            json!({"ask":"clock_right","who":"AB","why":"w"}),
             json!({"ask":"not_obtainable","specimen":"S","limit":"liquid","because":"b","who":"AB"}),
             json!({"ask":"answer_check","specimen":"S","check":"c","about":"a","says":"s","who":"AB"}),
             json!({"ask":"review","specimen":"S","who":"AB"}),
@@ -285,13 +290,13 @@ mod tests {
     fn described(ask: &Ask) -> usize {
         use Ask::*;
         match ask {
-            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 31,
-            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 31,
-            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 31,
-            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 31,
-            Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 31,
-            Slid { .. } | GrooveTore { .. } => 31,
-            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 31,
+            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 32,
+            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 32,
+            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 32,
+            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 32,
+            Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 32,
+            Slid { .. } | GrooveTore { .. } | ClockRight { .. } => 32,
+            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 32,
         }
     }
 

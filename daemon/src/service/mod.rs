@@ -44,6 +44,9 @@ use tokio::runtime::Runtime;
 /// How long an orderly stop waits for the broker.
 const FAREWELL: Duration = Duration::from_secs(3);
 
+/// Room kept back on the disk: many times what a weighing in progress and the facts after it take.
+const RESERVE_BYTES: u64 = 1 << 20;
+
 /// How long the built-in broker has to read the farewell.
 #[cfg(feature = "broker")]
 const BROKER_READS: Duration = Duration::from_millis(200);
@@ -162,7 +165,7 @@ impl Service {
         let net_runtime = runtime("net")?;
         let heard = Arc::new(Heard::default());
         let setup = desk_setup(&station, &profiles, &state_dir, key, time_passes);
-        let options = OpenOptions::new(&boot_id(), clock.now().utc_us);
+        let options = OpenOptions { reserve_bytes: RESERVE_BYTES, ..OpenOptions::new(&boot_id(), clock.now().utc_us) };
         let stamp = |boot| {
             clock.set_boot(boot);
             clock.now()

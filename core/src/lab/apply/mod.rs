@@ -33,6 +33,10 @@ impl Lab {
             Fact::InstrumentChanged { .. } | Fact::LinesOverrun { .. } | Fact::PanCleared { .. } => {
                 self.apply_instrument(r, touched);
             }
+            Fact::ClockStepped { .. } | Fact::ClockUntrusted { .. } | Fact::ClockTrusted { .. } => {
+                self.clock.apply(&r.fact, r.at);
+                touched.insert(Entity::Clock);
+            }
             Fact::SpecimenOpened(opened) => self.apply_opened(opened, r, touched),
             Fact::SignedIn { bench, .. }
             | Fact::SignedOut { bench }
@@ -233,7 +237,7 @@ impl Lab {
         let last_dry = trial.as_ref().and_then(|t| t.dries.last()).map(|d| d.weighing.at);
         change(&mut holding.oven, last_dry);
         if let Some(trial) = trial.filter(|t| !t.dries.is_empty()) {
-            work_hours(&mut trial.dries, &holding.oven);
+            work_hours(&mut trial.dries, &holding.oven, &self.clock);
             touched.insert(Entity::Specimen(holding.specimen.clone()));
         }
         self.with_container(id, touched, |_| ());

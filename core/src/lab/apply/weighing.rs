@@ -247,7 +247,7 @@ impl Lab {
             basis: Clock::Monotonic,
         };
         record.dries.insert(place, dry);
-        work_hours(&mut record.dries, oven);
+        work_hours(&mut record.dries, oven, &self.clock);
         touched.insert(Entity::Specimen(specimen.clone()));
         self.with_container(container, touched, |_| ());
     }
@@ -363,7 +363,7 @@ impl Lab {
         let record = self.specimens.get_mut(specimen).and_then(|s| s.trial_mut(trial));
         if let (Some(oven), Some(record)) = (oven, record) {
             oven.not_weighed(seq);
-            work_hours(&mut record.dries, oven);
+            work_hours(&mut record.dries, oven, &self.clock);
         }
     }
 

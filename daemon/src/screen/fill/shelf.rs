@@ -3,6 +3,7 @@
 use super::super::view::{Drying, Due, Place, Shelf};
 use super::{Around, frame, kind};
 use tarecup_core::lab::Lab;
+use tarecup_core::lab::clock::ClockRecord;
 use tarecup_core::lab::entities::{Container, OvenClock, Standing};
 use tarecup_core::stamp::{HOUR_US, Stamp, rfc3339};
 
@@ -52,7 +53,7 @@ fn row(lab: &Lab, c: &Container, now: &Stamp) -> Option<Drying> {
         Standing::Unknown | Standing::Free | Standing::Dry => return None,
     };
     let wanted = lab.setup().methods.get(&s.method).map_or(0.0, |m| m.drying.hours);
-    let hours = oven.total(now).0.max(0) as f64 / HOUR_US as f64;
+    let hours = oven.total(now, lab.clock()).0.max(0) as f64 / HOUR_US as f64;
     let due = match place {
         // Weighed dry and not enough: only the oven helps, and a weighing after that.
         Place::Drying | Place::Dry => Due::NotYet,
@@ -70,14 +71,14 @@ fn row(lab: &Lab, c: &Container, now: &Stamp) -> Option<Drying> {
         recorded: oven.recorded,
         hours: hours as u32,
         hours_wanted: wanted,
-        ready_at: oven.since.filter(|_| place == Place::In).map(|since| ready_at(oven, &since, wanted)),
+        ready_at: oven.since.filter(|_| place == Place::In).map(|since| ready_at(oven, &since, wanted, lab.clock())),
         due,
     })
 }
 
 /// When the hours will be full: what is missing at the beginning of this stay, and what the oven was off since.
-fn ready_at(oven: &OvenClock, since: &Stamp, wanted: f64) -> String {
-    let before = oven.total(since).0;
+fn ready_at(oven: &OvenClock, since: &Stamp, wanted: f64, clock: &ClockRecord) -> String {
+    let before = oven.total(since, clock).0;
     let off: i64 = oven.off.iter().map(|(from, to)| (to - from.max(&since.utc_us)).max(0)).fold(0, i64::saturating_add);
     let missing = ((wanted * HOUR_US as f64) as i64).saturating_sub(before).max(0);
     rfc3339(since.utc_us.saturating_add(missing).saturating_add(off))
