@@ -30,7 +30,7 @@ use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator,
 use crate::quantity::Mass;
 use crate::sense::{CountRun, InputNo, LeftOnPan, MassTaken, Stayed};
 use crate::sheet::Seq;
-use crate::soil::uncertainty::Balance;
+use crate::soil::uncertainty::{Balance, BalanceRule};
 use crate::stamp::{SECOND_US, Stamp};
 use alloc::boxed::Box;
 use alloc::collections::{BTreeMap, BTreeSet};
@@ -66,6 +66,8 @@ pub struct Setup {
     pub linking: Linking,
     /// What is known of balances beside their lines.
     pub balances: BTreeMap<InstrumentName, Balance>,
+    /// How often balances are to be checked with a reference mass, when that is asked for.
+    pub balance_rule: Option<BalanceRule>,
 }
 
 /// Limits of linking weighings and counts.

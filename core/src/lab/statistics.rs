@@ -41,6 +41,9 @@ pub struct Statistics {
     pub threads: Sums,
     /// Slopes of flow lines in the cup.
     pub slopes: Slopes,
+    /// Plastic limits against liquid limits.
+    #[serde(default)]
+    pub pairs: Slopes,
 }
 
 impl Sums {
@@ -92,6 +95,9 @@ impl Statistics {
             let squares = waters.iter().map(|w| (w - mean) * (w - mean)).sum();
             share.threads = Sums::of(squares, waters.len() as u64 - 1);
         }
+        if let (Some(liquid), Some(plastic)) = (&limits.liquid_limit, &limits.plastic_limit) {
+            share.pairs = Slopes::of(liquid.value, plastic.value);
+        }
         share
     }
 
@@ -102,6 +108,7 @@ impl Statistics {
             cone: self.cone.plus(other.cone),
             threads: self.threads.plus(other.threads),
             slopes: self.slopes.plus(other.slopes),
+            pairs: self.pairs.plus(other.pairs),
         }
     }
 
@@ -112,6 +119,7 @@ impl Statistics {
             cone: self.cone.minus(other.cone),
             threads: self.threads.minus(other.threads),
             slopes: self.slopes.minus(other.slopes),
+            pairs: self.pairs.minus(other.pairs),
         }
     }
 

@@ -121,6 +121,7 @@ impl Kept {
             methods: self.methods.clone(),
             default_method: self.default_method.clone(),
             balances: self.instruments.iter().map(|i| (i.name.clone(), i.weighs)).collect(),
+            balance_rule: None,
             linking: Linking {
                 near: linking.near_ug,
                 slice_us: seconds(linking.slice_minutes) * 60,
