@@ -1,7 +1,7 @@
 //! Two containers whose masses or drops fit better when put the other way round.
 //! Tried out only where the determinations do not belong together as they are.
 
-use super::fit::{Piece, apart, misfit, pieces, together};
+use super::fit::{Piece, apart, mends, misfit, pieces};
 use super::{Worked, facts, hold, in_order, note};
 use crate::limits::CheckRow;
 use crate::sheet::Kind;
@@ -24,11 +24,14 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
     // Where the line runs the wrong way there may be no line to speak of yet.
     let Some(now) = misfit(worked, &pieces).filter(|m| apart(*m)) else { return };
     let mut best: Option<(f64, What, usize, usize)> = None;
+    // Drops close to each other change places within the scatter: only a line that runs the wrong way speaks of them.
+    let whats = [What::Dry, What::Wet, What::Containers, What::Drops];
+    let whats = if now.is_finite() { &whats[..3] } else { &whats[..] };
     for i in 0..pieces.len() {
         for j in i + 1..pieces.len() {
-            for what in [What::Dry, What::Wet, What::Containers, What::Drops] {
+            for &what in whats {
                 let Some(tried) = put_back(&pieces, i, j, what).and_then(|p| misfit(worked, &p)) else { continue };
-                if together(tried) && best.is_none_or(|(least, ..)| tried < least) {
+                if mends(tried, now) && best.is_none_or(|(least, ..)| tried < least) {
                     best = Some((tried, what, i, j));
                 }
             }
@@ -52,7 +55,7 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
             let both = facts(a.trial).into_iter().chain(facts(b.trial)).collect();
             rows.push(hold("exchanged", &format!("{} and {}", a.about, b.about), says, in_order(both)));
         }
-        None => across(worked, &pieces, rows),
+        None => across(worked, now, &pieces, rows),
     }
 }
 
@@ -84,7 +87,7 @@ fn put_back(pieces: &[(usize, Piece)], i: usize, j: usize, what: What) -> Option
 }
 
 /// A dry mass that fits when taken from a container of a specimen tested beside this one.
-fn across(worked: &Worked, pieces: &[(usize, Piece)], rows: &mut Vec<CheckRow>) {
+fn across(worked: &Worked, now: f64, pieces: &[(usize, Piece)], rows: &mut Vec<CheckRow>) {
     let others = worked.laboratory.beside.iter().flat_map(|s| s.trials.iter().map(move |t| (s, t)));
     let mut best: Option<(f64, usize, String)> = None;
     for (of, other) in others {
@@ -92,7 +95,7 @@ fn across(worked: &Worked, pieces: &[(usize, Piece)], rows: &mut Vec<CheckRow>) 
         for i in 0..pieces.len() {
             let mut tried = pieces.to_vec();
             tried[i].1.masses[2] = dry;
-            let Some(tried) = misfit(worked, &tried).filter(|m| together(*m)) else { continue };
+            let Some(tried) = misfit(worked, &tried).filter(|m| mends(*m, now)) else { continue };
             if best.as_ref().is_none_or(|(least, ..)| tried < *least) {
                 best = Some((tried, i, format!("{} of specimen {}", other.about, of.specimen)));
             }

@@ -13,11 +13,13 @@ use alloc::vec::Vec;
 /// Scatter where the method states none, percent water: pooled residual sd of 45 flow lines of one skilled
 /// operator, and what ranges of three of his thread containers stand for `[calc]`.
 const USUAL: (f64, f64) = (0.17, 0.28);
-/// Mean square, in those of usual scatter, beyond which determinations do not belong together, and below which they
-/// do. With the 8 degrees of freedom that methods state, careful work exceeds the first about once in two hundred
-/// times and stays below the second nine times in ten (F with 2 and 8) `[calc]`.
-const NOT_TOGETHER: f64 = 12.0;
-const TOGETHER: f64 = 3.0;
+/// Mean square, in those of usual scatter, beyond which determinations do not belong together: with the 8 degrees of
+/// freedom that methods state, careful work exceeds it once in a thousand times (F with 2 and 8) `[calc]`.
+const NOT_TOGETHER: f64 = 18.5;
+/// Below this they do: exceeded once in a hundred and fifty times (the same) `[calc]` …
+const TOGETHER: f64 = 10.0;
+/// … when it is also so much better than as they are (our own choice, no source).
+const BETTER: f64 = 20.0;
 /// More determinations than this are not tried out in pairs.
 const MOST: usize = 24;
 
@@ -79,7 +81,7 @@ pub(super) fn apart(misfit: f64) -> bool {
     misfit > NOT_TOGETHER
 }
 
-/// Whether they do.
-pub(super) fn together(misfit: f64) -> bool {
-    misfit < TOGETHER
+/// Whether they do once something is put back.
+pub(super) fn mends(tried: f64, now: f64) -> bool {
+    tried < TOGETHER && tried * BETTER < now
 }

@@ -40,6 +40,7 @@ mod slope;
 mod small_mass;
 mod spread;
 mod standing;
+mod steep;
 mod tare_owed;
 mod tares;
 mod threads;
@@ -118,6 +119,7 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     scatter::check,
     exchanged::check,
     lid::check,
+    steep::check,
     windows::check,
     spread::check,
     threads::check,
@@ -158,8 +160,12 @@ pub fn keeps_provisional(check: &str) -> bool {
 }
 
 /// Checks that look at other specimens: only ever notes, and no reason to change a result that stands.
-pub fn rests_on_the_record(check: &str) -> bool {
-    matches!(check, "outlier" | "threads_apart" | "pairing" | "left_over" | "exchanged_across")
+pub fn rests_on_the_record(row: &CheckRow) -> bool {
+    let looks = matches!(
+        row.check.as_str(),
+        "scatter" | "outlier" | "steep" | "threads_apart" | "pairing" | "left_over" | "exchanged_across"
+    );
+    looks && row.severity == Severity::Note
 }
 
 impl<'a> Worked<'a> {

@@ -1,11 +1,16 @@
 //! A plastic limit that hardly belongs to its liquid limit, by what this
 //! laboratory's own soils show: threads of another specimen give lines and means
 //! that are perfect by themselves.
+//!
+//! Soils of one region lie along the A-line, and scatter about it the more the
+//! wetter they are; so what is compared is the plasticity index as a share of
+//! that of the A-line.
 
 use super::{PLASTICITY_INDEX, Worked, note};
 use crate::beside::Beside;
 use crate::limits::CheckRow;
 use crate::sheet::Kind;
+use crate::soil::chart::a_line_ratio;
 use crate::soil::student;
 use alloc::format;
 use alloc::vec::Vec;
@@ -31,10 +36,11 @@ pub(super) fn check(worked: &Worked, rows: &mut Vec<CheckRow>) {
         );
         return rows.push(note("pairing", PLASTICITY_INDEX, says, facts()));
     }
-    let off = (pl - own.mean).abs() / own.sd;
+    let Some(ratio) = a_line_ratio(ll, pl) else { return };
+    let off = (ratio - own.mean).abs() / own.sd;
     if student::two_sided(CONFIDENCE, own.freedom).is_some_and(|t| off > t) {
         let says = format!(
-            "a plastic limit of {pl:.1} is improbable beside a liquid limit of {ll:.1}: this laboratory's own soils let expect {:.1}, give or take {:.1}. Look whether the threads are of this specimen; else answer this.",
+            "a plastic limit of {pl:.1} is improbable beside a liquid limit of {ll:.1}: the plasticity index is {ratio:.2} times that of the A-line, where this laboratory's own soils have {:.2}, give or take {:.2}. Look whether the threads are of this specimen; else answer this.",
             own.mean, own.sd
         );
         rows.push(note("pairing", PLASTICITY_INDEX, says, facts()));
@@ -47,7 +53,10 @@ fn better<'a>(worked: &Worked<'a>, ll: f64, pl: f64) -> Option<(&'a Beside, f64)
     let mine = threads_at(worked)?;
     let near: Vec<&Beside> =
         worked.laboratory.beside.iter().filter(|b| b.threads_at_utc_us.is_some_and(|at| (at - mine).abs() < A_DAY_US)).collect();
-    let off = |ll: f64, pl: f64| pairs.predicted(ll, FROM).map(|p| libm::pow((pl - p.mean) / p.sd, 2.0));
+    let off = |ll: f64, pl: f64| {
+        let (p, ratio) = (pairs.predicted(ll, FROM)?, a_line_ratio(ll, pl)?);
+        Some(libm::pow((ratio - p.mean) / p.sd, 2.0))
+    };
     let gain = |b: &&'a Beside| {
         let (l, p) = (b.liquid?, b.plastic?);
         Some((*b, off(ll, pl)? + off(l, p)? - off(ll, p)? - off(l, pl)?))

@@ -90,7 +90,7 @@ fn without_the_record(mut limits: Limits) -> Limits {
         (limit.u, limit.interval_95, limit.u_from) = (None, None, None);
     }
     (limits.plasticity_index.u, limits.plasticity_index.interval_95) = (None, None);
-    limits.checks.retain(|c| c.answered.is_some() || !rests_on_the_record(&c.check));
+    limits.checks.retain(|c| c.answered.is_some() || !rests_on_the_record(c));
     limits
 }
 

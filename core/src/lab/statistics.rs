@@ -8,6 +8,7 @@
 use crate::limits::{Limits, LiquidLimit, State};
 use crate::method::Device;
 use crate::sheet::Kind;
+use crate::soil::chart;
 use crate::soil::slopes::Slopes;
 use crate::soil::stats;
 use crate::soil::uncertainty::Pooled;
@@ -41,7 +42,7 @@ pub struct Statistics {
     pub threads: Sums,
     /// Slopes of flow lines in the cup.
     pub slopes: Slopes,
-    /// Plastic limits against liquid limits.
+    /// Plasticity indices, as shares of what the A-line has at their liquid limit, against liquid limits.
     #[serde(default)]
     pub pairs: Slopes,
 }
@@ -96,7 +97,9 @@ impl Statistics {
             share.threads = Sums::of(squares, waters.len() as u64 - 1);
         }
         if let (Some(liquid), Some(plastic)) = (&limits.liquid_limit, &limits.plastic_limit) {
-            share.pairs = Slopes::of(liquid.value, plastic.value);
+            if let Some(ratio) = chart::a_line_ratio(liquid.value, plastic.value) {
+                share.pairs = Slopes::of(liquid.value, ratio);
+            }
         }
         share
     }

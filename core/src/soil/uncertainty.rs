@@ -63,7 +63,7 @@ pub struct Laboratory {
     pub slopes: Slopes,
     /// Its balances.
     pub balances: BTreeMap<InstrumentName, Balance>,
-    /// Plastic limits against liquid limits; the specimen itself left out.
+    /// Plasticity indices as shares of the A-line against liquid limits; the specimen itself left out.
     pub pairs: Slopes,
     /// Specimens tested at the same time.
     pub beside: Vec<Beside>,
