@@ -98,6 +98,10 @@ fn two_dry_masses_exchanged_are_named_wherever_the_sheet_can_tell() {
                 });
                 let about = format!("liquid {} and liquid {}", a + 1, b + 1);
                 let named = limits.checks.iter().find(|c| c.check == "exchanged");
+                if (id, a, b) == ("E4", 0, 2) {
+                    // 62.99 and 62.94 g: the exchange moves a water content by half a percent, which nothing can tell.
+                    continue;
+                }
                 assert!(!holds(&limits).is_empty() || says(&limits, "scatter"), "{id} {about}: {:?}", limits.checks);
                 let named = named.map(|c| c.about.as_str());
                 assert!(named.is_none_or(|n| n == about), "{id} {about}: {named:?}");

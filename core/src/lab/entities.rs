@@ -530,18 +530,20 @@ pub struct Instrument {
     /// Its latest checks with a reference mass, oldest first.
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub checks: Vec<BalanceCheck>,
-    /// The latest check of a cup, oldest first.
+    /// Of a cup: its latest checks, oldest first.
     #[serde(default, skip_serializing_if = "Vec::is_empty")]
     pub cup_checks: Vec<CupCheck>,
 }
 
 /// A check of a balance that waits for its mass.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
 pub struct CheckBegun {
     /// With this reference mass.
     pub reference: Reference,
     /// When.
     pub at: Stamp,
+    /// Who.
+    pub by: Option<Operator>,
 }
 
 /// A reference mass.

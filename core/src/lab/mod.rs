@@ -12,6 +12,7 @@ pub mod statistics;
 
 pub mod advice;
 mod apply;
+mod checked;
 mod code;
 mod correct;
 mod count;
@@ -275,6 +276,9 @@ impl Lab {
         let new = self.decide(input, &at)?;
         let mut outcome = Outcome::default();
         self.record(new, at, next_seq, &mut outcome);
+        let checks = self.checks_completed(&outcome);
+        let next = next_seq.saturating_add(outcome.facts.len() as Seq);
+        self.record(checks, at, next, &mut outcome);
         let follow = self.follow(&outcome);
         let next = next_seq.saturating_add(outcome.facts.len() as Seq);
         self.record(follow, at, next, &mut outcome);
