@@ -61,6 +61,7 @@ fn setup() -> DeskSetup {
         state_dir: String::new(),
         lab: Setup {
             balances: Default::default(),
+            balance_rule: None,
             benches: vec![bench.clone()],
             instruments: instruments.iter().map(|i| (i.name.clone(), vec![bench.clone()])).collect::<BTreeMap<_, _>>(),
             methods: BTreeMap::from([(name.clone(), method)]),

@@ -26,6 +26,7 @@ fn kinds() -> BTreeSet<&'static str> {
             Fact::DropsAmended { .. } | Fact::ContainerRegistered { .. } | Fact::ContainerFreed { .. } => (),
             Fact::IntoOven { .. } | Fact::OutOfOven { .. } | Fact::OvenOff { .. } | Fact::NotObtainable { .. } => (),
             Fact::ClosureFailed { .. } | Fact::Explained { .. } | Fact::TrialMoved { .. } => (),
+            Fact::BalanceCheckBegun { .. } | Fact::BalanceChecked(_) | Fact::CupChecked(_) => (),
             Fact::PanWatched { .. } | Fact::LeftOnPan { .. } => (),
             Fact::LimitsComputed { .. } | Fact::CheckAnswered { .. } | Fact::Reviewed { .. } => (),
         }
@@ -36,7 +37,7 @@ fn kinds() -> BTreeSet<&'static str> {
         weighing_tied counted count_tied count_superseded slice_overdue set_aside trial_set_aside mass_amended drops_amended \
         container_registered container_freed into_oven out_of_oven oven_off not_obtainable limits_computed check_answered reviewed \
         penetration_entered penetration_amended closure_failed explained trial_moved pan_watched left_on_pan \
-        clock_stepped clock_untrusted clock_trusted";
+        clock_stepped clock_untrusted clock_trusted balance_check_begun balance_checked cup_checked";
     all.split_whitespace().collect()
 }
 
@@ -53,7 +54,7 @@ fn stored_facts_read_and_are_written_byte_for_byte() {
 fn there_is_an_example_of_each_kind() {
     let stored: Vec<Fact> = STORED.lines().map(|l| serde_json::from_str(l).unwrap()).collect();
     assert_eq!(stored.iter().map(Fact::kind).collect::<BTreeSet<_>>(), kinds());
-    assert_eq!(kinds().len(), 45);
+    assert_eq!(kinds().len(), 48);
 }
 
 #[test]

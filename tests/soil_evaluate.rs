@@ -4,12 +4,16 @@ mod soil_common;
 
 use proptest::prelude::*;
 use soil_common::{answer, closure, dry, g, good, liquid, method, row, sheet, trial, with_masses, with_water};
-use tarecup_core::evaluate::evaluate;
+use tarecup_core::beside::{Beside, BesideTrial};
+use tarecup_core::evaluate::{evaluate, evaluate_with};
+use tarecup_core::lab::entities::{Checked, Drift, Seen};
 use tarecup_core::limits::{Limits, Severity, State};
 use tarecup_core::method::{ClosureCounts, Digits, Method};
-use tarecup_core::names::{ContainerId, InstrumentName};
+use tarecup_core::names::{ContainerId, InstrumentName, SpecimenId};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sheet::{Kind, Penetration, Sheet, Trial};
+use tarecup_core::soil::slopes::Slopes;
+use tarecup_core::soil::uncertainty::{BalanceRule, Laboratory, Pooled};
 
 fn d4318() -> Method {
     method("d4318-multipoint")
@@ -89,6 +93,20 @@ fn each_check_speaks_when_it_should() {
         (|s| s.clay_percent = Some(140.0), "clay_percent", "specimen", Note, true),
         (|s| s.trials.push(trial(Kind::Cone, 1)), "cone", "cone 1", Note, true),
         (|s| low_threads(s), "u_line", "plasticity index", Note, true),
+        (|s| swap_drops(s, 0, 2), "exchanged", "liquid 1 and liquid 3", Hold, false),
+        (|s| lid_on(s), "lid", "liquid 2", Hold, false),
+        (|s| s.trials[1].readings[0].before = Some(g("20.10")), "tare_changed", "liquid 2", Hold, false),
+        (|s| seen(s, 2, |w| w.zero = Some(g("0.30"))), "zero", "liquid 2", Hold, false),
+        (|s| (0..3).for_each(|n| seen(s, n, |w| w.zero = Some(g("0.30")))), "zero", "liquid 2", Note, true),
+        (|s| seen(s, 1, |w| w.left = Some(g("0.20"))), "left_on_pan", "liquid 2", Note, true),
+        (|s| seen(s, 2, |w| w.stay = Some(Drift { drift_ug_per_s: 9_000, watched_ms: 5_000 })), "drift", "liquid 2", Note, true),
+        (|s| weighed_on(s, ["pan-1", "pan-1", "pan-2"]), "balances", "liquid 2", Note, true),
+        (|s| s.trials[1].readings[1].step = Some(g("0.1")), "coarse_balance", "liquid 2", Note, true),
+        (|s| failed_balance(s), "balance_failed", "liquid 2", Hold, false),
+        (|s| s.trials[1].readings[2].after_us = Some(240_000_000), "warm", "liquid 2", Note, true),
+        (|s| s.trials[1].readings[2].after_us = Some(9_000_000_000), "stood_dry", "liquid 2", Note, true),
+        (|s| s.trials[1].readings[1].after_us = Some(600_000_000), "stood_wet", "liquid 2", Note, true),
+        (|s| copied_masses(s), "same_masses", "liquid 2", Note, true),
     ];
     for (change, check, about, severity, complete) in cases {
         let limits = after(change);
@@ -97,6 +115,82 @@ fn each_check_speaks_when_it_should() {
         assert!(found.says.ends_with('.') && found.says.len() > 30, "{check}: {}", found.says);
         assert_eq!(limits.state == State::Complete, *complete, "{check}: {:?}", limits.checks);
     }
+}
+
+/// Each row: a sheet in a laboratory with a record, and the check that reads it. All are notes.
+#[test]
+fn each_check_that_reads_the_record_speaks_when_it_should() {
+    type Change = fn(&mut Sheet, &mut Laboratory);
+    let cases: &[(Change, &str, &str)] = &[
+        (|s, _| s.trials[1].wet = Some(g("34.28")), "outlier", "liquid limit"),
+        (|s, _| s.trials[3].wet = Some(g("32.08")), "threads_apart", "plastic limit"),
+        (|s, _| steep_line(s), "steep", "liquid limit"),
+        (|s, _| s.trials[3..].iter_mut().for_each(|t| t.wet = t.wet.map(|w| w + g("1.40"))), "pairing", "plasticity index"),
+        (|s, l| other_dry(s, l), "exchanged_across", "liquid 2"),
+        (|s, _| weighed_on(s, ["pan-1", "pan-1", "pan-1"]), "balance_overdue", "liquid 2"),
+    ];
+    let record = || {
+        let slopes = (0..20).map(|n| Slopes::of(30.0 + f64::from(n), -12.0 + f64::from(n % 3) / 2.0));
+        let pairs = (0..20).map(|n| Slopes::of(30.0 + f64::from(n), 1.37 + f64::from(n % 4) / 50.0));
+        Laboratory {
+            lines: Pooled { sum_sq: 0.4, df: 40 },
+            threads: Pooled { sum_sq: 0.9, df: 40 },
+            slopes: slopes.fold(Slopes::default(), Slopes::plus),
+            pairs: pairs.fold(Slopes::default(), Slopes::plus),
+            balance_rule: Some(BalanceRule { every_us: 86_400_000_000, tolerance: None, overdue: Severity::Note }),
+            ..Laboratory::default()
+        }
+    };
+    assert_eq!(evaluate_with(&good(), &d4318(), &record()).checks, [], "control: the good sheet has nothing to say here either");
+    for (change, check, about) in cases {
+        let (mut sheet, mut lab) = (good(), record());
+        change(&mut sheet, &mut lab);
+        let limits = evaluate_with(&sheet, &d4318(), &lab);
+        let found = row(&limits, check, about).unwrap_or_else(|| panic!("no {check} about {about}: {:?}", limits.checks));
+        assert!(found.severity == Severity::Note && found.says.ends_with('.') && found.says.len() > 30, "{found:?}");
+        assert_eq!(row(&evaluate(&sheet, &d4318()), check, about), None, "{check} without a record");
+    }
+}
+
+/// 40 % a decade through the same limit.
+fn steep_line(s: &mut Sheet) {
+    for (t, wet) in s.trials.iter_mut().zip(["33.827", "34.271", "34.870"]) {
+        t.wet = Some(g(wet));
+    }
+}
+
+fn other_dry(s: &mut Sheet, lab: &mut Laboratory) {
+    s.trials[1].dry = vec![dry(g("29.10"))];
+    let masses = [Some(g("20.5")), Some(g("33.1")), Some(g("30.00"))];
+    let trials = vec![BesideTrial { about: "liquid 1".into(), container: ContainerId::new("D1").unwrap(), masses }];
+    let specimen = SpecimenId::new("S-2").unwrap();
+    lab.beside = vec![Beside { specimen, trials, liquid: None, plastic: None, threads_at_utc_us: None }];
+}
+
+fn lid_on(s: &mut Sheet) {
+    s.trials[1].readings[0].lid = Some(g("5.00"));
+    s.trials[1].wet = s.trials[1].wet.map(|w| w + g("5.00"));
+}
+
+fn seen(s: &mut Sheet, weighing: usize, change: fn(&mut Seen)) {
+    change(s.trials[1].readings[weighing].seen.get_or_insert_default());
+}
+
+fn weighed_on(s: &mut Sheet, balances: [&str; 3]) {
+    for (reading, name) in s.trials[1].readings.iter_mut().zip(balances) {
+        reading.balance = InstrumentName::new(name).ok();
+    }
+}
+
+fn failed_balance(s: &mut Sheet) {
+    weighed_on(s, ["pan-1"; 3]);
+    s.trials[1].readings[2].checked = Some(Checked { passed: false, ago_us: 1 });
+}
+
+fn copied_masses(s: &mut Sheet) {
+    s.trials[1].typed = true;
+    let from = s.trials[0].clone();
+    (s.trials[1].tare, s.trials[1].wet) = (from.tare, from.wet);
 }
 
 fn swap_drops(s: &mut Sheet, a: usize, b: usize) {

@@ -49,7 +49,7 @@ fn weighed(balances: [&str; 3]) -> Sheet {
         counts[which] += 1;
         let mass = |g: f64| Mass::from_ug((g * 1e6).round() as i64);
         let kind = if drops.is_some() { Kind::Liquid } else { Kind::Thread };
-        let reading = |b: &str| Reading { balance: InstrumentName::new(b).ok(), step: Some(mass(STEP)) };
+        let reading = |b: &str| Reading { balance: InstrumentName::new(b).ok(), step: Some(mass(STEP)), ..Reading::default() };
         Trial {
             closures: drops.map(soil_common::closure).into_iter().collect(),
             tare: Some(mass(grams[0])),

@@ -15,6 +15,7 @@ pub(crate) const STATION: &[&str] = &[
     "bench",
     "instrument",
     "linking",
+    "balance_check",
     "log",
     "method",
     "profile",
@@ -56,6 +57,7 @@ pub(crate) const SETTLE: &[&str] =
 pub(crate) const COUNT: &[&str] = &["debounce_ms", "pause_ms", "gap_percent", "pulse", "bounce_ms"];
 pub(crate) const LINKING: &[&str] =
     &["near_g", "slice_minutes", "code_after_s", "repeat_print_s", "intention_hours", "slice_aloud_minutes"];
+pub(crate) const BALANCE_CHECK: &[&str] = &["every_hours", "tolerance_g", "overdue"];
 pub(crate) const LOG: &[&str] = &["level", "format"];
 
 /// A scenario or sheet file.

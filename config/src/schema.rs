@@ -51,6 +51,8 @@ struct Config {
     instrument: Option<Vec<Instrument>>,
     /// How weighings find their container.
     linking: Option<Linking>,
+    /// How often balances are checked with a reference mass; left out: nobody is reminded.
+    balance_check: Option<BalanceCheck>,
     /// What the program says about itself.
     log: Option<Log>,
     /// Methods of the laboratory, by name.
@@ -282,6 +284,21 @@ struct Linking {
     /// A slice owed this long is said aloud, minutes; default 5.
     #[schemars(range(min = 1, max = 240))]
     slice_aloud_minutes: Option<u32>,
+}
+
+/// How often balances are checked with a reference mass.
+#[derive(JsonSchema)]
+#[schemars(deny_unknown_fields)]
+#[expect(dead_code, reason = "only its shape is used")]
+struct BalanceCheck {
+    /// At least so often, hours; default 24.
+    #[schemars(range(min = 1, max = 8_760))]
+    every_hours: Option<u32>,
+    /// What a balance may be off by, grams; default: by the class of the reference mass.
+    tolerance_g: Option<f64>,
+    /// What a weighing on a balance that was not checked is worth: note or hold; default "note".
+    #[schemars(regex(pattern = r"^(note|hold)$"))]
+    overdue: Option<String>,
 }
 
 /// Levels of the log.

@@ -32,7 +32,7 @@ fn trial(kind: Kind, no: u32, drops: Option<u32>, water: f64) -> Trial {
         fact: Some(u64::from(no) + 9),
     };
     let balance = InstrumentName::new("pan-1").ok();
-    let reading = || Reading { balance: balance.clone(), step: Some(Mass::from_ug(10_000)) };
+    let reading = || Reading { balance: balance.clone(), step: Some(Mass::from_ug(10_000)), ..Reading::default() };
     Trial {
         kind,
         no,
@@ -82,6 +82,9 @@ fn main() {
         lines: Pooled { sum_sq: 1.2, df: 40 },
         threads: Pooled { sum_sq: 3.0, df: 40 },
         slopes: Slopes::default(),
+        pairs: Slopes { n: 40, ..Slopes::default() },
+        beside: Vec::new(),
+        balance_rule: None,
         balances: [(InstrumentName::new("pan-1").expect("a name"), Balance::default())].into(),
     };
     let begin = Instant::now();

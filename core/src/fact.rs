@@ -4,6 +4,7 @@
 //! serialised form is frozen by examples in the tests: a changed shape gets a
 //! new variant, never a changed old one.
 
+use crate::lab::entities::Reference;
 use crate::lab::role::Role;
 use crate::limits::Limits;
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
@@ -388,6 +389,17 @@ pub enum Fact {
         /// The answer.
         says: String,
     },
+    /// A check of a balance was begun: its next mass is the reference mass.
+    BalanceCheckBegun {
+        /// Which balance.
+        balance: InstrumentName,
+        /// With which reference mass.
+        reference: Reference,
+    },
+    /// A balance was checked with a reference mass.
+    BalanceChecked(BalanceChecked),
+    /// A cup was checked by hand.
+    CupChecked(CupChecked),
     /// A second person looked at a result.
     Reviewed {
         /// Of which specimen.
@@ -561,6 +573,41 @@ pub struct RunFailed {
     pub why: String,
 }
 
+/// A balance was checked with a reference mass.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct BalanceChecked {
+    /// Which balance.
+    pub balance: InstrumentName,
+    /// The weighing.
+    pub weighing: Seq,
+    /// The reference mass.
+    pub reference: Reference,
+    /// What the balance showed.
+    pub mass: Mass,
+    /// That, less the reference mass.
+    pub error: Mass,
+    /// What it may be off by.
+    pub tolerance: Mass,
+    /// It is not off by more.
+    pub passed: bool,
+}
+
+/// A cup was checked by hand.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct CupChecked {
+    /// Which cup, by its counter.
+    pub cup: InstrumentName,
+    /// Height of fall, millimetres.
+    pub drop_height_mm: f64,
+    /// What the wear of cup and tool is like.
+    pub wear: String,
+    /// The base: hard or soft, and of what.
+    pub base: String,
+    /// The grooving tool.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub tool: Option<String>,
+}
+
 impl Fact {
     /// Stable word for the kind of fact.
     pub fn kind(&self) -> &'static str {
@@ -609,6 +656,9 @@ impl Fact {
             Fact::NotObtainable { .. } => "not_obtainable",
             Fact::LimitsComputed { .. } => "limits_computed",
             Fact::CheckAnswered { .. } => "check_answered",
+            Fact::BalanceCheckBegun { .. } => "balance_check_begun",
+            Fact::BalanceChecked(_) => "balance_checked",
+            Fact::CupChecked(_) => "cup_checked",
             Fact::Reviewed { .. } => "reviewed",
         }
     }

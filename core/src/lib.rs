@@ -8,6 +8,7 @@ extern crate alloc;
 #[cfg(test)]
 extern crate std;
 
+pub mod beside;
 pub mod checks;
 pub mod evaluate;
 pub mod fact;

@@ -2,6 +2,7 @@
 //! running test, a scenario file and an old paper sheet.
 
 use crate::fact::Intention;
+use crate::lab::entities::{Checked, Seen};
 use crate::names::{ContainerId, InstrumentName, Operator, SpecimenId};
 use crate::quantity::Mass;
 use crate::stamp;
@@ -112,13 +113,23 @@ pub struct Trial {
     pub facts: Vec<Seq>,
 }
 
-/// Where a mass was read.
+/// Where a mass was read, and what is known around it.
 #[derive(Clone, Debug, Default, PartialEq, Eq)]
 pub struct Reading {
     /// Which balance; `None` when typed or not known.
     pub balance: Option<InstrumentName>,
     /// One step of its last printed digit.
     pub step: Option<Mass>,
+    /// What the balance showed before, while and after it; none when typed or printed on a key.
+    pub seen: Option<Seen>,
+    /// Time since what went before: of a wet mass the count, of a dry one the oven, µs.
+    pub after_us: Option<i64>,
+    /// Of an empty container: what it weighed empty the time before.
+    pub before: Option<Mass>,
+    /// Of an empty container: mass of its lid.
+    pub lid: Option<Mass>,
+    /// How the balance stood when last checked with a reference mass.
+    pub checked: Option<Checked>,
 }
 
 /// One penetration of the cone.

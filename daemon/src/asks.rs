@@ -19,7 +19,7 @@ const MOST_PASTE_UG: i64 = 10_000 * 1_000_000;
 const DEEPEST: usize = 16;
 
 /// Members that are numbers; everything else is text.
-const NUMBERS: [&str; 14] = [
+const NUMBERS: [&str; 15] = [
     "seq",
     "limit",
     "no",
@@ -32,6 +32,7 @@ const NUMBERS: [&str; 14] = [
     "clay_percent",
     "liquid_limit_oven_dried",
     "penetration_mm",
+    "drop_height_mm",
     "revision",
     "kind_no",
 ];

@@ -78,6 +78,7 @@ pub fn setup(instruments: &[(&str, &[&str])]) -> Setup {
         methods: BTreeMap::from([(method.name.clone(), method)]),
         linking: Linking::default(),
         balances: BTreeMap::new(),
+        balance_rule: None,
     }
 }
 

@@ -2,7 +2,7 @@
 
 use super::{LiquidRow, ScenarioSpecimen, Water, Weighed};
 use tarecup_core::fact::Intention;
-use tarecup_core::sheet::{Closure, DryWeighing, Kind, Penetration, Reading, Sheet, Trial};
+use tarecup_core::sheet::{Closure, DryWeighing, Kind, Penetration, Sheet, Trial};
 
 /// The sheet of one specimen, as a person typed it: no clocks, no facts, no
 /// oven record. A drop rate that the file does not state stays unknown.
@@ -85,7 +85,7 @@ fn trial(kind: Kind, no: u32, row: &Weighed, closures: Vec<Closure>) -> Trial {
         typed: true,
         by: None,
         balance: None,
-        readings: [const { Reading { balance: None, step: None } }; 3],
+        readings: Default::default(),
         cup: None,
         at_utc_us: None,
         facts: Vec::new(),

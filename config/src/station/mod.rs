@@ -12,6 +12,7 @@ use crate::{defaults, keys, text};
 use std::collections::BTreeSet;
 use std::net::SocketAddr;
 use std::path::{Path, PathBuf};
+use tarecup_core::limits::Severity;
 use tarecup_core::names::{BenchName, InstrumentName, MethodName, ProfileName, StationName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits};
@@ -47,6 +48,8 @@ pub struct Station {
     pub instruments: Vec<Instrument>,
     /// How weighings find their container.
     pub linking: Linking,
+    /// How often balances are checked with a reference mass, when that is asked for.
+    pub balance_check: Option<BalanceCheck>,
     /// What the program says about itself.
     pub log: Log,
     /// Shipped methods and the laboratory's own, by name.
@@ -187,6 +190,17 @@ pub struct Instrument {
     pub count: CountLimits,
     /// What is known of a balance beside its lines.
     pub weighs: Balance,
+}
+
+/// How often balances are checked with a reference mass.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct BalanceCheck {
+    /// At least so often.
+    pub every_hours: u32,
+    /// What a balance may be off by; by the class of the reference mass when left out.
+    pub tolerance: Option<Mass>,
+    /// What a weighing on a balance that was not checked is worth.
+    pub overdue: Severity,
 }
 
 /// How weighings and counts find their container.
@@ -345,7 +359,8 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
     let default_method = default_method(root, &methods, &broken);
     // Everything is read before anything is missed, so that all faults are told.
     let (lab, mqtt, broker) = (tables::lab(root), tables::mqtt(root), tables::broker(root));
-    let (linking, log, screen) = (tables::linking(root), tables::log(root), tables::screen(root));
+    let (linking, balance_check, log) = (tables::linking(root), tables::balance_check(root), tables::log(root));
+    let screen = tables::screen(root);
     let state_dir = root.get("state_dir").and_then(|e| tables::path(&e));
     let (signing_key_file, backup) = (tables::signing_key_file(root), tables::backup(root));
     let (lab, default_method) = (lab?, default_method?);
@@ -360,6 +375,7 @@ fn station(root: &Table<'_>, shipped: (Methods, Profiles), files: MethodFiles<'_
         benches,
         instruments,
         linking,
+        balance_check,
         log,
         methods,
         profiles,

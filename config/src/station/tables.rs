@@ -1,9 +1,12 @@
 //! The plain tables of the configuration file.
 
-use super::{Backup, Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, Screen, address};
+use super::{
+    Backup, BalanceCheck, Bench, Broker, BrokerUrl, Lab, Linking, Log, LogFormat, LogLevel, Mqtt, Scheme, Screen, address,
+};
 use crate::reader::{Entry, Table};
 use crate::{defaults, keys};
 use std::path::PathBuf;
+use tarecup_core::limits::Severity;
 use tarecup_core::names::{BenchName, StationName};
 use tarecup_core::quantity::Mass;
 
@@ -226,6 +229,15 @@ pub(super) fn linking(root: &Table<'_>) -> Linking {
         entry.fault(&says, "slice_aloud_minutes up to slice_minutes", "a smaller slice_aloud_minutes");
     }
     l
+}
+
+pub(super) fn balance_check(root: &Table<'_>) -> Option<BalanceCheck> {
+    let table = open(root, "balance_check", keys::BALANCE_CHECK)?;
+    let every_hours = table.get("every_hours").and_then(|e| e.whole(1..=8_760, "hours")).unwrap_or(24);
+    let tolerance = table.get("tolerance_g").and_then(|e| e.grams(Mass::from_ug(10_000_000))).map(|t| t.value);
+    let words = [("note", Severity::Note), ("hold", Severity::Hold)];
+    let overdue = table.get("overdue").and_then(|e| e.one_of(&words)).unwrap_or(Severity::Note);
+    Some(BalanceCheck { every_hours, tolerance, overdue })
 }
 
 pub(super) fn log(root: &Table<'_>) -> Log {

@@ -330,18 +330,27 @@ const OF_PRECISION: [&str; 4] = [
 ];
 
 /// Checks whose weight a method may say. What is missing or impossible is so in every method.
-const WEIGHED: [&str; 29] = [
+const WEIGHED: [&str; 43] = [
     "arithmetic",
+    "balance_failed",
+    "balance_overdue",
+    "balances",
     "both_sides",
     "closures",
+    "coarse_balance",
     "cone",
     "constant_mass",
     "cup",
     "display",
+    "drift",
     "drops",
+    "exchanged",
     "gaps",
     "interrupted",
+    "left_on_pan",
+    "lid",
     "nobody",
+    "non_plastic",
     "not_dry",
     "organic",
     "oven_clock",
@@ -350,16 +359,21 @@ const WEIGHED: [&str; 29] = [
     "penetrations",
     "rate",
     "same_container",
+    "same_masses",
     "scatter",
     "single_penetration",
     "slope",
     "small_mass",
     "spread",
+    "stood_dry",
+    "stood_wet",
+    "tare_changed",
     "threads",
     "typed",
     "u_line",
+    "warm",
     "window",
-    "non_plastic",
+    "zero",
 ];
 
 /// Choices, which may have a source too.

@@ -7,14 +7,19 @@
 //! replaces a mass. No check ever leaves a trial out.
 
 mod arithmetic;
+mod balances;
 mod closures;
 mod cone;
 mod constant_mass;
 mod display;
 mod drops;
 mod drying;
+mod exchanged;
+mod fit;
 mod gaps;
 mod interrupted;
+mod leftover;
+mod lid;
 mod line;
 mod masses;
 mod method;
@@ -23,7 +28,10 @@ mod nobody;
 mod non_plastic;
 mod not_obtainable;
 mod organic;
+mod outlier;
 mod oven_record;
+mod pairing;
+mod pan;
 mod rate;
 mod same_container;
 mod scatter;
@@ -31,7 +39,10 @@ mod shares;
 mod slope;
 mod small_mass;
 mod spread;
+mod standing;
+mod steep;
 mod tare_owed;
+mod tares;
 mod threads;
 mod typed;
 mod u_line;
@@ -90,8 +101,11 @@ pub struct Worked<'a> {
 const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     missing::check,
     tare_owed::check,
+    tares::check,
     masses::check,
     arithmetic::check,
+    pan::check,
+    balances::check,
     interrupted::check,
     drops::check,
     rate::check,
@@ -99,20 +113,27 @@ const ALL: &[fn(&Worked, &mut Vec<CheckRow>)] = &[
     closures::check,
     drying::check,
     constant_mass::check,
+    standing::check,
     small_mass::check,
     display::check,
     line::check,
     slope::check,
     scatter::check,
+    exchanged::check,
+    lid::check,
+    steep::check,
     windows::check,
     spread::check,
     threads::check,
+    outlier::check,
     not_obtainable::check,
     non_plastic::check,
     u_line::check,
+    pairing::check,
     organic::check,
     cone::check,
     same_container::check,
+    leftover::check,
     shares::check,
     oven_record::check,
     typed::check,
@@ -138,6 +159,15 @@ pub fn all(worked: &Worked) -> Vec<CheckRow> {
 /// Checks that, although notes, keep a result provisional: something is not there.
 pub fn keeps_provisional(check: &str) -> bool {
     matches!(check, "missing" | "tare_owed")
+}
+
+/// Checks that look at other specimens: only ever notes, and no reason to change a result that stands.
+pub fn rests_on_the_record(row: &CheckRow) -> bool {
+    let looks = matches!(
+        row.check.as_str(),
+        "scatter" | "outlier" | "steep" | "threads_apart" | "pairing" | "left_over" | "exchanged_across"
+    );
+    looks && row.severity == Severity::Note
 }
 
 impl<'a> Worked<'a> {

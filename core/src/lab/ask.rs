@@ -1,12 +1,12 @@
 //! What persons ask for. One closed set, the same for every way in.
 
-use super::entities::{Bench, Container, Latest, LooseWhat, Specimen};
+use super::entities::{Bench, Container, Latest, LooseWhat, MassClass, Specimen};
 use super::near::meant;
 use super::role::Role;
 use super::{Lab, New, Refusal};
 use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
 use crate::limits::{Severity, State};
-use crate::names::{BenchName, ContainerId, MethodName, Operator, SpecimenId};
+use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
 use crate::quantity::{Mass, MassUnit};
 use crate::sheet::{Kind, Seq};
 use crate::signal::Basis;
@@ -195,6 +195,27 @@ pub enum Ask {
     },
     /// Answer a check.
     AnswerCheck { specimen: SpecimenId, check: String, about: String, says: String, who: Operator },
+    /// Check a balance with a reference mass: the loose mass on its pan, else the next one.
+    CheckBalance {
+        balance: InstrumentName,
+        #[serde(deserialize_with = "mass_text")]
+        nominal_g: String,
+        #[serde(default, deserialize_with = "mass_text_option")]
+        certificate_g: Option<String>,
+        #[serde(default)]
+        class: Option<MassClass>,
+        who: Operator,
+    },
+    /// Say how a cup was found.
+    CheckCup {
+        cup: InstrumentName,
+        drop_height_mm: f64,
+        wear: String,
+        base: String,
+        #[serde(default)]
+        tool: Option<String>,
+        who: Operator,
+    },
     /// Mark a result as reviewed.
     Review { specimen: SpecimenId, who: Operator },
 }
@@ -238,6 +259,7 @@ impl Lab {
             Ask::IntoOven { .. } | Ask::OutOfOven { .. } | Ask::OvenOff { .. } => self.ask_oven(ask, at),
             Ask::ClockRight { who, why } => self.ask_clock_right(who, why),
             Ask::NotObtainable { .. } | Ask::AnswerCheck { .. } | Ask::Review { .. } => self.ask_result(ask),
+            Ask::CheckBalance { .. } | Ask::CheckCup { .. } => self.ask_checked(ask, at),
             Ask::SetAside { .. }
             | Ask::SetAsideTrial { .. }
             | Ask::AmendMass { .. }

@@ -57,6 +57,18 @@ pub struct Weighing {
     /// What the balance showed around it, for checks; none when typed or printed on a key.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub seen: Option<Seen>,
+    /// How the balance stood when last checked with a reference mass before it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub checked: Option<Checked>,
+}
+
+/// The latest check of a balance before a weighing.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Checked {
+    /// It kept its tolerance.
+    pub passed: bool,
+    /// How long before the weighing, µs.
+    pub ago_us: i64,
 }
 
 /// What a balance showed around a mass taken.
@@ -345,6 +357,9 @@ pub struct DryRecord {
     pub oven_recorded: bool,
     /// Clock the hours rest on.
     pub basis: Basis,
+    /// Time since it came out of the oven, where somebody recorded that, µs.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub out_us: Option<i64>,
 }
 
 /// A person's answer to a check.
@@ -511,6 +526,83 @@ pub struct Instrument {
     /// A mass that was printed, or lies loose on the pan.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub pan: Option<Pan>,
+    /// A check with a reference mass was begun: the next mass is it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub check_begun: Option<CheckBegun>,
+    /// Its latest checks with a reference mass, oldest first.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub checks: Vec<BalanceCheck>,
+    /// Of a cup: its latest checks, oldest first.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub cup_checks: Vec<CupCheck>,
+}
+
+/// A check of a balance that waits for its mass.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct CheckBegun {
+    /// With this reference mass.
+    pub reference: Reference,
+    /// When.
+    pub at: Stamp,
+    /// Who.
+    pub by: Option<Operator>,
+}
+
+/// A reference mass.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct Reference {
+    /// Its nominal mass.
+    pub nominal: Mass,
+    /// Its mass by its certificate.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub certificate: Option<Mass>,
+    /// Its class.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub class: Option<MassClass>,
+}
+
+/// Class of a reference mass by OIML R 111-1.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub enum MassClass {
+    /// F2.
+    F2,
+    /// M1.
+    M1,
+}
+
+/// A balance was checked with a reference mass.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct BalanceCheck {
+    /// The fact.
+    pub seq: Seq,
+    /// When.
+    pub at: Stamp,
+    /// What it showed, less the reference mass.
+    pub error: Mass,
+    /// What it may be off by.
+    pub tolerance: Mass,
+    /// Who.
+    pub by: Option<Operator>,
+}
+
+/// A cup was checked.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct CupCheck {
+    /// The fact.
+    pub seq: Seq,
+    /// When.
+    pub at: Stamp,
+    /// Height of fall, millimetres.
+    pub drop_height_mm: f64,
+    /// What the wear is like.
+    pub wear: String,
+    /// Its base.
+    pub base: String,
+    /// The grooving tool.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub tool: Option<String>,
+    /// Who.
+    pub by: Option<Operator>,
 }
 
 /// The latest mass of a balance, as long as another line or code can still refer to it.
@@ -595,9 +687,31 @@ impl Bench {
 }
 
 impl Instrument {
+    /// How it stood when last checked before a moment.
+    pub(super) fn checked_at(&self, at: &Stamp) -> Option<Checked> {
+        let latest = self.checks.iter().rev().find(|c| at.since(&c.at).us >= 0)?;
+        Some(Checked { passed: latest.passed(), ago_us: at.since(&latest.at).us })
+    }
     /// An instrument that was never heard.
     pub fn new(name: InstrumentName) -> Self {
-        Self { name, state: Connection::Waiting, detail: None, since: None, overrun_lines: 0, pan: None }
+        Self {
+            name,
+            state: Connection::Waiting,
+            detail: None,
+            since: None,
+            overrun_lines: 0,
+            pan: None,
+            check_begun: None,
+            checks: Vec::new(),
+            cup_checks: Vec::new(),
+        }
+    }
+}
+
+impl BalanceCheck {
+    /// It kept its tolerance.
+    pub fn passed(&self) -> bool {
+        self.error.abs() <= self.tolerance
     }
 }
 

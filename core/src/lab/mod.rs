@@ -12,6 +12,7 @@ pub mod statistics;
 
 pub mod advice;
 mod apply;
+mod checked;
 pub mod clock;
 mod code;
 mod correct;
@@ -31,7 +32,7 @@ use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator,
 use crate::quantity::Mass;
 use crate::sense::{CountRun, InputNo, LeftOnPan, MassTaken, Stayed};
 use crate::sheet::Seq;
-use crate::soil::uncertainty::Balance;
+use crate::soil::uncertainty::{Balance, BalanceRule};
 use crate::stamp::{SECOND_US, Stamp};
 use alloc::boxed::Box;
 use alloc::collections::{BTreeMap, BTreeSet};
@@ -69,6 +70,8 @@ pub struct Setup {
     pub linking: Linking,
     /// What is known of balances beside their lines.
     pub balances: BTreeMap<InstrumentName, Balance>,
+    /// How often balances are to be checked with a reference mass, when that is asked for.
+    pub balance_rule: Option<BalanceRule>,
 }
 
 /// Limits of linking weighings and counts.
@@ -280,6 +283,9 @@ impl Lab {
         let new = self.decide(input, &at)?;
         let mut outcome = Outcome::default();
         self.record(new, at, next_seq, &mut outcome);
+        let checks = self.checks_completed(&outcome);
+        let next = next_seq.saturating_add(outcome.facts.len() as Seq);
+        self.record(checks, at, next, &mut outcome);
         let follow = self.follow(&outcome);
         let next = next_seq.saturating_add(outcome.facts.len() as Seq);
         self.record(follow, at, next, &mut outcome);

@@ -110,6 +110,14 @@ impl OvenClock {
         }
     }
 
+    /// How long before a moment somebody recorded that it came out, µs, when it did not go in again.
+    fn out_before(&self, now: &Stamp) -> Option<i64> {
+        let inside = self.since.is_some_and(|since| now.since(&since).us >= 0);
+        let stay = self.stays.iter().rev().find(|s| now.since(&s.from).us >= 0)?;
+        let ago = now.since(&stay.to).us;
+        (!inside && stay.ended_by.is_none() && ago >= 0).then_some(ago)
+    }
+
     /// Somebody recorded every stay that began before a moment.
     fn recorded_before(&self, now: &Stamp) -> bool {
         let began = |from: &Stamp| now.not_before(from);
@@ -137,6 +145,7 @@ pub(super) fn work_hours(dries: &mut [DryRecord], oven: &OvenClock, clock: &Cloc
         dry.since_previous_hours = previous.map(|before| hours(total.saturating_sub(before)));
         dry.oven_recorded = oven.recorded_before(&dry.weighing.at);
         dry.basis = basis;
+        dry.out_us = oven.out_before(&dry.weighing.at);
         previous = Some(total);
     }
 }
@@ -317,8 +326,10 @@ mod tests {
             step: None,
             corrected: None,
             seen: None,
+            checked: None,
         };
-        DryRecord { weighing, oven_hours: 0.0, since_previous_hours: None, oven_recorded: false, basis: Basis::Monotonic }
+        let (since_previous_hours, oven_recorded, out_us) = (None, false, None);
+        DryRecord { weighing, oven_hours: 0.0, since_previous_hours, oven_recorded, basis: Basis::Monotonic, out_us }
     }
 
     /// Hours, hours since the previous one, and whether recorded, of dry weighings at these hours.

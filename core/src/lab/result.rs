@@ -3,10 +3,13 @@
 use super::entities::{Count, Entity, Specimen, TrialRecord, Weighing};
 use super::statistics::Statistics;
 use super::{Lab, New, Outcome, oven};
+use crate::beside::{Beside, BesideTrial};
+use crate::checks::rests_on_the_record;
 use crate::evaluate::evaluate_with;
 use crate::fact::{Counted, Fact, Limit, Recorded};
 use crate::limits::{Limits, State};
 use crate::method::Method;
+use crate::quantity::Mass;
 use crate::sheet::{Answer, Closure, Kind, Penetration, Reading, Sheet, Trial};
 use crate::soil::determined::about;
 use crate::soil::uncertainty::Laboratory;
@@ -27,7 +30,7 @@ impl Lab {
 
     fn new_result(&self, specimen: &Specimen, causes: &[String]) -> Option<Fact> {
         let method = self.setup.methods.get(&specimen.method)?;
-        let sheet = sheet(specimen);
+        let sheet = self.sheet_of(specimen);
         let stated = sheet.liquid_not_obtainable.is_some() || sheet.plastic_not_obtainable.is_some();
         // Once there was a result, the specimen must not keep it when its determinations go.
         if sheet.trials.is_empty() && !stated && specimen.limits.is_none() {
@@ -66,6 +69,9 @@ impl Lab {
             threads: others.threads.pooled(),
             slopes: others.slopes,
             balances: self.setup.balances.clone(),
+            pairs: others.pairs,
+            beside: self.beside(specimen),
+            balance_rule: self.setup.balance_rule,
         }
     }
 }
@@ -84,6 +90,7 @@ fn without_the_record(mut limits: Limits) -> Limits {
         (limit.u, limit.interval_95, limit.u_from) = (None, None, None);
     }
     (limits.plasticity_index.u, limits.plasticity_index.interval_95) = (None, None);
+    limits.checks.retain(|c| c.answered.is_some() || !rests_on_the_record(c));
     limits
 }
 
@@ -197,15 +204,74 @@ fn trial(specimen: &Specimen, t: &TrialRecord) -> Trial {
         typed,
         by: wet.and_then(|w| w.by.clone()),
         balance: wet.and_then(|w| w.balance.clone()),
-        readings: [t.tare.as_ref(), wet, t.dries.last().map(|d| &d.weighing)].map(reading),
+        readings: readings(t, &counts),
         cup: counts.last().and_then(|c| c.cup.clone()),
         at_utc_us: wet.map(|w| w.at.utc_us),
         facts: counts.iter().map(|c| c.seq).chain(weighings.map(|w| w.seq)).collect(),
     }
 }
 
+fn readings(t: &TrialRecord, counts: &[&Count]) -> [Reading; 3] {
+    let [tare, mut wet, mut dry] = [t.tare.as_ref(), t.wets.last(), t.dries.last().map(|d| &d.weighing)].map(reading);
+    // A slice belongs to the moment of its count; a typed one was written down at another.
+    let count = counts.last().filter(|c| !c.typed);
+    let slice = t.wets.first().filter(|w| !w.typed);
+    wet.after_us = count.zip(slice).map(|(c, w)| w.at.since(&c.at).us);
+    dry.after_us = t.dries.last().filter(|d| !d.weighing.typed).and_then(|d| d.out_us);
+    [tare, wet, dry]
+}
+
 fn reading(weighing: Option<&Weighing>) -> Reading {
-    weighing.map_or(Reading::default(), |w| Reading { balance: w.balance.clone(), step: w.step })
+    weighing.map_or(Reading::default(), |w| Reading {
+        balance: w.balance.clone(),
+        step: w.step,
+        seen: w.seen,
+        checked: w.checked,
+        ..Reading::default()
+    })
+}
+
+impl Lab {
+    /// A specimen's sheet with what its containers tell: the empty weighing before, and the lid.
+    fn sheet_of(&self, specimen: &Specimen) -> Sheet {
+        let mut sheet = sheet(specimen);
+        for (trial, record) in sheet.trials.iter_mut().zip(&specimen.trials) {
+            let (Some(container), Some(tare)) = (self.containers.get(&record.container), &record.tare) else { continue };
+            let before = container.tares.iter().rev().find(|t| t.seq < tare.seq);
+            trial.readings[0].before = before.map(|w| w.mass);
+            let with_lid = container.with_lid.last().map(|w| w.mass - tare.mass);
+            trial.readings[0].lid = container.lid.or(with_lid).filter(|lid| *lid > Mass::ZERO);
+        }
+        sheet
+    }
+
+    /// Specimens that are tested at the same time: open ones, and those whose soil still lies in containers.
+    fn beside(&self, specimen: &Specimen) -> Vec<Beside> {
+        let needed = self.needed();
+        let others = self.specimens.values().filter(|s| s.id != specimen.id && (s.open() || needed.contains(&s.id)));
+        others.map(beside).collect()
+    }
+}
+
+fn beside(s: &Specimen) -> Beside {
+    let masses = |t: &TrialRecord| {
+        let dry = t.dries.last().map(|d| d.weighing.mass);
+        [t.tare.as_ref().map(|w| w.mass), t.wets.last().map(|w| w.mass), dry]
+    };
+    let active = || s.trials.iter().filter(|t| t.set_aside.is_none());
+    let row = |t: &TrialRecord| {
+        let about = about(t.kind, t.no);
+        BesideTrial { about, container: t.container.clone(), masses: masses(t) }
+    };
+    let limits = s.limits.as_ref();
+    let threads = active().filter(|t| t.kind == Kind::Thread);
+    Beside {
+        specimen: s.id.clone(),
+        trials: active().map(row).collect(),
+        liquid: limits.and_then(|l| l.liquid_limit.as_ref()).map(|l| l.value),
+        plastic: limits.and_then(|l| l.plastic_limit.as_ref()).map(|l| l.value),
+        threads_at_utc_us: threads.flat_map(|t| &t.wets).map(|w| w.at.utc_us).max(),
+    }
 }
 
 fn penetration(count: &Count) -> Option<Penetration> {

@@ -8,6 +8,7 @@
 use crate::limits::{Limits, LiquidLimit, State};
 use crate::method::Device;
 use crate::sheet::Kind;
+use crate::soil::chart;
 use crate::soil::slopes::Slopes;
 use crate::soil::stats;
 use crate::soil::uncertainty::Pooled;
@@ -41,6 +42,9 @@ pub struct Statistics {
     pub threads: Sums,
     /// Slopes of flow lines in the cup.
     pub slopes: Slopes,
+    /// Plasticity indices, as shares of what the A-line has at their liquid limit, against liquid limits.
+    #[serde(default)]
+    pub pairs: Slopes,
 }
 
 impl Sums {
@@ -92,6 +96,11 @@ impl Statistics {
             let squares = waters.iter().map(|w| (w - mean) * (w - mean)).sum();
             share.threads = Sums::of(squares, waters.len() as u64 - 1);
         }
+        if let (Some(liquid), Some(plastic)) = (&limits.liquid_limit, &limits.plastic_limit) {
+            if let Some(ratio) = chart::a_line_ratio(liquid.value, plastic.value) {
+                share.pairs = Slopes::of(liquid.value, ratio);
+            }
+        }
         share
     }
 
@@ -102,6 +111,7 @@ impl Statistics {
             cone: self.cone.plus(other.cone),
             threads: self.threads.plus(other.threads),
             slopes: self.slopes.plus(other.slopes),
+            pairs: self.pairs.plus(other.pairs),
         }
     }
 
@@ -112,6 +122,7 @@ impl Statistics {
             cone: self.cone.minus(other.cone),
             threads: self.threads.minus(other.threads),
             slopes: self.slopes.minus(other.slopes),
+            pairs: self.pairs.minus(other.pairs),
         }
     }
 

@@ -29,6 +29,10 @@ impl Lab {
         if let Some(weighing) = self.repeated_slip(balance, &taken) {
             return vec![New::plain(Fact::SlipRepeated { weighing, input: taken.input }).through(taken.input)];
         }
+        if self.check_waits(balance, &taken.at) {
+            let why = String::from("it is the check of the balance with a reference mass");
+            return vec![self.weighed(balance, taken, self.only_bench(balance), Err(why))];
+        }
         let reach = self.hands_at(balance);
         let (bench, link) = match reach.as_slice() {
             [] => (

@@ -58,6 +58,13 @@ pub fn above_u_line(liquid_limit: f64, plasticity_index: f64) -> bool {
     plasticity_index > u_line(liquid_limit) + ON_LINE || liquid_limit < 16.0 - ON_LINE
 }
 
+/// Plasticity index as a share of that of the A-line at the same liquid limit; nothing where the A-line is so low
+/// (PI 4, up to LL 25.5) that a share of it says little.
+pub fn a_line_ratio(liquid_limit: f64, plastic_limit: f64) -> Option<f64> {
+    let line = a_line(liquid_limit);
+    (line > 4.0).then(|| (liquid_limit - plastic_limit) / line)
+}
+
 /// Group of the fines by the reported limits.
 pub fn group(liquid_limit: f64, plasticity_index: f64) -> Group {
     let on_or_above = plasticity_index >= a_line(liquid_limit) - ON_LINE;

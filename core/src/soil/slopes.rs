@@ -82,6 +82,35 @@ impl Slopes {
         let sd = libm::sqrt(rest / (n - 2.0));
         (expected.is_finite() && sd.is_finite()).then_some((expected, sd))
     }
+
+    /// What a new specimen of this liquid limit is expected to have, with the standard deviation of such a
+    /// prediction (that of the line at this place included) and its degrees of freedom; from so many specimens on.
+    pub fn predicted(&self, limit: f64, from: u64) -> Option<Predicted> {
+        if self.n < from.max(4) {
+            return None;
+        }
+        let n = self.n as f64;
+        let [x, y, xx, xy, yy] = [self.limit, self.slope, self.limit_sq, self.product, self.slope_sq].map(|v| v as f64 / COARSE);
+        let (sxx, sxy, syy) = (xx - x * x / n, xy - x * y / n, yy - y * y / n);
+        if sxx <= 0.0 {
+            return None;
+        }
+        let (slope, off) = (sxy / sxx, limit - x / n);
+        let variance = (syy - slope * sxy).max(0.0) / (n - 2.0) * (1.0 + 1.0 / n + off * off / sxx);
+        let (mean, sd) = (y / n + slope * off, libm::sqrt(variance));
+        (mean.is_finite() && sd.is_finite() && sd > 0.0).then_some(Predicted { mean, sd, freedom: self.n - 2 })
+    }
+}
+
+/// What is expected of a new specimen.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Predicted {
+    /// The expected value.
+    pub mean: f64,
+    /// Standard deviation of a single one about it.
+    pub sd: f64,
+    /// Degrees of freedom of that.
+    pub freedom: u64,
 }
 
 #[cfg(test)]

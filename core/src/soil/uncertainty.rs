@@ -14,9 +14,11 @@ use super::flow::FlowLine;
 use super::limits::CONFIDENCE;
 use super::slopes::Slopes;
 use super::student;
-use crate::limits::{LiquidLimit, PlasticLimit, PlasticityIndex};
+use crate::beside::Beside;
+use crate::limits::{LiquidLimit, PlasticLimit, PlasticityIndex, Severity};
 use crate::method::{Device, LiquidHow, Method, Uncertainty};
 use crate::names::InstrumentName;
+use crate::quantity::Mass;
 use crate::sheet::Kind;
 use alloc::collections::BTreeMap;
 use alloc::format;
@@ -61,6 +63,23 @@ pub struct Laboratory {
     pub slopes: Slopes,
     /// Its balances.
     pub balances: BTreeMap<InstrumentName, Balance>,
+    /// Plasticity indices as shares of the A-line against liquid limits; the specimen itself left out.
+    pub pairs: Slopes,
+    /// Specimens tested at the same time.
+    pub beside: Vec<Beside>,
+    /// How often balances are to be checked with a reference mass, when that is asked for.
+    pub balance_rule: Option<BalanceRule>,
+}
+
+/// How often balances are to be checked with a reference mass.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct BalanceRule {
+    /// At least so often, µs.
+    pub every_us: i64,
+    /// Tolerance of the check; left out: that of the reference mass's class and a step of the balance.
+    pub tolerance: Option<Mass>,
+    /// What a weighing without a check in this time is worth.
+    pub overdue: Severity,
 }
 
 type Name<'a> = Option<&'a InstrumentName>;
@@ -137,10 +156,21 @@ impl<'a> Known<'a> {
     }
 }
 
+/// Standard uncertainty of one reading of a balance, grams: its last digit and its repeatability.
+pub fn reading_of(method: &Method, lab: &Laboratory, balance: Option<&InstrumentName>, step_g: Option<f64>) -> f64 {
+    Known::new(method, lab).reading(balance, step_g)
+}
+
 /// Standard uncertainty of a water content that comes from weighing alone.
 pub fn of_water(t: &Determined, method: &Method, lab: &Laboratory) -> Option<f64> {
     let known = Known::new(method, lab);
     known.water(t).map(|b| b.u(&known)).filter(|u| u.is_finite())
+}
+
+/// What careful trials of this laboratory scatter by: its own record, with what the method states while that is short.
+pub fn usual(stated: (f64, u32), history_from: u32, lab: Pooled) -> Pooled {
+    let prior = Pooled { sum_sq: stated.0 * stated.0 * f64::from(stated.1), df: u64::from(stated.1) };
+    if lab.df > 0 && lab.df >= u64::from(history_from) { lab } else { prior.with(lab) }
 }
 
 /// A standard deviation, how well it is known, and whence.
@@ -153,9 +183,8 @@ struct Scatter {
 
 /// What careful trials scatter by. `own`: these trials about their own line.
 fn scatter(stated: (f64, u32), history_from: u32, lab: Pooled, own: Pooled) -> Scatter {
-    let prior = Pooled { sum_sq: stated.0 * stated.0 * f64::from(stated.1), df: u64::from(stated.1) };
     let enough = lab.df > 0 && lab.df >= u64::from(history_from);
-    let base = if enough { lab } else { prior.with(lab) };
+    let base = usual(stated, history_from, lab);
     let all = base.with(own);
     if own.stands_out_of(base) {
         let from = String::from("these trials alone: they scatter more than careful work does");
@@ -185,6 +214,10 @@ impl Pooled {
     }
     /// Whether careful work scatters so only once in a hundred times (F test, one-sided).
     fn stands_out_of(self, base: Pooled) -> bool {
+        self.is_rarer_than(RARE, base)
+    }
+    /// Whether careful work scatters so less often than this (F test, one-sided).
+    pub fn is_rarer_than(self, rare: f64, base: Pooled) -> bool {
         let (own, others) = (self.variance(), base.variance());
         if self.df == 0 || own == 0.0 {
             return false;
@@ -195,7 +228,7 @@ impl Pooled {
         if !(share > 0.0 && share < 1.0) || base.df == 0 {
             return true;
         }
-        FisherSnedecor::new(above, below).ok().is_none_or(|f| 1.0 - f.cdf(own / others) < RARE)
+        FisherSnedecor::new(above, below).ok().is_none_or(|f| 1.0 - f.cdf(own / others) < rare)
     }
 }
 

@@ -6,7 +6,7 @@ use crate::asks::{Read, refusal};
 use crate::keys::hex;
 use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
-use tarecup_core::lab::entities::{Bench, Container, Entity, Specimen};
+use tarecup_core::lab::entities::{BalanceCheck, Bench, Container, CupCheck, Entity, Instrument, Specimen};
 use tarecup_core::lab::statistics::Sums;
 use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish, meant};
 use tarecup_core::limits::{Limits, State};
@@ -198,6 +198,7 @@ impl Desk {
             })),
             "lines": ear.understood, "rejects": ear.rejects, "last_reject": ear.last_reject,
             "overrun_lines": state.map_or(0, |s| s.overrun_lines),
+            "balance_checks": state.map(balance_checks), "cup_check": state.and_then(|s| s.cup_checks.last()).map(cup_check),
         })
     }
 
@@ -324,4 +325,14 @@ impl Desk {
             "offers": self.beside.get(super::OFFERS), "recording": self.beside.get("recording"), "unread": self.beside.get("unread"),
         })
     }
+}
+
+/// Checks of a balance with a reference mass, oldest first: enough for a chart of its drift.
+fn balance_checks(state: &Instrument) -> Vec<Value> {
+    let one = |c: &BalanceCheck| json!({"at": c.at.rfc3339(), "error_g": grams(c.error), "tolerance_g": grams(c.tolerance), "passed": c.passed(), "by": c.by});
+    state.checks.iter().map(one).collect()
+}
+
+fn cup_check(c: &CupCheck) -> Value {
+    json!({"at": c.at.rfc3339(), "drop_height_mm": c.drop_height_mm, "wear": c.wear, "base": c.base, "tool": c.tool, "by": c.by})
 }

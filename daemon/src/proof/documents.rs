@@ -94,6 +94,7 @@ pub(crate) fn nothing() -> Setup {
         methods: Default::default(),
         default_method: MethodName::new("none").unwrap_or_else(|_| unreachable!("a plain name")),
         balances: Default::default(),
+        balance_rule: None,
         linking: Default::default(),
     }
 }

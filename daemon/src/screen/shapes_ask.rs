@@ -222,6 +222,21 @@ pub enum AskShape {
         says: String,
         who: Option<String>,
     },
+    CheckBalance {
+        balance: String,
+        nominal_g: Grams,
+        certificate_g: Option<Grams>,
+        class: Option<String>,
+        who: Option<String>,
+    },
+    CheckCup {
+        cup: String,
+        drop_height_mm: f64,
+        wear: String,
+        base: String,
+        tool: Option<String>,
+        who: Option<String>,
+    },
     Review {
         specimen: String,
         who: Option<String>,
@@ -280,6 +295,8 @@ mod tests {
             json!({"ask":"clock_right","who":"AB","why":"w"}),
             json!({"ask":"not_obtainable","specimen":"S","limit":"liquid","because":"b","who":"AB"}),
             json!({"ask":"answer_check","specimen":"S","check":"c","about":"a","says":"s","who":"AB"}),
+            json!({"ask":"check_balance","balance":"pan-1","nominal_g":"50","certificate_g":"50.0004","class":"F2","who":"AB"}),
+            json!({"ask":"check_cup","cup":"cup-1","drop_height_mm":10.0,"wear":"w","base":"b","tool":"t","who":"AB"}),
             json!({"ask":"review","specimen":"S","who":"AB"}),
         ];
         all.sort_by_key(|a| a["ask"].as_str().map(String::from));
@@ -290,13 +307,13 @@ mod tests {
     fn described(ask: &Ask) -> usize {
         use Ask::*;
         match ask {
-            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 32,
-            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 32,
-            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 32,
-            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 32,
-            Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 32,
-            Slid { .. } | GrooveTore { .. } | ClockRight { .. } => 32,
-            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 32,
+            OpenSpecimen { .. } | SignIn { .. } | SignOut { .. } | Intend { .. } | IntendNothing { .. } => 34,
+            Code { .. } | SayRole { .. } | Tie { .. } | TieCount { .. } | SetAside { .. } | SetAsideTrial { .. } => 34,
+            AmendMass { .. } | AmendDrops { .. } | TypeMass { .. } | TypeDrops { .. } | NewPaste { .. } => 34,
+            Undo { .. } | RegisterContainer { .. } | FreeContainer { .. } | IntoOven { .. } => 34,
+            Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 34,
+            Slid { .. } | GrooveTore { .. } | ClockRight { .. } | CheckBalance { .. } | CheckCup { .. } => 34,
+            OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 34,
         }
     }
 

@@ -11,12 +11,13 @@ use std::collections::BTreeMap;
 use std::sync::Arc;
 use tarecup_config::station::{InstrumentKind, Station};
 use tarecup_core::lab::{Linking, Setup};
+use tarecup_core::limits::Severity;
 use tarecup_core::method::Method;
 use tarecup_core::names::{BenchName, InstrumentName, MethodName};
 use tarecup_core::quantity::Mass;
 use tarecup_core::sense::{CountLimits, SettleLimits, Talks};
-use tarecup_core::soil::uncertainty::Balance;
-use tarecup_core::stamp::SECOND_US;
+use tarecup_core::soil::uncertainty::{Balance, BalanceRule};
+use tarecup_core::stamp::{HOUR_US, SECOND_US};
 use tarecup_drivers::port::PortSettings;
 use tarecup_drivers::port::pulse::PulseSettings;
 use tarecup_drivers::profile::{Profile, ProfileText};
@@ -36,6 +37,8 @@ pub(super) struct Kept {
     methods: BTreeMap<MethodName, Method>,
     default_method: MethodName,
     linking: LinkingKept,
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    balance_check: Option<BalanceCheckKept>,
     mqtt: Value,
     /// The public half of the key that heads are signed with.
     #[serde(default, skip_serializing_if = "Option::is_none")]
@@ -58,6 +61,13 @@ struct InstrumentKept {
     count: CountLimits,
     #[serde(default)]
     weighs: Balance,
+}
+
+#[derive(Serialize, Deserialize)]
+struct BalanceCheckKept {
+    every_hours: u32,
+    tolerance_ug: Option<Mass>,
+    overdue: Severity,
 }
 
 #[derive(Serialize, Deserialize)]
@@ -106,6 +116,11 @@ impl Kept {
                 intention_hours: linking.intention_hours,
                 slice_aloud_minutes: linking.slice_aloud_minutes,
             },
+            balance_check: station.balance_check.map(|c| BalanceCheckKept {
+                every_hours: c.every_hours,
+                tolerance_ug: c.tolerance,
+                overdue: c.overdue,
+            }),
             mqtt: json!({"root": station.mqtt.root, "retain_days": station.mqtt.retain_days}),
             signing_key: key.map(|k| k.public().to_string()),
             time_passes,
@@ -125,6 +140,11 @@ impl Kept {
             methods: self.methods.clone(),
             default_method: self.default_method.clone(),
             balances: self.instruments.iter().map(|i| (i.name.clone(), i.weighs)).collect(),
+            balance_rule: self.balance_check.as_ref().map(|c| BalanceRule {
+                every_us: i64::from(c.every_hours) * HOUR_US,
+                tolerance: c.tolerance_ug,
+                overdue: c.overdue,
+            }),
             linking: Linking {
                 near: linking.near_ug,
                 slice_us: seconds(linking.slice_minutes) * 60,

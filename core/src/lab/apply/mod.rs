@@ -60,6 +60,7 @@ impl Lab {
             Fact::SetAside { what, fault, why } => self.apply_set_aside(*what, *fault, said(r, why), touched),
             Fact::ClosureFailed { bench, .. } => self.apply_bench(bench, r, touched),
             Fact::PanWatched { .. } | Fact::LeftOnPan { .. } => self.apply_seen(r, touched),
+            Fact::BalanceCheckBegun { .. } | Fact::BalanceChecked(_) | Fact::CupChecked(_) => self.apply_checked(r, touched),
             Fact::Explained { what, says } => self.apply_explained(*what, said(r, says), touched),
             Fact::TrialMoved { .. } => self.apply_moved(r, touched),
             Fact::TrialSetAside { specimen, trial, no, why } => {

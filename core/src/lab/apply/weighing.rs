@@ -56,8 +56,9 @@ impl Lab {
         let step = weighed.taken.map(|t| t.step);
         let seen = weighed.taken.map(|t| Seen { zero: t.zero.map(|z| z.mass), trace: t.trace, ..Seen::default() });
         let seen = seen.filter(|s| *s != Seen::default());
-        let weighing =
-            Weighing { seq: r.seq, mass, balance: weighed.balance.clone(), at, by, typed, step, corrected: None, seen };
+        let checked = weighed.balance.as_ref().and_then(|b| self.instruments.get(b)).and_then(|i| i.checked_at(&at));
+        let balance = weighed.balance.clone();
+        let weighing = Weighing { seq: r.seq, mass, balance, at, by, typed, step, corrected: None, seen, checked };
         self.lies_on_pan(weighed, r.seq, touched);
         match &weighed.link {
             Some(link) => self.apply_link(&weighing, link, touched),
@@ -245,6 +246,7 @@ impl Lab {
             since_previous_hours: None,
             oven_recorded: false,
             basis: Clock::Monotonic,
+            out_us: None,
         };
         record.dries.insert(place, dry);
         work_hours(&mut record.dries, oven, &self.clock);
