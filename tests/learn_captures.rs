@@ -13,6 +13,7 @@ use support::{Learner, candidate, compiled, decoded, hints, judge, learned, stor
 use tarecup_config::profiles::shipped;
 use tarecup_core::quantity::Mass;
 use tarecup_drivers::learn::{Hints, Learned, Piece};
+use tarecup_drivers::profile::Profile;
 use tarecup_simulators::captures::{Answer, Capture, Count, Kind, Score, Truth, generate};
 use tarecup_simulators::rng::Rng;
 
@@ -207,6 +208,12 @@ fn strays(truth: &Truth, answer: &Answer) -> Vec<String> {
     strays
 }
 
+/// A counter that sends a bare byte at each drop hears a drop in that byte wherever it stands: no line tells them apart.
+fn drops_by_byte(profile: &Profile, bytes: &[u8]) -> bool {
+    let single = profile.text().frame.single.as_bytes();
+    bytes.iter().any(|b| single.contains(b))
+}
+
 #[test]
 fn no_learned_profile_reads_masses_or_counts_out_of_other_instruments() {
     let all = stored();
@@ -217,13 +224,18 @@ fn no_learned_profile_reads_masses_or_counts_out_of_other_instruments() {
         }
     }
     let learned_ones = profiles.len();
-    for source in shipped().values() {
+    for source in shipped().expect("shipped profiles").values() {
         profiles.push((source.name.to_string(), compiled(&source.text).expect("a shipped profile")));
     }
-    assert!(learned_ones >= 40 && profiles.len() >= learned_ones + 10, "{learned_ones} learned");
     let mut complaints = Vec::new();
-    for (of, capture) in &all {
+    let mut excused = 0;
+    // A code that is a mass in all its letters is read as one by whoever reads masses: such captures prove nothing here.
+    for (of, capture) in all.iter().filter(|(_, c)| c.truth.fair || c.truth.kind != Kind::Scanner) {
         for (by, profile) in profiles.iter().filter(|(by, _)| by != of) {
+            if drops_by_byte(profile, &capture.bytes) {
+                excused += 1;
+                continue;
+            }
             let strays = strays(&capture.truth, &decoded(profile, &capture.bytes));
             if let Some(first) = strays.first() {
                 complaints.push(format!("{of} through {by}: {} strays, first {first}", strays.len()));
@@ -231,8 +243,9 @@ fn no_learned_profile_reads_masses_or_counts_out_of_other_instruments() {
         }
     }
     let tried = all.len() * profiles.len();
-    println!("{tried} pairs, {} with strays", complaints.len());
-    assert!(complaints.is_empty(), "{} of {tried} pairs:\n{}", complaints.len(), complaints.join("\n"));
+    println!("{tried} pairs, {excused} excused, {} with strays:\n{}", complaints.len(), complaints.join("\n"));
+    assert!(learned_ones >= 40 && profiles.len() >= learned_ones + 10, "{learned_ones} learned");
+    assert!(complaints.is_empty(), "{} of {tried} pairs", complaints.len());
 }
 
 // ---- controls: what the exam must complain of ----------------------------------------------------------------------
@@ -316,7 +329,8 @@ fn wrong_learners_fail_the_exam() {
 #[test]
 fn strays_are_seen() {
     let (_, capture) = stored().into_iter().find(|(name, _)| name.starts_with("b01")).expect("a balance");
-    let mut answer = Answer { readings: vec![(21_430_000, None, tarecup_simulators::captures::Basis::Unmarked)], ..Answer::default() };
+    let mut answer =
+        Answer { readings: vec![(21_430_000, None, tarecup_simulators::captures::Basis::Unmarked)], ..Answer::default() };
     assert_eq!(strays(&capture.truth, &answer), [""; 0]);
     answer.readings[0].0 = 2_143_000;
     answer.counts.push(Count::Total(21));

@@ -40,11 +40,22 @@ pub(super) fn capture(rng: &mut Rng) -> Capture {
         made.layout.unit.silent = true;
         told.unit = Some(made.layout.unit.text);
     }
-    let mut capture = speak(rng, &made);
-    capture.told = told;
+    // Others leave out the point; then it takes masses that are known.
+    let implied = !silent && rng.chance(0.03);
+    if implied {
+        made.layout.number.implied = true;
+        made.plan.tare = false;
+    }
+    let (moments, loads) = play(rng, made.plan);
+    let mut capture = from_moments(rng, &made, &moments);
+    if implied {
+        told.masses_ug = loads.map(|steps| made.layout.ug(steps)).to_vec();
+        capture.about += ", masses told";
+    }
     if silent {
         capture.about += ", unit told";
     }
+    capture.told = told;
     capture
 }
 

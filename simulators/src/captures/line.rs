@@ -108,6 +108,11 @@ impl Layout {
         body
     }
 
+    /// So many steps of the last digit in micrograms.
+    pub fn ug(&self, steps: i64) -> i64 {
+        steps * self.unit.size / 10i64.pow(u32::try_from(self.number.decimals).unwrap_or(0))
+    }
+
     fn mass(&self, moment: &Moment, body: &mut Body) {
         let unit = self.unit;
         let shown = if unit.at_rest_only && !moment.steady { " ".repeat(unit.text.len()) } else { unit.text.to_string() };
@@ -128,7 +133,7 @@ impl Layout {
         body.text += &written;
         body.text += &after;
         body.reading = Some(Reading {
-            mass_ug: steps * unit.size / 10i64.pow(u32::try_from(self.number.decimals).unwrap_or(0)),
+            mass_ug: self.ug(steps),
             steady: (self.marks != Marks::None).then_some(moment.steady),
             basis: match (&self.basis, moment.net) {
                 (BasisMarks::None, _) => Basis::Unmarked,
@@ -267,10 +272,9 @@ pub(super) fn parts(rng: &mut Rng, marks: &Marks, basis: &BasisMarks, number: &N
         front.push(Part::Text((pick(rng, &words::PREFIXES)).into()));
     }
     let mut back = Vec::new();
-    for part in [(*basis != BasisMarks::None).then_some(Part::Basis), (*marks != Marks::None).then_some(Part::Marks)] {
-        if let Some(part) = part {
-            if rng.chance(0.45) { front.push(part) } else { back.push(part) }
-        }
+    let shown = [(*basis != BasisMarks::None).then_some(Part::Basis), (*marks != Marks::None).then_some(Part::Marks)];
+    for part in shown.into_iter().flatten() {
+        if rng.chance(0.45) { front.push(part) } else { back.push(part) }
     }
     if rng.chance(0.06) {
         let last = front.pop();

@@ -121,7 +121,7 @@ impl Number {
 fn grouped(whole: &str, between: char) -> String {
     let mut out = String::new();
     for (i, c) in whole.chars().enumerate() {
-        if i > 0 && (whole.len() - i) % 3 == 0 {
+        if i > 0 && (whole.len() - i).is_multiple_of(3) {
             out.push(between);
         }
         out.push(c);

@@ -176,11 +176,8 @@ pub(super) fn join<T: Says>(rng: &mut Rng, mut frames: Vec<Frame<T>>, wrap: &Wra
     if fate.noise {
         disturb(rng, &mut frames, wrap, fate.even);
     }
-    if let Some(check) = wrap.check
-        && frames.len() >= 12
-        && rng.chance(0.4)
-    {
-        flip(rng, &mut frames, check);
+    if wrap.check.is_some() && frames.len() >= 12 && rng.chance(0.4) {
+        flip(rng, &mut frames);
     }
     if fate.echo {
         echo(rng, &mut frames, wrap);
@@ -265,13 +262,12 @@ fn disturb<T: Says>(rng: &mut Rng, frames: &mut Vec<Frame<T>>, wrap: &Wrap, even
 }
 
 /// Changes one digit of one frame, so that its check value does not agree.
-fn flip<T: Says>(rng: &mut Rng, frames: &mut [Frame<T>], check: Check) {
+fn flip<T: Says>(rng: &mut Rng, frames: &mut [Frame<T>]) {
     let at = size(rng, frames.len() / 2, frames.len() - 2);
     let frame = &mut frames[at];
     let (from, to) = frame.number;
     let Some(place) = (from..to).rev().find(|i| frame.bytes[*i].is_ascii_digit()) else { return };
     let other = if frame.bytes[place] == b'3' { b'8' } else { b'3' };
-    let _ = check;
     frame.bytes[place] = other;
     frame.says = None;
 }

@@ -85,6 +85,7 @@ fn every_axis_occurs() {
         "scanner, Some",
         "scanner, None",
         "unit told",
+        "masses told",
     ];
     for word in words {
         assert!(having(word) >= 8, "{word}: {}", having(word));
