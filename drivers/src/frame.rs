@@ -30,6 +30,10 @@ pub struct Framing {
     longest: usize,
     tail: usize,
     has_starts: bool,
+    /// Bytes after the terminator may be any, also a start byte.
+    raw_tail: bool,
+    /// What a frame without terminator looks like, column by column.
+    columns: Vec<u8>,
 }
 
 /// Why a framing cannot work.
@@ -53,6 +57,9 @@ pub enum FramingFault {
     /// The longest frame is out of range.
     #[error("the longest frame is {0} bytes; choose 8 to 16384")]
     Longest(usize),
+    /// Columns that would be found anywhere, or too few or many of them.
+    #[error("the columns must be 2 to 256 and one of them a character of its own, or no frame could be found again")]
+    Columns,
     /// Too many bytes after the terminator.
     #[error("{0} bytes after the terminator; at most 8 fit")]
     Tail(usize),
@@ -113,7 +120,35 @@ impl Framing {
         }
         let mut ends = ends.to_vec();
         ends.sort_by_key(|e| std::cmp::Reverse(e.len()));
-        Ok(Self { ends, class, longest, tail, has_starts: !starts.is_empty() })
+        let has_starts = !starts.is_empty();
+        Ok(Self { ends, class, longest, tail, has_starts, raw_tail: false, columns: Vec::new() })
+    }
+
+    /// The same where the bytes after the terminator are binary.
+    pub(crate) fn with_raw_tail(self) -> Self {
+        Self { raw_tail: true, ..self }
+    }
+
+    /// Framing without terminators: every frame has the same length and
+    /// `columns`: `#` is a digit, `?` any byte, everything else itself.
+    pub fn fixed(columns: &[u8]) -> Result<Self, FramingFault> {
+        let own = columns.iter().any(|c| !matches!(c, b'#' | b'?'));
+        if !own || !(2..=LONGEST_DEFAULT).contains(&columns.len()) {
+            return Err(FramingFault::Columns);
+        }
+        let (class, columns) = (Box::new([0u8; 256]), columns.to_vec());
+        let longest = columns.len().max(8);
+        Ok(Self { ends: Vec::new(), class, longest, tail: 0, has_starts: false, raw_tail: false, columns })
+    }
+
+    /// Whether the bytes are a frame of fixed length.
+    fn fits(&self, bytes: &[u8]) -> bool {
+        let fits = |(c, b): (&u8, &u8)| match c {
+            b'#' => b.is_ascii_digit(),
+            b'?' => true,
+            own => own == b,
+        };
+        bytes.len() == self.columns.len() && self.columns.iter().zip(bytes).all(fits)
     }
 
     /// The longest frame, in bytes.
@@ -141,30 +176,35 @@ impl Framing {
 
     /// Takes a frame's raw bytes apart. `None` when it is not a whole frame.
     pub fn parts<'a>(&self, frame: &'a [u8]) -> Option<Parts<'a>> {
+        if !self.columns.is_empty() {
+            return self.fits(frame).then_some(Parts { start: &[], body: frame, end: &[], tail: &[] });
+        }
         // What is left of the previous terminator (LF of CR LF) is in front.
         let lead = usize::from(frame.len() > 1 && self.is_rest(frame[0]));
         if let [.., b] = frame
             && frame.len() == lead + 1
             && self.class(*b) & SINGLE != 0
         {
-            return Some(Parts { body: &frame[lead..], end: &[], tail: &[] });
+            return Some(Parts { start: &[], body: &frame[lead..], end: &[], tail: &[] });
         }
         let (front, tail) = frame.split_at(frame.len().checked_sub(self.tail)?);
         let end = self.end_of(front)?;
         let (body, end) = front.split_at(front.len() - end.len());
         let body = &body[lead.min(body.len())..];
-        let body = match (self.has_starts, body) {
-            (false, body) => body,
-            (true, [first, body @ ..]) if self.class(*first) & START != 0 => body,
+        let (start, body) = match (self.has_starts, body) {
+            (false, body) => body.split_at(0),
+            (true, [first, ..]) if self.class(*first) & START != 0 => body.split_at(1),
             (true, _) => return None,
         };
-        Some(Parts { body, end, tail })
+        Some(Parts { start, body, end, tail })
     }
 }
 
 /// A frame taken apart.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Parts<'a> {
+    /// The start byte, where frames have one.
+    pub start: &'a [u8],
     /// Between start byte and terminator.
     pub body: &'a [u8],
     /// The terminator.
@@ -253,6 +293,9 @@ impl Framer {
 
     /// Feeds what was read; every frame that is now complete goes to `take`.
     pub fn push(&mut self, chunk: &[u8], mut take: impl FnMut(Piece<'_>)) {
+        if !self.framing.columns.is_empty() {
+            return self.push_fixed(chunk, take);
+        }
         let mut rest = chunk;
         while let Some(&byte) = rest.first() {
             if self.skipping {
@@ -274,6 +317,34 @@ impl Framer {
             } else {
                 self.special(byte, &mut take);
                 rest = &rest[1..];
+            }
+        }
+    }
+
+    /// Frames without terminator: the first place where one fits is where it begins.
+    fn push_fixed(&mut self, chunk: &[u8], mut take: impl FnMut(Piece<'_>)) {
+        let length = self.framing.columns.len();
+        for &byte in chunk {
+            self.open.push(byte);
+            // Bytes in front that belong to no frame are counted in `lead`.
+            if self.open.len() - self.lead < length {
+                continue;
+            }
+            if self.framing.fits(&self.open[self.lead..]) {
+                if self.lead > 0 {
+                    let how = if self.sure { How::Broken } else { How::FirstPartial };
+                    take(Piece { bytes: &self.open[..self.lead], how });
+                }
+                take(Piece { bytes: &self.open[self.lead..], how: How::Whole });
+                self.open.clear();
+                self.restart();
+            } else {
+                self.lead += 1;
+                if self.lead >= self.framing.longest {
+                    take(Piece { bytes: &self.open[..self.lead], how: How::Broken });
+                    self.open.drain(..self.lead);
+                    self.lead = 0;
+                }
             }
         }
     }
@@ -313,7 +384,7 @@ impl Framer {
 
     /// A byte after the terminator.
     fn tail(&mut self, byte: u8, take: &mut impl FnMut(Piece<'_>)) {
-        if self.framing.class(byte) & START != 0 {
+        if self.framing.class(byte) & START != 0 && !self.framing.raw_tail {
             self.tail_left = 0;
             self.interrupt(byte, take);
             return;
@@ -472,7 +543,7 @@ mod tests {
                 ("f\x0300", How::Broken),
             ]
         );
-        assert_eq!(f.parts(b"\x02a\x035A"), Some(Parts { body: b"a", end: b"\x03", tail: b"5A" }));
+        assert_eq!(f.parts(b"\x02a\x035A"), Some(Parts { start: b"\x02", body: b"a", end: b"\x03", tail: b"5A" }));
         assert_eq!(f.parts(b"a\x035A"), None);
     }
 

@@ -6,6 +6,7 @@
 //! | group | of | says |
 //! |---|---|---|
 //! | `mass` | balance | the number, with its sign |
+//! | `sign` | balance | the sign, where it stands apart from the number: `-` is below zero |
 //! | `unit` | balance | `ug`, `mg`, `g` or `kg` |
 //! | `steady`, `moving` | balance | present when the balance marks the mass so |
 //! | `basis` | balance | a text that the table `basis` maps to gross or net |
@@ -17,6 +18,7 @@
 //! A dialect with only one of the two marks means the other by its absence.
 //! A pattern must match the whole line, without terminator.
 
+mod check;
 mod compile;
 mod guess;
 pub mod text;
@@ -25,7 +27,7 @@ pub use compile::{LARGEST_G_DEFAULT, ProfileFault};
 pub use guess::nearest;
 pub use text::ProfileText;
 
-use crate::frame::{Framing, How, Parts, Piece};
+use crate::frame::{Framing, How, Piece};
 use crate::heard::{Reject, What};
 use regex::bytes::{CaptureLocations, Regex};
 use serde::{Deserialize, Serialize};
@@ -33,10 +35,12 @@ use std::sync::Arc;
 use std::time::Duration;
 use tarecup_core::quantity::{Mass, MassUnit};
 use tarecup_core::signal::{Basis, Mark, Reading, Signal};
-use text::{CheckKind, CheckOver, CheckText, SerialText};
+use text::{CheckPlace, SerialText};
 
 /// Longest code a scanner may read, in characters.
 pub const CODE_MAX: usize = 64;
+/// The longest number whose decimal point may be left out, in characters.
+const NUMBER_MAX: usize = 32;
 /// The largest count that is believed.
 pub const COUNT_MAX: u32 = 999_999;
 
@@ -109,6 +113,7 @@ struct Line {
 #[derive(Clone, Copy, Debug, Default)]
 struct Groups {
     mass: Option<usize>,
+    sign: Option<usize>,
     unit: Option<usize>,
     steady: Option<usize>,
     moving: Option<usize>,
@@ -195,20 +200,23 @@ impl Profile {
         let Some(parts) = self.framing.parts(frame) else {
             return self.unknown(frame);
         };
-        if let Some(check) = self.text.check
-            && !check.agrees(&parts)
-        {
-            return What::Reject(Reject::Checksum);
-        }
-        if is_blank(parts.body) {
+        let body = match self.text.check {
+            // A blank line between checked ones carries no digits.
+            Some(check) if check.place == CheckPlace::AfterEnd || !is_blank(parts.body) => match check.stripped(&parts) {
+                Some(body) => body,
+                None => return What::Reject(Reject::Checksum),
+            },
+            _ => parts.body,
+        };
+        if is_blank(body) {
             return What::Nothing;
         }
         for (line, (regex, places)) in self.lines.iter().zip(at) {
-            if line.width.is_none_or(|w| w == parts.body.len()) && regex.captures_read(places, parts.body).is_some() {
-                return self.read_line(line, places, parts.body);
+            if line.width.is_none_or(|w| w == body.len()) && regex.captures_read(places, body).is_some() {
+                return self.read_line(line, places, body);
             }
         }
-        self.unknown(parts.body)
+        self.unknown(body)
     }
 
     /// A frame that no pattern matches.
@@ -240,13 +248,36 @@ impl Profile {
         signal.map_or_else(What::Reject, What::Signal)
     }
 
+    /// The number with a sign that stands apart and a decimal point that is not printed.
+    fn mass(&self, printed: &[u8], sign: Option<&[u8]>, unit: MassUnit) -> Result<(Mass, Mass), Reject> {
+        let mut room = [0u8; NUMBER_MAX + 1];
+        let printed = match self.text.decimals {
+            Some(decimals) if !printed.iter().any(|b| matches!(b, b'.' | b',')) => {
+                let point = printed.len().checked_sub(usize::from(decimals)).filter(|_| printed.len() <= NUMBER_MAX);
+                let point = point.ok_or(Reject::Mass)?;
+                room[..point].copy_from_slice(&printed[..point]);
+                room[point] = b'.';
+                room[point + 1..=printed.len()].copy_from_slice(&printed[point..]);
+                &room[..=printed.len()]
+            }
+            _ => printed,
+        };
+        let (mass, step) = Mass::parse_bytes(printed, unit).map_err(|_| Reject::Mass)?;
+        match sign.map(<[u8]>::trim_ascii) {
+            Some(b"-") if printed.iter().any(|b| matches!(b, b'+' | b'-')) => Err(Reject::Mass),
+            Some(b"-") => Ok((Mass::ZERO - mass, step)),
+            None | Some(b"" | b"+") => Ok((mass, step)),
+            Some(_) => Err(Reject::Mass),
+        }
+    }
+
     fn reading<'a>(&self, line: &Line, group: impl Fn(Option<usize>) -> Option<&'a [u8]>) -> Result<Signal, Reject> {
         let unit = match group(line.groups.unit) {
             Some(printed) => std::str::from_utf8(printed).ok().and_then(MassUnit::parse).ok_or(Reject::Unit)?,
             None => self.unit.ok_or(Reject::Unit)?,
         };
         let printed = group(line.groups.mass).ok_or(Reject::NoPattern)?;
-        let (mass, step) = Mass::parse_bytes(printed, unit).map_err(|_| Reject::Mass)?;
+        let (mass, step) = self.mass(printed, group(line.groups.sign), unit)?;
         if mass.abs() > self.largest {
             return Err(Reject::Mass);
         }
@@ -305,23 +336,6 @@ fn code(body: &[u8], read: &[u8]) -> Result<Signal, Reject> {
         return Err(Reject::Code);
     }
     Ok(Signal::Code(text.to_owned()))
-}
-
-impl CheckText {
-    /// Whether the two digits after the terminator agree with the frame.
-    fn agrees(self, parts: &Parts<'_>) -> bool {
-        let end = if self.over == CheckOver::BodyAndEnd { parts.end } else { &[] };
-        let bytes = parts.body.iter().chain(end).copied();
-        let value = match self.kind {
-            CheckKind::Xor => bytes.fold(0, |a, b| a ^ b),
-            CheckKind::Sum => bytes.fold(0, u8::wrapping_add),
-        };
-        let digit = |b: u8| char::from(b).to_digit(16);
-        match parts.tail {
-            [high, low] => digit(*high).zip(digit(*low)).is_some_and(|(h, l)| h * 16 + l == u32::from(value)),
-            _ => false,
-        }
-    }
 }
 
 /// Decodes the frames of one port without allocating, apart from codes.

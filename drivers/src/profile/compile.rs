@@ -1,6 +1,6 @@
 //! From a profile as written to one that can be run, or a pointed fault.
 
-use super::text::{BasisWord, LineText, Means, ProfileText};
+use super::text::{BasisWord, CheckDigits, CheckPlace, LineText, Means, ProfileText};
 use super::{Ask, Groups, Kind, Line, LineMeans, Profile, Talks, guess};
 use crate::frame::{Framing, LONGEST_DEFAULT};
 use regex::bytes::{Regex, RegexBuilder};
@@ -13,9 +13,10 @@ pub const LARGEST_G_DEFAULT: u32 = 60_000;
 const LINES_MAX: usize = 32;
 const PATTERN_MAX: usize = 1_000;
 const REGEX_BYTES: usize = 256 * 1024;
+const SKIP_MAX: usize = 8;
 const SEND_MAX: usize = 512;
 const EVERY_MS: std::ops::RangeInclusive<u32> = 20..=3_600_000;
-const GROUPS: [&str; 9] = ["mass", "unit", "steady", "moving", "basis", "drops", "total", "end", "code"];
+const GROUPS: [&str; 10] = ["mass", "sign", "unit", "steady", "moving", "basis", "drops", "total", "end", "code"];
 
 /// Why a profile cannot be used: which key, and what to do about it.
 #[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
@@ -76,8 +77,27 @@ fn framing(text: &ProfileText) -> Result<Framing, ProfileFault> {
         }
     }
     let longest = frame.longest.unwrap_or(LONGEST_DEFAULT);
+    if frame.length.is_some() || !frame.columns.is_empty() {
+        return fixed(text);
+    }
+    let raw = text.check.is_some_and(|c| c.digits == CheckDigits::Binary);
     Framing::new(&ends, frame.starts.as_bytes(), frame.single.as_bytes(), frame.tail, longest)
+        .map(|f| if raw { f.with_raw_tail() } else { f })
         .map_err(|e| ProfileFault { key: "frame".into(), says: e.to_string() })
+}
+
+/// Frames without terminator.
+fn fixed(text: &ProfileText) -> Result<Framing, ProfileFault> {
+    let frame = &text.frame;
+    if !(frame.ends.is_empty() && frame.single.is_empty() && frame.starts.is_empty() && frame.tail == 0) {
+        return fault("frame.length", "frames of a fixed length have no 'ends', 'single', 'starts' or 'tail'; leave them out");
+    }
+    let columns = frame.columns.as_bytes();
+    if frame.length != Some(columns.len()) {
+        let says = format!("'columns' shows {} bytes; write one character for each of the 'length' bytes", columns.len());
+        return fault("frame.columns", says);
+    }
+    Framing::fixed(columns).map_err(|e| ProfileFault { key: "frame.columns".into(), says: e.to_string() })
 }
 
 fn ask(text: &ProfileText) -> Result<Option<Ask>, ProfileFault> {
@@ -125,12 +145,25 @@ fn largest(text: &ProfileText) -> Result<Mass, ProfileFault> {
 }
 
 fn check_digits(text: &ProfileText) -> Result<(), ProfileFault> {
-    match (&text.check, text.frame.tail) {
-        (Some(_), 2) => Ok(()),
-        (Some(_), n) => {
-            fault("frame.tail", format!("two check digits come after the terminator, but tail is {n}; write tail = 2"))
+    if let Some(decimals) = text.decimals
+        && !(1..=9).contains(&decimals)
+    {
+        return fault("decimals", format!("{decimals} decimals; write 1 to 9, or leave it out where the point is printed"));
+    }
+    let Some(check) = &text.check else { return Ok(()) };
+    if check.skip > SKIP_MAX {
+        return fault("check.skip", format!("{} bytes; at most {SKIP_MAX} stand between the line and its check digits", check.skip));
+    }
+    let (width, tail) = (check.width(), text.frame.tail);
+    match check.place {
+        CheckPlace::AfterEnd if tail != width => fault(
+            "frame.tail",
+            format!("{width} check digits come after the terminator, but tail is {tail}; write tail = {width}"),
+        ),
+        CheckPlace::BeforeEnd if tail != 0 => {
+            fault("frame.tail", "check digits before the end are part of the line; leave 'tail' out")
         }
-        (None, _) => Ok(()),
+        _ => Ok(()),
     }
 }
 
@@ -201,6 +234,7 @@ fn groups(regex: &Regex, key: &str) -> Result<Groups, ProfileFault> {
         let Some(name) = name else { continue };
         let place = match name {
             "mass" => &mut groups.mass,
+            "sign" => &mut groups.sign,
             "unit" => &mut groups.unit,
             "steady" => &mut groups.steady,
             "moving" => &mut groups.moving,
@@ -230,9 +264,9 @@ fn line_means(kind: Kind, line: &LineText, groups: &Groups, key: &str) -> Result
             "one line cannot be a mass, a count and a code at once; write a [[line]] for each",
         );
     }
-    let of_mass = [groups.unit, groups.steady, groups.moving, groups.basis].iter().any(Option::is_some);
+    let of_mass = [groups.sign, groups.unit, groups.steady, groups.moving, groups.basis].iter().any(Option::is_some);
     if of_mass && !weighs {
-        return fault(format!("{key}.pattern"), "unit, steady, moving and basis belong to a mass; add the group 'mass'");
+        return fault(format!("{key}.pattern"), "sign, unit, steady, moving and basis belong to a mass; add the group 'mass'");
     }
     let by_groups = match (weighs, counts, reads) {
         (true, ..) => Some((LineMeans::Mass, Kind::Balance)),

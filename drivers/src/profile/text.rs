@@ -23,6 +23,9 @@ pub struct ProfileText {
     /// Unit of masses whose line has none: `ug`, `mg`, `g` or `kg`.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub unit: Option<String>,
+    /// Decimals of numbers that are printed without a decimal point.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub decimals: Option<u8>,
     /// The largest mass that is believed, in grams; by default 60 000.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub largest_g: Option<u32>,
@@ -33,7 +36,7 @@ pub struct ProfileText {
     pub frame: FrameText,
     /// Line patterns, tried in order.
     pub line: Vec<LineText>,
-    /// Check digits after the terminator.
+    /// Check digits.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub check: Option<CheckText>,
     /// What to send to be answered.
@@ -60,6 +63,12 @@ pub struct FrameText {
     /// Bytes after the terminator that belong to the frame.
     #[serde(default)]
     pub tail: usize,
+    /// Bytes of a frame without terminator, found again by `columns`.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub length: Option<usize>,
+    /// What every frame of `length` bytes looks like: `#` is a digit, `?` anything, all else itself.
+    #[serde(default, skip_serializing_if = "String::is_empty")]
+    pub columns: String,
     /// Longest frame in bytes; by default 256.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub longest: Option<usize>,
@@ -118,14 +127,30 @@ pub enum BasisWord {
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct CheckText {
-    /// How the bytes are summed up.
+    /// How they are worked out.
     pub kind: CheckKind,
-    /// Which bytes are summed up.
+    /// Which bytes they cover.
     #[serde(default)]
     pub over: CheckOver,
+    /// Where they stand.
+    #[serde(default, skip_serializing_if = "is_default")]
+    pub place: CheckPlace,
+    /// How they are written.
+    #[serde(default, skip_serializing_if = "is_default")]
+    pub digits: CheckDigits,
+    /// Bytes at the end of the body that are not covered, such as a `*` before the digits.
+    #[serde(default, skip_serializing_if = "is_default")]
+    pub skip: usize,
+    /// Of two bytes the lower comes first.
+    #[serde(default, skip_serializing_if = "is_default")]
+    pub low_first: bool,
 }
 
-/// How check digits are worked out; both give two hexadecimal digits.
+fn is_default<T: Default + PartialEq>(value: &T) -> bool {
+    *value == T::default()
+}
+
+/// How check digits are worked out. The names of the CRCs are those of the catalogue of parametrised CRC algorithms.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum CheckKind {
@@ -133,6 +158,40 @@ pub enum CheckKind {
     Xor,
     /// Sum of the bytes, its lowest eight bits.
     Sum,
+    /// What must be added to the sum to give zero, lowest eight bits.
+    TwosComplement,
+    /// The sum with every bit turned, lowest eight bits.
+    OnesComplement,
+    /// Sum of the bytes, its lowest sixteen bits.
+    #[serde(rename = "sum-16")]
+    Sum16,
+    /// CRC-16/ARC.
+    #[serde(rename = "crc16-arc")]
+    Crc16Arc,
+    /// CRC-16/MODBUS.
+    #[serde(rename = "crc16-modbus")]
+    Crc16Modbus,
+    /// CRC-16/USB.
+    #[serde(rename = "crc16-usb")]
+    Crc16Usb,
+    /// CRC-16/UMTS.
+    #[serde(rename = "crc16-umts")]
+    Crc16Umts,
+    /// CRC-16/XMODEM.
+    #[serde(rename = "crc16-xmodem")]
+    Crc16Xmodem,
+    /// CRC-16/IBM-3740.
+    #[serde(rename = "crc16-ibm-3740")]
+    Crc16Ibm3740,
+    /// CRC-16/KERMIT.
+    #[serde(rename = "crc16-kermit")]
+    Crc16Kermit,
+    /// CRC-16/IBM-SDLC, also called X-25.
+    #[serde(rename = "crc16-x25")]
+    Crc16X25,
+    /// CRC-16/GENIBUS.
+    #[serde(rename = "crc16-genibus")]
+    Crc16Genibus,
 }
 
 /// Which bytes check digits cover.
@@ -144,6 +203,32 @@ pub enum CheckOver {
     Body,
     /// From after the start byte to the end of the terminator.
     BodyAndEnd,
+    /// From the start byte to before the terminator.
+    StartAndBody,
+    /// From the start byte to the end of the terminator.
+    StartToEnd,
+}
+
+/// Where check digits stand.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum CheckPlace {
+    /// After the terminator; they are `frame.tail`.
+    #[default]
+    AfterEnd,
+    /// The last of the line, before its terminator; patterns do not see them.
+    BeforeEnd,
+}
+
+/// How check digits are written.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum CheckDigits {
+    /// Two hexadecimal digits for each byte.
+    #[default]
+    Hex,
+    /// The bytes themselves.
+    Binary,
 }
 
 /// How an instrument is asked, as written.
