@@ -213,7 +213,7 @@ pub fn judge(capture: &Capture, learned: &Learned) -> Score {
         counts: by_profile.counts.clone(),
         codes: learned.codes.clone(),
     };
-    let own = worse(score(&capture.truth, &said), numbers(&capture.truth, &by_profile.counts, &learned.counts));
+    let own = worse(score(&capture.truth, &said), numbers(&capture.truth, &learned.counts));
     worse(own, named(score(&capture.truth, &by_profile)))
 }
 
@@ -235,11 +235,11 @@ fn worse(a: Score, b: Score) -> Score {
     if rank(&b) < rank(&a) { b } else { a }
 }
 
-/// The counts that were said must be those that the profile gives: each number, or drops numbered.
-fn numbers(truth: &Truth, signals: &[Count], said: &[u32]) -> Score {
+/// The counts that were said must be those of the truth, each number or drops numbered, in order.
+fn numbers(truth: &Truth, said: &[u32]) -> Score {
     let mut running = 0;
     let mut all = Vec::new();
-    for count in signals {
+    for (count, _) in &truth.counts {
         match count {
             Count::Drop => running += 1,
             Count::Total(n) => running = *n,
@@ -251,9 +251,8 @@ fn numbers(truth: &Truth, signals: &[Count], said: &[u32]) -> Score {
         }
     }
     let mut left = all.iter();
-    let known = said.iter().all(|n| left.any(|m| m == n));
-    match known || truth.kind != captures::Kind::Counter && said.is_empty() {
-        true => Score::Understood,
-        false => Score::Wrong(format!("counts {said:?}, but its profile gives {all:?}")),
+    match said.iter().find(|n| !left.any(|m| m == *n)) {
+        None => Score::Understood,
+        Some(n) => Score::Wrong(format!("the count {n} is not what was said, in {said:?}")),
     }
 }

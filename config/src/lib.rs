@@ -12,6 +12,7 @@ mod depth;
 mod embedded;
 pub mod fault;
 mod keys;
+pub mod learned;
 pub mod methods;
 pub mod profiles;
 mod reader;

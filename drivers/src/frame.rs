@@ -177,7 +177,10 @@ impl Framing {
     /// Takes a frame's raw bytes apart. `None` when it is not a whole frame.
     pub fn parts<'a>(&self, frame: &'a [u8]) -> Option<Parts<'a>> {
         if !self.columns.is_empty() {
-            return self.fits(frame).then_some(Parts { start: &[], body: frame, end: &[], tail: &[] });
+            // STX or SOH at the front is a start byte, as it is in frames with an end.
+            let start = usize::from(matches!(self.columns[0], 0x01 | 0x02));
+            let (start, body) = frame.split_at(start.min(frame.len()));
+            return self.fits(frame).then_some(Parts { start, body, end: &[], tail: &[] });
         }
         // What is left of the previous terminator (LF of CR LF) is in front.
         let lead = usize::from(frame.len() > 1 && self.is_rest(frame[0]));

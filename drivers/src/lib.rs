@@ -4,5 +4,6 @@
 pub mod frame;
 pub mod heard;
 pub mod intake;
+pub mod learn;
 pub mod port;
 pub mod profile;

@@ -17,6 +17,7 @@ mod ask;
 mod check;
 mod demo;
 mod files;
+mod learn;
 mod ports;
 mod run;
 mod status;
@@ -78,6 +79,8 @@ enum Verb {
     Status(status::StatusArgs),
     /// List serial ports by their stable paths.
     Ports(ports::PortsArgs),
+    /// Work out a profile by listening to an instrument; nothing is sent to it.
+    Learn(learn::LearnArgs),
 }
 
 /// Where things lie.
@@ -106,6 +109,7 @@ pub fn main() -> ExitCode {
         Verb::Ask(args) => ask::run(&args),
         Verb::Status(args) => status::run(&args),
         Verb::Ports(args) => ports::run(&args),
+        Verb::Learn(args) => learn::run(&args),
     })
 }
 

@@ -3,6 +3,7 @@
 mod ask;
 mod hold;
 pub mod list;
+pub mod listen;
 mod open;
 pub mod serial;
 

@@ -54,16 +54,12 @@ impl CheckKind {
 
 /// A cyclic redundancy check that takes the highest bit first.
 fn straight(bytes: impl Iterator<Item = u8>, poly: u16, init: u16) -> u16 {
-    bytes.fold(init, |crc, b| {
-        (0..8).fold(crc ^ u16::from(b) << 8, |c, _| if c & 0x8000 != 0 { c << 1 ^ poly } else { c << 1 })
-    })
+    bytes.fold(init, |crc, b| (0..8).fold(crc ^ u16::from(b) << 8, |c, _| if c & 0x8000 != 0 { c << 1 ^ poly } else { c << 1 }))
 }
 
 /// A cyclic redundancy check that takes the lowest bit first; `poly` is written reversed.
 fn reflected(bytes: impl Iterator<Item = u8>, poly: u16, init: u16) -> u16 {
-    bytes.fold(init, |crc, b| {
-        (0..8).fold(crc ^ u16::from(b), |c, _| if c & 1 != 0 { c >> 1 ^ poly } else { c >> 1 })
-    })
+    bytes.fold(init, |crc, b| (0..8).fold(crc ^ u16::from(b), |c, _| if c & 1 != 0 { c >> 1 ^ poly } else { c >> 1 }))
 }
 
 impl CheckText {
@@ -98,9 +94,7 @@ impl CheckText {
         }
         let value = match self.digits {
             CheckDigits::Binary => digits.iter().fold(0, |v, b| v << 8 | u16::from(*b)),
-            CheckDigits::Hex => {
-                digits.iter().try_fold(0u16, |v, b| char::from(*b).to_digit(16).map(|d| v << 4 | (d as u16)))?
-            }
+            CheckDigits::Hex => digits.iter().try_fold(0u16, |v, b| char::from(*b).to_digit(16).map(|d| v << 4 | (d as u16)))?,
         };
         Some(if self.low_first && self.kind.bytes() == 2 { value.swap_bytes() } else { value })
     }

@@ -152,7 +152,10 @@ fn check_digits(text: &ProfileText) -> Result<(), ProfileFault> {
     }
     let Some(check) = &text.check else { return Ok(()) };
     if check.skip > SKIP_MAX {
-        return fault("check.skip", format!("{} bytes; at most {SKIP_MAX} stand between the line and its check digits", check.skip));
+        return fault(
+            "check.skip",
+            format!("{} bytes; at most {SKIP_MAX} stand between the line and its check digits", check.skip),
+        );
     }
     let (width, tail) = (check.width(), text.frame.tail);
     match check.place {

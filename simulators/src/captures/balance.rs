@@ -1,6 +1,6 @@
 //! Balances that speak in lines.
 
-use super::line::{self, BasisMarks, Layout, Marks, Unit};
+use super::line::{self, BasisMarks, Layout, Marks, Part, Unit};
 use super::number::{Number, Sign};
 use super::session::{Moment, Plan, play};
 use super::surround::{Fate, Wrap, join};
@@ -87,6 +87,11 @@ pub(super) fn invent(rng: &mut Rng) -> Invented {
     let mut layout = Layout { parts, number, unit, marks, basis, trouble, trouble_alone };
     if wrap.by_length() {
         layout.trouble_alone = false;
+        for part in &mut layout.parts {
+            if let Part::Count { width, zeros, .. } = part {
+                (*width, *zeros) = (4, true);
+            }
+        }
         layout.trouble = "^^^^".into();
         layout.basis = match layout.basis {
             BasisMarks::Both { gross, net, .. } => BasisMarks::Both { gross, net, even: true },

@@ -1,0 +1,154 @@
+//! The lines of a capture, taken apart, and the numbers in them that have a unit.
+
+use super::Refusal;
+use super::checksum::Checked;
+use super::tokens::{self, Commas, Sort, Token};
+use super::words::{self, Label};
+use std::collections::BTreeMap;
+
+/// A line that is text.
+#[derive(Clone, Debug)]
+pub(super) struct Line {
+    pub(super) body: Vec<u8>,
+    pub(super) tokens: Vec<Token>,
+    /// Its place among everything the framer cut.
+    pub(super) at: usize,
+    pub(super) numbers: Vec<Num>,
+}
+
+/// A number and what stands around it; tokens are named by their place in the line.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) struct Num {
+    pub(super) token: usize,
+    pub(super) unit: Option<usize>,
+    pub(super) label: Option<Label>,
+}
+
+/// All lines.
+#[derive(Clone, Debug)]
+pub(super) struct Lines {
+    pub(super) lines: Vec<Line>,
+    pub(super) checked: Checked,
+    pub(super) commas: Commas,
+}
+
+impl Line {
+    pub(super) fn text(&self, token: usize) -> &[u8] {
+        self.tokens[token].of(&self.body)
+    }
+
+    /// Whether a number of it has a unit.
+    pub(super) fn weighs(&self) -> bool {
+        self.numbers.iter().any(|n| n.unit.is_some())
+    }
+
+    /// Its shape: digits made alike.
+    pub(super) fn shape(&self) -> Vec<u8> {
+        let mut shape: Vec<u8> = Vec::new();
+        for t in &self.tokens {
+            match t.sort {
+                Sort::Number => shape.push(b'#'),
+                Sort::Stamp => shape.push(b'@'),
+                Sort::Blank => shape.push(b' '),
+                Sort::Word | Sort::Mark => shape.extend(t.of(&self.body)),
+            }
+        }
+        shape
+    }
+}
+
+/// Whether a line is text: printable, but for the few control characters that dialects use.
+pub(super) fn is_text(body: &[u8]) -> bool {
+    body.iter().all(|b| b.is_ascii_graphic() || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17))
+}
+
+impl Lines {
+    /// Takes all lines apart.
+    pub(super) fn new(checked: &Checked) -> Result<Self, Refusal> {
+        let spoken: Vec<&(usize, Vec<u8>)> = checked.lines.iter().filter(|(_, b)| !b.trim_ascii().is_empty()).collect();
+        let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b)).collect();
+        if texts.len() * 10 < spoken.len() * 7 || texts.len() < 3 {
+            let says = "the bytes are no text: listen again with another speed or character frame, such as 7E1 or 7O1";
+            return Err(Refusal::new(None, 1, says));
+        }
+        let commas = tokens::commas(&texts);
+        let mut memo: BTreeMap<&[u8], (Vec<Token>, Vec<Num>)> = BTreeMap::new();
+        for body in &texts {
+            memo.entry(body).or_insert_with(|| {
+                let tokens = tokens::tokens(body, commas);
+                let numbers = numbers(body, &tokens);
+                (tokens, numbers)
+            });
+        }
+        let lines = spoken.iter().filter_map(|(at, body)| {
+            let (tokens, numbers) = memo.get(body.as_slice())?.clone();
+            Some(Line { body: body.clone(), tokens, at: *at, numbers })
+        });
+        let mut lines = Self { lines: lines.collect(), checked: checked.clone(), commas };
+        lines.forget_false_units();
+        Ok(lines)
+    }
+
+    /// Whether the capture speaks of masses.
+    pub(super) fn weighs(&self) -> bool {
+        let n = self.lines.iter().filter(|l| l.weighs()).count();
+        n >= 2 && n * 8 >= self.lines.len()
+    }
+
+    /// A capital G after a number is no unit where N or NT can stand in its place, or where some other word is the unit.
+    fn forget_false_units(&mut self) {
+        let capital = |l: &Line, n: &Num| n.unit.is_some_and(|u| l.text(u) == b"G");
+        let (mut labels, mut others, mut capitals) = (false, false, false);
+        for l in &self.lines {
+            for n in &l.numbers {
+                match n.unit {
+                    Some(_) if capital(l, n) => capitals = true,
+                    Some(_) => others = true,
+                    None => {
+                        let after = l.tokens.get(n.token + 1..).unwrap_or_default();
+                        let word = after.iter().find(|t| t.sort == Sort::Word).map(|t| t.of(&l.body));
+                        labels |= word.is_some_and(|w| words::label(w).is_some_and(|l| l != Label::Gross));
+                    }
+                }
+            }
+        }
+        if capitals && (labels || others) {
+            for l in &mut self.lines {
+                let body = &l.body;
+                for n in &mut l.numbers {
+                    n.unit = n.unit.filter(|u| l.tokens[*u].of(body) != b"G");
+                }
+            }
+        }
+    }
+}
+
+/// A unit word, short or written out.
+pub(super) fn is_unit(word: &[u8]) -> bool {
+    words::unit(word).is_some() || words::long_unit(word).is_some()
+}
+
+/// The numbers of a line with unit and label.
+fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
+    let places: Vec<usize> = (0..tokens.len()).filter(|i| tokens[*i].sort == Sort::Number).collect();
+    let edge = |i: usize| matches!(tokens[i].sort, Sort::Number | Sort::Stamp);
+    let word = |i: &usize| tokens[*i].sort == Sort::Word;
+    let after = |at: usize| {
+        let to = (at + 1..tokens.len()).find(|i| edge(*i)).unwrap_or(tokens.len());
+        let units: Vec<usize> = (at + 1..to).filter(word).filter(|i| is_unit(tokens[*i].of(body))).collect();
+        units.iter().find(|i| tokens[**i].of(body) != b"G").or(units.first()).copied()
+    };
+    let region = |at: usize| (0..at).rev().find(|i| edge(*i)).map_or(0, |i| i + 1)..at;
+    let before = |at: usize| {
+        let units = region(at).rev().filter(word);
+        units.into_iter().find(|i| is_unit(tokens[*i].of(body)) && !matches!(tokens[*i].of(body), b"G"))
+    };
+    // Letters that touch the digits on the left make a code, such as A12.
+    let any_after = places.iter().any(|p| after(*p).is_some());
+    let of = |at: &usize| {
+        let unit = if any_after { after(*at) } else { before(*at) };
+        let label = region(*at).rev().filter(word).filter(|i| Some(*i) != unit).find_map(|i| words::label(tokens[i].of(body)));
+        Num { token: *at, unit, label }
+    };
+    places.iter().map(of).collect()
+}
