@@ -100,7 +100,8 @@ pub(super) fn invent(rng: &mut Rng) -> Invented {
         };
     }
     let tare = layout.basis != BasisMarks::None || rng.chance(0.12);
-    let plan = Plan { most, tare, negative: number.sign != Sign::Never, trouble: rng.chance(0.15), keyed };
+    let zero_rests = matches!(layout.marks, Marks::Bits { .. });
+    let plan = Plan { most, tare, negative: number.sign != Sign::Never, trouble: rng.chance(0.15), keyed, zero_rests };
     Invented { layout, wrap, plan }
 }
 

@@ -33,6 +33,8 @@ pub(super) struct Plan {
     pub trouble: bool,
     /// Each line comes of a key pressed.
     pub keyed: bool,
+    /// Nothing moves about zero: where marks combine, the combination would be too rare to be understood.
+    pub zero_rests: bool,
 }
 
 struct Play<'a> {
@@ -173,6 +175,7 @@ impl Play<'_> {
 
     fn say(&mut self, steps: i64, steady: bool) {
         let steps = if self.plan.negative { steps } else { steps.max(0) };
+        let steps = if steps == 0 && !steady && self.plan.zero_rests { 1 } else { steps };
         self.moments.push(Moment { shown: Shown::Steps(steps), steady, net: self.net });
     }
 }

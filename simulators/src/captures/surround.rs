@@ -254,11 +254,21 @@ fn disturb<T: Says>(rng: &mut Rng, frames: &mut Vec<Frame<T>>, wrap: &Wrap, even
             let frame = &mut frames[at];
             let (from, to) = frame.number;
             if to > from {
-                frame.bytes.remove(size(rng, from, to - 1));
-                frame.says = None;
+                lose(frame, from, size(rng, from, to - 1));
             }
         }
     }
+}
+
+/// Loses one byte of a number. Without a plus, a blank or a zero in front it is still the same number.
+fn lose<T: Says>(frame: &mut Frame<T>, from: usize, at: usize) {
+    let in_front = frame.bytes[from..=at].iter().all(|b| matches!(b, b'+' | b'-' | b' ' | b'0'));
+    if !in_front || frame.bytes[at] == b'-' {
+        frame.says = None;
+    } else if let Some(says) = &mut frame.says {
+        says.only_may();
+    }
+    frame.bytes.remove(at);
 }
 
 /// Changes one digit of one frame, so that its check value does not agree.
