@@ -11,8 +11,9 @@ use super::tokens::Sort;
 use super::words::{self, Label};
 use super::{Hints, Refusal};
 use crate::profile::text::{BasisWord, LineText, Means, ProfileText};
-use crate::profile::{Kind, Talks};
+use crate::profile::{Kind, LARGEST_G_DEFAULT, Talks};
 use std::collections::{BTreeMap, BTreeSet};
+use tarecup_core::quantity::UG_PER_G;
 use tarecup_core::signal::Basis;
 
 /// Different words in one place that can be marks; more are a changing text.
@@ -328,7 +329,7 @@ impl Scene<'_> {
             talks: prints.then_some(Talks::PrintOnKey),
             unit: if unit_read { None } else { Some(how.unit_word()) },
             decimals: how.implied,
-            largest_g: None,
+            largest_g: self.largest(),
             basis: basis_map(layout),
             frame: self.lines.checked.frame.clone(),
             line,
@@ -338,6 +339,12 @@ impl Scene<'_> {
         };
         let expect = kept.iter().map(|i| (self.lines.lines[self.masses[*i].line].at, self.values[*i].ug)).collect();
         Ok(Draft { text, expect })
+    }
+
+    /// A scale for more than is usually believed.
+    fn largest(&self) -> Option<u32> {
+        let usual = i64::from(LARGEST_G_DEFAULT) * UG_PER_G;
+        self.values.iter().any(|v| v.ug.abs() > usual).then_some(1_000_000)
     }
 
     /// The mass lines that are readings, and how many are read past.

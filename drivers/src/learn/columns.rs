@@ -4,7 +4,7 @@ use super::Refusal;
 use super::checksum::Checked;
 use super::tokens::{self, Commas, Sort, Token};
 use super::words::{self, Label};
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, BTreeSet};
 
 /// A line that is text.
 #[derive(Clone, Debug)]
@@ -21,6 +21,8 @@ pub(super) struct Line {
 pub(super) struct Num {
     pub(super) token: usize,
     pub(super) unit: Option<usize>,
+    /// A unit in front of it.
+    before: Option<usize>,
     pub(super) label: Option<Label>,
 }
 
@@ -85,6 +87,7 @@ impl Lines {
             Some(Line { body: body.clone(), tokens, at: *at, numbers })
         });
         let mut lines = Self { lines: lines.collect(), checked: checked.clone(), commas };
+        lines.turn_units();
         lines.forget_false_units();
         Ok(lines)
     }
@@ -95,15 +98,30 @@ impl Lines {
         n >= 2 && n * 8 >= self.lines.len()
     }
 
+    /// In `#3 g 12.34` the unit belongs to the number that follows: to the one that changes.
+    fn turn_units(&mut self) {
+        let changes = |unit: fn(&Num) -> Option<usize>| {
+            let texts =
+                self.lines.iter().flat_map(|l| l.numbers.iter().filter(move |n| unit(n).is_some()).map(|n| l.text(n.token)));
+            texts.collect::<BTreeSet<_>>().len() > 1
+        };
+        if !changes(|n| n.unit) && changes(|n| n.before) {
+            for n in self.lines.iter_mut().flat_map(|l| &mut l.numbers) {
+                n.unit = n.before;
+            }
+        }
+    }
+
     /// A capital G after a number is no unit where N or NT can stand in its place, or where some other word is the unit.
     fn forget_false_units(&mut self) {
         let capital = |l: &Line, n: &Num| n.unit.is_some_and(|u| l.text(u) == b"G");
         let (mut labels, mut others, mut capitals) = (false, false, false);
         for l in &self.lines {
-            for n in &l.numbers {
+            for (i, n) in l.numbers.iter().enumerate() {
                 match n.unit {
                     Some(_) if capital(l, n) => capitals = true,
                     Some(_) => others = true,
+                    None if i + 1 < l.numbers.len() => {}
                     None => {
                         let after = l.tokens.get(n.token + 1..).unwrap_or_default();
                         let word = after.iter().find(|t| t.sort == Sort::Word).map(|t| t.of(&l.body));
@@ -133,10 +151,19 @@ fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
     let places: Vec<usize> = (0..tokens.len()).filter(|i| tokens[*i].sort == Sort::Number).collect();
     let edge = |i: usize| matches!(tokens[i].sort, Sort::Number | Sort::Stamp);
     let word = |i: &usize| tokens[*i].sort == Sort::Word;
+    // Words between a number and its unit are marks, which only the last number of a line can have there.
     let after = |at: usize| {
-        let to = (at + 1..tokens.len()).find(|i| edge(*i)).unwrap_or(tokens.len());
-        let units: Vec<usize> = (at + 1..to).filter(word).filter(|i| is_unit(tokens[*i].of(body))).collect();
-        units.iter().find(|i| tokens[**i].of(body) != b"G").or(units.first()).copied()
+        let next = (at + 1..tokens.len()).find(|i| edge(*i));
+        let to = next.unwrap_or(tokens.len());
+        let words: Vec<usize> = (at + 1..to).filter(word).collect();
+        let units = words.iter().filter(|i| is_unit(tokens[**i].of(body)));
+        // After a sample's number a capital G labels the mass that follows.
+        let whole = !tokens[at].of(body).iter().any(|b| matches!(b, b'.' | b','));
+        let label = |i: &usize| next.is_some() && whole && tokens[*i].of(body) == b"G";
+        let near = |i: &&usize| Some(*i) == words.first() && !label(i);
+        let far = |i: &&usize| next.is_none() && tokens[**i].of(body) != b"G";
+        let mut units = units.filter(|i| near(i) || far(i));
+        units.clone().find(|i| tokens[**i].of(body) != b"G").or(units.next()).copied()
     };
     let region = |at: usize| (0..at).rev().find(|i| edge(*i)).map_or(0, |i| i + 1)..at;
     let before = |at: usize| {
@@ -146,9 +173,10 @@ fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
     // Letters that touch the digits on the left make a code, such as A12.
     let any_after = places.iter().any(|p| after(*p).is_some());
     let of = |at: &usize| {
-        let unit = if any_after { after(*at) } else { before(*at) };
+        let before = before(*at);
+        let unit = if any_after { after(*at) } else { before };
         let label = region(*at).rev().filter(word).filter(|i| Some(*i) != unit).find_map(|i| words::label(tokens[i].of(body)));
-        Num { token: *at, unit, label }
+        Num { token: *at, unit, before, label }
     };
     places.iter().map(of).collect()
 }

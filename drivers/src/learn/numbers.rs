@@ -178,10 +178,11 @@ fn sign(lines: &Lines, masses: &[MassLine]) -> Result<NumberLook, Refusal> {
     let plain: Vec<Value> = masses.iter().filter_map(|m| value(lines, m, false, None, MassUnit::Gram).ok()).collect();
     let words: Vec<&[u8]> = trail.iter().map(|t| t.unwrap_or(b"")).collect();
     let both = trail.contains(&Some(b"+")) && trail.iter().all(Option::is_some);
-    let at_rest = plain
-        .windows(2)
-        .zip(words.windows(2))
-        .any(|(v, w)| w[0] == b"-" && w[1] == b"-" && (v[0].ug - v[1].ug).abs() <= 2 * v[0].step);
+    let close = |a: &Value, b: Option<&Value>| b.is_none_or(|b| (a.ug - b.ug).abs() <= 2 * a.step);
+    let at_rest = words.iter().enumerate().any(|(i, w)| {
+        let before = i.checked_sub(1).and_then(|j| plain.get(j));
+        *w == b"-" && plain.get(i).is_some_and(|v| close(v, before) && close(v, plain.get(i + 1)))
+    });
     let moves = matches!(behave::steadiness(&plain, &words), Meaning::Steadiness { .. });
     // A dash that stands only while the numbers change is a mark of movement, not a sign.
     look.sign_after = match (both, at_rest, moves) {

@@ -2,6 +2,7 @@
 
 use super::columns::Line;
 use super::tokens::Sort;
+use super::words::label;
 use std::collections::{BTreeMap, BTreeSet};
 
 /// Different arrangements of words that one dialect may have.
@@ -20,13 +21,13 @@ pub(super) enum Key {
     Stamp,
 }
 
-/// A key, where it stands, and whether blanks stand in front of it.
+/// A key, where it stands, and how many blanks stand in front of it.
 #[derive(Clone, Debug, PartialEq, Eq, PartialOrd, Ord)]
 pub(super) struct Item {
     pub(super) key: Key,
     /// Bytes from the line's beginning, or from the end of the number.
     pub(super) column: usize,
-    pub(super) blank: bool,
+    pub(super) blank: usize,
 }
 
 /// One side of a line: its items, and whether blanks stand at its inner or outer end.
@@ -38,7 +39,7 @@ pub(super) struct Side {
 
 /// The items of some tokens of a line.
 pub(super) fn side(line: &Line, tokens: &[usize], unit: Option<usize>, origin: usize) -> Side {
-    let (mut items, mut blank) = (Vec::new(), false);
+    let (mut items, mut blank) = (Vec::new(), 0);
     for (n, &i) in tokens.iter().enumerate() {
         let token = line.tokens[i];
         // The sign of another number belongs to it.
@@ -49,7 +50,7 @@ pub(super) fn side(line: &Line, tokens: &[usize], unit: Option<usize>, origin: u
         let text = token.of(&line.body).to_vec();
         let key = match token.sort {
             Sort::Blank => {
-                blank = true;
+                blank = text.len();
                 continue;
             }
             _ if Some(i) == unit => Key::Unit(text),
@@ -59,9 +60,9 @@ pub(super) fn side(line: &Line, tokens: &[usize], unit: Option<usize>, origin: u
             Sort::Mark => Key::Text(text, false),
         };
         items.push(Item { key, column: token.from - origin.min(token.from), blank });
-        blank = false;
+        blank = 0;
     }
-    Side { items, blank_after: blank }
+    Side { items, blank_after: blank > 0 }
 }
 
 /// A place beside the number.
@@ -178,31 +179,34 @@ pub(super) fn align(sides: &[Side]) -> Option<Aligned> {
         memo.insert(items, at);
     }
     let mut cells = vec![vec![None; sides.len()]; slots.len()];
+    let mut gaps = vec![vec![0; sides.len()]; slots.len()];
     let mut blanks = vec![Blanks::default(); slots.len() + 1];
     for (l, side) in sides.iter().enumerate() {
         let at = &memo[&side.items];
         let mut from = 0;
         for (item, &slot) in side.items.iter().zip(at) {
             cells[slot][l] = Some(item.key.clone());
-            note(&mut blanks[from..=slot], item.blank);
+            gaps[slot][l] = item.blank;
+            note(&mut blanks[from..=slot], item.blank > 0);
             from = slot + 1;
         }
         note(&mut blanks[from..], side.blank_after);
     }
-    merge(&mut cells, &mut blanks);
+    merge(&mut cells, &mut gaps, &mut blanks);
+    phrases(&mut cells, &mut gaps, &mut blanks);
     Some(Aligned { cells, blanks })
 }
 
 /// Neighbouring places of which every line has exactly one are one place.
-fn merge(cells: &mut Vec<Vec<Option<Key>>>, blanks: &mut Vec<Blanks>) {
+fn merge(cells: &mut Vec<Vec<Option<Key>>>, gaps: &mut Vec<Vec<usize>>, blanks: &mut Vec<Blanks>) {
     let mut i = 0;
     while i + 1 < cells.len() {
         let text = |k: &Option<Key>| k.as_ref().is_none_or(|k| matches!(k, Key::Text(..)));
         let pairs = || cells[i].iter().zip(&cells[i + 1]);
         if pairs().all(|(a, b)| a.is_some() != b.is_some() && text(a) && text(b)) {
-            let second = cells.remove(i + 1);
-            for (a, b) in cells[i].iter_mut().zip(second) {
-                *a = a.take().or(b);
+            let (second, gap) = (cells.remove(i + 1), gaps.remove(i + 1));
+            for (l, b) in second.into_iter().enumerate().filter(|(_, b)| b.is_some()) {
+                (cells[i][l], gaps[i][l]) = (b, gap[l]);
             }
             let other = blanks.remove(i + 1);
             blanks[i].seen |= other.seen;
@@ -219,5 +223,38 @@ fn note(places: &mut [Blanks], seen: bool) {
     for place in places {
         place.seen |= seen;
         place.none |= !seen || absent;
+    }
+}
+
+/// Words that change only together are one phrase, such as `at rest`.
+fn phrases(cells: &mut Vec<Vec<Option<Key>>>, gaps: &mut Vec<Vec<usize>>, blanks: &mut Vec<Blanks>) {
+    let mut i = 0;
+    while i + 1 < cells.len() {
+        // What tells gross from net is a word of its own, however it changes.
+        let word = |k: &Option<Key>| k.as_ref().is_none_or(|k| matches!(k, Key::Text(t, true) if label(t).is_none()));
+        let pairs: BTreeSet<(&Option<Key>, &Option<Key>)> = cells[i].iter().zip(&cells[i + 1]).collect();
+        let (a, b): (BTreeSet<_>, BTreeSet<_>) = pairs.iter().copied().unzip();
+        let together = pairs.len() == a.len().max(b.len()) && a.len() > 1 && b.len() > 1;
+        let both = cells[i].iter().zip(&cells[i + 1]).any(|(a, b)| a.is_some() && b.is_some());
+        if !(together && both && cells[i].iter().chain(&cells[i + 1]).all(word)) {
+            i += 1;
+            continue;
+        }
+        let (second, gap) = (cells.remove(i + 1), gaps.remove(i + 1));
+        for (l, b) in second.into_iter().enumerate() {
+            cells[i][l] = match (cells[i][l].take(), b) {
+                (Some(Key::Text(a, w)), Some(Key::Text(b, _))) => Some(Key::Text([a, vec![b' '; gap[l]], b].concat(), w)),
+                (None, Some(b)) => {
+                    gaps[i][l] = gap[l];
+                    Some(b)
+                }
+                (a, _) => a,
+            };
+        }
+        blanks.remove(i + 1);
+        // A blank inside the phrase is not one in front of it.
+        let absent = cells[i].iter().any(Option::is_none);
+        blanks[i].seen |= gaps[i].iter().any(|g| *g > 0);
+        blanks[i].none = absent || gaps[i].contains(&0);
     }
 }
