@@ -131,8 +131,15 @@ pub(super) fn from_moments(rng: &mut Rng, made: &Invented, moments: &[Moment]) -
     let even = made.layout.even() && (!made.layout.trouble_alone || !made.plan.trouble);
     let fate = Fate::invent(rng, &made.wrap, even);
     let (bytes, readings) = join(rng, frames, &made.wrap, fate);
-    let truth =
-        Truth { readings, steady_evident: steady_evident(made), basis_evident: basis_evident(made), ..Truth::new(Kind::Balance) };
+    // A dash behind a few numbers near zero may be a mark; behind a tared load taken off, again and again, it is a sign.
+    let dashes = made.layout.number.sign == Sign::TrailingNegative && readings.iter().any(|r| r.mass_ug < 0);
+    let truth = Truth {
+        readings,
+        fair: !dashes || made.plan.tare && !made.plan.keyed,
+        steady_evident: steady_evident(made),
+        basis_evident: basis_evident(made),
+        ..Truth::new(Kind::Balance)
+    };
     Capture { bytes, about: about(made, fate), told: Told::default(), truth }
 }
 
