@@ -290,3 +290,109 @@ fn overload_and_parity_are_understood() {
     let frame = stripped.profile.and_then(|p| p.serial).and_then(|s| s.frame).map(String::from);
     assert_eq!(frame.as_deref(), Some("7E1"));
 }
+
+/// Masses in hundredths of a gram, with steadiness and basis, as they were read.
+fn read(learned: &Learned) -> Vec<(i64, Option<bool>, Basis)> {
+    learned.readings.iter().map(|r| (r.mass.ug() / 10_000, r.steady, r.basis)).collect()
+}
+
+#[test]
+fn gross_and_net_by_turns_with_marks_of_rest() {
+    let mut bytes = Vec::new();
+    let mut want = Vec::new();
+    for (i, (h, moves)) in LOADS.iter().chain(&LOADS).enumerate() {
+        let net = i >= LOADS.len();
+        bytes.extend(
+            format!("{} {} {:>8} g\r\n", if net { "N" } else { "G" }, if *moves { "o" } else { "." }, signed(*h)).into_bytes(),
+        );
+        want.push((*h, Some(!moves), if net { Basis::Net } else { Basis::Gross }));
+    }
+    assert_eq!(read(&of(&bytes)), want);
+}
+
+#[test]
+fn slips_of_other_kinds() {
+    let one = |n: i64, h: i64| format!("No. {n:03}\r\nDATE 2031-04-0{n}\r\nWEIGHT {:>8} g\r\n\r\n", decimal(h));
+    let bytes: String = [2346, 5120, 3300, 10450, 812].iter().zip(1..).map(|(h, n)| one(n, *h)).collect();
+    let learned = of(bytes.as_bytes());
+    assert_eq!(read(&learned).iter().map(|r| r.0).collect::<Vec<_>>(), [2346, 5120, 3300, 10450, 812], "{learned:#?}");
+    let net = |h: i64, t: i64| format!("N {:>8} g\r\nT {:>8} g\r\n", decimal(h), decimal(t));
+    let bytes: String = [(2346, 1000), (5120, 1010), (3300, 1020), (812, 990)].iter().map(|(h, t)| net(*h, *t)).collect();
+    assert_eq!(read(&of(bytes.as_bytes())), [2346, 5120, 3300, 812].map(|h| (h, None, Basis::Net)));
+    // Masses under words that say nothing of tare.
+    let odd = |a: i64, b: i64| format!("TIN {:>8} g\r\nSOIL {:>8} g\r\n\r\n", decimal(a), decimal(b));
+    let bytes: String = [(2346, 1000), (5120, 1010), (3300, 1020), (812, 990)].iter().map(|(a, b)| odd(*a, *b)).collect();
+    assert!(of(bytes.as_bytes()).missing[0].contains("gross from net"), "{:?}", of(bytes.as_bytes()).missing);
+    let full = |a: i64| format!("LOAD {:>8} g\r\nFULL   210.00 g\r\n\r\n", decimal(a));
+    let bytes: String = [2346, 5120, 3300, 812].iter().map(|a| full(*a)).collect();
+    assert_eq!(read(&of(bytes.as_bytes())), [2346, 5120, 3300, 812].map(|h| (h, None, Basis::Unmarked)));
+}
+
+#[test]
+fn numbers_beside_the_mass_are_left_alone() {
+    for say in [
+        (|i: usize, h: i64| format!("{:04} {:>8} g 21.5 C", i + 1, signed(h))) as fn(usize, i64) -> String,
+        |i, h| format!("S/N 4711 #{} {:>8} g", i + 1, signed(h)),
+        |i, h| format!("10:20:{:02} {:>8} g", i, signed(h)),
+        |_, h| format!("{:>8} g 210.00 g", signed(h)),
+        |i, h| format!("{},{},g", i + 1, signed(h)),
+    ] {
+        let bytes: Vec<u8> = LOADS.iter().enumerate().flat_map(|(i, (h, _))| (say(i, *h) + "\r\n").into_bytes()).collect();
+        let learned = of(&bytes);
+        let want: Vec<_> = LOADS.iter().map(|(h, _)| (*h, None, Basis::Unmarked)).collect();
+        assert!(read(&learned) == want || read(&learned) == want[1..], "{} {learned:#?}", say(1, 2346));
+    }
+}
+
+#[test]
+fn noise_between_lines_is_left_out() {
+    let whole = capture(|h, m| format!("{:>8} g {}", signed(h), if m { 'U' } else { 'S' }), "\r\n");
+    let lines: Vec<&[u8]> = whole.split_inclusive(|b| *b == b'\n').collect();
+    for noise in [&b"\xF3\x81~\x00q\r\n"[..], b"#@!\r\n", b"\r\n", b"    1#.34 g S\r\n", b"BALANCE READY\r\n"] {
+        let mut bytes = lines[..9].concat();
+        bytes.extend(noise);
+        bytes.extend(lines[9..].concat());
+        bytes.extend(b"   12");
+        let want: Vec<_> = LOADS.iter().map(|(h, m)| (*h, Some(!m), Basis::Unmarked)).collect();
+        let learned = of(&bytes);
+        assert_eq!(read(&learned), want, "{} {:?}", noise.escape_ascii(), learned.missing);
+    }
+}
+
+#[test]
+fn two_balances_on_one_line_are_refused() {
+    let bytes: String =
+        LOADS.iter().map(|(h, _)| format!("{:>8} g\r\nWT: 0.{:03} kg !\r\n", signed(*h), h.abs() % 1000)).collect();
+    assert!(of(bytes.as_bytes()).profile.is_none(), "{:#?}", of(bytes.as_bytes()));
+    let bytes: String =
+        LOADS.iter().map(|(h, _)| format!("{:>8} g\r\n+ {}.{} g\r\n", signed(*h), h.abs() % 90, h.abs() % 10)).collect();
+    assert!(of(bytes.as_bytes()).profile.is_none(), "{:#?}", of(bytes.as_bytes()));
+}
+
+#[test]
+fn frames_without_an_end_are_found_where_only_one_place_fits() {
+    let whole = capture(|h, m| format!("{}{}gS{}", sign(h), zeros(h), if m { 'M' } else { 'R' }), "");
+    let want: Vec<_> = LOADS.iter().map(|(h, m)| (*h, Some(!m), Basis::Unmarked)).collect();
+    assert_eq!(read(&of(&whole)), want);
+    for cut in 1..11 {
+        // The end is missing: the beginning is where a frame begins.
+        let learned = of(&whole[..whole.len() - cut]);
+        assert!(learned.profile.is_none() || read(&learned) == want[..21], "{cut} {learned:#?}");
+        // The beginning is missing: never another number for it.
+        let learned = of(&whole[cut..]);
+        assert!(learned.profile.is_none() || read(&learned) == want[1..], "{cut} {learned:#?}");
+    }
+    assert_eq!(read(&of(&whole[..whole.len() - 3])), want[..21]);
+}
+
+fn zeros(h: i64) -> String {
+    format!("{:04}.{:02}", h.abs() / 100, h.abs() % 100)
+}
+
+#[test]
+fn codes_that_end_like_a_mass_are_none() {
+    for lines in ["A10G\r\nA22G\r\nB31G\r\nB7G\r\n", "10G\r\n22G\r\n31G\r\n7G\r\n"] {
+        let learned = of(lines.as_bytes());
+        assert!(learned.kind != Some(Kind::Balance) || learned.profile.is_none(), "{learned:#?}");
+    }
+}

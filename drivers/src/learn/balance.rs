@@ -65,6 +65,17 @@ fn usual_arrangements(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
     masses.into_iter().zip(&all).filter(|(m, k)| !odd(m, k)).map(|(m, _)| m).collect()
 }
 
+/// Whole numbers that touch a capital unit and never come again: `12G` may be a container.
+fn like_codes(lines: &Lines, masses: &[MassLine], values: &[Value]) -> bool {
+    let glued = |m: &MassLine| {
+        let line = &lines.lines[m.line];
+        let digits = line.text(m.num).iter().all(u8::is_ascii_digit);
+        digits && m.num == 0 && m.unit == Some(1) && line.text(1)[0].is_ascii_uppercase() && line.tokens.len() == 2
+    };
+    let different = values.iter().map(|v| v.ug).collect::<BTreeSet<_>>().len();
+    masses.iter().all(glued) && different * 10 >= values.len() * 8
+}
+
 /// Everything about the mass lines that the roles are found from.
 struct Scene<'a> {
     lines: &'a Lines,
@@ -79,6 +90,13 @@ fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal
     let values = numbers::values(lines, masses, how)?;
     if values.iter().map(|v| v.ug).collect::<BTreeSet<_>>().len() < 2 {
         return refuse(7, "the mass never changes: load and unload the pan once more");
+    }
+    if like_codes(lines, masses, &values) {
+        return Err(Refusal::new(
+            None,
+            7,
+            "the lines could be codes or masses: load and unload the pan once more, or say --kind balance with --mass",
+        ));
     }
     let (before, after): (Vec<Side>, Vec<Side>) = masses.iter().map(|m| sides(lines, m, how.look.sign_after)).unzip();
     let many = || {
@@ -119,11 +137,40 @@ impl Scene<'_> {
     }
 
     fn roles(&self, aligned: &Aligned, is_before: bool) -> Result<Vec<Role>, Refusal> {
-        aligned.cells.iter().map(|cells| self.role(cells, is_before)).collect()
+        (0..aligned.cells.len()).map(|i| self.role(aligned, i, is_before)).collect()
+    }
+
+    /// What a label says when another number follows it, such as in `N 17  12.34 g` or `12.34 g  T 21.5 C`:
+    /// whether it still labels the mass.
+    fn label_before_number(&self, aligned: &Aligned, at: usize, is_before: bool) -> Result<bool, Refusal> {
+        let number = |cells: &Vec<Option<Key>>| cells.iter().flatten().all(|k| matches!(k, Key::Num | Key::Stamp));
+        if self.masses.iter().any(|m| m.several) || !aligned.cells.get(at + 1).is_some_and(number) {
+            return Ok(true);
+        }
+        let words = pattern::words(&aligned.cells[at]);
+        let word = words.first().copied().unwrap_or_default();
+        let Some(label) = words::label(word).filter(|_| words.iter().all(|w| *w == word)) else { return Ok(true) };
+        let nearer = aligned.cells[at + 1..].iter().flatten().flatten();
+        let other = nearer.into_iter().any(|k| matches!(k, Key::Text(t, true) if words::label(t).is_some()));
+        match (is_before, label, word.len()) {
+            (true, _, _) if other => Ok(false),
+            (true, Label::Gross, _) | (true, Label::Net, 2..) => Ok(true),
+            (false, Label::Tare, 1) | (false, _, 2..) => Ok(false),
+            _ => {
+                let word = String::from_utf8_lossy(word);
+                refuse(
+                    7,
+                    format!(
+                        "'{word}' before another number may be a label of the mass or not: set the balance to send the mass alone"
+                    ),
+                )
+            }
+        }
     }
 
     /// What one place is.
-    fn role(&self, cells: &[Option<Key>], is_before: bool) -> Result<Role, Refusal> {
+    fn role(&self, aligned: &Aligned, at: usize, is_before: bool) -> Result<Role, Refusal> {
+        let cells = aligned.cells[at].as_slice();
         let absent = cells.iter().any(Option::is_none);
         let present = || cells.iter().flatten();
         if present().all(|k| matches!(k, Key::Num | Key::Stamp)) {
@@ -137,7 +184,7 @@ impl Scene<'_> {
         }
         let words = pattern::words(cells);
         let distinct: BTreeSet<&[u8]> = words.iter().copied().collect();
-        let labelled = self.labels_here(cells, is_before);
+        let labelled = self.labels_here(cells, is_before) && self.label_before_number(aligned, at, is_before)?;
         if distinct.len() == 1 {
             return self.constant(words[0], labelled);
         }

@@ -160,8 +160,11 @@ fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
         // After a sample's number a capital G labels the mass that follows.
         let whole = !tokens[at].of(body).iter().any(|b| matches!(b, b'.' | b','));
         let label = |i: &usize| next.is_some() && whole && tokens[*i].of(body) == b"G";
+        // Letters that touch the digits on both sides make a code, such as A12G.
+        let code = |i: &usize| whole && *i == at + 1 && at > 0 && tokens[at - 1].sort == Sort::Word;
+        let label = |i: &usize| label(i) || code(i);
         let near = |i: &&usize| Some(*i) == words.first() && !label(i);
-        let far = |i: &&usize| next.is_none() && tokens[**i].of(body) != b"G";
+        let far = |i: &&usize| next.is_none() && !code(i) && tokens[**i].of(body) != b"G";
         let mut units = units.filter(|i| near(i) || far(i));
         units.clone().find(|i| tokens[**i].of(body) != b"G").or(units.next()).copied()
     };
@@ -170,7 +173,6 @@ fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
         let units = region(at).rev().filter(word);
         units.into_iter().find(|i| is_unit(tokens[*i].of(body)) && !matches!(tokens[*i].of(body), b"G"))
     };
-    // Letters that touch the digits on the left make a code, such as A12.
     let any_after = places.iter().any(|p| after(*p).is_some());
     let of = |at: &usize| {
         let before = before(*at);

@@ -114,16 +114,26 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
             "nothing was heard: see that the instrument sends by itself, or press its print key",
         ));
     }
+    let mut endless: Option<Learned> = None;
     for framing in frames::candidates(&heard) {
         match understand(&heard, &framing, hints) {
             Ok(mut learned) => {
                 if let (Some(profile), Some(serial)) = (&mut learned.profile, &serial) {
                     profile.serial = Some(serial.clone());
                 }
-                return learned;
+                // Where frames have no end, only one beginning may make sense.
+                match &endless {
+                    _ if framing.frame.length.is_none() => return learned,
+                    None => endless = Some(learned),
+                    Some(first) if first.readings == learned.readings => {}
+                    Some(_) => return refused(Refusal::new(first_kind(&endless), 9, NO_BEGINNING)),
+                }
             }
             Err(refusal) => keep(refusal),
         }
+    }
+    if let Some(learned) = endless {
+        return learned;
     }
     refused(best.unwrap_or_else(|| {
         Refusal::new(
@@ -132,6 +142,10 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
             "no line end was found: see that speed and character frame are those of the instrument, and send more lines",
         )
     }))
+}
+
+fn first_kind(learned: &Option<Learned>) -> Option<Kind> {
+    learned.as_ref().and_then(|l| l.kind)
 }
 
 fn refused(refusal: Refusal) -> Learned {
@@ -176,5 +190,7 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
     Err(tried.into_iter().max_by_key(|r| r.depth).unwrap_or_else(|| Refusal::new(None, 0, NOT_UNDERSTOOD)))
 }
 
+/// What is said of frames that could begin in two places.
+const NO_BEGINNING: &str = "lines have no end and could begin in two places: listen at the port itself, where pauses tell, or set the instrument to send a line end";
 /// What is said when nothing fits.
 const NOT_UNDERSTOOD: &str = "the lines are not understood: see that speed and frame are right, and load and unload the pan once more, or make a few drops";

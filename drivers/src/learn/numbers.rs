@@ -179,10 +179,13 @@ fn sign(lines: &Lines, masses: &[MassLine]) -> Result<NumberLook, Refusal> {
     let words: Vec<&[u8]> = trail.iter().map(|t| t.unwrap_or(b"")).collect();
     let both = trail.contains(&Some(b"+")) && trail.iter().all(Option::is_some);
     let close = |a: &Value, b: Option<&Value>| b.is_none_or(|b| (a.ug - b.ug).abs() <= 2 * a.step);
-    let at_rest = words.iter().enumerate().any(|(i, w)| {
-        let before = i.checked_sub(1).and_then(|j| plain.get(j));
-        *w == b"-" && plain.get(i).is_some_and(|v| close(v, before) && close(v, plain.get(i + 1)))
-    });
+    let side = |i: usize| (i.checked_sub(1).and_then(|j| plain.get(j)), plain.get(i + 1));
+    let still = |i: usize| plain.get(i).is_some_and(|v| close(v, side(i).0) && close(v, side(i).1));
+    let far = |a: &Value, b: Option<&Value>| b.is_some_and(|b| (a.ug - b.ug).abs() > 5 * a.step);
+    let alone = |i: usize| plain.get(i).is_some_and(|v| far(v, side(i).0) && far(v, side(i).1));
+    let any = |dash: bool, is: &dyn Fn(usize) -> bool| words.iter().enumerate().any(|(i, w)| (*w == b"-") == dash && is(i));
+    // Without a dash the pan rests and moves: the dash is neither mark.
+    let at_rest = any(true, &still) || (any(false, &still) && any(false, &alone));
     let moves = matches!(behave::steadiness(&plain, &words), Meaning::Steadiness { .. });
     // A dash that stands only while the numbers change is a mark of movement, not a sign.
     look.sign_after = match (both, at_rest, moves) {

@@ -62,7 +62,26 @@ pub(super) fn side(line: &Line, tokens: &[usize], unit: Option<usize>, origin: u
         items.push(Item { key, column: token.from - origin.min(token.from), blank });
         blank = 0;
     }
+    abbreviations(&mut items);
     Side { items, blank_after: blank > 0 }
+}
+
+/// `S/N` and the like are one word, and their N is no net.
+fn abbreviations(items: &mut Vec<Item>) {
+    let text = |item: &Item| match &item.key {
+        Key::Text(text, _) => text.clone(),
+        _ => Vec::new(),
+    };
+    let mut i = 0;
+    while i + 2 < items.len() {
+        let whole = items[i..i + 3].iter().flat_map(text).collect::<Vec<u8>>();
+        let close = items[i + 1].blank == 0 && items[i + 2].blank == 0;
+        if close && matches!(whole.to_ascii_uppercase().as_slice(), b"S/N" | b"P/N" | b"I/N" | b"L/N" | b"N/A" | b"B/W") {
+            items[i].key = Key::Text(whole, true);
+            items.drain(i + 1..i + 3);
+        }
+        i += 1;
+    }
 }
 
 /// A place beside the number.
@@ -231,7 +250,7 @@ fn phrases(cells: &mut Vec<Vec<Option<Key>>>, gaps: &mut Vec<Vec<usize>>, blanks
     let mut i = 0;
     while i + 1 < cells.len() {
         // What tells gross from net is a word of its own, however it changes.
-        let word = |k: &Option<Key>| k.as_ref().is_none_or(|k| matches!(k, Key::Text(t, true) if label(t).is_none()));
+        let word = |k: &Option<Key>| k.as_ref().is_none_or(|k| matches!(k, Key::Text(t, _) if label(t).is_none()));
         let pairs: BTreeSet<(&Option<Key>, &Option<Key>)> = cells[i].iter().zip(&cells[i + 1]).collect();
         let (a, b): (BTreeSet<_>, BTreeSet<_>) = pairs.iter().copied().unzip();
         let together = pairs.len() == a.len().max(b.len()) && a.len() > 1 && b.len() > 1;
