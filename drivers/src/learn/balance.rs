@@ -275,6 +275,13 @@ impl Scene<'_> {
         {
             return Ok(Role::Any { words: own(&mut present.iter()), optional: true });
         }
+        // Of two marks the one of zero says nothing of rest, nor does the other where equal masses stand beside it.
+        if let [a, b] = present[..]
+            && !optional
+            && [(a, b), (b, a)].iter().any(|(zero, other)| behave::marks_zero(&self.values, words, zero) && self.repeats(words, other))
+        {
+            return Ok(Role::Any { words: own(&mut present.iter()), optional });
+        }
         if let [a, b] = present[..]
             && !optional
             && self.never_agrees()
@@ -302,6 +309,12 @@ impl Scene<'_> {
     fn follows_movement(&self, words: &[&[u8]]) -> bool {
         let unparted: Vec<Value> = self.values.iter().map(|v| Value { part: 0, ..*v }).collect();
         matches!(behave::steadiness(&unparted, words), Meaning::Steadiness { .. })
+    }
+
+    /// Whether a mass stands twice in a row beside this word.
+    fn repeats(&self, words: &[&[u8]], word: &[u8]) -> bool {
+        let same = |(w, v): (&[&[u8]], &[Value])| w[0] == word && w[1] == word && (v[0].ug - v[1].ug).abs() <= 2 * v[0].step;
+        words.windows(2).zip(self.values.windows(2)).any(same)
     }
 
     /// Whether every value differs from the one before.

@@ -2,6 +2,7 @@
 
 use super::Refusal;
 use super::checksum::Checked;
+use super::digits;
 use super::tokens::{self, Commas, Sort, Token};
 use super::words::{self, Label};
 use std::collections::{BTreeMap, BTreeSet};
@@ -87,6 +88,9 @@ impl Lines {
             Some(Line { body: body.clone(), tokens, at: *at, numbers })
         });
         let mut lines = Self { lines: lines.collect(), checked: checked.clone(), commas };
+        digits::join_codes(&mut lines.lines);
+        lines.turn_units();
+        digits::mark_digits(&mut lines.lines);
         lines.turn_units();
         lines.forget_false_units();
         Ok(lines)
@@ -98,8 +102,26 @@ impl Lines {
         n >= 2 && n * 8 >= self.lines.len()
     }
 
-    /// In `#3 g 12.34` the unit belongs to the number that follows: to the one that changes.
+    /// In `#3 g 12.34` the unit belongs to the number that follows: to the one with decimals, or that changes and
+    /// does not count the lines.
     fn turn_units(&mut self) {
+        let texts = |of: fn(&Num) -> Option<usize>| {
+            let all = self.lines.iter().flat_map(|l| l.numbers.iter().filter(move |n| of(n).is_some()).map(|n| l.text(n.token)));
+            all.collect::<Vec<_>>()
+        };
+        let decimal = |t: &[u8]| t.iter().any(|b| matches!(b, b'.' | b','));
+        let (after, before) = (texts(|n| n.unit), texts(|n| n.before));
+        let decimals = |texts: &[&[u8]]| texts.iter().filter(|t| decimal(t)).count();
+        let by_decimals = decimals(&after) == 0 && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
+        let value = |t: &[u8]| std::str::from_utf8(t).ok().and_then(|t| t.parse::<u64>().ok());
+        let up = after.windows(2).filter(|w| matches!((value(w[0]), value(w[1])), (Some(a), Some(b)) if a.checked_add(1) == Some(b)));
+        let counts_lines = after.len() >= 4 && up.count() * 10 >= (after.len() - 1) * 8;
+        if by_decimals || (counts_lines && before.len() * 10 >= after.len() * 8) {
+            for n in self.lines.iter_mut().flat_map(|l| &mut l.numbers) {
+                n.unit = n.before;
+            }
+            return;
+        }
         let changes = |unit: fn(&Num) -> Option<usize>| {
             let texts =
                 self.lines.iter().flat_map(|l| l.numbers.iter().filter(move |n| unit(n).is_some()).map(|n| l.text(n.token)));
@@ -147,7 +169,7 @@ pub(super) fn is_unit(word: &[u8]) -> bool {
 }
 
 /// The numbers of a line with unit and label.
-fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
+pub(super) fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
     let places: Vec<usize> = (0..tokens.len()).filter(|i| tokens[*i].sort == Sort::Number).collect();
     let edge = |i: usize| matches!(tokens[i].sort, Sort::Number | Sort::Stamp);
     let word = |i: &usize| tokens[*i].sort == Sort::Word;

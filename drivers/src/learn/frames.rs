@@ -141,7 +141,7 @@ fn plausible(heard: &Heard, end: &[u8]) -> bool {
 /// Control characters that end frames, most usual first.
 const CONTROLS: [u8; 9] = [0x03, 0x04, 0x17, 0x1E, 0x00, 0x1D, 0x1C, 0x1F, 0x0C];
 /// Printed characters that end frames.
-const PRINTED: &[u8] = b";#|*$!>/&%@^~\\]})=:?";
+const PRINTED: &[u8] = b";#|*$!>/&%@^~\\})=:?";
 
 /// Every way worth trying, the most telling first.
 pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
@@ -153,12 +153,12 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
         }
     }
     if let Some(end) = newline {
-        out.push(Guess::ends(None, end, 0));
         if let Some(single) = single_byte(heard) {
             let mut guess = Guess::ends(None, end, 0);
             guess.frame.single = char::from(single).to_string();
             out.push(guess);
         }
+        out.push(Guess::ends(None, end, 0));
         for tail in [2, 4, 1] {
             out.push(Guess::ends(None, end, tail));
         }
@@ -180,6 +180,9 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     for end in PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c)) {
         out.push(Guess::ends(None, &[*end], 0));
     }
+    if heard.count(b'\t') >= 2 && plausible(heard, b"\t") {
+        out.push(Guess::ends(None, b"\t", 0));
+    }
     out.extend(super::periodic::candidates(heard));
     out
 }
@@ -200,6 +203,7 @@ fn started(heard: &Heard, start: u8, newline: Option<&'static [u8]>, out: &mut V
     }
     ends.extend(CONTROLS.iter().map(|c| vec![*c]));
     ends.extend([b"\r".to_vec(), b"\n".to_vec()]);
+    ends.extend(PRINTED.iter().map(|c| vec![*c]));
     for end in ends {
         for tail in [0, 2, 1, 4] {
             let fits = |s: &&&[u8]| s.len() > tail + end.len() && s[..s.len() - tail].ends_with(&end);
@@ -221,7 +225,7 @@ fn regular(heard: &Heard, end: u8) -> bool {
 /// A mark that is sent by itself: one byte for each drop.
 fn single_byte(heard: &Heard) -> Option<u8> {
     let alike = heard.bytes.windows(2).all(|w| w[0] == w[1]);
-    let part_of_numbers = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'+' | b'-' | b'.' | b',' | b'=' | b':');
+    let part_of_numbers = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'+' | b'-' | b',');
     let own = |b: u8| b.is_ascii_graphic() && (!part_of_numbers(b) || (alike && !b.is_ascii_digit()));
     let mut runs = heard.bytes.chunk_by(|a, b| a == b).filter(|r| own(r[0]) || r[0] == 0x07);
     let first = runs.next()?[0];

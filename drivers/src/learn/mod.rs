@@ -10,6 +10,7 @@ mod behave;
 mod checksum;
 mod columns;
 mod counter;
+mod digits;
 mod frames;
 mod numbers;
 mod parity;
@@ -168,20 +169,26 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
             }
         }
     };
-    if wanted(Kind::Balance) {
-        for draft in balance::learn(&lines, hints) {
-            if let Some(learned) = attempt(draft) {
-                return Ok(learned);
-            }
+    // A byte for each drop is for counters alone; frames of one length are for masses alone.
+    let (single, fixed) = (!framing.frame.single.is_empty(), framing.frame.length.is_some());
+    if wanted(Kind::Balance) && !single {
+        // Known masses must leave one way to read the numbers, and no second.
+        let ways: Vec<Learned> = balance::learn(&lines, hints).into_iter().filter_map(&mut attempt).collect();
+        if let Some(first) = ways.first() {
+            return match ways.iter().all(|w| w.readings == first.readings) {
+                true => Ok(first.clone()),
+                false => Err(Refusal::new(Some(Kind::Balance), 10, TWO_WAYS)),
+            };
         }
     }
-    if !lines.weighs() {
+    if !lines.weighs() && !fixed {
         if wanted(Kind::Counter)
             && let Some(learned) = attempt(counter::learn(&lines, hints))
         {
             return Ok(learned);
         }
         if wanted(Kind::Scanner)
+            && !single
             && let Some(learned) = attempt(scanner::learn(&lines, hints))
         {
             return Ok(learned);
@@ -192,5 +199,7 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
 
 /// What is said of frames that could begin in two places.
 const NO_BEGINNING: &str = "lines have no end and could begin in two places: listen at the port itself, where pauses tell, or set the instrument to send a line end";
+/// What is said when known masses fit two ways to read the numbers.
+const TWO_WAYS: &str = "the known masses fit the numbers in two ways: say another mass that was put on the pan with --mass, with all its digits, or the unit with --unit";
 /// What is said when nothing fits.
 const NOT_UNDERSTOOD: &str = "the lines are not understood: see that speed and frame are right, and load and unload the pan once more, or make a few drops";

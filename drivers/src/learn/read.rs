@@ -159,8 +159,9 @@ fn near(first: Mass, next: Mass, body: &[u8]) -> bool {
 fn proven(readings: &[(Mass, LearnedReading)], hints: &Hints) -> Result<(), Refusal> {
     for known in &hints.masses {
         let near = |(step, r): &(Mass, LearnedReading)| {
-            let allowed = (5 * step.ug()).max(known.abs().ug() / 500);
-            (r.mass - *known).abs().ug() <= allowed.min(known.abs().ug().max(5 * step.ug()))
+            // Near in steps and in share: else a coarse reading of zero would be near to every small mass.
+            let (away, steps) = ((r.mass - *known).abs().ug(), 5 * step.ug());
+            away <= steps.max(known.abs().ug() / 500) && (known.ug() == 0 || away * 20 <= known.abs().ug())
         };
         if !readings.iter().any(near) {
             let says = format!(

@@ -95,9 +95,14 @@ fn number_from_point(line: &[u8], at: usize) -> (Sort, usize) {
     (Sort::Number, run(line, at + 1, |b| b.is_ascii_digit()))
 }
 
-/// Letters; `gS` is a unit and a mark.
+/// Letters; `gS` is a unit and a mark, `Sg` a mark and a unit.
 fn word(line: &[u8], at: usize) -> usize {
     let to = run(line, at, |b| b.is_ascii_alphabetic());
+    let capitals = run(&line[..to], at, |b| b.is_ascii_uppercase());
+    let own = words::unit(&line[at..to]).is_some();
+    if capitals > at && capitals < to && !own && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
+        return capitals;
+    }
     let small = run(&line[..to], at, |b| b.is_ascii_lowercase());
     if small < to && small > at && words::unit(&line[at..small]).is_some() { small } else { to }
 }
@@ -153,6 +158,7 @@ mod tests {
                 vec![(Word, "ST"), (Mark, ","), (Word, "GS"), (Mark, ","), (Mark, "+"), (Number, "0012.34"), (Word, "g")],
             ),
             ("-  12,34 kg", Commas::Decimal, vec![(Mark, "-"), (Number, "12,34"), (Word, "kg")]),
+            ("Sg12.34", Commas::Decimal, vec![(Word, "S"), (Word, "g"), (Number, "12.34")]),
             ("12.34gS", Commas::Decimal, vec![(Number, "12.34"), (Word, "g"), (Word, "S")]),
             ("2024-01-05 10:20:30", Commas::Decimal, vec![(Stamp, "2024-01-05"), (Stamp, "10:20:30")]),
             ("5.1.2024 7/8", Commas::Decimal, vec![(Stamp, "5.1.2024"), (Stamp, "7/8")]),
