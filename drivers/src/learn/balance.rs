@@ -27,6 +27,7 @@ fn refuse<T>(depth: u8, says: impl Into<String>) -> Result<T, Refusal> {
 pub(super) fn learn(lines: &Lines, hints: &Hints) -> Vec<Result<Draft, Refusal>> {
     let found = pick::pick(lines, hints).and_then(|masses| {
         let masses = numbers::usual(lines, masses)?;
+        let masses = of_one_width(lines, masses);
         let hows = numbers::ways(lines, &masses, hints)?;
         let masses = usual_arrangements(lines, masses);
         Ok((masses, hows))
@@ -63,6 +64,22 @@ fn usual_arrangements(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
     let first = lines.lines.first().map(|l| l.at);
     let odd = |m: &MassLine, k: &Vec<Vec<Key>>| counts[k] == 1 && (many || first == Some(lines.lines[m.line].at));
     masses.into_iter().zip(&all).filter(|(m, k)| !odd(m, k)).map(|(m, _)| m).collect()
+}
+
+/// Leaves out lines of another length where numbers are filled up to one width: they have lost or gained bytes.
+fn of_one_width(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
+    let length = |m: &MassLine| lines.lines[m.line].body.len();
+    let mut counts: BTreeMap<usize, usize> = BTreeMap::new();
+    for m in &masses {
+        *counts.entry(length(m)).or_default() += 1;
+    }
+    let Some((&usual, &n)) = counts.iter().max_by_key(|(_, n)| **n) else { return masses };
+    let digits = |m: &MassLine| lines.lines[m.line].text(m.num);
+    let of_usual = || masses.iter().filter(|m| length(m) == usual);
+    let lengths: BTreeSet<usize> = of_usual().map(|m| digits(m).len()).collect();
+    let filled = of_usual().any(|m| matches!(digits(m), [b'0', b'0'..=b'9', ..]));
+    let few = masses.len() >= 8 && masses.len() - n <= 2 + masses.len() / 20;
+    if few && (lengths.len() > 1 || filled) { masses.into_iter().filter(|m| length(m) == usual).collect() } else { masses }
 }
 
 /// Whole numbers that touch a capital unit and never come again: `12G` may be a container.
@@ -110,11 +127,23 @@ fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal
     let after = slots::align(&after).ok_or_else(many)?;
     let mut scene = Scene { lines, masses, values };
     scene.part_by_label(&before, &after);
-    let roles_before = scene.roles(&before, true)?;
-    let roles_after = scene.roles(&after, false)?;
+    let mut roles_before = scene.roles(&before, true)?;
+    let mut roles_after = scene.roles(&after, false)?;
+    one_mark(&mut roles_before, &mut roles_after);
     let number = how.look.clone();
     let layout = Layout { before: (&before, roles_before), after: (&after, roles_after), number };
     scene.profile(&layout, how)
+}
+
+/// A unit that is left out while the pan moves says nothing more where marks say it.
+fn one_mark(before: &mut [Role], after: &mut [Role]) {
+    if before.iter().chain(after.iter()).any(|r| matches!(r, Role::Steadiness { .. })) {
+        for role in before.iter_mut().chain(after) {
+            if let Role::UnitAtRest { words, .. } = role {
+                *role = Role::Any { words: words.iter().cloned().collect(), optional: true };
+            }
+        }
+    }
 }
 
 impl Scene<'_> {

@@ -3,6 +3,7 @@
 use super::{BYTES_MAX, Piece, Refusal};
 use crate::frame::{Framer, Framing, How};
 use crate::profile::text::FrameText;
+use std::collections::BTreeSet;
 
 /// Lines that are looked at; more would not teach more.
 const FRAMES_MAX: usize = 30_000;
@@ -49,13 +50,15 @@ impl Heard {
 #[derive(Clone, Debug, Default)]
 pub(super) struct Guess {
     pub(super) frame: FrameText,
+    /// The end may be a mark inside frames of one length that have no end.
+    pub(super) doubtful: bool,
 }
 
 impl Guess {
     fn ends(starts: Option<u8>, end: &[u8], tail: usize) -> Self {
         let text = |bytes: &[u8]| bytes.iter().map(|b| char::from(*b)).collect::<String>();
         let starts = starts.map(|b| text(&[b])).unwrap_or_default();
-        Self { frame: FrameText { ends: vec![text(end)], starts, tail, ..FrameText::default() } }
+        Self { frame: FrameText { ends: vec![text(end)], starts, tail, ..FrameText::default() }, doubtful: false }
     }
 
     fn framing(&self) -> Option<Framing> {
@@ -158,6 +161,12 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
             guess.frame.single = char::from(single).to_string();
             out.push(guess);
         }
+        for before in [0x03, 0x04] {
+            let both = [&[before], end].concat();
+            if heard.occurrences(&both) * 10 >= heard.occurrences(end) * 8 {
+                out.push(Guess::ends(None, &both, 0));
+            }
+        }
         out.push(Guess::ends(None, end, 0));
         for tail in [2, 4, 1] {
             out.push(Guess::ends(None, end, tail));
@@ -166,6 +175,11 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     }
     let found = out.len();
     for end in CONTROLS.iter().filter(|c| heard.count(**c) >= 2 && plausible(heard, &[**c])) {
+        if let Some(single) = single_byte(heard) {
+            let mut guess = Guess::ends(None, &[*end], 0);
+            guess.frame.single = char::from(single).to_string();
+            out.push(guess);
+        }
         for tail in [0, 2, 4, 1] {
             out.push(Guess::ends(None, &[*end], tail));
         }
@@ -175,13 +189,15 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     }
     if let Some(single) = single_byte(heard) {
         let frame = FrameText { single: char::from(single).to_string(), ..FrameText::default() };
-        out.push(Guess { frame });
+        out.push(Guess { frame, doubtful: false });
     }
-    for end in PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c)) {
-        out.push(Guess::ends(None, &[*end], 0));
-    }
-    if heard.count(b'\t') >= 2 && plausible(heard, b"\t") {
-        out.push(Guess::ends(None, b"\t", 0));
+    let period = super::periodic::length(&heard.bytes);
+    let tab = heard.count(b'\t') >= 2 && plausible(heard, b"\t");
+    let printed = PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c));
+    for end in printed.chain(tab.then_some(&b'\t')) {
+        if let Some(doubtful) = inside(heard, *end, period) {
+            out.push(Guess { doubtful, ..Guess::ends(None, &[*end], 0) });
+        }
     }
     out.extend(super::periodic::candidates(heard));
     out
@@ -220,6 +236,21 @@ fn regular(heard: &Heard, end: u8) -> bool {
     let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
     let (least, most) = (inner.iter().min().copied().unwrap_or(0), inner.iter().max().copied().unwrap_or(0));
     inner.len() >= 3 && least >= 2 && most <= least * 2 + 8
+}
+
+/// Whether a character may stand inside frames of one length instead of ending them; `None` where it parts their fields.
+fn inside(heard: &Heard, end: u8, period: Option<usize>) -> Option<bool> {
+    let Some(length) = period else { return Some(false) };
+    let pieces: Vec<&[u8]> = heard.bytes.split(|b| *b == end).collect();
+    let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
+    let per_frame = heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64);
+    // Of two pieces one may be a question that the instrument sends back.
+    let constant = |from: usize| inner.iter().skip(from).step_by(2).collect::<BTreeSet<_>>().len() == 1;
+    match () {
+        () if per_frame > 2.5 => None,
+        () if per_frame > 1.5 && !(constant(0) || constant(1)) => None,
+        () => Some(heard.bytes.last() != Some(&end)),
+    }
 }
 
 /// A mark that is sent by itself: one byte for each drop.

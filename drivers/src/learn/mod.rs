@@ -124,9 +124,10 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
                 }
                 // Where frames have no end, only one beginning may make sense.
                 match &endless {
-                    _ if framing.frame.length.is_none() => return learned,
+                    _ if framing.frame.length.is_none() && !framing.doubtful => return learned,
                     None => endless = Some(learned),
-                    Some(first) if first.readings == learned.readings => {}
+                    Some(first) if within(&first.readings, &learned.readings) => endless = Some(learned),
+                    Some(first) if within(&learned.readings, &first.readings) => {}
                     Some(_) => return refused(Refusal::new(first_kind(&endless), 9, NO_BEGINNING)),
                 }
             }
@@ -143,6 +144,12 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
             "no line end was found: see that speed and character frame are those of the instrument, and send more lines",
         )
     }))
+}
+
+/// Whether these are those, but for one at either end that may be cut.
+fn within(these: &[LearnedReading], those: &[LearnedReading]) -> bool {
+    let less = those.len().saturating_sub(these.len());
+    !these.is_empty() && less <= 2 && those.windows(these.len()).any(|w| w == these)
 }
 
 fn first_kind(learned: &Option<Learned>) -> Option<Kind> {

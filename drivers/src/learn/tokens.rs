@@ -95,13 +95,17 @@ fn number_from_point(line: &[u8], at: usize) -> (Sort, usize) {
     (Sort::Number, run(line, at + 1, |b| b.is_ascii_digit()))
 }
 
-/// Letters; `gS` is a unit and a mark, `Sg` a mark and a unit.
+/// Letters; `gS` is a unit and a mark, `Sg` a mark and a unit, `netg` a label and a unit.
 fn word(line: &[u8], at: usize) -> usize {
     let to = run(line, at, |b| b.is_ascii_alphabetic());
     let capitals = run(&line[..to], at, |b| b.is_ascii_uppercase());
     let own = words::unit(&line[at..to]).is_some();
     if capitals > at && capitals < to && !own && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
         return capitals;
+    }
+    let labelled = ["kg", "mg", "g"].iter().filter_map(|u| line[at..to].strip_suffix(u.as_bytes()));
+    if let Some(label) = labelled.into_iter().find(|stem| !own && stem.len() > 2 && words::label(stem).is_some()) {
+        return at + label.len();
     }
     let small = run(&line[..to], at, |b| b.is_ascii_lowercase());
     if small < to && small > at && words::unit(&line[at..small]).is_some() { small } else { to }

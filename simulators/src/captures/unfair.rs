@@ -79,7 +79,10 @@ fn no_phase(rng: &mut Rng) -> Capture {
     let mut capture = speak(rng, &made);
     let cut = size(rng, 1, 9).min(capture.bytes.len() / 2);
     capture.bytes.drain(..cut);
-    capture.truth.readings.remove(0);
+    // What was cut may have stood in front of the number, which is then still what was shown.
+    if let Some(first) = capture.truth.readings.first_mut() {
+        first.must = false;
+    }
     capture
 }
 
