@@ -78,7 +78,12 @@ fn of_one_width(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
     let of_usual = || masses.iter().filter(|m| length(m) == usual);
     let lengths: BTreeSet<usize> = of_usual().map(|m| digits(m).len()).collect();
     let filled = of_usual().any(|m| matches!(digits(m), [b'0', b'0'..=b'9', ..]));
-    let few = masses.len() >= 8 && masses.len() - n <= 2 + masses.len() / 20;
+    // Several of one other length, or two in a row, are a wider number or mark and no loss.
+    let first = lines.lines.first().map(|l| l.at);
+    let odd = |m: &&MassLine| length(m) != usual && first != Some(lines.lines[m.line].at);
+    let several = counts.iter().any(|(l, n)| *l != usual && *n > 1 + masses.len() / 50);
+    let together = masses.windows(2).any(|w| odd(&&w[0]) && odd(&&w[1]));
+    let few = masses.len() >= 8 && masses.len() - n <= 2 + masses.len() / 20 && !several && !together;
     if few && (lengths.len() > 1 || filled) { masses.into_iter().filter(|m| length(m) == usual).collect() } else { masses }
 }
 
@@ -98,6 +103,8 @@ struct Scene<'a> {
     lines: &'a Lines,
     masses: &'a [MassLine],
     values: Vec<Value>,
+    /// For each place of a label that comes and goes, the lines that have it.
+    labelled: Vec<Vec<bool>>,
 }
 
 fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal> {
@@ -125,7 +132,7 @@ fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal
     };
     let before = slots::align(&before).ok_or_else(many)?;
     let after = slots::align(&after).ok_or_else(many)?;
-    let mut scene = Scene { lines, masses, values };
+    let mut scene = Scene { lines, masses, values, labelled: Vec::new() };
     scene.part_by_label(&before, &after);
     let mut roles_before = scene.roles(&before, true)?;
     let mut roles_after = scene.roles(&after, false)?;
@@ -155,6 +162,9 @@ impl Scene<'_> {
             let kinds: BTreeSet<Option<Label>> = words.iter().map(|w| words::label(w)).collect();
             let all = words.iter().all(|w| w.is_empty() || words::label(w).is_some());
             if all && kinds.len() > 1 {
+                if kinds.contains(&None) {
+                    self.labelled.push(words.iter().map(|w| !w.is_empty()).collect());
+                }
                 for (p, w) in part.iter_mut().zip(&words) {
                     *p = *p * 4 + words::label(w).map_or(0, |l| l as u32 + 1);
                 }
@@ -292,6 +302,10 @@ impl Scene<'_> {
                 );
             }
             return self.basis(words, &present, &labels, optional);
+        }
+        // Brackets about a label come and go with it.
+        if optional && present.len() == 1 && self.labelled.iter().any(|l| l.iter().zip(words).all(|(l, w)| *l != w.is_empty())) {
+            return Ok(Role::Any { words: own(&mut present.iter()), optional: true });
         }
         if let Meaning::Steadiness { steady, moving } = meaning {
             return Ok(Role::Steadiness { steady, moving });

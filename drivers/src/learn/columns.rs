@@ -61,15 +61,18 @@ impl Line {
 }
 
 /// Whether a line is text: printable, but for the few control characters that dialects use.
-pub(super) fn is_text(body: &[u8]) -> bool {
-    body.iter().all(|b| b.is_ascii_graphic() || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17))
+/// Letters beyond ASCII only where most lines have them.
+pub(super) fn is_text(body: &[u8], letters: bool) -> bool {
+    body.iter().all(|b| b.is_ascii_graphic() || (letters && *b >= 0x80) || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17))
 }
 
 impl Lines {
     /// Takes all lines apart.
     pub(super) fn new(checked: &Checked) -> Result<Self, Refusal> {
         let spoken: Vec<&(usize, Vec<u8>)> = checked.lines.iter().filter(|(_, b)| !b.trim_ascii().is_empty()).collect();
-        let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b)).collect();
+        let high = spoken.iter().filter(|(_, b)| !b.is_ascii()).count();
+        let letters = high * 2 >= spoken.len() && spoken.iter().all(|(_, b)| b.iter().filter(|b| **b >= 0x80).count() * 2 <= b.len());
+        let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b, letters)).collect();
         if texts.len() * 10 < spoken.len() * 7 || texts.len() < 3 {
             let says = "the bytes are no text: listen again with another speed or character frame, such as 7E1 or 7O1";
             return Err(Refusal::new(None, 1, says));
@@ -88,6 +91,7 @@ impl Lines {
             Some(Line { body: body.clone(), tokens, at: *at, numbers })
         });
         let mut lines = Self { lines: lines.collect(), checked: checked.clone(), commas };
+        digits::split_labels(&mut lines.lines);
         digits::join_codes(&mut lines.lines);
         lines.turn_units();
         digits::mark_digits(&mut lines.lines);

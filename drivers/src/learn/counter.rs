@@ -120,19 +120,20 @@ fn running(lines: &Lines, main: &Family<'_>, rest: &[Family<'_>], ordinal: usize
     let line = main.lines[0].1;
     let at = line.numbers[ordinal].token;
     let glued = at > 0 && line.tokens[at - 1].sort == Sort::Word;
-    if glued && !words::counting(&text) && !told {
+    let series = main.series(ordinal).unwrap_or_default();
+    let place: Vec<usize> = main.lines.iter().map(|(i, _)| *i).collect();
+    let last = |at: usize| place.iter().rposition(|p| *p < at).map(|i| series[i]);
+    let ends: Vec<LineText> = rest.iter().filter_map(|f| ending(f, &last)).collect();
+    // Runs that begin anew and are ended by their count are no containers.
+    let ended = !ends.is_empty() && series.windows(2).any(|w| w[1] < w[0]);
+    if glued && !words::counting(&text) && !told && !ended {
         return refuse(4, UNCLEAR);
     }
     if main.lines.len() < 4 && !words::counting(&text) && !told {
         return refuse(4, UNCLEAR);
     }
     let mut out = vec![plain(main.pattern(Some((ordinal, "total"))), None)];
-    let series = main.series(ordinal).unwrap_or_default();
-    let place: Vec<usize> = main.lines.iter().map(|(i, _)| *i).collect();
-    let last = |at: usize| place.iter().rposition(|p| *p < at).map(|i| series[i]);
-    for family in rest {
-        out.extend(ending(family, &last));
-    }
+    out.extend(ends);
     finish(lines, out)
 }
 

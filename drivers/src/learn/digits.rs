@@ -1,4 +1,5 @@
-//! Digits that are no numbers: those of constant codes such as `OP07`, and marks written as one digit.
+//! What is otherwise written than it seems: digits of constant codes such as `OP07`, marks written as one digit, and
+//! labels of gross and net that touch another mark.
 
 use super::columns::{Line, numbers};
 use super::tokens::{Sort, Token};
@@ -16,7 +17,7 @@ fn code_at(line: &Line, at: usize) -> Option<usize> {
     }
     let to = match (sort(at + 1), sort(at + 2)) {
         (Some(Sort::Number), _) => at + 2,
-        (Some(Sort::Mark), Some(Sort::Number)) if !matches!(line.text(at + 1), b"+" | b"-" | b"=" | b":" | b",") => at + 3,
+        (Some(Sort::Mark), Some(Sort::Number)) if !matches!(line.text(at + 1), b"+" | b"=" | b":" | b",") => at + 3,
         _ => return None,
     };
     let whole = |text: &[u8]| text.iter().enumerate().all(|(i, b)| b.is_ascii_digit() || (i == 0 && *b == b'.'));
@@ -95,5 +96,36 @@ pub(super) fn mark_digits(lines: &mut [Line]) {
         if !found.is_empty() {
             line.numbers = numbers(&line.body, &line.tokens);
         }
+    }
+}
+
+/// Takes labels of gross and net off the end of words whose other letters change too: `TG`, `TN`, `OG`, `ON`.
+pub(super) fn split_labels(lines: &mut [Line]) {
+    let mut stems: BTreeMap<Vec<u8>, BTreeSet<u8>> = BTreeMap::new();
+    for line in lines.iter() {
+        for token in line.tokens.iter().filter(|t| t.sort == Sort::Word) {
+            let word = token.of(&line.body);
+            if let Some((last @ (b'G' | b'B' | b'N'), stem)) = word.split_last().filter(|(_, s)| !s.is_empty()) {
+                stems.entry(stem.to_vec()).or_default().insert(*last);
+            }
+        }
+    }
+    let length = stems.iter().find(|(_, lasts)| lasts.len() > 1).map(|(stem, _)| stem.len());
+    stems.retain(|stem, _| Some(stem.len()) == length);
+    let Some(length) = length.filter(|_| stems.len() > 1) else { return };
+    for line in lines {
+        let mut tokens = Vec::new();
+        for token in &line.tokens {
+            let word = token.of(&line.body);
+            let labelled = matches!(word.last(), Some(b'G' | b'B' | b'N')) && word.len() == length + 1;
+            if token.sort == Sort::Word && labelled && stems.contains_key(&word[..length]) {
+                tokens.push(Token { to: token.to - 1, ..*token });
+                tokens.push(Token { from: token.to - 1, ..*token });
+            } else {
+                tokens.push(*token);
+            }
+        }
+        line.tokens = tokens;
+        line.numbers = numbers(&line.body, &line.tokens);
     }
 }

@@ -161,6 +161,12 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
             guess.frame.single = char::from(single).to_string();
             out.push(guess);
         }
+        if heard.occurrences(&[end, b"\x0C"].concat()) >= 2 {
+            // Slips that a form feed ends.
+            let mut guess = Guess::ends(None, end, 0);
+            guess.frame.ends.push("\u{C}".into());
+            out.push(guess);
+        }
         for before in [0x03, 0x04] {
             let both = [&[before], end].concat();
             if heard.occurrences(&both) * 10 >= heard.occurrences(end) * 8 {
@@ -243,13 +249,16 @@ fn inside(heard: &Heard, end: u8, period: Option<usize>) -> Option<bool> {
     let Some(length) = period else { return Some(false) };
     let pieces: Vec<&[u8]> = heard.bytes.split(|b| *b == end).collect();
     let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
-    let per_frame = heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64);
+    // Pieces of one length each are the frames themselves.
+    let even = inner.iter().map(|p| p.len()).collect::<BTreeSet<_>>().len() == 1;
+    let per_frame = if even { 1.0 } else { heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64) };
+    let begins = even && pieces.first().map(|p| p.len()) == inner.first().map(|p| p.len());
     // Of two pieces one may be a question that the instrument sends back.
     let constant = |from: usize| inner.iter().skip(from).step_by(2).collect::<BTreeSet<_>>().len() == 1;
     match () {
         () if per_frame > 2.5 => None,
         () if per_frame > 1.5 && !(constant(0) || constant(1)) => None,
-        () => Some(heard.bytes.last() != Some(&end)),
+        () => Some(heard.bytes.last() != Some(&end) && !begins),
     }
 }
 

@@ -27,9 +27,13 @@ pub(super) struct MassLine {
 /// The mass lines of a capture.
 pub(super) fn pick(lines: &Lines, hints: &Hints) -> Result<Vec<MassLine>, Refusal> {
     let with_unit = lines.weighs();
+    // Where most numbers have decimals, a whole one is that of a fault or the like.
+    let decimal = |l: &Line| l.numbers.iter().any(|n| l.text(n.token).iter().any(|b| matches!(b, b'.' | b',')));
+    let numbered = lines.lines.iter().filter(|l| !l.numbers.is_empty()).count();
+    let decimals = lines.lines.iter().filter(|l| decimal(l)).count() * 10 >= numbered * 7;
     let mut groups: BTreeMap<usize, Vec<usize>> = BTreeMap::new();
     for (i, line) in lines.lines.iter().enumerate() {
-        let speaks = if with_unit { line.weighs() } else { !line.numbers.is_empty() };
+        let speaks = if with_unit { line.weighs() } else { !line.numbers.is_empty() && (!decimals || decimal(line)) };
         if speaks && !words::overload(&line.body) && !words::underload(&line.body) {
             groups.entry(line.numbers.len()).or_default().push(i);
         }
@@ -179,6 +183,10 @@ fn without_unit(lines: &Lines, found: &[MassLine]) -> Vec<MassLine> {
     if found.iter().any(|m| m.several || lines.lines[m.line].numbers.len() != 1) {
         return Vec::new();
     }
+    // They may have a mark of their own.
+    let bare = lines.lines.iter().filter(|l| !l.weighs() && l.numbers.len() == 1);
+    let own: BTreeSet<Vec<u8>> = bare.flat_map(|l| rest(l, None)).filter(|w| !words.contains(w)).collect();
+    let words: BTreeSet<Vec<u8>> = if own.len() == 1 { words.union(&own).cloned().collect() } else { words };
     let shape = |i: usize, l: &Line| {
         let n = l.numbers.first()?;
         let same =

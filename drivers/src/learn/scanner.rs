@@ -60,10 +60,10 @@ fn without_symbology(code: &[u8]) -> &[u8] {
 
 /// `blanks` says whether a code may hold one, as in `tin 17`.
 fn is_code(text: &[u8], blanks: bool) -> bool {
-    let begins = text.first().is_some_and(|b| b.is_ascii_alphanumeric() || *b == b'+');
+    let begins = text.first().is_some_and(|b| b.is_ascii_alphanumeric() || *b == b'+' || *b >= 0x80);
     let words = text.split(|b| *b == b' ').count();
-    let plain = words == 1 || (blanks && words == 2 && text[0].is_ascii_alphabetic());
-    begins && plain && text.len() <= CODE_MAX && text.iter().all(|b| b.is_ascii_graphic() || *b == b' ') && !decimal(text)
+    let plain = words == 1 || (blanks && words == 2 && !text[0].is_ascii_digit());
+    begins && plain && text.len() <= CODE_MAX && std::str::from_utf8(text).is_ok() && text.iter().all(|b| b.is_ascii_graphic() || *b == b' ' || *b >= 0x80) && !decimal(text)
 }
 
 /// How many different words codes begin with.

@@ -44,19 +44,26 @@ pub(super) enum Commas {
 
 /// How all lines together use commas.
 pub(super) fn commas(lines: &[&[u8]]) -> Commas {
-    let (mut fields, mut between, mut points) = (false, false, false);
+    // A line or two of another sort, such as a greeting, do not count among many.
+    let few = if lines.len() < 8 { 0 } else { 1 + lines.len() / 30 };
+    let (mut fields, mut between, mut points) = (0, 0, 0);
     for line in lines {
         let digit = |i: Option<usize>| i.and_then(|i| line.get(i)).is_some_and(u8::is_ascii_digit);
+        let mut seen = [false; 3];
         for (i, b) in line.iter().enumerate() {
             let inside = digit(i.checked_sub(1)) && digit(Some(i + 1));
             match b {
-                b',' if inside => between = true,
-                b',' => fields = true,
-                b'.' if inside => points = true,
+                b',' if inside => seen[0] = true,
+                b',' => seen[1] = true,
+                b'.' if inside => seen[2] = true,
                 _ => {}
             }
         }
+        between += usize::from(seen[0]);
+        fields += usize::from(seen[1]);
+        points += usize::from(seen[2]);
     }
+    let (fields, between, points) = (fields > few, between > few, points > few);
     match (fields, between) {
         (true, true) if points => Commas::Fields,
         (true, true) => Commas::Unclear,
@@ -74,7 +81,9 @@ pub(super) fn tokens(line: &[u8], commas: Commas) -> Vec<Token> {
             b' ' | b'\t' => (Sort::Blank, run(line, at, |b| matches!(b, b' ' | b'\t'))),
             b if b.is_ascii_digit() => digits(line, at, commas),
             b'.' if line.get(at + 1).is_some_and(u8::is_ascii_digit) && !before_is_digit(line, at) => number_from_point(line, at),
-            b if b.is_ascii_alphabetic() => (Sort::Word, word(line, at)),
+            b if b.is_ascii_alphabetic() || b >= 0x80 => (Sort::Word, word(line, at)),
+            // What parts fields stands by itself, so that an empty field stays one.
+            b'|' | b';' | b',' => (Sort::Mark, at + 1),
             b => (Sort::Mark, run(line, at, |c| c == b)),
         };
         out.push(Token { sort, from: at, to });
@@ -97,7 +106,7 @@ fn number_from_point(line: &[u8], at: usize) -> (Sort, usize) {
 
 /// Letters; `gS` is a unit and a mark, `Sg` a mark and a unit, `netg` a label and a unit.
 fn word(line: &[u8], at: usize) -> usize {
-    let to = run(line, at, |b| b.is_ascii_alphabetic());
+    let to = run(line, at, |b| b.is_ascii_alphabetic() || b >= 0x80);
     let capitals = run(&line[..to], at, |b| b.is_ascii_uppercase());
     let own = words::unit(&line[at..to]).is_some();
     if capitals > at && capitals < to && !own && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
