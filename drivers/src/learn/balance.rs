@@ -213,6 +213,10 @@ impl Scene<'_> {
         let absent = cells.iter().any(Option::is_none);
         let present = || cells.iter().flatten();
         if present().all(|k| matches!(k, Key::Num | Key::Stamp)) {
+            // `4 371.13`: digits in groups look so.
+            if absent && is_before && at + 1 == aligned.cells.len() && present().any(|k| *k == Key::Num) {
+                return refuse(7, "a number stands in front of some masses only: set the balance to group no digits");
+            }
             return Ok(Role::Digits { stamp: present().any(|k| *k == Key::Stamp), optional: absent });
         }
         if present().all(|k| matches!(k, Key::Unit(_))) {
@@ -294,6 +298,9 @@ impl Scene<'_> {
         let optional = present.len() < distinct.len();
         let meaning = behave::steadiness(&self.values, words);
         let of_basis = present.iter().all(|w| words::label(w).is_some()) && labels.len() + usize::from(optional) >= 2;
+        if of_basis && !labelled {
+            return refuse(8, "a word may tell gross from net or belong to another number: set the balance to send the mass alone");
+        }
         if of_basis && labelled {
             if self.follows_movement(words) {
                 return refuse(
@@ -309,6 +316,9 @@ impl Scene<'_> {
         }
         if let Meaning::Steadiness { steady, moving } = meaning {
             return Ok(Role::Steadiness { steady, moving });
+        }
+        if let Some(role) = self.zero_among(words, &present) {
+            return Ok(role);
         }
         if let Some(role) = self.cycle(words, distinct)? {
             return Ok(role);
@@ -352,6 +362,23 @@ impl Scene<'_> {
     fn follows_movement(&self, words: &[&[u8]]) -> bool {
         let unparted: Vec<Value> = self.values.iter().map(|v| Value { part: 0, ..*v }).collect();
         matches!(behave::steadiness(&unparted, words), Meaning::Steadiness { .. })
+    }
+
+    /// Marks of which one stands for rest at zero: taken together with that of rest elsewhere they are plain.
+    fn zero_among(&self, words: &[&[u8]], present: &[&[u8]]) -> Option<Role> {
+        let at_zero = |word: &&&[u8]| words.iter().zip(&self.values).all(|(w, v)| w != *word || v.ug == 0);
+        let zero: &[u8] = present.iter().find(at_zero).copied().filter(|_| present.len() >= 3)?;
+        let mut found = present.iter().filter(|w| **w != zero).filter_map(|rest| {
+            let merged: Vec<&[u8]> = words.iter().map(|w| if *w == zero { *rest } else { *w }).collect();
+            match behave::steadiness(&self.values, &merged) {
+                Meaning::Steadiness { mut steady, moving } if steady.iter().any(|s| s == rest) => {
+                    steady.push(zero.to_vec());
+                    Some(Role::Steadiness { steady, moving })
+                }
+                _ => None,
+            }
+        });
+        found.next().filter(|_| found.next().is_none())
     }
 
     /// Whether a mass stands twice in a row beside this word.

@@ -1,7 +1,7 @@
 //! What is otherwise written than it seems: digits of constant codes such as `OP07`, marks written as one digit, and
 //! labels of gross and net that touch another mark.
 
-use super::columns::{Line, numbers};
+use super::columns::{Line, is_unit, numbers};
 use super::tokens::{Sort, Token};
 use std::collections::{BTreeMap, BTreeSet};
 
@@ -12,12 +12,12 @@ const MARKS_MAX: usize = 4;
 fn code_at(line: &Line, at: usize) -> Option<usize> {
     let sort = |i: usize| line.tokens.get(i).map(|t| t.sort);
     let touches = at > 0 && !matches!(line.tokens[at - 1].sort, Sort::Blank | Sort::Mark);
-    if sort(at) != Some(Sort::Word) || touches {
+    if sort(at) != Some(Sort::Word) || touches || is_unit(line.text(at)) {
         return None;
     }
     let to = match (sort(at + 1), sort(at + 2)) {
         (Some(Sort::Number), _) => at + 2,
-        (Some(Sort::Mark), Some(Sort::Number)) if !matches!(line.text(at + 1), b"+" | b"=" | b":" | b",") => at + 3,
+        (Some(Sort::Mark), Some(Sort::Number)) if matches!(line.text(at + 1), b"-" | b"." | b"_" | b"/") => at + 3,
         _ => return None,
     };
     let whole = |text: &[u8]| text.iter().enumerate().all(|(i, b)| b.is_ascii_digit() || (i == 0 && *b == b'.'));

@@ -193,14 +193,18 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     if out.len() > found {
         return out;
     }
-    if let Some(single) = single_byte(heard) {
+    let spoken = heard.bytes.iter().filter(|b| !b.is_ascii_whitespace()).count();
+    if let Some(single) = single_byte(heard).filter(|s| heard.count(*s) == spoken) {
         let frame = FrameText { single: char::from(single).to_string(), ..FrameText::default() };
         out.push(Guess { frame, doubtful: false });
     }
     let period = super::periodic::length(&heard.bytes);
     let tab = heard.count(b'\t') >= 2 && plausible(heard, b"\t");
     let printed = PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c));
-    for end in printed.chain(tab.then_some(&b'\t')) {
+    // What is seldom an end must at least end what was heard, and only where nothing more usual does.
+    let semicolon = regular(heard, b';');
+    let usual = |c: u8| matches!(c, b';' | b'\t') || (!semicolon && heard.bytes.last() == Some(&c));
+    for end in printed.filter(|c| usual(**c)).chain(tab.then_some(&b'\t')) {
         if let Some(doubtful) = inside(heard, *end, period) {
             out.push(Guess { doubtful, ..Guess::ends(None, &[*end], 0) });
         }
@@ -272,7 +276,8 @@ fn single_byte(heard: &Heard) -> Option<u8> {
     let alone = heard.bytes.iter().filter(|b| **b == first).count();
     let others = heard.bytes.chunk_by(|a, b| (*a == first) == (*b == first)).filter(|r| r[0] == first);
     let runs: Vec<usize> = others.map(<[u8]>::len).collect();
-    (alone >= 5 && runs.iter().all(|n| *n >= 3)).then_some(first)
+    // Hardly anything else is heard of such a counter.
+    (alone >= 5 && alone * 2 >= heard.bytes.len() && runs.iter().all(|n| *n >= 3)).then_some(first)
 }
 
 #[cfg(test)]

@@ -116,6 +116,7 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
         ));
     }
     let mut endless: Option<Learned> = None;
+    let mut confirmed = true;
     for framing in frames::candidates(&heard) {
         match understand(&heard, &framing, hints) {
             Ok(mut learned) => {
@@ -125,9 +126,17 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
                 // Where frames have no end, only one beginning may make sense.
                 match &endless {
                     _ if framing.frame.length.is_none() && !framing.doubtful => return learned,
-                    None => endless = Some(learned),
-                    Some(first) if within(&first.readings, &learned.readings) => endless = Some(learned),
-                    Some(first) if within(&learned.readings, &first.readings) => {}
+                    None => {
+                        // Where frames begin is no matter only where nothing but the mass is read of them.
+                        let plain = learned.readings.iter().all(|r| r.steady.is_none() && r.basis == Basis::Unmarked);
+                        confirmed = !framing.doubtful || plain;
+                        endless = Some(learned);
+                    }
+                    Some(first) if within(&first.readings, &learned.readings) => {
+                        confirmed = true;
+                        endless = Some(learned);
+                    }
+                    Some(first) if within(&learned.readings, &first.readings) => confirmed = true,
                     Some(_) => return refused(Refusal::new(first_kind(&endless), 9, NO_BEGINNING)),
                 }
             }
@@ -135,7 +144,7 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
         }
     }
     if let Some(learned) = endless {
-        return learned;
+        return if confirmed { learned } else { refused(Refusal::new(learned.kind, 9, NO_BEGINNING)) };
     }
     refused(best.unwrap_or_else(|| {
         Refusal::new(

@@ -125,34 +125,20 @@ fn contradictions(told: &[Told], draft: &Draft, lines: &Lines) -> Result<(), Ref
     Ok(())
 }
 
-/// The first line may have begun before anybody listened: `2.34 g` may be the tail of `12.34 g`.
+/// The first line may have begun before anybody listened: `2.34 g` may be the tail of `12.34 g`, and a mark in front of it
+/// may be missing. A start byte, a check or a code as long as the next speak against it.
 fn first_may_be_cut(told: &[Told], text: &ProfileText) -> bool {
     let Some(first) = told.first().filter(|t| t.at == 0) else { return false };
     if !text.frame.starts.is_empty() || text.frame.length.is_some() || text.check.is_some() {
         return false;
     }
     let second = told.iter().skip(1).find(|t| std::mem::discriminant(&t.what) == std::mem::discriminant(&first.what));
-    let same_length = second.is_some_and(|s| s.body.len() == first.body.len());
     match (&first.what, second.map(|s| &s.what)) {
-        (What::Signal(Signal::Mass(r)), next) => {
-            let begins = first.body.first().is_some_and(|b| !b.is_ascii_digit() && !matches!(b, b'.' | b',' | b' ' | b'\t'));
-            let near = matches!(next, Some(What::Signal(Signal::Mass(n))) if near(r.mass, n.mass, &first.body));
-            let digits = |b: &[u8]| b.iter().position(|b| !b.is_ascii_digit()).unwrap_or(b.len());
-            let longest = told.iter().skip(1).filter(|t| reading(&t.what).is_some()).map(|t| digits(&t.body)).max().unwrap_or(0);
-            let long = digits(&first.body) > 0 && digits(&first.body) >= longest;
-            !(begins || same_length || near || long)
-        }
+        (What::Signal(Signal::Mass(_)), _) => true,
         (What::Signal(Signal::Total(n)), Some(What::Signal(Signal::Total(next)))) => *next != n + 1 && *next > 1,
-        (What::Signal(Signal::Code(_)), _) => !same_length,
+        (What::Signal(Signal::Code(_)), _) => second.is_none_or(|s| s.body.len() != first.body.len()),
         _ => false,
     }
-}
-
-/// Whether a digit cannot well be missing in front: the next mass is about the same.
-fn near(first: Mass, next: Mass, body: &[u8]) -> bool {
-    let digits = body.iter().skip_while(|b| !b.is_ascii_digit()).take_while(|b| b.is_ascii_digit()).count();
-    let missing = 10f64.powi(i32::try_from(digits.min(9)).unwrap_or(9));
-    (first - next).abs().grams() * 8.0 <= missing
 }
 
 /// Every known mass must have been read.
