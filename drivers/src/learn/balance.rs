@@ -314,10 +314,15 @@ impl Scene<'_> {
         if optional && present.len() == 1 && self.labelled.iter().any(|l| l.iter().zip(words).all(|(l, w)| *l != w.is_empty())) {
             return Ok(Role::Any { words: own(&mut present.iter()), optional: true });
         }
-        if let Meaning::Steadiness { steady, moving } = meaning {
+        // Many words, or words seen once, are rather check digits that no check was found for.
+        let once = |w: &&[u8]| words.iter().filter(|o| *o == w).count() == 1;
+        let many = present.len() > 4 || (present.len() > 2 && present.iter().filter(|w| once(w)).count() > 1);
+        if let Meaning::Steadiness { steady, moving } = meaning
+            && !many
+        {
             return Ok(Role::Steadiness { steady, moving });
         }
-        if let Some(role) = self.zero_among(words, &present) {
+        if let Some(role) = self.zero_among(words, &present).filter(|_| !many) {
             return Ok(role);
         }
         if let Some(role) = self.cycle(words, distinct)? {

@@ -199,7 +199,9 @@ pub(super) fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
         let units = region(at).rev().filter(word);
         units.into_iter().find(|i| is_unit(tokens[*i].of(body)) && !matches!(tokens[*i].of(body), b"G"))
     };
-    let any_after = places.iter().any(|p| after(*p).is_some());
+    // Behind a number that has its unit in front, a G is a label.
+    let own = |p: usize| after(p).is_some_and(|u| tokens[u].of(body) != b"G" || before(p).is_none());
+    let any_after = places.iter().any(|p| own(*p));
     let of = |at: &usize| {
         let before = before(*at);
         let unit = if any_after { after(*at) } else { before };

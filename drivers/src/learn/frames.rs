@@ -240,12 +240,18 @@ fn started(heard: &Heard, start: u8, newline: Option<&'static [u8]>, out: &mut V
     }
 }
 
-/// A character that cuts everything into pieces of much the same length.
+/// A character that cuts everything into pieces of much the same length, but for questions sent back and single odd ones.
 fn regular(heard: &Heard, end: u8) -> bool {
     let pieces: Vec<usize> = heard.bytes.split(|b| *b == end).map(<[u8]>::len).collect();
     let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
-    let (least, most) = (inner.iter().min().copied().unwrap_or(0), inner.iter().max().copied().unwrap_or(0));
-    inner.len() >= 3 && least >= 2 && most <= least * 2 + 8
+    let mut long: Vec<usize> = inner.iter().copied().filter(|n| *n >= 6).collect();
+    if long.len() * 5 < inner.len() * 2 {
+        long = inner.to_vec();
+    }
+    long.sort_unstable();
+    let Some(&median) = long.get(long.len() / 2) else { return false };
+    let odd = long.iter().filter(|n| **n * 2 + 8 < median || **n > median * 2 + 8).count();
+    inner.len() >= 3 && median >= 2 && odd * 20 <= long.len()
 }
 
 /// Whether a character may stand inside frames of one length instead of ending them; `None` where it parts their fields.

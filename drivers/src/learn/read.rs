@@ -34,7 +34,11 @@ pub(super) fn read(heard: &Heard, draft: Draft, lines: &Lines, hints: &Hints) ->
     })?;
     let mut told = decode(heard, &Arc::new(profile));
     contradictions(&told, &draft, lines)?;
-    if first_may_be_cut(&told, &draft.text) {
+    if kind == Kind::Balance && draft.text.check.is_none() && unread_check(&told, lines) {
+        let says = "characters after the line end agree with no known check: send a few more different lines";
+        return Err(Refusal::new(Some(kind), 9, says));
+    }
+    if first_may_be_cut(&told, &draft.text, lines) {
         told.remove(0);
     }
     let readings: Vec<(Mass, LearnedReading)> = told.iter().filter_map(|t| reading(&t.what)).collect();
@@ -125,20 +129,50 @@ fn contradictions(told: &[Told], draft: &Draft, lines: &Lines) -> Result<(), Ref
     Ok(())
 }
 
-/// The first line may have begun before anybody listened: `2.34 g` may be the tail of `12.34 g`, and a mark in front of it
-/// may be missing. A start byte, a check or a code as long as the next speak against it.
-fn first_may_be_cut(told: &[Told], text: &ProfileText) -> bool {
+/// The first line may have begun before anybody listened: `2.34 g` may be the tail of `12.34 g`, and a mark or a minus sign
+/// in front of it may be missing.
+fn first_may_be_cut(told: &[Told], text: &ProfileText, lines: &Lines) -> bool {
     let Some(first) = told.first().filter(|t| t.at == 0) else { return false };
     if !text.frame.starts.is_empty() || text.frame.length.is_some() || text.check.is_some() {
         return false;
     }
     let second = told.iter().skip(1).find(|t| std::mem::discriminant(&t.what) == std::mem::discriminant(&first.what));
+    let same_length = second.is_some_and(|s| s.body.len() == first.body.len());
     match (&first.what, second.map(|s| &s.what)) {
-        (What::Signal(Signal::Mass(_)), _) => true,
+        (What::Signal(Signal::Mass(r)), next) => {
+            let shape = |t: &Told| {
+                let line = lines.lines.iter().find(|l| l.at == t.at);
+                line.map(|l| l.shape().into_iter().filter(|b| *b != b' ').collect::<Vec<u8>>())
+            };
+            let own = shape(first);
+            if told.iter().skip(1).filter(|t| reading(&t.what).is_some()).all(|t| shape(t) != own) {
+                return true;
+            }
+            let begins = first.body.first().is_some_and(|b| !b.is_ascii_digit() && !matches!(b, b'.' | b',' | b' ' | b'\t'));
+            let digits = |b: &[u8]| b.iter().position(|b| !b.is_ascii_digit()).unwrap_or(b.len());
+            let longest = told.iter().skip(1).filter(|t| reading(&t.what).is_some()).map(|t| digits(&t.body)).max().unwrap_or(0);
+            let signed = told.iter().filter_map(|t| reading(&t.what)).any(|(_, r)| r.mass.ug() < 0);
+            let long = digits(&first.body) > 0 && digits(&first.body) >= longest && !signed;
+            let same = matches!(next, Some(What::Signal(Signal::Mass(n))) if n.mass == r.mass);
+            let like_next = same && second.is_some_and(|s| shape(s) == own);
+            !(begins || same_length || like_next || long)
+        }
         (What::Signal(Signal::Total(n)), Some(What::Signal(Signal::Total(next)))) => *next != n + 1 && *next > 1,
-        (What::Signal(Signal::Code(_)), _) => second.is_none_or(|s| s.body.len() != first.body.len()),
+        (What::Signal(Signal::Code(_)), _) => !same_length,
         _ => false,
     }
+}
+
+/// Check digits behind the line end that were not understood stand at the beginning of what follows, such as a question
+/// that the instrument sends back.
+fn unread_check(told: &[Told], lines: &Lines) -> bool {
+    let read: BTreeSet<usize> = told.iter().filter(|t| matches!(t.what, What::Signal(_))).map(|t| t.at).collect();
+    let rest: Vec<&[u8]> = lines.lines.iter().filter(|l| !read.contains(&l.at)).map(|l| l.body.as_slice()).collect();
+    [2, 4].into_iter().any(|n| {
+        let headed = rest.iter().filter(|b| b.len() >= n && b[..n].iter().all(u8::is_ascii_hexdigit));
+        let (heads, tails): (BTreeSet<&[u8]>, BTreeSet<&[u8]>) = headed.clone().map(|b| b.split_at(n)).unzip();
+        headed.count() * 4 >= lines.lines.len() && heads.len() >= 3 && tails.len() <= 2
+    })
 }
 
 /// Every known mass must have been read.
