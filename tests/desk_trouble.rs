@@ -37,6 +37,7 @@ fn setup() -> DeskSetup {
             default_method: name,
             linking: Linking::default(),
             balances: BTreeMap::new(),
+            balance_rule: None,
         },
         instruments: vec![InstrumentSetup {
             name: pan,

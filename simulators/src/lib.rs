@@ -9,6 +9,7 @@
 #![forbid(unsafe_code)]
 
 pub mod balance;
+pub mod captures;
 pub mod counter;
 pub mod day;
 pub mod dialect;

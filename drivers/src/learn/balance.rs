@@ -27,6 +27,7 @@ fn refuse<T>(depth: u8, says: impl Into<String>) -> Result<T, Refusal> {
 pub(super) fn learn(lines: &Lines, hints: &Hints) -> Vec<Result<Draft, Refusal>> {
     let found = pick::pick(lines, hints).and_then(|masses| {
         let masses = numbers::usual(lines, masses)?;
+        let masses = of_one_width(lines, masses);
         let hows = numbers::ways(lines, &masses, hints)?;
         let masses = usual_arrangements(lines, masses);
         Ok((masses, hows))
@@ -65,6 +66,27 @@ fn usual_arrangements(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
     masses.into_iter().zip(&all).filter(|(m, k)| !odd(m, k)).map(|(m, _)| m).collect()
 }
 
+/// Leaves out lines of another length where numbers are filled up to one width: they have lost or gained bytes.
+fn of_one_width(lines: &Lines, masses: Vec<MassLine>) -> Vec<MassLine> {
+    let length = |m: &MassLine| lines.lines[m.line].body.len();
+    let mut counts: BTreeMap<usize, usize> = BTreeMap::new();
+    for m in &masses {
+        *counts.entry(length(m)).or_default() += 1;
+    }
+    let Some((&usual, &n)) = counts.iter().max_by_key(|(_, n)| **n) else { return masses };
+    let digits = |m: &MassLine| lines.lines[m.line].text(m.num);
+    let of_usual = || masses.iter().filter(|m| length(m) == usual);
+    let lengths: BTreeSet<usize> = of_usual().map(|m| digits(m).len()).collect();
+    let filled = of_usual().any(|m| matches!(digits(m), [b'0', b'0'..=b'9', ..]));
+    // Several of one other length, or two in a row, are a wider number or mark and no loss.
+    let first = lines.lines.first().map(|l| l.at);
+    let odd = |m: &&MassLine| length(m) != usual && first != Some(lines.lines[m.line].at);
+    let several = counts.iter().any(|(l, n)| *l != usual && *n > 1 + masses.len() / 50);
+    let together = masses.windows(2).any(|w| odd(&&w[0]) && odd(&&w[1]));
+    let few = masses.len() >= 8 && masses.len() - n <= 2 + masses.len() / 20 && !several && !together;
+    if few && (lengths.len() > 1 || filled) { masses.into_iter().filter(|m| length(m) == usual).collect() } else { masses }
+}
+
 /// Whole numbers that touch a capital unit and never come again: `12G` may be a container.
 fn like_codes(lines: &Lines, masses: &[MassLine], values: &[Value]) -> bool {
     let glued = |m: &MassLine| {
@@ -81,6 +103,8 @@ struct Scene<'a> {
     lines: &'a Lines,
     masses: &'a [MassLine],
     values: Vec<Value>,
+    /// For each place of a label that comes and goes, the lines that have it.
+    labelled: Vec<Vec<bool>>,
 }
 
 fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal> {
@@ -108,13 +132,25 @@ fn draft(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Draft, Refusal
     };
     let before = slots::align(&before).ok_or_else(many)?;
     let after = slots::align(&after).ok_or_else(many)?;
-    let mut scene = Scene { lines, masses, values };
+    let mut scene = Scene { lines, masses, values, labelled: Vec::new() };
     scene.part_by_label(&before, &after);
-    let roles_before = scene.roles(&before, true)?;
-    let roles_after = scene.roles(&after, false)?;
+    let mut roles_before = scene.roles(&before, true)?;
+    let mut roles_after = scene.roles(&after, false)?;
+    one_mark(&mut roles_before, &mut roles_after);
     let number = how.look.clone();
     let layout = Layout { before: (&before, roles_before), after: (&after, roles_after), number };
     scene.profile(&layout, how)
+}
+
+/// A unit that is left out while the pan moves says nothing more where marks say it.
+fn one_mark(before: &mut [Role], after: &mut [Role]) {
+    if before.iter().chain(after.iter()).any(|r| matches!(r, Role::Steadiness { .. })) {
+        for role in before.iter_mut().chain(after) {
+            if let Role::UnitAtRest { words, .. } = role {
+                *role = Role::Any { words: words.iter().cloned().collect(), optional: true };
+            }
+        }
+    }
 }
 
 impl Scene<'_> {
@@ -126,6 +162,9 @@ impl Scene<'_> {
             let kinds: BTreeSet<Option<Label>> = words.iter().map(|w| words::label(w)).collect();
             let all = words.iter().all(|w| w.is_empty() || words::label(w).is_some());
             if all && kinds.len() > 1 {
+                if kinds.contains(&None) {
+                    self.labelled.push(words.iter().map(|w| !w.is_empty()).collect());
+                }
                 for (p, w) in part.iter_mut().zip(&words) {
                     *p = *p * 4 + words::label(w).map_or(0, |l| l as u32 + 1);
                 }
@@ -174,6 +213,10 @@ impl Scene<'_> {
         let absent = cells.iter().any(Option::is_none);
         let present = || cells.iter().flatten();
         if present().all(|k| matches!(k, Key::Num | Key::Stamp)) {
+            // `4 371.13`: digits in groups look so.
+            if absent && is_before && at + 1 == aligned.cells.len() && present().any(|k| *k == Key::Num) {
+                return refuse(7, "a number stands in front of some masses only: set the balance to group no digits");
+            }
             return Ok(Role::Digits { stamp: present().any(|k| *k == Key::Stamp), optional: absent });
         }
         if present().all(|k| matches!(k, Key::Unit(_))) {
@@ -255,6 +298,12 @@ impl Scene<'_> {
         let optional = present.len() < distinct.len();
         let meaning = behave::steadiness(&self.values, words);
         let of_basis = present.iter().all(|w| words::label(w).is_some()) && labels.len() + usize::from(optional) >= 2;
+        if of_basis && !labelled {
+            return refuse(
+                8,
+                "a word may tell gross from net or belong to another number: set the balance to send the mass alone",
+            );
+        }
         if of_basis && labelled {
             if self.follows_movement(words) {
                 return refuse(
@@ -264,8 +313,20 @@ impl Scene<'_> {
             }
             return self.basis(words, &present, &labels, optional);
         }
-        if let Meaning::Steadiness { steady, moving } = meaning {
+        // Brackets about a label come and go with it.
+        if optional && present.len() == 1 && self.labelled.iter().any(|l| l.iter().zip(words).all(|(l, w)| *l != w.is_empty())) {
+            return Ok(Role::Any { words: own(&mut present.iter()), optional: true });
+        }
+        // Many words, or words seen once, are rather check digits that no check was found for.
+        let once = |w: &&[u8]| words.iter().filter(|o| *o == w).count() == 1;
+        let many = present.len() > 4 || (present.len() > 2 && present.iter().filter(|w| once(w)).count() > 1);
+        if let Meaning::Steadiness { steady, moving } = meaning
+            && !many
+        {
             return Ok(Role::Steadiness { steady, moving });
+        }
+        if let Some(role) = self.zero_among(words, &present).filter(|_| !many) {
+            return Ok(role);
         }
         if let Some(role) = self.cycle(words, distinct)? {
             return Ok(role);
@@ -274,6 +335,15 @@ impl Scene<'_> {
             && behave::marks_zero(&self.values, words, word)
         {
             return Ok(Role::Any { words: own(&mut present.iter()), optional: true });
+        }
+        // Of two marks the one of zero says nothing of rest, nor does the other where equal masses stand beside it.
+        if let [a, b] = present[..]
+            && !optional
+            && [(a, b), (b, a)]
+                .iter()
+                .any(|(zero, other)| behave::marks_zero(&self.values, words, zero) && self.repeats(words, other))
+        {
+            return Ok(Role::Any { words: own(&mut present.iter()), optional });
         }
         if let [a, b] = present[..]
             && !optional
@@ -302,6 +372,29 @@ impl Scene<'_> {
     fn follows_movement(&self, words: &[&[u8]]) -> bool {
         let unparted: Vec<Value> = self.values.iter().map(|v| Value { part: 0, ..*v }).collect();
         matches!(behave::steadiness(&unparted, words), Meaning::Steadiness { .. })
+    }
+
+    /// Marks of which one stands for rest at zero: taken together with that of rest elsewhere they are plain.
+    fn zero_among(&self, words: &[&[u8]], present: &[&[u8]]) -> Option<Role> {
+        let at_zero = |word: &&&[u8]| words.iter().zip(&self.values).all(|(w, v)| w != *word || v.ug == 0);
+        let zero: &[u8] = present.iter().find(at_zero).copied().filter(|_| present.len() >= 3)?;
+        let mut found = present.iter().filter(|w| **w != zero).filter_map(|rest| {
+            let merged: Vec<&[u8]> = words.iter().map(|w| if *w == zero { *rest } else { *w }).collect();
+            match behave::steadiness(&self.values, &merged) {
+                Meaning::Steadiness { mut steady, moving } if steady.iter().any(|s| s == rest) => {
+                    steady.push(zero.to_vec());
+                    Some(Role::Steadiness { steady, moving })
+                }
+                _ => None,
+            }
+        });
+        found.next().filter(|_| found.next().is_none())
+    }
+
+    /// Whether a mass stands twice in a row beside this word.
+    fn repeats(&self, words: &[&[u8]], word: &[u8]) -> bool {
+        let same = |(w, v): (&[&[u8]], &[Value])| w[0] == word && w[1] == word && (v[0].ug - v[1].ug).abs() <= 2 * v[0].step;
+        words.windows(2).zip(self.values.windows(2)).any(same)
     }
 
     /// Whether every value differs from the one before.

@@ -99,7 +99,9 @@ pub(super) fn marks_zero(values: &[Value], words: &[&[u8]], word: &[u8]) -> bool
     let near = |v: &Value| v.ug.abs() <= v.step;
     let on = values.iter().zip(words).filter(|(_, w)| **w == word);
     let off = values.iter().zip(words).filter(|(_, w)| **w != word);
-    on.clone().count() >= 2 && off.clone().count() >= 2 && on.clone().all(|(v, _)| near(v)) && off.clone().all(|(v, _)| !near(v))
+    let exact = |v: &Value| v.ug == 0;
+    let parts = |zero: &dyn Fn(&Value) -> bool| on.clone().all(|(v, _)| zero(v)) && off.clone().all(|(v, _)| !zero(v));
+    on.clone().count() >= 2 && off.clone().count() >= 2 && (parts(&near) || parts(&exact))
 }
 
 #[cfg(test)]

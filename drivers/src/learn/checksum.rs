@@ -135,7 +135,7 @@ mod tests {
         for tail in [0, 1, 2, 4] {
             for check in hypotheses(tail) {
                 let frames = frames(check, &texts);
-                let guess = Guess { frame: FrameText { tail, ..FrameText::default() } };
+                let guess = Guess { frame: FrameText { tail, ..FrameText::default() }, doubtful: false };
                 let found = find(&frames, &guess).expect("found");
                 assert!(found.check.is_some(), "{check:?}");
                 assert!(found.lines.iter().all(|(i, body)| body == texts[*i].as_bytes()), "{check:?} {:?}", found.check);
@@ -153,7 +153,7 @@ mod tests {
             skip: 0,
             low_first: false,
         };
-        let guess = Guess { frame: FrameText { tail: 2, ..FrameText::default() } };
+        let guess = Guess { frame: FrameText { tail: 2, ..FrameText::default() }, doubtful: false };
         assert!(find(&frames(check, &["1.00 g", "2.00 g"]), &guess).is_err());
         let mut heard = frames(check, &["1.00 g", "2.00 g", "3.00 g", "4.00 g"]);
         heard[2].body[0] = b'7';

@@ -2,6 +2,7 @@
 
 use super::Refusal;
 use super::checksum::Checked;
+use super::digits;
 use super::tokens::{self, Commas, Sort, Token};
 use super::words::{self, Label};
 use std::collections::{BTreeMap, BTreeSet};
@@ -60,15 +61,23 @@ impl Line {
 }
 
 /// Whether a line is text: printable, but for the few control characters that dialects use.
-pub(super) fn is_text(body: &[u8]) -> bool {
-    body.iter().all(|b| b.is_ascii_graphic() || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17))
+/// Letters beyond ASCII only where most lines have them.
+pub(super) fn is_text(body: &[u8], letters: bool) -> bool {
+    body.iter().all(|b| {
+        b.is_ascii_graphic()
+            || (letters && *b >= 0x80)
+            || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17)
+    })
 }
 
 impl Lines {
     /// Takes all lines apart.
     pub(super) fn new(checked: &Checked) -> Result<Self, Refusal> {
         let spoken: Vec<&(usize, Vec<u8>)> = checked.lines.iter().filter(|(_, b)| !b.trim_ascii().is_empty()).collect();
-        let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b)).collect();
+        let high = spoken.iter().filter(|(_, b)| !b.is_ascii()).count();
+        let letters =
+            high * 2 >= spoken.len() && spoken.iter().all(|(_, b)| b.iter().filter(|b| **b >= 0x80).count() * 2 <= b.len());
+        let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b, letters)).collect();
         if texts.len() * 10 < spoken.len() * 7 || texts.len() < 3 {
             let says = "the bytes are no text: listen again with another speed or character frame, such as 7E1 or 7O1";
             return Err(Refusal::new(None, 1, says));
@@ -87,6 +96,10 @@ impl Lines {
             Some(Line { body: body.clone(), tokens, at: *at, numbers })
         });
         let mut lines = Self { lines: lines.collect(), checked: checked.clone(), commas };
+        digits::split_labels(&mut lines.lines);
+        digits::join_codes(&mut lines.lines);
+        lines.turn_units();
+        digits::mark_digits(&mut lines.lines);
         lines.turn_units();
         lines.forget_false_units();
         Ok(lines)
@@ -98,8 +111,27 @@ impl Lines {
         n >= 2 && n * 8 >= self.lines.len()
     }
 
-    /// In `#3 g 12.34` the unit belongs to the number that follows: to the one that changes.
+    /// In `#3 g 12.34` the unit belongs to the number that follows: to the one with decimals, or that changes and
+    /// does not count the lines.
     fn turn_units(&mut self) {
+        let texts = |of: fn(&Num) -> Option<usize>| {
+            let all = self.lines.iter().flat_map(|l| l.numbers.iter().filter(move |n| of(n).is_some()).map(|n| l.text(n.token)));
+            all.collect::<Vec<_>>()
+        };
+        let decimal = |t: &[u8]| t.iter().any(|b| matches!(b, b'.' | b','));
+        let (after, before) = (texts(|n| n.unit), texts(|n| n.before));
+        let decimals = |texts: &[&[u8]]| texts.iter().filter(|t| decimal(t)).count();
+        let by_decimals = decimals(&after) == 0 && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
+        let value = |t: &[u8]| std::str::from_utf8(t).ok().and_then(|t| t.parse::<u64>().ok());
+        let up =
+            after.windows(2).filter(|w| matches!((value(w[0]), value(w[1])), (Some(a), Some(b)) if a.checked_add(1) == Some(b)));
+        let counts_lines = after.len() >= 4 && up.count() * 10 >= (after.len() - 1) * 8;
+        if by_decimals || (counts_lines && before.len() * 10 >= after.len() * 8) {
+            for n in self.lines.iter_mut().flat_map(|l| &mut l.numbers) {
+                n.unit = n.before;
+            }
+            return;
+        }
         let changes = |unit: fn(&Num) -> Option<usize>| {
             let texts =
                 self.lines.iter().flat_map(|l| l.numbers.iter().filter(move |n| unit(n).is_some()).map(|n| l.text(n.token)));
@@ -147,7 +179,7 @@ pub(super) fn is_unit(word: &[u8]) -> bool {
 }
 
 /// The numbers of a line with unit and label.
-fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
+pub(super) fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
     let places: Vec<usize> = (0..tokens.len()).filter(|i| tokens[*i].sort == Sort::Number).collect();
     let edge = |i: usize| matches!(tokens[i].sort, Sort::Number | Sort::Stamp);
     let word = |i: &usize| tokens[*i].sort == Sort::Word;
@@ -173,7 +205,9 @@ fn numbers(body: &[u8], tokens: &[Token]) -> Vec<Num> {
         let units = region(at).rev().filter(word);
         units.into_iter().find(|i| is_unit(tokens[*i].of(body)) && !matches!(tokens[*i].of(body), b"G"))
     };
-    let any_after = places.iter().any(|p| after(*p).is_some());
+    // Behind a number that has its unit in front, a G is a label.
+    let own = |p: usize| after(p).is_some_and(|u| tokens[u].of(body) != b"G" || before(p).is_none());
+    let any_after = places.iter().any(|p| own(*p));
     let of = |at: &usize| {
         let before = before(*at);
         let unit = if any_after { after(*at) } else { before };

@@ -37,9 +37,7 @@ impl Family<'_> {
         let n = self.lines[0].1.numbers.len();
         (0..n).find(|o| {
             let Some(series) = self.series(*o) else { return false };
-            let steps = series.windows(2).filter(|w| w[1] == w[0] + 1).count();
-            let again = series.windows(2).filter(|w| w[1] <= 1 && w[1] != w[0] + 1).count();
-            steps >= 2 && steps + again + 1 == series.len()
+            runs(&series).is_some()
         })
     }
 
@@ -65,6 +63,21 @@ impl Family<'_> {
     }
 }
 
+/// Whether numbers go up by one, some of them repeated while nothing happens, and begin anew: how many do neither, where
+/// these are few, as after a line that was lost.
+pub(super) fn runs(series: &[u32]) -> Option<usize> {
+    let (mut up, mut again, mut odd) = (0, 0, 0);
+    for w in series.windows(2) {
+        match w[1] {
+            n if n == w[0] + 1 => up += 1,
+            n if n == w[0] || n <= 1 => again += 1,
+            n if n == w[0] + 2 => odd += 1,
+            _ => return None,
+        }
+    }
+    (up >= 2 && up * 6 >= series.len() && odd <= 1 + series.len() / 30).then_some(odd).filter(|_| up + again + odd > 1)
+}
+
 /// Words of a shape, without its blanks: padding does not make another family.
 fn key(line: &Line) -> Vec<u8> {
     let mut key = line.shape();
@@ -76,6 +89,11 @@ fn key(line: &Line) -> Vec<u8> {
 pub(super) fn learn(lines: &Lines, hints: &Hints) -> Result<Draft, Refusal> {
     if !lines.checked.frame.single.is_empty() {
         return single(lines);
+    }
+    // Drops are whole.
+    let decimal = |l: &Line| l.numbers.iter().any(|n| l.text(n.token).iter().any(|b| matches!(b, b'.' | b',')));
+    if lines.lines.iter().filter(|l| decimal(l)).count() > 1 {
+        return refuse(1, UNCLEAR);
     }
     let mut families: BTreeMap<Vec<u8>, Family<'_>> = BTreeMap::new();
     for (i, line) in lines.lines.iter().enumerate() {
@@ -102,19 +120,20 @@ fn running(lines: &Lines, main: &Family<'_>, rest: &[Family<'_>], ordinal: usize
     let line = main.lines[0].1;
     let at = line.numbers[ordinal].token;
     let glued = at > 0 && line.tokens[at - 1].sort == Sort::Word;
-    if glued && !words::counting(&text) && !told {
+    let series = main.series(ordinal).unwrap_or_default();
+    let place: Vec<usize> = main.lines.iter().map(|(i, _)| *i).collect();
+    let last = |at: usize| place.iter().rposition(|p| *p < at).map(|i| series[i]);
+    let ends: Vec<LineText> = rest.iter().filter_map(|f| ending(f, &last)).collect();
+    // Runs that begin anew and are ended by their count are no containers.
+    let ended = !ends.is_empty() && series.windows(2).any(|w| w[1] < w[0]);
+    if glued && !words::counting(&text) && !told && !ended {
         return refuse(4, UNCLEAR);
     }
     if main.lines.len() < 4 && !words::counting(&text) && !told {
         return refuse(4, UNCLEAR);
     }
     let mut out = vec![plain(main.pattern(Some((ordinal, "total"))), None)];
-    let series = main.series(ordinal).unwrap_or_default();
-    let place: Vec<usize> = main.lines.iter().map(|(i, _)| *i).collect();
-    let last = |at: usize| place.iter().rposition(|p| *p < at).map(|i| series[i]);
-    for family in rest {
-        out.extend(ending(family, &last));
-    }
+    out.extend(ends);
     finish(lines, out)
 }
 
@@ -168,6 +187,12 @@ fn finals(lines: &Lines, main: &Family<'_>, rest: &[Family<'_>], told: bool) -> 
         return refuse(2, UNCLEAR);
     }
     if rest.iter().any(|f| !f.lines[0].1.numbers.is_empty()) {
+        return refuse(4, UNCLEAR);
+    }
+    // Numbers that mostly go up by one are running totals of which some are odd, not ends of runs.
+    let series = main.series(0).unwrap_or_default();
+    let near = series.windows(2).filter(|w| w[1] == w[0] || w[1] == w[0] + 1).count();
+    if near * 3 >= series.len() {
         return refuse(4, UNCLEAR);
     }
     finish(lines, vec![plain(main.pattern(Some((0, "drops"))), None)])

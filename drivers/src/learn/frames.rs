@@ -3,6 +3,7 @@
 use super::{BYTES_MAX, Piece, Refusal};
 use crate::frame::{Framer, Framing, How};
 use crate::profile::text::FrameText;
+use std::collections::BTreeSet;
 
 /// Lines that are looked at; more would not teach more.
 const FRAMES_MAX: usize = 30_000;
@@ -49,13 +50,15 @@ impl Heard {
 #[derive(Clone, Debug, Default)]
 pub(super) struct Guess {
     pub(super) frame: FrameText,
+    /// The end may be a mark inside frames of one length that have no end.
+    pub(super) doubtful: bool,
 }
 
 impl Guess {
     fn ends(starts: Option<u8>, end: &[u8], tail: usize) -> Self {
         let text = |bytes: &[u8]| bytes.iter().map(|b| char::from(*b)).collect::<String>();
         let starts = starts.map(|b| text(&[b])).unwrap_or_default();
-        Self { frame: FrameText { ends: vec![text(end)], starts, tail, ..FrameText::default() } }
+        Self { frame: FrameText { ends: vec![text(end)], starts, tail, ..FrameText::default() }, doubtful: false }
     }
 
     fn framing(&self) -> Option<Framing> {
@@ -141,7 +144,7 @@ fn plausible(heard: &Heard, end: &[u8]) -> bool {
 /// Control characters that end frames, most usual first.
 const CONTROLS: [u8; 9] = [0x03, 0x04, 0x17, 0x1E, 0x00, 0x1D, 0x1C, 0x1F, 0x0C];
 /// Printed characters that end frames.
-const PRINTED: &[u8] = b";#|*$!>/&%@^~\\]})=:?";
+const PRINTED: &[u8] = b";#|*$!>/&%@^~\\})=:?";
 
 /// Every way worth trying, the most telling first.
 pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
@@ -153,12 +156,24 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
         }
     }
     if let Some(end) = newline {
-        out.push(Guess::ends(None, end, 0));
         if let Some(single) = single_byte(heard) {
             let mut guess = Guess::ends(None, end, 0);
             guess.frame.single = char::from(single).to_string();
             out.push(guess);
         }
+        if heard.occurrences(&[end, b"\x0C"].concat()) >= 2 {
+            // Slips that a form feed ends.
+            let mut guess = Guess::ends(None, end, 0);
+            guess.frame.ends.push("\u{C}".into());
+            out.push(guess);
+        }
+        for before in [0x03, 0x04] {
+            let both = [&[before], end].concat();
+            if heard.occurrences(&both) * 10 >= heard.occurrences(end) * 8 {
+                out.push(Guess::ends(None, &both, 0));
+            }
+        }
+        out.push(Guess::ends(None, end, 0));
         for tail in [2, 4, 1] {
             out.push(Guess::ends(None, end, tail));
         }
@@ -166,6 +181,11 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     }
     let found = out.len();
     for end in CONTROLS.iter().filter(|c| heard.count(**c) >= 2 && plausible(heard, &[**c])) {
+        if let Some(single) = single_byte(heard) {
+            let mut guess = Guess::ends(None, &[*end], 0);
+            guess.frame.single = char::from(single).to_string();
+            out.push(guess);
+        }
         for tail in [0, 2, 4, 1] {
             out.push(Guess::ends(None, &[*end], tail));
         }
@@ -173,12 +193,21 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
     if out.len() > found {
         return out;
     }
-    if let Some(single) = single_byte(heard) {
+    let spoken = heard.bytes.iter().filter(|b| !b.is_ascii_whitespace()).count();
+    if let Some(single) = single_byte(heard).filter(|s| heard.count(*s) == spoken) {
         let frame = FrameText { single: char::from(single).to_string(), ..FrameText::default() };
-        out.push(Guess { frame });
+        out.push(Guess { frame, doubtful: false });
     }
-    for end in PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c)) {
-        out.push(Guess::ends(None, &[*end], 0));
+    let period = super::periodic::length(&heard.bytes);
+    let tab = heard.count(b'\t') >= 2 && plausible(heard, b"\t");
+    let printed = PRINTED.iter().filter(|c| plausible(heard, &[**c]) && regular(heard, **c));
+    // What is seldom an end must at least end what was heard, and only where nothing more usual does.
+    let semicolon = regular(heard, b';');
+    let usual = |c: u8| matches!(c, b';' | b'\t') || (!semicolon && heard.bytes.last() == Some(&c));
+    for end in printed.filter(|c| usual(**c)).chain(tab.then_some(&b'\t')) {
+        if let Some(doubtful) = inside(heard, *end, period) {
+            out.push(Guess { doubtful, ..Guess::ends(None, &[*end], 0) });
+        }
     }
     out.extend(super::periodic::candidates(heard));
     out
@@ -200,6 +229,7 @@ fn started(heard: &Heard, start: u8, newline: Option<&'static [u8]>, out: &mut V
     }
     ends.extend(CONTROLS.iter().map(|c| vec![*c]));
     ends.extend([b"\r".to_vec(), b"\n".to_vec()]);
+    ends.extend(PRINTED.iter().map(|c| vec![*c]));
     for end in ends {
         for tail in [0, 2, 1, 4] {
             let fits = |s: &&&[u8]| s.len() > tail + end.len() && s[..s.len() - tail].ends_with(&end);
@@ -210,25 +240,50 @@ fn started(heard: &Heard, start: u8, newline: Option<&'static [u8]>, out: &mut V
     }
 }
 
-/// A character that cuts everything into pieces of much the same length.
+/// A character that cuts everything into pieces of much the same length, but for questions sent back and single odd ones.
 fn regular(heard: &Heard, end: u8) -> bool {
     let pieces: Vec<usize> = heard.bytes.split(|b| *b == end).map(<[u8]>::len).collect();
     let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
-    let (least, most) = (inner.iter().min().copied().unwrap_or(0), inner.iter().max().copied().unwrap_or(0));
-    inner.len() >= 3 && least >= 2 && most <= least * 2 + 8
+    let mut long: Vec<usize> = inner.iter().copied().filter(|n| *n >= 6).collect();
+    if long.len() * 5 < inner.len() * 2 {
+        long = inner.to_vec();
+    }
+    long.sort_unstable();
+    let Some(&median) = long.get(long.len() / 2) else { return false };
+    let odd = long.iter().filter(|n| **n * 2 + 8 < median || **n > median * 2 + 8).count();
+    inner.len() >= 3 && median >= 2 && odd * 20 <= long.len()
+}
+
+/// Whether a character may stand inside frames of one length instead of ending them; `None` where it parts their fields.
+fn inside(heard: &Heard, end: u8, period: Option<usize>) -> Option<bool> {
+    let Some(length) = period else { return Some(false) };
+    let pieces: Vec<&[u8]> = heard.bytes.split(|b| *b == end).collect();
+    let inner = pieces.get(1..pieces.len().saturating_sub(1)).unwrap_or_default();
+    // Pieces of one length each are the frames themselves.
+    let even = inner.iter().map(|p| p.len()).collect::<BTreeSet<_>>().len() == 1;
+    let per_frame = if even { 1.0 } else { heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64) };
+    let begins = even && pieces.first().map(|p| p.len()) == inner.first().map(|p| p.len());
+    // Of two pieces one may be a question that the instrument sends back.
+    let constant = |from: usize| inner.iter().skip(from).step_by(2).collect::<BTreeSet<_>>().len() == 1;
+    match () {
+        () if per_frame > 2.5 => None,
+        () if per_frame > 1.5 && !(constant(0) || constant(1)) => None,
+        () => Some(heard.bytes.last() != Some(&end) && !begins),
+    }
 }
 
 /// A mark that is sent by itself: one byte for each drop.
 fn single_byte(heard: &Heard) -> Option<u8> {
     let alike = heard.bytes.windows(2).all(|w| w[0] == w[1]);
-    let part_of_numbers = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'+' | b'-' | b'.' | b',' | b'=' | b':');
+    let part_of_numbers = |b: u8| b.is_ascii_alphanumeric() || matches!(b, b'+' | b'-' | b',');
     let own = |b: u8| b.is_ascii_graphic() && (!part_of_numbers(b) || (alike && !b.is_ascii_digit()));
     let mut runs = heard.bytes.chunk_by(|a, b| a == b).filter(|r| own(r[0]) || r[0] == 0x07);
     let first = runs.next()?[0];
     let alone = heard.bytes.iter().filter(|b| **b == first).count();
     let others = heard.bytes.chunk_by(|a, b| (*a == first) == (*b == first)).filter(|r| r[0] == first);
     let runs: Vec<usize> = others.map(<[u8]>::len).collect();
-    (alone >= 5 && runs.iter().all(|n| *n >= 3)).then_some(first)
+    // Hardly anything else is heard of such a counter.
+    (alone >= 5 && alone * 2 >= heard.bytes.len() && runs.iter().all(|n| *n >= 3)).then_some(first)
 }
 
 #[cfg(test)]

@@ -10,6 +10,7 @@ mod behave;
 mod checksum;
 mod columns;
 mod counter;
+mod digits;
 mod frames;
 mod numbers;
 mod parity;
@@ -115,6 +116,7 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
         ));
     }
     let mut endless: Option<Learned> = None;
+    let mut confirmed = true;
     for framing in frames::candidates(&heard) {
         match understand(&heard, &framing, hints) {
             Ok(mut learned) => {
@@ -123,9 +125,18 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
                 }
                 // Where frames have no end, only one beginning may make sense.
                 match &endless {
-                    _ if framing.frame.length.is_none() => return learned,
-                    None => endless = Some(learned),
-                    Some(first) if first.readings == learned.readings => {}
+                    _ if framing.frame.length.is_none() && !framing.doubtful => return learned,
+                    None => {
+                        // Where frames begin is no matter only where nothing but the mass is read of them.
+                        let plain = learned.readings.iter().all(|r| r.steady.is_none() && r.basis == Basis::Unmarked);
+                        confirmed = !framing.doubtful || plain;
+                        endless = Some(learned);
+                    }
+                    Some(first) if within(&first.readings, &learned.readings) => {
+                        confirmed = true;
+                        endless = Some(learned);
+                    }
+                    Some(first) if within(&learned.readings, &first.readings) => confirmed = true,
                     Some(_) => return refused(Refusal::new(first_kind(&endless), 9, NO_BEGINNING)),
                 }
             }
@@ -133,7 +144,7 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
         }
     }
     if let Some(learned) = endless {
-        return learned;
+        return if confirmed { learned } else { refused(Refusal::new(learned.kind, 9, NO_BEGINNING)) };
     }
     refused(best.unwrap_or_else(|| {
         Refusal::new(
@@ -142,6 +153,12 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
             "no line end was found: see that speed and character frame are those of the instrument, and send more lines",
         )
     }))
+}
+
+/// Whether these are those, but for one at either end that may be cut.
+fn within(these: &[LearnedReading], those: &[LearnedReading]) -> bool {
+    let less = those.len().saturating_sub(these.len());
+    !these.is_empty() && less <= 2 && those.windows(these.len()).any(|w| w == these)
 }
 
 fn first_kind(learned: &Option<Learned>) -> Option<Kind> {
@@ -168,20 +185,26 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
             }
         }
     };
-    if wanted(Kind::Balance) {
-        for draft in balance::learn(&lines, hints) {
-            if let Some(learned) = attempt(draft) {
-                return Ok(learned);
-            }
+    // A byte for each drop is for counters alone; frames of one length are for masses alone.
+    let (single, fixed) = (!framing.frame.single.is_empty(), framing.frame.length.is_some());
+    if wanted(Kind::Balance) && !single {
+        // Known masses must leave one way to read the numbers, and no second.
+        let ways: Vec<Learned> = balance::learn(&lines, hints).into_iter().filter_map(&mut attempt).collect();
+        if let Some(first) = ways.first() {
+            return match ways.iter().all(|w| w.readings == first.readings) {
+                true => Ok(first.clone()),
+                false => Err(Refusal::new(Some(Kind::Balance), 10, TWO_WAYS)),
+            };
         }
     }
-    if !lines.weighs() {
+    if !lines.weighs() && !fixed {
         if wanted(Kind::Counter)
             && let Some(learned) = attempt(counter::learn(&lines, hints))
         {
             return Ok(learned);
         }
         if wanted(Kind::Scanner)
+            && !single
             && let Some(learned) = attempt(scanner::learn(&lines, hints))
         {
             return Ok(learned);
@@ -192,5 +215,7 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
 
 /// What is said of frames that could begin in two places.
 const NO_BEGINNING: &str = "lines have no end and could begin in two places: listen at the port itself, where pauses tell, or set the instrument to send a line end";
+/// What is said when known masses fit two ways to read the numbers.
+const TWO_WAYS: &str = "the known masses fit the numbers in two ways: say another mass that was put on the pan with --mass, with all its digits, or the unit with --unit";
 /// What is said when nothing fits.
 const NOT_UNDERSTOOD: &str = "the lines are not understood: see that speed and frame are right, and load and unload the pan once more, or make a few drops";

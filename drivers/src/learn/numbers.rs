@@ -163,7 +163,11 @@ fn sign(lines: &Lines, masses: &[MassLine]) -> Result<NumberLook, Refusal> {
         always_signed: front.iter().all(Option::is_some),
         ..NumberLook::default()
     };
-    if front.iter().all(|s| *s == Some(b"-")) || (front.iter().all(Option::is_none) && trail.iter().all(|s| *s == Some(b"-"))) {
+    // But for one that is cut.
+    let dashes = front.iter().filter(|s| **s == Some(b"-")).count();
+    if dashes + 1 + front.len() / 20 >= front.len()
+        || (front.iter().all(Option::is_none) && trail.iter().all(|s| *s == Some(b"-")))
+    {
         return refuse(
             6,
             "every number has a minus sign, which could be a dash: put something on the pan that is heavier than what was tared away",
@@ -221,8 +225,22 @@ fn value(lines: &Lines, m: &MassLine, sign_after: bool, implied: Option<u8>, uni
     Ok(Value { ug: if below { -mass.ug() } else { mass.ug() }, step: step.ug(), part: 0 })
 }
 
+/// Whether the last digits count the lines: another number stands right behind the mass.
+fn counts_lines(lines: &Lines, masses: &[MassLine]) -> bool {
+    let last = |m: &MassLine| {
+        let text = lines.lines[m.line].text(m.num);
+        let digits: Vec<u8> = text.iter().copied().filter(u8::is_ascii_digit).collect();
+        digits.get(digits.len().saturating_sub(2)..).and_then(|d| std::str::from_utf8(d).ok()?.parse::<u32>().ok())
+    };
+    let up = masses.windows(2).filter(|w| matches!((last(&w[0]), last(&w[1])), (Some(a), Some(b)) if (a + 1) % 100 == b)).count();
+    masses.len() >= 5 && up * 10 >= (masses.len() - 1) * 7
+}
+
 /// The masses so read.
 pub(super) fn values(lines: &Lines, masses: &[MassLine], how: &How) -> Result<Vec<Value>, Refusal> {
+    if counts_lines(lines, masses) {
+        return refuse(7, "another number stands right behind the mass: set the balance to send the mass alone");
+    }
     let unit = how.unit.unwrap_or(MassUnit::Gram);
     masses.iter().map(|m| value(lines, m, how.look.sign_after, how.implied, unit)).collect()
 }

@@ -19,7 +19,7 @@ fn alike(a: u8, b: u8) -> u32 {
 }
 
 /// The length after which everything looks the same again.
-fn length(bytes: &[u8]) -> Option<usize> {
+pub(super) fn length(bytes: &[u8]) -> Option<usize> {
     let bytes = &bytes[..bytes.len().min(LOOK)];
     let score = |p: usize| {
         let n = bytes.len().checked_sub(p).filter(|n| *n >= 2 * p)?;
@@ -72,7 +72,13 @@ fn splits(bytes: &[u8], length: usize, phase: usize) -> bool {
     let borders: Vec<bool> = (phase..bytes.len())
         .step_by(length)
         .skip(1)
-        .map(|at| (number(bytes[at - 1]) || matches!(bytes[at - 1], b'+' | b'-')) && (number(bytes[at]) || bytes[at] == b' '))
+        .map(|at| {
+            // A number behind the blanks is another one.
+            let next = bytes[at..].iter().find(|b| **b != b' ').copied().unwrap_or(b' ');
+            let parted = bytes[at] == b' ' && (next.is_ascii_digit() || matches!(next, b'+' | b'-'));
+            let digit = number(bytes[at - 1]) || matches!(bytes[at - 1], b'+' | b'-');
+            digit && (number(bytes[at]) || bytes[at] == b' ') && !(parted && number(bytes[at - 1]))
+        })
         .collect();
     borders.iter().filter(|cut| **cut).count() * 10 > borders.len()
 }
@@ -88,7 +94,7 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
         let other = (0..heard.bytes.len().saturating_sub(length)).filter(|at| at % length != phase && fits(*at));
         let turned = other.count() * 10 * length > heard.bytes.len();
         let frame = FrameText { length: Some(length), columns: columns.clone(), ..FrameText::default() };
-        (own && !turned).then_some(Guess { frame })
+        (own && !turned).then_some(Guess { frame, doubtful: false })
     };
     phases(heard, length).into_iter().filter_map(guess).collect()
 }

@@ -27,9 +27,13 @@ pub(super) struct MassLine {
 /// The mass lines of a capture.
 pub(super) fn pick(lines: &Lines, hints: &Hints) -> Result<Vec<MassLine>, Refusal> {
     let with_unit = lines.weighs();
+    // Where most numbers have decimals, a whole one is that of a fault or the like.
+    let decimal = |l: &Line| l.numbers.iter().any(|n| l.text(n.token).iter().any(|b| matches!(b, b'.' | b',')));
+    let numbered = lines.lines.iter().filter(|l| !l.numbers.is_empty()).count();
+    let decimals = lines.lines.iter().filter(|l| decimal(l)).count() * 10 >= numbered * 7;
     let mut groups: BTreeMap<usize, Vec<usize>> = BTreeMap::new();
     for (i, line) in lines.lines.iter().enumerate() {
-        let speaks = if with_unit { line.weighs() } else { !line.numbers.is_empty() };
+        let speaks = if with_unit { line.weighs() } else { !line.numbers.is_empty() && (!decimals || decimal(line)) };
         if speaks && !words::overload(&line.body) && !words::underload(&line.body) {
             groups.entry(line.numbers.len()).or_default().push(i);
         }
@@ -172,19 +176,32 @@ fn without_unit(lines: &Lines, found: &[MassLine]) -> Vec<MassLine> {
         let word = |t: &usize| l.tokens[*t].sort == Sort::Word && Some(*t) != unit;
         (0..l.tokens.len()).filter(word).map(|t| l.text(t).to_vec()).collect()
     };
-    let known: BTreeSet<(usize, Option<usize>)> =
-        found.iter().map(|m| (lines.lines[m.line].numbers.len(), format(&lines.lines[m.line], m.num))).collect();
-    let words: BTreeSet<Vec<u8>> = found.iter().flat_map(|m| rest(&lines.lines[m.line], m.unit)).collect();
     let Some(first) = found.first() else { return Vec::new() };
-    if found.iter().any(|m| m.several || lines.lines[m.line].numbers.len() != 1) {
+    let place = |m: &MassLine| {
+        let line = &lines.lines[m.line];
+        (line.numbers.len(), line.numbers.iter().position(|n| n.token == m.num))
+    };
+    let (count, Some(ordinal)) = place(first) else { return Vec::new() };
+    if found.iter().any(|m| m.several || place(m) != (count, Some(ordinal))) {
         return Vec::new();
     }
+    let stamps = |l: &Line| l.tokens.iter().filter(|t| t.sort == Sort::Stamp).count();
+    let known: BTreeSet<(usize, Option<usize>)> =
+        found.iter().map(|m| (stamps(&lines.lines[m.line]), format(&lines.lines[m.line], m.num))).collect();
+    let words: BTreeSet<Vec<u8>> = found.iter().flat_map(|m| rest(&lines.lines[m.line], m.unit)).collect();
+    let most = found.iter().map(|m| rest(&lines.lines[m.line], m.unit).len()).max().unwrap_or(0);
+    // They may have a mark of their own, which is no unit.
+    let bare = lines.lines.iter().filter(|l| !l.weighs() && l.numbers.len() == count);
+    let own: BTreeSet<Vec<u8>> = bare.flat_map(|l| rest(l, None)).filter(|w| !words.contains(w)).collect();
+    let mark = own.len() == 1 && !own.iter().any(|w| words::foreign_unit(w));
+    let words: BTreeSet<Vec<u8>> = if mark { words.union(&own).cloned().collect() } else { words };
     let shape = |i: usize, l: &Line| {
-        let n = l.numbers.first()?;
-        let same =
-            !l.weighs() && l.numbers.len() == 1 && format(l, n.token).is_some() && known.contains(&(1, format(l, n.token)));
-        let fits = same && rest(l, None).is_subset(&words) && !l.tokens.iter().any(|t| t.sort == Sort::Stamp);
-        fits.then(|| mass_line(i, l, 0, first.several, false)).flatten()
+        let n = l.numbers.get(ordinal).filter(|_| l.numbers.len() == count && !l.weighs())?;
+        let look = format(l, n.token);
+        let same = look.is_some() && known.contains(&(stamps(l), look));
+        let beside = rest(l, None);
+        let fits = same && beside.is_subset(&words) && beside.len() <= most;
+        fits.then(|| mass_line(i, l, ordinal, first.several, false)).flatten()
     };
     lines.lines.iter().enumerate().filter_map(|(i, l)| shape(i, l)).collect()
 }

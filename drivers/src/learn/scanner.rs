@@ -23,12 +23,15 @@ pub(super) fn learn(lines: &Lines, hints: &Hints) -> Result<Draft, Refusal> {
     let prefix = prefix(&codes);
     let bare: Vec<&[u8]> = codes.iter().map(|c| &c[prefix.len()..]).map(without_symbology).collect();
     let different: BTreeSet<&[u8]> = bare.iter().copied().collect();
-    let good = bare.iter().filter(|c| is_code(c)).count();
+    let identified =
+        prefix.is_empty() && codes.iter().filter(|c| without_symbology(c).len() < c.len()).count() * 10 >= codes.len() * 9;
+    let blanks = identified || told || kinds(&different) > 1;
+    let good = bare.iter().filter(|c| is_code(c, blanks)).count();
     let measured = codes.iter().any(|c| words::overload(c) || words::underload(c) || words::counting(c));
     if good * 10 < bare.len() * 9 || different.len() < 3 || (measured && !told) {
         return refuse();
     }
-    if !told && (rising(&bare) || !(lettered(&different) || numbered(&bare, &different))) {
+    if !told && !identified && (rising(&bare) || !(lettered(&different) || numbered(&bare, &different))) {
         return refuse();
     }
     let head = if prefix.is_empty() { r"(?:\][A-Za-z][0-9A-Za-z])?".to_owned() } else { escaped(prefix) };
@@ -42,7 +45,9 @@ fn prefix<'a>(codes: &[&'a [u8]]) -> &'a [u8] {
     let end = first.iter().position(|b| matches!(b, b':' | b'=' | b' '));
     let Some(end) = end.map(|e| e + 1) else { return b"" };
     let letters = first[..end - 1].iter().all(u8::is_ascii_alphabetic) && end > 1;
-    let all = codes.iter().all(|c| c.len() > end && c.starts_with(&first[..end]));
+    // After a word and a blank a short number may be the rest of the code.
+    let rest = |c: &[u8]| first[end - 1] != b' ' || c.len() - end >= 8 || c[end..].iter().any(u8::is_ascii_alphabetic);
+    let all = codes.iter().all(|c| c.len() > end && c.starts_with(&first[..end]) && rest(c));
     if letters && all { &first[..end] } else { b"" }
 }
 
@@ -54,9 +59,23 @@ fn without_symbology(code: &[u8]) -> &[u8] {
     }
 }
 
-fn is_code(text: &[u8]) -> bool {
-    let begins = text.first().is_some_and(|b| b.is_ascii_alphanumeric() || *b == b'+');
-    begins && text.len() <= CODE_MAX && text.iter().all(|b| b.is_ascii_graphic()) && !decimal(text)
+/// `blanks` says whether a code may hold one, as in `tin 17`.
+fn is_code(text: &[u8], blanks: bool) -> bool {
+    let begins = text.first().is_some_and(|b| b.is_ascii_alphanumeric() || *b == b'+' || *b >= 0x80);
+    let words = text.split(|b| *b == b' ').count();
+    let plain = words == 1 || (blanks && words == 2 && !text[0].is_ascii_digit());
+    begins
+        && plain
+        && text.len() <= CODE_MAX
+        && std::str::from_utf8(text).is_ok()
+        && text.iter().all(|b| b.is_ascii_graphic() || *b == b' ' || *b >= 0x80)
+        && !decimal(text)
+}
+
+/// How many different words codes begin with.
+fn kinds(different: &BTreeSet<&[u8]>) -> usize {
+    let word = |c: &&[u8]| c.iter().take_while(|b| b.is_ascii_alphabetic()).copied().collect::<Vec<u8>>();
+    different.iter().map(word).collect::<BTreeSet<_>>().len()
 }
 
 /// A decimal number by itself, or in a text.
@@ -79,10 +98,11 @@ fn numbered(all: &[&[u8]], different: &BTreeSet<&[u8]>) -> bool {
     let length = lengths.first().copied().unwrap_or(0);
     let repeats = all.len() - different.len();
     let item = matches!(length, 8 | 12 | 13 | 14) && different.iter().all(|c| checked(c));
-    digits && lengths.len() == 1 && repeats * 2 <= all.len() && (item || length >= 9)
+    let long = length >= 11 && different.iter().all(|c| c[0] != b'0');
+    digits && lengths.len() == 1 && (long || repeats * 2 <= all.len()) && (item || length >= 9)
 }
 
-/// One word and numbers that go up by one: containers read in their order, or a counter.
+/// One word and numbers that go up by one or stay: containers read in their order, or a counter.
 fn rising(all: &[&[u8]]) -> bool {
     let split = |c: &[u8]| {
         let at = c.iter().rposition(|b| !b.is_ascii_digit()).map_or(0, |i| i + 1);
@@ -90,7 +110,9 @@ fn rising(all: &[&[u8]]) -> bool {
         n.map(|n| (c[..at].to_vec(), n))
     };
     let parts: Vec<Option<(Vec<u8>, u64)>> = all.iter().map(|c| split(c)).collect();
-    parts.windows(2).all(|w| matches!((&w[0], &w[1]), (Some((a, n)), Some((b, m))) if a == b && n.checked_add(1) == Some(*m)))
+    let near = |n: u64, m: u64| n == m || n.checked_add(1) == Some(m) || n.checked_add(2) == Some(m);
+    let up = parts.windows(2).filter(|w| matches!((&w[0], &w[1]), (Some((a, n)), Some((b, m))) if a == b && near(*n, *m)));
+    up.count() * 10 >= (parts.len() - 1) * 8
 }
 
 fn checked(code: &[u8]) -> bool {

@@ -44,19 +44,26 @@ pub(super) enum Commas {
 
 /// How all lines together use commas.
 pub(super) fn commas(lines: &[&[u8]]) -> Commas {
-    let (mut fields, mut between, mut points) = (false, false, false);
+    // A line or two of another sort, such as a greeting, do not count among many.
+    let few = if lines.len() < 8 { 0 } else { 1 + lines.len() / 30 };
+    let (mut fields, mut between, mut points) = (0, 0, 0);
     for line in lines {
         let digit = |i: Option<usize>| i.and_then(|i| line.get(i)).is_some_and(u8::is_ascii_digit);
+        let mut seen = [false; 3];
         for (i, b) in line.iter().enumerate() {
             let inside = digit(i.checked_sub(1)) && digit(Some(i + 1));
             match b {
-                b',' if inside => between = true,
-                b',' => fields = true,
-                b'.' if inside => points = true,
+                b',' if inside => seen[0] = true,
+                b',' => seen[1] = true,
+                b'.' if inside => seen[2] = true,
                 _ => {}
             }
         }
+        between += usize::from(seen[0]);
+        fields += usize::from(seen[1]);
+        points += usize::from(seen[2]);
     }
+    let (fields, between, points) = (fields > few, between > few, points > few);
     match (fields, between) {
         (true, true) if points => Commas::Fields,
         (true, true) => Commas::Unclear,
@@ -74,7 +81,9 @@ pub(super) fn tokens(line: &[u8], commas: Commas) -> Vec<Token> {
             b' ' | b'\t' => (Sort::Blank, run(line, at, |b| matches!(b, b' ' | b'\t'))),
             b if b.is_ascii_digit() => digits(line, at, commas),
             b'.' if line.get(at + 1).is_some_and(u8::is_ascii_digit) && !before_is_digit(line, at) => number_from_point(line, at),
-            b if b.is_ascii_alphabetic() => (Sort::Word, word(line, at)),
+            b if b.is_ascii_alphabetic() || b >= 0x80 => (Sort::Word, word(line, at)),
+            // What parts fields stands by itself, so that an empty field stays one.
+            b'|' | b';' | b',' => (Sort::Mark, at + 1),
             b => (Sort::Mark, run(line, at, |c| c == b)),
         };
         out.push(Token { sort, from: at, to });
@@ -95,9 +104,18 @@ fn number_from_point(line: &[u8], at: usize) -> (Sort, usize) {
     (Sort::Number, run(line, at + 1, |b| b.is_ascii_digit()))
 }
 
-/// Letters; `gS` is a unit and a mark.
+/// Letters; `gS` is a unit and a mark, `Sg` a mark and a unit, `netg` a label and a unit.
 fn word(line: &[u8], at: usize) -> usize {
-    let to = run(line, at, |b| b.is_ascii_alphabetic());
+    let to = run(line, at, |b| b.is_ascii_alphabetic() || b >= 0x80);
+    let capitals = run(&line[..to], at, |b| b.is_ascii_uppercase());
+    let own = words::unit(&line[at..to]).is_some();
+    if capitals > at && capitals < to && !own && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
+        return capitals;
+    }
+    let labelled = ["kg", "mg", "g"].iter().filter_map(|u| line[at..to].strip_suffix(u.as_bytes()));
+    if let Some(label) = labelled.into_iter().find(|stem| !own && stem.len() > 2 && words::label(stem).is_some()) {
+        return at + label.len();
+    }
     let small = run(&line[..to], at, |b| b.is_ascii_lowercase());
     if small < to && small > at && words::unit(&line[at..small]).is_some() { small } else { to }
 }
@@ -153,6 +171,7 @@ mod tests {
                 vec![(Word, "ST"), (Mark, ","), (Word, "GS"), (Mark, ","), (Mark, "+"), (Number, "0012.34"), (Word, "g")],
             ),
             ("-  12,34 kg", Commas::Decimal, vec![(Mark, "-"), (Number, "12,34"), (Word, "kg")]),
+            ("Sg12.34", Commas::Decimal, vec![(Word, "S"), (Word, "g"), (Number, "12.34")]),
             ("12.34gS", Commas::Decimal, vec![(Number, "12.34"), (Word, "g"), (Word, "S")]),
             ("2024-01-05 10:20:30", Commas::Decimal, vec![(Stamp, "2024-01-05"), (Stamp, "10:20:30")]),
             ("5.1.2024 7/8", Commas::Decimal, vec![(Stamp, "5.1.2024"), (Stamp, "7/8")]),

@@ -24,16 +24,17 @@ impl Label {
     }
 }
 
-/// Trade abbreviations of gross, net and tare (common practice, no source). One letter counts as a
-/// capital only: small ones are units and parts of words.
+/// Trade words and abbreviations of gross, net and tare in the languages that balances print (common
+/// practice, no source). One letter counts as a capital only: small ones are units and parts of words.
 pub(super) fn label(word: &[u8]) -> Option<Label> {
     if word.len() == 1 && !word[0].is_ascii_uppercase() {
         return None;
     }
     Some(match word.to_ascii_uppercase().as_slice() {
-        b"G" | b"GS" | b"GR" | b"GRS" | b"GROSS" | b"B" | b"BR" | b"BRUTTO" => Label::Gross,
-        b"N" | b"NT" | b"NET" | b"NETT" | b"NETTO" => Label::Net,
-        b"T" | b"TR" | b"TARE" | b"TARA" | b"PT" => Label::Tare,
+        b"G" | b"GS" | b"GR" | b"GRS" | b"GROSS" | b"B" | b"BR" | b"BTO" | b"BRT" | b"BRUTTO" | b"BRUTO" | b"BRUT" | b"LORDO"
+        | b"LORDA" => Label::Gross,
+        b"N" | b"NT" | b"NTO" | b"NET" | b"NETT" | b"NETTO" | b"NETTA" | b"NETO" => Label::Net,
+        b"T" | b"TR" | b"TARE" | b"TARA" | b"TAARA" | b"TARRA" | b"PT" => Label::Tare,
         _ => return None,
     })
 }
@@ -113,6 +114,9 @@ mod tests {
         for (word, says) in [
             ("GS", Some(Label::Gross)),
             ("brutto", Some(Label::Gross)),
+            ("lordo", Some(Label::Gross)),
+            ("BRUT", Some(Label::Gross)),
+            ("NETO", Some(Label::Net)),
             ("N", Some(Label::Net)),
             ("n", None),
             ("PT", Some(Label::Tare)),
