@@ -62,7 +62,6 @@ fn setup() -> DeskSetup {
         lab: Setup {
             balances: Default::default(),
             balance_rule: None,
-            balance_rule: None,
             benches: vec![bench.clone()],
             instruments: instruments.iter().map(|i| (i.name.clone(), vec![bench.clone()])).collect::<BTreeMap<_, _>>(),
             methods: BTreeMap::from([(name.clone(), method)]),
