@@ -148,12 +148,7 @@ impl Station {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.dir.path().join("log")).expect("a log");
         let own = self.command();
         let mut command = Command::new("strace");
-        command
-            .args(["-D", "-f", "-qq", "--seccomp-bpf", "-o"])
-            .arg(seen)
-            .args(arguments)
-            .arg(own.get_program())
-            .args(own.get_args());
+        command.args(["-D", "-f", "-qq", "-o"]).arg(seen).args(arguments).arg(own.get_program()).args(own.get_args());
         command.envs(own.get_envs().filter_map(|(k, v)| v.map(|v| (k, v)))).stdin(Stdio::null());
         *self.child.lock().expect("child") = Some(Running::start(command.stdout(Stdio::null()).stderr(log)));
     }

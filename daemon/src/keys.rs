@@ -90,9 +90,17 @@ impl Key {
             if let Some(folder) = path.parent() {
                 std::fs::create_dir_all(folder)?;
             }
-            let mut file = OpenOptions::new().write(true).create_new(true).mode(0o600).open(path)?;
+            // Killed here, it must not leave half a key that no later start would take: the name is given to a whole one.
+            let mut part = path.as_os_str().to_owned();
+            part.push(".part");
+            let _ = std::fs::remove_file(&part);
+            let mut file = OpenOptions::new().write(true).create_new(true).mode(0o600).open(&part)?;
             writeln!(file, "{}", Digest(key.0.to_bytes()))?;
-            file.sync_all()
+            file.sync_all()?;
+            // Unlike renaming, this does not take the place of a key that another process has made meanwhile.
+            let named = std::fs::hard_link(&part, path);
+            std::fs::remove_file(&part)?;
+            named
         };
         write().map_err(|e| cannot(path, &e))?;
         Ok(key)
