@@ -308,9 +308,7 @@ impl Desk {
 
 /// Checks of a balance with a reference mass, oldest first: enough for a chart of its drift.
 fn balance_checks(state: &Instrument) -> Vec<Value> {
-    let one = |c: &BalanceCheck| {
-        json!({"at": c.at.rfc3339(), "error_g": grams(c.error), "tolerance_g": grams(c.tolerance), "passed": c.passed(), "by": c.by})
-    };
+    let one = |c: &BalanceCheck| json!({"at": c.at.rfc3339(), "error_g": grams(c.error), "tolerance_g": grams(c.tolerance), "passed": c.passed(), "by": c.by});
     state.checks.iter().map(one).collect()
 }
 
