@@ -101,7 +101,7 @@ impl Days {
     }
 
     fn open(&mut self) {
-        let setup = desk_setup(&self.station, &self.profiles, self.dir.path(), Key::random().ok(), true);
+        let setup = desk_setup(&self.station, &self.profiles, self.dir.path(), Some(Key::of_demonstrations()), true);
         let options = OpenOptions::new(&format!("boot-{}", self.boots), self.utc_us);
         let (utc_us, mono_us) = (self.utc_us, self.mono_us);
         let (desk, first) =
