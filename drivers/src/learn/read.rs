@@ -3,7 +3,7 @@
 use super::columns::Lines;
 use super::frames::Heard;
 use super::words;
-use super::{Hints, Learned, LearnedReading, Refusal};
+use super::{Hints, Learned, LearnedReading, Refusal, UNREAD_CHECK};
 use crate::frame::{Framer, How};
 use crate::heard::{Reject, What};
 use crate::profile::{Decoder, Kind, Profile, ProfileText};
@@ -35,8 +35,7 @@ pub(super) fn read(heard: &Heard, draft: Draft, lines: &Lines, hints: &Hints) ->
     let mut told = decode(heard, &Arc::new(profile));
     contradictions(&told, &draft, lines)?;
     if kind == Kind::Balance && draft.text.check.is_none() && unread_check(&told, lines) {
-        let says = "characters after the line end agree with no known check: send a few more different lines";
-        return Err(Refusal::new(Some(kind), 9, says));
+        return Err(Refusal::new(Some(kind), 9, UNREAD_CHECK));
     }
     if first_may_be_cut(&told, &draft.text, lines) {
         told.remove(0);
