@@ -217,6 +217,15 @@ impl Scene<'_> {
             if absent && is_before && at + 1 == aligned.cells.len() && present().any(|k| *k == Key::Num) {
                 return refuse(7, "a number stands in front of some masses only: set the balance to group no digits");
             }
+            // `4C`, `46`: check digits that no check was found for.
+            let text = |c: &Option<Key>| c.is_none() || matches!(c, Some(Key::Text(_, true)));
+            let glued = |cells: &Vec<Option<Key>>| cells.iter().all(text) && cells.iter().any(Option::is_none);
+            if !aligned.blanks[at + 1].seen && aligned.cells.get(at + 1).is_some_and(glued) {
+                return refuse(
+                    7,
+                    "a text beside the mass changes all the time and is no check that is known: set the balance to send the mass alone",
+                );
+            }
             return Ok(Role::Digits { stamp: present().any(|k| *k == Key::Stamp), optional: absent });
         }
         if present().all(|k| matches!(k, Key::Unit(_))) {
@@ -299,7 +308,10 @@ impl Scene<'_> {
         let meaning = behave::steadiness(&self.values, words);
         let of_basis = present.iter().all(|w| words::label(w).is_some()) && labels.len() + usize::from(optional) >= 2;
         if of_basis && !labelled {
-            return refuse(8, "a word may tell gross from net or belong to another number: set the balance to send the mass alone");
+            return refuse(
+                8,
+                "a word may tell gross from net or belong to another number: set the balance to send the mass alone",
+            );
         }
         if of_basis && labelled {
             if self.follows_movement(words) {
@@ -336,7 +348,9 @@ impl Scene<'_> {
         // Of two marks the one of zero says nothing of rest, nor does the other where equal masses stand beside it.
         if let [a, b] = present[..]
             && !optional
-            && [(a, b), (b, a)].iter().any(|(zero, other)| behave::marks_zero(&self.values, words, zero) && self.repeats(words, other))
+            && [(a, b), (b, a)]
+                .iter()
+                .any(|(zero, other)| behave::marks_zero(&self.values, words, zero) && self.repeats(words, other))
         {
             return Ok(Role::Any { words: own(&mut present.iter()), optional });
         }

@@ -1,7 +1,7 @@
 //! Check digits that agree with the lines they stand in.
 
-use super::{Refusal, UNREAD_CHECK};
 use super::frames::{Frame, Guess};
+use super::{Refusal, UNREAD_CHECK};
 use crate::frame::Parts;
 use crate::profile::text::{CheckDigits, CheckKind, CheckOver, CheckPlace, CheckText, FrameText};
 use std::collections::BTreeSet;

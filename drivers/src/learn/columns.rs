@@ -63,7 +63,11 @@ impl Line {
 /// Whether a line is text: printable, but for the few control characters that dialects use.
 /// Letters beyond ASCII only where most lines have them.
 pub(super) fn is_text(body: &[u8], letters: bool) -> bool {
-    body.iter().all(|b| b.is_ascii_graphic() || (letters && *b >= 0x80) || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17))
+    body.iter().all(|b| {
+        b.is_ascii_graphic()
+            || (letters && *b >= 0x80)
+            || matches!(b, b' ' | b'\t' | 0x01..=0x07 | 0x0C | b'\r' | b'\n' | 0x10..=0x17)
+    })
 }
 
 impl Lines {
@@ -71,7 +75,8 @@ impl Lines {
     pub(super) fn new(checked: &Checked) -> Result<Self, Refusal> {
         let spoken: Vec<&(usize, Vec<u8>)> = checked.lines.iter().filter(|(_, b)| !b.trim_ascii().is_empty()).collect();
         let high = spoken.iter().filter(|(_, b)| !b.is_ascii()).count();
-        let letters = high * 2 >= spoken.len() && spoken.iter().all(|(_, b)| b.iter().filter(|b| **b >= 0x80).count() * 2 <= b.len());
+        let letters =
+            high * 2 >= spoken.len() && spoken.iter().all(|(_, b)| b.iter().filter(|b| **b >= 0x80).count() * 2 <= b.len());
         let texts: Vec<&[u8]> = spoken.iter().map(|(_, b)| b.as_slice()).filter(|b| is_text(b, letters)).collect();
         if texts.len() * 10 < spoken.len() * 7 || texts.len() < 3 {
             let says = "the bytes are no text: listen again with another speed or character frame, such as 7E1 or 7O1";
@@ -116,9 +121,11 @@ impl Lines {
         let decimal = |t: &[u8]| t.iter().any(|b| matches!(b, b'.' | b','));
         let (after, before) = (texts(|n| n.unit), texts(|n| n.before));
         let decimals = |texts: &[&[u8]]| texts.iter().filter(|t| decimal(t)).count();
-        let by_decimals = decimals(&after) == 0 && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
+        let by_decimals =
+            decimals(&after) * 10 <= after.len() && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
         let value = |t: &[u8]| std::str::from_utf8(t).ok().and_then(|t| t.parse::<u64>().ok());
-        let up = after.windows(2).filter(|w| matches!((value(w[0]), value(w[1])), (Some(a), Some(b)) if a.checked_add(1) == Some(b)));
+        let up =
+            after.windows(2).filter(|w| matches!((value(w[0]), value(w[1])), (Some(a), Some(b)) if a.checked_add(1) == Some(b)));
         let counts_lines = after.len() >= 4 && up.count() * 10 >= (after.len() - 1) * 8;
         if by_decimals || (counts_lines && before.len() * 10 >= after.len() * 8) {
             for n in self.lines.iter_mut().flat_map(|l| &mut l.numbers) {

@@ -276,13 +276,12 @@ fn inside(heard: &Heard, end: u8, period: Option<usize>) -> Option<bool> {
     // Pieces of one length each are the frames themselves.
     let even = inner.iter().map(|p| p.len()).collect::<BTreeSet<_>>().len() == 1;
     let per_frame = if even { 1.0 } else { heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64) };
-    let begins = even && pieces.first().map(|p| p.len()) == inner.first().map(|p| p.len());
     // Of two pieces one may be a question that the instrument sends back.
     let constant = |from: usize| inner.iter().skip(from).step_by(2).collect::<BTreeSet<_>>().len() == 1;
     match () {
         () if per_frame > 2.5 => None,
         () if per_frame > 1.5 && !(constant(0) || constant(1)) => None,
-        () => Some(heard.bytes.last() != Some(&end) && !begins),
+        () => Some(heard.bytes.last() != Some(&end)),
     }
 }
 

@@ -165,7 +165,9 @@ fn sign(lines: &Lines, masses: &[MassLine]) -> Result<NumberLook, Refusal> {
     };
     // But for one that is cut.
     let dashes = front.iter().filter(|s| **s == Some(b"-")).count();
-    if dashes + 1 + front.len() / 20 >= front.len() || (front.iter().all(Option::is_none) && trail.iter().all(|s| *s == Some(b"-"))) {
+    if dashes + 1 + front.len() / 20 >= front.len()
+        || (front.iter().all(Option::is_none) && trail.iter().all(|s| *s == Some(b"-")))
+    {
         return refuse(
             6,
             "every number has a minus sign, which could be a dash: put something on the pan that is heavier than what was tared away",

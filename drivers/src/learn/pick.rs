@@ -186,10 +186,8 @@ fn without_unit(lines: &Lines, found: &[MassLine]) -> Vec<MassLine> {
         return Vec::new();
     }
     let stamps = |l: &Line| l.tokens.iter().filter(|t| t.sort == Sort::Stamp).count();
-    let known: BTreeSet<(usize, Option<usize>)> = found
-        .iter()
-        .map(|m| (stamps(&lines.lines[m.line]), format(&lines.lines[m.line], m.num)))
-        .collect();
+    let known: BTreeSet<(usize, Option<usize>)> =
+        found.iter().map(|m| (stamps(&lines.lines[m.line]), format(&lines.lines[m.line], m.num))).collect();
     let words: BTreeSet<Vec<u8>> = found.iter().flat_map(|m| rest(&lines.lines[m.line], m.unit)).collect();
     let most = found.iter().map(|m| rest(&lines.lines[m.line], m.unit).len()).max().unwrap_or(0);
     // They may have a mark of their own, which is no unit.

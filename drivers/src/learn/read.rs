@@ -147,7 +147,8 @@ fn first_may_be_cut(told: &[Told], text: &ProfileText, lines: &Lines) -> bool {
             if told.iter().skip(1).filter(|t| reading(&t.what).is_some()).all(|t| shape(t) != own) {
                 return true;
             }
-            let begins = first.body.first().is_some_and(|b| !b.is_ascii_digit() && !matches!(b, b'.' | b',' | b' ' | b'\t'));
+            let letter = first.body.first().is_some_and(u8::is_ascii_alphabetic);
+            let begins = letter && second.is_some_and(|s| shape(s) == own);
             let digits = |b: &[u8]| b.iter().position(|b| !b.is_ascii_digit()).unwrap_or(b.len());
             let longest = told.iter().skip(1).filter(|t| reading(&t.what).is_some()).map(|t| digits(&t.body)).max().unwrap_or(0);
             let signed = told.iter().filter_map(|t| reading(&t.what)).any(|(_, r)| r.mass.ug() < 0);

@@ -23,7 +23,8 @@ pub(super) fn learn(lines: &Lines, hints: &Hints) -> Result<Draft, Refusal> {
     let prefix = prefix(&codes);
     let bare: Vec<&[u8]> = codes.iter().map(|c| &c[prefix.len()..]).map(without_symbology).collect();
     let different: BTreeSet<&[u8]> = bare.iter().copied().collect();
-    let identified = prefix.is_empty() && codes.iter().filter(|c| without_symbology(c).len() < c.len()).count() * 10 >= codes.len() * 9;
+    let identified =
+        prefix.is_empty() && codes.iter().filter(|c| without_symbology(c).len() < c.len()).count() * 10 >= codes.len() * 9;
     let blanks = identified || told || kinds(&different) > 1;
     let good = bare.iter().filter(|c| is_code(c, blanks)).count();
     let measured = codes.iter().any(|c| words::overload(c) || words::underload(c) || words::counting(c));
@@ -63,7 +64,12 @@ fn is_code(text: &[u8], blanks: bool) -> bool {
     let begins = text.first().is_some_and(|b| b.is_ascii_alphanumeric() || *b == b'+' || *b >= 0x80);
     let words = text.split(|b| *b == b' ').count();
     let plain = words == 1 || (blanks && words == 2 && !text[0].is_ascii_digit());
-    begins && plain && text.len() <= CODE_MAX && std::str::from_utf8(text).is_ok() && text.iter().all(|b| b.is_ascii_graphic() || *b == b' ' || *b >= 0x80) && !decimal(text)
+    begins
+        && plain
+        && text.len() <= CODE_MAX
+        && std::str::from_utf8(text).is_ok()
+        && text.iter().all(|b| b.is_ascii_graphic() || *b == b' ' || *b >= 0x80)
+        && !decimal(text)
 }
 
 /// How many different words codes begin with.
