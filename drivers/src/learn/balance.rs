@@ -217,6 +217,15 @@ impl Scene<'_> {
             if absent && is_before && at + 1 == aligned.cells.len() && present().any(|k| *k == Key::Num) {
                 return refuse(7, "a number stands in front of some masses only: set the balance to group no digits");
             }
+            // `4C`, `46`: check digits that no check was found for.
+            let text = |c: &Option<Key>| c.is_none() || matches!(c, Some(Key::Text(_, true)));
+            let glued = |cells: &Vec<Option<Key>>| cells.iter().all(text) && cells.iter().any(Option::is_none);
+            if !aligned.blanks[at + 1].seen && aligned.cells.get(at + 1).is_some_and(glued) {
+                return refuse(
+                    7,
+                    "a text beside the mass changes all the time and is no check that is known: set the balance to send the mass alone",
+                );
+            }
             return Ok(Role::Digits { stamp: present().any(|k| *k == Key::Stamp), optional: absent });
         }
         if present().all(|k| matches!(k, Key::Unit(_))) {

@@ -1,7 +1,7 @@
 //! Check digits that agree with the lines they stand in.
 
-use super::Refusal;
 use super::frames::{Frame, Guess};
+use super::{Refusal, UNREAD_CHECK};
 use crate::frame::Parts;
 use crate::profile::text::{CheckDigits, CheckKind, CheckOver, CheckPlace, CheckText, FrameText};
 use std::collections::BTreeSet;
@@ -33,11 +33,7 @@ pub(super) fn find(frames: &[Frame], guess: &Guess) -> Result<Checked, Refusal> 
     }
     let found = hypotheses(guess.frame.tail).find(|check| believed(*check, &sample));
     if guess.frame.tail > 0 && found.is_none() {
-        return Err(Refusal::new(
-            None,
-            2,
-            "characters after the line end agree with no known check: send a few more different lines",
-        ));
+        return Err(Refusal::new(None, 2, UNREAD_CHECK));
     }
     let strip = |f: &Frame| match found {
         Some(check) => check.stripped(&parts(f)).map(<[u8]>::to_vec),

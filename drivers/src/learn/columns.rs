@@ -121,7 +121,8 @@ impl Lines {
         let decimal = |t: &[u8]| t.iter().any(|b| matches!(b, b'.' | b','));
         let (after, before) = (texts(|n| n.unit), texts(|n| n.before));
         let decimals = |texts: &[&[u8]]| texts.iter().filter(|t| decimal(t)).count();
-        let by_decimals = decimals(&after) == 0 && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
+        let by_decimals =
+            decimals(&after) * 10 <= after.len() && decimals(&before) >= 3 && decimals(&before) * 10 >= before.len() * 9;
         let value = |t: &[u8]| std::str::from_utf8(t).ok().and_then(|t| t.parse::<u64>().ok());
         let up =
             after.windows(2).filter(|w| matches!((value(w[0]), value(w[1])), (Some(a), Some(b)) if a.checked_add(1) == Some(b)));

@@ -186,7 +186,8 @@ pub(super) fn candidates(heard: &Heard) -> Vec<Guess> {
             guess.frame.single = char::from(single).to_string();
             out.push(guess);
         }
-        for tail in [0, 2, 4, 1] {
+        // Check digits behind the end first: they must agree, and without them they would be taken for text.
+        for tail in [2, 4, 1, 0] {
             out.push(Guess::ends(None, &[*end], tail));
         }
     }
@@ -240,6 +241,19 @@ fn started(heard: &Heard, start: u8, newline: Option<&'static [u8]>, out: &mut V
     }
 }
 
+/// Whether changing hexadecimal digits stand behind the end of started frames, before something that stays.
+pub(super) fn digits_behind(heard: &Heard, guess: &Guess) -> bool {
+    let (Some(start), Some(end)) = (guess.frame.starts.bytes().next(), guess.frame.ends.first()) else { return false };
+    let behind = |s: &[u8]| s.windows(end.len()).position(|w| w == end.as_bytes()).map(|at| s[at + end.len()..].to_vec());
+    let segments: Vec<Vec<u8>> = heard.bytes.split(|b| *b == start).skip(1).filter_map(behind).collect();
+    guess.frame.tail == 0
+        && [2, 4].into_iter().any(|n| {
+            let headed = segments.iter().filter(|b| b.len() >= n && b[..n].iter().all(u8::is_ascii_hexdigit));
+            let (heads, tails): (BTreeSet<&[u8]>, BTreeSet<&[u8]>) = headed.clone().map(|b| b.split_at(n)).unzip();
+            headed.count() * 2 >= segments.len() && heads.len() >= 3 && tails.len() <= 4
+        })
+}
+
 /// A character that cuts everything into pieces of much the same length, but for questions sent back and single odd ones.
 fn regular(heard: &Heard, end: u8) -> bool {
     let pieces: Vec<usize> = heard.bytes.split(|b| *b == end).map(<[u8]>::len).collect();
@@ -262,13 +276,12 @@ fn inside(heard: &Heard, end: u8, period: Option<usize>) -> Option<bool> {
     // Pieces of one length each are the frames themselves.
     let even = inner.iter().map(|p| p.len()).collect::<BTreeSet<_>>().len() == 1;
     let per_frame = if even { 1.0 } else { heard.count(end) as f64 / (heard.bytes.len() as f64 / length as f64) };
-    let begins = even && pieces.first().map(|p| p.len()) == inner.first().map(|p| p.len());
     // Of two pieces one may be a question that the instrument sends back.
     let constant = |from: usize| inner.iter().skip(from).step_by(2).collect::<BTreeSet<_>>().len() == 1;
     match () {
         () if per_frame > 2.5 => None,
         () if per_frame > 1.5 && !(constant(0) || constant(1)) => None,
-        () => Some(heard.bytes.last() != Some(&end) && !begins),
+        () => Some(heard.bytes.last() != Some(&end)),
     }
 }
 

@@ -171,6 +171,9 @@ fn refused(refusal: Refusal) -> Learned {
 
 /// One way to cut frames, through all kinds of instrument.
 fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> Result<Learned, Refusal> {
+    if frames::digits_behind(heard, framing) {
+        return Err(Refusal::new(None, 2, UNREAD_CHECK));
+    }
     let cut = frames::cut(heard, framing)?;
     let checked = checksum::find(&cut, framing)?;
     let lines = columns::Lines::new(&checked)?;
@@ -215,6 +218,8 @@ fn understand(heard: &frames::Heard, framing: &frames::Guess, hints: &Hints) -> 
 
 /// What is said of frames that could begin in two places.
 const NO_BEGINNING: &str = "lines have no end and could begin in two places: listen at the port itself, where pauses tell, or set the instrument to send a line end";
+/// What is said of check digits that were not found to be such.
+const UNREAD_CHECK: &str = "characters after the line end agree with no known check: send a few more different lines";
 /// What is said when known masses fit two ways to read the numbers.
 const TWO_WAYS: &str = "the known masses fit the numbers in two ways: say another mass that was put on the pan with --mass, with all its digits, or the unit with --unit";
 /// What is said when nothing fits.

@@ -193,7 +193,7 @@ fn without_unit(lines: &Lines, found: &[MassLine]) -> Vec<MassLine> {
     // They may have a mark of their own, which is no unit.
     let bare = lines.lines.iter().filter(|l| !l.weighs() && l.numbers.len() == count);
     let own: BTreeSet<Vec<u8>> = bare.flat_map(|l| rest(l, None)).filter(|w| !words.contains(w)).collect();
-    let mark = own.len() == 1 && !own.iter().any(|w| words::foreign_unit(w));
+    let mark = own.len() == 1 && !own.iter().any(|w| words::foreign_unit(w) || w.eq_ignore_ascii_case(b"mg"));
     let words: BTreeSet<Vec<u8>> = if mark { words.union(&own).cloned().collect() } else { words };
     let shape = |i: usize, l: &Line| {
         let n = l.numbers.get(ordinal).filter(|_| l.numbers.len() == count && !l.weighs())?;

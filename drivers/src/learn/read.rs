@@ -3,7 +3,7 @@
 use super::columns::Lines;
 use super::frames::Heard;
 use super::words;
-use super::{Hints, Learned, LearnedReading, Refusal};
+use super::{Hints, Learned, LearnedReading, Refusal, UNREAD_CHECK};
 use crate::frame::{Framer, How};
 use crate::heard::{Reject, What};
 use crate::profile::{Decoder, Kind, Profile, ProfileText};
@@ -35,8 +35,7 @@ pub(super) fn read(heard: &Heard, draft: Draft, lines: &Lines, hints: &Hints) ->
     let mut told = decode(heard, &Arc::new(profile));
     contradictions(&told, &draft, lines)?;
     if kind == Kind::Balance && draft.text.check.is_none() && unread_check(&told, lines) {
-        let says = "characters after the line end agree with no known check: send a few more different lines";
-        return Err(Refusal::new(Some(kind), 9, says));
+        return Err(Refusal::new(Some(kind), 9, UNREAD_CHECK));
     }
     if first_may_be_cut(&told, &draft.text, lines) {
         told.remove(0);
@@ -148,7 +147,8 @@ fn first_may_be_cut(told: &[Told], text: &ProfileText, lines: &Lines) -> bool {
             if told.iter().skip(1).filter(|t| reading(&t.what).is_some()).all(|t| shape(t) != own) {
                 return true;
             }
-            let begins = first.body.first().is_some_and(|b| !b.is_ascii_digit() && !matches!(b, b'.' | b',' | b' ' | b'\t'));
+            let letter = first.body.first().is_some_and(u8::is_ascii_alphabetic);
+            let begins = letter && second.is_some_and(|s| shape(s) == own);
             let digits = |b: &[u8]| b.iter().position(|b| !b.is_ascii_digit()).unwrap_or(b.len());
             let longest = told.iter().skip(1).filter(|t| reading(&t.what).is_some()).map(|t| digits(&t.body)).max().unwrap_or(0);
             let signed = told.iter().filter_map(|t| reading(&t.what)).any(|(_, r)| r.mass.ug() < 0);

@@ -109,7 +109,7 @@ fn word(line: &[u8], at: usize) -> usize {
     let to = run(line, at, |b| b.is_ascii_alphabetic() || b >= 0x80);
     let capitals = run(&line[..to], at, |b| b.is_ascii_uppercase());
     let own = words::unit(&line[at..to]).is_some();
-    if capitals > at && capitals < to && !own && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
+    if capitals > at && capitals < to && !own && &line[at..to] != b"Mg" && matches!(&line[capitals..to], b"g" | b"kg" | b"mg") {
         return capitals;
     }
     let labelled = ["kg", "mg", "g"].iter().filter_map(|u| line[at..to].strip_suffix(u.as_bytes()));

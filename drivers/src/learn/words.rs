@@ -39,8 +39,11 @@ pub(super) fn label(word: &[u8]) -> Option<Label> {
     })
 }
 
-/// A unit of mass as a profile's group `unit` takes it.
+/// A unit of mass as a profile's group `unit` takes it. `Mg` is none: it may be a mark and a unit, or a megagram.
 pub(super) fn unit(word: &[u8]) -> Option<MassUnit> {
+    if word == b"Mg" {
+        return None;
+    }
     std::str::from_utf8(word).ok().and_then(MassUnit::parse)
 }
 
