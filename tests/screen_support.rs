@@ -31,6 +31,7 @@ pub struct Station {
     pub folder: tempfile::TempDir,
     pub pan: Mutex<Pty>,
     pub cup: Mutex<Pty>,
+    config: String,
 }
 
 impl Station {
@@ -58,9 +59,23 @@ impl Station {
             instrument("pan-1", "balance", "signed-steady"),
             instrument("cup-1", "counter", "running-total"),
         );
+        let mut station = Self {
+            service: None,
+            address: SocketAddr::from(([127, 0, 0, 1], port)),
+            folder,
+            pan: Mutex::new(pan),
+            cup: Mutex::new(cup),
+            config,
+        };
+        station.serve(told);
+        station
+    }
+
+    /// Starts the service; after [`Station::stop`] it goes on with what it stored.
+    pub fn serve(&mut self, told: Option<Told>) {
         let plan = Plan {
-            station: tarecup_config::station::parse("tried.toml", &config).unwrap_or_else(|f| panic!("{f}")),
-            state_dir: folder.path().join("state"),
+            station: tarecup_config::station::parse("tried.toml", &self.config).unwrap_or_else(|f| panic!("{f}")),
+            state_dir: self.state(),
             clock: Arc::new(MachineClock::new()),
             time_passes: true,
             any_broker_port: true,
@@ -71,18 +86,10 @@ impl Station {
             tap: None,
             told,
         };
-        let service = Service::start(plan).unwrap_or_else(|e| panic!("{e}"));
-        let station = Self {
-            service: Some(service),
-            address: SocketAddr::from(([127, 0, 0, 1], port)),
-            folder,
-            pan: Mutex::new(pan),
-            cup: Mutex::new(cup),
-        };
-        until("the ports are open", || station.service().ports_open() == 2);
+        self.service = Some(Service::start(plan).unwrap_or_else(|e| panic!("{e}")));
+        until("the ports are open", || self.service().ports_open() == 2);
         // The first line after a port was opened counts once it was quiet for a while.
         std::thread::sleep(Duration::from_millis(250));
-        station
     }
 
     pub fn service(&self) -> &Service {

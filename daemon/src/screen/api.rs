@@ -258,11 +258,13 @@ pub(super) async fn import(
     if let Some(says) = read.refused {
         return Err(Refused::new(StatusCode::UNPROCESSABLE_ENTITY, says));
     }
-    if take.take {
+    // One line that cannot be taken, and nothing of the list is.
+    let whole = take.take && read.lines.iter().all(|l| l.refused.is_none());
+    if whole {
         taken(&app, &ends, &who, &mut read.lines, asks, None).await;
     }
     let line = |l: ImportLine| ImportedLine { line: l.no, fields: l.fields, refused: l.refused, note: l.note };
-    send(&Imported { taken: take.take, lines: read.lines.into_iter().map(line).collect() })
+    send(&Imported { taken: whole, lines: read.lines.into_iter().map(line).collect() })
 }
 
 /// Takes the lines of a list that can be taken; what the desk refuses is told at its line.

@@ -10,6 +10,7 @@ use super::mailbox::{Mailbox, News};
 use super::record::{self, Record};
 use super::words::ENGLISH;
 use super::{pages, view};
+use crate::backup::Note;
 use crate::clock::BootClock;
 use crate::desk::{Changed, LiveOut};
 use maud::Markup;
@@ -22,7 +23,7 @@ use std::time::Duration;
 use tarecup_core::lab::Lab;
 use tarecup_core::names::{BenchName, InstrumentName, SpecimenId};
 use tarecup_core::signal::{Mark, Reading};
-use tarecup_core::stamp::Stamp;
+use tarecup_core::stamp::{Stamp, rfc3339};
 use tokio::sync::watch;
 use tokio::time::Instant;
 
@@ -302,6 +303,10 @@ impl Board {
             history: record.history,
             head: record.head,
             celsius: *lock(&self.celsius),
+            backup_proven: match &seen.page {
+                Page::Laboratory => Note::read(&self.fixed.state_dir).at_utc_us.map(rfc3339),
+                _ => None,
+            },
             ..Around::default()
         }
     }

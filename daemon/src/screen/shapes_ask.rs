@@ -241,6 +241,23 @@ pub enum AskShape {
         specimen: String,
         who: Option<String>,
     },
+    ConfirmPort {
+        instrument: String,
+        who: String,
+    },
+    Advice {
+        bench: Option<String>,
+        specimen: Option<String>,
+        paste_g: Option<Grams>,
+        drops: Option<u32>,
+    },
+    /// Which of these would be refused; nothing is done.
+    Would {
+        #[schemars(length(max = 200))]
+        asks: Vec<AskShape>,
+    },
+    Shelf {},
+    Loose {},
     Status {},
     Latest {
         bench: String,
@@ -314,6 +331,26 @@ mod tests {
             Explain { .. } | MoveTrial { .. } | AmendPenetration { .. } | TypePenetration { .. } => 34,
             Slid { .. } | GrooveTore { .. } | ClockRight { .. } | CheckBalance { .. } | CheckCup { .. } => 34,
             OutOfOven { .. } | OvenOff { .. } | NotObtainable { .. } | AnswerCheck { .. } | Review { .. } => 34,
+        }
+    }
+
+    /// Asks that are not of the core: the desk reads them by hand.
+    #[test]
+    fn what_only_reads_is_described_as_it_is_read() {
+        for ask in [
+            json!({"ask":"confirm_port","instrument":"pan-1","who":"AB"}),
+            json!({"ask":"advice","bench":"b","specimen":"S","paste_g":"182.5","drops":40}),
+            json!({"ask":"would","asks":[{"ask":"code","bench":"b","text":"C1"}]}),
+            json!({"ask":"shelf"}),
+            json!({"ask":"loose"}),
+            json!({"ask":"status"}),
+            json!({"ask":"latest","bench":"b"}),
+            json!({"ask":"document","kind":"specimen","id":"S"}),
+            json!({"ask":"facts_after","seq":1,"limit":10}),
+        ] {
+            crate::asks::parse(&ask.to_string()).unwrap_or_else(|e| panic!("{ask}: {e}"));
+            let shape: AskShape = serde_json::from_value(ask.clone()).unwrap_or_else(|e| panic!("{ask}: {e}"));
+            assert_eq!(serde_json::to_value(&shape).expect("json"), ask);
         }
     }
 

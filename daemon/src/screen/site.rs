@@ -405,7 +405,7 @@ pub(super) async fn import_take(
         }
     };
     let (mut view, asks) = list_of(&app, &who, &members);
-    if view.refused.is_none() {
+    if view.refused.is_none() && view.lines.iter().all(|l| l.refused.is_none()) {
         super::api::taken(&app, &ends, &who, &mut view.lines, asks, by.as_deref()).await;
         view.lines.retain(|l| l.refused.is_some());
         if view.lines.is_empty() {

@@ -228,20 +228,11 @@ words! {
     // Advice.
     advice: "Advice";
     advice_nothing: "Nothing is missing for the limits in work.";
-    from_to: "{} to {}";
-    windows_missing: "Still without a trial: {} drops.";
-    liquid_needed: "Liquid trials still needed: {}.";
+    advice_no_work: "Advice comes when a limit is in work.";
     threads_needed: "Containers with threads still needed: {}.";
-    too_few_drops: "{} drops are too few ({} to {}): the paste is too wet. Dry it by mixing.";
-    too_many_drops: "{} drops are too many ({} to {}): the paste is too dry. Add water and mix.";
-    dry_towards: "From {} drops towards {}: dry the paste a little by mixing.";
-    wet_towards: "From {} drops towards {}: add a little water and mix.";
-    never_dry_soil: "Never add dry soil.";
     paste_mass: "Paste in the dish, grams";
     water_to_add: "Water to add:";
-    water_from_line: "From this specimen's own flow line. Add less, mix, count again.";
-    water_from_one: "From one dried trial and the usual steepness of flow lines. Add less, mix, count again.";
-    water_from_usual: "From what is usual for fine soils, as nothing is dried yet. Add less, mix, count again.";
+    water_from: "Slope of {}. Add less first, mix, count again.";
     // Cautions.
     caution_cam: "Keep fingers and sleeves from the moving cam.";
     caution_hot: "Oven and containers at 110 °C burn: use tongs, cool with the lid on, weigh only what is cool.";
@@ -458,11 +449,12 @@ words! {
     import_what: "What the file holds";
     import_containers: "Containers for the register";
     import_specimens: "The day's specimens";
-    import_columns: "First line: names of the columns. Containers: container, lid_g. Specimens: specimen, description, preparation, method.";
+    import_columns: "First line: names of the columns. Containers: container, tare_g, lid_g. Specimens: specimen, method, edition, description, preparation, passing_75um_percent, clay_percent, wanted. Only the first is needed. With commas and decimal points, in UTF-8.";
     import_file: "A file";
     import_text: "or its text";
     import_look: "Look at it";
     import_counts: "{} lines can be taken, {} cannot.";
+    import_whole: "A list is taken whole or not at all: mend these lines and bring it again.";
     line: "Line";
     import_read_as: "Read as";
     import_verdict: "Verdict";

@@ -1,6 +1,6 @@
 //! A bench.
 
-use super::super::view::{self, Advice, Balance, Bench, ContainerKey, Cup, Next, Owed, Recorded, SpecimenKey, Step, Work};
+use super::super::view::{self, Balance, Bench, ContainerKey, Cup, Next, Owed, Recorded, SpecimenKey, Step, Work};
 use super::specimen::{flow, freshness, results, trials};
 use super::{Around, Heard, advice, connected, frame, role_word, standing_word, text};
 use std::collections::BTreeMap;
@@ -27,8 +27,6 @@ pub fn bench(lab: &Lab, name: &BenchName, now: &Stamp, around: &Around) -> Optio
     let of = |kind| served().map(|i| (i, heard(i))).filter(move |(_, h)| h.kind == kind);
     let work = b.intention.as_ref().and_then(|w| lab.specimen(&w.specimen).map(|s| (w, s)));
     let method = work.and_then(|(_, s)| lab.setup().methods.get(&s.method));
-    let liquid = work.is_some_and(|(w, _)| w.intention == Intention::Liquid);
-    let owed = b.owed.as_ref().map(|o| o.drops);
     let mut frame = frame(lab, now, around);
     frame.bench = Some(name.to_string());
     Some(Bench {
@@ -49,10 +47,7 @@ pub fn bench(lab: &Lab, name: &BenchName, now: &Stamp, around: &Around) -> Optio
         recorded: recorded(lab, b),
         specimens: specimens(lab, work.map(|(_, s)| s)),
         containers: containers(lab),
-        advice: match (work, method) {
-            (Some((_, s)), Some(m)) => advice::advice(s, m, liquid, owed, around.paste_g.clone()),
-            _ => Advice::default(),
-        },
+        advice: advice::advice(lab, name, around.paste_g.clone()),
         loose: lab.loose_things().filter(|l| l.bench.as_ref() == Some(name)).count(),
     })
 }

@@ -11,7 +11,6 @@ mod loose;
 mod shelf;
 mod specimen;
 
-pub use advice::water;
 pub use bench::bench;
 pub use history::history;
 pub use import::import;

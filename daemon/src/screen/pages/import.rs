@@ -21,13 +21,14 @@ pub fn page(view: &Import, w: &Words) -> Markup {
                 table { thead { tr { th.num { (w.line) } th { (w.import_read_as) } th { (w.import_verdict) } } } tbody { @for l in &view.lines { (line(l, w)) } } }
             }
         }
-        @if good > 0 && view.refused.is_none() {
+        @if bad > 0 { p.attention { (icon("alarm")) " " (w.import_whole) } }
+        @if good > 0 && bad == 0 && view.refused.is_none() {
             form.panel method="post" action="/import/take" {
                 @if !view.frame.token.is_empty() { input type="hidden" name="token" value=(view.frame.token); }
                 input type="hidden" name="what" value=(view.what);
                 textarea.unseen name="text" aria-hidden="true" tabindex="-1" readonly { (view.text) }
                 (parts::who(&view.frame, "import", w))
-                button.key.confirm.primary[bad == 0] type="submit" { (icon("check")) span { (fill(w.import_take, &[&good.to_string()])) } }
+                button.key.confirm.primary type="submit" { (icon("check")) span { (fill(w.import_take, &[&good.to_string()])) } }
             }
         }
         div.row { (shell::back("/laboratory", w.import_leave)) }

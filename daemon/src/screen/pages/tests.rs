@@ -109,6 +109,8 @@ fn hostile_texts_stay_texts() {
     b.specimens[0] = view::SpecimenKey { id: own(), description: some(), chosen: true };
     b.containers[0].id = own();
     b.advice.paste_g = some();
+    b.advice.says = vec![own()];
+    b.advice.water = Some(view::Water { per_gram: 0.004, per_gram_u: 0.001, from: own() });
     let mut s = sample::specimen();
     (s.id, s.description, s.method, s.opened, s.state) = (own(), some(), own(), own(), own());
     s.checks[0] = view::Check { check: own(), hold: true, about: own(), says: own(), answered: some() };

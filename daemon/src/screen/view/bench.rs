@@ -208,15 +208,13 @@ pub struct ContainerKey {
     pub standing: String,
 }
 
-/// What the method and the counts so far suggest. Nothing of it is recorded.
+/// What the laboratory advises at this bench. Nothing of it is recorded.
 #[derive(Clone, Debug, Default, PartialEq, Serialize)]
 pub struct Advice {
-    /// How the latest paste stands to the method's drops.
-    pub paste: Option<Paste>,
-    /// Drop windows that no trial has yet.
-    pub windows_missing: Vec<[u32; 2]>,
-    /// Liquid trials that are still needed.
-    pub liquid_needed: u32,
+    /// Sentences, most pressing first.
+    pub says: Vec<String>,
+    /// The latest paste is of no use: the first sentence says so.
+    pub loud: bool,
     /// Thread containers that are still needed.
     pub threads_needed: u32,
     /// Water to add, when the latest paste is drier than the next trial wants.
@@ -225,36 +223,13 @@ pub struct Advice {
     pub paste_g: Option<String>,
 }
 
-/// How the latest paste stands to the drops that the next trial wants.
-#[derive(Clone, Debug, PartialEq, Serialize)]
-pub struct Paste {
-    /// Its drops.
-    pub drops: u32,
-    /// Drops that the method takes, from–to.
-    pub allowed: [u32; 2],
-    /// Drops that the next trial should have.
-    pub aim: u32,
-}
-
 /// Water to add.
-#[derive(Clone, Copy, Debug, PartialEq, Serialize)]
+#[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct Water {
     /// Grams of water for each gram of paste.
     pub per_gram: f64,
     /// ± grams for each gram of paste.
     pub per_gram_u: f64,
-    /// What it rests on.
-    pub from: WaterFrom,
-}
-
-/// What an estimate of water rests on.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize)]
-#[serde(rename_all = "snake_case")]
-pub enum WaterFrom {
-    /// The specimen's own flow line.
-    FlowLine,
-    /// A dried trial of the specimen and the usual steepness of a flow line.
-    OneTrial,
-    /// What is usual for fine soils.
-    Usual,
+    /// What the slope that it rests on is of, in words.
+    pub from: String,
 }

@@ -182,11 +182,13 @@ pub fn bench() -> Bench {
             .map(|n| ContainerKey { id: format!("C{n}"), standing: if n % 3 == 0 { "wet".into() } else { "free".into() } })
             .collect(),
         advice: Advice {
-            paste: Some(Paste { drops: 27, allowed: [15, 35], aim: 20 }),
-            windows_missing: vec![[15, 25]],
-            liquid_needed: 1,
+            says: vec![
+                "27 drops are of use: take the slice.".into(),
+                "1 trial more, of 3; a window wants one of 15–25 drops.".into(),
+            ],
+            loud: false,
             threads_needed: 2,
-            water: Some(Water { per_gram: 0.0042, per_gram_u: 0.0011, from: WaterFrom::FlowLine }),
+            water: Some(Water { per_gram: 0.0042, per_gram_u: 0.0011, from: "2 dried trials of this soil".into() }),
             paste_g: None,
         },
         loose: 0,
@@ -227,7 +229,10 @@ pub fn bench_trouble() -> Bench {
     b.cups[0].rate_per_s = Some(2.31);
     b.owed = Some(Owed { specimen: "S-101".into(), drops: 27, since: at("10:36:00"), overdue: true });
     b.recorded[0] = Recorded { loose: s(why), specimen: None, role: None, ..recorded(412, "40.12", "C14", "", "10:42:20") };
-    b.advice.paste = Some(Paste { drops: 12, allowed: [15, 35], aim: 30 });
+    b.advice.loud = true;
+    b.advice.says[0] =
+        "12 drops are too few (the method permits 15 to 35): let the paste dry by mixing, never by dry soil, and count again."
+            .into();
     b
 }
 
