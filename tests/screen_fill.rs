@@ -64,7 +64,7 @@ fn the_bench_shows_each_step_and_what_was_recorded() {
     let lab = play.lab.advice(&bench_name("north"), &Default::default()).unwrap();
     assert_eq!((b.advice.says.len(), b.advice.threads_needed, b.advice.loud), (lab.says.len(), 2, false));
     assert!(
-        b.advice.says.iter().zip(&lab.says).all(|(shown, said)| shown[1..].trim_end_matches('.') == said[1..]),
+        b.advice.says.iter().zip(&lab.says).all(|(shown, said)| shown[1..].trim_end_matches('.') == &said[1..]),
         "{:?}",
         b.advice
     );

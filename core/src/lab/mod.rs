@@ -7,6 +7,7 @@
 
 pub mod ask;
 pub mod entities;
+mod equipment;
 pub mod role;
 pub mod statistics;
 
