@@ -98,6 +98,13 @@ impl Refusal {
 /// Works out a profile. Deterministic; without times, the same however the bytes are cut into pieces.
 pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
     let heard = frames::Heard::new(pieces);
+    if heard.bytes.iter().filter(|b| !b.is_ascii_whitespace()).count() == 0 {
+        return refused(Refusal::new(
+            None,
+            0,
+            "nothing was heard: see that the instrument sends by itself, or press its print key",
+        ));
+    }
     let (heard, serial) = match parity::stripped(heard) {
         Ok(found) => found,
         Err(refusal) => return refused(refusal),
@@ -108,13 +115,6 @@ pub fn learn(pieces: &[Piece<'_>], hints: &Hints) -> Learned {
             best = Some(refusal);
         }
     };
-    if heard.bytes.iter().filter(|b| !b.is_ascii_whitespace()).count() == 0 {
-        return refused(Refusal::new(
-            None,
-            0,
-            "nothing was heard: see that the instrument sends by itself, or press its print key",
-        ));
-    }
     let mut endless: Option<Learned> = None;
     let mut confirmed = true;
     for framing in frames::candidates(&heard) {
