@@ -182,8 +182,7 @@ fn masses_left_over_from_another_sheet_are_named() {
             (s.trials[2].tare, s.trials[2].wet, s.trials[2].dry) = (from.tare, from.wet, from.dry.clone());
         }
         let limits = evaluate_with(&s, &method("t89-t90"), &lab);
-        let found = limits.checks.iter().find(|c| c.check == "left_over").map(|c| (c.about.clone(), c.severity));
-        found
+        limits.checks.iter().find(|c| c.check == "left_over").map(|c| (c.about.clone(), c.severity))
     };
     assert_eq!(named(true), Some(("liquid 3".into(), Severity::Note)));
     assert_eq!(named(false), None);

@@ -96,10 +96,10 @@ impl Statistics {
             let squares = waters.iter().map(|w| (w - mean) * (w - mean)).sum();
             share.threads = Sums::of(squares, waters.len() as u64 - 1);
         }
-        if let (Some(liquid), Some(plastic)) = (&limits.liquid_limit, &limits.plastic_limit) {
-            if let Some(ratio) = chart::a_line_ratio(liquid.value, plastic.value) {
-                share.pairs = Slopes::of(liquid.value, ratio);
-            }
+        if let (Some(liquid), Some(plastic)) = (&limits.liquid_limit, &limits.plastic_limit)
+            && let Some(ratio) = chart::a_line_ratio(liquid.value, plastic.value)
+        {
+            share.pairs = Slopes::of(liquid.value, ratio);
         }
         share
     }
