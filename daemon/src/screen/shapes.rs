@@ -94,6 +94,27 @@ pub struct Status {
     pub instruments: Vec<Instrument>,
     /// Every bench.
     pub benches: Vec<Bench>,
+    /// The last proven backup, and why a later one failed.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub backup: Option<serde_json::Value>,
+    /// What the laboratory's own results say of its scatter.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub own_scatter: Option<serde_json::Value>,
+    /// Ports that nobody uses.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub offers: Option<serde_json::Value>,
+    /// How a recording does.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub recording: Option<serde_json::Value>,
+    /// How a recording of what was not understood does.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub unread: Option<serde_json::Value>,
+    /// Why space on the disk is wanted.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub room: Option<String>,
+    /// Why the clock of the machine cannot be right.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub clock: Option<String>,
 }
 
 /// Connection of an instrument.
@@ -146,6 +167,21 @@ pub struct Instrument {
     pub last_reject: Option<String>,
     /// Lines lost because nothing could take them.
     pub overrun_lines: u64,
+    /// Of a balance: its latest checks with a reference mass.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub balance_checks: Option<serde_json::Value>,
+    /// Of a cup: its latest check.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub cup_check: Option<serde_json::Value>,
+    /// What a balance last showed, and whether that is stale.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub live: Option<serde_json::Value>,
+    /// What is shown of it is not what it shows now.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub stale: Option<bool>,
+    /// Its adapter may be the twin of the one meant.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub unconfirmed: Option<serde_json::Value>,
 }
 
 /// A bench.
@@ -176,6 +212,21 @@ pub struct Bench {
     pub next: Option<String>,
     /// A person is needed now.
     pub urgent: bool,
+    /// What to do next, as data: `do` and what it is about.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub action: Option<serde_json::Value>,
+    /// Advice while it can still help, as sentences.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub advice: Option<serde_json::Value>,
+    /// A caution that belongs to the next step.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub caution: Option<String>,
+    /// Why the clock of the machine cannot be right.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub clock: Option<String>,
+    /// Since when that comes next, UTC.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub next_since: Option<String>,
 }
 
 /// A container in hand.
@@ -224,6 +275,9 @@ pub struct Owed {
     pub since: String,
     /// It has been said aloud.
     pub overdue: bool,
+    /// Penetration of the cone, where the method uses one.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub penetration_mm: Option<f64>,
 }
 
 /// The latest weighing at a bench.
@@ -376,6 +430,9 @@ pub struct Trial {
     pub dry: u64,
     /// Why a person set it aside.
     pub set_aside: Option<String>,
+    /// Penetration of the cone.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub penetration_mm: Option<f64>,
 }
 
 /// Whether a result stands.
@@ -417,6 +474,15 @@ pub struct Limits {
     pub changed: Vec<String>,
     /// Where it stands in the ledger.
     pub ledger: Option<Place>,
+    /// Plasticity after EN ISO 14688-2.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_en_iso_14688_2: Option<String>,
+    /// Group index after AASHTO M 145.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_index: Option<f64>,
+    /// Group after AASHTO M 145.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub group_m145: Option<String>,
 }
 
 /// Liquid limit.
@@ -433,6 +499,12 @@ pub struct LiquidLimit {
     pub slope_per_decade: Option<f64>,
     pub residual_sd: Option<f64>,
     pub how: String,
+    /// The interval that these trials alone give.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95_classical: Option<[f64; 2]>,
+    /// What the uncertainty rests on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub u_from: Option<String>,
 }
 
 /// Plastic limit.
@@ -445,6 +517,12 @@ pub struct PlasticLimit {
     /// Standard uncertainty.
     pub u: Option<f64>,
     pub points: u32,
+    /// 95 % interval.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95: Option<[f64; 2]>,
+    /// What the uncertainty rests on.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub u_from: Option<String>,
 }
 
 /// Plasticity index.
@@ -457,6 +535,9 @@ pub struct PlasticityIndex {
     /// Standard uncertainty.
     pub u: Option<f64>,
     pub non_plastic: bool,
+    /// 95 % interval.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub interval_95: Option<[f64; 2]>,
 }
 
 /// A determination in a result.
@@ -483,6 +564,9 @@ pub struct Row {
     pub balance: Option<String>,
     pub cup: Option<String>,
     pub at: Option<String>,
+    /// Standard uncertainty of the water content.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub water_u: Option<f64>,
 }
 
 /// What a check says.
