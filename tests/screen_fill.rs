@@ -10,6 +10,7 @@ use tarecup::screen::view::{self, Due, Freshness, Place, Step, What};
 use tarecup::screen::words::ENGLISH;
 use tarecup_core::fact::{Connection, TrialRef};
 use tarecup_core::lab::Input;
+use tarecup_core::lab::ask::Ask;
 use tarecup_core::sheet::Kind;
 
 fn around() -> Around {
@@ -213,11 +214,14 @@ fn a_register_is_judged_line_by_line() {
     // What only the laboratory can know is told by line, too.
     let (view, asks) = read(&play, "container\nC30\nS-1\n");
     assert!(view.lines[0].refused.is_none() && view.lines[1].refused.is_some() && asks.is_empty(), "{view:?}");
-    let (view, asks) = read(&play, "container,tare_g,lid_g\nC30,21.40,4.12\nC1,,\n\"C33\",,\"4.00\"\n");
+    let (view, asks) = read(&play, "container,tare_g,lid_g\nC30,21.40,4.12\nC1,,4.20\n\"C33\",,\"4.00\"\n");
     assert!(view.lines[1].note.is_some(), "C1 is known already");
     assert_eq!((view.lines[0].fields.as_slice(), asks.len()), (["C30", "21.40", "4.12"].map(String::from).as_slice(), 3));
     for ask in asks {
-        play.take(Input::Ask(ask));
+        // Who takes the list is put in when it is taken.
+        let Ask::RegisterContainer { container, lid_g, tare_g, .. } = ask else { panic!("{ask:?}") };
+        let who = tarecup_core::names::Operator::new("AB").ok();
+        play.take(Input::Ask(Ask::RegisterContainer { container, lid_g, tare_g, who }));
     }
     assert_eq!(play.container("C30").lid, Some(g("4.12")));
     assert_eq!(play.container("C33").lid, Some(g("4.00")));

@@ -31,28 +31,20 @@ pub struct Done {
     /// Always true.
     pub ok: bool,
     /// Numbers of the facts it led to.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub facts: Option<Vec<Value>>,
     /// Answer to `status`.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub status: Option<Status>,
     /// Answer to `latest`: the latest weighing at the bench.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub latest: Option<Value>,
     /// Answer to `latest`: what comes next.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub next: Option<String>,
     /// Answer to `document`: its kind.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub kind: Option<String>,
     /// Answer to `document`: which.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub id: Option<String>,
     /// Answer to `document`: the fact it reflects.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub seq: Option<u64>,
     /// Answer to `document`: as it is stored.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub document: Option<Value>,
 }
 
@@ -95,25 +87,18 @@ pub struct Status {
     /// Every bench.
     pub benches: Vec<Bench>,
     /// The last proven backup, and why a later one failed.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub backup: Option<serde_json::Value>,
     /// What the laboratory's own results say of its scatter.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub own_scatter: Option<serde_json::Value>,
     /// Ports that nobody uses.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub offers: Option<serde_json::Value>,
     /// How a recording does.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub recording: Option<serde_json::Value>,
     /// How a recording of what was not understood does.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub unread: Option<serde_json::Value>,
     /// Why space on the disk is wanted.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub room: Option<String>,
     /// Why the clock of the machine cannot be right.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub clock: Option<String>,
 }
 
@@ -168,19 +153,14 @@ pub struct Instrument {
     /// Lines lost because nothing could take them.
     pub overrun_lines: u64,
     /// Of a balance: its latest checks with a reference mass.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub balance_checks: Option<serde_json::Value>,
     /// Of a cup: its latest check.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub cup_check: Option<serde_json::Value>,
     /// What a balance last showed, and whether that is stale.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub live: Option<serde_json::Value>,
     /// What is shown of it is not what it shows now.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub stale: Option<bool>,
     /// Its adapter may be the twin of the one meant.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub unconfirmed: Option<serde_json::Value>,
 }
 
@@ -213,19 +193,14 @@ pub struct Bench {
     /// A person is needed now.
     pub urgent: bool,
     /// What to do next, as data: `do` and what it is about.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub action: Option<serde_json::Value>,
     /// Advice while it can still help, as sentences.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub advice: Option<serde_json::Value>,
     /// A caution that belongs to the next step.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub caution: Option<String>,
     /// Why the clock of the machine cannot be right.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub clock: Option<String>,
     /// Since when that comes next, UTC.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub next_since: Option<String>,
 }
 
@@ -276,7 +251,6 @@ pub struct Owed {
     /// It has been said aloud.
     pub overdue: bool,
     /// Penetration of the cone, where the method uses one.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub penetration_mm: Option<f64>,
 }
 
@@ -431,7 +405,6 @@ pub struct Trial {
     /// Why a person set it aside.
     pub set_aside: Option<String>,
     /// Penetration of the cone.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub penetration_mm: Option<f64>,
 }
 
@@ -475,13 +448,10 @@ pub struct Limits {
     /// Where it stands in the ledger.
     pub ledger: Option<Place>,
     /// Plasticity after EN ISO 14688-2.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub group_en_iso_14688_2: Option<String>,
     /// Group index after AASHTO M 145.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub group_index: Option<f64>,
     /// Group after AASHTO M 145.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub group_m145: Option<String>,
 }
 
@@ -500,10 +470,8 @@ pub struct LiquidLimit {
     pub residual_sd: Option<f64>,
     pub how: String,
     /// The interval that these trials alone give.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub interval_95_classical: Option<[f64; 2]>,
     /// What the uncertainty rests on.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub u_from: Option<String>,
 }
 
@@ -518,10 +486,8 @@ pub struct PlasticLimit {
     pub u: Option<f64>,
     pub points: u32,
     /// 95 % interval.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub interval_95: Option<[f64; 2]>,
     /// What the uncertainty rests on.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub u_from: Option<String>,
 }
 
@@ -536,7 +502,6 @@ pub struct PlasticityIndex {
     pub u: Option<f64>,
     pub non_plastic: bool,
     /// 95 % interval.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub interval_95: Option<[f64; 2]>,
 }
 
@@ -557,7 +522,6 @@ pub struct Row {
     pub dry_g: Option<f64>,
     pub water_percent: Option<f64>,
     pub used: bool,
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub set_aside: Option<String>,
     pub typed: bool,
     pub by: Option<String>,
@@ -565,7 +529,6 @@ pub struct Row {
     pub cup: Option<String>,
     pub at: Option<String>,
     /// Standard uncertainty of the water content.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub water_u: Option<f64>,
 }
 
@@ -637,10 +600,8 @@ pub struct Fact {
     /// Which start of the machine.
     pub boot: u32,
     /// Who was named by it or signed in at the bench.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub who: Option<String>,
     /// The last input of its instrument that it rests on.
-    #[serde(default, skip_serializing_if = "Option::is_none")]
     pub through: Option<u64>,
     /// What kind of fact.
     pub kind: String,

@@ -34,8 +34,10 @@ pub fn import(lab: &Lab, what: &str, text: &str, now: &Stamp, around: &Around) -
         view.lines.push(ImportLine { no: fault.line, fields, refused: Some(said(fault)), ..Default::default() });
     }
     let asks: Vec<Ask> = preview.items.iter().filter_map(|i| serde_json::from_value(i.ask.clone()).ok()).collect();
+    // Who takes the list is said when it is taken; that nobody is named yet is no fault of a line.
+    let named: Vec<Ask> = preview.items.iter().filter_map(|i| somebodys(&i.ask)).collect();
     let mut refused: BTreeMap<usize, String> =
-        lab.would_refuse(&asks, now, around.frame.seq + 1).into_iter().map(|(n, refusal)| (n, refusal.0)).collect();
+        lab.would_refuse(&named, now, around.frame.seq + 1).into_iter().map(|(n, refusal)| (n, refusal.0)).collect();
     let whole = preview.faults.is_empty() && refused.is_empty();
     for (n, item) in preview.items.iter().enumerate() {
         let note = known(lab, item).then(|| String::from("it is in the register already"));
@@ -65,4 +67,13 @@ fn fields(kind: Kind, item: &Item) -> Vec<String> {
 fn known(lab: &Lab, item: &Item) -> bool {
     let name = item.ask.get("container").and_then(Value::as_str);
     name.is_some_and(|name| lab.containers().any(|c| c.id.as_str() == name))
+}
+
+/// An ask as somebody would make it.
+fn somebodys(ask: &serde_json::Value) -> Option<Ask> {
+    let mut ask = ask.clone();
+    if let Some(members) = ask.as_object_mut() {
+        members.entry("who").or_insert_with(|| serde_json::Value::from("XX"));
+    }
+    serde_json::from_value(ask).ok()
 }
