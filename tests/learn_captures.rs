@@ -157,7 +157,7 @@ fn generated_captures_are_never_misread_and_nearly_all_understood() {
     println!("{words}");
     assert_eq!(tally.wrong, 0, "{words}");
     // The target is 97 of 100; runs with fresh seeds came to 97.7 and more. Of 12 000 fresh ones 5 were misread, four of
-    // which were mended: see the README for what is left.
+    // which were mended; the README says what is left.
     assert!(tally.share() >= 0.96, "{words}");
 }
 
