@@ -1,6 +1,7 @@
 //! What is wrong in a file, where, and what to try.
 
 use std::fmt;
+use tarecup_core::near::nearest;
 
 /// Faults kept of one file; beyond this they are only counted.
 pub const MOST_FAULTS: usize = 100;
@@ -108,33 +109,7 @@ pub(crate) fn harmless(sentence: &str) -> String {
 
 /// The candidate that `word` was probably meant to be.
 pub fn did_you_mean<'c>(word: &str, candidates: impl IntoIterator<Item = &'c str>) -> Option<&'c str> {
-    if word.len() > 64 {
-        return None;
-    }
-    let word = word.to_lowercase();
-    let close = (word.chars().count() / 3).max(1);
-    let scored = candidates.into_iter().map(|c| (distance(&word, &c.to_lowercase()), c));
-    scored.filter(|(d, _)| *d <= close).min_by_key(|(d, _)| *d).map(|(_, c)| c)
-}
-
-/// Insertions, deletions, replacements and exchanges of neighbours between two words.
-fn distance(a: &str, b: &str) -> usize {
-    let (a, b): (Vec<char>, Vec<char>) = (a.chars().collect(), b.chars().collect());
-    let mut before: Vec<usize> = Vec::new();
-    let mut last: Vec<usize> = (0..=b.len()).collect();
-    for i in 1..=a.len() {
-        let mut row = vec![i];
-        for j in 1..=b.len() {
-            let same = usize::from(a[i - 1] != b[j - 1]);
-            let mut best = (last[j - 1] + same).min(last[j] + 1).min(row[j - 1] + 1);
-            if i > 1 && j > 1 && a[i - 1] == b[j - 2] && a[i - 2] == b[j - 1] {
-                best = best.min(before[j - 2] + 1);
-            }
-            row.push(best);
-        }
-        before = std::mem::replace(&mut last, row);
-    }
-    last[b.len()]
+    nearest(word, candidates.into_iter())
 }
 
 /// The remedy for a name that is not known: the nearest one, or the list.
@@ -163,13 +138,6 @@ mod tests {
             assert_eq!(did_you_mean(word, known), meant, "{word}");
         }
         assert_eq!(did_you_mean(&"x".repeat(1_000_000), known), None);
-    }
-
-    #[test]
-    fn distance_counts_each_kind_of_slip_once() {
-        for (a, b, d) in [("", "", 0), ("abc", "", 3), ("ab", "ba", 1), ("kitten", "sitting", 3), ("wet_g", "wetg", 1)] {
-            assert_eq!(distance(a, b), d, "{a} {b}");
-        }
     }
 
     #[test]

@@ -16,6 +16,7 @@ pub mod lab;
 pub mod limits;
 pub mod method;
 pub mod names;
+pub mod near;
 pub mod quantity;
 pub mod sense;
 pub mod sheet;

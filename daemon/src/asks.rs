@@ -6,9 +6,10 @@
 
 use serde_json::{Map, Value, json};
 use std::str::FromStr;
+use tarecup_core::lab::Wish;
 use tarecup_core::lab::ask::Ask;
-use tarecup_core::lab::{Wish, meant, nearest};
 use tarecup_core::names::{BenchName, NameError, SpecimenId};
+use tarecup_core::near::{meant, nearest};
 use tarecup_core::quantity::{Mass, MassUnit};
 
 /// Largest ask, in bytes. Checked before anything is parsed.

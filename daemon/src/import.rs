@@ -12,8 +12,8 @@ use cells::Row;
 use serde_json::{Map, Value, json};
 use std::collections::BTreeMap;
 use tarecup_core::fact::Intention;
-use tarecup_core::lab::{meant, nearest};
 use tarecup_core::names::{ContainerId, MethodName, Operator, SpecimenId};
+use tarecup_core::near::{meant, nearest};
 use tarecup_core::quantity::{Mass, MassUnit};
 
 /// Largest file, in bytes.

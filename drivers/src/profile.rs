@@ -27,7 +27,6 @@ mod guess;
 pub mod text;
 
 pub use compile::{LARGEST_G_DEFAULT, ProfileFault};
-pub use guess::nearest;
 pub use text::ProfileText;
 
 use crate::frame::{Framing, How, Piece};

@@ -1,12 +1,12 @@
 //! What persons ask for. One closed set, the same for every way in.
 
 use super::entities::{Bench, Container, Latest, LooseWhat, MassClass, Specimen};
-use super::near::meant;
 use super::role::Role;
 use super::{Lab, New, Refusal};
 use crate::fact::{Counted, Fact, Intention, Limit, Link, SpecimenOpened, Weighed};
 use crate::limits::{Severity, State};
 use crate::names::{BenchName, ContainerId, InstrumentName, MethodName, Operator, SpecimenId};
+use crate::near::meant;
 use crate::quantity::{Mass, MassUnit};
 use crate::sheet::{Kind, Seq};
 use crate::signal::Basis;

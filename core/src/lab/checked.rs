@@ -76,7 +76,7 @@ impl Lab {
             return Ok(());
         }
         let names: Vec<&str> = self.instruments.keys().map(InstrumentName::as_str).collect();
-        let hint = super::meant(name.as_str(), names.iter().copied());
+        let hint = crate::near::meant(name.as_str(), names.iter().copied());
         Err(no(format!("there is no instrument {name}{hint}; there are {}", names.join(", "))))
     }
 

@@ -5,6 +5,7 @@ use super::entities::{Bench, Loose, LooseWhat, Pan};
 use super::{Lab, New};
 use crate::fact::{Fact, Intention, Limit};
 use crate::names::{BenchName, ContainerId, InstrumentName, Operator, SpecimenId};
+use crate::near::meant;
 use crate::sense::InputNo;
 use crate::stamp::Stamp;
 use alloc::format;
@@ -32,6 +33,14 @@ pub const CARDS: [(&str, &str); 14] = [
 ];
 
 impl Lab {
+    /// ` (did you mean …?)` for the container nearest to what was written.
+    pub(super) fn container_meant(&self, written: &ContainerId) -> String {
+        match self.containers.contains_key(written) {
+            true => String::new(),
+            false => meant(written.as_str(), self.containers.keys().map(ContainerId::as_str)),
+        }
+    }
+
     pub(super) fn code_read(&self, scanner: &InstrumentName, text: &str, at: &Stamp, input: InputNo) -> Vec<New> {
         let benches = self.benches_of(scanner);
         let Some((first, others)) = benches.split_first() else { return vec![] };

@@ -21,7 +21,6 @@ mod count;
 pub mod guide;
 mod link;
 pub mod loose;
-mod near;
 mod oven;
 mod result;
 pub mod shelf;
@@ -49,7 +48,6 @@ pub use advice::{Advice, Slope, Wish};
 pub use code::CARDS;
 pub use guide::Guide;
 pub use loose::LooseThing;
-pub use near::{meant, nearest};
 pub use oven::dried;
 pub use shelf::OnShelf;
 

@@ -27,37 +27,13 @@ impl Again {
         let setup = DeskSetup {
             station: String::new(),
             state_dir: String::new(),
-            lab: nothing.clone(),
+            lab: nothing,
             instruments: Vec::new(),
             settings: String::new(),
             retain_days: 1,
             key: None,
         };
-        let desk = Desk {
-            lab: Lab::new(nothing),
-            setup,
-            ledger,
-            reader,
-            ears: Vec::new(),
-            held: Vec::new(),
-            held_since: None,
-            group: Group::default(),
-            next_input: 1,
-            next_seq: 1,
-            last_fact_input: 1,
-            cleaned: Stamp::default(),
-            signed: None,
-            mirrored: false,
-            beside: Default::default(),
-            delivered: 0,
-            delivered_stored: 0,
-            broker: None,
-            not_recording: None,
-            stopped: false,
-            clock_watch: Default::default(),
-            watched: Default::default(),
-        };
-        Ok(Self { desk })
+        Ok(Self { desk: Desk::blank(ledger, reader, setup, Stamp::default())? })
     }
 
     /// Begins under these settings with the state of a laboratory, as if the service had just come up.

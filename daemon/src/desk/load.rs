@@ -88,8 +88,25 @@ impl Desk {
         let ledger = Ledger::open(path, options)?;
         let reader = ledger.reader()?;
         let now = now(ledger.tail().boot);
+        let mut desk = Desk::blank(ledger, reader, setup, now)?;
+        desk.load(now)?;
+        let mut effects = Effects::default();
+        desk.started(now);
+        desk.commit(&mut effects);
+        if let Some(why) = desk.not_recording.take() {
+            return Err(LedgerError::Misfit { why });
+        }
+        let mut retained = desk.standing_topics(&now)?;
+        retained.append(&mut effects.retained);
+        effects.retained = retained;
+        effects.presence = true;
+        Ok((desk, effects))
+    }
+
+    /// A desk that has taken nothing yet.
+    pub(super) fn blank(ledger: Ledger, reader: Reader, setup: DeskSetup, now: Stamp) -> Result<Desk, LedgerError> {
         let delivered = reader.cursor("delivered_through")?.unwrap_or(0);
-        let mut desk = Desk {
+        Ok(Desk {
             lab: Lab::new(setup.lab.clone()),
             setup,
             ledger,
@@ -112,19 +129,7 @@ impl Desk {
             mirrored: false,
             clock_watch: Default::default(),
             watched: Default::default(),
-        };
-        desk.load(now)?;
-        let mut effects = Effects::default();
-        desk.started(now);
-        desk.commit(&mut effects);
-        if let Some(why) = desk.not_recording.take() {
-            return Err(LedgerError::Misfit { why });
-        }
-        let mut retained = desk.standing_topics(&now)?;
-        retained.append(&mut effects.retained);
-        effects.retained = retained;
-        effects.presence = true;
-        Ok((desk, effects))
+        })
     }
 
     /// Facts are known to be delivered through this number.

@@ -8,9 +8,10 @@ use serde_json::{Map, Value, json};
 use tarecup_core::fact::{Fact, Recorded};
 use tarecup_core::lab::entities::{BalanceCheck, Bench, Container, CupCheck, Entity, Instrument, Specimen};
 use tarecup_core::lab::statistics::Sums;
-use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish, meant};
+use tarecup_core::lab::{Lab, LooseThing, OnShelf, Wish};
 use tarecup_core::limits::{Limits, State};
 use tarecup_core::names::{BenchName, SpecimenId};
+use tarecup_core::near::meant;
 use tarecup_core::quantity::Mass;
 use tarecup_core::stamp::{Stamp, rfc3339};
 

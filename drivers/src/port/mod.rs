@@ -13,6 +13,7 @@ pub mod pulse;
 pub mod serial;
 mod tape;
 pub mod tcp;
+mod teller;
 
 use serde::{Deserialize, Serialize};
 

@@ -10,6 +10,7 @@ use super::hold::Hold;
 use super::open::{self, OpenFault};
 use super::serial::{PortTask, stopped};
 use super::tape::{Line, Tape};
+use super::teller::Teller;
 use crate::heard::{Batch, Clock, Deliver, Frame, InstrumentId, PortState};
 use crate::modbus::{Block, Framing, Plan, Table};
 use crate::profile::Profile;
@@ -34,8 +35,6 @@ const DEAF: Duration = Duration::from_secs(10);
 const RETRY: Duration = Duration::from_millis(16);
 /// How long the end of a task waits for a full receiver or a slow close.
 const FAREWELL: Duration = Duration::from_millis(500);
-/// Time between two searches for the program that holds a port.
-const HOLDER_EVERY: Duration = Duration::from_secs(10);
 /// Bytes that nobody asked for are one frame when so long nothing follows, or when they are so many.
 const STRAY: (Duration, usize) = (Duration::from_millis(50), 256);
 
@@ -54,8 +53,8 @@ pub fn spawn(
     out: Arc<dyn Deliver>,
 ) -> PortTask {
     let (stop, stopped) = watch::channel(false);
-    let port =
-        Port { id, settings: Arc::new(settings), profile, hold: Hold::new(id), clock, out, stopped, said: None, searched: None };
+    let teller = Teller::new(id, &settings.path, Arc::clone(&clock), Arc::clone(&out));
+    let port = Port { id, settings: Arc::new(settings), profile, hold: Hold::new(id), clock, out, stopped, teller };
     PortTask::new(stop, rt.spawn(port.run()))
 }
 
@@ -67,9 +66,7 @@ struct Port {
     clock: Arc<dyn Clock>,
     out: Arc<dyn Deliver>,
     stopped: watch::Receiver<bool>,
-    said: Option<PortState>,
-    /// When the holder of a busy port was last searched for, and what to say.
-    searched: Option<(Instant, String)>,
+    teller: Teller,
 }
 
 /// Why listening ended.
@@ -111,11 +108,11 @@ impl Port {
                 };
                 match opened {
                     Ok(line) => {
-                        self.say(PortState::Opened);
+                        self.teller.say(PortState::Opened);
                         let began = Instant::now();
                         match self.listen(line, &plan).await {
                             Ended::Stopped => break,
-                            Ended::Lost => self.say(PortState::Lost),
+                            Ended::Lost => self.teller.say(PortState::Lost),
                             Ended::Deaf => {}
                         }
                         if began.elapsed() >= BACK_OFF[1] {
@@ -133,37 +130,12 @@ impl Port {
         self.farewell().await;
     }
 
-    fn say(&mut self, state: PortState) {
-        if self.said.as_ref() != Some(&state) {
-            tracing::debug!(port = %self.settings.path, ?state, "port");
-            self.said = Some(state.clone());
-            self.out.state(self.id, state, self.clock.now());
-        }
-    }
-
     async fn say_fault(&mut self, fault: OpenFault) {
-        let says = match fault {
-            // A port that was lost stays lost until it is back.
-            OpenFault::Missing if self.said == Some(PortState::Lost) => return,
-            OpenFault::Missing if self.said == Some(PortState::Opened) => return self.say(PortState::Lost),
-            OpenFault::Missing => return self.say(PortState::Waiting),
-            OpenFault::Refused(says) => says,
-            OpenFault::Busy => self.search_holder().await,
-        };
-        self.say(PortState::Refused(says));
-    }
-
-    /// The search reads all of /proc: not at every attempt.
-    async fn search_holder(&mut self) -> String {
-        if let Some((at, says)) = &self.searched
-            && at.elapsed() < HOLDER_EVERY
-        {
-            return says.clone();
+        if self.teller.fault(fault) {
+            let settings = Arc::clone(&self.settings);
+            let says = spawn_blocking(move || open::busy(&settings.path)).await.unwrap_or_default();
+            self.teller.busy(says);
         }
-        let settings = Arc::clone(&self.settings);
-        let says = spawn_blocking(move || open::busy(&settings.path)).await.unwrap_or_default();
-        self.searched = Some((Instant::now(), says.clone()));
-        says
     }
 
     /// Waits before the next attempt; true when stopped.

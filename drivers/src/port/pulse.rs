@@ -8,6 +8,7 @@ use super::PortSettings;
 use super::hold::Hold;
 use super::open::{self, OpenFault};
 use super::serial::PortTask;
+use super::teller::Teller;
 use crate::heard::{Batch, Clock, Deliver, Frame, InstrumentId, PortState};
 use crate::profile::Profile;
 use crate::pulse::{Contact, LOOK_US, LineSource, ModemLine};
@@ -22,8 +23,6 @@ use tokio_serial::{SerialPort, SerialStream};
 const BACK_OFF: [Duration; 2] = [Duration::from_millis(50), Duration::from_secs(1)];
 /// How long the end waits for a full receiver.
 const FAREWELL: Duration = Duration::from_millis(500);
-/// Time between two searches for the program that holds a port.
-const HOLDER_EVERY: Duration = Duration::from_secs(10);
 /// Time between two looks.
 const LOOK: Duration = Duration::from_micros(LOOK_US as u64);
 /// Pause before a full receiver is tried again, in looks.
@@ -50,7 +49,8 @@ pub fn spawn(
 ) -> PortTask {
     let (stop, stopped) = watch::channel(false);
     let (over, ended) = oneshot::channel::<()>();
-    let watcher = Watcher { id, settings, pulse, profile, hold: Hold::new(id), clock, out, stopped, said: None, searched: None };
+    let teller = Teller::new(id, &settings.path, Arc::clone(&clock), Arc::clone(&out));
+    let watcher = Watcher { id, settings, pulse, profile, hold: Hold::new(id), clock, out, stopped, teller };
     let handle = rt.clone();
     let thread = std::thread::Builder::new().name("pulse".into()).spawn(move || {
         let _inside = handle.enter();
@@ -72,9 +72,7 @@ struct Watcher {
     clock: Arc<dyn Clock>,
     out: Arc<dyn Deliver>,
     stopped: watch::Receiver<bool>,
-    said: Option<PortState>,
-    /// When the holder of a busy port was last searched for, and what to say.
-    searched: Option<(Instant, String)>,
+    teller: Teller,
 }
 
 /// The lines of an open port.
@@ -130,34 +128,10 @@ impl Watcher {
         }
     }
 
-    fn say(&mut self, state: PortState) {
-        if self.said.as_ref() != Some(&state) {
-            self.said = Some(state.clone());
-            self.out.state(self.id, state, self.clock.now());
-        }
-    }
-
     fn say_fault(&mut self, fault: OpenFault) {
-        let says = match fault {
-            // A port that was lost stays lost until it is back.
-            OpenFault::Missing if self.said == Some(PortState::Lost) => return,
-            OpenFault::Missing => return self.say(PortState::Waiting),
-            OpenFault::Refused(says) => says,
-            OpenFault::Busy => self.search_holder(),
-        };
-        self.say(PortState::Refused(says));
-    }
-
-    /// The search reads all of /proc: not at every attempt.
-    fn search_holder(&mut self) -> String {
-        if let Some((at, says)) = &self.searched
-            && at.elapsed() < HOLDER_EVERY
-        {
-            return says.clone();
+        if self.teller.fault(fault) {
+            self.teller.busy(open::busy(&self.settings.path));
         }
-        let says = open::busy(&self.settings.path);
-        self.searched = Some((Instant::now(), says.clone()));
-        says
     }
 
     /// Looks at the line until it is gone or the thread is stopped.
@@ -168,12 +142,12 @@ impl Watcher {
             let says = format!(
                 "{path}: its line {word} cannot be read ({e}); use a serial port that has this line, or name another one in pulse"
             );
-            return self.say(PortState::Refused(says));
+            return self.teller.say(PortState::Refused(says));
         }
-        self.say(PortState::Opened);
+        self.teller.say(PortState::Opened);
         let (mut contact, began, mut looks) = (Contact::new(self.pulse.bounce_ms), Instant::now(), 0u32);
         while !self.is_stopped() {
-            let Ok(closed) = source.closed(line) else { return self.say(PortState::Lost) };
+            let Ok(closed) = source.closed(line) else { return self.teller.say(PortState::Lost) };
             let at = i64::try_from(began.elapsed().as_micros()).unwrap_or(i64::MAX);
             for said in contact.look(closed, at).into_iter().flatten() {
                 self.deliver(said.line(line).into_bytes());
@@ -237,19 +211,9 @@ mod tests {
         let (stop, stopped) = watch::channel(false);
         let settings = PortSettings { path: path.into(), baud: 9600, frame: CharFrame::default(), flow: Flow::None };
         let pulse = PulseSettings { line: ModemLine::Cts, bounce_ms: 20 };
-        let (clock, out) = (Arc::new(Still), sink.clone());
-        let watcher = Watcher {
-            id: 1,
-            settings,
-            pulse,
-            profile: profile(),
-            hold: Hold::new(1),
-            clock,
-            out,
-            stopped,
-            said: None,
-            searched: None,
-        };
+        let (clock, out): (Arc<dyn Clock>, Arc<dyn Deliver>) = (Arc::new(Still), sink.clone());
+        let teller = Teller::new(1, path, Arc::clone(&clock), Arc::clone(&out));
+        let watcher = Watcher { id: 1, settings, pulse, profile: profile(), hold: Hold::new(1), clock, out, stopped, teller };
         (stop, watcher)
     }
 

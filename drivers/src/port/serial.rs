@@ -14,6 +14,7 @@ use super::link::Link;
 use super::open::{self, OpenFault};
 use super::place::{Machine, Place};
 use super::tcp::Dialer;
+use super::teller::Teller;
 use crate::heard::{Batch, Clock, Deliver, InstrumentId, PortState};
 use crate::intake::Intake;
 use crate::profile::{Profile, Talks};
@@ -38,8 +39,6 @@ const RETRY: [Duration; 2] = [Duration::from_millis(4), Duration::from_millis(32
 const FAREWELL: Duration = Duration::from_millis(500);
 /// A terminal never gives more than 4095 bytes at once.
 const READ_BYTES: usize = 4096;
-/// Time between two searches for the program that holds a port.
-const HOLDER_EVERY: Duration = Duration::from_secs(10);
 /// Bytes without a line end are given up after this time, or after that of the longest line if it is more.
 pub const UNENDED: Duration = Duration::from_secs(4);
 /// Requests over the network that may go unanswered at the usual pace; a peer
@@ -138,6 +137,7 @@ pub fn spawn_with(
 ) -> PortTask {
     let (stop, stopped) = watch::channel(false);
     let (confirm, confirmed) = watch::channel(0);
+    let teller = Teller::new(id, &settings.path, Arc::clone(&clock), Arc::clone(&out));
     let port = Port {
         id,
         dialer: Dialer::of(&settings.path),
@@ -145,8 +145,7 @@ pub fn spawn_with(
         settings: Arc::new(settings),
         intake: Intake::new(id, &profile),
         hold: Hold::new(id),
-        said: None,
-        searched: None,
+        teller,
         retry: RETRY[0],
         retry_at: Instant::now(),
         profile,
@@ -185,9 +184,7 @@ struct Port {
     begun: Option<Instant>,
     unended: Duration,
     extras: Extras,
-    said: Option<PortState>,
-    /// When the holder of a busy port was last searched for, and what to say.
-    searched: Option<(Instant, String)>,
+    teller: Teller,
     /// Pause before what is held is offered again, and when that is.
     retry: Duration,
     retry_at: Instant,
@@ -217,7 +214,7 @@ impl Port {
                         // A port that opens and is gone at once is not asked more and more often.
                         Ended::Lost { lived: false } => {}
                     }
-                    self.say(PortState::Lost);
+                    self.teller.say(PortState::Lost);
                 }
                 Err(fault) => self.say_fault(fault).await,
             }
@@ -229,36 +226,12 @@ impl Port {
         self.farewell().await;
     }
 
-    fn say(&mut self, state: PortState) {
-        if self.said.as_ref() != Some(&state) {
-            tracing::debug!(port = %self.settings.path, ?state, "port");
-            self.said = Some(state.clone());
-            self.out.state(self.id, state, self.clock.now());
-        }
-    }
-
     async fn say_fault(&mut self, fault: OpenFault) {
-        let says = match fault {
-            // A port that was lost stays lost until it is back.
-            OpenFault::Missing if self.said == Some(PortState::Lost) => return,
-            OpenFault::Missing => return self.say(PortState::Waiting),
-            OpenFault::Refused(says) => says,
-            OpenFault::Busy => self.search_holder().await,
-        };
-        self.say(PortState::Refused(says));
-    }
-
-    /// The search reads all of /proc: not at every attempt.
-    async fn search_holder(&mut self) -> String {
-        if let Some((at, says)) = &self.searched
-            && at.elapsed() < HOLDER_EVERY
-        {
-            return says.clone();
+        if self.teller.fault(fault) {
+            let settings = Arc::clone(&self.settings);
+            let says = spawn_blocking(move || open::busy(&settings.path)).await.unwrap_or_default();
+            self.teller.busy(says);
         }
-        let settings = Arc::clone(&self.settings);
-        let says = spawn_blocking(move || open::busy(&settings.path)).await.unwrap_or_default();
-        self.searched = Some((Instant::now(), says.clone()));
-        says
     }
 
     /// Tries to open; `None` when stopped meanwhile.
@@ -292,11 +265,11 @@ impl Port {
             (Some(now), Some(before)) => {
                 let words = doubt::words(before, &now);
                 self.doubt = Some(Doubt::new(&now, self.profile.talks() != Talks::PrintOnKey && is_balance(&self.profile)));
-                self.say(PortState::Unconfirmed(words));
+                self.teller.say(PortState::Unconfirmed(words));
             }
             _ => {
                 self.learn(place.known_by());
-                self.say(PortState::Opened);
+                self.teller.say(PortState::Opened);
             }
         }
     }
@@ -413,7 +386,7 @@ impl Port {
             let known_by = std::mem::take(&mut doubt.known_by);
             self.doubt = None;
             self.learn(Some(known_by));
-            self.say(PortState::Opened);
+            self.teller.say(PortState::Opened);
         }
     }
 

@@ -1,11 +1,12 @@
 //! From a profile as written to one that can be run, or a pointed fault.
 
 use super::text::{BasisWord, CheckDigits, CheckPlace, FrameText, LineText, Means, ProfileText};
-use super::{Ask, Groups, Kind, Line, LineMeans, Profile, Talks, guess};
+use super::{Ask, Groups, Kind, Line, LineMeans, Profile, Talks};
 use crate::frame::{Framing, LONGEST_DEFAULT};
 use crate::modbus;
 use regex::bytes::{Regex, RegexBuilder};
 use tarecup_core::names;
+use tarecup_core::near::nearest;
 use tarecup_core::quantity::{LARGEST, Mass, MassUnit, UG_PER_G};
 use tarecup_core::signal::Basis;
 
@@ -281,7 +282,7 @@ fn groups(regex: &Regex, key: &str) -> Result<Groups, ProfileFault> {
             "end" => &mut groups.end,
             "code" => &mut groups.code,
             other => {
-                let hint = guess::nearest(other, &GROUPS).map(|g| format!("; did you mean '{g}'?")).unwrap_or_default();
+                let hint = nearest(other, GROUPS.into_iter()).map(|g| format!("; did you mean '{g}'?")).unwrap_or_default();
                 return fault(format!("{key}.pattern"), format!("unknown group '{other}'{hint} Known are {}", GROUPS.join(", ")));
             }
         };

@@ -1,29 +1,7 @@
-//! Guesses that help people: the nearest known word, and lines that look like
-//! another kind of instrument's.
+//! Lines that look like another kind of instrument's.
 
 use regex::bytes::{Regex, RegexBuilder};
 use std::sync::LazyLock;
-
-/// The candidate that differs least from `word`, if it differs little.
-pub fn nearest<'a>(word: &str, candidates: &[&'a str]) -> Option<&'a str> {
-    let scored = candidates.iter().map(|c| (distance(word.as_bytes(), c.as_bytes()), *c));
-    scored.min_by_key(|(d, _)| *d).filter(|(d, c)| *d <= 1.max(c.len() / 3)).map(|(_, c)| c)
-}
-
-/// Number of single-letter changes between two words.
-fn distance(a: &[u8], b: &[u8]) -> usize {
-    let mut row: Vec<usize> = (0..=b.len()).collect();
-    for (i, x) in a.iter().take(64).enumerate() {
-        let mut diagonal = row[0];
-        row[0] = i + 1;
-        for (j, y) in b.iter().enumerate() {
-            let change = diagonal + usize::from(!x.eq_ignore_ascii_case(y));
-            diagonal = row[j + 1];
-            row[j + 1] = change.min(diagonal + 1).min(row[j] + 1);
-        }
-    }
-    row[b.len()]
-}
 
 fn fixed(pattern: &str) -> Option<Regex> {
     RegexBuilder::new(pattern).unicode(false).case_insensitive(true).build().ok()
@@ -49,14 +27,6 @@ pub fn looks_like_count(body: &[u8]) -> bool {
 #[cfg(test)]
 mod tests {
     use super::*;
-
-    #[test]
-    fn near_words() {
-        let known = ["mass", "unit", "steady"];
-        assert_eq!(nearest("stead", &known), Some("steady"));
-        assert_eq!(nearest("Mass", &known), Some("mass"));
-        assert_eq!(nearest("weight", &known), None);
-    }
 
     #[test]
     fn masses_and_counts_look_different() {

@@ -1,13 +1,13 @@
-//! The name that was meant: for refusals.
+//! The name that was meant: for refusals, wherever names are written.
 
-use super::Lab;
-use crate::names::ContainerId;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec::Vec;
 
 /// More names than this are not looked through: a refusal must stay cheap.
 const LOOKED_AT: usize = 5_000;
+/// No name is so long, in characters.
+const LONGEST: usize = 64;
 
 /// ` (did you mean …?)` for the known name nearest to what was written, if one is near; else nothing.
 pub fn meant<'n>(written: &str, known: impl Iterator<Item = &'n str>) -> String {
@@ -16,9 +16,13 @@ pub fn meant<'n>(written: &str, known: impl Iterator<Item = &'n str>) -> String 
 
 /// The known name nearest to what was written: at most a third of its characters differ, case apart.
 pub fn nearest<'n>(written: &str, known: impl Iterator<Item = &'n str>) -> Option<&'n str> {
-    let most = (written.chars().count() / 3).max(1);
+    let length = written.chars().take(LONGEST + 1).count();
+    if length > LONGEST {
+        return None;
+    }
+    let most = (length / 3).max(1);
     let near = known.take(LOOKED_AT).map(|name| (distance(written, name, most), name)).filter(|(d, _)| *d <= most);
-    near.min().map(|(_, name)| name)
+    near.min_by_key(|(d, _)| *d).map(|(_, name)| name)
 }
 
 /// Changed, missing, added or exchanged neighbouring characters, case apart; beyond `most` only that it is more.
@@ -44,19 +48,9 @@ fn distance(a: &str, b: &str, most: usize) -> usize {
     above[b.len()]
 }
 
-impl Lab {
-    /// ` (did you mean …?)` for the container nearest to what was written.
-    pub(super) fn container_meant(&self, written: &ContainerId) -> String {
-        match self.containers.contains_key(written) {
-            true => String::new(),
-            false => meant(written.as_str(), self.containers.keys().map(ContainerId::as_str)),
-        }
-    }
-}
-
 #[cfg(test)]
 mod tests {
-    use super::nearest;
+    use super::{distance, nearest};
 
     #[test]
     fn the_nearest_name_is_found_and_a_far_one_is_not() {
@@ -69,5 +63,11 @@ mod tests {
         assert_eq!(near("east"), None);
         assert_eq!(near(""), None);
         assert_eq!(near(&"x".repeat(1_000)), None);
+    }
+    #[test]
+    fn each_kind_of_slip_counts_once() {
+        for (a, b, d) in [("", "", 0), ("abc", "", 3), ("ab", "ba", 1), ("kitten", "sitting", 3), ("wet_g", "wetg", 1)] {
+            assert_eq!(distance(a, b, 9), d, "{a} {b}");
+        }
     }
 }
